@@ -1,0 +1,1 @@
+"""The titration: decisions, runner, journal, guard, evaluation, command line."""

@@ -1,0 +1,1 @@
+"""From a curve to end points, amounts and their uncertainties."""

@@ -1,0 +1,1 @@
+"""Real devices: clock, serial link, wire grammar, pump, probe, operator."""

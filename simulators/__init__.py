@@ -1,0 +1,1 @@
+"""How the world behaves: solution chemistry, electrode, beaker, syringe, and virtual devices."""
