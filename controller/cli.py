@@ -1,0 +1,263 @@
+"""The command line: argparse, commands imported only when called, errors printed in one place.
+
+Exit status: 0 done; 1 finished but not to be trusted, or a check failed; 2 wrong use or settings; 3 stopped for safety
+or device failure; 130 interrupted; 143 terminated.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+from importlib import import_module
+
+from configs.version import __version__
+
+TYPE_CHECKING = False  # typing itself would cost a tenth of the time that --help may take
+if TYPE_CHECKING:
+    from collections.abc import Callable
+    from typing import Any, NoReturn
+
+DONE, NOT_TRUSTED, WRONG_USE, STOPPED, INTERRUPTED = 0, 1, 2, 3, 130
+
+
+class Parser(argparse.ArgumentParser):
+    """A parser which names the nearest known word when it meets an unknown one."""
+
+    def __init__(self, **settings: Any) -> None:
+        settings.setdefault("allow_abbrev", False)
+        settings.setdefault("formatter_class", _help_formatter)
+        super().__init__(**settings)
+
+    def _check_value(self, action: argparse.Action, value: Any) -> None:
+        if action.choices is None or value in action.choices:
+            return
+        known = [str(choice) for choice in action.choices]
+        raise argparse.ArgumentError(
+            action, f"got {str(value)!r}, allowed: {', '.join(known)}{_did_you_mean(str(value), known)}"
+        )
+
+    def error(self, message: str) -> NoReturn:
+        """Print the message and where help is; exit status 2."""
+        self.exit(WRONG_USE, f"{self.prog}: {message}\nSee '{self.prog} --help'.\n")
+
+    def parse_whole(self, arguments: list[str]) -> argparse.Namespace:
+        """Parse; an unknown option is answered with the nearest known one."""
+        found, rest = self.parse_known_args(arguments)
+        if rest:
+            parser: Parser = getattr(found, "parser", self)
+            options = [option for action in parser._actions for option in action.option_strings]
+            parser.error(f"unknown: {' '.join(rest)}{_did_you_mean(rest[0].split('=')[0], options)}")
+        return found
+
+
+def _did_you_mean(word: str, known: list[str]) -> str:
+    from difflib import get_close_matches
+
+    near = get_close_matches(word, known, n=1)
+    return f"; did you mean {near[0]!r}?" if near else ""
+
+
+def _help_formatter(prog: str) -> argparse.HelpFormatter:
+    """As argparse's, but without importing its archive modules for the terminal's width."""
+    try:
+        width = int(os.environ.get("COLUMNS", "0")) or os.get_terminal_size().columns
+    except (OSError, ValueError):
+        width = 80
+    return argparse.HelpFormatter(prog, width=max(40, width - 2))
+
+
+def parser(chosen: str | None = None) -> Parser:
+    """Return the command line; only the chosen command's own options are filled in (None: every command's)."""
+    top = Parser(
+        prog="halfdrop",
+        description="Unattended titration: doses, logs every point, detects the end point, and reports an amount.",
+        epilog="Safety data sheets, your local rules and licensed practice come before anything this program says.",
+    )
+    top.add_argument("--version", action="version", version=f"halfdrop {__version__}")
+    commands = top.add_subparsers(dest="command", metavar="COMMAND", parser_class=Parser)
+    for name, (about, fill) in COMMANDS.items():
+        made = commands.add_parser(name, help=about, description=about[0].upper() + about[1:] + ".")
+        made.set_defaults(parser=made)
+        if chosen in (None, name):
+            fill(made)
+    return top
+
+
+def _action(actions: Any, name: str, function: str, about: str) -> Parser:
+    made: Parser = actions.add_parser(name, help=about, description=about[0].upper() + about[1:] + ".")
+    made.set_defaults(function=function, parser=made)
+    return made
+
+
+def _lab(made: Parser) -> None:
+    made.add_argument("--lab", metavar="DIR", help="lab folder (else HALFDROP_LAB, else the nearest parent)")
+
+
+def _json(made: Parser) -> None:
+    made.add_argument("--json", action="store_true", help="one JSON document on standard output")
+
+
+def _sample(made: Parser) -> None:
+    made.add_argument("--sample-id", metavar="TEXT", help="what the record calls the sample")
+    amount = made.add_mutually_exclusive_group()
+    amount.add_argument("--sample-volume-ml", type=float, metavar="ML", help="volume of sample taken")
+    amount.add_argument("--sample-mass-g", type=float, metavar="G", help="mass of sample or standard weighed in")
+    made.add_argument("--initial-volume-ml", type=float, metavar="ML", help="all liquid in the vessel, water included")
+
+
+def _world(made: Parser) -> None:
+    made.add_argument("--bench", metavar="FILE", help="bench file (default: bench.yaml of the lab folder)")
+    made.add_argument("--seed", type=int, metavar="N", help="seed of the simulated bench")
+
+
+def _demo(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.demo:demo")
+    made.add_argument("--dir", metavar="DIR", help="where to make the lab folder (default: a new temporary folder)")
+    made.add_argument("--headless", action="store_true", help="progress and result as plain lines")
+    made.add_argument(
+        "--time-scale", metavar="X", help="run X times real time (default: as fast as it can)"
+    )
+    made.add_argument("--seed", type=int, default=1, metavar="N", help="seed of the simulated bench (default: 1)")
+    _json(made)
+
+
+def _init(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.init:init")
+    made.add_argument("dir", metavar="DIR")
+    made.add_argument("--upgrade", action="store_true", help="show what a newer version would change, keep .bak files")
+
+
+def _run(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.run:run")
+    made.add_argument("method", metavar="METHOD", help="a method's name or file")
+    _lab(made)
+    _sample(made)
+    _world(made)
+    made.add_argument("--operator", metavar="NAME", help="who runs it (kept in the record)")
+    made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
+    made.add_argument(
+        "--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)"
+    )
+    made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
+    _json(made)
+
+
+def _decide(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.decide:decide")
+    made.add_argument("method", metavar="METHOD", nargs="?", help="a method's name or file")
+    made.add_argument("--plan", metavar="FILE", help="a run plan as in a record's header, instead of a method")
+    _lab(made)
+    _sample(made)
+    _world(made)
+
+
+def _evaluate(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.evaluate:evaluate")
+    made.add_argument("file", metavar="FILE", help="a run record, or any CSV of volume and pH or potential")
+    made.add_argument("--volume-column", metavar="NAME")
+    made.add_argument("--signal-column", metavar="NAME")
+    made.add_argument("--signal-unit", choices=("ph", "mv", "v"))
+    made.add_argument("--decimal", choices=("point", "comma"), help="the decimal mark, where it can mean two things")
+    made.add_argument("--initial-volume-ml", type=float, metavar="ML", help="all liquid in the vessel at the start")
+    made.add_argument("--titrant-concentration-mol-l", type=float, metavar="C")
+    made.add_argument("--substance", metavar="NAME", help="the substance titrated")
+    made.add_argument("--temperature-c", type=float, metavar="T")
+    made.add_argument("--end-points", type=int, metavar="N", help="how many equivalence points are expected")
+    _json(made)
+
+
+def _predict(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.predict:predict")
+    made.add_argument("what", metavar="METHOD|SOLUTION", help="a method (name or file), or a solution file")
+    made.add_argument("--volumes", metavar="FILE", help="solution file: volumes from this file, one a line")
+    _lab(made)
+    _sample(made)
+    _world(made)
+    _json(made)
+
+
+def _schema(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.schema:schema")
+    made.add_argument("kind", choices=("method", "bench", "solution"))
+
+
+def _runs(group: Parser) -> None:
+    actions = group.add_subparsers(dest="action", metavar="ACTION", parser_class=Parser, required=True)
+    made = _action(actions, "list", "controller.commands.runs:list_runs", "all records of the lab folder")
+    _lab(made)
+    _json(made)
+    made = _action(actions, "show", "controller.commands.runs:show", "one record: result, end points, warnings")
+    made.add_argument("run", metavar="RUN", help="a record's name or file")
+    _lab(made)
+    _json(made)
+    made = _action(actions, "verify", "controller.commands.runs:verify", "is a record intact, edited, torn or cut")
+    made.add_argument("run", metavar="RUN", nargs="*", help="records (default: all)")
+    _lab(made)
+    _json(made)
+    made = _action(actions, "export", "controller.commands.runs:export", "points of a record as CSV or JSON")
+    made.add_argument("run", metavar="RUN")
+    made.add_argument("--to", metavar="DIR", help="folder for the files (default: CSV on standard output)")
+    _lab(made)
+    _json(made)
+    made = _action(actions, "close", "controller.commands.runs:close", "end a record that was left open")
+    made.add_argument("run", metavar="RUN")
+    _lab(made)
+
+
+def _bench(group: Parser) -> None:
+    actions = group.add_subparsers(dest="action", metavar="ACTION", parser_class=Parser, required=True)
+    made = _action(actions, "show", "controller.commands.bench:show", "devices, limits, accounts, calibration")
+    _lab(made)
+    made.add_argument("--bench", metavar="FILE")
+    _json(made)
+    made = _action(actions, "serve", "controller.commands.bench:serve", "offer a simulated bench's ports to programs")
+    _lab(made)
+    _world(made)
+    made.add_argument("--method", metavar="METHOD", help="the method whose sample is in the beaker")
+    made.add_argument(
+        "--link", choices=("pty", "tcp"), help="pseudo-terminals or TCP (default: pty if there is one)"
+    )
+    made.add_argument("--time-scale", metavar="X", help="run X times faster than real time")
+    _sample(made)
+
+
+COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
+    "demo": ("a simulated lab folder and a whole run in it", _demo),
+    "init": ("make a lab folder", _init),
+    "run": ("titrate by a method", _run),
+    "decide": ("the decision core alone, over JSON lines", _decide),
+    "evaluate": ("end points of a record or CSV file", _evaluate),
+    "predict": ("the expected curve before anything moves", _predict),
+    "schema": ("JSON Schema of a settings file", _schema),
+    "runs": ("list, show, verify and export records", _runs),
+    "bench": ("show or serve a bench", _bench),
+}
+
+
+def main(arguments: list[str] | None = None) -> int:
+    """Run one command; return its exit status."""
+    given = sys.argv[1:] if arguments is None else arguments
+    whole = parser(chosen=given[0] if given else "")
+    found = whole.parse_whole(given)
+    if getattr(found, "function", None) is None:
+        whole.print_help()
+        return DONE
+    module, _, name = found.function.partition(":")
+    from configs.errors import HalfdropError
+
+    try:
+        return int(getattr(import_module(module), name)(found))
+    except HalfdropError as error:
+        print(f"halfdrop: {error}", file=sys.stderr)
+        return error.exit_status
+    except KeyboardInterrupt:
+        print("halfdrop: interrupted", file=sys.stderr)
+        return INTERRUPTED
+    except BrokenPipeError:
+        sys.stderr.close()
+        return DONE
+
+
+if __name__ == "__main__":
+    sys.exit(main())
