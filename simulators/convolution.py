@@ -1,0 +1,37 @@
+"""Convolutions of decaying exponentials, for any rates, equal ones too."""
+
+from __future__ import annotations
+
+import math
+
+_SERIES_SPREAD = 0.5  # rate spread x time below which the series is used
+_SERIES_TERMS = 14
+
+
+def convolved_exponentials(rates_1_s: tuple[float, ...], dt_s: float) -> float:
+    """Convolution of exp(-rate t) over all rates, at `dt_s`; rates may be equal.
+
+    It is a divided difference of exp; near-equal rates take the Taylor series in complete homogeneous symmetric
+    polynomials, others the recursion over the sorted rates, which divides by the widest gap.
+    """
+    return _of_sorted(tuple(sorted(rates_1_s)), dt_s)
+
+
+def _of_sorted(rates: tuple[float, ...], dt: float) -> float:
+    count = len(rates)
+    if count == 1:
+        return math.exp(-rates[0] * dt)
+    gap = rates[-1] - rates[0]
+    if gap * dt >= _SERIES_SPREAD:
+        return (_of_sorted(rates[:-1], dt) - _of_sorted(rates[1:], dt)) / gap
+    middle = 0.5 * (rates[0] + rates[-1])
+    powers = [1.0] + [0.0] * (_SERIES_TERMS - 1)
+    for rate in rates:
+        z = (middle - rate) * dt
+        for k in range(1, _SERIES_TERMS):
+            powers[k] += z * powers[k - 1]
+    total, factorial = 0.0, float(math.factorial(count - 1))
+    for k, power in enumerate(powers):
+        total += power / factorial
+        factorial *= k + count
+    return math.exp(-middle * dt) * math.pow(dt, count - 1) * total
