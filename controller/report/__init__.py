@@ -1,0 +1,1 @@
+"""What leaves the program about a run: exports now, reports later."""

@@ -1,0 +1,116 @@
+"""Export of a record: CSV with units in the header, a Frictionless data package, JSON.
+
+Source of the package's keys: the Data Package and Table Schema specifications (v1) of frictionlessdata.io, from memory.
+"""
+
+from __future__ import annotations
+
+import csv
+import hashlib
+import io
+from collections.abc import Mapping
+from typing import Any
+
+from controller.record import Record, points
+
+#: file name: (title, columns as (name, Table Schema type, what it is))
+TABLES: dict[str, tuple[str, tuple[tuple[str, str, str], ...]]] = {
+    "points.csv": (
+        "Points of the titration curve",
+        (
+            ("at_s", "number", "run time, s"),
+            ("volume_ml", "number", "titrant volume seen by the probe, mL"),
+            ("delivered_ml", "number", "titrant volume delivered, mL"),
+            ("potential_mv", "number", "potential, mV"),
+            ("ph", "number", "pH by the calibration of the record"),
+            ("settled", "boolean", "whether the reading settled within the time allowed"),
+        ),
+    ),
+    "readings.csv": (
+        "Every reading of the probe",
+        (
+            ("at_s", "number", "run time, s"),
+            ("delivered_ml", "number", "titrant volume delivered before it, mL"),
+            ("potential_mv", "number", "potential, mV"),
+            ("temperature_c", "number", "temperature, °C"),
+            ("status", "string", "the meter's word for the reading"),
+        ),
+    ),
+}
+
+
+def tables(record: Record) -> dict[str, str]:
+    """Return CSV text by file name."""
+    return {
+        "points.csv": _table("points.csv", points(record)),
+        "readings.csv": _table("readings.csv", _readings(record)),
+    }
+
+
+def data_package(record: Record, files: Mapping[str, str]) -> dict[str, Any]:
+    """Return the descriptor (`datapackage.json`) of these CSV files."""
+    plan = record.header.get("plan") or {}
+    return {
+        "profile": "tabular-data-package",
+        "name": "".join(c if c.isalnum() or c in "-_." else "-" for c in record.path.stem.lower()),
+        "title": f"{plan.get('method_title', 'Titration')}: {(plan.get('sample') or {}).get('sample_id', '')}",
+        "created": record.header.get("started_utc"),
+        "resources": [_resource(name, text) for name, text in files.items()],
+    }
+
+
+def whole(record: Record) -> dict[str, Any]:
+    """Return a record as one JSON object: header, points, closing line."""
+    return {"run": str(record.path), "header": record.header, "points": points(record), "closing": record.closing}
+
+
+def neutral(text: str) -> str:
+    """Return text that no spreadsheet takes for a formula: a leading = + - @, tab or return gets an apostrophe."""
+    return f"'{text}" if text[:1] in ("=", "+", "-", "@", "\t", "\r") else text
+
+
+def _readings(record: Record) -> list[dict[str, Any]]:
+    rows, delivered_ml = [], 0.0
+    for entry in record.entries:
+        if entry.get("observation") == "dosed":
+            delivered_ml += entry["volume_ml"]
+        elif entry.get("observation") == "reading":
+            rows.append({"status": "ok", **entry, "delivered_ml": round(delivered_ml, 9)})
+    return rows
+
+
+def _table(name: str, rows: list[dict[str, Any]]) -> str:
+    names = [column[0] for column in TABLES[name][1]]
+    out = io.StringIO(newline="")
+    writer = csv.writer(out)
+    writer.writerow(names)
+    writer.writerows([_cell(row.get(key)) for key in names] for row in rows)
+    return out.getvalue()
+
+
+def _cell(value: Any) -> str:
+    if value is None:
+        return ""
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    return repr(value) if isinstance(value, int | float) else neutral(str(value))
+
+
+def _resource(name: str, text: str) -> dict[str, Any]:
+    title, columns = TABLES[name]
+    data = text.encode()
+    return {
+        "profile": "tabular-data-resource",
+        "name": name.removesuffix(".csv"),
+        "path": name,
+        "title": title,
+        "format": "csv",
+        "mediatype": "text/csv",
+        "encoding": "utf-8",
+        "bytes": len(data),
+        "hash": f"sha256:{hashlib.sha256(data).hexdigest()}",
+        "schema": {
+            "fields": [{"name": key, "type": kind, "description": what} for key, kind, what in columns],
+            "missingValues": [""],
+        },
+    }
