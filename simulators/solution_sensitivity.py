@@ -24,7 +24,7 @@ class CurveSensitivities:
     """A curve of n points and the derivatives of its pH.
 
     `per_ml`: by the titrant volume. `sample_volume_per_ml`: by the sample's volume. `*_weak` (component, n) and
-    `*_ions` (ion, n): by a total concentration as given in the mixture, pH L/mol. `*_pka`: one array (step, n) per component.
+    `*_ions` (ion, n): by a total concentration as given in the mixture, pH L/mol. `*_pka`: one array (step, n) each.
     `titrant_scale`: by the relative strength of the whole titrant (1 as given). `pkw`: by pKw. `debye_huckel_a`: by A
     (zero without activity). A pKa or ion that both mixtures share has to be added up by the caller.
     """
