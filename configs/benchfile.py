@@ -1,0 +1,137 @@
+"""Settings of a bench: vessel, pump, probe with its calibration and lag record, and the simulated world, if any."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+from pydantic import Field
+
+from configs.fields import Disagreement, Settings, number, words
+from configs.simulation import SimulationSettings
+
+SIMULATED_PORT = "simulated"
+
+
+class VesselSettings(Settings):
+    """Limits of the bench that no method can pass."""
+
+    capacity_ml: float = number(1, 10000, "volume of the vessel up to its rim")
+    displaced_ml: float = number(0, 1000, "volume that probe, tip and stirrer displace", default=5.0)
+    margin_ml: float = number(0, 1000, "volume kept free below the rim", default=5.0)
+    tray_ml: float = number(0, 100000, "volume that the tray under the vessel holds", default=0.0)
+    waste_ml: float = number(0, 100000, "free volume of the waste vessel for priming and rinsing", default=0.0)
+    largest_dose_ml: float = number(0.001, 100, "largest single dose", default=1.0)
+    longest_run_s: float = number(10, 604800, "longest run", default=7200.0)
+    lowest_temperature_c: float = number(-10, 100, "temperature below which a run stops", default=10.0)
+    highest_temperature_c: float = number(-10, 100, "temperature above which a run stops", default=40.0)
+
+    def disagreements(self) -> list[Disagreement]:
+        """Return a vessel with no room and a window without width."""
+        found = []
+        if self.displaced_ml + self.margin_ml >= self.capacity_ml:
+            allowed = f"less than capacity_ml less displaced_ml, {self.capacity_ml - self.displaced_ml:g} mL"
+            found.append(Disagreement("margin_ml", self.margin_ml, allowed))
+        if self.lowest_temperature_c >= self.highest_temperature_c:
+            allowed = f"below highest_temperature_c, {self.highest_temperature_c:g} °C"
+            found.append(Disagreement("lowest_temperature_c", self.lowest_temperature_c, allowed))
+        return found
+
+
+class PortSettings(Settings):
+    """How a device is reached."""
+
+    port: str = words(
+        '"simulated", a port name, a device path, a pyserial URL, or the USB serial number of the adapter'
+    )
+    speaks: Literal["scpi"] = Field(default="scpi", description="grammar of the device")
+    baud_rate: int = number(300, 4000000, "symbols per second on the line", default=115200)
+    dtr: bool = Field(default=False, description="state of the DTR line when the port opens; many boards restart on it")
+    rts: bool = Field(default=False, description="state of the RTS line when the port opens")
+    reply_time_out_s: float = number(0.05, 30, "time in which the device must answer", default=1.0)
+
+
+class PumpSettings(PortSettings):
+    """The syringe pump and its stated delivery errors."""
+
+    syringe_ml: float = number(0.05, 1000, "volume of the syringe")
+    step_ml: float = number(1e-7, 0.1, "smallest step", default=0.0005)
+    rate_ml_min: float = number(0.01, 200, "rate of delivery", default=5.0)
+    highest_rate_ml_min: float = number(0.01, 200, "rate that no method can pass", default=10.0)
+    refill: Literal["valve", "by-hand", "none"] = Field(default="valve", description="how the syringe is filled again")
+    reservoir_ml: float = number(0, 100000, "titrant in the reservoir bottle when it was last changed", default=0.0)
+    position_sd_ml: float = number(0, 1, "standard deviation of the slowly varying position error", default=0.0009)
+    position_correlation_ml: float = number(0.0001, 100, "volume over which the position error varies", default=0.05)
+    dose_sd_ml: float = number(0, 1, "standard deviation of the error of each dose", default=0.00045)
+    gain_standard_uncertainty: float = number(0, 0.1, "relative standard uncertainty of all volumes", default=0.001)
+
+    def disagreements(self) -> list[Disagreement]:
+        """Return a rate above the highest and a step larger than the syringe."""
+        found = []
+        if self.rate_ml_min > self.highest_rate_ml_min:
+            allowed = f"at most highest_rate_ml_min, {self.highest_rate_ml_min:g} mL/min"
+            found.append(Disagreement("rate_ml_min", self.rate_ml_min, allowed))
+        if self.step_ml > self.syringe_ml / 100:
+            found.append(
+                Disagreement("step_ml", self.step_ml, f"at most a hundredth of syringe_ml, {self.syringe_ml:g} mL")
+            )
+        return found
+
+
+class CalibrationSettings(Settings):
+    """What a calibration with buffers found."""
+
+    slope_percent: float = number(50, 110, "slope, of the ideal slope")
+    isopotential_ph: float = number(0, 14, "pH at which temperature does not change the potential", default=7.0)
+    offset_mv: float = number(-200, 200, "potential at the isopotential pH")
+    slope_percent_standard_uncertainty: float = number(0, 10, "standard uncertainty of the slope", default=0.3)
+    offset_standard_uncertainty_mv: float = number(0, 50, "standard uncertainty of the offset", default=1.0)
+    calibrated_utc: str | None = words("when it was calibrated, UTC, in quotes", default=None)
+
+
+class ResponseSettings(Settings):
+    """The lag of the probe in its vessel, as a response check found it."""
+
+    bulk_s: float = number(0.01, 100, "time constant of mixing")
+    film_s: float = number(0.01, 100, "time constant of the film at the glass")
+    slow_s: float = number(0.1, 1000, "time constant of the slow layer")
+    slow_share_percent: float = number(0, 50, "share of the slow layer")
+    dead_time_s: float = number(0, 30, "delay before anything is seen")
+    time_relative_uncertainty_percent: float = number(0, 100, "standard uncertainty of the times", default=10.0)
+    share_relative_uncertainty_percent: float = number(0, 100, "standard uncertainty of the share", default=20.0)
+    measured_utc: str | None = words("when it was measured, UTC, in quotes", default=None)
+
+
+class ProbeSettings(PortSettings):
+    """The probe with its meter."""
+
+    signal: Literal["potential", "ph"] = Field(default="potential", description="what the meter gives")
+    resolution_mv: float = number(0.0001, 10, "smallest step of a reading", default=0.1)
+    reading_interval_s: float = number(0.05, 60, "time between readings", default=0.5)
+    typed_temperature_c: float | None = number(-5, 100, "temperature where there is no sensor", default=None)
+    calibration: CalibrationSettings | None = Field(default=None, description="last calibration with buffers")
+    response: ResponseSettings | None = Field(
+        default=None, description="last response check; left out: lag is not known"
+    )
+
+
+class BenchSettings(Settings):
+    """A bench file."""
+
+    schema_version: Literal[1] = Field(default=1, description="version of this form of file")
+    name: str = words("name of the bench")
+    vessel: VesselSettings = Field(description="limits that no method can pass")
+    pump: PumpSettings = Field(description="the syringe pump")
+    probe: ProbeSettings = Field(description="the probe")
+    simulation: SimulationSettings | None = Field(
+        default=None, description="the simulated world behind simulated ports"
+    )
+
+    def disagreements(self) -> list[Disagreement]:
+        """Return a simulated port without a simulation."""
+        if self.simulation is None:
+            return [
+                Disagreement(f"{name}.port", SIMULATED_PORT, "a real port, or a group simulation in this file")
+                for name, device in (("pump", self.pump), ("probe", self.probe))
+                if device.port == SIMULATED_PORT
+            ]
+        return []

@@ -1,0 +1,90 @@
+"""The settings files by kind: methods, benches, solutions, answers; what ships; their JSON Schema."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any, Literal
+
+from configs.benchfile import BenchSettings
+from configs.errors import SettingsError
+from configs.fields import Settings, unit_of
+from configs.loading import load, parse, read_document, read_file
+from configs.method import MethodSettings
+from configs.shipped import shipped_bytes, shipped_names
+from configs.solutionfile import SolutionSettings
+
+Kind = Literal["method", "bench", "solution"]
+MODELS: dict[Kind, type[Settings]] = {"method": MethodSettings, "bench": BenchSettings, "solution": SolutionSettings}
+LONGEST_ANSWER = 400
+
+
+def load_method(path: str | Path) -> MethodSettings:
+    """Return the method of a file. Raises: SettingsError with every problem."""
+    return load(path, MethodSettings)
+
+
+def load_bench(path: str | Path) -> BenchSettings:
+    """Return the bench of a file. Raises: SettingsError with every problem."""
+    return load(path, BenchSettings)
+
+
+def load_solution(path: str | Path) -> SolutionSettings:
+    """Return the two mixtures of a solution file. Raises: SettingsError with every problem."""
+    return load(path, SolutionSettings)
+
+
+def load_answers(path: str | Path) -> dict[str, str]:
+    """Return the answers of a file, key by key, letter for letter: `hypochlorite: no` is the answer "no".
+
+    Raises:
+        SettingsError: with every problem: an answer that is empty, a list or a group, a key twice.
+    """
+    where = str(path)
+    document, traps = read_document(read_file(path), where=where, all_text=True)
+    problems = [f"{where}:{trap.line}:{trap.column}: {trap.key}: {trap.text}" for trap in traps]
+    answers: dict[str, str] = {}
+    for key, value in document.content.items():
+        content = value.content
+        if isinstance(content, str) and 0 < len(content.strip()) <= LONGEST_ANSWER:
+            answers[key] = content.strip()
+        else:
+            got = "nothing" if content == "" else "a long text" if isinstance(content, str) else "a group or list"
+            allowed = f"one answer of 1 to {LONGEST_ANSWER} characters"
+            problems.append(f"{where}:{value.line}:{value.column}: {key}: got {got}, allowed: {allowed}")
+    if problems:
+        raise SettingsError(problems, where=where)
+    return answers
+
+
+def shipped_methods() -> tuple[str, ...]:
+    """Return the names of the methods that ship with the program."""
+    return shipped_names("methods")
+
+
+def shipped_benches() -> tuple[str, ...]:
+    """Return the names of the benches that ship with the program."""
+    return shipped_names("benches")
+
+
+def shipped_method(name: str) -> MethodSettings:
+    """Return a shipped method. Raises: HalfdropError where nothing of this name ships."""
+    return parse(shipped_bytes("methods", name), MethodSettings, where=f"methods/{name}.yaml")
+
+
+def shipped_bench(name: str = "simulated") -> BenchSettings:
+    """Return a shipped bench. Raises: HalfdropError where nothing of this name ships."""
+    return parse(shipped_bytes("benches", name), BenchSettings, where=f"benches/{name}.yaml")
+
+
+def schema(kind: Kind) -> dict[str, Any]:
+    """Return the JSON Schema (draft 2020-12) of a kind of file, for editors; `x-unit` gives a number's unit."""
+    document = MODELS[kind].model_json_schema()
+    for part in (document, *document.get("$defs", {}).values()):
+        for name, entry in part.get("properties", {}).items():
+            if (unit := unit_of(name)) and entry.get("type") != "object":
+                entry["x-unit"] = unit
+    return {
+        "$schema": "https://json-schema.org/draft/2020-12/schema",
+        **document,
+        "title": f"halfdrop {kind} file",
+    }
