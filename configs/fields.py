@@ -12,6 +12,8 @@ from pydantic_core import PydanticCustomError, PydanticUndefined
 from configs.catalogue import find_substance, substance_names
 from configs.nearest import did_you_mean
 
+PLAIN_NAME = r"^[a-z0-9]([a-z0-9-]{0,62}[a-z0-9])?$"
+
 #: unit of a number by the end of its name; the longest ending wins
 UNITS = {
     "_mol_l_s": "mol/(L s)", "_mol_l": "mol/L", "_g_mol": "g/mol", "_g_ml": "g/mL", "_mv_min": "mV/min",
@@ -96,4 +98,4 @@ def limits_of(info: FieldInfo) -> dict[str, float]:
 #: a name or alias of the catalogue; becomes the catalogue's name
 SubstanceName = Annotated[str, AfterValidator(_known_substance)]
 #: a name that is safe in file names: small letters, digits, hyphens
-PlainName = Annotated[str, Field(pattern=r"^[a-z0-9]([a-z0-9-]{0,62}[a-z0-9])?$")]
+PlainName = Annotated[str, Field(pattern=PLAIN_NAME)]

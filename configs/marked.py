@@ -25,15 +25,19 @@ _NUMBER = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([eE][-+]?\d+)?")
 _INTEGER = re.compile(r"[-+]?(0|[1-9]\d*)")
 _TRUE_FALSE = {"true": True, "True": True, "TRUE": True, "false": False, "False": False, "FALSE": False}
 _NULLS = ("", "~", "null", "Null", "NULL")
-#: what YAML 1.1 would silently turn into something else, with the word for it
+#: what YAML 1.1 would silently turn into something else, with the name of it and what to write instead
 _TRAPS = (
-    (re.compile(r"y|n|yes|no|on|off", re.IGNORECASE), "a yes-or-no word", "write true or false, or quote it"),
-    (re.compile(r"[-+]?\d[\d_]*(:[0-5]?\d)+(\.[\d_]*)?"), "a time that YAML reads as a number to base 60", "quote it"),
-    (re.compile(r"\d{4}-\d\d?-\d\d?([Tt ].*)?"), "a date", "quote it"),
-    (re.compile(r"[-+]?0\d+"), "a number with leading zeros, octal in YAML", "drop the zeros, or quote it"),
-    (re.compile(r"[-+]?0[xXbBo][0-9a-fA-F_]+"), "a hexadecimal or binary number", "write it in decimal, or quote it"),
-    (re.compile(r"[-+]?\d[\d_]*_[\d_]*\.?[\d_]*"), "a number with underscores", "drop them, or quote it"),
-    (re.compile(r"[-+]?\.?(inf|nan)", re.IGNORECASE), "no finite number", "write a number, or quote it"),
+    (re.compile(r"y|n|yes|no|on|off", re.IGNORECASE), "a yes-or-no word to YAML", "true or false, or"),
+    (re.compile(r"[-+]?\d[\d_]*(:[0-5]?\d)+(\.[\d_]*)?"), "a number to base 60 to YAML", "a plain number, or"),
+    (re.compile(r"\d{4}-\d\d?-\d\d?([Tt ].*)?"), "a date to YAML", ""),
+    (re.compile(r"[-+]?0\d+"), "an octal number to YAML", "a number without leading zeros, or"),
+    (
+        re.compile(r"[-+]?0[xXbBo][0-9a-fA-F_]+"),
+        "a hexadecimal, octal or binary number to YAML",
+        "a decimal number, or",
+    ),
+    (re.compile(r"[-+]?\d[\d_]*_[\d_]*\.?[\d_]*"), "a number with underscores", "a number without them, or"),
+    (re.compile(r"[-+]?\.?(inf|nan)", re.IGNORECASE), "no finite number", "a finite number, or"),
 )
 
 
@@ -162,7 +166,9 @@ class _Reader:
                 self._refuse(line, column, key, "got a merge of another mapping, allowed: its keys, written out")
             elif name in marked.keys:
                 first = marked.keys[name][0]
-                self._refuse(line, column, key, f"got the key twice, allowed: once; it first stands in line {first}")
+                self._refuse(
+                    line, column, key, f"got the key a second time, allowed: once (it first stands in line {first})"
+                )
             else:
                 marked.content[name] = value
                 marked.keys[name] = (line, column)
@@ -181,15 +187,16 @@ class _Reader:
             return None
         if text in _TRUE_FALSE:
             return _TRUE_FALSE[text]
-        for pattern, what, remedy in _TRAPS:
+        for pattern, what, instead in _TRAPS:
             if pattern.fullmatch(text):
-                self._refuse(*_place(event), key, f'got {text}, {what}; {remedy}: "{text}"')
+                allowed = f'{instead} "{text}" in quotes'.strip()
+                self._refuse(*_place(event), key, f"got {text} ({what}), allowed: {allowed}")
                 return None
         if _INTEGER.fullmatch(text) and len(text) < LONGEST_SHOWN:
             return int(text)
         if _NUMBER.fullmatch(text):
             if math.isinf(number := float(text)):
-                self._refuse(*_place(event), key, f"got {text}, too large for a number")
+                self._refuse(*_place(event), key, f"got {text}, allowed: a finite number")
             return number
         return text
 

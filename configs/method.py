@@ -9,10 +9,10 @@ from typing import Literal
 
 from pydantic import Field
 
+from configs.catalogue import substance, substances
+from configs.course import DosingSettings, EndPointSettings, LimitSettings, SettlingSettings
 from configs.fields import Disagreement, PlainName, Settings, SubstanceName, group, number, words
 
-DosingPolicy = Literal["model-guided", "slope-adaptive", "equal-volumes"]
-SettlingRule = Literal["lag-corrected", "extrapolated", "stability-limit", "fixed-wait"]
 ReportUnit = Literal["mol/L", "mmol/L", "g/L", "mg/L", "mg/L CaCO3", "% m/v", "g per 100 mL", "% m/m", "mmol per 100 g"]
 UNITS_BY_MASS = ("% m/m", "mmol per 100 g")
 
@@ -54,8 +54,6 @@ class TitrantSettings(Settings):
 
     def disagreements(self) -> list[Disagreement]:
         """Return a titrant that is no strong acid or base."""
-        from configs.catalogue import substance, substances
-
         if substance(self.substance).strong is None:
             strong = ", ".join(item.name for item in substances() if item.strong)
             return [Disagreement("substance", self.substance, f"a strong acid or base: {strong}")]
@@ -72,87 +70,6 @@ class AnalyteSettings(Settings):
     expected_equivalence_volume_ml: float | None = number(
         None, 1000, "expected volume of titrant to the last end point", default=None, above=0
     )
-
-
-class DosingSettings(Settings):
-    """How the next dose is chosen."""
-
-    policy: DosingPolicy = Field(default="model-guided", description="how the next dose is chosen")
-    smallest_ml: float = number(0.0005, 1, "smallest dose", default=0.005)
-    largest_ml: float = number(0.001, 10, "largest dose", default=0.5)
-    largest_past_equivalence_ml: float = number(0.001, 10, "largest dose past the equivalence point", default=0.1)
-    model_step_mv: float = number(1, 100, "step of potential aimed at near equivalence, model-guided", default=20.0)
-    slope_step_mv: float = number(1, 100, "step of potential aimed at, slope-adaptive", default=8.0)
-    growth_limit: float = number(1.1, 10, "a dose is at most this many times the dose before it", default=3.0)
-    equal_volume_ml: float = number(0.0005, 10, "every dose, equal-volumes", default=0.1)
-    first_dose_ml: float = number(0.0005, 10, "first dose of a run", default=0.1)
-
-    def disagreements(self) -> list[Disagreement]:
-        """Return doses that are out of order."""
-        found = []
-        for name in ("largest_ml", "largest_past_equivalence_ml", "first_dose_ml"):
-            value = getattr(self, name)
-            if value < self.smallest_ml:
-                found.append(Disagreement(name, value, f"at least smallest_ml, {self.smallest_ml:g} mL"))
-        for name in ("largest_past_equivalence_ml", "first_dose_ml"):
-            value = getattr(self, name)
-            if value > self.largest_ml:
-                found.append(Disagreement(name, value, f"at most largest_ml, {self.largest_ml:g} mL"))
-        if self.policy == "equal-volumes" and self.equal_volume_ml > self.largest_ml:
-            found.append(
-                Disagreement("equal_volume_ml", self.equal_volume_ml, f"at most largest_ml, {self.largest_ml:g} mL")
-            )
-        return found
-
-
-class SettlingSettings(Settings):
-    """When a reading is accepted as a point."""
-
-    rule: SettlingRule = Field(default="lag-corrected", description="when a reading is accepted as a point")
-    shortest_s: float = number(0, 600, "shortest time after a dose", default=4.0)
-    longest_s: float = number(
-        0.5, 3600, "longest time after a dose; the point is then marked as not settled", default=60.0
-    )
-    stability_limit_mv_min: float = number(
-        None, 1000, "largest drift of the signal that counts as stable, stability-limit", default=3.0, above=0
-    )
-    stability_readings: int = number(3, 100, "readings over which stability is judged, stability-limit", default=10)
-    fixed_wait_s: float = number(0.5, 3600, "time after each dose, fixed-wait", default=15.0)
-
-    def disagreements(self) -> list[Disagreement]:
-        """Return times that are out of order."""
-        if self.shortest_s > self.longest_s:
-            return [Disagreement("shortest_s", self.shortest_s, f"at most longest_s, {self.longest_s:g} s")]
-        return []
-
-
-class EndPointSettings(Settings):
-    """How many equivalence points are looked for."""
-
-    expected: int = number(1, 6, "equivalence points looked for", default=1)
-    smallest_rise_mv: float = number(10, 1000, "smallest change of potential that makes an end point", default=60.0)
-    stop_at_last: bool = Field(default=True, description="whether the run ends soon after the last end point")
-
-
-class LimitSettings(Settings):
-    """Limits that end a run, whichever comes first."""
-
-    titrant_ml: float = number(None, 1000, "largest volume of titrant", default=20.0, above=0)
-    run_time_s: float = number(10, 86400, "longest time from the first dose", default=3600.0)
-    overrun_ml: float = number(0, 100, "largest volume past the last expected end point", default=1.0)
-    lowest_ph: float | None = number(-2, 16, "pH below which the run ends", default=None)
-    highest_ph: float | None = number(-2, 16, "pH above which the run ends", default=None)
-    lowest_mv: float | None = number(-2000, 2000, "potential below which the run ends", default=None)
-    highest_mv: float | None = number(-2000, 2000, "potential above which the run ends", default=None)
-
-    def disagreements(self) -> list[Disagreement]:
-        """Return limits that are out of order."""
-        found = []
-        for kind, unit in (("ph", ""), ("mv", " mV")):
-            lowest, highest = getattr(self, f"lowest_{kind}"), getattr(self, f"highest_{kind}")
-            if lowest is not None and highest is not None and lowest >= highest:
-                found.append(Disagreement(f"lowest_{kind}", lowest, f"below highest_{kind}, {highest:g}{unit}"))
-        return found
 
 
 class QuestionSettings(Settings):

@@ -6,9 +6,8 @@ from pathlib import Path
 from typing import Any, Literal
 
 from configs.benchfile import BenchSettings
-from configs.errors import SettingsError
 from configs.fields import Settings, unit_of
-from configs.loading import load, parse, read_document, read_file
+from configs.loading import Problem, load, parse, read_document, read_file, settings_error
 from configs.method import MethodSettings
 from configs.shipped import shipped_bytes, shipped_names
 from configs.solutionfile import SolutionSettings
@@ -41,7 +40,7 @@ def load_answers(path: str | Path) -> dict[str, str]:
     """
     where = str(path)
     document, traps = read_document(read_file(path), where=where, all_text=True)
-    problems = [f"{where}:{trap.line}:{trap.column}: {trap.key}: {trap.text}" for trap in traps]
+    problems = [Problem(trap.line, trap.column, trap.key, trap.text) for trap in traps]
     answers: dict[str, str] = {}
     for key, value in document.content.items():
         content = value.content
@@ -50,9 +49,9 @@ def load_answers(path: str | Path) -> dict[str, str]:
         else:
             got = "nothing" if content == "" else "a long text" if isinstance(content, str) else "a group or list"
             allowed = f"one answer of 1 to {LONGEST_ANSWER} characters"
-            problems.append(f"{where}:{value.line}:{value.column}: {key}: got {got}, allowed: {allowed}")
+            problems.append(Problem(value.line, value.column, key, f"got {got}, allowed: {allowed}"))
     if problems:
-        raise SettingsError(problems, where=where)
+        raise settings_error(problems, where=where)
     return answers
 
 

@@ -12,8 +12,6 @@ from pydantic import Field
 
 from configs.fields import Disagreement, Settings, SubstanceName, group, number, words
 
-BottleName = str
-
 
 class StrongIonSettings(Settings):
     """An ion that neither takes up nor gives off protons."""
@@ -116,10 +114,10 @@ class SimulationSettings(Settings):
     electrode: ElectrodeTruthSettings = group(ElectrodeTruthSettings, "the electrode")
     beaker: BeakerTruthSettings = group(BeakerTruthSettings, "the beaker")
     pump: PumpTruthSettings = group(PumpTruthSettings, "the syringe pump")
-    titrants: dict[BottleName, TitrantBottleSettings] = Field(
-        default_factory=dict, description="bottles of titrant by the name of the titrant's substance"
+    titrants: dict[SubstanceName, TitrantBottleSettings] = Field(
+        default_factory=dict, description="bottles of titrant by the name of their substance"
     )
-    samples: dict[BottleName, SampleBottleSettings] = Field(default_factory=dict, description="samples by name")
+    samples: dict[str, SampleBottleSettings] = Field(default_factory=dict, description="samples by name")
     sample: str | None = words("sample in the beaker where the method names none", default=None)
 
     def disagreements(self) -> list[Disagreement]:
