@@ -8,52 +8,31 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from typing import Literal, NamedTuple
+from typing import Literal
 
+from simulators.carbon_dioxide import AlkalineExcess, Uptake
+from simulators.drops import Drops
+from simulators.flow import Flow
 from simulators.lag import LagCascade, LagConstants
-from simulators.noise import KeyedNoise
-
-
-class Flow(NamedTuple):
-    """`volume_ml` leaves the tip evenly from `start_s` to `end_s` (equal: at once)."""
-
-    start_s: float
-    end_s: float
-    volume_ml: float
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class AlkalineExcess:
-    """Strong base beyond the last equivalence point: mol = mol_per_ml x (titrant volume - zero_at_ml), if positive.
-
-    `mol_per_ml` is positive for a base as titrant, negative for an acid (then the sample is alkaline at first).
-    """
-
-    zero_at_ml: float
-    mol_per_ml: float
-
-    def mol(self, volume_ml: float) -> float:
-        """Excess of strong base, mol."""
-        return max(0.0, self.mol_per_ml * (volume_ml - self.zero_at_ml))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class BeakerTruth:
     """How the vessel behaves.
 
-    `lag` holds with the stirrer on; off, bulk and film take `unstirred_bulk_factor` and `unstirred_film_factor` times
-    as long. `carbon_dioxide_per_h`: share of the excess strong base that turns to carbonate in an hour (order 0.001 in
-    an open beaker, a value from memory). `tip_leak_ml_min` leaks from a resting immersed tip until `tip_leak_most_ml`
-    has left; the next dose pushes the thinned titrant out first, so it is missing there. Drops of a free tip hold from
-    `drop_smallest_ml` to `drop_largest_ml`.
+    `lag` holds with the stirrer on; off, mixing takes `unstirred_bulk_s` and the film `unstirred_film_factor` times as
+    long. `carbon_dioxide_mol_l_s`: uptake while the liquid is alkaline (order 1e-8 in an open beaker: from memory,
+    0.1 mol/L sodium hydroxide loses about 0.1 % an hour). An immersed tip at rest leaks `tip_leak_ml_min` until
+    `tip_leak_most_ml` has left; the next dose pushes the thinned titrant out first, so it is missing there. Drops of a
+    free tip hold from `drop_smallest_ml` to `drop_largest_ml`.
     """
 
     initial_volume_ml: float
     temperature_c: float
     lag: LagConstants
-    unstirred_bulk_factor: float = 20.0
+    unstirred_bulk_s: float = 120.0
     unstirred_film_factor: float = 3.0
-    carbon_dioxide_per_h: float = 0.0
+    carbon_dioxide_mol_l_s: float = 0.0
     tip: Literal["immersed", "free"] = "immersed"
     tip_leak_ml_min: float = 0.0
     tip_leak_most_ml: float = 0.0005
@@ -84,10 +63,12 @@ class Beaker:
         self.truth = truth
         self.stirred = stirred
         self._cascade = LagCascade(self._constants(stirred), at_s=start_s)
-        self._drops = _Drops(truth, seed) if truth.tip == "free" else None
+        self._drops = Drops(truth.drop_smallest_ml, truth.drop_largest_ml, seed) if truth.tip == "free" else None
         self._leaking_since_s = start_s
-        uptake = excess if excess is not None and truth.carbon_dioxide_per_h > 0.0 else None
-        self._uptake = _Uptake(uptake, truth.carbon_dioxide_per_h, start_s) if uptake is not None else None
+        self._uptake: Uptake | None = None
+        if excess is not None and truth.carbon_dioxide_mol_l_s > 0.0:
+            mol_s = truth.carbon_dioxide_mol_l_s * 1e-3 * truth.initial_volume_ml
+            self._uptake = Uptake(excess, mol_s, start_s)
         self._leak(start_s)
 
     # --- what is done to it ---
@@ -135,8 +116,8 @@ class Beaker:
         """Total carbonate taken up from the air, mol/L of the liquid."""
         if self._uptake is None:
             return 0.0
-        volume_l = 1e-3 * (self.truth.initial_volume_ml + self.delivered_ml(at_s))
-        return self._uptake.carbonate_mol(at_s) / volume_l
+        delivered_ml = self.delivered_ml(at_s)
+        return self._uptake.carbonate_mol(at_s, delivered_ml) / (1e-3 * (self.truth.initial_volume_ml + delivered_ml))
 
     def hanging_ml(self, at_s: float) -> float:
         """Titrant that left a free tip and hangs there at `at_s`; 0 for an immersed tip."""
@@ -148,15 +129,13 @@ class Beaker:
         lag, truth = self.truth.lag, self.truth
         if stirred:
             return lag
-        return replace(
-            lag, bulk_s=lag.bulk_s * truth.unstirred_bulk_factor, film_s=lag.film_s * truth.unstirred_film_factor
-        )
+        return replace(lag, bulk_s=truth.unstirred_bulk_s, film_s=lag.film_s * truth.unstirred_film_factor)
 
     def _add(self, flow: Flow) -> None:
         before_ml = self._cascade.delivered_ml(self._cascade.ends_at_s)
         self._cascade.ramp(*flow)
         if self._uptake is not None:
-            self._uptake.ramp(flow, before_ml)
+            self._uptake.pour(flow, before_ml)
 
     def _leak(self, at_s: float) -> None:
         """From `at_s` the tip rests: it leaks until it is thinned out."""
@@ -176,78 +155,3 @@ class Beaker:
         if self._uptake is not None:
             self._uptake.stop_at(at_s)
         return [Flow(at_s, at_s, -min(leaked_ml, truth.tip_leak_most_ml))]
-
-
-class _Drops:
-    """A free tip: drop n falls when the volume that left the tip reaches the sum of the first n drops' sizes."""
-
-    def __init__(self, truth: BeakerTruth, seed: int) -> None:
-        self._smallest_ml = truth.drop_smallest_ml
-        self._span_ml = truth.drop_largest_ml - truth.drop_smallest_ml
-        self._noise = KeyedNoise(seed, "drop size")
-        self._record: list[tuple[float, float]] = []  # time, volume that left the tip by then
-        self._fallen: list[tuple[float, float]] = []  # time, sum of the drops that fell by then
-
-    def fall(self, flows: Sequence[Flow]) -> list[Flow]:
-        """The drops that fall during `flows`."""
-        drops: list[Flow] = []
-        for start_s, end_s, volume_ml in flows:
-            before_ml = self._record[-1][1] if self._record else 0.0
-            fallen_ml = self._fallen[-1][1] if self._fallen else 0.0
-            size_ml = self._size_ml(len(self._fallen))
-            while volume_ml > 0.0 and fallen_ml + size_ml <= before_ml + volume_ml:
-                share = max(0.0, (fallen_ml + size_ml - before_ml) / volume_ml)
-                at_s = start_s + share * (end_s - start_s)
-                drops.append(Flow(at_s, at_s, size_ml))
-                fallen_ml += size_ml
-                self._fallen.append((at_s, fallen_ml))
-                size_ml = self._size_ml(len(self._fallen))
-            self._record += [(start_s, before_ml), (end_s, before_ml + volume_ml)]
-        return drops
-
-    def stop_at(self, at_s: float) -> None:
-        left_ml = self._left_tip_ml(at_s)
-        self._record = [(time_s, ml) for time_s, ml in self._record if time_s <= at_s]
-        self._record.append((at_s, left_ml))
-        self._fallen = [(time_s, ml) for time_s, ml in self._fallen if time_s <= at_s]
-
-    def hanging_ml(self, at_s: float) -> float:
-        fallen_ml = max((ml for time_s, ml in self._fallen if time_s <= at_s), default=0.0)
-        return self._left_tip_ml(at_s) - fallen_ml
-
-    def _left_tip_ml(self, at_s: float) -> float:
-        before = (0.0, 0.0)
-        for entry in self._record:
-            if entry[0] > at_s:
-                return before[1] + (entry[1] - before[1]) * (at_s - before[0]) / (entry[0] - before[0])
-            before = entry
-        return before[1]
-
-    def _size_ml(self, number: int) -> float:
-        return self._smallest_ml + self._span_ml * self._noise.uniform(number)
-
-
-class _Uptake:
-    """Carbon dioxide from the air: n' = k (excess - 2 n), n mol of carbonate, in closed form (a lag of the excess)."""
-
-    def __init__(self, excess: AlkalineExcess, share_per_h: float, start_s: float) -> None:
-        self._excess = excess
-        slow = LagConstants(bulk_s=3600.0 / share_per_h, film_s=1.0, slow_s=1.0, slow_share=0.0, dead_time_s=0.0)
-        self._lag = LagCascade(slow, volume_ml=excess.mol(0.0), at_s=start_s, states=(0.0, 0.0, 0.0))
-
-    def ramp(self, flow: Flow, before_ml: float) -> None:
-        start_s, end_s, volume_ml = flow
-        first, last = self._excess.mol(before_ml), self._excess.mol(before_ml + volume_ml)
-        share = (self._excess.zero_at_ml - before_ml) / volume_ml if volume_ml != 0.0 else 0.0
-        if 0.0 < share < 1.0:  # the excess begins or ends on the way
-            middle_s = start_s + share * (end_s - start_s)
-            self._lag.ramp(start_s, middle_s, -first)
-            self._lag.ramp(middle_s, end_s, last)
-        else:
-            self._lag.ramp(start_s, end_s, last - first)
-
-    def stop_at(self, at_s: float) -> None:
-        self._lag.stop_at(at_s)
-
-    def carbonate_mol(self, at_s: float) -> float:
-        return 0.5 * self._lag.states(at_s)[0]

@@ -6,7 +6,7 @@ import math
 from dataclasses import dataclass
 from typing import Literal
 
-from simulators.beaker import Flow
+from simulators.flow import Flow
 from simulators.noise import CorrelatedNoise
 
 _PERIODIC_KNOTS = 40  # knots in a period, where the correlated part asks for no closer ones

@@ -26,13 +26,20 @@ def sodium_error_ph(ph: float, sodium_mol_l: float) -> float:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ElectrodeTruth:
-    """How the probe really is. mV, °C, s; slope as a fraction of the ideal one; drift in mV/min from the start."""
+    """How the probe really is. mV, °C, s; slope as a fraction of the ideal one.
+
+    Drift from the start is the sum of three: a steady one (`drift_mv_min`); one whose pace wanders (`drift_sd_mv_min`,
+    keeping its direction for about `drift_correlation_s`), as a reference drifts; and a potential that wanders about
+    its mean (`wander_sd_mv`, `wander_correlation_s`).
+    """
 
     slope_fraction: float = 1.0
     isopotential_ph: float = 7.0
     isopotential_mv: float = 0.0
     junction_mv: float = 0.0
     drift_mv_min: float = 0.0
+    drift_sd_mv_min: float = 0.0
+    drift_correlation_s: float = 600.0
     wander_sd_mv: float = 0.0
     wander_correlation_s: float = 600.0
     noise_sd_mv: float = 0.0
@@ -57,14 +64,18 @@ class Electrode:
         self._start_s = start_s
         self._noise = KeyedNoise(seed, "reading noise")
         self._temperature_noise = KeyedNoise(seed, "temperature noise")
+        self._pace = CorrelatedNoise(
+            seed, "pace of the drift", sd=truth.drift_sd_mv_min / 60.0, correlation=truth.drift_correlation_s
+        )
         self._wander = CorrelatedNoise(
-            seed, "signal drift", sd=truth.wander_sd_mv, correlation=truth.wander_correlation_s
+            seed, "wander", sd=truth.wander_sd_mv, correlation=truth.wander_correlation_s, from_zero=True
         )
 
     def drift_mv(self, at_s: float) -> float:
-        """Signal drift since the start: a steady part and a wandering one."""
+        """Signal drift since the start."""
         since_s = at_s - self._start_s
-        return self.truth.drift_mv_min * since_s / 60.0 + self._wander.at(since_s)
+        steady_mv = self.truth.drift_mv_min * since_s / 60.0
+        return steady_mv + self._pace.integral(since_s) + self._wander.at(since_s)
 
     def true_potential_mv(self, ph: float, temperature_c: float, at_s: float, *, sodium_mol_l: float = 0.0) -> float:
         """Potential before noise and rounding."""

@@ -64,6 +64,7 @@ class CorrelatedNoise:
         knot_sd = sd / math.sqrt((2.0 + self._keep) / 3.0)
         self._fresh = knot_sd * math.sqrt(1.0 - self._keep**2)
         self._knots = [0.0 if from_zero else knot_sd * self._noise.normal(0)]
+        self._sums = [0.0]
         self.off = sd == 0.0
 
     def knot(self, index: int) -> float:
@@ -81,3 +82,16 @@ class CorrelatedNoise:
         index = int(position)
         low = self.knot(index)
         return low + (position - index) * (self.knot(index + 1) - low)
+
+    def integral(self, place: float) -> float:
+        """The process summed from its start to `place`: exact for the lines between the knots."""
+        if self.off:
+            return 0.0
+        position = max(place, 0.0) / self.spacing
+        index = int(position)
+        sums = self._sums
+        while len(sums) <= index:
+            last = len(sums) - 1
+            sums.append(sums[-1] + 0.5 * self.spacing * (self.knot(last) + self.knot(last + 1)))
+        rest, low = position - index, self.knot(index)
+        return sums[index] + self.spacing * rest * (low + 0.5 * rest * (self.knot(index + 1) - low))

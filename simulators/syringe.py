@@ -13,8 +13,8 @@ from dataclasses import replace
 from typing import Literal, Protocol
 
 from configs.errors import HalfdropError
-from simulators.beaker import Flow
 from simulators.delivery import DeliveryError, SyringeTruth
+from simulators.flow import Flow
 from simulators.motion import Motion
 from simulators.noise import KeyedNoise
 
