@@ -45,8 +45,9 @@ def allowed_at(model: type[Settings], location: Location) -> str:
     kind = kind_of(annotation)
     if kind in ("number", "whole number"):
         name = next((part for part in reversed(location) if isinstance(part, str)), "")
-        spelled = _range(limits_of(info) if info is not None else {})
-        shown_kind = "" if spelled and kind == "number" else kind
+        limits = limits_of(info) if info is not None else {}
+        spelled = _range(limits)
+        shown_kind = kind if not spelled or (kind == "whole number" and limits.get("ge") != limits.get("le")) else ""
         return " ".join(part for part in (shown_kind, spelled, unit_of(name)) if part)
     metadata = info.metadata if info is not None else []
     if any(getattr(item, "pattern", None) == PLAIN_NAME for item in metadata):
@@ -74,7 +75,7 @@ def kind_of(annotation: Any) -> str:
 def _range(limits: dict[str, float]) -> str:
     lowest, above, highest = limits.get("ge"), limits.get("gt"), limits.get("le")
     if lowest is not None and highest is not None:
-        return f"{lowest:.12g} to {highest:.12g}"
+        return f"{lowest:.12g} to {highest:.12g}" if lowest != highest else f"{lowest:.12g}"
     parts = []
     if above is not None:
         parts.append(f"above {above:.12g}")

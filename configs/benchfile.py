@@ -117,7 +117,7 @@ class ProbeSettings(PortSettings):
 class BenchSettings(Settings):
     """A bench file."""
 
-    schema_version: Literal[1] = Field(default=1, description="version of this form of file")
+    schema_version: int = number(1, 1, "version of this form of file", default=1)
     name: str = words("name of the bench")
     vessel: VesselSettings = Field(description="limits that no method can pass")
     pump: PumpSettings = Field(description="the syringe pump")

@@ -56,7 +56,7 @@ def substance(name: str) -> Substance:
     found = find_substance(name)
     if found is None:
         raise HalfdropError(
-            f"unknown substance {name!r}{did_you_mean(name, _names())}",
+            f"unknown substance {name!r}{near_substances(name)}",
             where="catalogue of substances",
             remedy="Use a name of the catalogue, or state pka and charge yourself where the file allows it",
         )
@@ -74,17 +74,13 @@ def substances() -> tuple[Substance, ...]:
     return _catalogue()
 
 
-def substance_names() -> tuple[str, ...]:
-    """Return the names (without aliases) of every substance."""
-    return tuple(item.name for item in _catalogue())
+def near_substances(name: str) -> str:
+    """Return " (did you mean ...?)" with the substances whose name or alias is near, or nothing."""
+    return did_you_mean(name, {word: item.name for item in _catalogue() for word in (item.name, *item.aliases)})
 
 
 def _folded(name: str) -> str:
     return " ".join(name.casefold().replace("-", " ").replace("_", " ").split())
-
-
-def _names() -> tuple[str, ...]:
-    return tuple(word for item in _catalogue() for word in (item.name, *item.aliases))
 
 
 @functools.cache

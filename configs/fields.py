@@ -9,8 +9,7 @@ from pydantic import AfterValidator, BaseModel, ConfigDict, Field, model_validat
 from pydantic.fields import FieldInfo
 from pydantic_core import PydanticCustomError, PydanticUndefined
 
-from configs.catalogue import find_substance, substance_names
-from configs.nearest import did_you_mean
+from configs.catalogue import find_substance, near_substances
 
 PLAIN_NAME = r"^[a-z0-9]([a-z0-9-]{0,62}[a-z0-9])?$"
 
@@ -80,8 +79,7 @@ def unit_of(name: str) -> str:
 def _known_substance(name: str) -> str:
     found = find_substance(name)
     if found is None:
-        near = did_you_mean(name, substance_names())
-        raise PydanticCustomError("unknown_substance", "unknown substance", {"near": near})
+        raise PydanticCustomError("unknown_substance", "unknown substance", {"near": near_substances(name)})
     return found.name
 
 

@@ -59,9 +59,8 @@ def parse(data: bytes, model: type[Model], *, where: str) -> Model:
 def settings_error(problems: list[Problem], *, where: str) -> SettingsError:
     """Return the error of these problems, in the order of the file, one line each."""
     ordered = sorted(dict.fromkeys(problems), key=lambda problem: problem[:2])
-    return SettingsError(
-        [f"{where}:{line}:{column}: {key}: {text}" for line, column, key, text in ordered], where=where
-    )
+    lines = [f"{where}:{line}:{column}: {key}: {text}" for line, column, key, text in ordered]
+    return SettingsError([_printable(line) for line in lines], where=where)
 
 
 def read_file(path: str | Path) -> bytes:
@@ -103,6 +102,11 @@ def read_document(data: bytes, *, where: str, all_text: bool = False) -> tuple[M
         got = f"got {shown(document.plain())}, {allowed}"
         raise settings_error([Problem(document.line, document.column, "file", got)], where=where)
     return document, traps
+
+
+def _printable(text: str) -> str:
+    """Return the text with control characters (a key may hold a terminal's escape codes) replaced."""
+    return "".join(letter if letter.isprintable() else "?" for letter in text)
 
 
 def _whole(where: str, text: str) -> SettingsError:
@@ -166,6 +170,8 @@ def _text(kind: str, got: Any, context: dict[str, Any], model: type[Settings], l
         hint = f' (in quotes: "{shown(got)}")'
     elif " | " in wanted and isinstance(got, str):
         hint = did_you_mean(got, wanted.split(" | "))
+    elif wanted == "whole number" and isinstance(got, float):
+        return f"got {got!r}, allowed: {allowed}, without a decimal point"
     return f"got {shown(got)}, allowed: {allowed}{hint}"
 
 

@@ -107,7 +107,7 @@ class ReportSettings(Settings):
 class MethodSettings(Settings):
     """A method file."""
 
-    schema_version: Literal[1] = Field(default=1, description="version of this form of file")
+    schema_version: int = number(1, 1, "version of this form of file", default=1)
     name: PlainName = Field(description="name of the method: small letters, digits, hyphens")
     title: str = words("what the method determines, for people")
     kind: Literal["equivalence"] = Field(default="equivalence", description="titration to the equivalence point")

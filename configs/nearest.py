@@ -3,11 +3,20 @@
 from __future__ import annotations
 
 import difflib
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
+
+MOST_SHOWN = 3
 
 
-def did_you_mean(got: str, known: Iterable[str]) -> str:
-    """Return " (did you mean ...?)" with at most three of the known words, or nothing where none is near."""
-    folded = {word.casefold(): word for word in known}
-    near = difflib.get_close_matches(got.casefold(), list(folded), n=3, cutoff=0.6)
-    return f" (did you mean {' or '.join(folded[word] for word in near)}?)" if near else ""
+def did_you_mean(got: str, known: Iterable[str] | Mapping[str, str]) -> str:
+    """Return " (did you mean ...?)" with at most three of the known words, or nothing where none is near.
+
+    Args:
+        got: the word as typed.
+        known: the words that are allowed; a mapping gives, for each, the word to show instead.
+    """
+    meant = known if isinstance(known, Mapping) else {word: word for word in known}
+    folded = {word.casefold(): shown for word, shown in meant.items()}
+    near = difflib.get_close_matches(got.casefold(), list(folded), n=2 * MOST_SHOWN, cutoff=0.6)
+    shown = list(dict.fromkeys(folded[word] for word in near))[:MOST_SHOWN]
+    return f" (did you mean {' or '.join(shown)}?)" if shown else ""
