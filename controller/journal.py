@@ -77,12 +77,18 @@ class Journal:
 
     def __init__(self, sink: Sink, clock: Clock, *, name: str = "record") -> None:
         self._sink, self._clock, self.name = sink, clock, name
-        self._started_s = 0.0
+        self.started_s = 0.0
         self._previous = ""
         self._synced_s: float | None = None  # None: nothing written since the last sync
         self._held_back: bytes | None = None
         self.lines = 0
         self.closed = False
+
+    def discard(self) -> None:
+        """Let go of a record in which nothing was begun; no trace of it stays."""
+        if self.lines == 0 and not self.closed:
+            self.closed = True
+            self._sink.close()
 
     def begin(self, header: Mapping[str, Any]) -> None:
         """Write the header as line 1 and bring it to the medium; run time starts now.
@@ -90,7 +96,7 @@ class Journal:
         Raises:
             RecordError: it cannot be written.
         """
-        self._started_s = self._clock.now_s()
+        self.started_s = self._clock.now_s()
         self._append(f'"record":"halfdrop run","record_version":{RECORD_VERSION},"header":{encode(header)}')
         self.barrier()
 
@@ -161,7 +167,7 @@ class Journal:
             self._sink.close()
 
     def _stamp(self) -> str:
-        run_s = round(self._clock.now_s() - self._started_s, 6)
+        run_s = round(self._clock.now_s() - self.started_s, 6)
         return f'{{"line":{self.lines + 1},"utc":"{utc_text(self._clock.utc_s())}","run_s":{run_s!r},'
 
     def _append(self, body: str) -> None:

@@ -41,7 +41,6 @@ class FileSink:
                 sync_folder(path.parent)
             except OSError:
                 self.close()
-                path.unlink(missing_ok=True)
                 raise
 
     def write(self, line: bytes) -> None:
@@ -68,9 +67,11 @@ class FileSink:
                 self._reserve.unlink(missing_ok=True)
 
     def close(self) -> None:
-        """Close the file and delete the reserve."""
+        """Close the file, delete the reserve, and the file too where nothing was written."""
         self.give_back_reserve()
         os.close(self._descriptor)
+        if self._size == 0:
+            self.path.unlink(missing_ok=True)
 
 
 class MemorySink:

@@ -196,7 +196,8 @@ class Refused:
 class Failed:
     """A device failed while carrying out the action.
 
-    For a dose, `lowest_ml` and `highest_ml` bound what may have been delivered (equal where it is known).
+    For a dose, `lowest_ml` and `highest_ml` bound what may have been delivered (equal where it is known, then with
+    `steps`).
     """
 
     kind: ClassVar[str] = "failed"
@@ -206,6 +207,7 @@ class Failed:
     number: int | None = None
     lowest_ml: float | None = None
     highest_ml: float | None = None
+    steps: int | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

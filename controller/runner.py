@@ -1,0 +1,320 @@
+"""The runner: carries the core's actions out and writes every line of the record before the core sees what it says.
+
+One plain synchronous function on one thread. Whatever happens, the pump is stopped first and the record closed after:
+a pulled stop switch, a limit passed, a full disk, an error of the program.
+"""
+
+from __future__ import annotations
+
+import contextlib
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from configs.errors import HalfdropError
+from controller.clockwatch import ClockWatch
+from controller.execution import Commands, Devices, Execution, check_devices
+from controller.guard import Guard, check_start, start_warnings
+from controller.header import header_of
+from controller.journal import Journal, RecordError
+from controller.outcome import (
+    NOT_CONFIRMED,
+    AmountOf,
+    RunFailedError,
+    RunResult,
+    account_of,
+    add_amount,
+    exit_status,
+    whole_result,
+)
+from controller.progress import Pace, Progress
+from controller.stopping import StopSwitch
+from controller.titration.actions import (
+    Action,
+    Answered,
+    Ask,
+    Decisions,
+    Failed,
+    Finish,
+    Observation,
+    Refused,
+    Report,
+    Resumed,
+)
+from controller.titration.plan import RunPlan
+from drivers.clock import Clock
+from drivers.errors import StoppedError
+
+#: answers in a row that a core may get without anything being done, before the runner ends the run itself
+MOST_UNDONE = 50
+RINSE_AND_STORE = Ask(
+    key="rinse-and-store",
+    text="Has the probe been rinsed and put into its storage solution?",
+    choices=("yes", "no"),
+)
+
+
+def run(
+    plan: RunPlan,
+    decisions: Decisions,
+    devices: Devices,
+    journal: Journal,
+    *,
+    clock: Clock,
+    stop: StopSwitch,
+    guard: Guard | None = None,
+    commands: Commands | None = None,
+    operator_name: str | None = None,
+    hashes: Mapping[str, str] | None = None,
+    on_progress: Callable[[Progress], None] | None = None,
+    amount_of: AmountOf | None = None,
+    ask_afterwards: bool = True,
+) -> RunResult:
+    """Run one titration from the first question to the closed record.
+
+    Args:
+        plan: what the record's header will hold; made for exactly these devices.
+        decisions: the core, not yet begun.
+        devices: pump, probe, operator.
+        journal: the record, not yet begun; it is closed when this returns or raises.
+        clock: the clock that the devices use too.
+        stop: pulled by a signal, a key or a viewer; the devices' waits look at its event.
+        guard: default: a new one for this plan.
+        commands: the operator's commands, if anything can give some.
+        operator_name: as typed, for the record.
+        hashes: SHA-256 of the files that the plan rests on, by name.
+        on_progress: called with every entry after it was written.
+        amount_of: (plan, result) -> value of the result's key "result", None where there is no amount.
+        ask_afterwards: ask whether the probe was rinsed and stored (False where nobody is there to answer).
+
+    Returns:
+        The result, also where the run was stopped or a device failed and the core ended it.
+
+    Raises:
+        StartRefusedError: the plan exceeds the bench's limits; nothing moved, there is no record.
+        DeviceError: a device is absent or not the plan's at the start; nothing moved, there is no record.
+        RecordError: the record could not be written; the pump was stopped.
+        RunFailedError: an error of the program; the pump was stopped, the record closed as failed.
+    """
+    try:
+        check_start(plan)
+        identities, pump_before_ml = check_devices(plan, devices)
+        header = header_of(plan, devices=identities, operator_name=operator_name, hashes=hashes, clock=clock)
+    except BaseException:
+        journal.discard()
+        raise
+    held = guard if guard is not None else Guard(plan)
+    execution = Execution(plan, devices, journal, held, clock=clock, stop=stop, commands=commands)
+    return _Run(
+        plan=plan,
+        decisions=decisions,
+        devices=devices,
+        journal=journal,
+        execution=execution,
+        guard=held,
+        clock=clock,
+        stop=stop,
+        commands=commands,
+        on_progress=on_progress,
+        amount_of=amount_of,
+        pump_before_ml=pump_before_ml,
+    ).whole(header, ask_afterwards)
+
+
+@dataclass(slots=True, kw_only=True)
+class _Run:
+    """One run while it goes on."""
+
+    plan: RunPlan
+    decisions: Decisions
+    devices: Devices
+    journal: Journal
+    execution: Execution
+    guard: Guard
+    clock: Clock
+    stop: StopSwitch
+    commands: Commands | None
+    on_progress: Callable[[Progress], None] | None
+    amount_of: AmountOf | None
+    pump_before_ml: float
+    pace: Pace = field(init=False)
+    gaps: ClockWatch = field(init=False)
+    safety: str | None = None
+    undone: int = 0
+    finished_s: float = 0.0
+    warnings: list[str] = field(init=False)
+
+    def __post_init__(self) -> None:
+        self.pace = Pace(self.plan)
+        self.gaps = ClockWatch(self.clock)
+        self.warnings = start_warnings(self.plan)
+
+    def whole(self, header: Mapping[str, Any], ask_afterwards: bool) -> RunResult:
+        try:
+            self.journal.begin({**header, "warnings": self.warnings})
+            result = self._complete(self._converse())
+            self.journal.barrier()
+            details = self._afterwards() if ask_afterwards and not self.stop.event.is_set() else {}
+            return self._close(result, details)
+        except BaseException as error:
+            self._close_failed(error)
+            raise
+        finally:
+            with contextlib.suppress(Exception):  # a core in trouble may object to being ended
+                self.decisions.close()
+
+    # --- the dialogue --------------------------------------------------------------------------------------------
+
+    def _converse(self) -> dict[str, Any]:
+        """Carry out actions until the core finishes; return its result."""
+        answer: Observation | None = None
+        try:
+            action = next(self.decisions)
+            while not isinstance(action, Finish):
+                self._write(action)
+                if isinstance(action, Report):
+                    answer = None
+                else:
+                    answer = self._answer(action)
+                    if answer is None:
+                        return self._cut_off()
+                    self._write(answer)
+                action = self.decisions.send(answer)
+        except StopIteration as end:
+            action = Finish(result=end.value if isinstance(end.value, dict) else {})
+        self._write(action)
+        return action.result
+
+    def _write(self, item: Action | Observation) -> None:
+        self.journal.write(item)
+        if self.on_progress is not None:
+            execution = self.execution
+            self.on_progress(self.pace.progress(item, execution.at_s(), execution.delivered_ml, execution.doses))
+
+    def _answer(self, action: Action) -> Observation | None:
+        """Return what the core is told; None where the runner ends the run because the core does not."""
+        answer = self._instead() or self.execution.carry_out(action)
+        if isinstance(answer, Refused):
+            self.safety = answer.what
+        elif isinstance(answer, Failed):
+            self.safety = f"{answer.device} failed: {answer.what}"
+            if answer.lowest_ml != answer.highest_ml:  # it may be moving still
+                self.execution.halt(self.safety)
+        self.undone = self.undone + 1 if isinstance(answer, Refused | Failed) or self._ending() else 0
+        if self.guard.breach is not None and self.safety != self.guard.breach:
+            self.safety = self.guard.breach
+            self.journal.event("guard", what=self.guard.breach, by="guard")
+            self.execution.halt(self.guard.breach)
+        return None if self.undone > MOST_UNDONE else answer
+
+    def _ending(self) -> bool:
+        return self.stop.event.is_set() or self.guard.breach is not None
+
+    def _instead(self) -> Observation | None:
+        """Return what comes before the action, which then is not carried out: a stop, a gap, a command."""
+        self.guard.saw_time(self.execution.at_s())
+        if self.stop.event.is_set():
+            if not self.execution.stop_confirmed:
+                self.execution.halt(self.stop.why())
+            return self.execution.stopped()
+        if self.guard.breach is not None:
+            return self.execution.stopped(self.guard.breach)
+        gap = self._gap()
+        if gap is None and self.commands is not None:
+            return self.commands.take()
+        return gap
+
+    def _gap(self) -> Resumed | None:
+        step_s = self.gaps.step_s()
+        if step_s < 0:
+            self.journal.event("clock-step", seconds=step_s, by="runner")
+        return Resumed(at_s=self.execution.at_s(), gap_s=step_s) if step_s > 0 else None
+
+    def _cut_off(self) -> dict[str, Any]:
+        why = self.guard.breach or (self.stop.why() if self.stop.event.is_set() else self.safety)
+        self.safety = self.safety or why
+        self.execution.halt(f"{why}; the core did not end the run")
+        return {"outcome": "stopped", "reason": why}
+
+    # --- the end -------------------------------------------------------------------------------------------------
+
+    def _complete(self, found: Mapping[str, Any]) -> dict[str, Any]:
+        self.finished_s = self.execution.at_s()
+        why = self.guard.breach or (self.stop.why() if self.stop.event.is_set() else None)
+        result = whole_result(
+            found, plan=self.plan, execution=self.execution, record=self.journal.name, why_stopped=why
+        )
+        result["warnings"] = [*self.warnings, *result["warnings"]]
+        if result["outcome"] != "completed" and not self.execution.stop_confirmed:
+            self.execution.halt(str(result["reason"]))
+        if not self._ending():
+            sums, warning = account_of(self.devices.pump, self.pump_before_ml, self.execution)
+            if sums is not None:
+                self.journal.event("account", **sums, by="runner")
+            if warning is not None:
+                result["warnings"].append(warning)
+        add_amount(result, self.plan, self.amount_of)
+        return result
+
+    def _afterwards(self) -> dict[str, Any]:
+        """Ask whether the probe was rinsed and stored, and note how long it stood in the titrated solution."""
+        self.journal.write(RINSE_AND_STORE, by="runner")
+        self.journal.barrier()
+        try:
+            answer = self.devices.operator.ask(RINSE_AND_STORE.key, RINSE_AND_STORE.text, RINSE_AND_STORE.choices)
+        except (HalfdropError, KeyboardInterrupt):
+            return {"probe_stored": "not answered", "probe_stood_s": None}
+        at_s = self.execution.at_s()
+        self.journal.write(Answered(key=RINSE_AND_STORE.key, answer=answer, at_s=at_s), by="runner")
+        return {"probe_stored": answer, "probe_stood_s": round(at_s - self.finished_s, 3)}
+
+    def _close(self, result: dict[str, Any], details: Mapping[str, Any]) -> RunResult:
+        confirmed = self.execution.stop_confirmed
+        reason = result["reason"]
+        if confirmed is False:
+            result["warnings"].append(NOT_CONFIRMED)
+            result["reason"] = reason = f"{reason}. {NOT_CONFIRMED}" if reason else NOT_CONFIRMED
+        self.journal.close(
+            result["outcome"], reason=reason, stop_confirmed=confirmed, steps=self.execution.steps, result=result,
+            **details,
+        )  # fmt: skip
+        return RunResult(
+            outcome=result["outcome"],
+            reason=reason,
+            result=result,
+            exit_status=exit_status(result, stop=self.stop, stop_confirmed=confirmed, safety=self.safety is not None),
+            record=self.journal.name,
+            steps=self.execution.steps,
+            stop_confirmed=confirmed,
+        )
+
+    def _close_failed(self, error: BaseException) -> None:
+        """Stop the pump, then close the record with what went wrong.
+
+        Raises:
+            RunFailedError: in place of `error` where that is none of ours, or the pump did not confirm its stop.
+        """
+        if self.journal.closed:
+            return
+        confirmed = False
+        with contextlib.suppress(RecordError):  # the pump was stopped before its line failed
+            self.execution.halt(f"{type(error).__name__}: {error}")
+        confirmed = self.execution.stop_confirmed is True
+        by_hand = isinstance(error, KeyboardInterrupt | StoppedError)
+        reason = "interrupted" if by_hand else f"{type(error).__name__}: {error}"
+        try:
+            self.journal.close(
+                "stopped" if by_hand else "failed",
+                reason=reason if confirmed else f"{reason}. {NOT_CONFIRMED}",
+                stop_confirmed=confirmed,
+                steps=self.execution.steps,
+            )
+        except RecordError as second:
+            reason = f"{reason}; its closing line could not be written either: {second}"
+        if confirmed and isinstance(error, HalfdropError | KeyboardInterrupt | SystemExit | GeneratorExit):
+            return
+        raise RunFailedError(
+            f"the run ended by an error ({reason})",
+            where=self.journal.name,
+            remedy="The record up to there is kept; evaluate it, and report the error" if confirmed else NOT_CONFIRMED,
+        ) from error
