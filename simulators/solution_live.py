@@ -7,39 +7,46 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from math import copysign, exp, sqrt
 
 import numpy as np
 
-from .activity import LARGEST_SOUND_IONIC_STRENGTH_MOL_L
+from .activity import LARGEST_SOUND_IONIC_STRENGTH_MOL_L, davies_term, davies_term_slope
 from .constants import LN10, carbonic_pka_at
 from .solution_balance import Acid, Contents, forms_of
 from .solution_mixture import Medium, Mixture, checked_concentration, refuse
-from .solution_roots import LARGEST_IONIC_STRENGTH, LAST_STEP, Water, find_roots
+from .solution_moments import NONE, Moments, moments_of
+from .solution_roots import LARGEST_IONIC_STRENGTH, Water, find_roots
 
-NEWTON_ROUNDS = 20
-#: below this a component does not move the pH by 1e-12 and is left out
-NEGLIGIBLE_MOL_L = 1e-22
+ROUNDS = range(12)
+#: Newton is quadratic: after a step this small what is left is about 1e-11
+LAST_STEP = 3e-6
+LARGEST_STEP = 2.0
 
 
 class LiveEquilibrium:
-    """Weak components of fixed constants and changing concentrations, plus strong ions of any net charge.
+    """Weak components of fixed constants and changing concentrations, plus strong ions.
 
-    `ph` and `ionic_strength_mol_l` hold the last solution.
+    Plain Newton on the net charge (and the ionic strength), begun with the forms as they were at the last solution; the
+    whole-curve solver takes over at the first call and wherever this has not converged.
     """
 
     def __init__(self, acids: Sequence[Acid], medium: Medium) -> None:
         self._acids: tuple[Acid, ...] = tuple(acids)
         self._ln_kw = -LN10 * medium.pkw
-        self._kw = math.exp(self._ln_kw)
         self._ln_a = None if medium.debye_huckel_a is None else LN10 * medium.debye_huckel_a
-        self._tables = tuple(_form_table(pka, charge) for pka, charge in self._acids)
-        self._y: float | None = None
+        self._moments = tuple(moments_of(pka, charge) for pka, charge in self._acids)
+        self._y = math.nan
         self._strength = 0.0
+        # where the forms were evaluated last: y, I, du/dI, H+, OH-, moments of each component
+        self._held: tuple[float, float, float, float, float, list[Moments]] | None = None
+        # correction found last time per square of the first step, of y and of I: makes the next first step second order
+        self._bend_y = self._bend_i = 0.0
 
     @property
     def ph(self) -> float:
         """PH of the last solution; NaN before the first."""
-        return math.nan if self._y is None else self._y / LN10
+        return self._y / LN10
 
     @property
     def ionic_strength_mol_l(self) -> float:
@@ -51,161 +58,138 @@ class LiveEquilibrium:
         """Whether the last ionic strength lies within the activity formula's reach."""
         return self._strength <= LARGEST_SOUND_IONIC_STRENGTH_MOL_L
 
-    def solve(
-        self, weak_mol_l: Sequence[float], positive_mol_l: float, negative_mol_l: float, ion_z2_mol_l: float
-    ) -> float:
+    def solve(self, weak_mol_l: Sequence[float], ion_charge_mol_l: float, ion_z2_mol_l: float) -> float:
         """PH of a solution.
 
         Args:
-            weak_mol_l: total concentration of each component, in the order of `acids`.
-            positive_mol_l: positive charge of strong ions, mol/L.
-            negative_mol_l: negative charge of strong ions, mol/L, positive number.
-            ion_z2_mol_l: sum of z^2 c over strong ions, mol/L (the two above added up for ions of charge 1).
-        """
-        if self._y is not None:
-            work = [
-                (table, concentration)
-                for table, concentration in zip(self._tables, weak_mol_l, strict=True)
-                if concentration > NEGLIGIBLE_MOL_L
-            ]
-            if self._ln_a is None:
-                found = self._newton_ideal(work, positive_mol_l, negative_mol_l)
-            else:
-                found = self._newton_davies(work, positive_mol_l, negative_mol_l, ion_z2_mol_l)
-            if found:
-                return self._y / LN10
-        return self._solve_cold(weak_mol_l, positive_mol_l, negative_mol_l, ion_z2_mol_l)
+            weak_mol_l: total concentration of each component, in the order of `acids`, 0 or more.
+            ion_charge_mol_l: sum of z c over strong ions, mol/L.
+            ion_z2_mol_l: sum of z^2 c over strong ions, mol/L.
 
-    def _solve_cold(self, weak: Sequence[float], positive: float, negative: float, ion_z2: float) -> float:
+        Raises:
+            SolutionError: a concentration that is negative or not a number.
+        """
+        if self._held is not None:
+            follow = self._ideal if self._ln_a is None else self._davies
+            try:
+                if follow(weak_mol_l, ion_charge_mol_l, ion_z2_mol_l) and min(weak_mol_l, default=0.0) >= 0.0:
+                    return self._y / LN10
+            except (OverflowError, ZeroDivisionError):
+                pass  # far from the root; the whole-curve solver below starts anew
+        return self._cold(weak_mol_l, ion_charge_mol_l, ion_z2_mol_l)
+
+    def _cold(self, weak: Sequence[float], ion_charge: float, ion_z2: float) -> float:
+        for value in (*weak, abs(ion_charge), ion_z2):
+            checked_concentration(value, "live solution")
         contents = Contents(
             np.array(weak, dtype=np.float64).reshape(len(self._acids), 1),
-            np.array([positive]),
-            np.array([negative]),
+            np.array([max(ion_charge, 0.0)]),
+            np.array([max(-ion_charge, 0.0)]),
             np.array([ion_z2]),
         )
         roots = find_roots(forms_of(self._acids), contents, Water(self._ln_kw, self._ln_a))
-        self._y = float(roots.y[0])
-        self._strength = 0.0 if self._ln_a is None else float(roots.ionic_strength[0])
-        return self._y / LN10
+        self._y = y = float(roots.y[0])
+        strength = u = u_slope = 0.0
+        if self._ln_a is not None:
+            strength = float(roots.ionic_strength[0])
+            u, u_slope = self._ln_a * davies_term(strength), self._ln_a * davies_term_slope(strength)
+        self._strength = strength
+        moments = [component(y, u) for component in self._moments]
+        self._held = (y, strength, u_slope, exp(u - y), exp(u + y + self._ln_kw), moments)
+        self._bend_y = self._bend_i = 0.0
+        return y / LN10
 
-    def _newton_ideal(self, work: list[tuple[_FormTable, float]], positive: float, negative: float) -> bool:
-        y = self._y
-        assert y is not None
-        exp, log = math.exp, math.log
-        for _ in range(NEWTON_ROUNDS):
-            inverse = exp(y)
-            hydrogen, hydroxide = 1.0 / inverse, inverse * self._kw
-            plus, minus = hydrogen + positive, hydroxide + negative
-            plus_y, minus_y = -hydrogen, hydroxide
-            for (rows, _), concentration in work:
-                total = p1 = n1 = p2 = n2 = 0.0
-                power = 1.0
-                for beta, z, z2, _z4 in rows:
-                    weight = beta * power
-                    power *= inverse
-                    total += weight
-                    if z > 0:
-                        p1 += z * weight
-                        p2 += z2 * weight
-                    elif z < 0:
-                        n1 -= z * weight
-                        n2 += z2 * weight
-                mean = (p1 - n1) / total
-                scale = concentration / total
-                plus += scale * p1
-                minus += scale * n1
-                plus_y -= scale * (p2 - mean * p1)
-                minus_y += scale * (n2 + mean * n1)
-            step = log(plus / minus) / (plus_y / plus - minus_y / minus)
-            y -= step if -LN10 < step < LN10 else math.copysign(LN10, step)
+    def _ideal(self, weak: Sequence[float], ion_charge: float, _ion_z2: float) -> bool:
+        """Newton without activity; False where it has not converged."""
+        assert self._held is not None
+        y, _, _, hydrogen, hydroxide, moments = self._held
+        ln_kw, parts = self._ln_kw, self._moments
+        first = 0.0
+        start = y
+        for attempt in ROUNDS:
+            if attempt:
+                hydrogen, hydroxide = exp(-y), exp(y + ln_kw)
+                moments = []
+            charge, capacity = hydrogen - hydroxide + ion_charge, hydrogen + hydroxide
+            for index, c in enumerate(weak):
+                if attempt:
+                    moments.append(parts[index](y, 0.0) if c != 0.0 else NONE)
+                if c != 0.0:
+                    mean, _, spread, _, _ = moments[index]
+                    charge += c * mean
+                    capacity += c * spread
+            step = charge / capacity
+            if not attempt:
+                first = step if -LARGEST_STEP < step < LARGEST_STEP else copysign(LARGEST_STEP, step)
+                bend = self._bend_y * first * first
+                y += first + (bend if abs(bend) < 0.3 * abs(first) else 0.0)
+                continue
+            evaluated = y
+            y += step if -LARGEST_STEP < step < LARGEST_STEP else copysign(LARGEST_STEP, step)
             if -LAST_STEP < step < LAST_STEP:
                 self._y = y
+                self._held = (evaluated, 0.0, 0.0, hydrogen, hydroxide, moments)
+                if abs(first) > 1e-9:
+                    self._bend_y = (y - start - first) / (first * first)
                 return True
         return False
 
-    def _newton_davies(
-        self, work: list[tuple[_FormTable, float]], positive: float, negative: float, ion_z2: float
-    ) -> bool:
-        y, strength, ln_a = self._y, self._strength, self._ln_a
-        assert y is not None
-        assert ln_a is not None
-        exp, log, sqrt = math.exp, math.log, math.sqrt
-        for _ in range(NEWTON_ROUNDS):
-            root = sqrt(strength)
-            u = ln_a * (root / (1.0 + root) - 0.3 * strength)
-            u_slope = ln_a * (0.5 / (root * (1.0 + root) * (1.0 + root)) - 0.3)
-            inverse, gain = exp(y), exp(u)
-            hydrogen, hydroxide = gain / inverse, gain * inverse * self._kw
-            water = hydrogen + hydroxide
-            plus, minus = hydrogen + positive, hydroxide + negative
-            plus_y, minus_y, plus_u, minus_u = -hydrogen, hydroxide, hydrogen, hydroxide
-            ionic, ionic_y, ionic_u = water + ion_z2, hydroxide - hydrogen, water
-            gains: tuple[float, ...] = (1.0, gain, gain**4, gain**9, gain**16)
-            for (rows, largest), concentration in work:
-                if largest > 4:
-                    gains = tuple(gain ** (z * z) for z in range(largest + 1))
-                total = p1 = n1 = p2 = n2 = p3 = n3 = fourth = 0.0
-                power = 1.0
-                for beta, z, z2, z4 in rows:
-                    weight = beta * power
-                    power *= inverse
-                    if z > 0:
-                        weight *= gains[z]
-                        term = z * weight
-                        p1 += term
-                        p2 += z2 * weight
-                        p3 += z2 * term
-                        fourth += z4 * weight
-                    elif z < 0:
-                        weight *= gains[-z]
-                        term = z * weight
-                        n1 -= term
-                        n2 += z2 * weight
-                        n3 -= z2 * term
-                        fourth += z4 * weight
-                    total += weight
-                mean, square = (p1 - n1) / total, (p2 + n2) / total
-                scale = concentration / total
-                plus += scale * p1
-                minus += scale * n1
-                plus_y -= scale * (p2 - mean * p1)
-                minus_y += scale * (n2 + mean * n1)
-                plus_u += scale * (p3 - square * p1)
-                minus_u += scale * (n3 - square * n1)
-                ionic += concentration * square
-                ionic_y -= scale * (p3 - n3 - mean * square * total)
-                ionic_u += scale * (fourth - square * square * total)
-            value = log(plus / minus)
-            value_y = plus_y / plus - minus_y / minus
-            value_i = (plus_u / plus - minus_u / minus) * u_slope
-            gap = strength - 0.5 * ionic
-            gap_i = 1.0 - 0.5 * ionic_u * u_slope
-            determinant = value_y * gap_i + 0.5 * value_i * ionic_y
-            step = (value * gap_i - value_i * gap) / determinant
-            step_i = (value_y * gap + 0.5 * ionic_y * value) / determinant
-            y -= step if -LN10 < step < LN10 else math.copysign(LN10, step)
-            after = strength - step_i
-            if not 0.2 * strength < after < 5.0 * strength:
-                after = strength * (0.2 if step_i > 0.0 else 5.0)
-            after = min(after, LARGEST_IONIC_STRENGTH)
-            done = -LAST_STEP < step < LAST_STEP and abs(after - strength) <= LAST_STEP * strength
-            strength = after
-            if done:
+    def _davies(self, weak: Sequence[float], ion_charge: float, ion_z2: float) -> bool:
+        """Newton in (y, I); False where it has not converged. Kept in one piece: calls would cost as much as the sums."""
+        assert self._held is not None
+        assert self._ln_a is not None
+        y, strength, u_slope, hydrogen, hydroxide, moments = self._held
+        ln_kw, ln_a, parts = self._ln_kw, self._ln_a, self._moments
+        first = first_i = u = 0.0
+        start, start_i = y, strength
+        for attempt in ROUNDS:
+            if attempt:
+                root = sqrt(strength)
+                more = 1.0 + root
+                u = ln_a * (root / more - 0.3 * strength)
+                u_slope = ln_a * (0.5 / (root * more * more) - 0.3)
+                hydrogen, hydroxide = exp(u - y), exp(y + u + ln_kw)
+                moments = []
+            cross, capacity = hydrogen - hydroxide, hydrogen + hydroxide
+            charge, twice, widening = cross + ion_charge, capacity + ion_z2, capacity
+            for index, c in enumerate(weak):
+                if attempt:
+                    moments.append(parts[index](y, u) if c != 0.0 else NONE)
+                if c != 0.0:
+                    mean, square, spread, cross_c, spread2 = moments[index]
+                    charge += c * mean
+                    twice += c * square
+                    capacity += c * spread
+                    cross += c * cross_c
+                    widening += c * spread2
+            # charge - capacity dy + cross u' dI = 0 and (2 - widening u') dI + cross dy = twice - 2 I
+            cross_i, gap, gap_i = cross * u_slope, twice - 2.0 * strength, 2.0 - widening * u_slope
+            determinant = capacity * gap_i + cross_i * cross
+            step = (charge * gap_i + cross_i * gap) / determinant
+            step_i = (capacity * gap - cross * charge) / determinant
+            evaluated, evaluated_i = y, strength
+            y += step if -LARGEST_STEP < step < LARGEST_STEP else copysign(LARGEST_STEP, step)
+            strength += step_i
+            if not attempt:
+                first, first_i = step, step_i
+                square = step * step
+                bend = self._bend_y * square
+                if abs(bend) < 0.3 * abs(step):
+                    y += bend
+                    strength += self._bend_i * square
+            elif -LAST_STEP < step < LAST_STEP and abs(step_i) <= LAST_STEP * strength:
                 self._y, self._strength = y, strength
+                self._held = (evaluated, evaluated_i, u_slope, hydrogen, hydroxide, moments)
+                if abs(first) > 1e-9:
+                    square = first * first
+                    self._bend_y = (y - start - first) / square
+                    self._bend_i = (strength - start_i - first_i) / square
                 return True
+            if not 0.2 * evaluated_i < strength < 5.0 * evaluated_i:
+                strength = evaluated_i * (0.2 if strength < evaluated_i else 5.0)
+            if strength > LARGEST_IONIC_STRENGTH:
+                return False
         return False
-
-
-#: rows (10^-(pKa1 + ... + pKaj), z, z^2, z^4) and the largest |z|
-_FormTable = tuple[tuple[tuple[float, int, int, int], ...], int]
-
-
-def _form_table(pka: tuple[float, ...], charge: int) -> _FormTable:
-    rows = []
-    for j in range(len(pka) + 1):
-        z = charge - j
-        rows.append((math.exp(-LN10 * sum(pka[:j])), z, z * z, z**4))
-    return tuple(rows), max(abs(row[1]) for row in rows)
 
 
 class LiveSolution:
@@ -247,8 +231,8 @@ class LiveSolution:
         kept, added = self._initial_ml / total, titrant_volume_ml / total
         weak = [sample * kept + titrant * added for sample, titrant in self._weak]
         weak.append(carbonate_mol_l)
-        positive, negative, ion_z2 = (sample * kept + titrant * added for sample, titrant in self._ions)
-        return self.equilibrium.solve(weak, positive, negative, ion_z2)
+        (charge0, charge1), (square0, square1) = self._ions
+        return self.equilibrium.solve(weak, charge0 * kept + charge1 * added, square0 * kept + square1 * added)
 
     @property
     def ionic_strength_mol_l(self) -> float:
@@ -261,8 +245,9 @@ class LiveSolution:
         return self.equilibrium.sound
 
 
-def _ion_sums(mixture: Mixture) -> tuple[float, float, float]:
-    """Positive charge, negative charge, sum of z^2 c, mol/L."""
-    positive = sum(ion.charge * ion.concentration_mol_l for ion in mixture.ions if ion.charge > 0)
-    negative = sum(-ion.charge * ion.concentration_mol_l for ion in mixture.ions if ion.charge < 0)
-    return positive, negative, sum(ion.charge**2 * ion.concentration_mol_l for ion in mixture.ions)
+def _ion_sums(mixture: Mixture) -> tuple[float, float]:
+    """Sums of z c and z^2 c over the strong ions, mol/L."""
+    return (
+        sum(ion.charge * ion.concentration_mol_l for ion in mixture.ions),
+        sum(ion.charge**2 * ion.concentration_mol_l for ion in mixture.ions),
+    )

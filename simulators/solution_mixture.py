@@ -9,7 +9,7 @@ from configs.errors import HalfdropError
 
 #: bounds that keep every power of ten in the solver inside double precision
 LARGEST_STEPS = 8
-LARGEST_CHARGE = 8
+LARGEST_CHARGE = 6
 LOWEST_PKA, HIGHEST_PKA = -10.0, 30.0
 LARGEST_CONCENTRATION_MOL_L = 50.0
 
@@ -89,7 +89,7 @@ class Medium:
     """Temperature, pKw and Debye-Hückel A; A None: concentrations stand for activities.
 
     Raises:
-        SolutionError: pKw outside 8 to 20, or A outside 0 to 2.
+        SolutionError: pKw outside 8 to 20, or A outside 0 to 1.
     """
 
     temperature_c: float
@@ -101,5 +101,5 @@ class Medium:
             raise refuse("medium: pkw", f"got {self.pkw}, allowed: 8 to 20")
         if not math.isfinite(self.temperature_c):
             raise refuse("medium: temperature_c", f"got {self.temperature_c} °C, allowed: a number")
-        if self.debye_huckel_a is not None and not 0.0 <= self.debye_huckel_a <= 2.0:
-            raise refuse("medium: debye_huckel_a", f"got {self.debye_huckel_a}, allowed: 0 to 2, or none")
+        if self.debye_huckel_a is not None and not 0.0 <= self.debye_huckel_a <= 1.0:
+            raise refuse("medium: debye_huckel_a", f"got {self.debye_huckel_a}, allowed: 0 to 1, or none")
