@@ -135,7 +135,7 @@ class LiveEquilibrium:
         return False
 
     def _davies(self, weak: Sequence[float], ion_charge: float, ion_z2: float) -> bool:
-        """Newton in (y, I); False where it has not converged. Kept in one piece: calls would cost as much as the sums."""
+        """Newton in (y, I); False where it has not converged. In one piece: calls cost as much as the sums."""
         assert self._held is not None
         assert self._ln_a is not None
         y, strength, u_slope, hydrogen, hydroxide, moments = self._held
