@@ -1,0 +1,89 @@
+"""Where the next equivalence point is predicted: the inverse model after every point, and whether to trust it."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from controller.evaluation.inverse import InverseFit, InverseSetting, fit_inverse
+from controller.evaluation.protons import STRONG_LADDER, UNKNOWN_LADDER, ProtonLadder, conditional_pka, ladders
+from controller.titration.plan import RunPlan
+from controller.titration.points import PhScale, Point
+
+JUMP_SDS = 8.0
+JUMP_ML = 0.020
+_USUAL_STRENGTH_MOL_L = 0.01
+
+
+class Forecast:
+    """The model for the end point that comes next."""
+
+    def __init__(self, plan: RunPlan, scale: PhScale) -> None:
+        self._ladders = plan_ladders(plan)
+        self._setting = InverseSetting(
+            initial_volume_ml=plan.sample.initial_volume_ml,
+            titrant_concentration_mol_l=plan.titrant.concentration_mol_l,
+            pkw=plan.chemistry.pkw,
+            debye_huckel_a=plan.chemistry.debye_huckel_a,
+            acid_titrant=plan.titrant.acid,
+            slope_mv=scale.slope_mv,
+            ladder=self._ladder(0),
+            volume_sd_ml=max(0.0007, plan.pump.dose_sd_ml),
+        )
+        self._possible = scale.known and plan.sample.initial_volume_ml > 0.0
+        self._found_ml: list[float] = []
+        self._last: tuple[float, float] | None = None
+        self.fit: InverseFit | None = None  # the latest, sound or not
+        self.sound: InverseFit | None = None  # the latest where it may guide
+        self.jumped = False
+
+    def _ladder(self, index: int) -> ProtonLadder:
+        return self._ladders[index] if index < len(self._ladders) else UNKNOWN_LADDER
+
+    def next_end_point(self, found_ml: float) -> None:
+        """An end point was found: look for the one after it."""
+        self._found_ml.append(found_ml)
+        self._setting = replace(self._setting, ladder=self._ladder(len(self._found_ml)))
+        self.fit = self.sound = self._last = None
+
+    def update(self, points: Sequence[Point]) -> None:
+        """Fit again with the latest points."""
+        self.fit = self.sound = None
+        if not self._possible or len(points) < 3:
+            return
+        setting = self._setting
+        if not setting.ladder.known and self._found_ml:
+            points = [p for p in points if p.volume_ml > self._found_ml[-1]]
+            setting = replace(setting, titrated_before_ml=self._found_ml[-1])
+            if len(points) < 3:
+                return
+        volume = np.array([p.volume_ml for p in points])
+        ph = np.array([p.ph for p in points], dtype=np.float64)
+        sd = np.array([p.volume_sd_ml for p in points])
+        self.fit = fit = fit_inverse(volume, ph, setting, volume_sd_ml=sd)
+        if fit is None or not fit.sound:
+            return
+        veq, sd_veq = round(fit.equivalence_ml, 6), round(fit.standard_uncertainty_ml, 6)
+        before, self._last = self._last, (veq, sd_veq)
+        self.jumped = before is not None and abs(veq - before[0]) > JUMP_SDS * before[1] + JUMP_ML
+        behind = bool(self._found_ml) and veq <= self._found_ml[-1] + 3.0 * sd_veq
+        if not self.jumped and not behind:
+            self.sound = fit
+
+
+def plan_ladders(plan: RunPlan) -> tuple[ProtonLadder, ...]:
+    """The equivalence points that the plan's analyte shows, at the plan's ionic strength."""
+    chemistry = plan.chemistry
+    analyte = chemistry.analyte
+    if analyte is None:
+        return ()
+    if not analyte.pka:
+        return (STRONG_LADDER,)
+    expected_ml = chemistry.expected_equivalence_volume_ml
+    strength = _USUAL_STRENGTH_MOL_L
+    if expected_ml is not None:
+        strength = plan.titrant.concentration_mol_l * expected_ml / (plan.sample.initial_volume_ml + expected_ml)
+    pka = conditional_pka(analyte.pka, analyte.charge, strength, chemistry.debye_huckel_a)
+    return ladders(pka, analyte.charge, analyte.counter_ion_charge, pkw=chemistry.pkw, acid_titrant=plan.titrant.acid)

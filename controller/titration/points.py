@@ -1,0 +1,42 @@
+"""Accepted points of the curve, and the pH scale that turns potentials into pH."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from controller.titration.plan import RunPlan
+from simulators.constants import ideal_slope_mv
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Point:
+    """One point: the composition at the glass (as titrant volume) and the potential that belongs to it."""
+
+    number: int
+    volume_ml: float
+    volume_sd_ml: float
+    delivered_ml: float
+    potential_mv: float
+    ph: float | None
+    at_s: float
+    settled: bool
+
+
+class PhScale:
+    """pH = isopotential_ph - (E - isopotential_mv)/(slope_fraction x ideal slope); E falls where pH rises."""
+
+    def __init__(self, plan: RunPlan, temperature_c: float) -> None:
+        calibration = plan.probe.calibration
+        self.known = calibration is not None
+        fraction = 1.0 if calibration is None else calibration.slope_fraction
+        self.slope_mv = fraction * ideal_slope_mv(temperature_c)
+        self._iso_ph = 7.0 if calibration is None else calibration.isopotential_ph
+        self._iso_mv = 0.0 if calibration is None else calibration.isopotential_mv
+
+    def ph(self, potential_mv: float) -> float:
+        """PH of a potential."""
+        return self._iso_ph - (potential_mv - self._iso_mv) / self.slope_mv
+
+    def potential_mv(self, ph: float) -> float:
+        """Potential of a pH."""
+        return self._iso_mv - (ph - self._iso_ph) * self.slope_mv
