@@ -12,8 +12,9 @@ HYDROGENCARBONATE_PH = 8.34
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class AlkalineExcess:
-    """Base beyond the point where pH is 8.34 (hydrogencarbonate alone): mol = mol_per_ml x (titrant volume - zero_at_ml), if positive.
+    """Base beyond the point where pH is 8.34 (hydrogencarbonate alone).
 
+    It is mol_per_ml x (titrant volume - zero_at_ml), if positive.
     `mol_per_ml` is positive for a base as titrant, negative for an acid (then the sample is alkaline at first).
     """
 

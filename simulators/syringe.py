@@ -60,6 +60,7 @@ class Syringe:
         self._swallow_ml = truth.dead_volume_ml + (0.0 if truth.backlash_taken_up else truth.backlash_ml)
         self._motion: Motion | None = None
         self._last_push: Motion | None = None
+        self._ended_s = -math.inf
         self._fault: str | None = None
 
     # --- asked by the pump's electronics ---
@@ -81,27 +82,27 @@ class Syringe:
         self._push("prime", steps, rate_ml_min, at_s)
 
     def begin_fill(self, at_s: float) -> None:
-        """Turn the valve, draw from the reservoir until full (or the reservoir is empty), turn it back.
+        """Draw from the reservoir until full or the reservoir is empty; a valve turns before and after.
+
+        Without a valve someone holds the tip in the reservoir; a syringe filled by hand before needs nothing more.
 
         Raises:
-            SyringeRefusedError: it moves, it has a fault or no valve, or the reservoir is empty.
+            SyringeRefusedError: it moves, it has a fault, or it cannot be filled at all.
         """
         self._check_ready(at_s)
         truth = self.truth
-        if truth.refill != "valve":
-            raise self._refused("it has no refill valve", "Fill the syringe by hand")
-        missing = self.capacity_steps - self._contents
-        steps = min(missing, int(self.reservoir_ml(at_s) / self.step_ml + 1e-6))
-        if steps == 0 and missing > 0:
-            raise self._refused("the reservoir is empty", "Fill the reservoir")
+        if truth.refill == "none":
+            raise self._refused("it cannot be refilled", "Take a larger syringe or a smaller sample")
+        steps = min(self.capacity_steps - self._contents, self._reservoir_steps())
         step_s = 60.0 * self.step_ml / truth.fill_rate_ml_min
-        from_s = at_s + truth.valve_s
+        valve_s = truth.valve_s if truth.refill == "valve" else 0.0
+        from_s = at_s + valve_s
         to_s = from_s + steps * step_s
         up_s = 2.0 * 60.0 * truth.backlash_ml / truth.fill_rate_ml_min if truth.backlash_taken_up else 0.0
         self._motion = Motion(
             kind="fill",
             begin_s=at_s,
-            end_s=to_s + up_s + truth.valve_s,
+            end_s=to_s + (up_s if steps > 0 else 0.0) + valve_s,
             steps=steps,
             plunger_from_s=from_s,
             plunger_to_s=to_s,
@@ -117,7 +118,7 @@ class Syringe:
 
     def ends_at_s(self) -> float:
         """When the present or last motion ends; minus infinity before the first."""
-        return -math.inf if self._motion is None else self._motion.end_s
+        return self._ended_s if self._motion is None else self._motion.end_s
 
     def halt(self, at_s: float) -> int:
         """Stop where it is; returns the steps of the push that were done."""
@@ -151,6 +152,8 @@ class Syringe:
 
     def fault(self, at_s: float) -> str | None:
         """What keeps it from moving; None: nothing."""
+        if self._fault is None and self.contents_steps(at_s) == 0 and self.reservoir_ml(at_s) < self.step_ml:
+            return None if self.truth.refill == "none" or self.moving(at_s) else "syringe and reservoir are empty"
         return self._fault
 
     # --- what people and mishaps do to it ---
@@ -164,12 +167,15 @@ class Syringe:
         if self.moving(at_s):
             raise self._refused("it moves", "Wait until it stands")
         self._settle(at_s)
-        self._contents = self.capacity_steps
-        self._after_drawing()
+        steps = min(self.capacity_steps - self._contents, self._reservoir_steps())
+        self._contents += steps
+        self._drawn += steps
+        if steps > 0:
+            self._after_drawing()
 
-    def fill_reservoir(self, reservoir_ml: float, at_s: float) -> None:
-        """Someone puts `reservoir_ml` of titrant into the reservoir (what was there is poured away)."""
-        self._reservoir_ml = reservoir_ml + self._drawn * self.step_ml
+    def change_reservoir(self, reservoir_ml: float, at_s: float) -> None:
+        """Someone puts another bottle of titrant in place."""
+        self._reservoir_ml += reservoir_ml - self.reservoir_ml(at_s)
 
     def trap_bubble(self, volume_ml: float) -> None:
         """A bubble comes into the line: the next pushes lose `volume_ml` to it."""
@@ -184,6 +190,9 @@ class Syringe:
     def _refused(self, what: str, remedy: str) -> SyringeRefusedError:
         return SyringeRefusedError(what, where="syringe", remedy=remedy)
 
+    def _reservoir_steps(self) -> int:
+        return max(0, int((self._reservoir_ml - self._drawn * self.step_ml) / self.step_ml + 1e-6))
+
     def _check_ready(self, at_s: float) -> None:
         if self._fault is not None:
             raise self._refused(self._fault, "Mend it and switch the pump on again")
@@ -196,7 +205,7 @@ class Syringe:
         motion = self._motion
         if motion is None or at_s < motion.end_s:
             return
-        self._motion = None
+        self._motion, self._ended_s = None, motion.end_s
         if motion.kind == "fill":
             self._contents += motion.steps
             self._drawn += motion.steps
