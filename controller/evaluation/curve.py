@@ -5,18 +5,16 @@ Volumes are mL of titrant at each settled point, signals pH or mV. Everything bu
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 
 from configs.errors import HalfdropError
+from simulators.constants import ideal_slope_mv
 
 Array = npt.NDArray[np.float64]
-
-#: R T ln 10 / F in mV per kelvin, CODATA 2018 constants
-SLOPE_MV_PER_KELVIN = 8.314462618 * math.log(10.0) / 96485.33212 * 1000.0
+Mask = npt.NDArray[np.bool_]
 
 
 class CurveError(HalfdropError):
@@ -91,7 +89,7 @@ class Curve:
     @property
     def unit_per_decade(self) -> float:
         """Signal per tenfold change of the ion's activity: 1 for pH, R T ln 10 / F in mV for a potential."""
-        return 1.0 if self.ph is not None else SLOPE_MV_PER_KELVIN * (self.temperature_c + 273.15)
+        return 1.0 if self.ph is not None else ideal_slope_mv(self.temperature_c)
 
     @property
     def decades(self) -> Array:
@@ -113,7 +111,7 @@ class Curve:
 
     @property
     def volume_sd(self) -> Array:
-        """Standard deviation of each volume in mL; half the last step of 1e-6 of the range where not known."""
+        """Standard deviation of each volume in mL, shape (n,); zero where not known."""
         if self.volume_sd_ml is None:
             return np.zeros(len(self.volume_ml))
         return np.broadcast_to(np.asarray(self.volume_sd_ml, dtype=float), self.volume_ml.shape).copy()

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -27,7 +28,10 @@ SMALLEST_RISE = 0.5
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Inflection:
-    """One jump. Volumes in mL, `signal` and `rise` in units of pH, `contrast`: peak slope over the steeper flank."""
+    """One jump. Volumes in mL, `signal` and `rise` in units of pH, `slope` in units of pH per mL.
+
+    `contrast`: the peak slope over that of the steeper flank.
+    """
 
     volume_ml: float
     standard_uncertainty_ml: float
@@ -38,6 +42,7 @@ class Inflection:
     to_ml: float
     rise: float
     contrast: float
+    slope: float
     method: str
 
 
@@ -81,7 +86,7 @@ def _grouped(volume: Array, signal: Array, sd: Array, group_sd: float) -> tuple[
         if volume[i] > volume[i - 1] and (apart or _steps_away(volume, signal, sd, i, group_sd)):
             starts.append(i)
     bounds = [*starts, len(volume)]
-    runs = [slice(a, b) for a, b in zip(bounds[:-1], bounds[1:], strict=True)]
+    runs = [slice(a, b) for a, b in pairwise(bounds)]
     counts = np.array([r.stop - r.start for r in runs], dtype=float)
     return (
         np.array([np.mean(volume[r]) for r in runs]),
@@ -126,7 +131,7 @@ def find_inflections(curve: Curve, *, smallest_rise: float = SMALLEST_RISE) -> t
                     "both sides: a shoulder, not counted as an end point"
                 )
             continue
-        found.append(_located(curve, s, j, (left, right), peak / max(base, 1e-12), rise))
+        found.append(_located(curve, s, j, flanks=(left, right), contrast=peak / max(base, 1e-12), rise=rise))
     return found, remarks
 
 
@@ -144,7 +149,7 @@ def _flank(slope: Array, j: int, way: int) -> int | None:
     return lowest
 
 
-def _located(curve: Curve, s: Slopes, j: int, flanks: tuple[int, int], contrast: float, rise: float) -> Inflection:
+def _located(curve: Curve, s: Slopes, j: int, *, flanks: tuple[int, int], contrast: float, rise: float) -> Inflection:
     width = float(s.volume_ml[j + 1] - s.volume_ml[j])
     sd_v = float(np.mean(curve.volume_sd)) if len(curve.volume_sd) else 0.0
     volume, signal, uncertainty = _second_derivative_zero(s, j)
@@ -166,6 +171,7 @@ def _located(curve: Curve, s: Slopes, j: int, flanks: tuple[int, int], contrast:
         to_ml=inside[1],
         rise=rise,
         contrast=contrast,
+        slope=float(s.slope[j]),
         method=method,
     )
 
@@ -175,7 +181,8 @@ def _second_derivative_zero(s: Slopes, j: int) -> tuple[float, float, float]:
 
     Differences are placed at the middle of what they span and the zero is interpolated linearly, as textbooks do by
     hand. The uncertainty joins the noise carried through and the step: rectangular over the steepest interval
-    (width / sqrt 12), less as the neighbouring slopes come up to the steepest one.
+    (width / sqrt 12), less as the neighbouring slopes come up to the steepest one, and how far the zero lies from the
+    middle of the part that is steeper than half the peak (as a rectangular half-width): a lopsided peak.
     """
     near = slice(j - 1, j + 3)
     volume, signal = s.volume_ml[near], s.signal[near]
@@ -190,7 +197,17 @@ def _second_derivative_zero(s: Slopes, j: int) -> tuple[float, float, float]:
     width = float(volume[2] - volume[1])
     step = width / math.sqrt(12.0) * min(1.0, max(shape, 0.1))
     noise = min(math.sqrt(noise), float(volume[3] - volume[0]) / math.sqrt(12.0))
-    return zero, float(np.interp(zero, volume, signal)), math.hypot(step, noise)
+    lopsided = (zero - _middle_of_steep_part(s, j)) / math.sqrt(3.0)
+    return zero, float(np.interp(zero, volume, signal)), math.hypot(step, noise, lopsided)
+
+
+def _middle_of_steep_part(s: Slopes, j: int) -> float:
+    first = last = j
+    while first > 0 and s.slope[first - 1] >= s.slope[j] / 2.0:
+        first -= 1
+    while last < len(s.slope) - 1 and s.slope[last + 1] >= s.slope[j] / 2.0:
+        last += 1
+    return float(s.volume_ml[first] + s.volume_ml[last + 1]) / 2.0
 
 
 def _zero(volume: Array, signal: Array) -> float:

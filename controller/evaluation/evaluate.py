@@ -1,0 +1,265 @@
+"""From a curve to its end points, each with a standard uncertainty and its estimator, half-equivalence and warnings."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from controller.evaluation.agreement import disagreements
+from controller.evaluation.curve import Curve
+from controller.evaluation.estimate import (
+    CHARGE_BALANCE,
+    GRAN_BEFORE,
+    GRAN_BEYOND,
+    INVERSE,
+    SECOND_DERIVATIVE,
+    Estimate,
+)
+from controller.evaluation.estimators import (
+    NOT_CORRECTED,
+    OFF_LINE,
+    from_fit,
+    from_gran,
+    from_inverse,
+    from_shape,
+    inverse_ladders,
+)
+from controller.evaluation.gran import gran_before, gran_beyond
+from controller.evaluation.inflection import SMALLEST_RISE, Inflection, find_inflections
+from controller.evaluation.modelfit import ModelFit, fit_charge_balance
+from controller.evaluation.pka import HalfEquivalence, half_equivalence
+from controller.evaluation.result import EndPoint, Evaluation
+
+#: fewer points than this make no curve
+FEWEST_POINTS = 5
+#: a Gran line takes the derivative's place beyond this relative standard uncertainty of the latter ...
+_COARSE_SHARE = 0.005
+#: ... and when it is this many times larger than the line's
+_COARSE_RATIO = 3.0
+#: an inflection further from equivalence than this share is remarked upon
+_NOTABLE_BIAS = 0.001
+
+
+def evaluate(
+    curve: Curve, *, end_points_expected: int | None = None, smallest_rise: float = SMALLEST_RISE
+) -> Evaluation:
+    """Evaluate a titration curve.
+
+    Args:
+        curve: points and what is known about them.
+        end_points_expected: how many end points there should be; more are cut to the clearest, fewer are remarked upon.
+        smallest_rise: change of signal that a jump must have, units of pH (59 mV).
+
+    Returns:
+        The evaluation; without an end point it says so in `reason` and gives no number.
+    """
+    last = float(curve.volume_ml[-1]) if len(curve.volume_ml) else 0.0
+    if len(np.unique(curve.volume_ml)) < FEWEST_POINTS:
+        reason = f"no end point: {len(curve.volume_ml)} points are too few to evaluate (at least {FEWEST_POINTS})"
+        return _nothing(reason, [], last)
+    jumps, remarks = find_inflections(curve, smallest_rise=smallest_rise)
+    jumps, cut = _clearest(jumps, end_points_expected)
+    warnings = [*remarks, *cut]
+    if not jumps:
+        return _nothing("no end point: the curve shows no jump that stands out from its noise", warnings, last)
+    strong = _strong(curve, jumps)
+    known = replace(curve, pka=()) if strong and curve.pka is None else curve
+    fit = fit_charge_balance(known)
+    estimates = _estimates(known, jumps, fit, strong=strong)
+    reported = [choose(e) for e in estimates]
+    halves = _halves(known, reported)
+    warnings += _warnings(known, jumps, estimates, reported, fit)
+    warnings += [h.remark for h in halves if h.remark is not None]
+    if end_points_expected is not None and len(jumps) < end_points_expected:
+        warnings.append(f"{len(jumps)} of {end_points_expected} expected end points found")
+    return Evaluation(
+        end_points=tuple(_end_point(curve, e) for e in reported),
+        half_equivalence=tuple(halves),
+        estimates=tuple((r, *(e for e in found if e is not r)) for r, found in zip(reported, estimates, strict=True)),
+        warnings=tuple(warnings),
+        titrant_ml=last,
+        details=_details(fit, jumps),
+    )
+
+
+def choose(estimates: list[Estimate]) -> Estimate:
+    """Return the estimate that is reported; the rule stands in words in `result.RULE`."""
+    by_name = {e.estimator: e for e in estimates if e.sound and e.standard_uncertainty_ml > 0.0}
+    for name in (CHARGE_BALANCE, INVERSE):
+        if name in by_name:
+            return by_name[name]
+    shape = next(e for e in estimates if e.estimator == SECOND_DERIVATIVE)
+    line = by_name.get(GRAN_BEYOND)
+    coarse = shape.standard_uncertainty_ml > _COARSE_SHARE * shape.volume_ml
+    if line is not None and coarse and shape.standard_uncertainty_ml > _COARSE_RATIO * line.standard_uncertainty_ml:
+        return line
+    return shape
+
+
+def _nothing(reason: str, warnings: list[str], titrant_ml: float) -> Evaluation:
+    return Evaluation(
+        end_points=(),
+        half_equivalence=(),
+        estimates=(),
+        warnings=tuple(warnings),
+        titrant_ml=titrant_ml,
+        reason=reason,
+    )
+
+
+def _clearest(jumps: list[Inflection], expected: int | None) -> tuple[list[Inflection], list[str]]:
+    if expected is None or len(jumps) <= expected:
+        return jumps, []
+    ranked = sorted(jumps, key=lambda x: x.contrast * x.rise, reverse=True)
+    dropped = sorted(x.volume_ml for x in ranked[expected:])
+    kept = sorted(ranked[:expected], key=lambda x: x.volume_ml)
+    places = ", ".join(f"{v:.4g}" for v in dropped)
+    return kept, [f"{len(jumps)} jumps found, {expected} expected: the less clear at {places} mL are left out"]
+
+
+def _strong(curve: Curve, jumps: list[Inflection]) -> bool:
+    """Does free H+ (or OH-) carry the titrant all the way to a single jump: a strong acid or base?"""
+    if curve.pka is not None or len(jumps) != 1:
+        return curve.pka == ()
+    line = gran_before(curve, end_point_ml=jumps[0].volume_ml)
+    return line is not None and bool(line.strong)
+
+
+def _estimates(curve: Curve, jumps: list[Inflection], fit: ModelFit | None, *, strong: bool) -> list[list[Estimate]]:
+    # for one of several end points the inverse model is second to a sound fit of the whole curve
+    several = len(jumps) > 1 and fit is not None and fit.sound
+    ladder = [None] if several else inverse_ladders(curve, len(jumps), strong)
+    everything = []
+    previous = 0.0
+    for i, jump in enumerate(jumps):
+        following = jumps[i + 1] if i + 1 < len(jumps) else None
+        middle = None if following is None else (jump.volume_ml + following.volume_ml) / 2.0
+        inverse, _ = from_inverse(curve, None if several else ladder[i], jump, up_to_ml=middle)
+        found = [from_fit(fit, jump), inverse, *from_shape(jump, previous)]
+        if following is None:
+            line = gran_beyond(curve, end_point_ml=jump.volume_ml, signal=jump.signal)
+            found.append(from_gran(line, curve, jump, beyond=True))
+        before = gran_before(curve, end_point_ml=jump.volume_ml, previous_ml=previous)
+        found.append(from_gran(before, curve, jump, beyond=False))
+        everything.append([e for e in found if e is not None])
+        previous = jump.volume_ml
+    return everything
+
+
+def _end_point(curve: Curve, estimate: Estimate) -> EndPoint:
+    def at(signal: Any) -> float | None:
+        return None if signal is None else float(np.interp(estimate.volume_ml, curve.volume_ml, signal))
+
+    return EndPoint(
+        volume_ml=estimate.volume_ml,
+        standard_uncertainty_ml=estimate.standard_uncertainty_ml,
+        ph=at(curve.ph),
+        potential_mv=at(curve.potential_mv),
+        estimator=estimate.estimator,
+    )
+
+
+def _halves(curve: Curve, reported: list[Estimate]) -> list[HalfEquivalence]:
+    halves: list[HalfEquivalence] = []
+    previous = 0.0
+    for e in reported:
+        single, charge = _step(curve, len(reported), len(halves))
+        half = half_equivalence(
+            curve,
+            end_point_ml=e.volume_ml,
+            standard_uncertainty_ml=e.standard_uncertainty_ml,
+            previous_ml=previous,
+            single_proton=single,
+            charge_before=charge,
+        )
+        if half is not None:
+            halves.append(half)
+        previous = e.volume_ml
+    return halves
+
+
+def _step(curve: Curve, jumps: int, index: int) -> tuple[bool | None, int | None]:
+    """Return whether end point `index` counts one proton, and the charge of the form that has it; None: not known."""
+    if curve.pka is None:
+        return None, None
+    gone = curve.charge + curve.counter_ion_charge
+    if curve.acid_titrant:
+        lost = len(curve.pka) - (len(curve.pka) - gone) - index - 1
+        steps = gone
+    else:
+        lost = gone + index
+        steps = len(curve.pka) - gone
+    if not curve.pka:
+        return False, None
+    single = steps == 1 or jumps > 1 or None
+    return single, curve.charge - lost
+
+
+def _warnings(
+    curve: Curve,
+    jumps: list[Inflection],
+    estimates: list[list[Estimate]],
+    reported: list[Estimate],
+    fit: ModelFit | None,
+) -> list[str]:
+    out = []
+    if curve.initial_volume_ml is None or curve.titrant_concentration_mol_l is None:
+        out.append(
+            "initial volume or titrant concentration is not given: the equivalence point rests on the curve's shape "
+            "alone, and a plain Gran line, the inverse model and the fit cannot run"
+        )
+    for i, (jump, found, chosen) in enumerate(zip(jumps, estimates, reported, strict=True), start=1):
+        out += disagreements(chosen, found, number=i)
+        out += [
+            f"end point {i}: {e.estimator}: {e.remark}"
+            for e in found
+            if e.estimator in {GRAN_BEYOND, GRAN_BEFORE} and e.remark not in (None, NOT_CORRECTED, OFF_LINE)
+        ]
+        out += _shape_warnings(i, jump, found, chosen)
+    if fit is not None and curve.ph is not None:
+        for index, off in fit.outliers[:5]:
+            out.append(
+                f"the point at {curve.volume_ml[index]:g} mL (pH {curve.ph[index]:.2f}) lies {off:+.2f} pH off the "
+                "charge balance of the others: a wrong reading or entry?"
+            )
+    return out
+
+
+def _shape_warnings(number: int, jump: Inflection, found: list[Estimate], chosen: Estimate) -> list[str]:
+    shape = next(e for e in found if e.estimator == SECOND_DERIVATIVE)
+    if chosen is shape:
+        share = shape.bias_ml / shape.volume_ml
+        if share <= _NOTABLE_BIAS:
+            return []
+        return [
+            f"end point {number} is an inflection; for a jump as flat as this (very weak, dilute or one of several) "
+            f"equivalence may lie {100.0 * share:.1f} % or more from it (in the uncertainty)"
+        ]
+    off = (jump.volume_ml - chosen.volume_ml) / chosen.volume_ml
+    if abs(off) <= _NOTABLE_BIAS or abs(jump.volume_ml - chosen.volume_ml) < 2.0 * math.hypot(
+        jump.standard_uncertainty_ml, chosen.standard_uncertainty_ml
+    ):
+        return []
+    return [
+        f"end point {number}: the inflection lies {100.0 * off:+.2f} % from equivalence; reported is the "
+        f"{chosen.estimator}"
+    ]
+
+
+def _details(fit: ModelFit | None, jumps: list[Inflection]) -> dict[str, Any]:
+    details: dict[str, Any] = {"jumps": [{"rise_ph_units": j.rise, "contrast": j.contrast} for j in jumps]}
+    if fit is not None:
+        details["charge_balance_fit"] = {
+            "sound": fit.sound,
+            "reduced_chi_square": fit.chi_square,
+            "pka": list(fit.pka),
+            "pka_standard_uncertainty": list(fit.pka_sd),
+            "offset_ph": fit.offset_ph,
+            "slope_error": fit.slope_error,
+            "strong_ion_mol_l": fit.strong_ion_mol_l,
+            "activity": "davies" if fit.activity else "none",
+        }
+    return details
