@@ -105,11 +105,15 @@ class Party(Protocol):
 
 
 class Line:
-    """Byte counts of one line. Bytes on their way are those written at one end and not yet taken at the other."""
+    """Byte counts of one line. Bytes on their way are those written at one end and not yet taken at the other.
 
-    __slots__ = ("device_taken", "device_written", "link_taken", "link_written")
+    `attached`: a link is open on it; `broken`: the device's end is gone (unplugged).
+    """
+
+    __slots__ = ("attached", "broken", "device_taken", "device_written", "link_taken", "link_written")
 
     def __init__(self) -> None:
+        self.attached = self.broken = False
         self.clear()
 
     def clear(self) -> None:

@@ -1,4 +1,4 @@
-"""What can go wrong with a device: silent, garbled, refused and gone are told apart, because callers act differently."""
+"""What can go wrong with a device: silent, garbled, refused and gone are told apart."""
 
 from __future__ import annotations
 
