@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -28,7 +29,7 @@ from controller.evaluation.estimators import (
     inverse_ladders,
 )
 from controller.evaluation.gran import gran_before, gran_beyond
-from controller.evaluation.inflection import SMALLEST_RISE, Inflection, find_inflections
+from controller.evaluation.inflection import SMALLEST_RISE, Inflection, find_inflections, inflection_at
 from controller.evaluation.modelfit import ModelFit, fit_charge_balance
 from controller.evaluation.pka import HalfEquivalence, half_equivalence
 from controller.evaluation.result import EndPoint, Evaluation
@@ -44,7 +45,11 @@ _NOTABLE_BIAS = 0.001
 
 
 def evaluate(
-    curve: Curve, *, end_points_expected: int | None = None, smallest_rise: float = SMALLEST_RISE
+    curve: Curve,
+    *,
+    end_points_expected: int | None = None,
+    smallest_rise: float = SMALLEST_RISE,
+    detected_ml: Sequence[float] = (),
 ) -> Evaluation:
     """Evaluate a titration curve.
 
@@ -52,6 +57,8 @@ def evaluate(
         curve: points and what is known about them.
         end_points_expected: how many end points there should be; more are cut to the clearest, fewer are remarked upon.
         smallest_rise: change of signal that a jump must have, units of pH (59 mV).
+        detected_ml: end points that a run detected: each gets its place on the curve, whether the shape alone shows
+            it or not.
 
     Returns:
         The evaluation; without an end point it says so in `reason` and gives no number.
@@ -61,6 +68,7 @@ def evaluate(
         reason = f"no end point: {len(curve.volume_ml)} points are too few to evaluate (at least {FEWEST_POINTS})"
         return _nothing(reason, [], last)
     jumps, remarks = find_inflections(curve, smallest_rise=smallest_rise)
+    jumps = _with_detected(curve, jumps, detected_ml)
     jumps, cut = _clearest(jumps, end_points_expected)
     warnings = [*remarks, *cut]
     if not jumps:
@@ -83,6 +91,15 @@ def evaluate(
         titrant_ml=last,
         details=_details(fit, jumps),
     )
+
+
+def _with_detected(curve: Curve, jumps: list[Inflection], detected_ml: Sequence[float]) -> list[Inflection]:
+    added = [
+        inflection_at(curve, volume)
+        for volume in detected_ml
+        if all(abs(j.volume_ml - volume) > 0.03 * volume for j in jumps)
+    ]
+    return sorted([*jumps, *(j for j in added if j is not None)], key=lambda j: j.volume_ml)
 
 
 def choose(estimates: list[Estimate]) -> Estimate:

@@ -135,6 +135,26 @@ def find_inflections(curve: Curve, *, smallest_rise: float = SMALLEST_RISE) -> t
     return found, remarks
 
 
+def inflection_at(curve: Curve, near_ml: float, *, within: float = 0.03) -> Inflection | None:
+    """Return the steepest place near a volume where an end point is known to be (a run detected it).
+
+    A run may stop so soon after its end point, or dose so finely, that the slope alone does not stand out of the pump's
+    error; None where fewer than four points are at hand or none is near.
+    """
+    s = slopes(curve)
+    near = [j for j in range(1, len(s.slope) - 1) if abs(float(s.middle_ml[j]) - near_ml) <= within * near_ml]
+    if not near:
+        return None
+    j = max(near, key=lambda i: float(s.slope[i]))
+    if not s.slope[j] > 0.0:
+        return None
+    left = int(np.argmin(s.slope[:j]))
+    right = j + 1 + int(np.argmin(s.slope[j + 1 :]))
+    base = max(float(s.slope[left]), float(s.slope[right]), 1e-12)
+    rise = abs(float(s.signal[right] - s.signal[left + 1]))
+    return _located(curve, s, j, flanks=(left, right), contrast=float(s.slope[j]) / base, rise=rise)
+
+
 def _is_peak(slope: Array, j: int) -> bool:
     return bool(0 < j < len(slope) - 1 and slope[j] > slope[j - 1] and slope[j] >= slope[j + 1] and slope[j] > 0.0)
 

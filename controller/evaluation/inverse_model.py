@@ -7,8 +7,8 @@ V0 all liquid at the start, Cb the titrant, W = V + (V0 + V)(h - oh)/Cb the titr
 
 This is the exact charge balance of an acid whose last proton goes last (k_i the overall protonation constants, V_i the
 titrant at which i protons are left, d a shift of the amount of acid against Veq: juice holds potassium salts), with
-free acid and base branches (k0 near 1, k2 near 1/Cb: probe offset). It is linear in V, so V(q) and dV/dq are explicit and cheap: the live settling turns
-each reading into a volume with it.
+free acid and base branches (k0 near 1, k2 near 1/Cb: probe offset). It is linear in V, so V(q) and dV/dq are explicit
+and cheap: the live settling turns each reading into a volume with it.
 """
 
 from __future__ import annotations

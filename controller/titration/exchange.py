@@ -194,9 +194,8 @@ class Exchange:
         self._pump_failures += 1
         if self._pump_failures >= MOST_PUMP_FAILURES:
             raise EndOfRunError("failed", f"{failed.device}: {failed.what} ({self._pump_failures} doses in a row)")
-        yield from self.warn(
-            f"{failed.device}: {failed.what}; dose {action.number} of {action.volume_ml:.4f} mL counts as {volume_ml:.4f}"
-        )
+        counts = f"dose {action.number} of {action.volume_ml:.4f} mL counts as {volume_ml:.4f} mL"
+        yield from self.warn(f"{failed.device}: {failed.what}; {counts}")
         yield from self.wait(RETRY_S)
         return volume_ml
 

@@ -9,6 +9,7 @@ from dataclasses import dataclass
 from statistics import fmean, median
 
 READINGS = 20
+OUTLIER_RATIO = 2.5
 _CORRELATED = 0.4
 
 
@@ -29,6 +30,8 @@ class Noise:
 def measure_noise(potentials_mv: Sequence[float], resolution_mv: float) -> Noise:
     """Noise = 1.4826 x median |successive difference| / sqrt 2, at least resolution / sqrt 12.
 
+    The median of a few rounded differences is coarse; unless outliers show (root mean square over 2.5 x the median's
+    figure) the root mean square of the differences is taken instead.
     The correlation is that of neighbours about the line through the readings; where it is high, the scatter about that
     line (robust) is taken if it is larger, since differences of neighbours hide slow noise.
 
@@ -41,6 +44,9 @@ def measure_noise(potentials_mv: Sequence[float], resolution_mv: float) -> Noise
     mean = fmean(potentials_mv)
     differences = [abs(b - a) for a, b in itertools.pairwise(potentials_mv)]
     sd = 1.4826 * median(differences) / math.sqrt(2.0)
+    root_mean_square = math.sqrt(fmean(d * d for d in differences) / 2.0)
+    if root_mean_square <= OUTLIER_RATIO * max(sd, floor):
+        sd = root_mean_square
     middle = (n - 1) / 2.0
     slope = sum((i - middle) * e for i, e in enumerate(potentials_mv)) / sum((i - middle) ** 2 for i in range(n))
     rest = [e - mean - slope * (i - middle) for i, e in enumerate(potentials_mv)]

@@ -1,38 +1,136 @@
-"""The result of a run: what Finish carries."""
+"""The result of a run: what Finish carries.
+
+The run's own detection decides how many end points there are; the evaluation of the whole curve afterwards gives each
+its volume. What the evaluation sees and the run did not confirm is remarked upon and yields no number.
+"""
 
 from __future__ import annotations
 
 import math
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
+from controller.evaluation.curve import Curve, CurveError
+from controller.evaluation.evaluate import evaluate
+from controller.evaluation.result import Evaluation
+from controller.titration.endpoint import FoundEndPoint
+
 if TYPE_CHECKING:
     from controller.titration.core import RunState
+
+FEWEST_POINTS = 6
+SAME_POINT_SHARE = 0.02
+#: no probe and no calibration is straight to better than this over a few pH, mV
+STRAIGHTNESS_MV = 0.2
+DIGITS = 7
 
 
 def run_result(run: RunState) -> dict[str, Any]:
     """JSON of `halfdrop run` less run path and seed. No end point found: an empty list and no number."""
     world = run.world
-    end_points = []
-    for found in run.watch.found:
-        sd = math.hypot(found.standard_uncertainty_ml, run.plan.pump.position_sd_ml, world.doubt_ml)
-        end_points.append(
-            {
-                "volume_ml": round(found.volume_ml, 6),
-                "standard_uncertainty_ml": round(sd, 6),
-                "ph": found.ph,
-                "potential_mv": found.potential_mv,
-                "estimator": found.estimator,
-            }
-        )
+    evaluation = _evaluated(run)
+    warnings = list(world.warnings)
+    end_points = [_end_point(run, found, evaluation) for found in run.watch.found]
+    if evaluation is not None:
+        warnings += [w for w in evaluation.warnings if w not in warnings]
+        warnings += _unconfirmed(run, evaluation)
     return {
         "outcome": run.outcome,
         "reason": run.reason or None,
         "end_points": end_points,
-        "half_equivalence": [],
-        "estimators": {},
+        "half_equivalence": _halves(evaluation) if end_points else [],
+        "estimators": _rounded(evaluation.estimators()) if evaluation is not None and end_points else {},
         "result": None,
         "doses": world.doses,
         "duration_s": round(world.elapsed_s, 3),
-        "titrant_ml": round(world.delivered_ml, 6),
-        "warnings": list(world.warnings),
+        "titrant_ml": round(world.delivered_ml, DIGITS),
+        "warnings": warnings,
     }
+
+
+def run_curve(run: RunState) -> Curve:
+    """The settled points as the evaluation takes them, with their uncertainties.
+
+    Raises:
+        CurveError: they make no curve.
+    """
+    plan, points = run.plan, run.points
+    analyte, chemistry = plan.chemistry.analyte, plan.chemistry
+    per_unit = run.scale.slope_mv if run.scale.known else 1.0
+    signal_mv = math.hypot(run.noise.sd_mv / math.sqrt(3.0), STRAIGHTNESS_MV)
+    return Curve(
+        volume_ml=np.array([p.volume_ml for p in points]),
+        ph=np.array([p.ph for p in points], dtype=np.float64) if run.scale.known else None,
+        potential_mv=np.array([p.potential_mv for p in points]),
+        initial_volume_ml=plan.sample.initial_volume_ml,
+        titrant_concentration_mol_l=plan.titrant.concentration_mol_l,
+        titrant_is_acid=plan.titrant.acid,
+        volume_sd_ml=np.array([math.hypot(p.volume_sd_ml, plan.pump.dose_sd_ml, 0.0005) for p in points]),
+        signal_sd=signal_mv / per_unit,
+        pka=None if analyte is None else analyte.pka,
+        charge=0 if analyte is None else analyte.charge,
+        counter_ion_charge=0 if analyte is None else analyte.counter_ion_charge,
+        pkw=chemistry.pkw,
+        debye_huckel_a=chemistry.debye_huckel_a,
+        temperature_c=chemistry.temperature_c,
+    )
+
+
+def _evaluated(run: RunState) -> Evaluation | None:
+    if len(run.points) < FEWEST_POINTS:
+        return None
+    try:
+        return evaluate(
+            run_curve(run),
+            end_points_expected=run.plan.end_points.expected,
+            detected_ml=[found.volume_ml for found in run.watch.found],
+        )
+    except CurveError as error:
+        run.world.warnings.append(str(error))
+        return None
+
+
+def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | None) -> dict[str, Any]:
+    """The evaluation's value of a detected end point where it has one there, else the run's own."""
+    volume_ml, sd_ml, estimator = found.volume_ml, found.standard_uncertainty_ml, found.estimator
+    ph, potential_mv = found.ph, found.potential_mv
+    for point in evaluation.end_points if evaluation is not None else ():
+        if abs(point.volume_ml - found.volume_ml) <= SAME_POINT_SHARE * found.volume_ml + 5.0 * sd_ml:
+            volume_ml, sd_ml, estimator = point.volume_ml, point.standard_uncertainty_ml, point.estimator
+            ph, potential_mv = point.ph, point.potential_mv
+            break
+    pump = run.plan.pump
+    return {
+        "volume_ml": round(volume_ml, DIGITS),
+        "standard_uncertainty_ml": round(math.hypot(sd_ml, pump.position_sd_ml, run.world.doubt_ml), DIGITS),
+        "ph": None if ph is None else round(ph, 4),
+        "potential_mv": None if potential_mv is None else round(potential_mv, 2),
+        "estimator": estimator,
+    }
+
+
+def _unconfirmed(run: RunState, evaluation: Evaluation) -> list[str]:
+    """Jumps that the evaluation sees and the run did not confirm."""
+    extra = []
+    for point in evaluation.end_points:
+        near = SAME_POINT_SHARE * point.volume_ml + 5.0 * point.standard_uncertainty_ml
+        if all(abs(point.volume_ml - found.volume_ml) > near for found in run.watch.found):
+            extra.append(
+                f"the curve shows a jump near {point.volume_ml:.3f} mL that the run did not confirm as an end point; "
+                "no number is given for it"
+            )
+    return extra
+
+
+def _halves(evaluation: Evaluation | None) -> list[dict[str, Any]]:
+    if evaluation is None:
+        return []
+    out = []
+    for half in evaluation.to_json()["half_equivalence"]:
+        out.append({k: round(v, DIGITS) if isinstance(v, float) else v for k, v in half.items()})
+    return out
+
+
+def _rounded(estimators: dict[str, list[float]]) -> dict[str, list[float]]:
+    return {name: [round(v, DIGITS) for v in volumes] for name, volumes in estimators.items()}

@@ -17,6 +17,8 @@ TAUS_S = (1.0, 1.5, 2.2, 3.2, 4.6, 6.8, 10.0, 15.0, 22.0, 40.0)
 FIRST_TAU_S = 3.0
 TAU_SPREAD = 0.5  # ln units, of tau about the learned one
 SKIP_S = 1.0  # after the dose: dead time and mixing are no exponential
+TAIL_FROM = 0.35  # share of the wait whose readings are left out: the start is no single exponential
+MOST_IN_FIT = 30
 SMALLEST_SD_MV = 0.5
 SD_VOLUME_ML = 0.0005
 SD_PER_STEP = 0.03
@@ -27,7 +29,7 @@ HOLD_S = 60.0
 HOLD_WITHIN_ML = 0.150
 DRIFT_AFTER_S = 20.0
 OUTLIER_WINDOW = 15  # a burst of 6 bad readings stays a minority
-_MOST_READINGS = 120
+_MOST_READINGS = 60
 
 
 class Extrapolated:
@@ -72,7 +74,9 @@ class Extrapolated:
         return self._judge(context, waited_s, late)
 
     def _judge(self, context: SettlingContext, waited_s: float, late: bool) -> Accepted | None:
-        good = without_outliers(self._readings, context.noise_mv)
+        begun_s = max(SKIP_S, TAIL_FROM * waited_s)
+        tail = [r for r in self._readings[-MOST_IN_FIT:] if r[0] >= begun_s]
+        good = without_outliers(tail, context.noise_mv)
         limit = max(SMALLEST_SD_MV, SD_VOLUME_ML * context.local_slope_mv_ml, SD_PER_STEP * context.step_mv)
         if len(good) >= 5:
             level, sd, chi_square, tau_s = self._averaged(good, context.noise_mv)
