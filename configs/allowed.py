@@ -49,7 +49,7 @@ def allowed_at(model: type[Settings], location: Location) -> str:
         spelled = _range(limits)
         shown_kind = kind if not spelled or (kind == "whole number" and limits.get("ge") != limits.get("le")) else ""
         return " ".join(part for part in (shown_kind, spelled, unit_of(name)) if part)
-    metadata = info.metadata if info is not None else []
+    metadata = [*(info.metadata if info is not None else []), *_inner_metadata(annotation)]
     if any(getattr(item, "pattern", None) == PLAIN_NAME for item in metadata):
         return "small letters, digits and hyphens, at most 64"
     if kind == "text" and any(isinstance(item, AfterValidator) for item in metadata):
@@ -96,6 +96,16 @@ def _item(annotation: Any) -> tuple[FieldInfo | None, Any]:
     if typing.get_origin(annotation) is typing.Annotated:
         return FieldInfo.from_annotation(annotation), typing.get_args(annotation)[0]
     return None, annotation
+
+
+def _inner_metadata(annotation: Any) -> tuple[Any, ...]:
+    """Return what is annotated inside "this or nothing"."""
+    return tuple(
+        item
+        for part in typing.get_args(annotation)
+        if typing.get_origin(part) is typing.Annotated
+        for item in typing.get_args(part)[1:]
+    )
 
 
 def _without_none(annotation: Any) -> Any:

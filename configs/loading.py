@@ -122,7 +122,9 @@ def _is_directory(path: str) -> bool:
 
 def _near_file(path: Path) -> str:
     try:
-        return did_you_mean(path.name, [entry.name for entry in path.parent.iterdir() if entry.suffix == ".yaml"])
+        return did_you_mean(
+            path.stem, {entry.stem: entry.name for entry in path.parent.iterdir() if entry.suffix == ".yaml"}
+        )
     except OSError:
         return ""
 
@@ -166,7 +168,7 @@ def _text(kind: str, got: Any, context: dict[str, Any], model: type[Settings], l
     hint = ""
     if "number" in wanted and isinstance(got, str) and _DECIMAL_COMMA.fullmatch(got):
         hint = f" (with a decimal point: {got.replace(',', '.')})"
-    elif wanted == "text" and isinstance(got, int | float):
+    elif allowed.startswith("text") and isinstance(got, int | float):
         hint = f' (in quotes: "{shown(got)}")'
     elif " | " in wanted and isinstance(got, str):
         hint = did_you_mean(got, wanted.split(" | "))
