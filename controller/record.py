@@ -120,7 +120,10 @@ def _first_bad(lines: list[bytes], entries: list[dict[str, Any] | None]) -> tupl
     previous = ""
     for index, (line, entry) in enumerate(zip(lines, entries, strict=True)):
         if entry is None:
-            if _ended_by(entries[index + 1] if index + 1 < len(entries) else None, line):
+            after = entries[index + 1] if index + 1 < len(entries) else None
+            if after is not None and _ended_by(after, line):
+                if after["closing"].get("last_whole_sha256") != previous:
+                    return index, "it was edited"
                 previous = hashlib.sha256(line).hexdigest()
                 continue
             return index + 1, "not a line of a record"
@@ -162,11 +165,10 @@ def _sealed(line: bytes, entry: dict[str, Any], index: int, previous: str) -> bo
     )
 
 
-def _ended_by(entry: dict[str, Any] | None, torn: bytes) -> bool:
+def _ended_by(entry: dict[str, Any], torn: bytes) -> bool:
     """True where the next line says that it ended this torn one."""
     return (
-        entry is not None
-        and isinstance(entry.get("closing"), dict)
+        isinstance(entry.get("closing"), dict)
         and entry["closing"].get("torn_bytes_before") == len(torn)
         and entry.get("previous_sha256") == hashlib.sha256(torn).hexdigest()
     )

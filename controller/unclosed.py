@@ -92,6 +92,8 @@ def close_record(path: Path, *, clock: Clock, operator_name: str | None, reason:
         "closed_by": operator_name,
         "stop_confirmed": None,
         "torn_bytes_before": len(torn),
+        # a torn line lost its hash of the line before; this one takes its place in the chain
+        "last_whole_sha256": hashlib.sha256(lines[-1]).hexdigest(),
     }
     text = (
         f'{{"line":{number},"utc":"{utc_text(clock.utc_s())}","run_s":{run_s!r},"closing":{encode(closing)},'
