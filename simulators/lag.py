@@ -17,6 +17,7 @@ import math
 from bisect import bisect_right
 from dataclasses import dataclass
 
+from simulators.convolution import convolutions
 from simulators.convolution import convolved_exponentials as _convolved
 
 _CLOSE = 1e-2  # rates closer than this (relative) take the careful way instead of plain differences
@@ -52,7 +53,9 @@ class LagDerivatives:
 
 States = tuple[float, float, float]
 _Anchor = tuple[float, float, float, float, float, float]  # time, input, rate, x1, x2, x3
-_ZERO: States = (0.0, 0.0, 0.0)
+#: derivatives of x1, x2, x3 by the bulk's rate, of x2, x3 by the film's, of x3 by the slow layer's
+_Slopes = tuple[float, float, float, float, float, float]
+_ZERO: _Slopes = (0.0, 0.0, 0.0, 0.0, 0.0, 0.0)
 
 
 class LagCascade:
@@ -81,7 +84,7 @@ class LagCascade:
         start = states if states is not None else (volume_ml, volume_ml, volume_ml)
         self._anchors: list[_Anchor] = [(at_s, volume_ml, 0.0, *start)]
         self._anchor_times: list[float] = [at_s]
-        self._slopes: list[tuple[States, States, States]] = [(_ZERO, _ZERO, _ZERO)]
+        self._slopes: list[_Slopes] = [_ZERO]
 
     # --- the record of what was delivered ---
 
@@ -162,15 +165,15 @@ class LagCascade:
         """
         anchor = self._anchor(at_s)
         index = self._extend_slopes(at_s)
-        (_, film, slow), slopes = self._advance_slopes(anchor, self._slopes[index], at_s)
-        share = self._share
-        by_rate = [(1.0 - share) * s[1] + share * s[2] for s in slopes]
+        (bulk, film, slow), (_, a2, a3, b2, b3, c3) = self._advance_slopes(anchor, self._slopes[index], at_s)
+        share, a, b, c = self._share, self._a, self._b, self._c
+        rate_ml_s = (1.0 - share) * (bulk - film) * b + share * (film - slow) * c
         return film + share * (slow - film), LagDerivatives(
-            -by_rate[0] * self._a**2,
-            -by_rate[1] * self._b**2,
-            -by_rate[2] * self._c**2,
+            -a * a * (a2 + share * (a3 - a2)),
+            -b * b * (b2 + share * (b3 - b2)),
+            -c * c * share * c3,
             slow - film,
-            -self.seen_rate_ml_s(at_s),
+            -rate_ml_s,
         )
 
     def changed(self, at_s: float, constants: LagConstants) -> LagCascade:
@@ -244,29 +247,27 @@ class LagCascade:
             self._slopes.append(slopes)
         return index
 
-    def _advance_slopes(
-        self, anchor: _Anchor, before: tuple[States, States, States], at_s: float
-    ) -> tuple[States, tuple[States, States, States]]:
-        start_s, u, rate, *x = anchor
-        dt = max(at_s - start_s, 0.0)
+    def _advance_slopes(self, anchor: _Anchor, before: _Slopes, at_s: float) -> tuple[States, _Slopes]:
+        start_s, u, rate, x1, x2, x3 = anchor
         a, b, c = self._a, self._b, self._c
-        steady = (u - rate / a, u - rate / a - rate / b, u - rate / a - rate / b - rate / c)
-        d1, d2, d3 = x[0] - steady[0], x[1] - steady[1], x[2] - steady[2]
-        ea, eb, ec = math.exp(-a * dt), math.exp(-b * dt), math.exp(-c * dt)
-        ab, bc, abc = _convolved((a, b), dt), _convolved((b, c), dt), _convolved((a, b, c), dt)
-        # derivative of a convolution by one rate: minus the convolution with that rate once more
-        aab, abb, bbc, bcc = (_convolved(n, dt) for n in ((a, a, b), (a, b, b), (b, b, c), (b, c, c)))
-        aabc, abbc, abcc = (_convolved(n, dt) for n in ((a, a, b, c), (a, b, b, c), (a, b, c, c)))
-        by_a = (-dt * ea * d1, -b * aab * d1, -b * c * aabc * d1)
-        by_b = (0.0, (ab - b * abb) * d1 - dt * eb * d2, c * (abc - b * abbc) * d1 - c * bbc * d2)
-        by_c = (0.0, 0.0, b * (abc - c * abcc) * d1 + (bc - c * bcc) * d2 - dt * ec * d3)
-        steady_slopes = [(rate / a**2,) * 3, (0.0, rate / b**2, rate / b**2), (0.0, 0.0, rate / c**2)]
-        slopes: list[States] = []
-        for direct, steady_slope, s in zip((by_a, by_b, by_c), steady_slopes, before, strict=True):
-            e1, e2, e3 = s[0] - steady_slope[0], s[1] - steady_slope[1], s[2] - steady_slope[2]
-            slopes.append((
-                steady_slope[0] + ea * e1 + direct[0],
-                steady_slope[1] + eb * e2 + b * ab * e1 + direct[1],
-                steady_slope[2] + ec * e3 + c * (bc * e2 + b * abc * e1) + direct[2],
-            ))  # fmt: skip
-        return self._advance(anchor, at_s), (slopes[0], slopes[1], slopes[2])
+        k = convolutions(a, b, c, max(at_s - start_s, 0.0), self._distinct)
+        s1 = rate / a
+        s2 = s1 + rate / b
+        d1, d2, d3 = x1 - u + s1, x2 - u + s2, x3 - u + s2 + rate / c
+        # derivatives of the steady response to a ramp, then of the deviations from it
+        steady_a, steady_b, steady_c = rate / (a * a), rate / (b * b), rate / (c * c)
+        a1, a2, a3, b2, b3, c3 = before
+        a1, a2, a3 = a1 - steady_a, a2 - steady_a, a3 - steady_a
+        b2, b3, c3 = b2 - steady_b, b3 - steady_b, c3 - steady_c
+        bc = c * k.bc
+        bab, cbabc = b * k.ab, c * b * k.abc
+        # by one rate: a convolution gives minus the convolution with that rate once more
+        slopes = (
+            steady_a + k.ea * a1 - k.aa * d1,
+            steady_a + k.eb * a2 + bab * a1 - b * k.aab * d1,
+            steady_a + k.ec * a3 + bc * a2 + cbabc * a1 - b * c * k.aabc * d1,
+            steady_b + k.eb * b2 + (k.ab - b * k.abb) * d1 - k.bb * d2,
+            steady_b + k.ec * b3 + bc * b2 + c * (k.abc - b * k.abbc) * d1 - c * k.bbc * d2,
+            steady_c + k.ec * c3 + b * (k.abc - c * k.abcc) * d1 + (k.bc - c * k.bcc) * d2 - k.cc * d3,
+        )
+        return self._advance(anchor, at_s), slopes
