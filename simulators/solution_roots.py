@@ -48,7 +48,7 @@ def find_roots(forms: Forms, contents: Contents, water: Water) -> Roots:
         y, _ = _bracketed_start(forms, contents, water.ln_kw, 0.0)
         _newton_ideal(forms, contents, water.ln_kw, y)
         return Roots(y, _ionic_strength(forms, contents, y, np.zeros_like(y), water.ln_kw))
-    typical = float(np.median(contents.ion_z2)) * 0.5
+    typical = 0.5 * float(contents.ion_z2.sum()) / max(contents.ion_z2.size, 1)
     u = water.ln_a * davies_term(min(typical, LARGEST_IONIC_STRENGTH))
     y, ionic_strength = _bracketed_start(forms, contents, water.ln_kw, u)
     left = _newton_davies(forms, contents, water, y, ionic_strength)
