@@ -65,6 +65,11 @@ class ScpiDose:
         for _ in range(ATTEMPTS):
             try:
                 armed = self._talk.arm(self.number, self.steps, self.rate_ml_min, self._stop)
+            except DeviceRefusedError as refusal:
+                if isinstance(failure, DeviceRefusedError):
+                    raise
+                failure = refusal  # perhaps of what the line made of it: refused twice is refused
+                continue
             except (DeviceSilentError, DeviceGarbledError) as doubt:
                 failure = doubt
                 armed = self._talk.armed(self._stop)

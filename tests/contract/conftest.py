@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 import threading
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from types import SimpleNamespace
 from typing import Any
 
 import pytest
@@ -18,6 +20,7 @@ from drivers.scpi_pump import ScpiPump
 from simulators.devices import ProbeDevice, PumpDevice
 from simulators.port import VirtualPort, VirtualPorts
 
+_NAMES = itertools.count()
 PUMP_IDENTITY = Identity(maker="Cidery Workshop", model="Syringe Burette", serial="B-7", firmware="1.0")
 PROBE_IDENTITY = Identity(maker="Cidery Workshop", model="Glass Probe", serial="P-3", firmware="1.0")
 
@@ -130,8 +133,9 @@ def _build(route: Any, clock: Clock, *, latency_s: float = 0.0, settings: LinkSe
     mechanism = PlainMechanism()
     pump_device, probe_device = PumpDevice(mechanism, PUMP_IDENTITY), ProbeDevice(PlainSensor(), PROBE_IDENTITY)
     ports, stop = VirtualPorts(clock), threading.Event()
-    pump_port = ports.add("pump", pump_device, route, latency_s=latency_s)
-    probe_port = ports.add("probe", probe_device, route, latency_s=latency_s)
+    name = next(_NAMES)
+    pump_port = ports.add(f"pump {name}", pump_device, route, latency_s=latency_s)
+    probe_port = ports.add(f"probe {name}", probe_device, route, latency_s=latency_s)
     pump_traffic, probe_traffic = TrafficLog(), TrafficLog()
     pump_link = open_link(pump_port.url, settings, clock=clock, device="pump", traffic=pump_traffic)
     probe_link = open_link(probe_port.url, settings, clock=clock, device="probe", traffic=probe_traffic)
@@ -141,9 +145,51 @@ def _build(route: Any, clock: Clock, *, latency_s: float = 0.0, settings: LinkSe
     )  # fmt: skip
 
 
+class Fault:
+    """Spoils messages of one port: `hit` chooses by request, and `request` or `reply` says what becomes of it.
+
+    Each works on the first `times` messages chosen; the rest pass.
+    """
+
+    def __init__(
+        self,
+        port: VirtualPort,
+        hit: Callable[[bytes], bool],
+        *,
+        request: Callable[[bytes], bytes] | None = None,
+        reply: Callable[[bytes], bytes] | None = None,
+        times: int = 1,
+    ) -> None:
+        self.spoilt = 0
+        self._hit, self._request, self._reply, self._times = hit, request, reply, times
+        self._chosen = False
+        port.spoil_request, port.spoil_reply = self._on_request, self._on_reply
+
+    def _on_request(self, data: bytes) -> bytes:
+        self._chosen = self.spoilt < self._times and self._hit(data)
+        if self._chosen and self._request is not None:
+            self.spoilt += 1
+            return self._request(data)
+        return data
+
+    def _on_reply(self, data: bytes) -> bytes:
+        if self._chosen and self._reply is not None:
+            self.spoilt += 1
+            return self._reply(data)
+        return data
+
+
 @pytest.fixture
-def build() -> Iterator[Callable[..., WireBench]]:
+def spoil() -> type[Fault]:
+    """The fault to put on a port."""
+    return Fault
+
+
+@pytest.fixture
+def build(monkeypatch: pytest.MonkeyPatch) -> Iterator[Callable[..., WireBench]]:
     """Builds benches on a route and clock, and closes them all afterwards."""
+    # pyserial sleeps 0.3 s after it closed a socket
+    monkeypatch.setattr("serial.urlhandler.protocol_socket.time", SimpleNamespace(sleep=lambda seconds: None))
     built: list[WireBench] = []
 
     def builder(route: str, clock: Clock | None = None, **kwargs: Any) -> WireBench:

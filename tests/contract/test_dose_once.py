@@ -1,0 +1,69 @@
+"""A dose happens exactly once and never wrong: one fault at every message, at every byte, in every way."""
+
+from __future__ import annotations
+
+import pytest
+
+from drivers.errors import DeviceError, DoseUnknownError
+
+VOLUME_ML, STEPS = 0.25, 500
+
+
+def changed(place, byte):
+    return lambda data: data[:place] + bytes([byte]) + data[place + 1 :]
+
+
+def without(place):
+    return lambda data: data[:place] + data[place + 1 :]
+
+
+def cut(place):
+    return lambda data: data[:place]
+
+
+WAYS = {
+    "a digit for another": lambda data, place: changed(place, ord("7") if data[place] != ord("7") else ord("3")),
+    "noise": lambda data, place: changed(place, 0xF7),
+    "an end mark": lambda data, place: changed(place, ord("\n")),
+    "a separator": lambda data, place: changed(place, ord(";")),
+    "one byte lost": lambda data, place: without(place),
+    "cut off": lambda data, place: cut(place),
+}
+
+
+def messages(build):
+    """The traffic of a dose without faults: (request, reply) from the arming on."""
+    bench = build("memory")
+    bench.pump.status()
+    _ = bench.pump.step_ml
+    before = len(bench.pump_traffic.entries)
+    bench.pump.dose(1, VOLUME_ML)
+    return [data for _, _, data in list(bench.pump_traffic.entries)[before:]]
+
+
+@pytest.mark.parametrize("way", WAYS)
+@pytest.mark.parametrize("end", ["request", "reply"])
+def test_one_fault_anywhere_never_doubles_or_falsifies_a_dose(build, spoil, end, way):
+    traffic = messages(build)[(0 if end == "request" else 1) :: 2]
+    assert len(traffic) >= 5  # arm, start, and some questions while it moves
+    unsettled: list[str] = []
+    for index, message in enumerate(traffic):
+        for place in range(len(message)):
+            bench = build("memory")
+            bench.pump.status()
+            _ = bench.pump.step_ml
+            seen = iter(range(1000))
+            spoil(bench.pump_port, lambda _, n=index, s=seen: next(s) == n, **{end: WAYS[way](message, place)})
+            try:
+                delivered = bench.pump.dose(1, VOLUME_ML)
+            except DeviceError as error:
+                bench.clock.wait(60.0)
+                truth_ml = bench.pushed() * 0.0005
+                assert error.lowest_ml - 1e-9 <= truth_ml <= error.highest_ml + 1e-9, (index, place, error)
+                assert not isinstance(error, DoseUnknownError), (index, place, error)  # the pump never restarted
+                unsettled.append(f"message {index}, byte {place} of {message!r}: {error}")
+            else:
+                bench.clock.wait(60.0)
+                assert delivered.steps == bench.pushed() == STEPS, (index, place)
+            bench.close()
+    assert unsettled == []  # one fault alone is settled
