@@ -114,6 +114,7 @@ class ScpiDose:
         self._may_have_begun = True
         failure: DeviceError | None = None
         for _ in range(ATTEMPTS):
+            refused_before = isinstance(failure, DeviceRefusedError)
             try:
                 last = self._talk.start(self.number, self._stop)
             except (DeviceSilentError, DeviceGarbledError, DeviceRefusedError) as doubt:
@@ -122,8 +123,8 @@ class ScpiDose:
                 last = self._ask(self._stop)
             if last.state != "armed":
                 return last
-            if isinstance(failure, DeviceRefusedError):
-                break
+            if refused_before and isinstance(failure, DeviceRefusedError):
+                break  # refused twice is refused
         self._may_have_begun = False
         raise failure or self._garbled(f"dose {self.number} is armed but does not start")
 
