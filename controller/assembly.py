@@ -1,0 +1,289 @@
+"""The composition root: a bench file becomes devices, clock and operator. Only here do virtual devices come in.
+
+A driver cannot know what is at the other end of its line; real and simulated benches differ in what is opened here and
+in nothing else.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import os
+import sys
+import time
+from collections.abc import Iterator, Mapping
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Literal, TextIO
+
+from configs.benchfile import SIMULATED_PORT, BenchSettings, PortSettings
+from configs.errors import HalfdropError
+from configs.method import MethodSettings
+from configs.simulation import ContainedSettings, SampleBottleSettings, SimulationSettings
+from controller.execution import Devices
+from controller.planning import PumpAccount
+from controller.stopping import StopSwitch
+from controller.titration.plan import Sample
+from drivers.clock import Clock, ManualClock, ScaledClock, SystemClock
+from drivers.errors import DeviceError
+from drivers.identity import Identity
+from drivers.link import Link, LinkSettings, TrafficLog, open_link
+from drivers.operator import AnswersOperator, ConsoleOperator, Operator
+from drivers.scpi_probe import ScpiProbe
+from drivers.scpi_pump import ScpiPump
+from simulators.bench import VirtualBench, virtual_bench
+from simulators.chemist import VirtualChemist
+from simulators.contents import sample_bottle, sample_in_vessel, titrant_in_syringe
+from simulators.devices import ProbeDevice, PumpDevice
+from simulators.port import VirtualPorts
+
+Route = Literal["memory", "pty", "tcp"]
+FAST = "fast"
+_MAKER = "halfdrop simulated bench"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class OpenBench:
+    """A bench with its ports open.
+
+    `world` is the truth behind simulated ports, None on a real bench; `traffic` holds the last messages of each line.
+    """
+
+    clock: Clock
+    devices: Devices
+    account: PumpAccount
+    probe_identity: str
+    stop: StopSwitch
+    traffic: Mapping[str, TrafficLog]
+    world: VirtualBench | None = None
+    seed: int | None = None
+    pump_device: PumpDevice | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Opening:
+    """How a bench is opened.
+
+    Args:
+        seed: of a simulated bench; None: that of its file.
+        time_scale: simulated bench only: "fast" (or None), or how many times real time.
+        route: simulated bench only: what carries the bytes; None: as its file says.
+        answers: answers to questions by key; None: a person is asked at the terminal.
+        answers_from: where the answers stand, for messages.
+        place: the lab folder; simulated devices of different labs are different devices.
+        talk: where questions and messages of an operator without a terminal go.
+    """
+
+    seed: int | None = None
+    time_scale: str | None = None
+    route: Route | None = None
+    answers: Mapping[str, str] | None = None
+    answers_from: str = "answers"
+    place: Path | None = None
+    talk: TextIO | None = None
+
+
+def is_simulated(bench: BenchSettings) -> bool:
+    """Tell whether the bench's devices are simulated.
+
+    Raises:
+        HalfdropError: one of them is and the other is not.
+    """
+    simulated = [port.port == SIMULATED_PORT for port in (bench.pump, bench.probe)]
+    if simulated[0] != simulated[1]:
+        raise HalfdropError(
+            "one of pump.port and probe.port is simulated, the other is not",
+            where=f"bench {bench.name}",
+            remedy="Set both to simulated, or both to real ports",
+        )
+    return simulated[0]
+
+
+def local_route() -> Route:
+    """Return what carries bytes here as a serial line does: a pseudo-terminal, or TCP where there is none."""
+    return "pty" if os.name == "posix" else "tcp"
+
+
+@contextmanager
+def open_bench(
+    bench: BenchSettings, method: MethodSettings, sample: Sample, *, opening: Opening, stop: StopSwitch
+) -> Iterator[OpenBench]:
+    """Open the ports of a bench, ask the devices who they are, and close everything afterwards; nothing moves.
+
+    Raises:
+        DeviceError: a port cannot be opened, or a device does not answer.
+        HalfdropError: settings that do not fit together.
+    """
+    with ExitStack() as held:
+        opener = _Opener(bench=bench, opening=opening, stop=stop, held=held)
+        yield opener.simulated(method, sample) if is_simulated(bench) else opener.real()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Opener:
+    """Opens one bench; what it opened is closed by `held`."""
+
+    bench: BenchSettings
+    opening: Opening
+    stop: StopSwitch
+    held: ExitStack
+
+    def simulated(self, method: MethodSettings, sample: Sample) -> OpenBench:
+        simulation, opening = self.bench.simulation, self.opening
+        assert simulation is not None  # the bench file was checked
+        clock = clock_of(opening.time_scale)
+        seed = simulation.seed if opening.seed is None else opening.seed
+        world = simulated_world(self.bench, simulation, method, sample, seed=seed, start_s=clock.now_s())
+        pump_device, probe_device = simulated_devices(self.bench, world, place=opening.place)
+        ports = self.held.enter_context(VirtualPorts(clock))
+        route = opening.route or simulation.link
+        name = f"{os.getpid()}-{id(ports):x}"  # ports in memory share one process
+        urls = tuple(
+            ports.add(f"{role}-{name}", device, route).url
+            for role, device in (("pump", pump_device), ("probe", probe_device))
+        )
+        chemist = VirtualChemist(world, clock.now_s, questions=method.questions, answers=opening.answers)
+        opened = self._connected((urls[0], urls[1]), clock, chemist)
+        return replace(opened, world=world, seed=seed, pump_device=pump_device)
+
+    def real(self) -> OpenBench:
+        opening, bench = self.opening, self.bench
+        for option, given in (("--seed", opening.seed), ("--time-scale", opening.time_scale)):
+            if given is not None:
+                raise HalfdropError(
+                    f"{option} is for simulated benches, this one is real",
+                    where=f"bench {bench.name}",
+                    remedy=f"Leave {option} out",
+                )
+        operator: Operator
+        if opening.answers is not None:
+            operator = AnswersOperator(opening.answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
+        else:
+            operator = ConsoleOperator()
+        return self._connected((bench.pump.port, bench.probe.port), SystemClock(), operator)
+
+    def _connected(self, urls: tuple[str, str], clock: Clock, operator: Operator) -> OpenBench:
+        bench, event = self.bench, self.stop.event
+        traffic = {"pump": TrafficLog(), "probe": TrafficLog()}
+        pump_link = self._link(urls[0], bench.pump, clock, "pump", traffic)
+        probe_link = self._link(urls[1], bench.probe, clock, "probe", traffic)
+        pump = ScpiPump(pump_link, clock, event, rate_ml_min=bench.pump.rate_ml_min)
+        probe = ScpiProbe(probe_link, clock, event)
+        pump_identity, probe_identity, status = pump.identify(), probe.identify(), pump.status()
+        if abs(pump.step_ml - bench.pump.step_ml) > 1e-9 or abs(pump.syringe_ml - bench.pump.syringe_ml) > 1e-6:
+            raise DeviceError(
+                f"its step is {pump.step_ml:g} mL and its syringe {pump.syringe_ml:g} mL; the bench file says "
+                f"{bench.pump.step_ml:g} and {bench.pump.syringe_ml:g} mL",
+                where=f"pump on {urls[0]}",
+                remedy="Correct step_ml and syringe_ml in the bench file",
+            )
+        return OpenBench(
+            clock=clock,
+            devices=Devices(pump=pump, probe=probe, operator=operator),
+            account=PumpAccount(
+                identity=pump_identity.key,
+                start_count=status.start_count,
+                last_dose_number=status.last_dose_number,
+                contents_ml=status.contents_ml,
+                reservoir_ml=bench.pump.reservoir_ml if status.reservoir_ml is None else status.reservoir_ml,
+            ),
+            probe_identity=probe_identity.key,
+            stop=self.stop,
+            traffic=traffic,
+        )
+
+    def _link(self, url: str, port: PortSettings, clock: Clock, device: str, traffic: Mapping[str, TrafficLog]) -> Link:
+        link = open_link(url, _link_settings(port), clock=clock, device=device, traffic=traffic[device])
+        self.held.callback(link.close)
+        return link
+
+
+def _link_settings(port: PortSettings) -> LinkSettings:
+    return LinkSettings(baud_rate=port.baud_rate, dtr=port.dtr, rts=port.rts, reply_deadline_s=port.reply_time_out_s)
+
+
+def clock_of(time_scale: str | None) -> Clock:
+    """Return the clock of a simulated bench.
+
+    Args:
+        time_scale: None or "fast": as fast as the computer can; else how many times real time.
+
+    Raises:
+        HalfdropError: neither "fast" nor a number above 0.
+    """
+    if time_scale is None or time_scale == FAST:
+        return ManualClock(start_utc_s=time.time())
+    try:
+        scale = float(time_scale)
+        if not 0 < scale <= 1000:
+            raise ValueError
+    except ValueError:
+        raise HalfdropError(
+            f"got {time_scale!r}, allowed: {FAST}, or a number above 0, at most 1000",
+            where="--time-scale",
+            remedy="Use 1 for real time, 20 to watch",
+        ) from None
+    return SystemClock() if scale == 1 else ScaledClock(scale)
+
+
+def simulated_world(
+    bench: BenchSettings,
+    simulation: SimulationSettings,
+    method: MethodSettings,
+    sample: Sample,
+    *,
+    seed: int,
+    start_s: float,
+) -> VirtualBench:
+    """Return the world around the sample that the method names (or that it expects)."""
+    bottle = sample_bottle(simulation, method.simulated_sample) or _expected_bottle(method)
+    return virtual_bench(
+        bench,
+        sample=sample_in_vessel(
+            bottle,
+            volume_ml=sample.volume_ml,
+            mass_g=sample.mass_g,
+            initial_volume_ml=sample.initial_volume_ml,
+            temperature_c=simulation.temperature_c,
+        ),
+        titrant=titrant_in_syringe(simulation, method.titrant.substance, method.titrant.concentration_mol_l),
+        initial_volume_ml=sample.initial_volume_ml,
+        seed=seed,
+        start_s=start_s,
+        stirred=False,
+    )
+
+
+def _expected_bottle(method: MethodSettings) -> SampleBottleSettings:
+    analyte = method.analyte
+    by_mass = method.sample.taken_by == "mass"
+    if analyte.substance is None or (not by_mass and analyte.expected_concentration_mol_l is None):
+        raise HalfdropError(
+            "nothing says what the simulated beaker holds",
+            where=f"method {method.name}",
+            remedy="Set simulated_sample to a sample of the bench, or analyte with expected_concentration_mol_l",
+        )
+    content = ContainedSettings(
+        name=analyte.substance,
+        concentration_mol_l=None if by_mass else analyte.expected_concentration_mol_l,
+        mass_fraction=method.sample.purity_fraction if by_mass else None,
+    )
+    return SampleBottleSettings(substances=(content,))
+
+
+def simulated_devices(
+    bench: BenchSettings, world: VirtualBench, *, place: Path | None
+) -> tuple[PumpDevice, ProbeDevice]:
+    """Return the virtual pump and probe in front of a world."""
+    serial = hashlib.sha256(str(place or Path.cwd()).encode()).hexdigest()[:8]
+    pump = PumpDevice(
+        world.mechanism,
+        Identity(maker=_MAKER, model="syringe pump", serial=f"B-{serial}", firmware="1"),
+        refill=bench.pump.refill,
+        usual_rate_ml_min=bench.pump.rate_ml_min,
+        highest_rate_ml_min=bench.pump.highest_rate_ml_min,
+    )
+    probe = ProbeDevice(
+        world.sensor, Identity(maker=_MAKER, model="glass electrode", serial=f"P-{serial}", firmware="1")
+    )
+    return pump, probe

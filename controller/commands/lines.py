@@ -1,0 +1,75 @@
+"""A run as plain lines: what was decided and why, about how long it still takes, and how it ended."""
+
+from __future__ import annotations
+
+from typing import Any, TextIO
+
+from controller.commands.output import amount_text, volume_text
+from controller.progress import Progress
+from controller.record import printable
+from controller.titration.actions import Command, Dose, Failed, Refill, Refused, Report
+
+_TOLD = {"note", "warning", "end-point"}
+
+
+class Lines:
+    """Writes one line for every dose, end point, note, warning, question and trouble."""
+
+    def __init__(self, sink: TextIO) -> None:
+        self._sink = sink
+
+    def __call__(self, progress: Progress) -> None:
+        """Take in an entry of the record."""
+        text = _text_of(progress)
+        if text:
+            left = "" if progress.time_left_s is None else f", about {_clock_text(progress.time_left_s)} left"
+            self._sink.write(f"[{_clock_text(progress.at_s)}{left}] {printable(text)}\n")
+            self._sink.flush()
+
+
+def _text_of(progress: Progress) -> str:
+    match progress.item:
+        case Dose(reason=reason):
+            return reason
+        case Report(what=what, text=text) if what in _TOLD:
+            return f"warning: {text}" if what == "warning" else text
+        case Refill(reason=reason):
+            return f"refilling the syringe{f': {reason}' if reason else ''}"
+        case Refused(what=what):
+            return f"refused: {what}"
+        case Failed(device=device, what=what):
+            return f"{device} failed: {what}"
+        case Command(name=name):
+            return f"command: {name}"
+    return ""
+
+
+def _clock_text(seconds: float) -> str:
+    minutes, rest = divmod(round(seconds), 60)
+    hours, minutes = divmod(minutes, 60)
+    return f"{hours}:{minutes:02d}:{rest:02d}" if hours else f"{minutes}:{rest:02d}"
+
+
+def result_lines(result: dict[str, Any]) -> list[str]:
+    """Return how a run ended, for people."""
+    lines = [f"outcome: {result['outcome']}" + (f" ({result['reason']})" if result["reason"] else "")]
+    for number, point in enumerate(result["end_points"], start=1):
+        ph = "" if point.get("ph") is None else f", pH {point['ph']:.2f}"
+        volume = volume_text(point["volume_ml"], point["standard_uncertainty_ml"])
+        lines.append(f"end point {number}: {volume}{ph}, by {point['estimator']}")
+    if not result["end_points"]:
+        lines.append("no end point was found, so no amount is given")
+    lines += [
+        f"pKa about {half['pka']:.2f} from the half-equivalence at {half['volume_ml']:.3f} mL"
+        for half in result["half_equivalence"]
+        if half.get("pka") is not None
+    ]
+    if result.get("result"):
+        lines.append(f"amount: {amount_text(result['result'])}")
+    lines.append(
+        f"{result['doses']} doses, {result['titrant_ml']:.4f} mL of titrant, {_clock_text(result['duration_s'])} min:s"
+    )
+    lines += [f"warning: {warning}" for warning in result["warnings"]]
+    if result.get("run"):
+        lines.append(f"record: {result['run']}")
+    return [printable(line) for line in lines]

@@ -1,0 +1,112 @@
+"""halfdrop run: one titration from a method file to a result and a closed record."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from contextlib import ExitStack
+
+from configs.errors import HalfdropError
+from controller.amounts import amount_of_plan
+from controller.assembly import OpenBench, Opening, is_simulated, open_bench
+from controller.commands.lines import Lines, result_lines
+from controller.commands.output import print_json
+from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
+from controller.commands.signals import pulling
+from controller.journal import Journal
+from controller.labfolder import Lab
+from controller.lock import lock_device, lock_lab
+from controller.outcome import RunResult
+from controller.planning import SampleChoice, make_plan, plan_sample
+from controller.recordfile import new_record
+from controller.runner import run as carry_out
+from controller.stopping import StopSwitch
+from controller.titration.core import titrate
+from controller.unclosed import refuse_unclosed
+
+
+def run(given: argparse.Namespace) -> int:
+    """Titrate by a method; print progress as lines and the result as lines or JSON."""
+    picked = chosen(given, lab_needed=True)
+    assert picked.lab is not None
+    lab, simulated = picked.lab.writable(), is_simulated(picked.bench)
+    answers = answers_of(given)
+    unattended = given.headless or not sys.stdin.isatty()
+    if unattended and answers is None and not simulated:
+        raise HalfdropError(
+            "nobody is there to answer the questions before the first dose",
+            where="run",
+            remedy="Give the answers with --answers FILE, or start the run at a terminal without --headless",
+        )
+    result = titrate_once(
+        picked,
+        lab,
+        sample_choice(given),
+        opening=Opening(
+            seed=given.seed,
+            time_scale=given.time_scale,
+            answers=answers,
+            answers_from=given.answers or "answers",
+            place=lab.path,
+        ),
+        headless=unattended,
+        operator_name=given.operator,
+    )
+    tell(result, as_json=given.json)
+    return result.exit_status
+
+
+def titrate_once(
+    picked: Chosen,
+    lab: Lab,
+    choice: SampleChoice,
+    *,
+    opening: Opening,
+    headless: bool,
+    operator_name: str | None = None,
+) -> RunResult:
+    """Run one titration on a lab folder's bench; the record is closed when this returns or raises.
+
+    Raises:
+        HalfdropError: anything wrong before the first dose (nothing moved), or a record that cannot be written.
+    """
+    stop = StopSwitch()
+    sample = plan_sample(picked.method, choice)
+    with ExitStack() as held:
+        held.enter_context(pulling(stop, headless=headless))
+        held.enter_context(lock_lab(lab.path, {"command": "run"}))
+        bench = held.enter_context(open_bench(picked.bench, picked.method, sample, opening=opening, stop=stop))
+        for identity in (bench.account.identity, bench.probe_identity):
+            held.enter_context(lock_device(identity, {"lab": str(lab.path)}))
+        refuse_unclosed(lab.runs, bench.account.identity)
+        return _on_open_bench(picked, lab, choice, bench, operator_name)
+
+
+def _on_open_bench(
+    picked: Chosen, lab: Lab, choice: SampleChoice, bench: OpenBench, operator_name: str | None
+) -> RunResult:
+    plan = make_plan(
+        picked.method, picked.bench, choice, pump=bench.account, probe_identity=bench.probe_identity, seed=bench.seed
+    )
+    sink = new_record(lab.runs, utc_s=bench.clock.utc_s(), label=plan.method_name)
+    journal = Journal(sink, bench.clock, name=str(sink.path))
+    return carry_out(
+        plan,
+        titrate(plan),
+        bench.devices,
+        journal,
+        clock=bench.clock,
+        stop=bench.stop,
+        operator_name=operator_name,
+        hashes=picked.hashes,
+        on_progress=Lines(sys.stderr),
+        amount_of=amount_of_plan,
+    )
+
+
+def tell(result: RunResult, *, as_json: bool) -> None:
+    """Print how a run ended."""
+    if as_json:
+        print_json(result.result)
+    else:
+        print("\n".join(result_lines(result.result)))
