@@ -294,8 +294,8 @@ class Execution:
                 last = self._devices.pump.last_dose()
         except (DeviceError, StoppedError):
             return self._in_bounds(action, what, 0.0, action.volume_ml)
-        if last.number < action.number and self._stop.event.is_set():
-            self._guard.settle(action, 0.0)
+        if self._stop.event.is_set() and (last.number < action.number or (last.steps, last.state) == (0, "stopped")):
+            self._guard.settle(action, 0.0)  # stopped before it began
             return self.stopped()
         if last.start_count != self._plan.pump.start_count:
             return self._in_bounds(action, f"{what} The pump was switched off and on", 0.0, action.volume_ml)
@@ -311,7 +311,8 @@ class Execution:
         return self._dosed(action, last.volume_ml, last.steps, None, self._clock.now_s())
 
     def _note_stop(self, error: StoppedError) -> None:
-        if error.confirmed:
+        """Write down a halt that the driver saw to, or see to it."""
+        if error.confirmed and error.delivered is not None:
             self.stop_confirmed = True
             self._journal.event("pump-stop", why=self._stop.why(), confirmed=True, by="driver")
         else:

@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import os
 import re
-from collections.abc import Mapping
-from dataclasses import dataclass
 from pathlib import Path
 
 from configs.errors import HalfdropError
+
+TYPE_CHECKING = False  # typing itself would cost a good part of the time that a listing may take
+if TYPE_CHECKING:
+    from collections.abc import Mapping
 
 LAB_SCHEMA_VERSION = 1
 LAB_FILE = "lab.yaml"
@@ -25,7 +27,6 @@ class LabError(HalfdropError):
     """No lab folder, or not one that can be used so."""
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
 class Lab:
     """A lab folder and how it was found.
 
@@ -33,12 +34,10 @@ class Lab:
         path: the folder.
         found_by: "--lab", "HALFDROP_LAB" or "the nearest parent with lab.yaml", for people.
         schema_version: of its lab.yaml.
-        read_only: True where a newer program made it.
     """
 
-    path: Path
-    found_by: str
-    schema_version: int
+    def __init__(self, *, path: Path, found_by: str, schema_version: int) -> None:
+        self.path, self.found_by, self.schema_version = path, found_by, schema_version
 
     @property
     def read_only(self) -> bool:

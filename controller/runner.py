@@ -274,10 +274,16 @@ class _Run:
         if confirmed is False:
             result["warnings"].append(NOT_CONFIRMED)
             result["reason"] = reason = f"{reason}. {NOT_CONFIRMED}" if reason else NOT_CONFIRMED
+        # a record does not say where it lies: it may be moved, and two equal runs give equal bytes
+        kept = {key: value for key, value in result.items() if key != "run"}
         self.journal.close(
-            result["outcome"], reason=reason, stop_confirmed=confirmed, steps=self.execution.steps, result=result,
+            result["outcome"],
+            reason=reason,
+            stop_confirmed=confirmed,
+            steps=self.execution.steps,
+            result=kept,
             **details,
-        )  # fmt: skip
+        )
         return RunResult(
             outcome=result["outcome"],
             reason=reason,

@@ -112,7 +112,10 @@ def test_what_may_come_in_place_of_an_answer(kind: str) -> None:
             '{"observation": "reading", "at_s": 0, "potential_mv": NaN}', Read(), "potential_mv: got nan", id="NaN"
         ),
         pytest.param(
-            '{"observation": "waited", "at_s": 0}', Read(), "'waited' does not answer 'read', allowed: reading", id="other"
+            '{"observation": "waited", "at_s": 0}',
+            Read(),
+            "'waited' does not answer 'read', allowed: reading",
+            id="other",
         ),
         pytest.param(
             '{"observation": "dosed", "at_s": 0, "number": 2, "volume_ml": 0.1}', DOSE, "got 2, allowed: 1", id="number"

@@ -164,16 +164,18 @@ def test_a_plan_that_fits_is_let_through_without_a_warning(plan: RunPlan) -> Non
         pytest.param(
             {"pump": {"reservoir_ml": 1.5}}, ["syringe and reservoir hold 11.5 mL; fill up"], id="syringe plan"
         ),
-        pytest.param({"dosing": {"largest_ml": 2.0}}, ["the largest dose is 2; this bench allows up to 1 mL"], id="dose"),
+        pytest.param({"dosing": {"largest_ml": 2.0}}, ["largest dose is 2; this bench allows up to 1 mL"], id="dose"),
         pytest.param(
             {"dosing": {"largest_ml": 12.0}, "vessel": {"largest_dose_ml": 20.0}},
             ["up to 10 mL, the whole syringe"],
             id="dose beyond the syringe",
         ),
-        pytest.param({"pump": {"rate_ml_min": 11.0}}, ["the pump rate is 11; this bench allows up to 10 mL/min"], id="rate"),
-        pytest.param({"limits": {"run_time_s": 9000.0}}, ["run time limit is 9000; this bench allows up to 7200 s"], id="time"),
+        pytest.param({"pump": {"rate_ml_min": 11.0}}, ["pump rate is 11; this bench allows up to 10 mL"], id="rate"),
+        pytest.param(
+            {"limits": {"run_time_s": 9000.0}}, ["time limit is 9000; this bench allows up to 7200"], id="time"
+        ),
     ],
-)  # fmt: skip
+)
 def test_a_plan_that_cannot_fit_is_refused_with_numbers_and_remedy(
     make_plan: MakePlan, change: dict[str, dict[str, object]], texts: list[str]
 ) -> None:

@@ -31,7 +31,7 @@ def test_init_again_adds_what_is_missing_and_changes_nothing(tmp_path: Path) -> 
 
 def test_init_refuses_a_folder_with_other_things(tmp_path: Path) -> None:
     (tmp_path / "thesis.doc").write_text("mine")
-    with pytest.raises(LabError, match="it holds other things and no lab.yaml"):
+    with pytest.raises(LabError, match=r"it holds other things and no lab\.yaml"):
         init_lab(tmp_path)
     assert [path.name for path in tmp_path.iterdir()] == ["thesis.doc"]
     with pytest.raises(LabError, match="it is a file"):

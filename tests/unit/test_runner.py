@@ -110,7 +110,7 @@ def test_a_whole_run_is_carried_out_and_recorded(fake_bench: Any, plan: RunPlan)
     assert header["operator"] == "Ada"
     assert header["hashes"] == {"bench.yaml": "00"}
     assert {"program", "python", "numpy"} <= set(header["versions"])
-    assert closing(fake_bench)["result"] == ended.result
+    assert {**closing(fake_bench)["result"], "run": "runs/fake.jsonl"} == ended.result
     assert closing(fake_bench)["steps"] == fake_bench.pump.steps
 
 
