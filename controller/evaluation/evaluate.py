@@ -40,6 +40,8 @@ FEWEST_POINTS = 5
 _COARSE_SHARE = 0.005
 #: ... and when it is this many times larger than the line's
 _COARSE_RATIO = 3.0
+#: more points than this share (or number) off the fit: the fit is wrong, not the points
+_FEW_OUTLIERS, _MOST_OUTLIERS = 0.25, 5
 #: an inflection further from equivalence than this share is remarked upon
 _NOTABLE_BIAS = 0.001
 
@@ -72,6 +74,7 @@ def evaluate(
     jumps, cut = _clearest(jumps, end_points_expected)
     warnings = [*remarks, *cut]
     if not jumps:
+        warnings += _extrapolation(curve)
         return _nothing("no end point: the curve shows no jump that stands out from its noise", warnings, last)
     strong = _strong(curve, jumps)
     known = replace(curve, pka=()) if strong and curve.pka is None else curve
@@ -114,6 +117,20 @@ def choose(estimates: list[Estimate]) -> Estimate:
     if line is not None and coarse and shape.standard_uncertainty_ml > _COARSE_RATIO * line.standard_uncertainty_ml:
         return line
     return shape
+
+
+def _extrapolation(curve: Curve) -> list[str]:
+    """Say where a Gran line through a curve without a jump points: a hint, no end point."""
+    if curve.initial_volume_ml is None:
+        return []
+    before = float(curve.decades[0]) - (1.0 if curve.rising else -1.0)
+    line = gran_beyond(curve, end_point_ml=-1.0, signal=before)
+    if line is None or line.correlation < 0.999 or not 0.0 < line.estimate.volume_ml < line.first_ml:
+        return []
+    return [
+        f"a Gran line through the points from {line.first_ml:g} mL on points to {line.estimate.volume_ml:.4g} mL; that is "
+        "outside of the data that show it, so it is a hint and no end point"
+    ]
 
 
 def _nothing(reason: str, warnings: list[str], titrant_ml: float) -> Evaluation:
@@ -226,7 +243,7 @@ def _warnings(
     if curve.initial_volume_ml is None or curve.titrant_concentration_mol_l is None:
         out.append(
             "initial volume or titrant concentration is not given: the equivalence point rests on the curve's shape "
-            "alone, and a plain Gran line, the inverse model and the fit cannot run"
+            "alone; the inverse model and the charge-balance fit need both"
         )
     for i, (jump, found, chosen) in enumerate(zip(jumps, estimates, reported, strict=True), start=1):
         out += disagreements(chosen, found, number=i)
@@ -236,13 +253,22 @@ def _warnings(
             if e.estimator in {GRAN_BEYOND, GRAN_BEFORE} and e.remark not in (None, NOT_CORRECTED, OFF_LINE)
         ]
         out += _shape_warnings(i, jump, found, chosen)
-    if fit is not None and curve.ph is not None:
-        for index, off in fit.outliers[:5]:
-            out.append(
-                f"the point at {curve.volume_ml[index]:g} mL (pH {curve.ph[index]:.2f}) lies {off:+.2f} pH off the "
-                "charge balance of the others: a wrong reading or entry?"
-            )
-    return out
+    return out + _outliers(curve, fit)
+
+
+def _outliers(curve: Curve, fit: ModelFit | None) -> list[str]:
+    if fit is None or curve.ph is None or not fit.outliers:
+        return []
+    if len(fit.outliers) > _FEW_OUTLIERS * len(curve.volume_ml) or len(fit.outliers) > _MOST_OUTLIERS:
+        return [
+            f"the charge balance of the substance does not describe the curve ({len(fit.outliers)} of "
+            f"{len(curve.volume_ml)} points are off it): wrong substance, volume, concentration or pH scale"
+        ]
+    return [
+        f"the point at {curve.volume_ml[index]:g} mL (pH {curve.ph[index]:.2f}) lies {off:+.2f} pH off the charge "
+        "balance of the others: a wrong reading or entry?"
+        for index, off in fit.outliers
+    ]
 
 
 def _shape_warnings(number: int, jump: Inflection, found: list[Estimate], chosen: Estimate) -> list[str]:

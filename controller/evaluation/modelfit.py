@@ -73,7 +73,12 @@ def fit_charge_balance(curve: Curve, *, priors: Priors | None = None) -> ModelFi
     if any(x is None for x in known) or len(curve.volume_ml) < 4:
         return None
     with np.errstate(all="ignore"):
-        return _Balance.of(curve, priors or Priors()).run()
+        return _Balance.of(curve, priors or _priors_of(curve)).run()
+
+
+def _priors_of(curve: Curve) -> Priors:
+    """Thermodynamic constants may be 0.15 off as conditional ones (Davies at 0.02 to 0.1 mol/L)."""
+    return Priors() if curve.debye_huckel_a is not None else Priors(pka_sd=0.15)
 
 
 def _robust(residual: Array) -> Array:
