@@ -1,0 +1,155 @@
+"""halfdrop runs: list, show, verify, export and close records. Standard library only, so that a listing is quick."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from pathlib import Path
+
+from configs.errors import HalfdropError
+from controller.commands.output import amount_text, print_json, print_table, say
+from controller.labfolder import Lab, find_lab
+from controller.record import list_records, printable, read_record, summarise
+from controller.record import verify as verify_record
+
+TYPE_CHECKING = False
+if TYPE_CHECKING:
+    from typing import Any
+
+SUFFIX = ".jsonl"
+DONE, CHECK_FAILED = 0, 1
+
+
+def list_runs(given: argparse.Namespace) -> int:
+    """List all records of the lab folder, oldest first."""
+    lab = _lab(given)
+    found = [summarise(path) for path in list_records(lab.runs)]
+    if given.json:
+        print_json({"lab": str(lab.path), "runs": found})
+        return DONE
+    if not found:
+        print("no records yet")
+        return DONE
+    print_table(("run", "sample", "outcome", "end points", "amount"), [_row(one) for one in found])
+    return DONE
+
+
+def show(given: argparse.Namespace) -> int:
+    """Show one record: what was run, how it ended, its end points, amount and warnings."""
+    path = record_path(given.run, given)
+    record = read_record(path)
+    summary = summarise(path)
+    result: dict[str, Any] = (record.closing or {}).get("result") or {}
+    if given.json:
+        print_json({**summary, "header": record.header, "closing": record.closing, "torn_bytes": record.torn_bytes})
+        return DONE
+    from controller.commands.lines import result_lines
+
+    plan = record.header.get("plan") or {}
+    sample = plan.get("sample") or {}
+    lines = [
+        f"method: {plan.get('method_title')}",
+        f"sample: {sample.get('sample_id')}",
+        f"started: {summary.get('started_utc')} (UTC), operator: {record.header.get('operator') or 'not named'}",
+    ]
+    print("\n".join(printable(line) for line in lines))
+    if result:
+        print("\n".join(result_lines(result)))
+    elif record.closing is not None:
+        print(printable(f"outcome: {record.closing.get('outcome')} ({record.closing.get('reason')})"))
+    else:
+        print("outcome: open (still running, or broken off); 'halfdrop runs verify' tells more")
+    found = verify_record(path)
+    print(f"verified: {found.state} ({found.what})")
+    return DONE
+
+
+def verify(given: argparse.Namespace) -> int:
+    """Tell of each record whether it is intact, edited, torn or cut; exit status 1 where one is not intact."""
+    paths = [record_path(name, given) for name in given.run] if given.run else list_records(_lab(given).runs)
+    found = [(path, verify_record(path)) for path in paths]
+    if given.json:
+        print_json({"runs": [{"run": path.stem, "path": str(path), **one.to_json()} for path, one in found]})
+    else:
+        for path, one in found:
+            print(f"{path.stem}: {one.state}: {printable(one.what)}")
+        print("Intact means: as the program wrote it. Whoever rewrites every hash makes a new record.")
+    return DONE if all(one.state == "intact" for _, one in found) else CHECK_FAILED
+
+
+def export(given: argparse.Namespace) -> int:
+    """Write a record's points and readings as CSV with a data package, or everything as JSON."""
+    from controller.report.export import data_package, tables, whole
+
+    record = read_record(record_path(given.run, given))
+    if given.json:
+        print_json(whole(record))
+        return DONE
+    files = tables(record)
+    if given.to is None:
+        sys.stdout.write(files["points.csv"])
+        return DONE
+    import json
+
+    folder = Path(given.to)
+    package = json.dumps(data_package(record, files), indent=2, ensure_ascii=False) + "\n"
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        for name, text in {**files, "datapackage.json": package}.items():
+            (folder / name).write_text(text, encoding="utf-8", newline="")
+            print(f"wrote {folder / name}")
+    except OSError as error:
+        raise HalfdropError(
+            f"it cannot be written ({error.strerror})", where=str(folder), remedy="Name another folder with --to"
+        ) from error
+    return DONE
+
+
+def close(given: argparse.Namespace) -> int:
+    """End a record that was left open by a crash; nothing in it is changed."""
+    from controller.lock import lock_lab
+    from controller.unclosed import close_record
+    from drivers.clock import SystemClock
+
+    lab = _lab(given).writable()
+    path = record_path(given.run, given)
+    with lock_lab(lab.path, {"command": "runs close"}):
+        closing = close_record(path, clock=SystemClock(), operator_name=None, reason="closed by hand, not resumed")
+    print(f"{path.stem}: closed as {closing['outcome']}, {closing['lines']} lines; evaluate it with")
+    print(f"  halfdrop evaluate {path}")
+    return DONE
+
+
+def record_path(named: str, given: argparse.Namespace) -> Path:
+    """Return the record of this name or file.
+
+    Raises:
+        HalfdropError: there is none; the nearest names are in the text.
+    """
+    path = Path(named)
+    if path.suffix == SUFFIX and path.is_file():
+        return path
+    runs = _lab(given).runs
+    if path.name == named and (inside := runs / (path.stem + SUFFIX)).is_file():
+        return inside
+    from configs.nearest import did_you_mean
+
+    names = [one.stem for one in list_records(runs)]
+    raise HalfdropError(
+        f"no record {named!r}{did_you_mean(named, names)}", where=str(runs), remedy="See 'halfdrop runs list'"
+    )
+
+
+def _lab(given: argparse.Namespace) -> Lab:
+    lab = find_lab(given.lab)
+    say(lab.says())
+    return lab
+
+
+def _row(one: dict[str, Any]) -> tuple[str, ...]:
+    if not one["readable"]:
+        return one["run"], "", f"not readable: {one['reason']}", "", ""
+    volumes = ", ".join(f"{point['volume_ml']:.4f} mL" for point in one["end_points"])
+    outcome = one["outcome"] or "open"
+    amount = amount_text(one["result"]) if one["result"] else ""
+    return one["run"], printable(str(one["sample_id"])), outcome, volumes or "none", amount
