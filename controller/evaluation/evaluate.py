@@ -2,26 +2,21 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
-from controller.evaluation.agreement import disagreements
 from controller.evaluation.curve import Curve
 from controller.evaluation.estimate import (
     CHARGE_BALANCE,
-    GRAN_BEFORE,
     GRAN_BEYOND,
     INVERSE,
     SECOND_DERIVATIVE,
     Estimate,
 )
 from controller.evaluation.estimators import (
-    NOT_CORRECTED,
-    OFF_LINE,
     from_fit,
     from_gran,
     from_inverse,
@@ -32,6 +27,7 @@ from controller.evaluation.gran import gran_before, gran_beyond
 from controller.evaluation.inflection import SMALLEST_RISE, Inflection, find_inflections, inflection_at
 from controller.evaluation.modelfit import ModelFit, fit_charge_balance
 from controller.evaluation.pka import HalfEquivalence, half_equivalence
+from controller.evaluation.remarks import curve_remarks, extrapolation_remarks
 from controller.evaluation.result import EndPoint, Evaluation
 
 #: fewer points than this make no curve
@@ -40,10 +36,6 @@ FEWEST_POINTS = 5
 _COARSE_SHARE = 0.005
 #: ... and when it is this many times larger than the line's
 _COARSE_RATIO = 3.0
-#: more points than this share (or number) off the fit: the fit is wrong, not the points
-_FEW_OUTLIERS, _MOST_OUTLIERS = 0.25, 5
-#: an inflection further from equivalence than this share is remarked upon
-_NOTABLE_BIAS = 0.001
 
 
 def evaluate(
@@ -74,7 +66,7 @@ def evaluate(
     jumps, cut = _clearest(jumps, end_points_expected)
     warnings = [*remarks, *cut]
     if not jumps:
-        warnings += _extrapolation(curve)
+        warnings += extrapolation_remarks(curve)
         return _nothing("no end point: the curve shows no jump that stands out from its noise", warnings, last)
     strong = _strong(curve, jumps)
     known = replace(curve, pka=()) if strong and curve.pka is None else curve
@@ -82,7 +74,7 @@ def evaluate(
     estimates = _estimates(known, jumps, fit, strong=strong)
     reported = [choose(e) for e in estimates]
     halves = _halves(known, reported)
-    warnings += _warnings(known, jumps, estimates, reported, fit)
+    warnings += curve_remarks(known, jumps, estimates, reported, fit)
     warnings += [h.remark for h in halves if h.remark is not None]
     if end_points_expected is not None and len(jumps) < end_points_expected:
         warnings.append(f"{len(jumps)} of {end_points_expected} expected end points found")
@@ -117,20 +109,6 @@ def choose(estimates: list[Estimate]) -> Estimate:
     if line is not None and coarse and shape.standard_uncertainty_ml > _COARSE_RATIO * line.standard_uncertainty_ml:
         return line
     return shape
-
-
-def _extrapolation(curve: Curve) -> list[str]:
-    """Say where a Gran line through a curve without a jump points: a hint, no end point."""
-    if curve.initial_volume_ml is None:
-        return []
-    before = float(curve.decades[0]) - (1.0 if curve.rising else -1.0)
-    line = gran_beyond(curve, end_point_ml=-1.0, signal=before)
-    if line is None or line.correlation < 0.999 or not 0.0 < line.estimate.volume_ml < line.first_ml:
-        return []
-    return [
-        f"a Gran line through the points from {line.first_ml:g} mL on points to {line.estimate.volume_ml:.4g} mL; that is "
-        "outside of the data that show it, so it is a hint and no end point"
-    ]
 
 
 def _nothing(reason: str, warnings: list[str], titrant_ml: float) -> Evaluation:
@@ -230,66 +208,6 @@ def _step(curve: Curve, jumps: int, index: int) -> tuple[bool | None, int | None
         return False, None
     single = steps == 1 or jumps > 1 or None
     return single, curve.charge - lost
-
-
-def _warnings(
-    curve: Curve,
-    jumps: list[Inflection],
-    estimates: list[list[Estimate]],
-    reported: list[Estimate],
-    fit: ModelFit | None,
-) -> list[str]:
-    out = []
-    if curve.initial_volume_ml is None or curve.titrant_concentration_mol_l is None:
-        out.append(
-            "initial volume or titrant concentration is not given: the equivalence point rests on the curve's shape "
-            "alone; the inverse model and the charge-balance fit need both"
-        )
-    for i, (jump, found, chosen) in enumerate(zip(jumps, estimates, reported, strict=True), start=1):
-        out += disagreements(chosen, found, number=i)
-        out += [
-            f"end point {i}: {e.estimator}: {e.remark}"
-            for e in found
-            if e.estimator in {GRAN_BEYOND, GRAN_BEFORE} and e.remark not in (None, NOT_CORRECTED, OFF_LINE)
-        ]
-        out += _shape_warnings(i, jump, found, chosen)
-    return out + _outliers(curve, fit)
-
-
-def _outliers(curve: Curve, fit: ModelFit | None) -> list[str]:
-    if fit is None or curve.ph is None or not fit.outliers:
-        return []
-    if len(fit.outliers) > _FEW_OUTLIERS * len(curve.volume_ml) or len(fit.outliers) > _MOST_OUTLIERS:
-        return [
-            f"the charge balance of the substance does not describe the curve ({len(fit.outliers)} of "
-            f"{len(curve.volume_ml)} points are off it): wrong substance, volume, concentration or pH scale"
-        ]
-    return [
-        f"the point at {curve.volume_ml[index]:g} mL (pH {curve.ph[index]:.2f}) lies {off:+.2f} pH off the charge "
-        "balance of the others: a wrong reading or entry?"
-        for index, off in fit.outliers
-    ]
-
-
-def _shape_warnings(number: int, jump: Inflection, found: list[Estimate], chosen: Estimate) -> list[str]:
-    shape = next(e for e in found if e.estimator == SECOND_DERIVATIVE)
-    if chosen is shape:
-        share = shape.bias_ml / shape.volume_ml
-        if share <= _NOTABLE_BIAS:
-            return []
-        return [
-            f"end point {number} is an inflection; for a jump as flat as this (very weak, dilute or one of several) "
-            f"equivalence may lie {100.0 * share:.1f} % or more from it (in the uncertainty)"
-        ]
-    off = (jump.volume_ml - chosen.volume_ml) / chosen.volume_ml
-    if abs(off) <= _NOTABLE_BIAS or abs(jump.volume_ml - chosen.volume_ml) < 2.0 * math.hypot(
-        jump.standard_uncertainty_ml, chosen.standard_uncertainty_ml
-    ):
-        return []
-    return [
-        f"end point {number}: the inflection lies {100.0 * off:+.2f} % from equivalence; reported is the "
-        f"{chosen.estimator}"
-    ]
 
 
 def _details(fit: ModelFit | None, jumps: list[Inflection]) -> dict[str, Any]:
