@@ -52,7 +52,7 @@ class InverseSetting:
     ladder: ProtonLadder
     signal_sd_mv: float = 1.0
     volume_sd_ml: float = 0.0007
-    constant_relative_sd: float = 0.3
+    constant_relative_sd: float = 0.2
     acid_relative_sd: float = 0.1
     base_relative_sd: float = 0.3
     amount_relative_sd: float = 0.03

@@ -10,8 +10,7 @@ from statistics import median
 from typing import Any
 
 from controller.titration.actions import Decisions, Finish, Report
-from controller.titration.composition import Composition
-from controller.titration.dosing import DosingPolicy, EqualVolumes, ModelGuided, PlannedDose, SlopeAdaptive, local_slope
+from controller.titration.dosing import DosingPolicy, EqualVolumes, PlannedDose, local_slope
 from controller.titration.endpoint import EndPointWatch, FoundEndPoint
 from controller.titration.exchange import EndOfRunError, Exchange, Talk
 from controller.titration.forecast import Forecast
@@ -20,9 +19,9 @@ from controller.titration.noise import READINGS, Noise, measure_noise
 from controller.titration.outcome import run_result
 from controller.titration.plan import RunPlan
 from controller.titration.points import PhScale, Point
-from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule, StabilityLimit
-from controller.titration.settling_extrapolated import Extrapolated
-from controller.titration.settling_lag import LagCorrected
+from controller.titration.policies import dosing_policy, settling_rule
+from controller.titration.precision import near_ml, pump_precision_ml
+from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule
 
 MOST_BAD_READINGS = 60
 MOST_UNSETTLED_POINTS = 10
@@ -88,8 +87,8 @@ class _Run:
         self.scale = PhScale(self.plan, temperature_c)
         self.forecast = Forecast(self.plan, self.scale)
         self.watch = EndPointWatch(self.plan, noise.sd_mv)
-        self._settler = self._settling_rule()
-        self._doser = self._dosing_policy()
+        self._settler = settling_rule(self.plan, self.world.log, self.scale)
+        self._doser = dosing_policy(self.plan, self.scale)
         yield from self.world.say(
             Report(what="note", text=f"noise {noise.sd_mv:.2f} mV from {READINGS} readings at {temperature_c:.1f} °C")
         )
@@ -119,20 +118,6 @@ class _Run:
         if bad + 1 >= MOST_BAD_READINGS:
             raise EndOfRunError("failed", f"the probe gave {bad + 1} bad readings in a row: {status}")
         return bad + 1
-
-    def _settling_rule(self) -> SettlingRule:
-        rule, response = self.plan.settling, self.plan.probe.response
-        if rule.rule == "lag-corrected" and response is not None:
-            return LagCorrected(rule, Composition(response, self.world.log), self.scale)
-        if rule.rule in {"lag-corrected", "extrapolated"}:
-            return Extrapolated(rule)
-        return StabilityLimit(rule) if rule.rule == "stability-limit" else FixedWait(rule)
-
-    def _dosing_policy(self) -> DosingPolicy:
-        dosing = self.plan.dosing
-        if dosing.policy == "model-guided":
-            return ModelGuided(dosing, self.scale)
-        return SlopeAdaptive(dosing) if dosing.policy == "slope-adaptive" else EqualVolumes(dosing)
 
     # --- dosing loop ---
 
@@ -207,6 +192,9 @@ class _Run:
             local_slope_mv_ml=round(slope, 3),
             step_mv=round(planned.expected_mv or 0.0, 3),
             fit=sound,
+            end_point=len(self.watch.found) + 1,
+            precision_ml=pump_precision_ml(self.plan),
+            near_ml=near_ml(self.plan, sound),
         )
 
     def _take(self, accepted: Accepted, text: str) -> Talk[None]:

@@ -12,12 +12,12 @@ from dataclasses import dataclass
 from typing import Protocol
 
 from controller.evaluation.inverse import InverseFit
-from controller.titration.plan import Dosing
+from controller.titration.plan import Dosing, RunPlan
 from controller.titration.points import PhScale, Point
+from controller.titration.precision import near_ml
 
 FAR_SHARE = 0.4
 FAR_SDS = 3.5
-NEAR_ML = 0.150
 CURVATURE_FACTOR = 4.0
 CURVATURE_GROWTH = 3.0
 
@@ -82,14 +82,15 @@ class ModelGuided:
     Without a sound model it falls back to the local slope.
     """
 
-    def __init__(self, dosing: Dosing, scale: PhScale) -> None:
-        self._dosing = dosing
+    def __init__(self, plan: RunPlan, scale: PhScale) -> None:
+        self._plan = plan
+        self._dosing = plan.dosing
         self._scale = scale
-        self._fallback = SlopeAdaptive(dosing)
+        self._fallback = SlopeAdaptive(plan.dosing)
 
     def next_dose(self, points: Sequence[Point], sound: InverseFit | None, delivered_ml: float) -> PlannedDose:
         """See DosingPolicy."""
-        if sound is None or len(points) < 3:
+        if sound is None:
             return self._fallback.next_dose(points, None, delivered_ml)
         planned = self._by_model(points, sound, delivered_ml)
         self._fallback.took(planned.volume_ml)
@@ -100,11 +101,12 @@ class ModelGuided:
         veq, sd = round(fit.equivalence_ml, 6), round(fit.standard_uncertainty_ml, 6)
         remaining = veq - delivered_ml
         far = min(FAR_SHARE * remaining, remaining - FAR_SDS * sd, d.largest_ml)
-        if remaining > NEAR_ML and far > d.smallest_ml:
+        near = near_ml(self._plan, fit)
+        if remaining > near and far > d.smallest_ml:
             volume, why = far, "a share of what remains"
         else:
             volume, why = self._near(points, fit, delivered_ml, veq, sd), f"a step of {d.model_step_mv:.0f} mV"
-        if abs(remaining) < NEAR_ML:
+        if abs(remaining) < near:
             volume = min(volume, CURVATURE_FACTOR * self._curvature_limit(points))
         volume = min(max(volume, d.smallest_ml), d.largest_ml)
         return PlannedDose(

@@ -10,14 +10,14 @@ from dataclasses import dataclass
 from controller.evaluation.inverse import InverseFit
 from controller.titration.plan import RunPlan
 from controller.titration.points import Point
+from controller.titration.precision import near_ml, pump_precision_ml
 
 EXCESS_OVER_LEFT = 3.0
 EXCESS_SDS = 5.0
-LARGEST_SD_ML = 0.020
+LARGEST_SD_PRECISIONS = 20.0  # of the pump
 POINTS_BEYOND = 2
 PEAK_ERRORS = 5.0
 PEAK_OVER_BASE = 3.0
-MODEL_LATE_ML = 0.150
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -39,6 +39,8 @@ class EndPointWatch:
         self._smallest_rise_mv = plan.end_points.smallest_rise_mv
         self._noise_mv = noise_mv
         self._dose_sd_ml = plan.pump.dose_sd_ml
+        self._precision_ml = pump_precision_ml(plan)
+        self._plan = plan
         self._smallest_dose_ml = plan.dosing.smallest_ml
         self.found: list[FoundEndPoint] = []
 
@@ -50,7 +52,7 @@ class EndPointWatch:
             return None
         end_point = self._by_model(section, sound) if sound is not None else None
         if end_point is None:
-            late = sound is not None and section[-1].volume_ml < sound.equivalence_ml + MODEL_LATE_ML
+            late = sound is not None and section[-1].volume_ml < sound.equivalence_ml + near_ml(self._plan, sound)
             end_point = None if late else self._by_peak(section)
         if end_point is not None:
             self.found.append(end_point)
@@ -63,7 +65,7 @@ class EndPointWatch:
         c_ex = Cb (V - Veq)/(V0 + V) > 3 [protonated analyte + free acid], since both are divided by (V0 + V)/Cb.
         """
         veq, sd = round(fit.equivalence_ml, 6), round(fit.standard_uncertainty_ml, 6)
-        if sd >= LARGEST_SD_ML or section[0].volume_ml >= veq:
+        if sd >= LARGEST_SD_PRECISIONS * self._precision_ml or section[0].volume_ml >= veq:
             return None
         for point in section[-POINTS_BEYOND:]:
             if point.ph is None:

@@ -11,9 +11,11 @@ from controller.evaluation.inverse import InverseFit, InverseSetting, fit_invers
 from controller.evaluation.protons import STRONG_LADDER, UNKNOWN_LADDER, ProtonLadder, conditional_pka, ladders
 from controller.titration.plan import RunPlan
 from controller.titration.points import PhScale, Point
+from controller.titration.precision import pump_precision_ml
 
 JUMP_SDS = 8.0
-JUMP_ML = 0.020
+JUMP_PRECISIONS = 20.0  # of the pump
+_POINT_PRECISIONS = 0.7
 _USUAL_STRENGTH_MOL_L = 0.01
 
 
@@ -30,8 +32,9 @@ class Forecast:
             acid_titrant=plan.titrant.acid,
             slope_mv=scale.slope_mv,
             ladder=self._ladder(0),
-            volume_sd_ml=max(0.0007, plan.pump.dose_sd_ml),
+            volume_sd_ml=max(_POINT_PRECISIONS * pump_precision_ml(plan), plan.pump.dose_sd_ml),
         )
+        self._jump_ml = JUMP_PRECISIONS * pump_precision_ml(plan)
         self._possible = scale.known and plan.sample.initial_volume_ml > 0.0
         self._found_ml: list[float] = []
         self._last: tuple[float, float] | None = None
@@ -51,7 +54,7 @@ class Forecast:
     def update(self, points: Sequence[Point]) -> None:
         """Fit again with the latest points."""
         self.fit = self.sound = None
-        if not self._possible or len(points) < 3:
+        if not self._possible or len(points) < 2:
             return
         setting = self._setting
         if not setting.ladder.known and self._found_ml:
@@ -67,7 +70,7 @@ class Forecast:
             return
         veq, sd_veq = round(fit.equivalence_ml, 6), round(fit.standard_uncertainty_ml, 6)
         before, self._last = self._last, (veq, sd_veq)
-        self.jumped = before is not None and abs(veq - before[0]) > JUMP_SDS * before[1] + JUMP_ML
+        self.jumped = before is not None and abs(veq - before[0]) > JUMP_SDS * before[1] + self._jump_ml
         behind = bool(self._found_ml) and veq <= self._found_ml[-1] + 3.0 * sd_veq
         if not self.jumped and not behind:
             self.sound = fit

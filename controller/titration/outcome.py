@@ -126,10 +126,10 @@ def _unconfirmed(run: RunState, evaluation: Evaluation) -> list[str]:
 def _halves(evaluation: Evaluation | None) -> list[dict[str, Any]]:
     if evaluation is None:
         return []
-    out = []
-    for half in evaluation.to_json()["half_equivalence"]:
-        out.append({k: round(v, DIGITS) if isinstance(v, float) else v for k, v in half.items()})
-    return out
+    return [
+        {key: round(value, DIGITS) if isinstance(value, float) else value for key, value in half.items()}
+        for half in evaluation.to_json()["half_equivalence"]
+    ]
 
 
 def _rounded(estimators: dict[str, list[float]]) -> dict[str, list[float]]:

@@ -25,6 +25,9 @@ class SettlingContext:
         local_slope_mv_ml: |dE/dV| at the last points; 0 where not known.
         step_mv: expected change of potential by this dose; 0 where not known.
         fit: the sound model, else None.
+        end_point: number of the end point that comes next, from 1.
+        precision_ml: the pump's precision.
+        near_ml: distance from equivalence within which the last stretch begins.
     """
 
     at_s: float
@@ -34,6 +37,9 @@ class SettlingContext:
     local_slope_mv_ml: float
     step_mv: float
     fit: InverseFit | None
+    end_point: int
+    precision_ml: float
+    near_ml: float
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

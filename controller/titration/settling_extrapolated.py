@@ -20,13 +20,12 @@ SKIP_S = 1.0  # after the dose: dead time and mixing are no exponential
 TAIL_FROM = 0.35  # share of the wait whose readings are left out: the start is no single exponential
 MOST_IN_FIT = 30
 SMALLEST_SD_MV = 0.5
-SD_VOLUME_ML = 0.0005
+SD_OF_PRECISION = 0.5  # of the pump's precision, as a potential by the local slope
 SD_PER_STEP = 0.03
 SHORTEST_TAUS = 1.5
 LARGEST_CHI_SQUARE = 4.0
 LONGEST_S = 90.0
 HOLD_S = 60.0
-HOLD_WITHIN_ML = 0.150
 DRIFT_AFTER_S = 20.0
 OUTLIER_WINDOW = 15  # a burst of 6 bad readings stays a minority
 _MOST_READINGS = 60
@@ -40,7 +39,7 @@ class Extrapolated:
         self._longest_s = max(settling.longest_s, LONGEST_S)
         self._ln_tau = math.log(FIRST_TAU_S)
         self._seen = 0
-        self._held = False
+        self._held_for = 0  # the end point before which it was held last
         self._hold = False
         self._context: SettlingContext | None = None
         self._readings: list[tuple[float, float]] = []
@@ -51,8 +50,8 @@ class Extrapolated:
         self._context = context
         self._readings = []
         fit = context.fit
-        near = fit is not None and abs(fit.equivalence_ml - context.delivered_ml) < HOLD_WITHIN_ML
-        self._hold = near and not self._held
+        near = fit is not None and abs(fit.equivalence_ml - context.delivered_ml) < context.near_ml
+        self._hold = near and self._held_for != context.end_point
 
     def add(self, at_s: float, potential_mv: float) -> Accepted | None:
         """See SettlingRule."""
@@ -68,8 +67,8 @@ class Extrapolated:
         shortest_s = self._settling.shortest_s + SHORTEST_TAUS * math.exp(self._ln_tau)
         if waited_s < shortest_s or len(self._readings) < 5:
             return None
-        self._held = self._held or self._hold
         if self._hold:  # after the hold the last readings speak for themselves
+            self._held_for = context.end_point
             self._readings = self._readings[-20:]
         return self._judge(context, waited_s, late)
 
@@ -77,7 +76,11 @@ class Extrapolated:
         begun_s = max(SKIP_S, TAIL_FROM * waited_s)
         tail = [r for r in self._readings[-MOST_IN_FIT:] if r[0] >= begun_s]
         good = without_outliers(tail, context.noise_mv)
-        limit = max(SMALLEST_SD_MV, SD_VOLUME_ML * context.local_slope_mv_ml, SD_PER_STEP * context.step_mv)
+        limit = max(
+            SMALLEST_SD_MV,
+            SD_OF_PRECISION * context.precision_ml * context.local_slope_mv_ml,
+            SD_PER_STEP * context.step_mv,
+        )
         if len(good) >= 5:
             level, sd, chi_square, tau_s = self._averaged(good, context.noise_mv)
             self._last_tau_s = tau_s

@@ -15,13 +15,13 @@ from controller.titration.points import PhScale
 from controller.titration.settling import Accepted, SettlingContext
 
 LEFT_SHARE = 0.03  # of the lag left counts as not known
-SMALLEST_SD_ML = 0.0007
+SD_OF_PRECISION = 0.4  # of the pump's precision: a finer point would not help
 SD_PER_DISTANCE = 0.02
-SMALLEST_LAG_ML = 0.009
+LAG_OF_PRECISION = 9.0
 LAG_PER_DISTANCE = 0.5
 LARGEST_MOVE_MV = 12.0
 NO_MODEL_SHARE = 0.03
-NO_MODEL_ML = 0.004
+NO_MODEL_PRECISIONS = 4.0
 SUSPICION_SDS = 5.0
 SUSPICION_HOLD_S = 15.0
 
@@ -77,16 +77,17 @@ class LagCorrected:
     def _limits(self, context: SettlingContext, volume_ml: float) -> tuple[float, float]:
         """Largest standard deviation and largest lag left, mL."""
         fit = context.fit
+        smallest_sd_ml, smallest_lag_ml = (
+            SD_OF_PRECISION * context.precision_ml,
+            LAG_OF_PRECISION * context.precision_ml,
+        )
         if fit is not None:
             distance = abs(volume_ml - fit.equivalence_ml)
-            return (
-                max(SMALLEST_SD_ML, SD_PER_DISTANCE * distance),
-                max(SMALLEST_LAG_ML, LAG_PER_DISTANCE * distance),
-            )
-        limit = NO_MODEL_SHARE * volume_ml + NO_MODEL_ML
+            return max(smallest_sd_ml, SD_PER_DISTANCE * distance), max(smallest_lag_ml, LAG_PER_DISTANCE * distance)
+        limit = NO_MODEL_SHARE * volume_ml + NO_MODEL_PRECISIONS * context.precision_ml
         if context.points >= 8 and context.local_slope_mv_ml > 0.0:
-            limit = min(limit, max(SMALLEST_SD_ML, 1.0 / context.local_slope_mv_ml))
-        return limit, max(SMALLEST_LAG_ML, 10.0 * limit)
+            limit = min(limit, max(smallest_sd_ml, 1.0 / context.local_slope_mv_ml))
+        return limit, max(smallest_lag_ml, 10.0 * limit)
 
     def _suspicious(self, context: SettlingContext, volume_ml: float, potential_mv: float, sd_ml: float) -> bool:
         """True where the reading is far from what the model allows (a bubble, a knock): look again a little later."""
