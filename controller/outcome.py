@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import traceback
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from pathlib import PurePath
 from typing import Any
 
 from configs.errors import HalfdropError
@@ -17,6 +19,7 @@ from drivers.pump import Pump
 AmountOf = Callable[[RunPlan, dict[str, Any]], dict[str, Any] | None]
 NOT_CONFIRMED = "NOT CONFIRMED STOPPED: the pump did not confirm that it stands. Switch it off by hand and look at it"
 DONE, NOT_TRUSTED, STOPPED_FOR_SAFETY = 0, 1, 3
+INNERMOST_FRAMES = 6
 
 
 class RunFailedError(HalfdropError):
@@ -107,6 +110,12 @@ def account_of(pump: Pump, before_ml: float, execution: Execution) -> tuple[dict
     if abs(told_ml - counted_ml) <= 0.5 * pump.step_ml:
         return sums, None
     return sums, f"the pump delivered {told_ml:.6g} mL by its own account, the record holds {counted_ml:.6g} mL"
+
+
+def came_from(error: BaseException) -> list[str]:
+    """Return the innermost places that the error passed, for whoever has to find it."""
+    frames = traceback.extract_tb(error.__traceback__)[-INNERMOST_FRAMES:]
+    return [f"{PurePath(frame.filename).name}:{frame.lineno} {frame.name}" for frame in frames]
 
 
 def exit_status(result: Mapping[str, Any], *, stop: StopSwitch, stop_confirmed: bool | None, safety: bool) -> int:

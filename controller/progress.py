@@ -5,16 +5,18 @@ from __future__ import annotations
 import math
 from collections import deque
 from dataclasses import dataclass, field
+from itertools import pairwise
+from statistics import median
 
 from controller.titration.actions import Action, Dosed, Observation, Report
 from controller.titration.plan import RunPlan
 
-#: points whose duration is averaged
-_RECENT_POINTS = 6
+#: points whose durations the estimate rests on
+_RECENT_POINTS = 3
 #: share of the remaining volume that a dose far from the end point takes
 _FAR_SHARE = 0.4
 #: doses of the fine approach and behind the end point, common for a jump
-_NEAR_DOSES = 12
+_NEAR_DOSES = 10
 _NEAR_ML = 0.3
 
 
@@ -59,7 +61,8 @@ class Pace:
         """Return about how long the run still takes, s; never beyond the method's run time."""
         if self._forecast_ml is None or len(self._point_at_s) < 2:
             return None
-        each_s = (self._point_at_s[-1] - self._point_at_s[0]) / (len(self._point_at_s) - 1)
+        ends_s = list(self._point_at_s)
+        each_s = median(later - earlier for earlier, later in pairwise(ends_s))
         ahead_ml = self._forecast_ml - delivered_ml
         far = math.log(ahead_ml / _NEAR_ML) / -math.log(1.0 - _FAR_SHARE) if ahead_ml > _NEAR_ML else 0.0
         near = _NEAR_DOSES * min(1.0, 0.5 + 0.5 * max(0.0, ahead_ml) / _NEAR_ML) - self._doses_behind

@@ -24,6 +24,7 @@ from controller.outcome import (
     RunResult,
     account_of,
     add_amount,
+    came_from,
     exit_status,
     whole_result,
 )
@@ -314,6 +315,7 @@ class _Run:
                 reason=reason if confirmed else f"{reason}. {NOT_CONFIRMED}",
                 stop_confirmed=confirmed,
                 steps=self.execution.steps,
+                came_from=came_from(error),
             )
         except RecordError as second:
             reason = f"{reason}; its closing line could not be written either: {second}"

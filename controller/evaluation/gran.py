@@ -64,7 +64,8 @@ def activity_coefficient(curve: Curve, titrant_ml: float) -> float:
     a, v0, c = curve.debye_huckel_a, curve.initial_volume_ml, curve.titrant_concentration_mol_l
     if a is None or v0 is None or c is None:
         return 1.0
-    return math.pow(10.0, -a * davies_term(c * titrant_ml / (v0 + titrant_ml)))
+    salt_ml = max(0.0, titrant_ml)  # below 0: no end point is known
+    return math.pow(10.0, -a * davies_term(c * salt_ml / (v0 + salt_ml)))
 
 
 def hydrogen_and_hydroxide(curve: Curve, titrant_ml: float) -> tuple[Array, Array]:

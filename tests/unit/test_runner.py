@@ -413,6 +413,7 @@ def test_any_exception_stops_the_pump_closes_the_record_and_is_told(
     assert fake_bench.log.count("pump stop") == 1
     assert closing(fake_bench)["outcome"] == "failed"
     assert "ZeroDivisionError" in closing(fake_bench)["reason"]
+    assert any("test_runner.py" in place for place in closing(fake_bench)["came_from"])
 
 
 def test_an_error_with_a_pump_that_does_not_stop_says_so(fake_bench: Any, plan: RunPlan) -> None:
