@@ -164,7 +164,7 @@ class _Balance:
         ionic = (charges @ self.forms(theta, ph) * abs(theta[0]) + strong) * v0 / total
         ionic = ionic + float(curve.titrant_concentration_mol_l or 0.0) * curve.volume_ml / total
         ionic = 0.5 * (ionic + np.power(10.0, -ph) + np.power(10.0, ph - curve.pkw))
-        self.unit = np.array([-a * davies_term(float(i)) for i in ionic])
+        self.unit = np.array([-a * davies_term(max(float(i), 0.0)) for i in ionic])
 
     def residuals(self, theta: Array, weight: Array) -> Array:
         """Weighted misfit in V, followed by the misfit to what is known beforehand."""
