@@ -96,12 +96,11 @@ class Exchange:
         expected = b"%d" % number
         while True:
             frame = link.receive(deadline_s, stop)
-            if not frame:
-                continue
             try:
                 units = parse_reply(frame)
                 if units[0] != [expected]:
-                    if _is_earlier(units[0], number):
+                    late = not frame or _is_earlier(units[0], number)
+                    if late and link.line_s() <= deadline_s:
                         continue
                     raise ScpiError(-102, "the reply is to another question")
                 return read(units[1:])

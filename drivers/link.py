@@ -194,16 +194,19 @@ class Link:
             StoppedError: `stop` was set while waiting.
         """
         while not self._frames:
+            stopped = stop is not None and stop.is_set()
             if self._manual is not None:
                 self._manual.settle()
                 if self._frames:
                     break
-                if self._manual.now_s() < deadline_s and not (stop is not None and stop.is_set()):
+                if self._manual.now_s() < deadline_s and not stopped:
                     self._manual.step(deadline_s)
                     continue
-            elif self._take_some() or (time.monotonic() < deadline_s and not (stop is not None and stop.is_set())):
-                continue
-            if stop is not None and stop.is_set() and self.line_s() < deadline_s:
+            else:
+                took = self._take_some()
+                if self._frames or (time.monotonic() < deadline_s and (took or not stopped)):
+                    continue
+            if stopped and self.line_s() < deadline_s:
                 raise StoppedError("stopped while waiting for an answer", where=self.where, remedy="Start again")
             raise self._nothing()
         frame = self._frames.popleft()

@@ -15,7 +15,7 @@ from collections.abc import Iterable, Iterator
 from functools import lru_cache
 from typing import NamedTuple
 
-#: what SCPI-1999 (volume 1, 7.2.1) gives for "not a number" and infinity
+#: what SCPI-1999 (volume 1, 7.2.1.4 and 7.2.1.5) gives for "not a number" and infinity
 NOT_A_NUMBER, INFINITE = 9.91e37, 9.9e37
 END = b"\n"
 QUEUE_LENGTH = 10
@@ -225,11 +225,14 @@ def read_number(token: bytes) -> float:
     """Read a decimal number (IEEE 488.2 NRf).
 
     Raises:
-        ScpiError: -104 not a number, -138 a number with a unit.
+        ScpiError: -104 not a number, -138 a number with a unit, -222 beyond what can be held.
     """
     if not _NUMBER.fullmatch(token):
         raise ScpiError(-138 if _NUMBER_WITH_SUFFIX.fullmatch(token) else -104, token[:40].decode("ascii", "replace"))
-    return float(token)
+    value = float(token)
+    if math.isinf(value):
+        raise ScpiError(-222, token[:40].decode("ascii"))
+    return value
 
 
 def read_known_number(token: bytes) -> float | None:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import random
+
 import pytest
 
 from drivers.errors import DeviceError
@@ -68,3 +70,39 @@ def test_one_fault_anywhere_never_doubles_or_falsifies_a_dose(build, spoil, end,
                 assert delivered.steps == bench.pushed() == STEPS, (index, place)
             bench.close()
     assert unsettled == []  # one fault alone is settled
+
+
+def unreliable(rng, share):
+    """A line on which each message is lost, cut or changed in one byte with probability `share`."""
+
+    def spoilt(data):
+        if rng.random() >= share or not data:
+            return data
+        place = rng.randrange(len(data))
+        return rng.choice([b"", cut(place)(data), without(place)(data), changed(place, rng.randrange(256))(data)])
+
+    return spoilt
+
+
+@pytest.mark.parametrize("seed", range(60))
+def test_a_bad_line_never_makes_the_account_wrong(build, seed):
+    rng = random.Random(seed)
+    bench = build("memory")
+    bench.pump.status()
+    _ = bench.pump.step_ml
+    bench.pump_port.spoil_request = bench.pump_port.spoil_reply = unreliable(rng, 0.12)
+    done = 0
+    for number in range(1, 13):
+        before, steps = bench.pushed(), rng.randrange(1, 600)
+        try:
+            delivered = bench.pump.dose(number, steps * 0.0005)
+        except DeviceError as error:
+            bounds_ml = (error.lowest_ml, error.highest_ml)
+        else:
+            bounds_ml = (delivered.volume_ml, delivered.volume_ml)
+            done += 1
+            assert delivered.steps == steps
+        bench.clock.wait(30.0)
+        truth_ml = (bench.pushed() - before) * 0.0005
+        assert bounds_ml[0] - 1e-9 <= truth_ml <= bounds_ml[1] + 1e-9
+    assert done >= 6  # it is the account that counts, but most doses come through
