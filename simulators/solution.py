@@ -17,7 +17,7 @@ from .constants import LN10
 from .solution_balance import Array, Contents, Forms, forms_of
 from .solution_live import LiveEquilibrium, LiveSolution
 from .solution_mixture import Medium, Mixture, SolutionError, StrongIon, WeakComponent, refuse
-from .solution_roots import Roots, Water, find_roots
+from .solution_roots import Roots, find_roots
 
 __all__ = [
     "Blend",
@@ -60,7 +60,7 @@ class Blend:
 
     forms: Forms
     contents: Contents
-    water: Water
+    ln_a: float | None
     total_ml: Array
     sample_share: Array
     titrant_share: Array
@@ -92,7 +92,7 @@ def titration_states(
 ) -> SolutionStates:
     """As `titration_curve`, with the ionic strength and whether the activity formula holds there."""
     mixed = blend(sample, titrant, sample_volume_ml, volumes_ml, medium)
-    roots = find_roots(mixed.forms, mixed.contents, mixed.water)
+    roots = find_roots(mixed.forms, mixed.contents, mixed.ln_a)
     return states_of(roots, medium)
 
 
@@ -116,31 +116,25 @@ def blend(
     """Mix sample and titrant at each volume; raises SolutionError as `titration_curve`."""
     volumes = _checked_volumes(sample_volume_ml, volumes_ml)
     total = sample_volume_ml + volumes
-    shares = np.stack((sample_volume_ml / total, volumes / total))
+    shares = np.array((sample_volume_ml / total, volumes / total))
     weak = (*sample.weak, *titrant.weak)
-    per_share = np.zeros((3, 2))
+    per_share = np.zeros((2 + len(weak), 2))
     for column, mixture in enumerate((sample, titrant)):
         for ion in mixture.ions:
-            per_share[0 if ion.charge > 0 else 1, column] += abs(ion.charge) * ion.concentration_mol_l
-            per_share[2, column] += ion.charge**2 * ion.concentration_mol_l
-    concentrations = np.zeros((len(weak), 2))
+            per_share[0, column] += ion.charge * ion.concentration_mol_l
+            per_share[1, column] += ion.charge**2 * ion.concentration_mol_l
     for index, component in enumerate(weak):
-        concentrations[index, 0 if index < len(sample.weak) else 1] = component.concentration_mol_l
-    mixed = np.concatenate((per_share, concentrations)) @ shares
+        per_share[2 + index, 0 if index < len(sample.weak) else 1] = component.concentration_mol_l
+    mixed = per_share @ shares
+    a = medium.debye_huckel_a
     return Blend(
-        forms_of(tuple((component.pka, component.charge) for component in weak)),
-        Contents(mixed[3:], mixed[0], mixed[1], mixed[2]),
-        water_of(medium),
+        forms_of(tuple((component.pka, component.charge) for component in weak), -LN10 * medium.pkw),
+        Contents(mixed[2:], mixed[0], mixed[1]),
+        None if a is None else LN10 * a,
         total,
         shares[0],
         shares[1],
     )
-
-
-def water_of(medium: Medium) -> Water:
-    """The medium in the solver's units."""
-    a = medium.debye_huckel_a
-    return Water(-LN10 * medium.pkw, None if a is None else LN10 * a)
 
 
 def _checked_volumes(sample_volume_ml: float, volumes_ml: Sequence[float] | Array) -> Array:

@@ -2,8 +2,8 @@
 
 Natural logarithms inside: y = -ln a(H+) and u = ln(10) A f(I), so that a species of charge z has ln g = -z^2 u.
 A component with charge z0 when fully protonated has forms j = 0 ... n of charge z0 - j and relative weight
-exp(j y - ln(10) (pKa1 + ... + pKaj) + z^2 u). Arrays are (component, point); moments are taken over the forms of a
-component.
+exp(j y - ln(10) (pKa1 + ... + pKaj) + z^2 u). Over its forms dz/dy = -var(z), dz/du = cov(z, z^2),
+d(z^2)/dy = -cov(z, z^2) and d(z^2)/du = var(z^2), which is all that Newton needs. Arrays are (component, point).
 """
 
 from __future__ import annotations
@@ -17,165 +17,131 @@ import numpy.typing as npt
 from .constants import LN10
 
 Array = npt.NDArray[np.float64]
+Choice = npt.NDArray[np.bool_] | npt.NDArray[np.intp]
 #: a weak component without its concentration: pKa values and charge of the fully protonated form
 Acid = tuple[tuple[float, ...], int]
 
 
 @dataclass(frozen=True, slots=True)
 class Forms:
-    """All forms of all components stacked: columns (form, 1), and the matrix that sums moments per component."""
+    """All forms of all components stacked, then H+ and OH-.
+
+    `exponents` (form, 3) times (y, u, 1) gives the logarithms of the weights; `moments` (6 x component, form) sums
+    1, z, z^3, z^2, z^2, z^4 over the forms of each component, `charge_moments` 1, z, z^2.
+    """
 
     count: int
-    steps: Array
+    exponents: Array
     charge: Array
-    charge_squared: Array
-    log_beta: Array
     first_form: tuple[int, ...]
+    moments: Array
     charge_moments: Array
-    all_moments: Array
-
-    def weights(self, y: Array, u: Array | None) -> Array:
-        """Relative weights (form, point)."""
-        exponents = self.steps * y
-        exponents -= self.log_beta
-        if u is not None:
-            exponents += self.charge_squared * u
-        return np.exp(exponents, out=exponents)
 
 
 @lru_cache(maxsize=128)
-def forms_of(acids: tuple[Acid, ...]) -> Forms:
-    """The stacked forms of these components."""
-    steps: list[int] = []
-    charge: list[int] = []
-    log_beta: list[float] = []
-    owner: list[int] = []
+def forms_of(acids: tuple[Acid, ...], ln_kw: float) -> Forms:
+    """The stacked forms of these components in water of this ion product."""
+    rows: list[tuple[float, float, float]] = []
+    charge: list[float] = []
     first_form: list[int] = []
-    for index, (pka, top_charge) in enumerate(acids):
-        first_form.append(len(steps))
+    for pka, top_charge in acids:
+        first_form.append(len(rows))
         for j in range(len(pka) + 1):
-            steps.append(j)
-            charge.append(top_charge - j)
-            log_beta.append(LN10 * sum(pka[:j]))
-            owner.append(index)
-    member = np.zeros((len(acids), len(steps)))
-    member[owner, range(len(steps))] = 1.0
-    z = np.array(charge, dtype=np.float64)
-    positive, negative = np.maximum(z, 0.0), np.maximum(-z, 0.0)
-    rows = (np.ones_like(z), positive, negative, positive**2, negative**2, positive**3, negative**3, z**4)
-    moments = np.concatenate([member * row for row in rows]).reshape(8 * len(acids), len(steps))
+            z = float(top_charge - j)
+            charge.append(z)
+            rows.append((float(j), z * z, -LN10 * sum(pka[:j])))
+    member = np.zeros((len(acids), len(rows)))
+    for index, first in enumerate(first_form):
+        member[index, first : first + len(acids[index][0]) + 1] = 1.0
+    z_row = np.array(charge)
+    rows += [(-1.0, 1.0, 0.0), (1.0, 1.0, ln_kw)]
+
+    def stacked(*powers: int) -> Array:
+        return np.concatenate([member * z_row**power for power in powers])
+
     return Forms(
-        count=len(acids),
-        steps=np.array(steps, dtype=np.float64)[:, None],
-        charge=z[:, None],
-        charge_squared=(z * z)[:, None],
-        log_beta=np.array(log_beta)[:, None],
-        first_form=tuple(first_form),
-        charge_moments=np.ascontiguousarray(moments[: 5 * len(acids)]),
-        all_moments=moments,
+        len(acids), np.array(rows), z_row[:, None], tuple(first_form), stacked(0, 1, 3, 2, 2, 4), stacked(0, 1, 2)
     )
 
 
 @dataclass(frozen=True, slots=True)
 class Contents:
-    """Total concentrations (component, point) and strong ions summed per point: positive, negative, z^2 c (mol/L)."""
+    """Total concentrations (component, point); per point the sums of z c and z^2 c over strong ions (mol/L)."""
 
     weak: Array
-    positive: Array
-    negative: Array
+    ion_charge: Array
     ion_z2: Array
 
-    def at(self, chosen: npt.NDArray[np.bool_] | npt.NDArray[np.intp]) -> Contents:
+    def at(self, chosen: Choice) -> Contents:
         """The same for chosen points."""
-        return Contents(self.weak[:, chosen], self.positive[chosen], self.negative[chosen], self.ion_z2[chosen])
+        return Contents(self.weak[:, chosen], self.ion_charge[chosen], self.ion_z2[chosen])
 
 
 @dataclass(frozen=True, slots=True)
-class ChargeSums:
-    """Positive and negative charge (mol/L) and their derivatives by y, per point."""
+class Sums:
+    """Per point, mol/L: net charge Q, twice the ionic strength 2I, and their derivatives.
 
-    positive: Array
-    negative: Array
-    positive_y: Array
-    negative_y: Array
+    `capacity` = -dQ/dy; `cross` = dQ/du = -d(2I)/dy; `widening` = d(2I)/du.
+    """
 
-
-@dataclass(frozen=True, slots=True)
-class AllSums:
-    """Charges and ionic strength, with derivatives by y and u, per point; `hydroxide` in mol/L."""
-
-    positive: Array
-    negative: Array
-    positive_y: Array
-    negative_y: Array
-    positive_u: Array
-    negative_u: Array
-    ionic_strength: Array
-    ionic_strength_y: Array
-    ionic_strength_u: Array
+    charge: Array
+    cross: Array
+    twice_strength: Array
+    capacity: Array
+    widening: Array
     hydroxide: Array
 
 
-def charge_sums(forms: Forms, contents: Contents, y: Array, u: Array | None, ln_kw: float) -> ChargeSums:
-    """The charges at y, with u fixed (None: no activity correction)."""
-    hydrogen, hydroxide = _water(y, u, ln_kw)
+def coordinates(points: int) -> Array:
+    """Room for y, u and 1 of each point (3, point); y and u are 0."""
+    place = np.zeros((3, points))
+    place[2] = 1.0
+    return place
+
+
+def all_sums(forms: Forms, contents: Contents, place: Array) -> Sums:
+    """Every sum at `place` (y, u, 1)."""
+    weights = np.exp(forms.exponents @ place)
+    hydrogen, hydroxide = weights[-2], weights[-1]
+    difference, water = hydrogen - hydroxide, hydrogen + hydroxide
     if not forms.count:
-        return ChargeSums(hydrogen + contents.positive, hydroxide + contents.negative, -hydrogen, hydroxide)
-    sums = (forms.charge_moments @ forms.weights(y, u)).reshape(5, forms.count, -1)
-    sums[1:] /= sums[0]
-    plus, minus, plus2, minus2 = sums[1], sums[2], sums[3], sums[4]
-    mean = plus - minus
-    plus2 -= mean * plus
-    minus2 += mean * minus
-    totals = np.einsum("bkm,km->bm", sums[1:], contents.weak)
-    return ChargeSums(
-        hydrogen + contents.positive + totals[0],
-        hydroxide + contents.negative + totals[1],
-        -hydrogen - totals[2],
-        hydroxide + totals[3],
-    )
+        return Sums(difference + contents.ion_charge, difference, water + contents.ion_z2, water, water, hydroxide)
+    moments = (forms.moments @ weights[:-2]).reshape(6, forms.count, place.shape[1])
+    moments[1:] /= moments[0]
+    mean, square = moments[1], moments[3]
+    moments[2] -= mean * square
+    moments[4] -= mean * mean
+    moments[5] -= square * square
+    totals = np.einsum("bkm,km->bm", moments[1:], contents.weak)
+    totals[:2] += difference
+    totals[2:] += water
+    totals[0] += contents.ion_charge
+    totals[2] += contents.ion_z2
+    return Sums(totals[0], totals[1], totals[2], totals[3], totals[4], hydroxide)
 
 
-def all_sums(forms: Forms, contents: Contents, y: Array, u: Array, ln_kw: float) -> AllSums:
-    """Charges, ionic strength and every first derivative at (y, u)."""
-    hydrogen, hydroxide = _water(y, u, ln_kw)
-    totals = _weak_totals(forms, contents.weak, y, u)
-    water = hydrogen + hydroxide
-    return AllSums(
-        positive=hydrogen + contents.positive + totals[0],
-        negative=hydroxide + contents.negative + totals[1],
-        positive_y=-hydrogen - totals[2],
-        negative_y=hydroxide + totals[3],
-        positive_u=hydrogen + totals[4],
-        negative_u=hydroxide + totals[5],
-        ionic_strength=0.5 * (water + contents.ion_z2 + totals[6]),
-        ionic_strength_y=0.5 * (hydroxide - hydrogen - totals[7]),
-        ionic_strength_u=0.5 * (water + totals[8]),
-        hydroxide=hydroxide,
-    )
+def charge_sums(forms: Forms, contents: Contents, place: Array) -> tuple[Array, Array]:
+    """Net charge and -dQ/dy alone."""
+    weights = np.exp(forms.exponents @ place)
+    hydrogen, hydroxide = weights[-2], weights[-1]
+    charge = hydrogen - hydroxide
+    charge += contents.ion_charge
+    capacity = hydrogen + hydroxide
+    if forms.count:
+        moments = (forms.charge_moments @ weights[:-2]).reshape(3, forms.count, place.shape[1])
+        moments[1:] /= moments[0]
+        moments[2] -= moments[1] * moments[1]
+        totals = np.einsum("bkm,km->bm", moments[1:], contents.weak)
+        charge += totals[0]
+        capacity += totals[1]
+    return charge, capacity
 
 
-def _water(y: Array, u: Array | None, ln_kw: float) -> tuple[Array, Array]:
-    if u is None:
-        return np.exp(-y), np.exp(y + ln_kw)
-    return np.exp(u - y), np.exp(y + u + ln_kw)
-
-
-def _weak_totals(forms: Forms, weak: Array, y: Array, u: Array) -> Array:
-    """Sums over components (9, point): plus, minus, -dplus/dy, dminus/dy, dplus/du, dminus/du, z2, -dz2/dy, dz2/du."""
-    if not forms.count:
-        return np.zeros((9, y.size))
-    sums = (forms.all_moments @ forms.weights(y, u)).reshape(8, forms.count, -1)
-    sums[1:] /= sums[0]
-    plus, minus, plus2, minus2, plus3, minus3, z4 = sums[1:]
-    mean, square = plus - minus, plus2 + minus2
-    terms = np.empty((9, *weak.shape))
-    terms[0], terms[1] = plus, minus
-    np.subtract(plus2, mean * plus, out=terms[2])
-    np.add(minus2, mean * minus, out=terms[3])
-    np.subtract(plus3, square * plus, out=terms[4])
-    np.subtract(minus3, square * minus, out=terms[5])
-    terms[6] = square
-    np.subtract(plus3 - minus3, mean * square, out=terms[7])
-    np.subtract(z4, square * square, out=terms[8])
-    return np.asarray(np.einsum("bkm,km->bm", terms, weak))
+def grid_tables(forms: Forms, grid_y: Array, u: float) -> tuple[Array, Array, Array, Array]:
+    """On a grid of y at one u: mean charge and mean z^2 (component, grid), [H+] - [OH-] and [H+] + [OH-] (grid)."""
+    place = coordinates(grid_y.size)
+    place[0], place[1] = grid_y, u
+    weights = np.exp(forms.exponents @ place)
+    moments = (forms.charge_moments @ weights[:-2]).reshape(3, forms.count, place.shape[1])
+    moments[1:] /= moments[0]
+    return moments[1], moments[2], weights[-2] - weights[-1], weights[-2] + weights[-1]

@@ -16,11 +16,9 @@ from .constants import LN10, carbonic_pka_at
 from .solution_balance import Acid, Contents, forms_of
 from .solution_mixture import Medium, Mixture, checked_concentration, refuse
 from .solution_moments import NONE, Moments, moments_of
-from .solution_roots import LARGEST_IONIC_STRENGTH, Water, find_roots
+from .solution_roots import LARGEST_IONIC_STRENGTH, LAST_STEP, find_roots
 
 ROUNDS = range(12)
-#: Newton is quadratic: after a step this small what is left is about 1e-11
-LAST_STEP = 3e-6
 LARGEST_STEP = 2.0
 
 
@@ -81,13 +79,9 @@ class LiveEquilibrium:
     def _cold(self, weak: Sequence[float], ion_charge: float, ion_z2: float) -> float:
         for value in (*weak, abs(ion_charge), ion_z2):
             checked_concentration(value, "live solution")
-        contents = Contents(
-            np.array(weak, dtype=np.float64).reshape(len(self._acids), 1),
-            np.array([max(ion_charge, 0.0)]),
-            np.array([max(-ion_charge, 0.0)]),
-            np.array([ion_z2]),
-        )
-        roots = find_roots(forms_of(self._acids), contents, Water(self._ln_kw, self._ln_a))
+        weak_column = np.array(weak, dtype=np.float64).reshape(len(self._acids), 1)
+        contents = Contents(weak_column, np.array([ion_charge]), np.array([ion_z2]))
+        roots = find_roots(forms_of(self._acids, self._ln_kw), contents, self._ln_a)
         self._y = y = float(roots.y[0])
         strength = u = u_slope = 0.0
         if self._ln_a is not None:

@@ -1,29 +1,35 @@
 """Roots of the charge balance for many points at once.
 
-The function ln(positive charge) - ln(negative charge) falls monotonically in pH and is nearly straight. A grid of
-0.25 pH brackets every point with one matrix product; bracketed Newton does the rest. With activity the unknowns are
-pH and ionic strength together; what has not converged is found by bisection at fixed ionic strength.
+The net charge falls monotonically in pH. A grid of 0.25 pH brackets every point with one matrix product; Newton from
+inside the bracket does the rest in about three rounds, with activity in pH and ionic strength together. What has not
+converged is found by bisection at fixed ionic strength.
 """
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 
-from .activity import davies_term, davies_terms
+from .activity import davies_term
 from .constants import LN10
-from .solution_balance import AllSums, Array, Contents, Forms, all_sums, charge_sums
+from .solution_balance import Array, Contents, Forms, all_sums, charge_sums, coordinates, grid_tables
 
-LOWEST_PH, HIGHEST_PH, GRID_STEP_PH = -8.0, 22.0, 0.25
-GRID_Y = LN10 * np.arange(LOWEST_PH, HIGHEST_PH + GRID_STEP_PH / 2, GRID_STEP_PH)
+GRID_Y = LN10 * np.arange(-3.0, 17.01, 0.25)
+#: bounds of the bisection: further than any mixture goes
+LOWEST_Y, HIGHEST_Y = -8.0 * LN10, 22.0 * LN10
 #: far beyond any meaning of the formula; keeps it finite
 LARGEST_IONIC_STRENGTH = 20.0
-#: Newton is quadratic: after a step this small what is left is below 1e-13
-LAST_STEP = 1e-7
+#: Newton is quadratic (half the square of a step is left): after a step this small below 1e-11
+LAST_STEP = 3e-6
+#: a step of 1 pH at most
+LARGEST_STEP = LN10
 NEWTON_ROUNDS = 12
 BISECTIONS = 60
+#: from here on points that have converged are left out of further rounds
+SPARSE_FROM_POINTS = 256
 
 
 @dataclass(frozen=True, slots=True)
@@ -34,143 +40,133 @@ class Roots:
     ionic_strength: Array
 
 
-@dataclass(frozen=True, slots=True)
-class Water:
-    """ln Kw, and ln(10) A (None: no activity correction)."""
-
-    ln_kw: float
-    ln_a: float | None
-
-
-def find_roots(forms: Forms, contents: Contents, water: Water) -> Roots:
-    """Solve every point; always returns a finite root."""
-    if water.ln_a is None:
-        y, _ = _bracketed_start(forms, contents, water.ln_kw, 0.0)
-        _newton_ideal(forms, contents, water.ln_kw, y)
-        return Roots(y, _ionic_strength(forms, contents, y, np.zeros_like(y), water.ln_kw))
-    typical = 0.5 * float(contents.ion_z2.sum()) / max(contents.ion_z2.size, 1)
-    u = water.ln_a * davies_term(min(typical, LARGEST_IONIC_STRENGTH))
-    y, ionic_strength = _bracketed_start(forms, contents, water.ln_kw, u)
-    left = _newton_davies(forms, contents, water, y, ionic_strength)
+def find_roots(forms: Forms, contents: Contents, ln_a: float | None) -> Roots:
+    """Solve every point; `ln_a` is ln(10) A, None: no activity correction. Always returns a finite root."""
+    points = contents.ion_z2.size
+    if not points:
+        return Roots(np.zeros(0), np.zeros(0))
+    if ln_a is None:
+        y, _ = _start(forms, contents, 0.0)
+        left = _newton_ideal(forms, contents, y)
+        if left.size:
+            y[left] = _bisect(forms, contents.at(left), np.zeros(left.size))
+        place = coordinates(points)
+        place[0] = y
+        return Roots(y, 0.5 * all_sums(forms, contents, place).twice_strength)
+    typical = min(0.5 * float(contents.ion_z2.sum()) / points, LARGEST_IONIC_STRENGTH)
+    y, strength = _start(forms, contents, ln_a * davies_term(typical))
+    root = np.sqrt(strength)
+    left = _newton_davies(forms, contents, ln_a, y, root)
+    strength = root * root
     if left.size:
-        y[left], ionic_strength[left] = _bisect_davies(forms, contents.at(left), water)
-    return Roots(y, ionic_strength)
+        y[left], strength[left] = _bisect_davies(forms, contents.at(left), ln_a)
+    return Roots(y, strength)
 
 
-def _bracketed_start(forms: Forms, contents: Contents, ln_kw: float, u: float) -> tuple[Array, Array]:
-    """First guess of y and of the ionic strength from the grid, at one u for all points."""
-    hydrogen, hydroxide = np.exp(u - GRID_Y), np.exp(GRID_Y + u + ln_kw)
+def _start(forms: Forms, contents: Contents, u: float) -> tuple[Array, Array]:
+    """First guess of y and of the ionic strength: the chord across the grid's bracket, at one u for all points."""
+    mean, square, difference, water = grid_tables(forms, GRID_Y, u)
+    net = contents.weak.T @ mean
+    net += difference
+    net += contents.ion_charge[:, None]
+    low = np.count_nonzero(net > 0.0, axis=1) - 1
+    np.minimum(np.maximum(low, 0, out=low), GRID_Y.size - 2, out=low)
+    every = np.arange(low.size)
+    above, below = net[every, low], net[every, low + 1]
+    share = above / (above - below)
+    np.minimum(np.maximum(share, 0.0, out=share), 1.0, out=share)
+    y = GRID_Y[low] + share * (GRID_Y[1] - GRID_Y[0])
+    twice = water[low] + contents.ion_z2
     if forms.count:
-        sums = (forms.charge_moments @ forms.weights(GRID_Y, np.full_like(GRID_Y, u))).reshape(5, forms.count, -1)
-        plus, minus, square = sums[1] / sums[0], sums[2] / sums[0], (sums[3] + sums[4]) / sums[0]
-    else:
-        plus = minus = square = np.zeros((0, GRID_Y.size))
-    net = contents.weak.T @ (plus - minus)
-    net += hydrogen - hydroxide
-    net += (contents.positive - contents.negative)[:, None]
-    low = np.clip(np.count_nonzero(net > 0.0, axis=1) - 1, 0, GRID_Y.size - 2)
-    logs = []
-    for index in (low, low + 1):
-        positive = hydrogen[index] + contents.positive + np.einsum("km,km->m", contents.weak, plus[:, index])
-        negative = hydroxide[index] + contents.negative + np.einsum("km,km->m", contents.weak, minus[:, index])
-        logs.append(np.log(positive / negative))
-    share = np.clip(logs[0] / (logs[0] - logs[1]), 0.0, 1.0)
-    y = GRID_Y[low] + share * (LN10 * GRID_STEP_PH)
-    near = low + (share > 0.5)
-    strength = 0.5 * (
-        np.exp(u - y) + np.exp(y + u + ln_kw) + contents.ion_z2 + np.einsum("km,km->m", contents.weak, square[:, near])
-    )
-    return y, np.minimum(strength, LARGEST_IONIC_STRENGTH)
+        twice += np.einsum("km,km->m", contents.weak, square[:, low])
+    return y, np.minimum(0.5 * twice, LARGEST_IONIC_STRENGTH)
 
 
-def _newton_ideal(forms: Forms, contents: Contents, ln_kw: float, y: Array) -> None:
-    """Newton without activity, in place, at most 1 pH a step; bisection for what is left after the last round."""
-    left = np.arange(y.size)
-    part, here = contents, y.copy()
+def _newton_ideal(forms: Forms, contents: Contents, y: Array) -> npt.NDArray[np.intp]:
+    """Newton without activity, in place; returns the points that have not converged."""
+    left: npt.NDArray[np.intp] = np.arange(y.size)
+    part, place = contents, coordinates(y.size)
+    place[0] = y
     for _ in range(NEWTON_ROUNDS):
-        sums = charge_sums(forms, part, here, None, ln_kw)
-        value = np.log(sums.positive / sums.negative)
-        slope = sums.positive_y / sums.positive - sums.negative_y / sums.negative
-        step = np.clip(value / slope, -LN10, LN10)
-        here -= step
-        open_points = np.abs(step) > LAST_STEP
-        still = int(np.count_nonzero(open_points))
-        if not still or still * 2 < left.size:
-            y[left] = here
-            left, here = left[open_points], here[open_points]
-            if not still:
-                return
-            part = part.at(open_points)
-    y[left] = _bisect(forms, part, None, ln_kw)
-
-
-def _newton_davies(forms: Forms, contents: Contents, water: Water, y: Array, strength: Array) -> npt.NDArray[np.intp]:
-    """Newton in (y, I), in place; returns the indices of points that have not converged."""
-    left = np.arange(y.size)
-    part, here, ionic = contents, y.copy(), strength.copy()
-    assert water.ln_a is not None
-    for _ in range(NEWTON_ROUNDS):
-        term, term_slope = davies_terms(ionic)
-        sums = all_sums(forms, part, here, water.ln_a * term, water.ln_kw)
-        step_y, step_i = _davies_step(sums, ionic, water.ln_a * term_slope)
-        here -= np.clip(step_y, -LN10, LN10)
-        after = np.clip(ionic - step_i, 0.2 * ionic, np.minimum(5.0 * ionic, LARGEST_IONIC_STRENGTH))
-        open_points = ~((np.abs(step_y) <= LAST_STEP) & (np.abs(after - ionic) <= LAST_STEP * ionic))
-        ionic = after
-        still = int(np.count_nonzero(open_points))
-        if not still or still * 2 < left.size:
-            y[left], strength[left] = here, ionic
-            left, here, ionic = left[open_points], here[open_points], ionic[open_points]
-            if not still:
-                break
-            part = part.at(open_points)
+        charge, capacity = charge_sums(forms, part, place)
+        step = charge / capacity
+        np.minimum(np.maximum(step, -LARGEST_STEP, out=step), LARGEST_STEP, out=step)
+        place[0] += step
+        error = np.abs(step)
+        if float(error.max()) <= LAST_STEP:
+            y[left] = place[0]
+            return left[:0]
+        if left.size >= SPARSE_FROM_POINTS:
+            wide = error > LAST_STEP
+            if 2 * int(np.count_nonzero(wide)) < left.size:
+                y[left] = place[0]
+                left, part, place = left[wide], part.at(wide), place[:, wide]
     return left
 
 
-def _davies_step(sums: AllSums, ionic: Array, u_slope: Array) -> tuple[Array, Array]:
-    """Newton step (to be subtracted) of y and I for ln P - ln N = 0 and I = sum/2; `u_slope` is du/dI."""
-    value = np.log(sums.positive / sums.negative)
-    value_y = sums.positive_y / sums.positive - sums.negative_y / sums.negative
-    value_i = (sums.positive_u / sums.positive - sums.negative_u / sums.negative) * u_slope
-    gap = ionic - sums.ionic_strength
-    gap_i = 1.0 - sums.ionic_strength_u * u_slope
-    determinant = value_y * gap_i + value_i * sums.ionic_strength_y
-    return (value * gap_i - value_i * gap) / determinant, (value_y * gap + sums.ionic_strength_y * value) / determinant
+def _newton_davies(forms: Forms, contents: Contents, ln_a: float, y: Array, root: Array) -> npt.NDArray[np.intp]:
+    """Newton in y and the root of I, in place; returns the points that have not converged."""
+    left: npt.NDArray[np.intp] = np.arange(y.size)
+    part, place, here = contents, coordinates(y.size), root.copy()
+    place[0] = y
+    for _ in range(NEWTON_ROUNDS):
+        step, root_step = _davies_step(forms, part, ln_a, place, here)
+        np.minimum(np.maximum(step, -LARGEST_STEP, out=step), LARGEST_STEP, out=step)
+        place[0] += step
+        after = here + root_step
+        np.maximum(after, 0.4 * here, out=after)
+        np.minimum(after, np.minimum(2.5 * here, math.sqrt(LARGEST_IONIC_STRENGTH)), out=after)
+        error = np.maximum(np.abs(step), np.abs(after / here - 1.0))
+        here = after
+        if float(error.max()) <= LAST_STEP:
+            y[left], root[left] = place[0], here
+            return left[:0]
+        if left.size >= SPARSE_FROM_POINTS:
+            wide = ~(error <= LAST_STEP)
+            if 2 * int(np.count_nonzero(wide)) < left.size:
+                y[left], root[left] = place[0], here
+                left, part, place, here = left[wide], part.at(wide), place[:, wide], here[wide]
+    return left
 
 
-def _bisect(forms: Forms, contents: Contents, u: Array | None, ln_kw: float) -> Array:
+def _davies_step(forms: Forms, contents: Contents, ln_a: float, place: Array, root: Array) -> tuple[Array, Array]:
+    """Newton step of y and of r = root of I for Q = 0 and 2I = 2 r^2; sets u in `place`."""
+    one_plus = 1.0 + root
+    square = root * root
+    place[1] = ln_a * (root / one_plus - 0.3 * square)
+    u_slope = ln_a * (1.0 / (one_plus * one_plus) - 0.6 * root)
+    sums = all_sums(forms, contents, place)
+    # Q - capacity dy + cross u' dr = 0 and (4 r - widening u') dr + cross dy = 2I - 2 r^2
+    cross_root = sums.cross * u_slope
+    gap = sums.twice_strength - 2.0 * square
+    gap_root = 4.0 * root - sums.widening * u_slope
+    determinant = sums.capacity * gap_root + cross_root * sums.cross
+    step = (sums.charge * gap_root + cross_root * gap) / determinant
+    return step, (sums.capacity * gap - sums.cross * sums.charge) / determinant
+
+
+def _bisect(forms: Forms, contents: Contents, u: Array) -> Array:
     """Root in y by bisection at fixed u."""
-    low: Array = np.full(contents.positive.size, GRID_Y[0])
-    high: Array = np.full(contents.positive.size, GRID_Y[-1])
+    low: Array = np.full(u.size, LOWEST_Y)
+    high: Array = np.full(u.size, HIGHEST_Y)
+    place = coordinates(u.size)
+    place[1] = u
     for _ in range(BISECTIONS):
-        middle = 0.5 * (low + high)
-        sums = charge_sums(forms, contents, middle, u, ln_kw)
-        above = sums.positive > sums.negative
-        low, high = np.where(above, middle, low), np.where(above, high, middle)
+        place[0] = 0.5 * (low + high)
+        above = charge_sums(forms, contents, place)[0] > 0.0
+        low, high = np.where(above, place[0], low), np.where(above, high, place[0])
     return np.asarray(0.5 * (low + high))
 
 
-def _bisect_davies(forms: Forms, contents: Contents, water: Water) -> tuple[Array, Array]:
-    """Root by bisection of I, each trial with y by bisection at that I; slow and certain."""
-    assert water.ln_a is not None
-    low = np.full(contents.positive.size, 1e-12)
-    high = np.full(contents.positive.size, LARGEST_IONIC_STRENGTH)
-    y = np.zeros_like(low)
+def _bisect_davies(forms: Forms, contents: Contents, ln_a: float) -> tuple[Array, Array]:
+    """Root by bisection of the root of I, each trial with y by bisection at that I; slow and certain."""
+    low: Array = np.zeros(contents.ion_z2.size)
+    high: Array = np.full(contents.ion_z2.size, math.sqrt(LARGEST_IONIC_STRENGTH))
+    place = coordinates(low.size)
     for _ in range(BISECTIONS):
         middle = 0.5 * (low + high)
-        u = water.ln_a * davies_terms(middle)[0]
-        y = _bisect(forms, contents, u, water.ln_kw)
-        above = _ionic_strength(forms, contents, y, u, water.ln_kw) > middle
+        place[1] = ln_a * (middle / (1.0 + middle) - 0.3 * middle * middle)
+        place[0] = _bisect(forms, contents, place[1])
+        above = all_sums(forms, contents, place).twice_strength > 2.0 * middle * middle
         low, high = np.where(above, middle, low), np.where(above, high, middle)
-    return y, 0.5 * (low + high)
-
-
-def _ionic_strength(forms: Forms, contents: Contents, y: Array, u: Array, ln_kw: float) -> Array:
-    """Ionic strength, mol/L, from the species at (y, u)."""
-    total = np.exp(u - y) + np.exp(y + u + ln_kw) + contents.ion_z2
-    if forms.count:
-        weights = forms.weights(y, u)
-        count = forms.count
-        square = (forms.all_moments[3 * count : 4 * count] + forms.all_moments[4 * count : 5 * count]) @ weights
-        total = total + np.einsum("km,km->m", contents.weak, square / (forms.all_moments[:count] @ weights))
-    return np.asarray(0.5 * total)
+    return place[0], 0.25 * (low + high) ** 2

@@ -14,7 +14,7 @@ import numpy as np
 from .activity import davies_terms
 from .constants import LN10
 from .solution import Blend, SolutionStates, blend, states_of
-from .solution_balance import AllSums, Array, all_sums
+from .solution_balance import Array, Sums, all_sums, coordinates
 from .solution_mixture import Medium, Mixture
 from .solution_roots import find_roots
 
@@ -63,13 +63,14 @@ def curve_with_sensitivities(
         SolutionError: as `titration_curve`.
     """
     mixed = blend(sample, titrant, sample_volume_ml, volumes_ml, medium)
-    roots = find_roots(mixed.forms, mixed.contents, mixed.water)
-    ln_a = 0.0 if mixed.water.ln_a is None else mixed.water.ln_a
+    roots = find_roots(mixed.forms, mixed.contents, mixed.ln_a)
+    ln_a = mixed.ln_a or 0.0
     term, term_slope = davies_terms(roots.ionic_strength)
-    u = ln_a * term
-    sums = all_sums(mixed.forms, mixed.contents, roots.y, u, mixed.water.ln_kw)
+    place = coordinates(roots.y.size)
+    place[0], place[1] = roots.y, ln_a * term
+    sums = all_sums(mixed.forms, mixed.contents, place)
     response = _response(sums, ln_a * term_slope)
-    weights = _fractions(mixed, roots.y, u)
+    weights = _fractions(mixed, place)
     mean, square = _first_two_moments(mixed, weights)
     weak = response.of(mean, 0.5 * square)
     ions = [
@@ -83,8 +84,8 @@ def curve_with_sensitivities(
     kept, added, total = mixed.sample_share, mixed.titrant_share, mixed.total_ml
     pka = _pka_rows(mixed, weights, mean, square, response)
     titrant_scale = added * by_titrant_share
-    by_u = (sums.positive_u - sums.negative_u, sums.ionic_strength_u)
-    no_activity = mixed.water.ln_a is None
+    by_u = (sums.cross, 0.5 * sums.widening)
+    no_activity = mixed.ln_a is None
     return CurveSensitivities(
         states=states_of(roots, medium),
         per_ml=kept / total * (by_titrant_share - by_sample_share),
@@ -101,20 +102,19 @@ def curve_with_sensitivities(
     )
 
 
-def _response(sums: AllSums, u_slope: Array) -> _Response:
-    """Solve Q_y dy + Q_I dI = -dQ and -S_y dy + (1 - S_I) dI = dS for dpH = dy / ln 10; `u_slope` is du/dI."""
-    charge_y = sums.positive_y - sums.negative_y
-    charge_i = (sums.positive_u - sums.negative_u) * u_slope
-    gap_i = 1.0 - sums.ionic_strength_u * u_slope
-    determinant = LN10 * (charge_y * gap_i + charge_i * sums.ionic_strength_y)
-    return _Response(-gap_i / determinant, -charge_i / determinant)
+def _response(sums: Sums, u_slope: Array) -> _Response:
+    """Solve -capacity dy + cross u' dI = -dQ and (2 - widening u') dI + cross dy = 2 dS; `u_slope` is u' = du/dI."""
+    cross_i = sums.cross * u_slope
+    gap_i = 2.0 - sums.widening * u_slope
+    determinant = LN10 * (sums.capacity * gap_i + cross_i * sums.cross)
+    return _Response(gap_i / determinant, 2.0 * cross_i / determinant)
 
 
-def _fractions(mixed: Blend, y: Array, u: Array) -> tuple[Array, ...]:
+def _fractions(mixed: Blend, place: Array) -> tuple[Array, ...]:
     """Share of each form in its component, one array (form, point) per component."""
     if not mixed.forms.count:
         return ()
-    weights = mixed.forms.weights(y, u)
+    weights = np.exp(mixed.forms.exponents[:-2] @ place)
     parts = np.split(weights, mixed.forms.first_form[1:])
     return tuple(part / part.sum(axis=0) for part in parts)
 
