@@ -11,7 +11,7 @@ from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, field
 from typing import Any
 
-from controller.study_plan import nominal_plan
+from controller.study_plan import Strategy, nominal_plan
 from controller.titration.actions import (
     Action,
     Answered,
@@ -33,9 +33,9 @@ from controller.titration.actions import (
     Waited,
 )  # fmt: skip
 from controller.titration.core import titrate
-from controller.titration.plan import Dosing, RunPlan, Settling
+from controller.titration.plan import RunPlan
 from simulators.bench import VirtualBench
-from simulators.nominal import RATE_ML_MIN, NominalBench, NominalCase, nominal_bench
+from simulators.nominal import RATE_ML_MIN, NominalCase, nominal_bench
 
 
 class StudyWorld:
@@ -128,16 +128,6 @@ def drive(plan: RunPlan, answer: Answerer, *, keep_entries: bool = False) -> Stu
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Strategy:
-    """A way to dose and settle that a study compares."""
-
-    name: str
-    dosing: Dosing
-    settling: Settling
-    with_record: bool = True
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
 class StudyOutcome:
     """One run of a study against its truth; errors in uL, None where no end point was reported."""
 
@@ -154,10 +144,15 @@ class StudyOutcome:
     result: dict[str, Any]
 
 
+def strategy_plan(nominal: NominalBench, strategy: Strategy) -> RunPlan:
+    """The plan of a nominal bench run by a strategy."""
+    return nominal_plan(nominal, dosing=strategy.dosing, settling=strategy.settling, with_record=strategy.with_record)
+
+
 def nominal_run(case: NominalCase, seed: int, strategy: Strategy) -> StudyOutcome:
     """One run on the nominal bench of this case and seed."""
     nominal = nominal_bench(case, seed)
-    plan = nominal_plan(nominal, dosing=strategy.dosing, settling=strategy.settling, with_record=strategy.with_record)
+    plan = strategy_plan(nominal, strategy)
     run = drive(plan, StudyWorld(nominal.bench).answer)
     end_points = run.result["end_points"]
     errors: list[float | None] = []
@@ -170,17 +165,12 @@ def nominal_run(case: NominalCase, seed: int, strategy: Strategy) -> StudyOutcom
         error_ul=tuple(errors),
         standard_uncertainty_ul=tuple(1000.0 * e["standard_uncertainty_ml"] for e in end_points),
         found=len(end_points),
-        expected=known_end_points(nominal),
+        expected=nominal.known.end_points,
         outcome=run.result["outcome"],
         duration_s=run.result["duration_s"],
         doses=run.result["doses"],
         result=run.result,
     )
-
-
-def known_end_points(nominal: NominalBench) -> int:
-    """End points that the bench's user looks for."""
-    return nominal.known.end_points
 
 
 def _one(job: tuple[NominalCase, int, Strategy]) -> StudyOutcome:

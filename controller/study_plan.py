@@ -1,6 +1,8 @@
-"""The plan of a nominal bench: what its user knows of it, with usual limits."""
+"""Ways to dose and settle that studies compare, and the plan of a nominal bench: what its user knows of it."""
 
 from __future__ import annotations
+
+from dataclasses import dataclass, replace
 
 from controller.titration.plan import (
     Chemistry,
@@ -19,6 +21,73 @@ from controller.titration.plan import (
     WeakAcid,
 )  # fmt: skip
 from simulators.nominal import RATE_ML_MIN, READING_INTERVAL_S, STEP_ML, NominalBench
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Strategy:
+    """A way to dose and settle that a study compares; `with_record`: the probe's lag record is at hand."""
+
+    name: str
+    dosing: Dosing
+    settling: Settling
+    with_record: bool = True
+
+
+_DOSING = Dosing(
+    policy="model-guided",
+    smallest_ml=0.005,
+    largest_ml=0.5,
+    largest_past_equivalence_ml=0.1,
+    model_step_mv=20.0,
+    slope_step_mv=8.0,
+    growth_limit=3.0,
+    equal_volume_ml=0.25,
+    first_dose_ml=0.25,
+)
+_SETTLING = Settling(
+    rule="lag-corrected",
+    shortest_s=4.0,
+    longest_s=60.0,
+    stability_limit_mv_min=3.0,
+    stability_readings=10,
+    fixed_wait_s=15.0,
+)
+#: slope-adaptive as it is commonly set: 8 mV a step, 5 to 250 uL, growing at most twofold
+_SLOPE = replace(_DOSING, policy="slope-adaptive", largest_ml=0.25, growth_limit=2.0, first_dose_ml=0.1)
+
+MODEL_GUIDED = Strategy(name="model-guided, lag-corrected", dosing=_DOSING, settling=_SETTLING)
+WITHOUT_RECORD = Strategy(
+    name="model-guided, extrapolated",
+    dosing=_DOSING,
+    settling=replace(_SETTLING, rule="extrapolated"),
+    with_record=False,
+)
+#: stability limit of 3 mV/min over 10 readings, 4 to 60 s
+BASELINE = Strategy(
+    name="slope-adaptive, 3 mV/min",
+    dosing=_SLOPE,
+    settling=replace(_SETTLING, rule="stability-limit"),
+    with_record=False,
+)
+#: 20 mV/min, 5 to 30 s (common practice)
+LAX_BASELINE = Strategy(
+    name="slope-adaptive, 20 mV/min",
+    dosing=_SLOPE,
+    settling=replace(_SETTLING, rule="stability-limit", stability_limit_mv_min=20.0, shortest_s=5.0, longest_s=30.0),
+    with_record=False,
+)
+FIXED_WAIT = Strategy(
+    name="slope-adaptive, fixed wait of 15 s",
+    dosing=_SLOPE,
+    settling=replace(_SETTLING, rule="fixed-wait"),
+    with_record=False,
+)
+EQUAL_VOLUMES = Strategy(
+    name="equal volumes of 0.25 mL, 3 mV/min",
+    dosing=replace(_DOSING, policy="equal-volumes"),
+    settling=replace(_SETTLING, rule="stability-limit"),
+    with_record=False,
+)
 
 
 def nominal_plan(nominal: NominalBench, *, dosing: Dosing, settling: Settling, with_record: bool = True) -> RunPlan:

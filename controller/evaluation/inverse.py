@@ -186,7 +186,11 @@ class _Fit:
         if not variance > 0.0:
             return None
         sd = math.sqrt(variance)
-        sound = self.v.size >= (2 if s.ladder.known else 3) and chi <= _LARGEST_SOUND_CHI_SQUARE and sd <= _LARGEST_SOUND_RELATIVE_SD * veq
+        sound = (
+            self.v.size >= (2 if s.ladder.known else 3)
+            and chi <= _LARGEST_SOUND_CHI_SQUARE
+            and sd <= _LARGEST_SOUND_RELATIVE_SD * veq
+        )
         return InverseFit(
             setting=s,
             equivalence_ml=veq,
