@@ -9,12 +9,10 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Protocol
 
-from configs.errors import HalfdropError
 from controller.guard import Guard
 from controller.journal import Journal
-from controller.stopping import StopSwitch
+from controller.stopping import Commands, StopSwitch
 from controller.titration.actions import (
     Action,
     Answered,
@@ -48,18 +46,6 @@ from drivers.pump import LastDose, Pump
 COMMAND_POLL_S = 0.5
 #: tries to halt the pump before it is called not confirmed
 STOP_TRIES = 3
-
-
-class Commands(Protocol):
-    """Where the operator's commands come from."""
-
-    def waiting(self) -> bool:
-        """True if a command has come."""
-        ...
-
-    def take(self) -> Command | None:
-        """Return the next command, None where there is none."""
-        ...
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -317,34 +303,3 @@ class Execution:
             self._journal.event("pump-stop", why=self._stop.why(), confirmed=True, by="driver")
         else:
             self.halt(self._stop.why())
-
-
-def check_devices(plan: RunPlan, devices: Devices) -> tuple[dict[str, dict[str, str]], float]:
-    """Ask pump and probe who they are and hold it against the plan; nothing moves.
-
-    Returns:
-        The identities by role, as plain data for the record's header, and what the pump has delivered so far, mL.
-
-    Raises:
-        DeviceError: a device does not answer.
-        HalfdropError: it is another device than the plan's, or it was started or used since the plan was made.
-    """
-    pump, probe, status = devices.pump.identify(), devices.probe.identify(), devices.pump.status()
-    for role, told, planned in (("pump", pump.key, plan.pump.identity), ("probe", probe.key, plan.probe.identity)):
-        if told != planned:
-            raise HalfdropError(
-                f"{told!r} answers, the plan was made for {planned!r}", where=role, remedy="Correct the bench file"
-            )
-    if status.fault or status.moving:
-        raise DeviceError(
-            f"it is not ready: {status.fault or 'it is moving'}", where=f"pump {pump.key}", remedy="Look at the pump"
-        )
-    if (status.start_count, status.last_dose_number) != (plan.pump.start_count, plan.pump.last_dose_number):
-        raise DeviceError(
-            "it was switched on again or used since the plan was made", where=f"pump {pump.key}", remedy="Start again"
-        )
-    identities = {
-        role: {"maker": told.maker, "model": told.model, "serial": told.serial, "firmware": told.firmware}
-        for role, told in (("pump", pump), ("probe", probe))
-    }
-    return identities, status.delivered_ml

@@ -12,8 +12,9 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from configs.errors import HalfdropError
+from controller.aftercare import ask_about_probe
 from controller.clockwatch import ClockWatch
-from controller.execution import Commands, Devices, Execution, check_devices
+from controller.execution import Devices, Execution
 from controller.guard import Guard, check_start, start_warnings
 from controller.header import header_of
 from controller.journal import Journal, RecordError
@@ -29,11 +30,10 @@ from controller.outcome import (
     whole_result,
 )
 from controller.progress import Pace, Progress
-from controller.stopping import StopSwitch
+from controller.startcheck import check_devices
+from controller.stopping import Commands, StopSwitch
 from controller.titration.actions import (
     Action,
-    Answered,
-    Ask,
     Decisions,
     Failed,
     Finish,
@@ -48,11 +48,6 @@ from drivers.errors import StoppedError
 
 #: answers in a row that a core may get without anything being done, before the runner ends the run itself
 MOST_UNDONE = 50
-RINSE_AND_STORE = Ask(
-    key="rinse-and-store",
-    text="Has the probe been rinsed and put into its storage solution?",
-    choices=("yes", "no"),
-)
 
 
 def run(
@@ -63,7 +58,6 @@ def run(
     *,
     clock: Clock,
     stop: StopSwitch,
-    guard: Guard | None = None,
     commands: Commands | None = None,
     operator_name: str | None = None,
     hashes: Mapping[str, str] | None = None,
@@ -80,7 +74,6 @@ def run(
         journal: the record, not yet begun; it is closed when this returns or raises.
         clock: the clock that the devices use too.
         stop: pulled by a signal, a key or a viewer; the devices' waits look at its event.
-        guard: default: a new one for this plan.
         commands: the operator's commands, if anything can give some.
         operator_name: as typed, for the record.
         hashes: SHA-256 of the files that the plan rests on, by name.
@@ -104,15 +97,11 @@ def run(
     except BaseException:
         journal.discard()
         raise
-    held = guard if guard is not None else Guard(plan)
-    execution = Execution(plan, devices, journal, held, clock=clock, stop=stop, commands=commands)
     return _Run(
         plan=plan,
         decisions=decisions,
         devices=devices,
         journal=journal,
-        execution=execution,
-        guard=held,
         clock=clock,
         stop=stop,
         commands=commands,
@@ -130,22 +119,31 @@ class _Run:
     decisions: Decisions
     devices: Devices
     journal: Journal
-    execution: Execution
-    guard: Guard
     clock: Clock
     stop: StopSwitch
     commands: Commands | None
     on_progress: Callable[[Progress], None] | None
     amount_of: AmountOf | None
     pump_before_ml: float
+    guard: Guard = field(init=False)
+    execution: Execution = field(init=False)
     pace: Pace = field(init=False)
     gaps: ClockWatch = field(init=False)
     safety: str | None = None
     undone: int = 0
-    finished_s: float = 0.0
     warnings: list[str] = field(init=False)
 
     def __post_init__(self) -> None:
+        self.guard = Guard(self.plan)
+        self.execution = Execution(
+            self.plan,
+            self.devices,
+            self.journal,
+            self.guard,
+            clock=self.clock,
+            stop=self.stop,
+            commands=self.commands,
+        )
         self.pace = Pace(self.plan)
         self.gaps = ClockWatch(self.clock)
         self.warnings = start_warnings(self.plan)
@@ -155,7 +153,9 @@ class _Run:
             self.journal.begin({**header, "warnings": self.warnings})
             result = self._complete(self._converse())
             self.journal.barrier()
-            details = self._afterwards() if ask_afterwards and not self.stop.event.is_set() else {}
+            details: dict[str, Any] = {}
+            if ask_afterwards and not self.stop.event.is_set():
+                details = ask_about_probe(self.devices.operator, self.journal, self.execution)
             return self._close(result, details)
         except BaseException as error:
             self._close_failed(error)
@@ -240,7 +240,6 @@ class _Run:
     # --- the end -------------------------------------------------------------------------------------------------
 
     def _complete(self, found: Mapping[str, Any]) -> dict[str, Any]:
-        self.finished_s = self.execution.at_s()
         why = self.guard.breach or (self.stop.why() if self.stop.event.is_set() else None)
         result = whole_result(
             found, plan=self.plan, execution=self.execution, record=self.journal.name, why_stopped=why
@@ -256,18 +255,6 @@ class _Run:
                 result["warnings"].append(warning)
         add_amount(result, self.plan, self.amount_of)
         return result
-
-    def _afterwards(self) -> dict[str, Any]:
-        """Ask whether the probe was rinsed and stored, and note how long it stood in the titrated solution."""
-        self.journal.write(RINSE_AND_STORE, by="runner")
-        self.journal.barrier()
-        try:
-            answer = self.devices.operator.ask(RINSE_AND_STORE.key, RINSE_AND_STORE.text, RINSE_AND_STORE.choices)
-        except (HalfdropError, KeyboardInterrupt):
-            return {"probe_stored": "not answered", "probe_stood_s": None}
-        at_s = self.execution.at_s()
-        self.journal.write(Answered(key=RINSE_AND_STORE.key, answer=answer, at_s=at_s), by="runner")
-        return {"probe_stored": answer, "probe_stood_s": round(at_s - self.finished_s, 3)}
 
     def _close(self, result: dict[str, Any], details: Mapping[str, Any]) -> RunResult:
         confirmed = self.execution.stop_confirmed
@@ -308,7 +295,8 @@ class _Run:
             self.execution.halt(f"{type(error).__name__}: {error}")
         confirmed = self.execution.stop_confirmed is True
         by_hand = isinstance(error, KeyboardInterrupt | StoppedError)
-        reason = "interrupted" if by_hand else f"{type(error).__name__}: {error}"
+        told = error.what if isinstance(error, HalfdropError) else f"{type(error).__name__}: {error}"
+        reason = "interrupted" if by_hand else told
         try:
             self.journal.close(
                 "stopped" if by_hand else "failed",

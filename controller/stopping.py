@@ -1,10 +1,12 @@
-"""The stop switch of a run: one event that every wait looks at, and who pulled it."""
+"""What people do to a run while it goes on: the stop switch, which every wait looks at, and commands."""
 
 from __future__ import annotations
 
 import threading
 from dataclasses import dataclass, field
-from typing import Literal
+from typing import Literal, Protocol
+
+from controller.titration.actions import Command
 
 StopKind = Literal["interrupt", "terminate", "operator"]
 
@@ -41,3 +43,15 @@ class StopSwitch:
     def why(self) -> str:
         """Return the reason in words."""
         return self.request.why if self.request is not None else _WORDS["operator"]
+
+
+class Commands(Protocol):
+    """Where the operator's commands come from."""
+
+    def waiting(self) -> bool:
+        """True if a command has come."""
+        ...
+
+    def take(self) -> Command | None:
+        """Return the next command, None where there is none."""
+        ...

@@ -19,10 +19,10 @@ from controller.record import points, read_record, verify
 from controller.recordfile import FileSink
 from controller.runner import run
 from controller.stopping import StopSwitch
-from controller.study_plan import nominal_plan
+from controller.study_plan import MODEL_GUIDED, nominal_plan
 from controller.titration.actions import from_entry, to_entry
 from controller.titration.core import titrate
-from controller.titration.plan import Dosing, Question, RunPlan, Settling
+from controller.titration.plan import Question, RunPlan
 from drivers.clock import ManualClock
 from drivers.identity import Identity
 from drivers.link import LinkSettings, open_link
@@ -32,26 +32,6 @@ from drivers.scpi_pump import ScpiPump
 from simulators.devices import ProbeDevice, PumpDevice
 from simulators.nominal import NominalBench, nominal_bench
 from simulators.port import VirtualPorts
-
-DOSING = Dosing(
-    policy="model-guided",
-    smallest_ml=0.005,
-    largest_ml=0.5,
-    largest_past_equivalence_ml=0.1,
-    model_step_mv=20.0,
-    slope_step_mv=8.0,
-    growth_limit=3.0,
-    equal_volume_ml=0.1,
-    first_dose_ml=0.1,
-)
-SETTLING = Settling(
-    rule="lag-corrected",
-    shortest_s=4.0,
-    longest_s=60.0,
-    stability_limit_mv_min=3.0,
-    stability_readings=10,
-    fixed_wait_s=10.0,
-)
 
 
 @dataclass
@@ -94,7 +74,7 @@ def wire(name: str) -> Iterator[Wired]:
             operator=AnswersOperator({"goggles": "yes", "rinse-and-store": "yes"}),
         )
         status = devices.pump.status()
-        plan = nominal_plan(nominal, dosing=DOSING, settling=SETTLING)
+        plan = nominal_plan(nominal, MODEL_GUIDED)
         plan = replace(
             plan,
             questions=(Question(key="goggles", text="Goggles on?", choices=("yes", "no"), must_be="yes"),),
