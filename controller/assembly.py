@@ -202,6 +202,34 @@ def _link_settings(port: PortSettings) -> LinkSettings:
     return LinkSettings(baud_rate=port.baud_rate, dtr=port.dtr, rts=port.rts, reply_deadline_s=port.reply_time_out_s)
 
 
+@contextmanager
+def serve_bench(
+    bench: BenchSettings,
+    method: MethodSettings,
+    sample: Sample,
+    *,
+    seed: int | None,
+    time_scale: str,
+    route: Route,
+    place: Path | None,
+) -> Iterator[dict[str, str]]:
+    """Serve the devices of a simulated bench to any program, in real or scaled time, while the block runs.
+
+    Yields:
+        The addresses of the ports by role.
+    """
+    simulation = bench.simulation
+    assert simulation is not None  # the bench file was checked
+    clock = clock_of(time_scale)
+    world = simulated_world(
+        bench, simulation, method, sample, seed=simulation.seed if seed is None else seed, start_s=clock.now_s()
+    )
+    world.stir(True, clock.now_s())  # nobody is asked here
+    pump, probe = simulated_devices(bench, world, place=place)
+    with VirtualPorts(clock) as ports:
+        yield {"pump": ports.add("pump", pump, route).url, "probe": ports.add("probe", probe, route).url}
+
+
 def clock_of(time_scale: str | None) -> Clock:
     """Return the clock of a simulated bench.
 

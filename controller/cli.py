@@ -115,9 +115,7 @@ def _demo(made: Parser) -> None:
     made.set_defaults(function="controller.commands.demo:demo")
     made.add_argument("--dir", metavar="DIR", help="where to make the lab folder (default: a new temporary folder)")
     made.add_argument("--headless", action="store_true", help="progress and result as plain lines")
-    made.add_argument(
-        "--time-scale", metavar="X", help="run X times real time (default: as fast as it can)"
-    )
+    made.add_argument("--time-scale", metavar="X", help="run X times real time (default: as fast as it can)")
     made.add_argument("--seed", type=int, default=1, metavar="N", help="seed of the simulated bench (default: 1)")
     _json(made)
 
@@ -136,9 +134,7 @@ def _run(made: Parser) -> None:
     _world(made)
     made.add_argument("--operator", metavar="NAME", help="who runs it (kept in the record)")
     made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
-    made.add_argument(
-        "--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)"
-    )
+    made.add_argument("--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)")
     made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
     _json(made)
 
@@ -163,6 +159,8 @@ def _evaluate(made: Parser) -> None:
     made.add_argument("--titrant-concentration-mol-l", type=float, metavar="C")
     made.add_argument("--substance", metavar="NAME", help="the substance titrated")
     made.add_argument("--temperature-c", type=float, metavar="T")
+    made.add_argument("--activity", choices=("davies", "none"), default="none", help="activity correction of the model")
+    _lab(made)
     made.add_argument("--end-points", type=int, metavar="N", help="how many equivalence points are expected")
     _json(made)
 
@@ -171,6 +169,10 @@ def _predict(made: Parser) -> None:
     made.set_defaults(function="controller.commands.predict:predict")
     made.add_argument("what", metavar="METHOD|SOLUTION", help="a method (name or file), or a solution file")
     made.add_argument("--volumes", metavar="FILE", help="solution file: volumes from this file, one a line")
+    made.add_argument("--runs", type=int, default=39, metavar="N", help="method: simulated runs (39: a 95 %% range)")
+    made.add_argument(
+        "--amount-uncertainty-percent", type=float, metavar="P", help="method: how well the amount is known (k = 1)"
+    )
     _lab(made)
     _sample(made)
     _world(made)
@@ -215,9 +217,7 @@ def _bench(group: Parser) -> None:
     _lab(made)
     _world(made)
     made.add_argument("--method", metavar="METHOD", help="the method whose sample is in the beaker")
-    made.add_argument(
-        "--link", choices=("pty", "tcp"), help="pseudo-terminals or TCP (default: pty if there is one)"
-    )
+    made.add_argument("--link", choices=("pty", "tcp"), help="pseudo-terminals or TCP (default: pty if there is one)")
     made.add_argument("--time-scale", metavar="X", help="run X times faster than real time")
     _sample(made)
 

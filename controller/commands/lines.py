@@ -50,9 +50,18 @@ def _clock_text(seconds: float) -> str:
     return f"{hours}:{minutes:02d}:{rest:02d}" if hours else f"{minutes}:{rest:02d}"
 
 
+def _course(result: dict[str, Any]) -> list[str]:
+    if not result.get("run_outcome") and result.get("doses") and result.get("duration_s") is not None:
+        minutes = _clock_text(result["duration_s"])
+        return [f"{result['doses']} doses, {result['titrant_ml']:.4f} mL of titrant, {minutes} (minutes:seconds)"]
+    return []
+
+
 def result_lines(result: dict[str, Any]) -> list[str]:
     """Return how a run ended, for people."""
-    lines = [f"outcome: {result['outcome']}" + (f" ({result['reason']})" if result["reason"] else "")]
+    lines = [f"outcome: {result.get('run_outcome', result['outcome'])}"]
+    if result["reason"]:
+        lines[0] += f" ({result['reason']})"
     for number, point in enumerate(result["end_points"], start=1):
         ph = "" if point.get("ph") is None else f", pH {point['ph']:.2f}"
         volume = volume_text(point["volume_ml"], point["standard_uncertainty_ml"])
@@ -66,9 +75,7 @@ def result_lines(result: dict[str, Any]) -> list[str]:
     ]
     if result.get("result"):
         lines.append(f"amount: {amount_text(result['result'])}")
-    lines.append(
-        f"{result['doses']} doses, {result['titrant_ml']:.4f} mL of titrant, {_clock_text(result['duration_s'])} min:s"
-    )
+    lines += _course(result)
     lines += [f"warning: {warning}" for warning in result["warnings"]]
     if result.get("run"):
         lines.append(f"record: {result['run']}")

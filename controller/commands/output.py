@@ -33,6 +33,8 @@ def amount_text(amount: dict[str, Any] | None) -> str:
     if not amount:
         return "no amount"
     value, expanded, unit = amount["value"], amount.get("expanded_uncertainty"), amount["unit"]
+    if amount.get("substance"):
+        unit = f"{unit} {'' if amount.get('quantity') == 'titrant' else 'as '}{amount['substance']}"
     if not expanded:
         return f"{value:.6g} {unit}"
     places = decimals(expanded)

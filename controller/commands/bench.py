@@ -1,0 +1,106 @@
+"""halfdrop bench: what a bench is, and a simulated one served to any program."""
+
+from __future__ import annotations
+
+import argparse
+import json
+from argparse import Namespace
+from pathlib import Path
+from typing import Any
+
+from configs.benchfile import BenchSettings
+from configs.errors import HalfdropError
+from configs.settings import load_bench
+from controller.assembly import FAST, is_simulated, local_route, serve_bench
+from controller.commands.output import print_json, say
+from controller.commands.settings import chosen, sample_choice
+from controller.commands.signals import pulling
+from controller.labfolder import find_lab
+from controller.planning import plan_sample
+from controller.record import printable
+from controller.stopping import StopSwitch
+
+DONE = 0
+DEFAULT_METHOD = "juice-acidity"
+
+
+def show(given: argparse.Namespace) -> int:
+    """Print devices, limits and calibration of a bench file; asks no device."""
+    if given.bench:
+        path = Path(given.bench)
+    else:
+        lab = find_lab(given.lab)
+        say(lab.says())
+        path = lab.bench
+    bench = load_bench(path)
+    if given.json:
+        print_json({"path": str(path), "bench": bench.model_dump(mode="json")})
+    else:
+        print("\n".join(printable(line) for line in _lines(bench)))
+    return DONE
+
+
+def _lines(bench: BenchSettings) -> list[str]:
+    vessel, pump, probe = bench.vessel, bench.pump, bench.probe
+    room_ml = vessel.capacity_ml - vessel.displaced_ml - vessel.margin_ml
+    lines = [
+        f"{bench.name} ({'simulated' if is_simulated(bench) else 'real'})",
+        f"vessel: {vessel.capacity_ml:g} mL, takes less than {room_ml:g} mL of liquid; tray {vessel.tray_ml:g} mL, "
+        f"waste {vessel.waste_ml:g} mL",
+        f"limits: {vessel.largest_dose_ml:g} mL a dose, {pump.highest_rate_ml_min:g} mL/min, "
+        f"{vessel.longest_run_s:g} s, {vessel.lowest_temperature_c:g} to {vessel.highest_temperature_c:g} °C",
+        f"pump on {pump.port}: syringe {pump.syringe_ml:g} mL, step {1000 * pump.step_ml:g} µL, "
+        f"{pump.rate_ml_min:g} mL/min, refill: {pump.refill}, reservoir {pump.reservoir_ml:g} mL",
+        f"probe on {probe.port}: reads every {probe.reading_interval_s:g} s to {probe.resolution_mv:g} mV",
+    ]
+    found = probe.calibration
+    if found is None:
+        lines.append("calibration: none; only methods with signal: potential can run")
+    else:
+        lines.append(
+            f"calibration: slope {found.slope_percent:g} % (u = {found.slope_percent_standard_uncertainty:g} %), "
+            f"{found.offset_mv:g} mV at pH {found.isopotential_ph:g} "
+            f"(u = {found.offset_standard_uncertainty_mv:g} mV), {found.calibrated_utc or 'no date'}"
+        )
+    lag = probe.response
+    if lag is None:
+        lines.append("response: not measured; readings are extrapolated instead of corrected for the probe's lag")
+    else:
+        lines.append(
+            f"response: {lag.bulk_s:g} s mixing, {lag.film_s:g} s film, {lag.slow_share_percent:g} % slow "
+            f"({lag.slow_s:g} s), {lag.measured_utc or 'no date'}"
+        )
+    return lines
+
+
+def serve(given: argparse.Namespace) -> int:
+    """Offer the ports of a simulated bench until interrupted; prints their addresses as one line of JSON."""
+    picked = chosen(Namespace(**{**vars(given), "method": given.method or DEFAULT_METHOD}), lab_needed=False)
+    if not is_simulated(picked.bench):
+        raise HalfdropError(
+            "its ports are real", where=f"bench {picked.bench.name}", remedy="Serve a bench with port: simulated"
+        )
+    if given.time_scale == FAST:
+        raise HalfdropError(
+            f"got {FAST}, allowed: a number above 0", where="--time-scale", remedy="Other programs live in real time"
+        )
+    stop = StopSwitch()
+    route = given.link or local_route()
+    with (
+        pulling(stop, headless=True),
+        serve_bench(
+            picked.bench,
+            picked.method,
+            plan_sample(picked.method, sample_choice(given)),
+            seed=given.seed,
+            time_scale=given.time_scale or "1",
+            route=route,
+            place=None if picked.lab is None else picked.lab.path,
+        ) as ports,
+    ):
+        addresses: dict[str, Any] = {"pump": ports["pump"], "probe": ports["probe"], "sample": picked.method.name}
+        print(json.dumps(addresses), flush=True)
+        say("set pump.port and probe.port of a bench file to these; Ctrl-C ends it")
+        while not stop.event.wait(0.2):
+            pass
+    return DONE

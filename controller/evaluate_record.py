@@ -1,0 +1,84 @@
+"""The end points of a record again, from its points; also of one that was broken off."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from controller.amounts import amount_of_plan
+from controller.encoding import plan_from_json
+from controller.evaluation.curve import Curve, CurveError
+from controller.evaluation.evaluate import evaluate
+from controller.record import Record, points, read_record
+from controller.titration.plan import RunPlan
+
+#: no probe and no calibration is straight to better than this over a few pH
+STRAIGHTNESS_PH = 0.003
+
+
+def evaluate_record(path: Path) -> dict[str, Any]:
+    """Evaluate a record's settled points with what its plan knows.
+
+    Returns:
+        The JSON of `evaluate`; outcome and reason are the run's own, None for a run without an end.
+
+    Raises:
+        HalfdropError: it is no record, or its plan cannot be read.
+    """
+    record = read_record(path)
+    plan = plan_from_json(record.header.get("plan"), where=str(path))
+    detected = _detected_ml(record)
+    closing = record.closing or {}
+    result = evaluate(
+        curve_of(plan, record, where=str(path)), end_points_expected=plan.end_points.expected, detected_ml=detected
+    ).to_json()
+    for point in result["end_points"]:
+        point["standard_uncertainty_ml"] = math.hypot(point["standard_uncertainty_ml"], plan.pump.position_sd_ml)
+    result["run"], result["seed"] = str(path), plan.seed
+    result["run_outcome"] = closing.get("outcome", "open")
+    result["result"] = amount_of_plan(plan, result)
+    if record.closing is None:
+        result["warnings"].append("the run has no closing line: what is evaluated is what was recorded")
+    return result
+
+
+def curve_of(plan: RunPlan, record: Record, *, where: str) -> Curve:
+    """Return the record's points as a curve.
+
+    Raises:
+        CurveError: there are too few, or they make no curve.
+    """
+    found = [one for one in points(record) if one["volume_ml"] is not None and one["potential_mv"] is not None]
+    if not found:
+        raise CurveError("no points in it", where=where, remedy="Nothing can be evaluated")
+    found.sort(key=lambda one: float(one["volume_ml"]))
+    chemistry, analyte = plan.chemistry, plan.chemistry.analyte
+    known = all(one["ph"] is not None for one in found)
+    curve = Curve(
+        volume_ml=np.array([one["volume_ml"] for one in found], dtype=np.float64),
+        ph=np.array([one["ph"] for one in found], dtype=np.float64) if known else None,
+        potential_mv=np.array([one["potential_mv"] for one in found], dtype=np.float64),
+        initial_volume_ml=plan.sample.initial_volume_ml,
+        titrant_concentration_mol_l=plan.titrant.concentration_mol_l,
+        titrant_is_acid=plan.titrant.acid,
+        volume_sd_ml=math.hypot(plan.pump.dose_sd_ml, plan.pump.step_ml),
+        signal_sd=STRAIGHTNESS_PH if known else None,
+        pkw=chemistry.pkw,
+        debye_huckel_a=chemistry.debye_huckel_a,
+        temperature_c=chemistry.temperature_c,
+    )
+    if analyte is None:
+        return curve
+    return replace(curve, pka=analyte.pka, charge=analyte.charge, counter_ion_charge=analyte.counter_ion_charge)
+
+
+def _detected_ml(record: Record) -> list[float]:
+    return [
+        float(entry["volume_ml"])
+        for entry in record.of("report")
+        if entry.get("what") == "end-point" and isinstance(entry.get("volume_ml"), int | float)
+    ]
