@@ -144,15 +144,10 @@ class StudyOutcome:
     result: dict[str, Any]
 
 
-def strategy_plan(nominal: NominalBench, strategy: Strategy) -> RunPlan:
-    """The plan of a nominal bench run by a strategy."""
-    return nominal_plan(nominal, dosing=strategy.dosing, settling=strategy.settling, with_record=strategy.with_record)
-
-
 def nominal_run(case: NominalCase, seed: int, strategy: Strategy) -> StudyOutcome:
     """One run on the nominal bench of this case and seed."""
     nominal = nominal_bench(case, seed)
-    plan = strategy_plan(nominal, strategy)
+    plan = nominal_plan(nominal, strategy)
     run = drive(plan, StudyWorld(nominal.bench).answer)
     end_points = run.result["end_points"]
     errors: list[float | None] = []

@@ -90,7 +90,7 @@ EQUAL_VOLUMES = Strategy(
 )
 
 
-def nominal_plan(nominal: NominalBench, *, dosing: Dosing, settling: Settling, with_record: bool = True) -> RunPlan:
+def nominal_plan(nominal: NominalBench, strategy: Strategy) -> RunPlan:
     """The plan of a nominal bench with what its user knows of it."""
     known, bench = nominal.known, nominal.bench
     medium = bench.medium
@@ -136,7 +136,7 @@ def nominal_plan(nominal: NominalBench, *, dosing: Dosing, settling: Settling, w
             identity="virtual probe",
             signal="ph",
             calibration=calibration,
-            response=response if with_record else None,
+            response=response if strategy.with_record else None,
             resolution_mv=bench.truth.electrode.resolution_mv,
             reading_interval_s=READING_INTERVAL_S,
         ),
@@ -155,8 +155,8 @@ def nominal_plan(nominal: NominalBench, *, dosing: Dosing, settling: Settling, w
             dose_sd_ml=syringe.stop_sd_ml,
             gain_standard_uncertainty=0.0,
         ),
-        dosing=dosing,
-        settling=settling,
+        dosing=strategy.dosing,
+        settling=strategy.settling,
         end_points=EndPoints(expected=known.end_points, smallest_rise_mv=60.0, stop_at_last=True),
         limits=Limits(titrant_ml=9.0, run_time_s=7200.0, overrun_ml=1.0),
         vessel=Vessel(
