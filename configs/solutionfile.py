@@ -6,7 +6,8 @@ from typing import Annotated, Literal
 
 from pydantic import Field
 
-from configs.fields import Disagreement, Settings, SubstanceName, number
+from configs.catalogue import find_substance, near_substances
+from configs.fields import Disagreement, Settings, number, words
 from configs.simulation import StrongIonSettings
 
 Pka = Annotated[float, Field(ge=-15, le=30)]
@@ -14,12 +15,13 @@ Volume = Annotated[float, Field(ge=0, le=1e6)]
 
 
 class SolutionSubstanceSettings(Settings):
-    """A substance, by name or by its constants.
+    """A substance, by its name in the catalogue or by its constants.
 
-    By its name in the catalogue it brings the counter ions given there; by its constants it brings none.
+    By its name alone it brings the counter ions given there. With `pka` its constants count, the name is a label, and
+    it brings no counter ions.
     """
 
-    name: SubstanceName | None = Field(default=None, description="substance of the catalogue")
+    name: str | None = words("substance of the catalogue; with pka only a label", default=None)
     pka: tuple[Pka, ...] | None = Field(
         default=None, min_length=1, max_length=10, description="constants, ionic strength 0"
     )
@@ -27,16 +29,19 @@ class SolutionSubstanceSettings(Settings):
     concentration_mol_l: float = number(0, 20, "concentration of all its forms together")
 
     def disagreements(self) -> list[Disagreement]:
-        """Return a substance that is given twice, by halves or not at all."""
-        if self.name is not None:
-            both = [field for field in ("pka", "charge") if getattr(self, field) is not None]
-            return [
-                Disagreement(field, getattr(self, field), "nothing beside a name of the catalogue") for field in both
-            ]
-        if self.pka is None:
+        """Return a substance that is given by halves or not at all, or otherwise than the catalogue has it."""
+        if self.pka is not None:
+            if self.charge is None:
+                return [Disagreement("pka", "pka without charge", "pka with the charge of the fully protonated form")]
+            return []
+        if self.name is None:
             return [Disagreement("concentration_mol_l", "a substance without name and pka", "name, or pka and charge")]
-        if self.charge is None:
-            return [Disagreement("pka", "pka without charge", "pka with the charge of the fully protonated form")]
+        found = find_substance(self.name)
+        if found is None:
+            allowed = f"a substance of the catalogue{near_substances(self.name)}, or pka"
+            return [Disagreement("name", self.name, allowed)]
+        if self.charge is not None and self.charge != found.charge:
+            return [Disagreement("charge", self.charge, f"{found.charge}, the fully protonated form's of {found.name}")]
         return []
 
 

@@ -11,7 +11,8 @@ from typing import TYPE_CHECKING, TextIO
 
 from configs.catalogue import substance
 from configs.errors import HalfdropError
-from simulators.constants import debye_huckel_a_at, pka_at, pkw_at
+from simulators.constants import debye_huckel_a_at, pkw_at
+from simulators.contents import dissolved
 from simulators.solution import Medium, Mixture, SolutionError, StrongIon, WeakComponent, titration_states
 
 if TYPE_CHECKING:
@@ -95,25 +96,19 @@ def _dissolve(
     entry: SolutionSubstanceSettings, temperature_c: float, weak: list[WeakComponent], ions: list[StrongIon]
 ) -> None:
     concentration = entry.concentration_mol_l
-    if entry.name is None:
+    if entry.pka is not None or entry.name is None:
         pka, charge = entry.pka or (), entry.charge or 0
         weak.append(WeakComponent(pka=pka, charge=charge, concentration_mol_l=concentration))
         return
-    known = substance(entry.name)
-    if known.pka:
-        steps = zip(known.pka, known.enthalpy_kj_mol, known.heat_capacity_j_mol_k, strict=True)
-        pka = tuple(pka_at(*step, temperature_c) for step in steps)
-        weak.append(WeakComponent(pka=pka, charge=known.charge, concentration_mol_l=concentration))
-    if known.counter_ion_charge:
-        # counter ions are singly charged (sodium, potassium, chloride), as many as the charge asks for
-        sign = 1 if known.counter_ion_charge > 0 else -1
-        ions.append(StrongIon(charge=sign, concentration_mol_l=concentration * abs(known.counter_ion_charge)))
+    found = dissolved(substance(entry.name), concentration, temperature_c)
+    weak.extend(found.weak)
+    ions.extend(found.ions)
 
 
 def _temperature_warning(settings: SolutionSettings) -> str | None:
     lowest, highest = SOUND_PKA_TEMPERATURES_C
     entries = (*(settings.sample.substances or ()), *(settings.titrant.substances or ()))
-    named = [entry.name for entry in entries if entry.name is not None]
+    named = [entry.name for entry in entries if entry.name is not None and entry.pka is None]
     if not named or lowest <= settings.temperature_c <= highest:
         return None
     return (

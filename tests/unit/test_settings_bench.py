@@ -99,7 +99,8 @@ def test_wrong_bench(changed: str, into: str, problem: str) -> None:
     [
         ("{concentration_mol_l: 1}", "concentration_mol_l: got a substance without name and pka, allowed: name, or"),
         ("{pka: [4], concentration_mol_l: 1}", "pka: got pka without charge, allowed: pka with the charge of the"),
-        ("{name: KHP, charge: 0, concentration_mol_l: 1}", "charge: got 0, allowed: nothing beside a name of the"),
+        ("{name: KHP, charge: 1, concentration_mol_l: 1}", "charge: got 1, allowed: 0, the fully protonated form's of"),
+        ("{name: malik acid, concentration_mol_l: 1}", "name: got malik acid, allowed: a substance of the catalogue"),
         ("{pka: [99], charge: 0, concentration_mol_l: 1}", "pka[1]: got 99, allowed: -15 to 30"),
         ("{pka: [], charge: 0, concentration_mol_l: 1}", "pka: got a list of 0, allowed: a list of 1 to 10 entries"),
         ("{name: KHP, concentration_mol_l: -1}", "concentration_mol_l: got -1, allowed: 0 to 20 mol/L"),
