@@ -48,6 +48,7 @@ class BudgetRow:
     sensitivity: float | None
     contribution: float
     share: float
+    shared_id: str | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -241,4 +242,5 @@ def _row(group: SharedGroup, contribution: float, sensitivity: float, share: flo
         sensitivity=sensitivity if same_uncertainty else None,
         contribution=contribution,
         share=share,
+        shared_id=first.shared_id,
     )

@@ -3,7 +3,7 @@ import math
 import numpy as np
 import pytest
 import uncertainties
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from uncertainties import umath
 
@@ -21,6 +21,7 @@ values = st.floats(0.1, 100.0)
 relative = st.floats(1e-5, 1e-2)
 
 
+@settings(deadline=None)  # the first call imports scipy
 @given(st.tuples(values, values, values), st.tuples(relative, relative, relative))
 def test_sensitivities_agree_with_automatic_differentiation(x, u):
     quantities = [q(name, value, value * part) for name, value, part in zip("abc", x, u, strict=True)]
@@ -34,6 +35,7 @@ def test_sensitivities_agree_with_automatic_differentiation(x, u):
     assert ours.standard_uncertainty == pytest.approx(theirs.std_dev, rel=1e-6)
 
 
+@settings(deadline=None)  # the first call imports scipy
 @given(st.floats(-0.99, 0.99))
 def test_correlated_inputs_follow_the_covariance(r):
     quantities = [q("a", 3.0, 0.1), q("b", 2.0, 0.2)]
@@ -51,6 +53,7 @@ def test_correlated_inputs_follow_the_covariance(r):
     assert correlation_of(np.array(covariance), "a", "b").coefficient == pytest.approx(r)
 
 
+@settings(deadline=None)  # the first call imports scipy
 @given(st.floats(0.5, 50.0), st.floats(0.5, 50.0), st.floats(1e-5, 1e-2), st.integers(2, 5))
 def test_a_shared_gain_cancels_exactly_whatever_the_volumes(first, second, gain_u, protons):
     # standardisation and sample on one burette: its gain is in both volumes
