@@ -36,10 +36,10 @@ def inflection_bias_sd(inflection: Inflection, previous_ml: float) -> float:
     """Return how far equivalence may lie from an inflection, as a standard uncertainty in mL.
 
     To first order the distance is w^2/(Ve - Vp) times a factor of 1 to 5 (worked out here for weak acids of pKa 4 to 9,
-    phosphoric acid, carbonate and seawater), with w = 1/(ln 10 x slope) the jump's width; twice w^2/(Ve - Vp) is taken.
+    phosphoric acid, carbonate and seawater), with w = 1/(ln 10 x slope) the jump's width; three times that is taken.
     """
     width = 1.0 / (math.log(10.0) * inflection.slope)
-    return 2.0 * width**2 / max(inflection.volume_ml - previous_ml, width)
+    return 3.0 * width**2 / max(inflection.volume_ml - previous_ml, width)
 
 
 def from_shape(inflection: Inflection, previous_ml: float) -> tuple[Estimate, Estimate]:

@@ -23,11 +23,12 @@ from controller.evaluation.estimators import (
     from_shape,
     inverse_ladders,
 )
+from controller.evaluation.fitalone import by_fit_alone
 from controller.evaluation.gran import gran_before, gran_beyond
 from controller.evaluation.inflection import SMALLEST_RISE, Inflection, find_inflections, inflection_at
 from controller.evaluation.modelfit import ModelFit, fit_charge_balance
 from controller.evaluation.pka import HalfEquivalence, half_equivalence
-from controller.evaluation.remarks import curve_remarks, extrapolation_remarks
+from controller.evaluation.remarks import carbonate_remarks, curve_remarks, extrapolation_remarks
 from controller.evaluation.result import EndPoint, Evaluation
 
 #: fewer points than this make no curve
@@ -65,6 +66,9 @@ def evaluate(
     jumps = _with_detected(curve, jumps, detected_ml)
     jumps, cut = _clearest(jumps, end_points_expected)
     warnings = [*remarks, *cut]
+    alone = None if jumps else by_fit_alone(curve)
+    if alone is not None:
+        return _alone(curve, *alone, warnings)
     if not jumps:
         warnings += extrapolation_remarks(curve)
         return _nothing("no end point: the curve shows no jump that stands out from its noise", warnings, last)
@@ -76,6 +80,8 @@ def evaluate(
     halves = _halves(known, reported)
     warnings += curve_remarks(known, jumps, estimates, reported, fit)
     warnings += [h.remark for h in halves if h.remark is not None]
+    if strong and not curve.acid_titrant:
+        warnings += carbonate_remarks(estimates[0])
     if end_points_expected is not None and len(jumps) < end_points_expected:
         warnings.append(f"{len(jumps)} of {end_points_expected} expected end points found")
     return Evaluation(
@@ -109,6 +115,19 @@ def choose(estimates: list[Estimate]) -> Estimate:
     if line is not None and coarse and shape.standard_uncertainty_ml > _COARSE_RATIO * line.standard_uncertainty_ml:
         return line
     return shape
+
+
+def _alone(curve: Curve, estimate: Estimate, fit: ModelFit, warnings: list[str]) -> Evaluation:
+    halves = _halves(curve, [estimate])
+    said = "the curve shows no jump: the end point rests on the charge balance of the stated substance alone"
+    return Evaluation(
+        end_points=(_end_point(curve, estimate),),
+        half_equivalence=tuple(halves),
+        estimates=((estimate,),),
+        warnings=(*warnings, said, *(h.remark for h in halves if h.remark is not None)),
+        titrant_ml=float(curve.volume_ml[-1]),
+        details=_details(fit, []),
+    )
 
 
 def _nothing(reason: str, warnings: list[str], titrant_ml: float) -> Evaluation:

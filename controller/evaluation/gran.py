@@ -159,7 +159,7 @@ def titrant_used(curve: Curve) -> Array | None:
 def _line(
     curve: Curve, volume: Array, function: Array, use: Mask, *, name: str, far_first: bool, strong: bool | None = None
 ) -> GranLine | None:
-    """Take points from the far end of `use` inwards for as long as they lie on one line."""
+    """Take points from the far end of `use` inwards until two in a row do not lie on the line of the others."""
     order = np.flatnonzero(use & np.isfinite(function) & (function > 0.0))
     order = order[::-1] if far_first else order
     noise = np.hypot(signal_noise(curve), _MODEL_SD) * _LN10
@@ -167,11 +167,14 @@ def _line(
     if len(taken) < _FEWEST_POINTS:
         return None
     fit = _fit(curve, volume, function, noise, np.array(taken))
+    skipped = 0
     for i in order[_FEWEST_POINTS:]:
-        if fit is None:
-            return None
-        if abs(fit.predict(float(function[i])) - volume[i]) > 3.0 * fit.spread(float(function[i]), noise[i]):
+        if fit is None or skipped == 2:
             break
+        if abs(fit.predict(float(function[i])) - volume[i]) > 3.0 * fit.spread(float(function[i]), noise[i]):
+            skipped += 1
+            continue
+        skipped = 0
         taken.append(i)
         fit = _fit(curve, volume, function, noise, np.array(taken))
     if fit is None:

@@ -22,6 +22,8 @@ _GROUP_SD = 12.0
 _SIGNIFICANCE = 5.0
 #: ... and these are flatter than this share of it: a shoulder or the first rise of a weak acid is no end point
 _BASE_SHARE = 0.5
+#: a shoulder is remarked upon when it is this clear
+_SHOULDER_SHARE, _SHOULDER_SIGNIFICANCE = 0.75, 10.0
 #: ... and the signal changes at least by this between them, units of pH (30 mV)
 SMALLEST_RISE = 0.5
 
@@ -114,18 +116,22 @@ def find_inflections(curve: Curve, *, smallest_rise: float = SMALLEST_RISE) -> t
     found: list[Inflection] = []
     remarks: list[str] = []
     for j in range(len(s.slope)):
-        left, right = _flank(s.slope, j, -1), _flank(s.slope, j, +1)
+        left, right = _flank(s, j, -1), _flank(s, j, +1)
         if left is None or right is None or not _is_peak(s.slope, j):
             continue
         peak = float(s.slope[j])
         base_at = left if s.slope[left] > s.slope[right] else right
         base = float(s.slope[base_at])
-        stands_out = peak - base >= _SIGNIFICANCE * math.hypot(float(s.slope_se[j]), float(s.slope_se[base_at]))
+        stands_out = all(
+            peak - s.slope[k] >= _SIGNIFICANCE * math.hypot(float(s.slope_se[j]), float(s.slope_se[k]))
+            for k in (left, right)
+        )
+        clearly = peak - base >= _SHOULDER_SIGNIFICANCE * float(s.slope_se[j])
         rise = abs(float(s.signal[right] - s.signal[left + 1])) if right > left + 1 else 0.0
         if not stands_out or rise < smallest_rise:
             continue
         if base > _BASE_SHARE * peak:
-            if base < 0.8 * peak:
+            if clearly and base < _SHOULDER_SHARE * peak:
                 remarks.append(
                     f"the curve steepens near {s.middle_ml[j]:.4g} mL, but the slope does not fall to half of it on "
                     "both sides: a shoulder, not counted as an end point"
@@ -159,11 +165,12 @@ def _is_peak(slope: Array, j: int) -> bool:
     return bool(0 < j < len(slope) - 1 and slope[j] > slope[j - 1] and slope[j] >= slope[j + 1] and slope[j] > 0.0)
 
 
-def _flank(slope: Array, j: int, way: int) -> int | None:
-    """Return where the slope is least between peak j and the next higher peak (or the end of the data)."""
+def _flank(s: Slopes, j: int, way: int) -> int | None:
+    """Return where the slope is surely least between peak j and the next higher peak (or the end of the data)."""
+    surely = s.slope + 2.0 * s.slope_se
     lowest, k = None, j + way
-    while 0 <= k < len(slope) and slope[k] <= slope[j]:
-        if lowest is None or slope[k] < slope[lowest]:
+    while 0 <= k < len(surely) and s.slope[k] <= s.slope[j]:
+        if lowest is None or surely[k] < surely[lowest]:
             lowest = k
         k += way
     return lowest

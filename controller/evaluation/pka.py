@@ -123,6 +123,8 @@ def _refusal(
     single_proton: bool | None,
 ) -> str | None:
     previous_ml, half_ml = region_ml
+    if curve.pka == ():
+        return "no pKa: a strong acid or base"
     if single_proton is False:
         return "no pKa: more than one proton is exchanged before this end point; the pH is only that half-way"
     if used is not None:

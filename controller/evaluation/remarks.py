@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 
 from controller.evaluation.agreement import disagreements
+from controller.evaluation.branches import branch_remarks
+from controller.evaluation.carbonate import carbonate_gap
 from controller.evaluation.curve import Curve
 from controller.evaluation.estimate import GRAN_BEFORE, GRAN_BEYOND, SECOND_DERIVATIVE, Estimate
 from controller.evaluation.estimators import NOT_CORRECTED, OFF_LINE
@@ -43,7 +45,8 @@ def curve_remarks(
             if e.estimator in {GRAN_BEYOND, GRAN_BEFORE} and e.remark not in (None, NOT_CORRECTED, OFF_LINE)
         ]
         out += _shape_warnings(i, jump, found, chosen)
-    return out + _outliers(curve, fit)
+    branches = branch_remarks(curve, jumps[0].volume_ml) if len(jumps) == 1 else []
+    return out + (branches or _outliers(curve, fit))
 
 
 def _outliers(curve: Curve, fit: ModelFit | None) -> list[str]:
@@ -93,4 +96,19 @@ def extrapolation_remarks(curve: Curve) -> list[str]:
     return [
         f"a Gran line through the points from {line.first_ml:g} mL on points to {line.estimate.volume_ml:.4g} mL; that "
         "is outside of the data that show it, so it is a hint and no end point"
+    ]
+
+
+def carbonate_remarks(estimates: list[Estimate]) -> list[str]:
+    """Say what the gap between both Gran lines of a strong acid tells of carbonate in the base."""
+    lines = {e.estimator: e for e in estimates if e.sound}
+    if GRAN_BEFORE not in lines or GRAN_BEYOND not in lines:
+        return []
+    found = carbonate_gap(lines[GRAN_BEFORE], lines[GRAN_BEYOND])
+    if not found.significant:
+        return []
+    return [
+        f"the Gran lines of this strong acid end {found.gap_ml:.4f} +/- {found.standard_uncertainty_ml:.4f} mL apart: "
+        f"about {100.0 * found.carbonate_share:.1f} % of the titrant's alkalinity is carbonate; use carbonate-free base "
+        "with a guard tube, and standardise at the same end point pH"
     ]
