@@ -61,15 +61,26 @@ class ScaledClock:
         if not (math.isfinite(scale) and scale > 0):
             raise ValueError(f"time scale: got {scale!r}, allowed: a number above 0")
         self.scale = scale
-        self._start_s, self._start_utc_s = time.monotonic(), time.time()
+        begun_s, begun_utc_s = time.monotonic(), time.time()
+        self._leg = (begun_s, begun_s, begun_utc_s, begun_utc_s, scale)  # real and scaled time where it began, twice
 
     def now_s(self) -> float:
         """Scaled seconds, beginning at the monotonic time of the start."""
-        return self._start_s + (time.monotonic() - self._start_s) * self.scale
+        began_s, reached_s, _, _, scale = self._leg
+        return reached_s + (time.monotonic() - began_s) * scale
 
     def utc_s(self) -> float:
         """POSIX time in s at the start, moved on by scaled time."""
-        return self._start_utc_s + (time.time() - self._start_utc_s) * self.scale
+        _, _, began_utc_s, reached_utc_s, scale = self._leg
+        return reached_utc_s + (time.time() - began_utc_s) * scale
+
+    def change_scale(self, scale: float) -> None:
+        """Let time pass at another scale from now on; a wait under way ends when it would have ended before."""
+        if not (math.isfinite(scale) and scale > 0):
+            raise ValueError(f"time scale: got {scale!r}, allowed: a number above 0")
+        # one assignment: another thread may be reading the time
+        self._leg = (time.monotonic(), self.now_s(), time.time(), self.utc_s(), scale)
+        self.scale = scale
 
     def wait(self, seconds: float, stop: threading.Event | None = None) -> bool:
         """Wait `seconds` of scaled time; True if `stop` was set."""

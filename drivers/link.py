@@ -10,80 +10,22 @@ from __future__ import annotations
 import threading
 import time
 from collections import deque
-from collections.abc import Callable
-from dataclasses import dataclass
-from typing import Any, Literal, NoReturn, Protocol
+from typing import Any, NoReturn
 
 from drivers.clock import Clock, Line, ManualClock
 from drivers.errors import DeviceError, DeviceGarbledError, DeviceGoneError, DeviceSilentError, StoppedError
 from drivers.framing import FrameReader
+from drivers.transport import LinkSettings, TrafficLog, Transport, opener_of
+
+__all__ = ["Link", "LinkSettings", "TrafficLog", "open_link"]
 
 #: longest single blocking read; between two of them a stop gets through
 SLICE_S = 0.05
 WRITE_DEADLINE_S = 1.0
 #: real time within which bytes on a virtual line must arrive under a ManualClock
 ARRIVAL_LIMIT_S = 1.0
-TRAFFIC_ENTRIES = 2000
 #: reads after which a port that never falls still is used as it is
 MOST_STALE_READS = 4096
-
-
-class Transport(Protocol):
-    """What the link needs of a port; pyserial's ports have it. Reads and writes must have time-outs."""
-
-    @property
-    def in_waiting(self) -> int:
-        """Bytes that can be read at once (a port that cannot count says 1 for some)."""
-        ...
-
-    def read(self, size: int = 1, /) -> bytes:
-        """Return up to `size` bytes; fewer, or none, after the time-out."""
-        ...
-
-    def write(self, data: bytes, /) -> int | None:
-        """Send `data`."""
-        ...
-
-    def close(self) -> None:
-        """Give the port back."""
-        ...
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class LinkSettings:
-    """How a port is opened. Many boards reset when DTR changes, so both lines are set before the port is opened."""
-
-    baud_rate: int = 115_200
-    data_bits: Literal[5, 6, 7, 8] = 8
-    parity: Literal["none", "even", "odd"] = "none"
-    stop_bits: Literal[1, 2] = 1
-    dtr: bool = False
-    rts: bool = False
-    reply_deadline_s: float = 0.5
-
-
-Opener = Callable[[str, LinkSettings], Transport]
-_OPENERS: dict[str, Opener] = {}
-
-
-def register_scheme(scheme: str, opener: Opener) -> None:
-    """Make URLs `scheme://...` openable by something other than pyserial."""
-    _OPENERS[scheme] = opener
-
-
-class TrafficLog:
-    """The last messages of a line, for a bug report; bounded."""
-
-    def __init__(self, entries: int = TRAFFIC_ENTRIES) -> None:
-        self.entries: deque[tuple[float, Literal["sent", "received"], bytes]] = deque(maxlen=entries)
-
-    def sent(self, at_s: float, data: bytes) -> None:
-        """Note what went out."""
-        self.entries.append((at_s, "sent", data))
-
-    def received(self, at_s: float, data: bytes) -> None:
-        """Note what came in."""
-        self.entries.append((at_s, "received", data))
 
 
 def open_link(
@@ -328,7 +270,7 @@ def _told(failure: Exception) -> str:
 
 
 def _open_port(url: str, settings: LinkSettings) -> Transport:
-    opener = _OPENERS.get(url.partition("://")[0])
+    opener = opener_of(url)
     if opener is not None:
         return opener(url, settings)
     import serial

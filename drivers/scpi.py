@@ -10,7 +10,6 @@ from __future__ import annotations
 import itertools
 import math
 import re
-from collections import deque
 from collections.abc import Iterable, Iterator
 from functools import lru_cache
 from typing import NamedTuple
@@ -18,7 +17,6 @@ from typing import NamedTuple
 #: what SCPI-1999 (volume 1, 7.2.1.4 and 7.2.1.5) gives for "not a number" and infinity
 NOT_A_NUMBER, INFINITE = 9.91e37, 9.9e37
 END = b"\n"
-QUEUE_LENGTH = 10
 
 #: numbers and texts of SCPI-1999 volume 2, 21.8
 ERROR_TEXTS = {
@@ -289,29 +287,3 @@ def read_text(token: bytes) -> str:
     if token[-1:] != quote or quote in inner.replace(quote * 2, b""):
         raise ScpiError(-151, token[:40].decode("ascii", "replace"))
     return inner.replace(quote * 2, quote).decode("ascii", "replace")
-
-
-class ErrorQueue:
-    """Errors in the order in which they came; when it is full the last becomes -350 (SCPI-1999 volume 2, 21.8.1)."""
-
-    def __init__(self, length: int = QUEUE_LENGTH) -> None:
-        self._held: deque[tuple[int, str]] = deque()
-        self._length = length
-
-    def __len__(self) -> int:
-        return len(self._held)
-
-    def push(self, error: ScpiError) -> None:
-        """Add an error."""
-        if len(self._held) < self._length:
-            self._held.append((error.number, error.text))
-        else:
-            self._held[-1] = (-350, ERROR_TEXTS[-350])
-
-    def pop(self) -> tuple[int, str]:
-        """Take the oldest out; (0, "No error") when there is none."""
-        return self._held.popleft() if self._held else (0, ERROR_TEXTS[0])
-
-    def clear(self) -> None:
-        """Forget all."""
-        self._held.clear()

@@ -7,32 +7,18 @@ itself when no message has come for the watchdog's time while it moves.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
-from typing import ParamSpec
 
-from configs.errors import HalfdropError
 from drivers import scpi_tree as tree
 from drivers.identity import Identity
 from drivers.pump import DoseState, LastDose, PumpStatus, Refill
 from drivers.scpi import Header, ScpiError, read_integer, read_number, write_values
 from simulators.instrument import Handler, Instrument, none_of, one_of, query
-from simulators.mechanism import Mechanism, Sensor
+from simulators.mechanism import Mechanism, Sensor, begin_motion
 
 DEFAULT_WATCHDOG_S = 5.0
 LOWEST_WATCHDOG_S, HIGHEST_WATCHDOG_S = 0.5, 60.0
 #: remaining times are told rounded up to this, so that the motion is over when it is asked again
 REMAINING_RESOLUTION_S = 1e-3
-
-
-_Moving = ParamSpec("_Moving")
-
-
-def _begin(motion: Callable[_Moving, None], *args: _Moving.args, **kwargs: _Moving.kwargs) -> None:
-    """Begin a motion; what the mechanics cannot do is a hardware error on the wire."""
-    try:
-        motion(*args, **kwargs)
-    except HalfdropError as refusal:
-        raise ScpiError(-240, refusal.what) from refusal
 
 
 class PumpDevice(Instrument):
@@ -185,7 +171,7 @@ class PumpDevice(Instrument):
         self._must_stand()
         _, steps, rate_ml_min = self._armed
         self._armed = None
-        _begin(self.mechanism.begin, steps, rate_ml_min, at_s)
+        begin_motion(self.mechanism.begin, steps, rate_ml_min, at_s)
         self._dose_number, self._dose_steps, self._dose_state = number, 0, "moving"
         self._moves(at_s, dosing=True)
 
@@ -195,7 +181,7 @@ class PumpDevice(Instrument):
         if self.refill != "valve":
             raise ScpiError(-241, "there is no refill valve, the syringe is filled by hand")
         self._armed = None
-        _begin(self.mechanism.begin_fill, at_s)
+        begin_motion(self.mechanism.begin_fill, at_s)
         self._moves(at_s, dosing=False)
 
     def _prime(self, parameters: tuple[bytes, ...], at_s: float) -> None:
@@ -206,7 +192,7 @@ class PumpDevice(Instrument):
         if steps != read_integer(parameters[1]):
             raise ScpiError(-222, f"{steps} steps are not what was told in steps")
         self._armed = None
-        _begin(self.mechanism.begin_prime, steps, self._rates[2], at_s)
+        begin_motion(self.mechanism.begin_prime, steps, self._rates[2], at_s)
         self._moves(at_s, dosing=False)
 
     def _stop(self, parameters: tuple[bytes, ...], at_s: float) -> None:

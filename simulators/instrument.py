@@ -7,12 +7,13 @@ nothing happens between two calls but what `next_event_s` announces.
 from __future__ import annotations
 
 import math
+from collections import deque
 from collections.abc import Callable, Mapping
 
 from drivers import scpi_tree as tree
 from drivers.framing import FrameReader
 from drivers.identity import Identity
-from drivers.scpi import END, ErrorQueue, Header, ScpiError, join_units, parse_message, read_integer, write_values
+from drivers.scpi import END, ERROR_TEXTS, Header, ScpiError, join_units, parse_message, read_integer, write_values
 
 #: a handler takes the parameters and the time in s; a query's gives its reply unit
 Handler = Callable[[tuple[bytes, ...], float], bytes | None]
@@ -21,6 +22,7 @@ Handler = Callable[[tuple[bytes, ...], float], bytes | None]
 OPERATION_COMPLETE, QUERY_ERROR, DEVICE_ERROR, EXECUTION_ERROR, COMMAND_ERROR, POWER_ON = 1, 4, 8, 16, 32, 128
 SCPI_VERSION = b"1999.0"
 MOST_STALLED = 4
+QUEUE_LENGTH = 10
 
 
 def event_bit(number: int) -> int:
@@ -32,6 +34,32 @@ def event_bit(number: int) -> int:
     if -500 < number <= -400:
         return QUERY_ERROR
     return DEVICE_ERROR
+
+
+class ErrorQueue:
+    """Errors in the order in which they came; when it is full the last becomes -350 (SCPI-1999 volume 2, 21.8.1)."""
+
+    def __init__(self, length: int = QUEUE_LENGTH) -> None:
+        self._held: deque[tuple[int, str]] = deque()
+        self._length = length
+
+    def __len__(self) -> int:
+        return len(self._held)
+
+    def push(self, error: ScpiError) -> None:
+        """Add an error."""
+        if len(self._held) < self._length:
+            self._held.append((error.number, error.text))
+        else:
+            self._held[-1] = (-350, ERROR_TEXTS[-350])
+
+    def pop(self) -> tuple[int, str]:
+        """Take the oldest out; (0, "No error") when there is none."""
+        return self._held.popleft() if self._held else (0, ERROR_TEXTS[0])
+
+    def clear(self) -> None:
+        """Forget all."""
+        self._held.clear()
 
 
 class Instrument:

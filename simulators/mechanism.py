@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
-from typing import Protocol
+from collections.abc import Callable
+from typing import ParamSpec, Protocol
+
+from configs.errors import HalfdropError
+from drivers.scpi import ScpiError
 
 
 class Mechanism(Protocol):
@@ -81,3 +85,14 @@ class Sensor(Protocol):
     def read(self, at_s: float, sample_index: int) -> SensorReading:
         """Read at `at_s`; random numbers are keyed by the index, which counts readings from 1."""
         ...
+
+
+_Moving = ParamSpec("_Moving")
+
+
+def begin_motion(motion: Callable[_Moving, None], *args: _Moving.args, **kwargs: _Moving.kwargs) -> None:
+    """Begin a motion; what the mechanics cannot do is a hardware error on the wire."""
+    try:
+        motion(*args, **kwargs)
+    except HalfdropError as refusal:
+        raise ScpiError(-240, refusal.what) from refusal

@@ -7,148 +7,68 @@ thread, or by the caller of `run`. Latency of replies is counted in real seconds
 
 from __future__ import annotations
 
+import errno
 import math
+import os
 import select
 import socket
 import threading
-import time
-from collections import deque
-from collections.abc import Callable
 from types import TracebackType
-from typing import Literal, Protocol, Self
+from typing import Literal, Self
 
-from configs.errors import HalfdropError
-from drivers.clock import Clock, Line, ManualClock, real_seconds_scale
-from drivers.link import ARRIVAL_LIMIT_S, SLICE_S
+from drivers.clock import Clock, ManualClock, real_seconds_scale
+from drivers.link import SLICE_S
+from simulators.device_end import Device, VirtualPort
 from simulators.devices import PumpDevice
-from simulators.routes import MemoryRoute, PtyRoute, Route, TcpRoute
+from simulators.routes import MOST_BYTES, MemoryRoute, TcpRoute
 
 RouteName = Literal["memory", "pty", "tcp"]
 LONGEST_SLEEP_S = 0.2
-#: what a fault does to a message's bytes on their way; b"" loses them
-Tamper = Callable[[bytes], bytes]
+_NOT_NOW = (errno.EAGAIN, errno.EWOULDBLOCK)
 
 
-class Device(Protocol):
-    """What is served: bytes in, bytes out, pure in time (s of the bench's clock)."""
+class PtyRoute:
+    """A pseudo-terminal. The slave end is kept open here too, so that a link may come and go."""
 
-    def feed(self, data: bytes, at_s: float) -> bytes:
-        """Take bytes and return the reply."""
-        ...
+    def __init__(self) -> None:
+        import pty
+        import tty
 
-    def advance(self, at_s: float) -> bytes:
-        """Let what was due happen; return what the device says of itself."""
-        ...
+        self._master, self._slave = pty.openpty()
+        tty.setraw(self._slave)
+        os.set_blocking(self._master, False)
+        self.url = os.ttyname(self._slave)
 
-    def next_event_s(self) -> float:
-        """When something next happens of itself."""
-        ...
+    def take(self, wait_s: float = 0.0) -> bytes:
+        """Return what the link has written."""
+        try:
+            return os.read(self._master, MOST_BYTES)
+        except OSError as failure:
+            if failure.errno not in _NOT_NOW:
+                raise
+        if wait_s <= 0.0 or not select.select([self._master], [], [], wait_s)[0]:
+            return b""
+        return os.read(self._master, MOST_BYTES)
 
+    def give(self, data: bytes) -> int:
+        """Send to whoever holds the slave end."""
+        try:
+            return os.write(self._master, data)
+        except OSError as failure:
+            if failure.errno in _NOT_NOW:
+                return 0  # nobody reads, and the terminal's buffer is full
+            raise
 
-class LostBytesError(HalfdropError):
-    """Bytes written at one end of a virtual line did not arrive at the other."""
+    def waits_on(self) -> list[int]:
+        """The master end."""
+        return [self._master]
 
-    exit_status = 3
-
-
-class VirtualPort:
-    """One device on one line. `spoil_request` and `spoil_reply` are faults of the line, for tests and campaigns."""
-
-    def __init__(self, device: Device, clock: Clock, *, latency_s: float) -> None:
-        self.device, self.latency_s = device, latency_s
-        self.line = Line()
-        self.spoil_request: Tamper | None = None
-        self.spoil_reply: Tamper | None = None
-        self.route: Route
-        self._clock = clock
-        self._manual = isinstance(clock, ManualClock)
-        self._scale = real_seconds_scale(clock)
-        self._replies: deque[tuple[float, bytes]] = deque()
-
-    @property
-    def url(self) -> str:
-        """What a link opens."""
-        return self.route.url
-
-    def act(self) -> bool:
-        """Take what has come, let the device answer, send what is due (ManualClock's party).
-
-        Raises:
-            LostBytesError: bytes sent to this port do not arrive within a second of real time.
-        """
-        line = self.line
-        missing = line.link_written - line.device_taken
-        if missing and not line.broken:
-            self._take(missing)
-            return True
-        return self.act_of_itself()
-
-    def act_of_itself(self) -> bool:
-        """Let the device do what is due now and send replies that are due."""
-        now_s = self._clock.now_s()
-        busy = False
-        if self.device.next_event_s() <= now_s:
-            self._answer(self.device.advance(now_s), now_s)
-            busy = True
-        while self._replies and self._replies[0][0] <= now_s:
-            self._send(self._replies.popleft()[1])
-            busy = True
-        return busy
-
-    def next_event_s(self) -> float:
-        """When the device acts of itself, or a reply is due."""
-        event_s = self.device.next_event_s()
-        return min(event_s, self._replies[0][0]) if self._replies else event_s
-
-    def take_what_came(self) -> bool:
-        """Real time: take bytes without waiting."""
-        data = self.route.take()
-        if data:
-            self._feed(data)
-        return bool(data)
-
-    def unplug(self) -> None:
-        """Take the device's end away, as a pulled cable does."""
-        self.line.broken = True
-        self.route.close()
-
-    def _take(self, missing: int) -> None:
-        limit_s = 0.0
-        while missing > 0:
-            data = self.route.take(ARRIVAL_LIMIT_S if limit_s else 0.0)
-            if not data:
-                limit_s = limit_s or time.monotonic() + ARRIVAL_LIMIT_S
-                if time.monotonic() > limit_s:
-                    raise LostBytesError(
-                        f"{missing} bytes did not arrive within {ARRIVAL_LIMIT_S:g} s",
-                        where=f"virtual port {self.url}",
-                        remedy="Open each virtual port from one program only",
-                    )
-                continue
-            missing -= len(data)
-            self.line.device_taken += len(data)
-            self._feed(data)
-
-    def _feed(self, data: bytes) -> None:
-        now_s = self._clock.now_s()
-        if self.spoil_request is not None:
-            data = self.spoil_request(data)
-        self._answer(self.device.feed(data, now_s), now_s)
-
-    def _answer(self, reply: bytes, now_s: float) -> None:
-        if not reply:
-            return
-        if self.spoil_reply is not None:
-            reply = self.spoil_reply(reply)
-        if self.latency_s:
-            self._replies.append((now_s + self.latency_s * self._scale, reply))
-        else:
-            self._send(reply)
-
-    def _send(self, reply: bytes) -> None:
-        if self._manual and not self.line.attached:
-            return
-        self.line.device_written += self.route.give(reply)
+    def close(self) -> None:
+        """Close both ends."""
+        for end in (self._master, self._slave):
+            if end >= 0:
+                os.close(end)
+        self._master = self._slave = -1
 
 
 class VirtualPorts:

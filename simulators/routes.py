@@ -1,18 +1,16 @@
-"""The device's end of a line: in memory, on a pseudo-terminal (POSIX), or on a TCP socket of this computer."""
+"""Ways to a virtual device: in memory, or on a TCP socket of this computer (pseudo-terminals: simulators/port.py)."""
 
 from __future__ import annotations
 
 import errno
-import os
 import select
 import socket
 from collections.abc import Callable
 from typing import Protocol
 
-from drivers.link import LinkSettings, register_scheme
+from drivers.transport import LinkSettings, register_scheme
 
 MOST_BYTES = 4096
-_NOT_NOW = (errno.EAGAIN, errno.EWOULDBLOCK)
 
 
 class Route(Protocol):
@@ -130,50 +128,6 @@ def _open_memory(url: str, settings: LinkSettings) -> MemoryPort:
 
 
 register_scheme("memory", _open_memory)
-
-
-class PtyRoute:
-    """A pseudo-terminal. The slave end is kept open here too, so that a link may come and go."""
-
-    def __init__(self) -> None:
-        import pty
-        import tty
-
-        self._master, self._slave = pty.openpty()
-        tty.setraw(self._slave)
-        os.set_blocking(self._master, False)
-        self.url = os.ttyname(self._slave)
-
-    def take(self, wait_s: float = 0.0) -> bytes:
-        """Return what the link has written."""
-        try:
-            return os.read(self._master, MOST_BYTES)
-        except OSError as failure:
-            if failure.errno not in _NOT_NOW:
-                raise
-        if wait_s <= 0.0 or not select.select([self._master], [], [], wait_s)[0]:
-            return b""
-        return os.read(self._master, MOST_BYTES)
-
-    def give(self, data: bytes) -> int:
-        """Send to whoever holds the slave end."""
-        try:
-            return os.write(self._master, data)
-        except OSError as failure:
-            if failure.errno in _NOT_NOW:
-                return 0  # nobody reads, and the terminal's buffer is full
-            raise
-
-    def waits_on(self) -> list[int]:
-        """The master end."""
-        return [self._master]
-
-    def close(self) -> None:
-        """Close both ends."""
-        for end in (self._master, self._slave):
-            if end >= 0:
-                os.close(end)
-        self._master = self._slave = -1
 
 
 class TcpRoute:

@@ -47,8 +47,11 @@ def main() -> None:
         clock = ManualClock()
         ports = VirtualPorts(clock)
         identity = Identity(maker="Cidery Workshop", model="Glass Probe", serial=route, firmware="1.0")
-        port = ports.add(f"reading cost {route}", ProbeDevice(FlatSensor(), identity), route)
-        probes[route] = (ScpiProbe(open_link(port.url, clock=clock, device="probe"), clock), clock, ports)
+        lines = [
+            ports.add(f"{name} {route}", ProbeDevice(FlatSensor(), identity), route) for name in ("probe", "other")
+        ]
+        links = [open_link(port.url, clock=clock, device="probe") for port in lines]  # a bench has two lines
+        probes[route] = (ScpiProbe(links[0], clock), clock, ports)
     costs: dict[str, list[float]] = {route: [] for route in routes}
     for _ in range(ROUNDS):
         for route, (probe, clock, _) in probes.items():

@@ -17,8 +17,9 @@ from drivers.identity import Identity
 from drivers.link import Link, LinkSettings, TrafficLog, open_link
 from drivers.scpi_probe import ScpiProbe
 from drivers.scpi_pump import ScpiPump
+from simulators.device_end import VirtualPort
 from simulators.devices import ProbeDevice, PumpDevice
-from simulators.port import VirtualPort, VirtualPorts
+from simulators.port import VirtualPorts
 
 _NAMES = itertools.count()
 PUMP_IDENTITY = Identity(maker="Cidery Workshop", model="Syringe Burette", serial="B-7", firmware="1.0")

@@ -8,11 +8,11 @@ from collections import deque
 import pytest
 import serial
 
-from drivers import link as link_module
 from drivers.clock import ManualClock, SystemClock
 from drivers.errors import DeviceGarbledError, DeviceGoneError, DeviceSilentError, StoppedError
 from drivers.link import LinkSettings, TrafficLog, open_link
 from drivers.scpi_probe import ScpiProbe
+from drivers.transport import register_scheme
 
 
 class ScriptedPort:
@@ -49,12 +49,12 @@ class ScriptedPort:
 
 
 @pytest.fixture
-def link_to(monkeypatch):
+def link_to():
     """Opens a link to a scripted port, in real time with short deadlines."""
     links = []
 
     def opener(port, **kwargs):
-        monkeypatch.setitem(link_module._OPENERS, "scripted", lambda url, settings: port)
+        register_scheme("scripted", lambda url, settings: port)
         settings = LinkSettings(reply_deadline_s=0.02)
         links.append(open_link("scripted://port", settings, clock=SystemClock(), device="probe", **kwargs))
         return links[-1]

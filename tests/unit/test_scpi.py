@@ -13,7 +13,6 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from drivers.scpi import (
-    ErrorQueue,
     Header,
     ScpiError,
     Unit,
@@ -28,6 +27,7 @@ from drivers.scpi import (
     write_number,
     write_values,
 )
+from simulators.instrument import ErrorQueue
 
 
 # The path rules are those of SCPI-1999 volume 1, 6.2.4: a colon begins at the root, without one the header continues at
