@@ -10,7 +10,7 @@ import hashlib
 import os
 import sys
 import time
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -252,6 +252,11 @@ def clock_of(time_scale: str | None) -> Clock:
             remedy="Use 1 for real time, 20 to watch",
         ) from None
     return SystemClock() if scale == 1 else ScaledClock(scale)
+
+
+def time_scale_of(clock: Clock) -> Callable[[float], None] | None:
+    """Return what changes how fast a simulated bench's time passes; None where time is real, or passes by itself."""
+    return clock.change_scale if isinstance(clock, ScaledClock) else None
 
 
 def simulated_world(

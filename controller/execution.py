@@ -124,8 +124,20 @@ class Execution:
         raise TypeError(f"{type(action).__name__} is no action that devices carry out")
 
     def stopped(self, why: str | None = None) -> Command:
-        """Return the command that ends the run."""
+        """Return the command that ends the run, or the one that pauses it where the stop switch is only held."""
+        if why is None and self._stop.held:
+            return self._held()
         return Command(name="stop", at_s=self.at_s(), text=why or self._stop.why())
+
+    def _held(self) -> Command:
+        """See to it that the pump stands, then take the hold back; a halt that is not confirmed ends the run."""
+        why = self._stop.why()
+        if not (self.stop_confirmed or self.halt(why)):
+            self._stop.pull("operator", f"{why}; the pump did not confirm that it stands")
+            return self.stopped()
+        self.stop_confirmed = None
+        self._stop.release()
+        return Command(name="pause", at_s=self.at_s(), text=why)
 
     def halt(self, why: str) -> bool:
         """Stop the pump now; True when it confirmed that it stands. What comes of it is written down afterwards."""

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import contextlib
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 from configs.errors import HalfdropError
@@ -209,20 +209,21 @@ class _Run:
         return None if self.undone > MOST_UNDONE else answer
 
     def _ending(self) -> bool:
-        return self.stop.event.is_set() or self.guard.breach is not None
+        return (self.stop.event.is_set() and not self.stop.held) or self.guard.breach is not None
 
     def _instead(self) -> Observation | None:
         """Return what comes before the action, which then is not carried out: a stop, a gap, a command."""
         self.guard.saw_time(self.execution.at_s())
         if self.stop.event.is_set():
-            if not self.execution.stop_confirmed:
+            if not self.stop.held and not self.execution.stop_confirmed:
                 self.execution.halt(self.stop.why())
             return self.execution.stopped()
         if self.guard.breach is not None:
             return self.execution.stopped(self.guard.breach)
         gap = self._gap()
         if gap is None and self.commands is not None:
-            return self.commands.take()
+            command = self.commands.take()
+            return None if command is None else replace(command, at_s=self.execution.at_s())
         return gap
 
     def _gap(self) -> Resumed | None:

@@ -1,4 +1,7 @@
-"""What people do to a run while it goes on: the stop switch, which every wait looks at, and commands."""
+"""What people do to a run while it goes on: the stop switch, which every wait looks at, and commands.
+
+A hold of the switch halts the pump at once like a stop does, but the run then waits for an answer: go on, or end.
+"""
 
 from __future__ import annotations
 
@@ -17,6 +20,7 @@ _WORDS: dict[StopKind, str] = {
     "terminate": "terminated by the system",
     "operator": "stopped by the operator",
 }
+HALTED = "halted by the operator"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -33,6 +37,8 @@ class StopSwitch:
 
     event: threading.Event = field(default_factory=threading.Event)
     request: StopRequest | None = None
+    _hold: str | None = None
+    _holding: threading.Lock = field(default_factory=threading.Lock)  # never taken by `pull`: it may be a signal's
 
     def pull(self, kind: StopKind, why: str = "") -> None:
         """Ask for the stop; the first request counts."""
@@ -40,9 +46,30 @@ class StopSwitch:
             self.request = StopRequest(kind=kind, why=why or _WORDS[kind])
         self.event.set()
 
+    def hold(self, why: str = HALTED) -> None:
+        """Cut short whatever goes on, without ending the run; may be called from another thread."""
+        with self._holding:
+            self._hold = why
+            self.event.set()
+
+    @property
+    def held(self) -> bool:
+        """True while a hold stands that no stop has overtaken."""
+        return self._hold is not None and self.request is None
+
+    def release(self) -> None:
+        """Take the hold back, once the pump stands: waits and devices work again."""
+        with self._holding:
+            self._hold = None
+            self.event.clear()
+        if self.request is not None:  # pulled meanwhile
+            self.event.set()
+
     def why(self) -> str:
         """Return the reason in words."""
-        return self.request.why if self.request is not None else _WORDS["operator"]
+        if self.request is not None:
+            return self.request.why
+        return self._hold or _WORDS["operator"]
 
 
 class Commands(Protocol):

@@ -8,7 +8,8 @@ from contextlib import ExitStack
 
 from configs.errors import HalfdropError
 from controller.amounts import amount_of_plan
-from controller.assembly import OpenBench, Opening, is_simulated, open_bench
+from controller.assembly import OpenBench, Opening, is_simulated, open_bench, time_scale_of
+from controller.commandport import command_port
 from controller.commands.lines import Lines, result_lines
 from controller.commands.output import print_json
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
@@ -90,18 +91,20 @@ def _on_open_bench(
     )
     sink = new_record(lab.runs, utc_s=bench.clock.utc_s(), label=plan.method_name)
     journal = Journal(sink, bench.clock, name=str(sink.path))
-    return carry_out(
-        plan,
-        titrate(plan),
-        bench.devices,
-        journal,
-        clock=bench.clock,
-        stop=bench.stop,
-        operator_name=operator_name,
-        hashes=picked.hashes,
-        on_progress=Lines(sys.stderr),
-        amount_of=amount_of_plan,
-    )
+    with command_port(bench.stop, sink.path, set_time_scale=time_scale_of(bench.clock)) as commands:
+        return carry_out(
+            plan,
+            titrate(plan),
+            bench.devices,
+            journal,
+            clock=bench.clock,
+            stop=bench.stop,
+            commands=commands,
+            operator_name=operator_name,
+            hashes=picked.hashes,
+            on_progress=Lines(sys.stderr),
+            amount_of=amount_of_plan,
+        )
 
 
 def tell(result: RunResult, *, as_json: bool) -> None:
