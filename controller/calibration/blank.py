@@ -11,7 +11,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 from configs.errors import HalfdropError
-from controller.calibration.validity import Validity
+from controller.calibration.validity import SAME_END_POINT_PH, Validity, end_point_words
 from controller.evaluation.grouping import Correlation
 from controller.evaluation.quantity import Quantity
 from controller.evaluation.statistics import mean_of, standard_deviation_of
@@ -19,8 +19,6 @@ from controller.evaluation.uncertainty import Array, Budget, Values, budget
 
 #: a remainder below this part of the excess leaves too little to titrate (house rule, common practice)
 LEAST_REMAINDER_FRACTION = 0.10
-#: an end point pH of a blank may differ by this from the sample's
-SAME_END_POINT_PH = 0.02
 
 
 class BlankError(HalfdropError):
@@ -48,12 +46,8 @@ class Blank:
         if (mine is None) != (theirs is None) or (
             mine is not None and theirs is not None and abs(mine - theirs) > SAME_END_POINT_PH
         ):
-            problems.append(f"the blank was taken at {_at(mine)}, the sample at {_at(theirs)}")
+            problems.append(f"the blank was taken at {end_point_words(mine)}, the sample at {end_point_words(theirs)}")
         return tuple(problems)
-
-
-def _at(end_point_ph: float | None) -> str:
-    return "the equivalence point" if end_point_ph is None else f"pH {end_point_ph:.2f}"
 
 
 def blank_of(

@@ -1,9 +1,17 @@
-"""How long a lot or a calibration may be used: expiry, days after opening, days until it is due again."""
+"""Where and how long a lot or a calibration may be used: its end point, expiry, days after opening, days until due."""
 
 from __future__ import annotations
 
 import datetime as dt
 from dataclasses import dataclass
+
+#: end point pH of lot and sample may differ by this
+SAME_END_POINT_PH = 0.02
+
+
+def end_point_words(ph: float | None) -> str:
+    """Return the words for an end point: a pH, or the equivalence point (None)."""
+    return "the equivalence point" if ph is None else f"pH {ph:.2f}"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -7,6 +7,7 @@ import pytest
 from controller.calibration.carbonate import judge_carbonate
 from controller.calibration.titrant import Equipment, PrimaryStandard, Replicate, StandardisationError, standardise
 from controller.calibration.titrant_lot import TitrantLot
+from controller.evaluation.carried import CarriedResult
 from controller.evaluation.montecarlo import compare, propagate
 from controller.evaluation.quantity import Quantity
 from controller.evaluation.uncertainty import budget
@@ -183,8 +184,14 @@ LOT = TitrantLot(
     lot_id="NaOH-26-14",
     substance="sodium hydroxide",
     acid=False,
-    concentration_mol_l=0.1003,
-    standard_uncertainty_mol_l=0.0001,
+    result=CarriedResult(
+        name="titrant",
+        value=0.1003,
+        unit="mol/L",
+        parts=(),
+        own_standard_uncertainty=0.0001,
+        own_degrees_of_freedom=math.inf,
+    ),
     temperature_c=20.0,
     standard_lot_id="KHP-7",
     standardised_on=dt.date(2026, 6, 1),
@@ -203,6 +210,12 @@ def test_a_warmer_titrant_is_weaker():
     # water at 25 C is 0.116 % less dense than at 20 C (Tanaka 2001)
     assert LOT.concentration_at(25.0) / LOT.concentration_mol_l == pytest.approx(1 - 0.00116, abs=1e-5)
     assert LOT.concentration_at(20.0) == LOT.concentration_mol_l
+
+
+def test_a_lot_standardised_to_another_end_point_is_named():
+    assert LOT.problems_for(end_point_ph=None) == ()
+    assert LOT.problems_for(end_point_ph=8.1) == ("standardised to the equivalence point, used to pH 8.10",)
+    assert LOT.standard_uncertainty_mol_l == pytest.approx(0.0001)
 
 
 def branch_intercepts(carbonate_part):
