@@ -197,6 +197,7 @@ class Bench:
                     return
                 told = yield action
             self.told.append(told)
+        yield Finish(result={"outcome": "completed", "reason": None, "end_points": [], "warnings": []})
 
     def go(self, plan: RunPlan, *actions: Any) -> Any:
         bench = self.bench
