@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from bisect import bisect_right
 from dataclasses import dataclass
 from pathlib import Path
@@ -71,9 +72,11 @@ def read_curve(path: Path, options: CurveOptions) -> CurveFile:
     notes += note
     points = _points(table, columns, decimal, options, warnings)
     points = _in_order(table, columns, points, warnings)
+    read = points.volume
     if options.interpolate_volumes:
         points = _filled(table, columns, decimal, points)
     volume, signal = _without_repeats(points, warnings)
+    gap = float(np.median(np.diff(read))) if options.interpolate_volumes and len(read) > 1 else 0.0
     _compare_alike(table, columns, decimal, notes)
     scale = 1000.0 if columns.signal_unit == "v" else 1.0
     is_ph = columns.signal_unit == "ph"
@@ -81,7 +84,8 @@ def read_curve(path: Path, options: CurveOptions) -> CurveFile:
         volume_ml=volume * columns.volume_to_ml,
         ph=signal if is_ph else None,
         potential_mv=None if is_ph else signal * scale,
-        volume_sd_ml=None,
+        # between two volumes read, each in between is as likely: half the usual gap, rectangular
+        volume_sd_ml=gap * columns.volume_to_ml / 2.0 / math.sqrt(3.0) if gap else None,
     )
     return CurveFile(
         curve=curve,

@@ -1,7 +1,7 @@
 """Carbonate in a base titrant, seen where a strong acid is titrated: the gap between both Gran lines.
 
-Before the end point carbonate takes two protons, beyond it none, so the line before meets zero at n/(OH + 2 CO3) and the
-line beyond at n/OH: (V beyond - V before)/V before = 2 CO3/OH. A weak acid's run shows nothing of it safely.
+Before the end point carbonate takes two protons, beyond it none: the line before meets zero at n/(OH + 2 CO3), the
+line beyond at n/OH, so (V beyond - V before)/V before = 2 CO3/OH. A weak acid's run shows nothing of it safely.
 """
 
 from __future__ import annotations

@@ -109,6 +109,6 @@ def carbonate_remarks(estimates: list[Estimate]) -> list[str]:
         return []
     return [
         f"the Gran lines of this strong acid end {found.gap_ml:.4f} +/- {found.standard_uncertainty_ml:.4f} mL apart: "
-        f"about {100.0 * found.carbonate_share:.1f} % of the titrant's alkalinity is carbonate; use carbonate-free base "
-        "with a guard tube, and standardise at the same end point pH"
+        f"about {100.0 * found.carbonate_share:.1f} % of the titrant's alkalinity is carbonate; use carbonate-free "
+        "base with a guard tube, and standardise at the same end point pH"
     ]
