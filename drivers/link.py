@@ -75,6 +75,8 @@ class Link:
             self._line = self._manual.line(self.url)
             if self._line is None or self._line.broken:
                 raise self._gone("no virtual port of this bench is there", "Serve the bench before opening its ports")
+            if self._line.attached:
+                raise self._gone("cannot be opened (another program has opened it)", "Close it there")
             self._manual.settle()
         try:
             self._port = _open_port(self.url, self.settings)

@@ -11,7 +11,7 @@ from drivers.exchange import ATTEMPTS, Exchange, Reader, only
 from drivers.identity import Identity
 from drivers.link import Link
 from drivers.pump import LastDose, PumpStatus, Refill
-from drivers.scpi import ScpiError, join_units, read_number
+from drivers.scpi import ScpiError, join_units, read_integer, read_number
 
 #: silence of the controller after which the pump halts of itself
 WATCHDOG_S = 5.0
@@ -44,12 +44,14 @@ class BuretteTalk:
             DeviceError: silent, garbled, refused or gone.
         """
         if self._known is None:
-            known = self._capabilities()
-            if self._capabilities() != known:
+            known, start_count = self._capabilities()
+            if self._capabilities() != (known, start_count):
                 raise DeviceGarbledError(
                     "says another thing of itself each time", where=self.where, remedy="Check the cable's screen"
                 )
             self._set_watchdog()
+            if self.start_count is None:
+                self.start_count = start_count
             self._known = known
         return self._known
 
@@ -125,9 +127,9 @@ class BuretteTalk:
         step_ml = self.step_ml  # may have to be asked for, so not within the reading of a reply
         return lambda units: tree.read_last_dose(only(units), step_ml)
 
-    def _capabilities(self) -> PumpCapabilities:
-        question = join_units(tree.STEP.query, tree.CAPACITY.query, tree.REFILL.query, tree.RATE.query)
-        return self.exchange.ask(question, _read_capabilities)
+    def _capabilities(self) -> tuple[PumpCapabilities, int]:
+        asked = (tree.STEP, tree.CAPACITY, tree.REFILL, tree.RATE, tree.START_COUNT)
+        return self.exchange.ask(join_units(*[header.query for header in asked]), _read_capabilities)
 
     def _set_watchdog(self) -> None:
         for attempt in range(1, ATTEMPTS + 1):
@@ -154,16 +156,17 @@ def _read_watchdog(units: list[list[bytes]]) -> float:
     return seconds
 
 
-def _read_capabilities(units: list[list[bytes]]) -> PumpCapabilities:
-    if len(units) != 4:
-        raise ScpiError(-102, f"{len(units)} answers to four questions")
+def _read_capabilities(units: list[list[bytes]]) -> tuple[PumpCapabilities, int]:
+    if len(units) != 5:
+        raise ScpiError(-102, f"{len(units)} answers to five questions")
     step_ml = read_number(tree.expect(units[0], 1)[0])
     if not 0.0 < step_ml <= 1.0:
         raise ScpiError(-222, f"step of {step_ml} mL")
     _, _, usual = tree.expect(units[3], 3)
-    return PumpCapabilities(
+    known = PumpCapabilities(
         step_ml=step_ml,
         capacity_steps=tree.read_steps(units[1], step_ml),
         refill=tree.read_refill(units[2]),
         usual_rate_ml_min=read_number(usual),
     )
+    return known, read_integer(tree.expect(units[4], 1)[0])

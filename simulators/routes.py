@@ -140,7 +140,7 @@ class TcpRoute:
         self.url = f"socket://{host}:{self._listener.getsockname()[1]}"
 
     def take(self, wait_s: float = 0.0) -> bytes:
-        """Return what the link has written; a newer link takes the place of the one before."""
+        """Return what the link has written."""
         if wait_s > 0.0:
             select.select(self.waits_on(), [], [], wait_s)
         self._welcome()
@@ -183,8 +183,20 @@ class TcpRoute:
             peer, _ = self._listener.accept()
         except OSError:
             return
+        if self._peer is not None:
+            if self._is_there(self._peer):
+                peer.close()  # a port has one user
+                return
+            self._peer.close()
         peer.setblocking(False)
         peer.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-        if self._peer is not None:
-            self._peer.close()
         self._peer = peer
+
+    @staticmethod
+    def _is_there(peer: socket.socket) -> bool:
+        try:
+            return bool(peer.recv(1, socket.MSG_PEEK))
+        except BlockingIOError:
+            return True
+        except OSError:
+            return False

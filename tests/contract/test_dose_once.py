@@ -36,7 +36,6 @@ WAYS = {
 def messages(build):
     """The traffic of a dose without faults: (request, reply) from the arming on."""
     bench = build("memory")
-    bench.pump.status()
     _ = bench.pump.step_ml
     before = len(bench.pump_traffic.entries)
     bench.pump.dose(1, VOLUME_ML)
@@ -52,7 +51,6 @@ def test_one_fault_anywhere_never_doubles_or_falsifies_a_dose(build, spoil, end,
     for index, message in enumerate(traffic):
         for place in range(len(message)):
             bench = build("memory")
-            bench.pump.status()
             _ = bench.pump.step_ml
             seen = iter(range(1000))
             spoil(bench.pump_port, lambda _, n=index, s=seen: next(s) == n, **{end: WAYS[way](message, place)})
@@ -88,7 +86,6 @@ def unreliable(rng, share):
 def test_a_bad_line_never_makes_the_account_wrong(build, seed):
     rng = random.Random(seed)
     bench = build("memory")
-    bench.pump.status()
     _ = bench.pump.step_ml
     bench.pump_port.spoil_request = bench.pump_port.spoil_reply = unreliable(rng, 0.12)
     done = 0

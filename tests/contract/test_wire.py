@@ -17,6 +17,8 @@ from drivers.errors import (
     StoppedError,
 )
 from drivers.link import LinkSettings, open_link
+from drivers.scpi_probe import ScpiProbe
+from simulators.device_end import LostBytesError
 
 LOST = b""
 
@@ -294,6 +296,30 @@ def test_a_link_can_be_closed_and_opened_again(bench):
     assert bench.probe.read().sequence == 2
 
 
+def test_a_port_has_one_user(bench):
+    with pytest.raises(DeviceGoneError, match="another program has opened it"):
+        open_link(bench.probe_link.url, clock=bench.clock, device="probe")
+    assert bench.probe.read().sequence == 1
+
+
+def test_bytes_that_never_arrive_end_the_run_instead_of_moving_time(bench, monkeypatch):
+    monkeypatch.setattr("simulators.device_end.ARRIVAL_LIMIT_S", 0.001)
+    monkeypatch.setattr(bench.probe_port.route, "take", lambda wait_s=0.0: b"")
+    with pytest.raises(LostBytesError, match="did not arrive"):
+        bench.probe.read()
+    assert bench.clock.now_s() == 0.0
+    bench.probe_port.line.clear()
+
+
+def test_a_reply_that_never_arrives_ends_the_run_instead_of_moving_time(bench, monkeypatch):
+    monkeypatch.setattr("drivers.link.ARRIVAL_LIMIT_S", 0.001)
+    monkeypatch.setattr(bench.probe_port.route, "give", len)
+    with pytest.raises(DeviceGoneError, match="did not arrive"):
+        bench.probe.read()
+    assert bench.clock.now_s() == 0.0
+    bench.probe_port.line.clear()
+
+
 def test_latency_is_manual_time(route, build):
     bench = build(route, latency_s=0.02)
     assert bench.probe.read().at_s == pytest.approx(0.02)
@@ -340,6 +366,14 @@ def test_a_port_that_is_not_there_is_gone():
         open_link("/dev/no-such-port", clock=SystemClock(), device="pump")
     with pytest.raises(DeviceGoneError, match="probe on nonsense://here"):
         open_link("nonsense://here", clock=SystemClock(), device="probe")
+
+
+def test_a_port_has_one_user_in_real_time(route, build):
+    bench = build(route, SystemClock())
+    assert bench.probe.read().sequence == 1
+    with pytest.raises(DeviceGoneError):
+        ScpiProbe(open_link(bench.probe_link.url, clock=bench.clock, device="probe"), bench.clock).read()
+    assert bench.probe.read().sequence == 2
 
 
 @pytest.mark.parametrize("clock", [SystemClock, lambda: ScaledClock(5.0)], ids=["system", "scaled"])
