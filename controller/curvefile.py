@@ -34,7 +34,11 @@ class CurveOptions:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class CurveFile:
-    """The points of a file in the order of volume, with what was assumed (`notes`) and found wrong (`warnings`)."""
+    """The points of a file in the order of volume, with what was assumed (`notes`) and found wrong (`warnings`).
+
+    `interpolation_sd_ml`: what interpolated volumes add to any end point, as if every volume between two that were read
+    were as likely (half the usual gap, rectangular).
+    """
 
     curve: Curve
     settings: dict[str, str]
@@ -42,6 +46,7 @@ class CurveFile:
     warnings: tuple[str, ...]
     temperature_c: float | None
     duration_s: float | None
+    interpolation_sd_ml: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,8 +89,6 @@ def read_curve(path: Path, options: CurveOptions) -> CurveFile:
         volume_ml=volume * columns.volume_to_ml,
         ph=signal if is_ph else None,
         potential_mv=None if is_ph else signal * scale,
-        # between two volumes read, each in between is as likely: half the usual gap, rectangular
-        volume_sd_ml=gap * columns.volume_to_ml / 2.0 / math.sqrt(3.0) if gap else None,
     )
     return CurveFile(
         curve=curve,
@@ -94,6 +97,7 @@ def read_curve(path: Path, options: CurveOptions) -> CurveFile:
         warnings=tuple(warnings),
         temperature_c=_mean(table, columns.temperature, decimal),
         duration_s=_span(table, columns.time, decimal),
+        interpolation_sd_ml=gap * columns.volume_to_ml / 2.0 / math.sqrt(3.0),
     )
 
 

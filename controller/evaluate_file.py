@@ -50,6 +50,8 @@ def evaluate_file(path: str | Path, options: EvaluateOptions | None = None) -> d
     evaluation = evaluate(curve, end_points_expected=options.end_points)
     result = evaluation.to_json()
     result["duration_s"] = found.duration_s
+    for point in result["end_points"]:
+        point["standard_uncertainty_ml"] = math.hypot(point["standard_uncertainty_ml"], found.interpolation_sd_ml)
     known = None if options.substance is None else curve.pka
     result["warnings"] = [*found.warnings, *about, *evaluation.warnings, *_pka_warnings(result, known)]
     result["file"] = {
