@@ -31,6 +31,7 @@ def fit_inverse(
     setting: InverseSetting,
     *,
     volume_sd_ml: Array | None = None,
+    signal_sd_mv: Array | None = None,
     start_ml: float | None = None,
 ) -> InverseFit | None:
     """Fit the inverse model to points.
@@ -40,6 +41,7 @@ def fit_inverse(
         ph: pH of each point, shape (n,).
         setting: see InverseSetting.
         volume_sd_ml: standard deviation of each volume where it is larger than the setting's, shape (n,).
+        signal_sd_mv: standard deviation of each potential where it is larger than the setting's, shape (n,).
         start_ml: a first idea of the equivalence volume.
 
     Returns:
@@ -48,13 +50,20 @@ def fit_inverse(
     if volume_ml.size < 2:
         return None
     with np.errstate(all="ignore"):
-        return _Fit(volume_ml, ph, setting, volume_sd_ml).run(start_ml)
+        return _Fit(volume_ml, ph, setting, volume_sd_ml, signal_sd_mv).run(start_ml)
 
 
 class _Fit:
     """Working arrays of one fit."""
 
-    def __init__(self, volume_ml: Array, ph: Array, setting: InverseSetting, volume_sd_ml: Array | None) -> None:
+    def __init__(
+        self,
+        volume_ml: Array,
+        ph: Array,
+        setting: InverseSetting,
+        volume_sd_ml: Array | None,
+        signal_sd_mv: Array | None,
+    ) -> None:
         self.setting = s = setting
         self.v = volume_ml
         q = s.pkw - ph if s.acid_titrant else ph
@@ -73,6 +82,8 @@ class _Fit:
         self.nominal = nominal
         self.powers = np.array([np.power(a, i + 1) * k for i, k in enumerate(nominal)]).reshape(len(nominal), a.size)
         self.order = np.arange(1, len(nominal) + 1, dtype=np.float64)
+        least_mv = s.signal_sd_mv
+        self.sd_e = np.full(a.size, least_mv) if signal_sd_mv is None else np.maximum(signal_sd_mv, least_mv)
         self.sd_v = (
             np.full(a.size, s.volume_sd_ml) if volume_sd_ml is None else np.maximum(volume_sd_ml, s.volume_sd_ml)
         )
@@ -150,7 +161,7 @@ class _Fit:
         w_q = -total * (self.h + self.oh) / self.cb
         f_q = f_q + (b * (w_q - self.order[:, None] * inner)).sum(axis=0)
         per_mv = np.abs(_LN10 * f_q / slope) / s.slope_mv
-        sd = np.sqrt((s.signal_sd_mv * per_mv) ** 2 + self.sd_v**2 + (distance_share * (self.v - veq)) ** 2)
+        sd = np.sqrt((self.sd_e * per_mv) ** 2 + self.sd_v**2 + (distance_share * (self.v - veq)) ** 2)
         scale = 1.0 / (slope * sd)
         jacobian = np.empty((self.v.size, m + 4))
         shares = (1.0 - self.order * s.ladder.share - self.order * d)[:, None]

@@ -6,7 +6,8 @@ for end points, until a rule ends it; then the evaluation. It knows no clock, no
 
 from __future__ import annotations
 
-from statistics import median
+import math
+from statistics import median, stdev
 from typing import Any
 
 from controller.titration.actions import Decisions, Finish, Report
@@ -25,6 +26,7 @@ from controller.titration.settling import Accepted, FixedWait, SettlingContext, 
 
 MOST_BAD_READINGS = 60
 MOST_UNSETTLED_POINTS = 10
+STUCK_LIVELY = 25
 STUCK_READINGS = 60
 STUCK_POINTS = 5
 
@@ -62,7 +64,7 @@ class _Run:
         self.points: list[Point] = []
         self.scale = PhScale(plan, plan.chemistry.temperature_c)
         self.noise = Noise(sd_mv=plan.probe.resolution_mv, mean_mv=0.0, correlation=0.0)
-        self.watch = EndPointWatch(plan, self.noise.sd_mv)
+        self.watch = EndPointWatch(plan)
         self.forecast = Forecast(plan, self.scale)
         self._settler: SettlingRule = FixedWait(plan.settling)
         self._doser: DosingPolicy = EqualVolumes(plan.dosing)
@@ -70,6 +72,7 @@ class _Run:
         self._same = 0
         self._last_raw_mv: float | None = None
         self._same_points = 0
+        self._last_mv: list[float] = []  # of the point that settles
 
     # --- before the first dose ---
 
@@ -86,7 +89,6 @@ class _Run:
         temperature_c = round(median(temperatures), 1) if temperatures else self.plan.chemistry.temperature_c
         self.scale = PhScale(self.plan, temperature_c)
         self.forecast = Forecast(self.plan, self.scale)
-        self.watch = EndPointWatch(self.plan, noise.sd_mv)
         self._settler = settling_rule(self.plan, self.world.log, self.scale)
         self._doser = dosing_policy(self.plan, self.scale)
         yield from self.world.say(
@@ -154,6 +156,7 @@ class _Run:
         context = self._context(planned)
         self._settler.begin(context)
         world.disturbed = False
+        self._last_mv = []
         bad = 0
         while True:
             yield from world.wait(interval_s)
@@ -170,6 +173,7 @@ class _Run:
             bad = 0
             self._same = self._same + 1 if reading.potential_mv == self._last_raw_mv else 0
             self._last_raw_mv = reading.potential_mv
+            self._last_mv = [*self._last_mv[-9:], reading.potential_mv]
             accepted = self._settler.add(reading.at_s, reading.potential_mv)
             if accepted is not None:
                 self._settler.learn(context, accepted)
@@ -209,6 +213,7 @@ class _Run:
             volume_sd_ml=round(accepted.volume_sd_ml if accepted.volume_sd_ml < 1e3 else 1e3, 7),
             delivered_ml=round(self.world.delivered_ml, 7),
             potential_mv=potential_mv,
+            potential_sd_mv=self._potential_sd_mv(accepted.settled),
             ph=round(self.scale.ph(potential_mv), 6) if self.scale.known else None,
             at_s=self.world.now_s or 0.0,
             settled=accepted.settled,
@@ -227,12 +232,21 @@ class _Run:
         )
         self._check_probe(point)
 
+    def _potential_sd_mv(self, settled: bool) -> float:
+        """Of a settled point by the noise; of one that did not settle by how its last readings spread."""
+        noise_mv = self.noise.sd_mv / math.sqrt(3.0)
+        if settled or len(self._last_mv) < 2:
+            return round(noise_mv, 4)
+        return round(max(noise_mv, stdev(self._last_mv)), 4)
+
     def _check_probe(self, point: Point) -> None:
         self._unsettled = 0 if point.settled else self._unsettled + 1
         if self._unsettled >= MOST_UNSETTLED_POINTS:
             raise EndOfRunError("failed", f"{self._unsettled} points in a row did not settle")
         self._same_points = self._same_points + 1 if self._same >= 3 else 0
-        if self._same >= STUCK_READINGS and self._same_points >= STUCK_POINTS:
+        lively = self.noise.sd_mv > 0.5 * self.plan.probe.resolution_mv  # noise moves every reading of a live probe
+        most_readings, most_points = (STUCK_LIVELY, 1) if lively else (STUCK_READINGS, STUCK_POINTS)
+        if self._same >= most_readings and self._same_points >= most_points:
             raise EndOfRunError(
                 "failed", f"the probe sticks at {point.potential_mv:.1f} mV: {self._same} readings without any change"
             )

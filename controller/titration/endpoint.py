@@ -35,9 +35,8 @@ class FoundEndPoint:
 class EndPointWatch:
     """Looks for the next end point after every point; never goes back."""
 
-    def __init__(self, plan: RunPlan, noise_mv: float) -> None:
+    def __init__(self, plan: RunPlan) -> None:
         self._smallest_rise_mv = plan.end_points.smallest_rise_mv
-        self._noise_mv = noise_mv
         self._dose_sd_ml = plan.pump.dose_sd_ml
         self._precision_ml = pump_precision_ml(plan)
         self._plan = plan
@@ -95,7 +94,9 @@ class EndPointWatch:
             slope = abs(b.potential_mv - a.potential_mv) / dv
             slopes.append(slope)
             errors.append(
-                math.hypot(self._noise_mv * math.sqrt(2.0 / 3.0) / dv, slope * self._dose_sd_ml * math.sqrt(2.0) / dv)
+                math.hypot(
+                    a.potential_sd_mv / dv, b.potential_sd_mv / dv, slope * self._dose_sd_ml * math.sqrt(2.0) / dv
+                )
             )
             middles.append(0.5 * (a.volume_ml + b.volume_ml))
         peak = max(range(len(slopes)), key=lambda i: round(slopes[i], 3))

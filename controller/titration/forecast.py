@@ -65,7 +65,8 @@ class Forecast:
         volume = np.array([p.volume_ml for p in points])
         ph = np.array([p.ph for p in points], dtype=np.float64)
         sd = np.array([p.volume_sd_ml for p in points])
-        self.fit = fit = fit_inverse(volume, ph, setting, volume_sd_ml=sd)
+        sd_e = np.array([p.potential_sd_mv for p in points])
+        self.fit = fit = fit_inverse(volume, ph, setting, volume_sd_ml=sd, signal_sd_mv=sd_e)
         if fit is None or not fit.sound:
             return
         veq, sd_veq = round(fit.equivalence_ml, 6), round(fit.standard_uncertainty_ml, 6)

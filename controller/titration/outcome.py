@@ -58,7 +58,6 @@ def run_curve(run: RunState) -> Curve:
     plan, points = run.plan, run.points
     analyte, chemistry = plan.chemistry.analyte, plan.chemistry
     per_unit = run.scale.slope_mv if run.scale.known else 1.0
-    signal_mv = math.hypot(run.noise.sd_mv / math.sqrt(3.0), STRAIGHTNESS_MV)
     return Curve(
         volume_ml=np.array([p.volume_ml for p in points]),
         ph=np.array([p.ph for p in points], dtype=np.float64) if run.scale.known else None,
@@ -67,7 +66,7 @@ def run_curve(run: RunState) -> Curve:
         titrant_concentration_mol_l=plan.titrant.concentration_mol_l,
         titrant_is_acid=plan.titrant.acid,
         volume_sd_ml=np.array([math.hypot(p.volume_sd_ml, plan.pump.dose_sd_ml, 0.0005) for p in points]),
-        signal_sd=signal_mv / per_unit,
+        signal_sd=np.array([math.hypot(p.potential_sd_mv, STRAIGHTNESS_MV) for p in points]) / per_unit,
         pka=None if analyte is None else analyte.pka,
         charge=0 if analyte is None else analyte.charge,
         counter_ion_charge=0 if analyte is None else analyte.counter_ion_charge,

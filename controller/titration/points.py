@@ -17,6 +17,7 @@ class Point:
     volume_sd_ml: float
     delivered_ml: float
     potential_mv: float
+    potential_sd_mv: float
     ph: float | None
     at_s: float
     settled: bool

@@ -59,9 +59,10 @@ class LagCorrected:
         sd_limit, lag_limit = self._limits(context, volume_ml)
         settled = False
         sd_ml = math.inf
-        if (lag_ml < lag_limit and abs(last[2][1] - last[0][1]) < LARGEST_MOVE_MV + 4.0 * context.noise_mv) or late:
+        calm = lag_ml < lag_limit and _range_mv(last) < LARGEST_MOVE_MV + 4.0 * context.noise_mv
+        if calm or late:
             sd_ml = math.hypot(self._composition.sd_ml(at_s), LEFT_SHARE * lag_ml)
-            settled = sd_ml < sd_limit and lag_ml < lag_limit
+            settled = calm and sd_ml < sd_limit
             if settled and waited_s < SUSPICION_HOLD_S and self._suspicious(context, volume_ml, potential, sd_ml):
                 settled = False
         if not settled and not late:
@@ -71,7 +72,7 @@ class LagCorrected:
             volume_sd_ml=round(sd_ml, 7),
             potential_mv=potential,
             settled=settled,
-            text="" if settled else f"not settled: composition known to {1000 * sd_ml:.1f} uL after {waited_s:.0f} s",
+            text="" if settled else f"not settled after {waited_s:.0f} s (composition known to {1000 * sd_ml:.1f} uL)",
         )
 
     def _limits(self, context: SettlingContext, volume_ml: float) -> tuple[float, float]:
@@ -108,3 +109,9 @@ class LagCorrected:
         """See SettlingRule."""
         if context.fit is not None and accepted.settled:
             self._learner.learn(context.fit, self._readings, context.noise_mv)
+
+
+def _range_mv(readings: list[tuple[float, float]]) -> float:
+    """Largest less smallest potential."""
+    potentials = [e for _, e in readings]
+    return max(potentials) - min(potentials)
