@@ -54,6 +54,22 @@ def test_offset_is_at_ph_7_even_if_the_isopotential_ph_is_not():
     assert fit_line(points).offset_mv == pytest.approx(line.offset_mv)
 
 
+@pytest.mark.parametrize("part", [-0.5, 0.0, 0.3, 1.0, 1.8])
+def test_two_buffers_interpolate_and_their_uncertainties_with_them(part):
+    # closed form: pH = (1 - t) pH1 + t pH2, so u squared = ((1 - t) u1) squared + (t u2) squared
+    first, second = reading(4.005, u_ph=0.004, u_mv=0.0), reading(6.865, u_ph=0.009, u_mv=0.0)
+    line = fit_line([first, second])
+    value = ph_from(line, (1 - part) * first.potential_mv + part * second.potential_mv, 25.0)
+    assert value.ph == pytest.approx((1 - part) * 4.005 + part * 6.865)
+    assert value.from_line == pytest.approx(math.hypot((1 - part) * 0.004, part * 0.009), rel=1e-6)
+
+
+def test_a_reading_that_is_high_reads_a_ph_that_is_low():
+    residuals = fit_line([reading(4.005), reading(6.865, error_mv=2.0), reading(9.18)]).residuals
+    assert residuals[1].potential_mv > 0.0 > residuals[1].ph
+    assert residuals[1].ph == pytest.approx(-residuals[1].potential_mv / 58.0, rel=0.01)
+
+
 def test_uncertainty_of_a_ph_is_that_of_many_calibrations():
     # buffers, readings, isopotential pH and sample temperature err within what is stated; the estimate must scatter so
     rng = np.random.default_rng(11)

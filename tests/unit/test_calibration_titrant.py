@@ -4,10 +4,12 @@ import math
 import numpy as np
 import pytest
 
+from configs.errors import HalfdropError
 from controller.calibration.carbonate import judge_carbonate
 from controller.calibration.titrant import Equipment, PrimaryStandard, Replicate, StandardisationError, standardise
 from controller.calibration.titrant_lot import TitrantLot
 from controller.evaluation.carried import CarriedResult
+from controller.evaluation.estimate import GRAN_BEFORE, GRAN_BEYOND, Estimate
 from controller.evaluation.montecarlo import compare, propagate
 from controller.evaluation.quantity import Quantity
 from controller.evaluation.uncertainty import budget
@@ -242,19 +244,24 @@ def branch_intercepts(carbonate_part):
     return acid, base
 
 
-@pytest.mark.parametrize("percent", [0.0, 0.5, 2.0, 5.0])
+@pytest.mark.parametrize("percent", [0.0, 0.5, 2.0, 5.0, 20.0])
 def test_the_gap_of_the_gran_lines_is_the_carbonate(percent):
     # against the charge balance of the simulated solution, which knows nothing of this rule
     acid, base = branch_intercepts(percent / 100)
     found = judge_carbonate(
-        acid_branch_ml=acid,
-        acid_branch_standard_uncertainty_ml=0.002,
-        base_branch_ml=base,
-        base_branch_standard_uncertainty_ml=0.003,
+        Estimate(estimator=GRAN_BEFORE, volume_ml=acid, standard_uncertainty_ml=0.002),
+        Estimate(estimator=GRAN_BEYOND, volume_ml=base, standard_uncertainty_ml=0.003),
         concentration_mol_l=0.1,
     )
+    assert found.standard_uncertainty_percent == pytest.approx(100 * math.hypot(0.002, 0.003) / base)
     assert found.percent == pytest.approx(percent, rel=0.05, abs=0.01)
     assert found.carbonate_mol_l == pytest.approx(0.1 * percent / 200, rel=0.05, abs=1e-5)
     assert found.detected is (percent > 0.0)
     assert found.accepted is (percent <= 1.0)
     assert ("carbonate-free" in found.text) is (percent > 1.0)
+
+
+def test_intercepts_that_are_none_are_refused():
+    nothing = Estimate(estimator=GRAN_BEFORE, volume_ml=0.0, standard_uncertainty_ml=0.1)
+    with pytest.raises(HalfdropError, match="carbonate check: intercepts are"):
+        judge_carbonate(nothing, nothing, concentration_mol_l=0.1)
