@@ -19,6 +19,7 @@ from .solution_moments import NONE, Moments, moments_of
 from .solution_roots import LARGEST_IONIC_STRENGTH, LAST_STEP, find_roots
 
 ROUNDS = range(12)
+LARGEST_ION_SUM_MOL_L = 1e5
 LARGEST_STEP = 2.0
 
 
@@ -67,18 +68,25 @@ class LiveEquilibrium:
         Raises:
             SolutionError: a concentration that is negative or not a number.
         """
+        for value in weak_mol_l:
+            checked_concentration(value, "live solution: component")
+        return self.solve_checked(weak_mol_l, ion_charge_mol_l, ion_z2_mol_l)
+
+    def solve_checked(self, weak_mol_l: Sequence[float], ion_charge_mol_l: float, ion_z2_mol_l: float) -> float:
+        """As `solve`, for concentrations that are known to be 0 or more."""
         if self._held is not None:
             follow = self._ideal if self._ln_a is None else self._davies
             try:
-                if follow(weak_mol_l, ion_charge_mol_l, ion_z2_mol_l) and min(weak_mol_l, default=0.0) >= 0.0:
+                if follow(weak_mol_l, ion_charge_mol_l, ion_z2_mol_l):
                     return self._y / LN10
             except (OverflowError, ZeroDivisionError):
                 pass  # far from the root; the whole-curve solver below starts anew
         return self._cold(weak_mol_l, ion_charge_mol_l, ion_z2_mol_l)
 
     def _cold(self, weak: Sequence[float], ion_charge: float, ion_z2: float) -> float:
-        for value in (*weak, abs(ion_charge), ion_z2):
-            checked_concentration(value, "live solution")
+        for value in (abs(ion_charge), ion_z2):
+            if not 0.0 <= value <= LARGEST_ION_SUM_MOL_L:
+                raise refuse("live solution: strong ions", f"got {value} mol/L, allowed: 0 or more")
         weak_column = np.array(weak, dtype=np.float64).reshape(len(self._acids), 1)
         contents = Contents(weak_column, np.array([ion_charge]), np.array([ion_z2]))
         roots = find_roots(forms_of(self._acids, self._ln_kw), contents, self._ln_a)
@@ -226,7 +234,7 @@ class LiveSolution:
         weak = [sample * kept + titrant * added for sample, titrant in self._weak]
         weak.append(carbonate_mol_l)
         (charge0, charge1), (square0, square1) = self._ions
-        return self.equilibrium.solve(weak, charge0 * kept + charge1 * added, square0 * kept + square1 * added)
+        return self.equilibrium.solve_checked(weak, charge0 * kept + charge1 * added, square0 * kept + square1 * added)
 
     @property
     def ionic_strength_mol_l(self) -> float:

@@ -24,9 +24,8 @@ LOWEST_Y, HIGHEST_Y = -8.0 * LN10, 22.0 * LN10
 LARGEST_IONIC_STRENGTH = 20.0
 #: Newton is quadratic (half the square of a step is left): after a step this small below 1e-11
 LAST_STEP = 3e-6
-#: a step of 1 pH at most
-LARGEST_STEP = LN10
-NEWTON_ROUNDS = 12
+#: largest step of each round: 1 pH at first, then less, so that Newton cannot swing about a sharp bend for ever
+LARGEST_STEPS = tuple(LN10 * 0.75**k for k in range(16))
 BISECTIONS = 60
 #: from here on points that have converged are left out of further rounds
 SPARSE_FROM_POINTS = 256
@@ -87,10 +86,11 @@ def _newton_ideal(forms: Forms, contents: Contents, y: Array) -> npt.NDArray[np.
     left: npt.NDArray[np.intp] = np.arange(y.size)
     part, place = contents, coordinates(y.size)
     place[0] = y
-    for _ in range(NEWTON_ROUNDS):
+    error = np.full(y.size, np.inf)
+    for largest in LARGEST_STEPS:
         charge, capacity = charge_sums(forms, part, place)
         step = charge / capacity
-        np.minimum(np.maximum(step, -LARGEST_STEP, out=step), LARGEST_STEP, out=step)
+        np.minimum(np.maximum(step, -largest, out=step), largest, out=step)
         place[0] += step
         error = np.abs(step)
         if float(error.max()) <= LAST_STEP:
@@ -100,8 +100,9 @@ def _newton_ideal(forms: Forms, contents: Contents, y: Array) -> npt.NDArray[np.
             wide = error > LAST_STEP
             if 2 * int(np.count_nonzero(wide)) < left.size:
                 y[left] = place[0]
-                left, part, place = left[wide], part.at(wide), place[:, wide]
-    return left
+                left, part, place, error = left[wide], part.at(wide), place[:, wide], error[wide]
+    y[left] = place[0]
+    return left[~(error <= LAST_STEP)]
 
 
 def _newton_davies(forms: Forms, contents: Contents, ln_a: float, y: Array, root: Array) -> npt.NDArray[np.intp]:
@@ -109,9 +110,10 @@ def _newton_davies(forms: Forms, contents: Contents, ln_a: float, y: Array, root
     left: npt.NDArray[np.intp] = np.arange(y.size)
     part, place, here = contents, coordinates(y.size), root.copy()
     place[0] = y
-    for _ in range(NEWTON_ROUNDS):
+    error = np.full(y.size, np.inf)
+    for largest in LARGEST_STEPS:
         step, root_step = _davies_step(forms, part, ln_a, place, here)
-        np.minimum(np.maximum(step, -LARGEST_STEP, out=step), LARGEST_STEP, out=step)
+        np.minimum(np.maximum(step, -largest, out=step), largest, out=step)
         place[0] += step
         after = here + root_step
         np.maximum(after, 0.4 * here, out=after)
@@ -125,8 +127,9 @@ def _newton_davies(forms: Forms, contents: Contents, ln_a: float, y: Array, root
             wide = ~(error <= LAST_STEP)
             if 2 * int(np.count_nonzero(wide)) < left.size:
                 y[left], root[left] = place[0], here
-                left, part, place, here = left[wide], part.at(wide), place[:, wide], here[wide]
-    return left
+                left, part, place, here, error = left[wide], part.at(wide), place[:, wide], here[wide], error[wide]
+    y[left], root[left] = place[0], here
+    return left[~(error <= LAST_STEP)]
 
 
 def _davies_step(forms: Forms, contents: Contents, ln_a: float, place: Array, root: Array) -> tuple[Array, Array]:

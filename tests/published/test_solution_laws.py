@@ -156,7 +156,7 @@ def test_order_of_volumes_does_not_matter_and_no_volume_gives_no_point():
 def test_bisection_stands_in_where_newton_has_not_converged(monkeypatch, cases, medium):
     sample, titrant, sample_ml, _, volumes = next(case for case in cases if len(case[0].weak) == 4)
     expected = titration_states(sample, titrant, sample_ml, volumes, medium)
-    monkeypatch.setattr(solution_roots, "NEWTON_ROUNDS", 1)
+    monkeypatch.setattr(solution_roots, "LARGEST_STEPS", (1.0,))
     found = titration_states(sample, titrant, sample_ml, volumes, medium)
     assert np.abs(found.ph - expected.ph).max() <= 1e-10
     assert np.abs(found.ph - expected.ph).max() > 0.0
@@ -252,7 +252,7 @@ def test_live_equilibrium_refuses_what_makes_no_sense():
     live = LiveEquilibrium([((4.756,), 0)], DAVIES)
     live.solve([0.1], 0.0, 0.0)
     for weak, charge in (([math.nan], 0.0), ([-1e-3], 0.0), ([0.1], math.nan)):
-        with pytest.raises(SolutionError, match="live solution: got"):
+        with pytest.raises(SolutionError, match=r"live solution: .*: got"):
             live.solve(weak, charge, 0.0)
     with pytest.raises(SolutionError, match="initial volume"):
         LiveSolution(ACETIC, SODIUM_HYDROXIDE, 0.0, DAVIES)

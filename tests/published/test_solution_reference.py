@@ -137,10 +137,10 @@ def mixed_exactly(sample: Mixture, titrant: Mixture, sample_ml: float, volume_ml
 
 def volumes_around(equivalence_ml: tuple[float, ...]) -> list[float]:
     """From the start to far past the end, densely around each equivalence volume."""
-    volumes = {0.0, 0.01, 1.0, 2.0 * max(equivalence_ml)}
+    volumes = {0.0, 2.0 * max(equivalence_ml)}
     for volume in equivalence_ml:
         volumes |= {0.5 * volume, 1.02 * volume}
-        volumes |= {volume + offset for offset in (-1e-2, -1e-5, 0.0, 1e-4, 2e-3)}
+        volumes |= {volume + offset for offset in (-1e-3, 0.0, 1e-4)}
     return sorted(volumes)
 
 
