@@ -201,21 +201,27 @@ def _in_order(table: Table, columns: Columns, points: _Points, warnings: list[st
 
 
 def _longest_rising(values: list[float]) -> list[int]:
-    """Return the places of a longest never-falling run of values, in order."""
-    ends: list[float] = []
-    at: list[int] = []
-    before: list[int | None] = []
-    for i, value in enumerate(values):
-        place = bisect_right(ends, value)
-        before.append(at[place - 1] if place else None)
-        ends[place : place + 1] = [value]
-        at[place : place + 1] = [i]
+    """Return the places of a longest never-falling run of values; of two that fall out, the later one goes."""
+    up_to = _run_lengths(values)
+    onwards = _run_lengths([-v for v in reversed(values)])[::-1]
+    longest = max(up_to, default=0)
     chain: list[int] = []
-    last: int | None = at[-1] if at else None
-    while last is not None:
-        chain.append(last)
-        last = before[last]
-    return chain[::-1]
+    for i, value in enumerate(values):
+        on_longest = up_to[i] + onwards[i] - 1 == longest
+        if on_longest and up_to[i] == len(chain) + 1 and (not chain or value >= values[chain[-1]]):
+            chain.append(i)
+    return chain
+
+
+def _run_lengths(values: list[float]) -> list[int]:
+    """Return the length of the longest never-falling run that ends at each place."""
+    ends: list[float] = []
+    lengths = []
+    for value in values:
+        place = bisect_right(ends, value)
+        ends[place : place + 1] = [value]
+        lengths.append(place + 1)
+    return lengths
 
 
 def _without_repeats(points: _Points, warnings: list[str]) -> tuple[Array, Array]:

@@ -52,7 +52,7 @@ def read_table(path: Path) -> Table:
         TableError: the file is absent, too large, not text, empty, or its lines differ in their number of cells.
     """
     text, notes = _text(path)
-    lines = text.splitlines()
+    lines = re.split(r"\r\n|\n|\r", text)
     settings = {m[1]: m[2].strip() for line in lines if (m := _SETTING.fullmatch(line.strip().casefold()))}
     kept = [(i, line) for i, line in enumerate(lines, start=1) if line.strip() and not line.lstrip().startswith("#")]
     if not kept:
