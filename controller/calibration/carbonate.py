@@ -1,7 +1,7 @@
 """Verdict on the carbonate in an alkaline titrant, from a titration of strong acid with it.
 
-The gap between the Gran lines of the acid and the base branch is the carbonate (`controller.evaluation.carbonate`). In a
-run on a weak acid it leaves no sign that could be told from the acid's own.
+The gap between the Gran lines of the acid and the base branch is the carbonate (`controller.evaluation.carbonate`). In
+a run on a weak acid it leaves no sign that could be told from the acid's own.
 """
 
 from __future__ import annotations
