@@ -6,8 +6,8 @@ Prints a markdown table: medians of CPU time (time.process_time) per point, and 
 database of its own (our constants, no minerals, gases or redox couples in use), which is its fastest way; the batch is
 one input with incremental REACTION steps, the fastest of four ways tried; the warm point is one REACTION on a saved
 solution. pHcalc solves point by point with its default method, each point begun at the pH of the one before. Needs the
-extra `peers`. The bars are those of the project; the one for whole curves is set for 250 points and more (a curve of 100
-points shows the fixed cost of array calls).
+extra `peers`. The bars are those of the project; the one for whole curves is set for 250 points and more (a curve of
+100 points shows the fixed cost of array calls).
 """
 
 from __future__ import annotations
