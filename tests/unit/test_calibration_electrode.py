@@ -254,6 +254,21 @@ def test_isopotential_ph_from_two_temperatures():
     assert 0.03 < fit.isopotential.standard_uncertainty < 0.5
 
 
+def test_isopotential_uncertainty_adds_up_from_each_reading():
+    places = [(t, ph) for t in (20.0, 40.0) for ph in (6.86, 9.18)]
+
+    def isopotential(errors_mv):
+        points = [
+            reading(ph, temperature_c=t, u_ph=0.0, u_mv=0.3, error_mv=e)
+            for (t, ph), e in zip(places, errors_mv, strict=True)
+        ]
+        return fit_isopotential(points).isopotential
+
+    exact = isopotential([0.0] * 4)
+    shifts = [isopotential([1e-4 * (i == j) for j in range(4)]).ph - exact.ph for i in range(4)]
+    assert exact.standard_uncertainty == pytest.approx(math.hypot(*shifts) * 0.3 / 1e-4, rel=1e-3)
+
+
 def test_isopotential_uncertainty_is_that_of_many_measurements():
     rng = np.random.default_rng(5)
     found = [
