@@ -6,8 +6,7 @@ for end points, until a rule ends it; then the evaluation. It knows no clock, no
 
 from __future__ import annotations
 
-import math
-from statistics import median, stdev
+from statistics import median
 from typing import Any
 
 from controller.titration.actions import Decisions, Finish, Report
@@ -16,19 +15,17 @@ from controller.titration.endpoint import EndPointWatch, FoundEndPoint
 from controller.titration.exchange import EndOfRunError, Exchange, Talk
 from controller.titration.forecast import Forecast
 from controller.titration.limits import check_limits, largest_dose_ml
-from controller.titration.noise import READINGS, Noise, measure_noise
+from controller.titration.noise import READINGS, measure_noise
 from controller.titration.outcome import run_result
 from controller.titration.plan import RunPlan
 from controller.titration.points import PhScale, Point
 from controller.titration.policies import dosing_policy, settling_rule
 from controller.titration.precision import near_ml, pump_precision_ml
+from controller.titration.probewatch import ProbeWatch
 from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule
 
-MOST_BAD_READINGS = 60
-MOST_UNSETTLED_POINTS = 10
-STUCK_LIVELY = 25
-STUCK_READINGS = 60
-STUCK_POINTS = 5
+#: change of temperature during a run that is warned about
+WARMED_C = 2.0
 
 
 def titrate(plan: RunPlan) -> Decisions:
@@ -63,16 +60,13 @@ class _Run:
         self.outcome, self.reason = "completed", ""
         self.points: list[Point] = []
         self.scale = PhScale(plan, plan.chemistry.temperature_c)
-        self.noise = Noise(sd_mv=plan.probe.resolution_mv, mean_mv=0.0, correlation=0.0)
+        self.probe = ProbeWatch(plan.probe.resolution_mv)
         self.watch = EndPointWatch(plan)
         self.forecast = Forecast(plan, self.scale)
         self._settler: SettlingRule = FixedWait(plan.settling)
         self._doser: DosingPolicy = EqualVolumes(plan.dosing)
-        self._unsettled = 0
-        self._same = 0
-        self._last_raw_mv: float | None = None
-        self._same_points = 0
-        self._last_mv: list[float] = []  # of the point that settles
+        self._readings = 0  # good ones of the point that settles
+        self._temperature_c = plan.chemistry.temperature_c
 
     # --- before the first dose ---
 
@@ -85,8 +79,9 @@ class _Run:
                     "stopped", f"{question.text} Answered {answer!r}, needed {question.must_be!r}; nothing was dosed"
                 )
         potentials, temperatures = yield from self._rest_readings()
-        self.noise = noise = measure_noise(potentials, self.plan.probe.resolution_mv)
+        self.probe.noise = noise = measure_noise(potentials, self.plan.probe.resolution_mv)
         temperature_c = round(median(temperatures), 1) if temperatures else self.plan.chemistry.temperature_c
+        self._temperature_c = temperature_c
         self.scale = PhScale(self.plan, temperature_c)
         self.forecast = Forecast(self.plan, self.scale)
         self._settler = settling_rule(self.plan, self.world.log, self.scale)
@@ -104,22 +99,14 @@ class _Run:
     def _rest_readings(self) -> Talk[tuple[list[float], list[float]]]:
         potentials: list[float] = []
         temperatures: list[float] = []
-        bad = 0
         while len(potentials) < READINGS:
             reading = yield from self.world.read()
-            if reading.status == "ok":
+            if self.probe.is_good(reading):
                 potentials.append(reading.potential_mv)
                 if reading.temperature_c is not None:
                     temperatures.append(reading.temperature_c)
-            else:
-                bad = self._bad(bad, reading.status)
             yield from self.world.wait(self.plan.probe.reading_interval_s)
         return potentials, temperatures
-
-    def _bad(self, bad: int, status: str) -> int:
-        if bad + 1 >= MOST_BAD_READINGS:
-            raise EndOfRunError("failed", f"the probe gave {bad + 1} bad readings in a row: {status}")
-        return bad + 1
 
     # --- dosing loop ---
 
@@ -156,8 +143,7 @@ class _Run:
         context = self._context(planned)
         self._settler.begin(context)
         world.disturbed = False
-        self._last_mv = []
-        bad = 0
+        self._readings = 0
         while True:
             yield from world.wait(interval_s)
             reading = yield from world.read()
@@ -165,19 +151,24 @@ class _Run:
                 world.disturbed = False
                 context = self._context(planned)
                 self._settler.begin(context)
+                self._readings = 0
             if world.elapsed_s > self.plan.limits.run_time_s:
-                raise EndOfRunError("stopped", f"run time limit of {self.plan.limits.run_time_s:.0f} s reached")
-            if reading.status != "ok":
-                bad = self._bad(bad, reading.status)
+                check_limits(self.plan, world, self.points[-1], self.watch.found)
+            if not self.probe.is_good(reading):
                 continue
-            bad = 0
-            self._same = self._same + 1 if reading.potential_mv == self._last_raw_mv else 0
-            self._last_raw_mv = reading.potential_mv
-            self._last_mv = [*self._last_mv[-9:], reading.potential_mv]
+            self._readings += 1
+            if reading.temperature_c is not None and abs(reading.temperature_c - self._temperature_c) > WARMED_C:
+                yield from self._warmed(reading.temperature_c)
             accepted = self._settler.add(reading.at_s, reading.potential_mv)
             if accepted is not None:
                 self._settler.learn(context, accepted)
                 return accepted
+
+    def _warmed(self, temperature_c: float) -> Talk[None]:
+        yield from self.world.warn(
+            f"the sample went from {self._temperature_c:.1f} to {temperature_c:.1f} °C: pH is computed for the first"
+        )
+        self._temperature_c = temperature_c
 
     def _context(self, planned: PlannedDose) -> SettlingContext:
         sound = self.forecast.sound
@@ -191,7 +182,7 @@ class _Run:
         return SettlingContext(
             at_s=self.world.log[-1][1] if not self.world.disturbed else self.world.now_s or 0.0,
             delivered_ml=self.world.delivered_ml,
-            noise_mv=self.noise.sd_mv,
+            noise_mv=self.probe.noise.sd_mv,
             points=len(self.points),
             local_slope_mv_ml=round(slope, 3),
             step_mv=round(planned.expected_mv or 0.0, 3),
@@ -213,7 +204,7 @@ class _Run:
             volume_sd_ml=round(accepted.volume_sd_ml if accepted.volume_sd_ml < 1e3 else 1e3, 7),
             delivered_ml=round(self.world.delivered_ml, 7),
             potential_mv=potential_mv,
-            potential_sd_mv=self._potential_sd_mv(accepted.settled),
+            potential_sd_mv=self.probe.potential_sd_mv(accepted.settled, self._readings),
             ph=round(self.scale.ph(potential_mv), 6) if self.scale.known else None,
             at_s=self.world.now_s or 0.0,
             settled=accepted.settled,
@@ -230,26 +221,7 @@ class _Run:
                 settled=point.settled,
             )
         )
-        self._check_probe(point)
-
-    def _potential_sd_mv(self, settled: bool) -> float:
-        """Of a settled point by the noise; of one that did not settle by how its last readings spread."""
-        noise_mv = self.noise.sd_mv / math.sqrt(3.0)
-        if settled or len(self._last_mv) < 2:
-            return round(noise_mv, 4)
-        return round(max(noise_mv, stdev(self._last_mv)), 4)
-
-    def _check_probe(self, point: Point) -> None:
-        self._unsettled = 0 if point.settled else self._unsettled + 1
-        if self._unsettled >= MOST_UNSETTLED_POINTS:
-            raise EndOfRunError("failed", f"{self._unsettled} points in a row did not settle")
-        self._same_points = self._same_points + 1 if self._same >= 3 else 0
-        lively = self.noise.sd_mv > 0.5 * self.plan.probe.resolution_mv  # noise moves every reading of a live probe
-        most_readings, most_points = (STUCK_LIVELY, 1) if lively else (STUCK_READINGS, STUCK_POINTS)
-        if self._same >= most_readings and self._same_points >= most_points:
-            raise EndOfRunError(
-                "failed", f"the probe sticks at {point.potential_mv:.1f} mV: {self._same} readings without any change"
-            )
+        self.probe.took_point(point.potential_mv, point.settled)
 
     # --- after a point ---
 

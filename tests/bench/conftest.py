@@ -1,0 +1,73 @@
+"""Worlds for whole runs of the decision core in memory: any sample, any titrant, any probe and pump."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from typing import Any
+
+import pytest
+
+from controller.study import StudyRun, StudyWorld, drive
+from controller.study_plan import MODEL_GUIDED, Strategy, nominal_plan
+from controller.titration.actions import Action, Observation
+from controller.titration.plan import RunPlan, WeakAcid
+from simulators.bench import VirtualBench, WorldTruth
+from simulators.nominal import nominal_bench
+from simulators.solution_mixture import Mixture, StrongIon
+
+
+@dataclass(slots=True)
+class CoreCase:
+    """A plan, the world it runs in, and the true equivalence volumes of that world."""
+
+    plan: RunPlan
+    world: StudyWorld
+    true_ml: tuple[float, ...]
+
+    def run(self, answer: Callable[[Action], Observation | None] | None = None) -> StudyRun:
+        """Run the core in this world, every action and answer kept."""
+        return drive(self.plan, answer or self.world.answer, keep_entries=True)
+
+
+def build_case(
+    sample: Mixture | None = None,
+    *,
+    analyte: WeakAcid | None = None,
+    acid_titrant: bool = False,
+    titrant_mol_l: float = 0.1,
+    end_points: int = 1,
+    strategy: Strategy = MODEL_GUIDED,
+    seed: int = 1,
+    expected_ml: float | None = 5.0,
+    electrode: dict[str, Any] | None = None,
+    lag: dict[str, Any] | None = None,
+    syringe: dict[str, Any] | None = None,
+    beaker: dict[str, Any] | None = None,
+) -> CoreCase:
+    """The nominal acetic bench with what is given put in its place."""
+    nominal = nominal_bench("acetic", seed)
+    plan = nominal_plan(nominal, strategy)
+    truth = nominal.bench.truth
+    truth = WorldTruth(
+        beaker=replace(truth.beaker, lag=replace(truth.beaker.lag, **(lag or {})), **(beaker or {})),
+        electrode=replace(truth.electrode, **(electrode or {})),
+        syringe=replace(truth.syringe, **(syringe or {})),
+    )
+    if sample is None:
+        sample, analyte = nominal.bench.sample, plan.chemistry.analyte
+    titrant = Mixture(ions=(StrongIon(charge=-1 if acid_titrant else 1, concentration_mol_l=titrant_mol_l),))
+    bench = VirtualBench(truth, sample=sample, titrant=titrant, seed=seed, medium=nominal.bench.medium)
+    plan = replace(
+        plan,
+        titrant=replace(plan.titrant, concentration_mol_l=titrant_mol_l, acid=acid_titrant),
+        chemistry=replace(plan.chemistry, analyte=analyte, expected_equivalence_volume_ml=expected_ml),
+        end_points=replace(plan.end_points, expected=end_points),
+    )
+    return CoreCase(plan, StudyWorld(bench), bench.true_equivalence_volumes_ml)
+
+
+@pytest.fixture(scope="session")
+def core_case() -> Callable[..., CoreCase]:
+    """Build a case; see `build_case`."""
+    return build_case
