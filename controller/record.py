@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from typing import Any
 
 _SEAL = re.compile(rb'(.*),"own_sha256":"([0-9a-f]{64})"\}', re.DOTALL)
+_KINDS = ("header", "action", "observation", "event", "closing")
 _TAIL_BYTES = 16 * 1024
 
 
@@ -129,6 +130,8 @@ def _first_bad(lines: list[bytes], entries: list[dict[str, Any] | None]) -> tupl
             return index + 1, "not a line of a record"
         if entry.get("previous_sha256") != previous:
             return _whose_fault(lines, entries, index)
+        if sum(kind in entry for kind in _KINDS) != 1:
+            return index + 1, "it was edited: no kind of line that a record has"
         if (index == 0) != ("header" in entry) or ("closing" in entry and index != len(lines) - 1):
             return index + 1, "a header or closing line where none belongs"
         if entry.get("line") != index + 1:

@@ -86,6 +86,14 @@ def test_every_edit_of_one_byte_is_found_and_its_line_named(offset: int, change:
         assert found.first_bad_line == line_of(offset)
 
 
+def test_an_edit_of_any_byte_of_the_closing_line_is_found_there() -> None:
+    for offset in range(STARTS[-1], len(CLOSED) - 1):
+        edited = bytearray(CLOSED)
+        edited[offset] ^= 1
+        found = verify_bytes(bytes(edited))
+        assert (found.state, found.first_bad_line) == ("edited", 7), offset
+
+
 @settings(max_examples=200, deadline=None)
 @given(st.integers(0, len(CLOSED)), st.binary(min_size=1, max_size=4))
 def test_every_insertion_is_found(offset: int, inserted: bytes) -> None:
@@ -128,6 +136,20 @@ def test_a_new_number_with_the_hash_after_it_made_right_is_still_found() -> None
     lines[3] = lines[3].replace(old, hashlib.sha256(lines[2]).hexdigest().encode())
     found = verify_bytes(b"\n".join(lines) + b"\n")
     assert (found.state, found.first_bad_line) == ("edited", 4)
+
+
+@pytest.mark.parametrize("at", [2, 4])
+def test_lines_missing_from_a_chain_made_anew_are_still_found(at: int) -> None:
+    sink = MemorySink()
+    journal = Journal(sink, ManualClock())
+    journal.begin(HEADER)
+    for number in range(2, 4):
+        journal.lines += number == at
+        journal.write(Reading(at_s=0.0, potential_mv=1.0))
+    journal.lines += at == 4
+    journal.close("completed")
+    found = verify_bytes(sink.data)
+    assert (found.state, found.first_bad_line) == ("edited", at)
 
 
 def test_an_open_record_is_cut_and_read_all_the_same(tmp_path: Path) -> None:

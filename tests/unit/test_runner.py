@@ -365,6 +365,15 @@ def test_the_longest_run_time_stops_the_run(fake_bench: Any, make_plan: Any) -> 
     assert script.kinds() == ["waited", "refused", "waited", "refused"]
 
 
+def test_readings_too_pass_no_time_limit(fake_bench: Any, make_plan: Any) -> None:
+    fake_bench.probe.trouble = lambda: fake_bench.clock.wait(5000.0)
+    script = Script(Read(), Read(), Read(), DONE)
+    ended = go(fake_bench, make_plan(), script)
+    assert script.kinds() == ["reading", "reading", "command"]
+    assert ended.exit_status == 3
+    assert "longest run time is 7200 s" in str(ended.reason)
+
+
 def test_a_pump_that_delivers_more_than_asked_is_found_out(fake_bench: Any, plan: RunPlan) -> None:
     fake_bench.pump.trouble = lambda pump, number, steps: 70_000  # 35 mL on 50 mL; the limit is 80 mL
     script = Script(GOGGLES, dose(1), Read(), DONE)
