@@ -26,6 +26,8 @@ from controller.titration.settling import Accepted, FixedWait, SettlingContext, 
 
 #: change of temperature during a run that is warned about
 WARMED_C = 2.0
+#: successive fits that contradict the substance before it is said
+DOUBTS = 4
 
 
 def titrate(plan: RunPlan) -> Decisions:
@@ -228,6 +230,11 @@ class _Run:
     def _look(self) -> Talk[None]:
         self.forecast.update(self.points)
         sound = self.forecast.sound
+        analyte = self.plan.chemistry.analyte
+        if analyte is not None and self.forecast.updates_in_doubt == DOUBTS:
+            yield from self.world.warn(
+                f"the points do not fit the constants of {analyte.name}: going on without them; check the substance"
+            )
         number = len(self.watch.found) + 1
         if sound is not None and len(self.watch.found) < self.plan.end_points.expected:
             yield from self.world.say(

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol
 
 from controller.evaluation.inverse import InverseFit
@@ -91,7 +91,14 @@ class ModelGuided:
     def next_dose(self, points: Sequence[Point], sound: InverseFit | None, delivered_ml: float) -> PlannedDose:
         """See DosingPolicy."""
         if sound is None:
-            return self._fallback.next_dose(points, None, delivered_ml)
+            planned = self._fallback.next_dose(points, None, delivered_ml)
+            volume = max(min(planned.volume_ml, curvature_limit_ml(points, self._dosing)), self._dosing.smallest_ml)
+            if volume < planned.volume_ml:
+                share = volume / planned.volume_ml
+                expected = None if planned.expected_mv is None else planned.expected_mv * share
+                planned = replace(planned, volume_ml=volume, expected_mv=expected)
+                self._fallback.took(volume)
+            return planned
         planned = self._by_model(points, sound, delivered_ml)
         self._fallback.took(planned.volume_ml)
         return planned
@@ -107,7 +114,7 @@ class ModelGuided:
         else:
             volume, why = self._near(points, fit, delivered_ml, veq, sd), f"a step of {d.model_step_mv:.0f} mV"
         if abs(remaining) < near:
-            volume = min(volume, CURVATURE_FACTOR * self._curvature_limit(points))
+            volume = min(volume, CURVATURE_FACTOR * curvature_limit_ml(points, d))
         volume = min(max(volume, d.smallest_ml), d.largest_ml)
         return PlannedDose(
             volume_ml=volume, expected_mv=self._expected_mv(points[-1], fit, delivered_ml + volume), why=why
@@ -126,25 +133,26 @@ class ModelGuided:
             volume = min(volume, max(veq - delivered_ml + FAR_SDS * sd, d.smallest_ml))
         return max(volume, d.smallest_ml)
 
-    def _curvature_limit(self, points: Sequence[Point]) -> float:
-        """Dose for 8 mV by the measured slope and how it grows: dV = w/g (exp(g dE) - 1), w = dV/dE, g = dw/dV."""
-        d = self._dosing
-        if len(points) < 3:
-            return d.largest_ml
-        slope, before = local_slope(points), local_slope(points[:-1])
-        if slope < 1e-6 or before < 1e-6:
-            return d.largest_ml
-        w, w_before = 1.0 / slope, 1.0 / before
-        de = abs(points[-1].potential_mv - points[-3].potential_mv) / 2.0
-        g = (math.log(w) - math.log(w_before)) / max(de, 1.0)  # per mV
-        step_mv = d.slope_step_mv
-        exponent = min(max(g * step_mv, -5.0), math.log(CURVATURE_GROWTH))
-        factor = math.expm1(exponent) / exponent if abs(exponent) > 1e-9 else 1.0
-        return w * step_mv * factor
-
     def _expected_mv(self, point: Point, fit: InverseFit, volume_ml: float) -> float:
         ph = fit.ph_at(volume_ml)
         return abs(self._scale.potential_mv(ph) - self._scale.potential_mv(fit.ph_at(point.volume_ml)))
+
+
+def curvature_limit_ml(points: Sequence[Point], dosing: Dosing) -> float:
+    """Dose for one slope step by the measured slope and how it grows; the largest dose where that is not known.
+
+    dV = w/g (exp(g dE) - 1) with w = dV/dE and g = dw/dV = d ln w/dE.
+    """
+    if len(points) < 3:
+        return dosing.largest_ml
+    slope, before = local_slope(points), local_slope(points[:-1])
+    if slope < 1e-6 or before < 1e-6:
+        return dosing.largest_ml
+    between_mv = abs(points[-1].potential_mv - points[-3].potential_mv) / 2.0
+    g = (math.log(before) - math.log(slope)) / max(between_mv, 1.0)
+    exponent = min(max(round(g, 6) * dosing.slope_step_mv, -5.0), math.log(CURVATURE_GROWTH))
+    factor = math.expm1(exponent) / exponent if abs(exponent) > 1e-9 else 1.0
+    return dosing.slope_step_mv / slope * factor
 
 
 def local_slope(points: Sequence[Point]) -> float:

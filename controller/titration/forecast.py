@@ -14,6 +14,10 @@ from controller.titration.points import PhScale, Point
 from controller.titration.precision import pump_precision_ml
 
 JUMP_SDS = 8.0
+#: above this reduced chi-square the substance named is doubted, and a model with a free constant tried
+DOUBTFUL_CHI_SQUARE = 5.0
+BETTER_SHARE = 0.3
+FEWEST_UNKNOWN = 5
 JUMP_PRECISIONS = 20.0  # of the pump
 _POINT_PRECISIONS = 0.7
 _USUAL_STRENGTH_MOL_L = 0.01
@@ -41,6 +45,8 @@ class Forecast:
         self.fit: InverseFit | None = None  # the latest, sound or not
         self.sound: InverseFit | None = None  # the latest where it may guide
         self.jumped = False
+        self._unknown = False  # the constants in use come from the points alone
+        self.updates_in_doubt = 0  # successive fits in which the named substance did not fit
 
     def _ladder(self, index: int) -> ProtonLadder:
         return self._ladders[index] if index < len(self._ladders) else UNKNOWN_LADDER
@@ -56,17 +62,7 @@ class Forecast:
         self.fit = self.sound = None
         if not self._possible or len(points) < 2:
             return
-        setting = self._setting
-        if not setting.ladder.known and self._found_ml:
-            points = [p for p in points if p.volume_ml > self._found_ml[-1]]
-            setting = replace(setting, titrated_before_ml=self._found_ml[-1])
-            if len(points) < 3:
-                return
-        volume = np.array([p.volume_ml for p in points])
-        ph = np.array([p.ph for p in points], dtype=np.float64)
-        sd = np.array([p.volume_sd_ml for p in points])
-        sd_e = np.array([p.potential_sd_mv for p in points])
-        self.fit = fit = fit_inverse(volume, ph, setting, volume_sd_ml=sd, signal_sd_mv=sd_e)
+        self.fit = fit = self._best_fit(points)
         if fit is None or not fit.sound:
             return
         veq, sd_veq = round(fit.equivalence_ml, 6), round(fit.standard_uncertainty_ml, 6)
@@ -75,6 +71,34 @@ class Forecast:
         behind = bool(self._found_ml) and veq <= self._found_ml[-1] + 3.0 * sd_veq
         if not self.jumped and not behind:
             self.sound = fit
+
+    def _best_fit(self, points: Sequence[Point]) -> InverseFit | None:
+        """With the substance's constants while they fit; else with one constant to be found from the points alone."""
+        named = self._fit(points, self._setting) if self._setting.ladder.known else None
+        if named is not None and round(named.chi_square, 3) <= DOUBTFUL_CHI_SQUARE:
+            self._unknown, self.updates_in_doubt = False, 0
+            return named
+        before_ml = self._found_ml[-1] if self._found_ml else 0.0
+        section = [p for p in points if p.volume_ml > before_ml or not self._found_ml]
+        if self._setting.ladder.known and len(section) < FEWEST_UNKNOWN:
+            return named
+        unknown = self._fit(section, replace(self._setting, ladder=UNKNOWN_LADDER, titrated_before_ml=before_ml))
+        better = unknown is not None and unknown.sound
+        if better and named is not None and unknown is not None:
+            better = round(unknown.chi_square, 3) < BETTER_SHARE * round(named.chi_square, 3)
+        if not better and self._setting.ladder.known:
+            return named
+        if not self._unknown:
+            self._unknown, self._last = True, None
+        self.updates_in_doubt += self._setting.ladder.known
+        return unknown
+
+    def _fit(self, points: Sequence[Point], setting: InverseSetting) -> InverseFit | None:
+        volume = np.array([p.volume_ml for p in points])
+        ph = np.array([p.ph for p in points], dtype=np.float64)
+        sd = np.array([p.volume_sd_ml for p in points])
+        sd_e = np.array([p.potential_sd_mv for p in points])
+        return fit_inverse(volume, ph, setting, volume_sd_ml=sd, signal_sd_mv=sd_e)
 
 
 def plan_ladders(plan: RunPlan) -> tuple[ProtonLadder, ...]:

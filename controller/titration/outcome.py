@@ -21,6 +21,8 @@ if TYPE_CHECKING:
 
 FEWEST_POINTS = 6
 SAME_POINT_SHARE = 0.02
+#: an evaluation this many times less certain than the run's own sound model does not take its place
+COARSER = 4.0
 #: no probe and no calibration is straight to better than this over a few pH, mV
 STRAIGHTNESS_MV = 0.2
 DIGITS = 7
@@ -95,7 +97,9 @@ def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | Non
     volume_ml, sd_ml, estimator = found.volume_ml, found.standard_uncertainty_ml, found.estimator
     ph, potential_mv = found.ph, found.potential_mv
     for point in evaluation.end_points if evaluation is not None else ():
-        if abs(point.volume_ml - found.volume_ml) <= SAME_POINT_SHARE * found.volume_ml + 5.0 * sd_ml:
+        coarser = point.standard_uncertainty_ml > COARSER * sd_ml and "model" in estimator
+        near = abs(point.volume_ml - found.volume_ml) <= SAME_POINT_SHARE * found.volume_ml + 5.0 * sd_ml
+        if near and not coarser:
             volume_ml, sd_ml, estimator = point.volume_ml, point.standard_uncertainty_ml, point.estimator
             ph, potential_mv = point.ph, point.potential_mv
             break
