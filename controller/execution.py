@@ -14,27 +14,9 @@ from controller.guard import Guard
 from controller.journal import Journal
 from controller.stopping import Commands, StopSwitch
 from controller.titration.actions import (
-    Action,
-    Answered,
-    Ask,
-    Back,
-    Command,
-    Dose,
-    Dosed,
-    Failed,
-    Observation,
-    Prime,
-    Primed,
-    Read,
-    Reading,
-    Refill,
-    Refilled,
-    Refused,
-    Stir,
-    Stirring,
-    Wait,
-    Waited,
-)
+    Action, Answered, Ask, Back, Command, Dose, Dosed, Failed, Observation, Prime, Primed, Read, Reading, Refill,
+    Refilled, Refused, Stir, Stirring, Wait, Waited,
+)  # fmt: skip
 from controller.titration.plan import RunPlan
 from drivers.clock import Clock
 from drivers.errors import DeviceError, StoppedError

@@ -19,29 +19,14 @@ from controller.guard import Guard, check_start, start_warnings
 from controller.header import header_of
 from controller.journal import Journal, RecordError
 from controller.outcome import (
-    NOT_CONFIRMED,
-    AmountOf,
-    RunFailedError,
-    RunResult,
-    account_of,
-    add_amount,
-    came_from,
-    exit_status,
-    whole_result,
-)
+    NOT_CONFIRMED, AmountOf, RunFailedError, RunResult, account_of, add_amount, came_from, exit_status, whole_result,
+)  # fmt: skip
 from controller.progress import Pace, Progress
 from controller.startcheck import check_devices
 from controller.stopping import Commands, StopSwitch
 from controller.titration.actions import (
-    Action,
-    Decisions,
-    Failed,
-    Finish,
-    Observation,
-    Refused,
-    Report,
-    Resumed,
-)
+    Action, Decisions, Failed, Finish, Observation, Refused, Report, Resumed,
+)  # fmt: skip
 from controller.titration.plan import RunPlan
 from drivers.clock import Clock
 from drivers.errors import StoppedError
@@ -136,13 +121,7 @@ class _Run:
     def __post_init__(self) -> None:
         self.guard = Guard(self.plan)
         self.execution = Execution(
-            self.plan,
-            self.devices,
-            self.journal,
-            self.guard,
-            clock=self.clock,
-            stop=self.stop,
-            commands=self.commands,
+            self.plan, self.devices, self.journal, self.guard, clock=self.clock, stop=self.stop, commands=self.commands
         )
         self.pace = Pace(self.plan)
         self.gaps = ClockWatch(self.clock)
