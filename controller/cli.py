@@ -179,6 +179,15 @@ def _predict(made: Parser) -> None:
     _json(made)
 
 
+def _replay(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.replay:replay")
+    made.add_argument("run", metavar="RUN", help="a record's name or file")
+    made.add_argument("--time-scale", metavar="X", help="watch it again, X times as fast as it was")
+    _lab(made)
+    _world(made)
+    _json(made)
+
+
 def _schema(made: Parser) -> None:
     made.set_defaults(function="controller.commands.schema:schema")
     made.add_argument("kind", choices=("method", "bench", "solution"))
@@ -229,6 +238,7 @@ COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
     "decide": ("the decision core alone, over JSON lines", _decide),
     "evaluate": ("end points of a record or CSV file", _evaluate),
     "predict": ("the expected curve before anything moves", _predict),
+    "replay": ("decide a record again, or watch it again", _replay),
     "schema": ("JSON Schema of a settings file", _schema),
     "runs": ("list, show, verify and export records", _runs),
     "bench": ("show or serve a bench", _bench),
