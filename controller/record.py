@@ -18,6 +18,8 @@ if TYPE_CHECKING:
 _SEAL = re.compile(rb'(.*),"own_sha256":"([0-9a-f]{64})"\}', re.DOTALL)
 _KINDS = ("header", "action", "observation", "event", "closing")
 _TAIL_BYTES = 16 * 1024
+#: length of the UTC stamp that a record's name begins with
+_STAMP = len("2026-01-01T000000Z")
 
 
 class NotARecordError(HalfdropError):
@@ -207,8 +209,9 @@ def summarise(path: Path) -> dict[str, Any]:
 
 
 def list_records(runs: Path) -> list[Path]:
-    """Return the records of a folder, oldest first (their names begin with UTC)."""
-    return sorted(path for path in runs.glob("*.jsonl") if path.is_file())
+    """Return the records of a folder, oldest first (their names begin with UTC, a counter ends those of one second)."""
+    found = (path for path in runs.glob("*.jsonl") if path.is_file())
+    return sorted(found, key=lambda path: (path.stem[:_STAMP], len(path.stem), path.stem))
 
 
 def points(record: Record) -> list[dict[str, Any]]:

@@ -104,11 +104,16 @@ class Link:
             self._line.attached = False
         port, self._port = self._port, None
         self._forget()
+        # pyserial forgets a socket unclosed when its other end is gone; close it ourselves
+        below = getattr(port, "_socket", None)
         try:
             port.close()
         except Exception as failure:
             if not _is_port_failure(failure):
                 raise
+        finally:
+            if below is not None:
+                below.close()
 
     def send(self, data: bytes) -> None:
         """Send a request; what came unasked before it is thrown away.

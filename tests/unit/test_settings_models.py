@@ -185,7 +185,7 @@ def test_solution_file_by_name_and_by_constants(tmp_path: Path) -> None:
     )
     found = load_solution(file)
     assert found.sample.substances is not None
-    assert found.sample.substances[0].name == "acetic acid"
+    assert found.sample.substances[0].name == "acetic"
     assert found.sample.substances[0].concentration_mol_l == 0.01
     assert found.sample.substances[1].pka == (2.1, 7.2)
     assert found.sample.strong_ions == ()
