@@ -22,6 +22,8 @@ from simulators.activity import davies_term
 
 _LN10 = math.log(10.0)
 _FEWEST_POINTS = 3
+#: of more points than this only a part is taken, evenly
+_MOST_POINTS = 300
 #: distance from the jump's middle from which the excess of titrant may be alone, units of pH
 _CLEAR_OF_JUMP = 0.8
 #: the part of the way to the end point that the line before it may use
@@ -162,6 +164,7 @@ def _line(
     """Take points from the far end of `use` inwards until two in a row do not lie on the line of the others."""
     order = np.flatnonzero(use & np.isfinite(function) & (function > 0.0))
     order = order[::-1] if far_first else order
+    order = order[:: 1 + len(order) // _MOST_POINTS]
     noise = np.hypot(signal_noise(curve), _MODEL_SD) * _LN10
     taken = list(order[:_FEWEST_POINTS])
     if len(taken) < _FEWEST_POINTS:

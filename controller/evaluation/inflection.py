@@ -99,10 +99,11 @@ def _grouped(volume: Array, signal: Array, sd: Array, group_sd: float) -> tuple[
 
 def _steps_away(volume: Array, signal: Array, sd: Array, i: int, group_sd: float) -> bool:
     """Is the next volume's point far off already? Then point i stands alone: the jump keeps its own points."""
-    later = np.flatnonzero(volume[i + 1 :] > volume[i])
-    if not len(later):
+    following = i + 1
+    while following < len(volume) and volume[following] <= volume[i]:
+        following += 1
+    if following == len(volume):
         return False
-    following = i + 1 + int(later[0])
     return bool(abs(signal[following] - signal[i]) >= group_sd * sd[i])
 
 
@@ -116,8 +117,10 @@ def find_inflections(curve: Curve, *, smallest_rise: float = SMALLEST_RISE) -> t
     found: list[Inflection] = []
     remarks: list[str] = []
     for j in range(len(s.slope)):
+        if not _is_peak(s.slope, j):
+            continue
         left, right = _flank(s, j, -1), _flank(s, j, +1)
-        if left is None or right is None or not _is_peak(s.slope, j):
+        if left is None or right is None:
             continue
         peak = float(s.slope[j])
         base_at = left if s.slope[left] > s.slope[right] else right

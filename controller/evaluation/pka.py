@@ -22,7 +22,7 @@ _FROM, _TO = 0.2, 0.8
 #: the plain half-equivalence pH stands for pKa only below this bias
 LARGEST_PLAIN_BIAS = 0.02
 #: where initial volume and concentration are unknown, the substance is taken to be at least this concentrated
-_ASSUMED_MOL_L = 0.001
+_ASSUMED_MOL_L = 0.002
 _UNCORRECTED = (
     "pKa without correction for free H+ and OH-: initial volume or titrant concentration is not given (the bias is "
     f"below {LARGEST_PLAIN_BIAS:g} if the substance is at least {_ASSUMED_MOL_L * 1000.0:g} mmol/L)"
