@@ -12,22 +12,35 @@ from dataclasses import dataclass
 
 from controller.guard import Guard
 from controller.journal import Journal
-from controller.stopping import Commands, StopSwitch
+from controller.stopping import Commands, StopSwitch, halted, wait_out
 from controller.titration.actions import (
-    Action, Answered, Ask, Back, Command, Dose, Dosed, Failed, Observation, Prime, Primed, Read, Reading, Refill,
-    Refilled, Refused, Stir, Stirring, Wait, Waited,
-)  # fmt: skip
+    Action,
+    Answered,
+    Ask,
+    Back,
+    Command,
+    Dose,
+    Dosed,
+    Failed,
+    Observation,
+    Prime,
+    Primed,
+    Read,
+    Reading,
+    Refill,
+    Refilled,
+    Refused,
+    Stir,
+    Stirring,
+    Wait,
+    Waited,
+)
 from controller.titration.plan import RunPlan
 from drivers.clock import Clock
 from drivers.errors import DeviceError, StoppedError
 from drivers.operator import Operator
 from drivers.probe import Probe
 from drivers.pump import LastDose, Pump
-
-#: a command that arrives during a wait is heard within this time, s
-COMMAND_POLL_S = 0.5
-#: tries to halt the pump before it is called not confirmed
-STOP_TRIES = 3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -123,14 +136,7 @@ class Execution:
 
     def halt(self, why: str) -> bool:
         """Stop the pump now; True when it confirmed that it stands. What comes of it is written down afterwards."""
-        confirmed = False
-        for _ in range(STOP_TRIES):
-            try:
-                confirmed = self._devices.pump.stop()
-            except Exception:  # whatever it is, halting is tried again, and the outcome is recorded below
-                confirmed = False
-            if confirmed:
-                break
+        confirmed = halted(self._devices.pump)
         self.stop_confirmed = confirmed
         self._journal.event("pump-stop", why=why, confirmed=confirmed, by="runner")
         return confirmed
@@ -156,13 +162,7 @@ class Execution:
 
     def _wait(self, seconds: float) -> Observation:
         self._journal.before_silence(seconds)
-        until_s = self._clock.now_s() + seconds
-        if self._commands is None:
-            self._clock.wait(seconds, self._stop.event)
-        else:
-            while (left_s := until_s - self._clock.now_s()) > 0 and not self._commands.waiting():
-                if self._clock.wait(min(left_s, COMMAND_POLL_S), self._stop.event):
-                    break
+        wait_out(self._clock, seconds, self._stop, self._commands)
         for device in sorted(self._down):
             if self._answers(device):
                 self._down.discard(device)

@@ -19,14 +19,29 @@ from controller.guard import Guard, check_start, start_warnings
 from controller.header import header_of
 from controller.journal import Journal, RecordError
 from controller.outcome import (
-    NOT_CONFIRMED, AmountOf, RunFailedError, RunResult, account_of, add_amount, came_from, exit_status, whole_result,
-)  # fmt: skip
+    NOT_CONFIRMED,
+    AmountOf,
+    RunFailedError,
+    RunResult,
+    account_of,
+    add_amount,
+    came_from,
+    exit_status,
+    whole_result,
+)
 from controller.progress import Pace, Progress
 from controller.startcheck import check_devices
 from controller.stopping import Commands, StopSwitch
 from controller.titration.actions import (
-    Action, Decisions, Failed, Finish, Observation, Refused, Report, Resumed,
-)  # fmt: skip
+    Action,
+    Decisions,
+    Failed,
+    Finish,
+    Observation,
+    Refused,
+    Report,
+    Resumed,
+)
 from controller.titration.plan import RunPlan
 from drivers.clock import Clock
 from drivers.errors import StoppedError

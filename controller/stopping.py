@@ -10,6 +10,13 @@ from dataclasses import dataclass, field
 from typing import Literal, Protocol
 
 from controller.titration.actions import Command
+from drivers.clock import Clock
+from drivers.pump import Pump
+
+#: a command that arrives during a wait is heard within this time, s
+COMMAND_POLL_S = 0.5
+#: tries to halt the pump before it is called not confirmed
+STOP_TRIES = 3
 
 StopKind = Literal["interrupt", "terminate", "operator"]
 
@@ -82,3 +89,25 @@ class Commands(Protocol):
     def take(self) -> Command | None:
         """Return the next command, None where there is none."""
         ...
+
+
+def halted(pump: Pump) -> bool:
+    """Stop the pump now; True when it confirmed that it stands."""
+    for _ in range(STOP_TRIES):
+        try:
+            if pump.stop():
+                return True
+        except Exception:  # whatever it is, halting is tried again
+            continue
+    return False
+
+
+def wait_out(clock: Clock, seconds: float, stop: StopSwitch, commands: Commands | None) -> None:
+    """Let `seconds` pass, or less where the switch is pulled or a command comes."""
+    if commands is None:
+        clock.wait(seconds, stop.event)
+        return
+    until_s = clock.now_s() + seconds
+    while (left_s := until_s - clock.now_s()) > 0 and not commands.waiting():
+        if clock.wait(min(left_s, COMMAND_POLL_S), stop.event):
+            return
