@@ -60,6 +60,7 @@ class Execution:
         delivered_ml, primed_ml: sums of what the pump reported (a dose in doubt counts its mean).
         steps: pump steps of every dose and prime whose volume is known.
         doses: doses of which something was or may have been delivered.
+        last_number: of the last dose that was sent.
         in_doubt: numbers of doses whose volume is known only between bounds.
     """
 
@@ -76,7 +77,7 @@ class Execution:
     ) -> None:
         self._plan, self._devices, self._journal, self._guard = plan, devices, journal, guard
         self._clock, self._stop, self._commands = clock, stop, commands
-        self._last_number = plan.pump.last_dose_number
+        self.last_number = plan.pump.last_dose_number
         self._down: set[str] = set()
         self.delivered_ml = self.primed_ml = 0.0
         self.steps = self.doses = 0
@@ -212,11 +213,11 @@ class Execution:
         return Primed(at_s=self.at_s(), volume_ml=pushed_ml)
 
     def _dose(self, action: Dose) -> Observation:
-        if action.number <= self._last_number:
-            return Refused(what=f"dose {action.number}: the last one was {self._last_number}", at_s=self.at_s())
+        if action.number <= self.last_number:
+            return Refused(what=f"dose {action.number}: the last one was {self.last_number}", at_s=self.at_s())
         self._guard.intend(action)
         self._journal.barrier()
-        self._last_number = action.number
+        self.last_number = action.number
         try:
             done = self._devices.pump.dose(action.number, action.volume_ml)
         except StoppedError as error:

@@ -30,6 +30,7 @@ from controller.outcome import (
     whole_result,
 )
 from controller.progress import Pace, Progress
+from controller.resumption import Resumption, take_up
 from controller.startcheck import check_devices
 from controller.stopping import Commands, StopSwitch
 from controller.titration.actions import (
@@ -64,8 +65,9 @@ def run(
     on_progress: Callable[[Progress], None] | None = None,
     amount_of: AmountOf | None = None,
     ask_afterwards: bool = True,
+    resumption: Resumption | None = None,
 ) -> RunResult:
-    """Run one titration from the first question to the closed record.
+    """Run one titration from the first question to the closed record, or go on with one that broke off.
 
     Args:
         plan: what the record's header will hold; made for exactly these devices.
@@ -80,6 +82,8 @@ def run(
         on_progress: called with every entry after it was written.
         amount_of: (plan, result) -> value of the result's key "result", None where there is no amount.
         ask_afterwards: ask whether the probe was rinsed and stored (False where nobody is there to answer).
+        resumption: where a broken-off run goes on; `journal` then is reopened, `decisions` rebuilt from it, and the
+            devices were checked.
 
     Returns:
         The result, also where the run was stopped or a device failed and the core ended it.
@@ -90,13 +94,17 @@ def run(
         RecordError: the record could not be written; the pump was stopped.
         RunFailedError: an error of the program; the pump was stopped, the record closed as failed.
     """
-    try:
-        check_start(plan)
-        identities, pump_before_ml = check_devices(plan, devices)
-        header = header_of(plan, devices=identities, operator_name=operator_name, hashes=hashes, clock=clock)
-    except BaseException:
-        journal.discard()
-        raise
+    header: dict[str, Any] | None = None
+    if resumption is None:
+        try:
+            check_start(plan)
+            identities, pump_before_ml = check_devices(plan, devices)
+            header = header_of(plan, devices=identities, operator_name=operator_name, hashes=hashes, clock=clock)
+        except BaseException:
+            journal.discard()
+            raise
+    else:
+        pump_before_ml = resumption.pump_before_ml
     return _Run(
         plan=plan,
         decisions=decisions,
@@ -108,6 +116,7 @@ def run(
         on_progress=on_progress,
         amount_of=amount_of,
         pump_before_ml=pump_before_ml,
+        resumption=resumption,
     ).whole(header, ask_afterwards)
 
 
@@ -125,6 +134,8 @@ class _Run:
     on_progress: Callable[[Progress], None] | None
     amount_of: AmountOf | None
     pump_before_ml: float
+    resumption: Resumption | None
+    owed: Resumed | None = None
     guard: Guard = field(init=False)
     execution: Execution = field(init=False)
     pace: Pace = field(init=False)
@@ -141,10 +152,14 @@ class _Run:
         self.pace = Pace(self.plan)
         self.gaps = ClockWatch(self.clock)
         self.warnings = start_warnings(self.plan)
+        if self.resumption is not None:
+            self.owed = self.resumption.gap
+            take_up(self.resumption.exchanges, self.execution, self.guard, self.plan.pump.step_ml)
 
-    def whole(self, header: Mapping[str, Any], ask_afterwards: bool) -> RunResult:
+    def whole(self, header: Mapping[str, Any] | None, ask_afterwards: bool) -> RunResult:
         try:
-            self.journal.begin({**header, "warnings": self.warnings})
+            if header is not None:
+                self.journal.begin({**header, "warnings": self.warnings, "pump_delivered_ml": self.pump_before_ml})
             result = self._complete(self._converse())
             self.journal.barrier()
             details: dict[str, Any] = {}
@@ -162,15 +177,22 @@ class _Run:
 
     def _converse(self) -> dict[str, Any]:
         """Carry out actions until the core finishes; return its result."""
+        back = self.resumption
+        if back is not None and back.pending is None:
+            return back.finished or {}
         answer: Observation | None = None
+        written, settled = (False, None) if back is None else (back.written, back.settled)
         try:
-            action = next(self.decisions)
+            action = next(self.decisions) if back is None or back.pending is None else back.pending
             while not isinstance(action, Finish):
-                self._write(action)
+                if not written:
+                    self._write(action)
+                written = False
                 if isinstance(action, Report):
                     answer = None
                 else:
-                    answer = self._answer(action)
+                    answer = self._answer(action, settled)
+                    settled = None
                     if answer is None:
                         return self._cut_off()
                     self._write(answer)
@@ -186,9 +208,9 @@ class _Run:
             execution = self.execution
             self.on_progress(self.pace.progress(item, execution.at_s(), execution.delivered_ml, execution.doses))
 
-    def _answer(self, action: Action) -> Observation | None:
+    def _answer(self, action: Action, settled: Observation | None) -> Observation | None:
         """Return what the core is told; None where the runner ends the run because the core does not."""
-        answer = self._instead() or self.execution.carry_out(action)
+        answer = settled or self._instead() or self.execution.carry_out(action)
         if isinstance(answer, Refused):
             self.safety = answer.what
         elif isinstance(answer, Failed):
@@ -221,6 +243,9 @@ class _Run:
         return gap
 
     def _gap(self) -> Resumed | None:
+        if self.owed is not None:
+            owed, self.owed = self.owed, None
+            return owed
         step_s = self.gaps.step_s()
         if step_s < 0:
             self.journal.event("clock-step", seconds=step_s, by="runner")
