@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import replace
 
 import pytest
@@ -183,5 +184,5 @@ def test_every_dose_has_a_reason_and_the_forecast_narrows(core_case) -> None:
     forecasts = [r for r in run.reports if r.what == "forecast"]
     assert forecasts[-1].standard_uncertainty_ml < 0.1 * forecasts[0].standard_uncertainty_ml
     points = [r for r in run.reports if r.what == "point"]
-    assert all(b.volume_ml >= a.volume_ml for a, b in zip(points, points[1:], strict=False))
+    assert all(b.volume_ml >= a.volume_ml for a, b in itertools.pairwise(points))
     assert [r.what for r in run.reports].count("end-point") == 1
