@@ -23,7 +23,13 @@ from simulators.constants import ideal_slope_mv
 
 #: said of a line before the end point without initial volume or titrant concentration
 NOT_CORRECTED = "not corrected for free H+ and OH-: initial volume or titrant concentration is not given"
+NEIGHBOUR = "takes no account of the substance's other protons"
 OFF_LINE = "the points there do not lie on a line of this end point"
+#: what takes up free titrant beyond an end point, and what that means
+_TAKES_ACID = (
+    "hydrogensulfate, fluoride or organic acids do), which biases a plain Gran line, in seawater by 0.15 to 0.4 %"
+)
+_TAKES_BASE = "a further proton of the substance, silicic or carbonic acid do), which biases a plain Gran line"
 #: an estimate that lies further from the jump's shape than this share of the volume is of something else
 _LARGEST_DISTANCE = 0.05
 #: excess of titrant growing this much slower than titrant is added: something else takes it up
@@ -73,6 +79,8 @@ def from_gran(line: GranLine | None, curve: Curve, inflection: Inflection, *, be
         return replace(estimate, sound=False, remark=OFF_LINE)
     if not beyond and (c is None or curve.initial_volume_ml is None):
         return replace(estimate, sound=False, remark=NOT_CORRECTED)
+    if not beyond and curve.pka is not None and len(curve.pka) > 1:
+        return replace(estimate, sound=False, remark=NEIGHBOUR)
     if beyond and c is not None and curve.ph is not None:
         ratio = line.slope * c
         if ratio > _SLOWER:
@@ -80,9 +88,8 @@ def from_gran(line: GranLine | None, curve: Curve, inflection: Inflection, *, be
                 estimate,
                 sound=False,
                 remark=(
-                    f"free titrant grows {100.0 * (1.0 - 1.0 / ratio):.0f} % slower than it is added: another "
-                    "substance takes it up (hydrogensulfate, fluoride or organic acids do), which biases a plain Gran "
-                    "line, in seawater by 0.15 to 0.4 %"
+                    f"free titrant grows {100.0 * (1.0 - 1.0 / ratio):.0f} % slower than it is added: something else "
+                    f"takes it up ({_TAKES_ACID if curve.acid_titrant else _TAKES_BASE}"
                 ),
             )
         if ratio < _FASTER:

@@ -28,6 +28,7 @@ from controller.evaluation.gran import gran_before, gran_beyond
 from controller.evaluation.inflection import SMALLEST_RISE, Inflection, find_inflections, inflection_at
 from controller.evaluation.modelfit import ModelFit, fit_charge_balance
 from controller.evaluation.pka import HalfEquivalence, half_equivalence
+from controller.evaluation.protons import ladders
 from controller.evaluation.remarks import carbonate_remarks, curve_remarks, extrapolation_remarks
 from controller.evaluation.result import EndPoint, Evaluation
 
@@ -77,7 +78,7 @@ def evaluate(
     fit = fit_charge_balance(known)
     estimates = _estimates(known, jumps, fit, strong=strong)
     reported = [choose(e) for e in estimates]
-    halves = _halves(known, reported)
+    halves = _halves(known, reported, fit)
     warnings += curve_remarks(known, jumps, estimates, reported, fit)
     warnings += [h.remark for h in halves if h.remark is not None]
     if strong and not curve.acid_titrant:
@@ -118,7 +119,7 @@ def choose(estimates: list[Estimate]) -> Estimate:
 
 
 def _alone(curve: Curve, estimate: Estimate, fit: ModelFit, warnings: list[str]) -> Evaluation:
-    halves = _halves(curve, [estimate])
+    halves = _halves(curve, [estimate], fit)
     said = "the curve shows no jump: the end point rests on the charge balance of the stated substance alone"
     return Evaluation(
         end_points=(_end_point(curve, estimate),),
@@ -193,11 +194,14 @@ def _end_point(curve: Curve, estimate: Estimate) -> EndPoint:
     )
 
 
-def _halves(curve: Curve, reported: list[Estimate]) -> list[HalfEquivalence]:
+def _halves(curve: Curve, reported: list[Estimate], fit: ModelFit | None) -> list[HalfEquivalence]:
     halves: list[HalfEquivalence] = []
     previous = 0.0
     for e in reported:
         single, charge = _step(curve, len(reported), len(halves))
+        unit = None
+        if fit is not None and fit.sound:
+            unit = float(np.interp((previous + e.volume_ml) / 2.0, curve.volume_ml, fit.log_coefficient))
         half = half_equivalence(
             curve,
             end_point_ml=e.volume_ml,
@@ -205,6 +209,7 @@ def _halves(curve: Curve, reported: list[Estimate]) -> list[HalfEquivalence]:
             previous_ml=previous,
             single_proton=single,
             charge_before=charge,
+            log_coefficient=unit,
         )
         if half is not None:
             halves.append(half)
@@ -214,19 +219,16 @@ def _halves(curve: Curve, reported: list[Estimate]) -> list[HalfEquivalence]:
 
 def _step(curve: Curve, jumps: int, index: int) -> tuple[bool | None, int | None]:
     """Return whether end point `index` counts one proton, and the charge of the form that has it; None: not known."""
-    if curve.pka is None:
-        return None, None
-    gone = curve.charge + curve.counter_ion_charge
-    if curve.acid_titrant:
-        lost = len(curve.pka) - (len(curve.pka) - gone) - index - 1
-        steps = gone
-    else:
-        lost = gone + index
-        steps = len(curve.pka) - gone
     if not curve.pka:
-        return False, None
-    single = steps == 1 or jumps > 1 or None
-    return single, curve.charge - lost
+        return (None, None) if curve.pka is None else (False, None)
+    gone = curve.charge + curve.counter_ion_charge
+    acid = bool(curve.acid_titrant)
+    shown = ladders(curve.pka, curve.charge, curve.counter_ion_charge, pkw=curve.pkw, acid_titrant=acid)
+    if len(shown) != jumps:
+        return None, None
+    counted = [0, *(round(1.0 / step.share) for step in shown)]
+    lost = gone - counted[index] - 1 if acid else gone + counted[index]
+    return counted[index + 1] - counted[index] == 1, curve.charge - lost
 
 
 def _details(fit: ModelFit | None, jumps: list[Inflection]) -> dict[str, Any]:

@@ -31,7 +31,7 @@ _BEFORE_FROM, _BEFORE_TO = 0.3, 0.97
 #: fewer points than this cannot show whether the weights are right
 _FEWEST_FOR_WEIGHTS = 5
 #: no line is better than this share of its end point (probe slope, activity, dilution)
-_MODEL_SHARE = 2e-4
+_MODEL_SHARE = 5e-4
 #: where the initial volume is not given: what a probe and a stirrer need at least, and a usual volume, mL
 _SMALLEST_INITIAL_ML, _USUAL_INITIAL_ML = 20.0, 50.0
 #: ... allowed while the choice moves the end point by less than this share

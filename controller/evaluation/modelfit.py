@@ -45,7 +45,9 @@ class ModelFit:
     """The fitted balance. Volumes mL, concentrations mol/L, all with standard uncertainties.
 
     `equivalence_ml[n]` belongs to n protons lost per mole, n from 0 to len(pka); those that show no jump included.
-    `outliers`: (index of the point, signal less fit in pH).
+    `outliers`: (index of the point, signal less fit in pH). `residual_ml`: volume of each point less the fit's at its
+    pH, with the standard deviation that the fit took it to have in `residual_sd_ml`. `log_coefficient`: log10 of the
+    activity coefficient of charge 1 at each point.
     """
 
     equivalence_ml: tuple[float, ...]
@@ -60,6 +62,9 @@ class ModelFit:
     sound: bool
     activity: bool
     outliers: tuple[tuple[int, float], ...]
+    residual_ml: tuple[float, ...] = ()
+    residual_sd_ml: tuple[float, ...] = ()
+    log_coefficient: tuple[float, ...] = ()
 
 
 def fit_charge_balance(curve: Curve, *, priors: Priors | None = None) -> ModelFit | None:
@@ -245,6 +250,9 @@ class _Balance:
             sound=bool(chi_square <= LARGEST_SOUND_CHI_SQUARE and self._credible(theta)),
             activity=self.curve.debye_huckel_a is not None,
             outliers=tuple((i, float(ph_off[i])) for i in named),
+            log_coefficient=tuple(map(float, self.unit)),
+            residual_ml=tuple(map(float, -scaled / weight)),
+            residual_sd_ml=tuple(map(float, 1.0 / weight)),
         )
 
     def _credible(self, theta: Array) -> bool:

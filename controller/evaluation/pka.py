@@ -57,6 +57,7 @@ def half_equivalence(
     previous_ml: float = 0.0,
     single_proton: bool | None = None,
     charge_before: int | None = None,
+    log_coefficient: float | None = None,
 ) -> HalfEquivalence | None:
     """Return what the region before an end point tells; None without pH or without points there.
 
@@ -66,6 +67,7 @@ def half_equivalence(
         previous_ml: the end point before it, 0 for the first.
         single_proton: whether one proton is exchanged in the region; None: judged from the points.
         charge_before: charge of the protonated form of this step; needed for the activity correction.
+        log_coefficient: log10 of the activity coefficient of charge 1 half-way; None: that of the titrant's salt.
     """
     half = (previous_ml + end_point_ml) / 2.0
     span = end_point_ml - previous_ml
@@ -84,7 +86,7 @@ def half_equivalence(
     if single_proton is None and abs(run) > max(_LARGEST_RUN, 6.0 * sd):
         remark = f"no pKa: it runs by {run:+.2f} through the region, so more than one proton (or substance) is at work"
         return _without_pka(half, plain, remark)
-    pka += _activity(curve, half, charge_before)
+    pka += _activity(curve, half, charge_before, log_coefficient)
     return HalfEquivalence(
         volume_ml=half,
         ph=plain,
@@ -158,11 +160,11 @@ def _averaged(curve: Curve, share: Array, region: Mask, relative_sd: float) -> t
     return mean, math.sqrt(max(scatter, noise) ** 2 / len(each) + from_end_point**2 + 1e-8), run
 
 
-def _activity(curve: Curve, half_ml: float, charge_before: int | None) -> float:
+def _activity(curve: Curve, half_ml: float, charge_before: int | None, log_coefficient: float | None) -> float:
     """Return log10 of the two forms' activity coefficients, protonated less deprotonated (Davies)."""
     if curve.debye_huckel_a is None or charge_before is None:
         return 0.0
-    unit = math.log10(activity_coefficient(curve, half_ml))
+    unit = math.log10(activity_coefficient(curve, half_ml)) if log_coefficient is None else log_coefficient
     return unit * (charge_before**2 - (charge_before - 1) ** 2)
 
 

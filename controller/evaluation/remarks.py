@@ -9,7 +9,7 @@ from controller.evaluation.branches import branch_remarks
 from controller.evaluation.carbonate import carbonate_gap
 from controller.evaluation.curve import Curve
 from controller.evaluation.estimate import GRAN_BEFORE, GRAN_BEYOND, SECOND_DERIVATIVE, Estimate
-from controller.evaluation.estimators import NOT_CORRECTED, OFF_LINE
+from controller.evaluation.estimators import NEIGHBOUR, NOT_CORRECTED, OFF_LINE
 from controller.evaluation.gran import gran_beyond
 from controller.evaluation.inflection import Inflection
 from controller.evaluation.modelfit import ModelFit
@@ -42,7 +42,7 @@ def curve_remarks(
         out += [
             f"end point {i}: {e.estimator}: {e.remark}"
             for e in found
-            if e.estimator in {GRAN_BEYOND, GRAN_BEFORE} and e.remark not in (None, NOT_CORRECTED, OFF_LINE)
+            if e.estimator in {GRAN_BEYOND, GRAN_BEFORE} and e.remark not in (None, NEIGHBOUR, NOT_CORRECTED, OFF_LINE)
         ]
         out += _shape_warnings(i, jump, found, chosen)
     branches = branch_remarks(curve, jumps[0].volume_ml) if len(jumps) == 1 else []

@@ -275,3 +275,39 @@ def test_two_standard_uncertainties_cover_the_truth(known: str, estimator: str) 
         assert point.estimator == estimator
         inside += abs(point.volume_ml - 5.0) <= 2.0 * point.standard_uncertainty_ml
     assert inside >= 85
+
+
+@pytest.mark.parametrize(
+    ("made", "pka"),
+    [
+        pytest.param({"pka": (4.756,), "concentration_mol_l": 0.01}, [4.756], id="acetic"),
+        pytest.param(
+            {
+                "pka": (9.245,),
+                "concentration_mol_l": 0.01,
+                "charge": 1,
+                "strong_mol_l": -0.01,
+                "counter_ion_charge": -1,
+            },
+            [9.245],
+            id="ammonium chloride",
+        ),
+        pytest.param({"pka": (2.148, 7.198, 12.35), "concentration_mol_l": 0.005}, [None, 7.198], id="phosphoric"),
+        pytest.param(
+            {
+                "pka": (6.351, 10.329),
+                "concentration_mol_l": 0.005,
+                "strong_mol_l": 0.01,
+                "acid": True,
+                "counter_ion_charge": 2,
+            },
+            [10.329, 6.351],
+            id="sodium carbonate",
+        ),
+    ],
+)
+def test_with_activity_the_pka_is_thermodynamic_whatever_the_charges(
+    made: dict[str, Any], pka: list[float | None]
+) -> None:
+    halves = evaluate(titrated(**made, debye_huckel_a=DEBYE_HUCKEL_A)).half_equivalence
+    assert [None if h.pka is None else pytest.approx(h.pka, abs=0.006) for h in halves] == pka
