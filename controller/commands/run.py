@@ -5,11 +5,13 @@ from __future__ import annotations
 import argparse
 import sys
 from contextlib import ExitStack
+from dataclasses import replace
 
 from configs.errors import HalfdropError
 from controller.amounts import amount_of_plan
 from controller.assembly import OpenBench, Opening, is_simulated, open_bench, time_scale_of
 from controller.commandport import command_port
+from controller.commands.keyboard import Keyboard
 from controller.commands.lines import Lines, result_lines
 from controller.commands.output import print_json
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
@@ -21,9 +23,10 @@ from controller.outcome import RunResult
 from controller.planning import SampleChoice, make_plan, plan_sample
 from controller.recordfile import new_record
 from controller.runner import run as carry_out
-from controller.stopping import StopSwitch
+from controller.stopping import Commands, StopSwitch
 from controller.titration.core import titrate
 from controller.unclosed import refuse_unclosed
+from drivers.operator import ConsoleOperator
 
 
 def run(given: argparse.Namespace) -> int:
@@ -80,22 +83,30 @@ def titrate_once(
         for identity in (bench.account.identity, bench.probe_identity):
             held.enter_context(lock_device(identity, {"lab": str(lab.path)}))
         refuse_unclosed(lab.runs, bench.account.identity)
-        return _on_open_bench(picked, lab, choice, bench, operator_name)
+        return _on_open_bench(picked, lab, choice, bench, operator_name=operator_name, headless=headless)
 
 
 def _on_open_bench(
-    picked: Chosen, lab: Lab, choice: SampleChoice, bench: OpenBench, operator_name: str | None
+    picked: Chosen, lab: Lab, choice: SampleChoice, bench: OpenBench, *, operator_name: str | None, headless: bool
 ) -> RunResult:
     plan = make_plan(
         picked.method, picked.bench, choice, pump=bench.account, probe_identity=bench.probe_identity, seed=bench.seed
     )
     sink = new_record(lab.runs, utc_s=bench.clock.utc_s(), label=plan.method_name)
     journal = Journal(sink, bench.clock, name=str(sink.path))
-    with command_port(bench.stop, sink.path, set_time_scale=time_scale_of(bench.clock)) as commands:
+    with ExitStack() as held:
+        commands: Commands = held.enter_context(
+            command_port(bench.stop, sink.path, set_time_scale=time_scale_of(bench.clock))
+        )
+        devices = bench.devices
+        if not headless:
+            keyboard = Keyboard(bench.stop, devices.operator, ConsoleOperator(), commands)
+            held.enter_context(pulling(bench.stop, headless=False, interrupt=keyboard.interrupt))
+            devices, commands = replace(devices, operator=keyboard), keyboard
         return carry_out(
             plan,
             titrate(plan),
-            bench.devices,
+            devices,
             journal,
             clock=bench.clock,
             stop=bench.stop,
