@@ -75,6 +75,7 @@ def parser(chosen: str | None = None) -> Parser:
         epilog="Safety data sheets, your local rules and licensed practice come before anything this program says.",
     )
     top.add_argument("--version", action="version", version=f"halfdrop {__version__}")
+    top.add_argument("--lab", metavar="DIR", dest="screen_lab", help="without a command: the lab folder to open")
     commands = top.add_subparsers(dest="command", metavar="COMMAND", parser_class=Parser)
     for name, (about, fill) in COMMANDS.items():
         made = commands.add_parser(name, help=about, description=about[0].upper() + about[1:] + ".")
@@ -115,7 +116,7 @@ def _demo(made: Parser) -> None:
     made.set_defaults(function="controller.commands.demo:demo")
     made.add_argument("--dir", metavar="DIR", help="where to make the lab folder (default: a new temporary folder)")
     made.add_argument("--headless", action="store_true", help="progress and result as plain lines")
-    made.add_argument("--time-scale", metavar="X", help="run X times real time (default: as fast as it can)")
+    made.add_argument("--time-scale", metavar="X", help="run X times real time (default: 10 on a screen, else 'fast')")
     made.add_argument("--seed", type=int, default=1, metavar="N", help="seed of the simulated bench (default: 1)")
     _json(made)
 
@@ -137,6 +138,12 @@ def _run(made: Parser) -> None:
     made.add_argument("--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)")
     made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
     _json(made)
+
+
+def _watch(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.watch:watch")
+    made.add_argument("run", metavar="RUN", nargs="?", help="a record's name or file (default: the run that goes on)")
+    _lab(made)
 
 
 def _decide(made: Parser) -> None:
@@ -235,6 +242,7 @@ COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
     "demo": ("a simulated lab folder and a whole run in it", _demo),
     "init": ("make a lab folder", _init),
     "run": ("titrate by a method", _run),
+    "watch": ("follow a run that goes on, and command it", _watch),
     "decide": ("the decision core alone, over JSON lines", _decide),
     "evaluate": ("end points of a record or CSV file", _evaluate),
     "predict": ("the expected curve before anything moves", _predict),
@@ -249,10 +257,14 @@ def main(arguments: list[str] | None = None) -> int:
     """Run one command; return its exit status."""
     given = sys.argv[1:] if arguments is None else arguments
     whole = parser(chosen=given[0] if given else "")
+    if given[:1] == ["--lab"] and len(given) > 2:
+        whole.error("--lab belongs behind the command")
     found = whole.parse_whole(given)
     if getattr(found, "function", None) is None:
-        whole.print_help()
-        return DONE
+        if not (sys.stdin.isatty() and sys.stdout.isatty()):
+            whole.print_help()
+            return DONE
+        found.function, found.lab = "controller.commands.watch:open_screen", found.screen_lab
     module, _, name = found.function.partition(":")
     from configs.errors import HalfdropError
 

@@ -7,20 +7,25 @@ import tempfile
 from argparse import Namespace
 from pathlib import Path
 
-from controller.assembly import Opening, local_route
+from controller.assembly import FAST, Opening, local_route
 from controller.commands.output import say
 from controller.commands.run import tell, titrate_once
 from controller.commands.settings import chosen
-from controller.labfolder import find_lab, init_lab
+from controller.commands.watch import has_terminal, show
+from controller.labfolder import Lab, find_lab, init_lab
 from controller.planning import SampleChoice
 
 METHOD, SAMPLE_ID = "juice-acidity", "press 3, Tuesday"
+#: how many times real time a run on the screen passes, unless told otherwise; + and - change it there
+WATCHED_TIME_SCALE = "10"
 
 
 def demo(given: argparse.Namespace) -> int:
     """Titrate pressed juice on the simulated bench of a cider house."""
     folder = Path(given.dir) if given.dir else Path(tempfile.mkdtemp(prefix="halfdrop-demo-")) / "cider-lab"
     init_lab(folder)
+    if has_terminal() and not (given.headless or given.json):
+        return _watched(find_lab(str(folder)), given)
     picked = chosen(Namespace(method=METHOD, bench=None, lab=str(folder)), lab_needed=True)
     say(f"simulated bench: {picked.method.title}; nothing real moves")
     result = titrate_once(
@@ -34,3 +39,17 @@ def demo(given: argparse.Namespace) -> int:
     tell(result, as_json=given.json)
     say(f"look at it: halfdrop runs show {Path(result.record).stem} --lab {folder}")
     return result.exit_status
+
+
+def _watched(lab: Lab, given: argparse.Namespace) -> int:
+    """Start the run in its own process and show it on the screen, as any run is shown."""
+    from controller.launch import record_of, start_run
+    from drivers.clock import SystemClock
+
+    scale = given.time_scale or WATCHED_TIME_SCALE
+    arguments = [METHOD, "--sample-id", SAMPLE_ID, "--seed", str(given.seed), "--operator", "virtual chemist"]
+    started = start_run(lab, [*arguments, "--time-scale", scale])
+    record = record_of(started, lab, SystemClock())
+    status = show(lab, record, speed=None if scale == FAST else float(scale))
+    say(f"the records are in {lab.runs}; open them again with: halfdrop --lab {lab.path}")
+    return status

@@ -1,0 +1,1 @@
+"""The terminal UI: every screen is a viewer of records; none owns a port or decides."""

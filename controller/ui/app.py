@@ -1,0 +1,142 @@
+"""The application: places to go, what is opened first, and leaving without touching a run."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+from typing import Any, ClassVar
+
+from textual.app import App
+from textual.binding import Binding, BindingType
+from textual.screen import Screen
+
+from controller.labfolder import Lab
+from controller.ui.screens.help import help_of
+from controller.ui.screens.run import RunScreen, leave_question
+from controller.ui.theme import DAY, NIGHT
+
+
+class HalfdropApp(App[int]):
+    """The face of halfdrop.
+
+    Args:
+        lab: the lab folder, None where there is none yet.
+        record: a run to open first.
+        speed: of its simulated bench, where it is known.
+    """
+
+    CSS_PATH = "halfdrop.tcss"
+    TITLE = "halfdrop"
+    ENABLE_COMMAND_PALETTE = False
+    BINDINGS: ClassVar[list[BindingType]] = [
+        Binding("1", "go('run')", "Run", show=False),
+        Binding("2", "go('set-up')", "New run", show=False),
+        Binding("3", "go('bench')", "Bench", show=False),
+        Binding("4", "go('archive')", "Archive", show=False),
+        Binding("f2", "colours", "Colours", show=False),
+        Binding("f1,question_mark", "help", "Help", show=False),
+        Binding("ctrl+q", "quit", "Quit", show=False, priority=True),
+    ]
+
+    def __init__(self, *, lab: Lab | None = None, record: Path | None = None, speed: float | None = None) -> None:
+        super().__init__()
+        self.lab, self._record, self._speed = lab, record, speed
+        # animations would draw more often than four times a second
+        self.animation_level = "none"
+        self.register_theme(NIGHT)
+        self.register_theme(DAY)
+        self.theme = "orchard-day" if os.environ.get("HALFDROP_COLOURS") == "day" else "orchard-night"
+
+    def get_theme_variable_defaults(self) -> dict[str, str]:
+        """Names of ours that the style sheet uses, whatever the theme."""
+        return NIGHT.variables
+
+    def on_mount(self) -> None:
+        """Open the first screen."""
+        if self._record is not None:
+            self.push_screen(RunScreen(self._record, speed=self._speed))
+        elif self.lab is None:
+            from controller.ui.screens.welcome import WelcomeScreen
+
+            self.push_screen(WelcomeScreen())
+        else:
+            self.push_screen(self._place("run") or self._place("archive") or Screen())
+
+    # --- places ------------------------------------------------------------------------------------------------------
+
+    def action_go(self, place: str) -> None:
+        """Go to another place; a run that is left goes on."""
+        if self.lab is None or self.screen.is_modal:
+            return
+        screen = self._place(place)
+        if screen is None:
+            self.notify("no run goes on in this lab folder; 2 starts one, 4 shows the finished ones")
+        else:
+            self.switch_screen(screen)
+
+    def _place(self, place: str) -> Screen[Any] | None:
+        assert self.lab is not None
+        match place:
+            case "run":
+                return self._run_screen()
+            case "set-up":
+                from controller.ui.screens.setup import SetUpScreen
+
+                return SetUpScreen(self.lab)
+            case "bench":
+                from controller.ui.screens.bench import BenchScreen
+
+                return BenchScreen(self.lab)
+            case _:
+                from controller.ui.screens.archive import ArchiveScreen
+
+                return ArchiveScreen(self.lab)
+
+    def _run_screen(self) -> RunScreen | None:
+        from controller.commandclient import running
+
+        if isinstance(self.screen, RunScreen) and self.screen.live:
+            return self.screen
+        record = running(self.lab.runs) if self.lab is not None else None
+        return None if record is None else RunScreen(record)
+
+    def open_run(self, record: Path, *, speed: float | None = None) -> None:
+        """Show a run in place of the present screen."""
+        self.switch_screen(RunScreen(record, speed=speed))
+
+    def use_lab(self, lab: Lab) -> None:
+        """Take a lab folder that was just made or chosen."""
+        self.lab = lab
+        self.switch_screen(self._place("archive") or Screen())
+
+    # --- actions of every screen -------------------------------------------------------------------------------------
+
+    def action_left_run(self) -> None:
+        """From a run: to the archive, or out where there is none."""
+        if self.lab is None:
+            self.exit(0)
+        else:
+            self.switch_screen(self._place("archive") or Screen())
+
+    def action_colours(self) -> None:
+        """Day or night."""
+        self.theme = "orchard-day" if self.theme == "orchard-night" else "orchard-night"
+
+    def action_help(self) -> None:
+        """Help where a screen has none of its own."""
+        if not self.screen.is_modal:
+            self.push_screen(help_of(getattr(self.screen, "HELP", "")))
+
+    async def action_quit(self) -> None:
+        """Leave the program; a run that goes on is asked about."""
+        screen = self.screen
+        if isinstance(screen, RunScreen) and screen.live and screen._listens:
+            self.push_screen(leave_question(), self._quit)
+        else:
+            self.exit(0)
+
+    def _quit(self, answer: str | None) -> None:
+        if answer == "leave":
+            self.exit(0)
+        elif answer == "stop" and isinstance(self.screen, RunScreen):
+            self.screen.action_stop()

@@ -1,0 +1,279 @@
+"""What a run looks like from outside: built up from the entries of its record, and from nothing else."""
+
+from __future__ import annotations
+
+from collections import deque
+from dataclasses import dataclass, field
+from typing import Any
+
+from configs.errors import HalfdropError
+from controller.encoding import plan_from_json
+from controller.progress import Pace
+from controller.record import printable
+from controller.titration.actions import Dosed, Report
+from controller.titration.plan import RunPlan
+from controller.ui.seen import CurvePoint, EndPoint, SeenReading, Sentence
+from simulators.constants import ideal_slope_mv
+
+#: readings kept for the stability shown
+KEPT_READINGS = 120
+
+
+@dataclass(slots=True)
+class RunView:
+    """The state of one run, as far as its record tells.
+
+    `phase` is what it does now, in words; `question` what it asks; `forecast` (volume, standard uncertainty) of the
+    next equivalence point; `result` the closing line's.
+    """
+
+    name: str
+    plan: RunPlan | None = None
+    header: dict[str, Any] = field(default_factory=dict)
+    at_s: float = 0.0
+    points: list[CurvePoint] = field(default_factory=list)
+    doses: list[tuple[float, float]] = field(default_factory=list)  # volume in the beaker afterwards, dose volume
+    readings: deque[SeenReading] = field(default_factory=lambda: deque(maxlen=KEPT_READINGS))
+    sentences: list[Sentence] = field(default_factory=list)
+    warnings: list[str] = field(default_factory=list)
+    end_points: list[EndPoint] = field(default_factory=list)
+    forecast: tuple[float, float] | None = None
+    phase: str = "starting"
+    question: str | None = None
+    paused: bool = False
+    delivered_ml: float = 0.0
+    contents_ml: float | None = None
+    reservoir_ml: float | None = None
+    dosed_at_s: float = 0.0
+    closing: dict[str, Any] | None = None
+    _pace: Pace | None = None
+
+    @property
+    def over(self) -> bool:
+        """True when the record is closed."""
+        return self.closing is not None
+
+    @property
+    def result(self) -> dict[str, Any]:
+        """The closing line's result; empty where there is none."""
+        return (self.closing or {}).get("result") or {}
+
+    @property
+    def sample_id(self) -> str:
+        """The sample, fit for a terminal."""
+        return printable(self.plan.sample.sample_id) if self.plan else self.name
+
+    @property
+    def method_title(self) -> str:
+        """The method's title, fit for a terminal."""
+        return printable(self.plan.method_title) if self.plan else ""
+
+    @property
+    def signal(self) -> str:
+        """What the curve shows: "pH" or "mV"."""
+        return "pH" if self.plan is not None and self.plan.probe.calibration is not None else "mV"
+
+    def time_left_s(self) -> float | None:
+        """Return about how long the run still takes."""
+        if self.over or self._pace is None:
+            return None
+        return self._pace.time_left_s(self.at_s, self.delivered_ml)
+
+    def feed(self, entry: dict[str, Any]) -> None:
+        """Take in one line of the record; what it does not know it passes over."""
+        run_s = entry.get("run_s")
+        if isinstance(run_s, int | float):
+            self.at_s = float(run_s)
+        try:
+            if "header" in entry:
+                self._begin(entry["header"])
+            elif "closing" in entry:
+                self._close(entry["closing"])
+            elif "action" in entry:
+                self._action(str(entry["action"]), entry)
+            elif "observation" in entry:
+                self._observation(str(entry["observation"]), entry)
+            elif "event" in entry:
+                self._event(str(entry["event"]), entry)
+        except (KeyError, TypeError, ValueError):
+            self._say("a line of the record could not be read", "trouble")
+
+    # --- the lines ---------------------------------------------------------------------------------------------------
+
+    def _begin(self, header: dict[str, Any]) -> None:
+        self.header = header
+        try:
+            self.plan = plan_from_json(header["plan"], where=self.name)
+        except HalfdropError:
+            self._say("the plan in this record is of another version; what can be shown is shown", "warning")
+        else:
+            self._pace = Pace(self.plan)
+            self.contents_ml, self.reservoir_ml = self.plan.pump.contents_ml, self.plan.pump.reservoir_ml
+        for text in header.get("warnings", []):
+            self._warn(str(text))
+
+    def _action(self, kind: str, entry: dict[str, Any]) -> None:
+        match kind:
+            case "dose":
+                self.phase = f"dose {entry['number']}: {entry['volume_ml']:.4f} mL"
+                self._say(str(entry["reason"]), "dose")
+            case "ask":
+                self.question, self.phase = printable(str(entry["text"])), "waiting for an answer"
+                self._say(str(entry["text"]), "question")
+            case "refill":
+                self.phase = "filling the syringe"
+                self._say(f"filling the syringe: {entry.get('reason') or 'it is empty'}", "note")
+            case "prime":
+                self.phase = "priming"
+            case "report":
+                self._report(str(entry["what"]), entry)
+            case "finish":
+                self.phase = "evaluated"
+            case "read" if not self.paused:
+                self.phase = "settling" if self.doses else "measuring the noise"
+
+    def _report(self, what: str, entry: dict[str, Any]) -> None:
+        text = str(entry.get("text", ""))
+        match what:
+            case "point":
+                self._point(entry)
+            case "forecast":
+                self.forecast = (float(entry["volume_ml"]), float(entry["standard_uncertainty_ml"]))
+                self._pace_saw(Report(what="forecast", volume_ml=self.forecast[0]))
+            case "end-point":
+                self.end_points.append(_end_point(entry))
+                self.forecast = None
+                self._say(text, "end-point")
+            case "warning":
+                self._warn(text)
+            case "note":
+                if text == "paused":
+                    self.paused, self.phase = True, "paused"
+                elif text == "going on":
+                    self.paused, self.phase = False, "going on"
+                self._say(text, "note")
+
+    def _point(self, entry: dict[str, Any]) -> None:
+        ph = entry.get("ph")
+        self.points.append(
+            CurvePoint(
+                number=len(self.points),
+                volume_ml=float(entry["volume_ml"]),
+                delivered_ml=float(entry["delivered_ml"]),
+                potential_mv=float(entry["potential_mv"]),
+                ph=None if ph is None else float(ph),
+                settled=bool(entry.get("settled", True)),
+                at_s=self.at_s,
+            )
+        )
+        self._pace_saw(Report(what="point"))
+
+    def _observation(self, kind: str, entry: dict[str, Any]) -> None:
+        match kind:
+            case "reading":
+                self._reading(entry)
+            case "dosed":
+                volume_ml = float(entry["volume_ml"])
+                self._delivered(volume_ml)
+                self._pace_saw(Dosed(at_s=self.at_s, number=int(entry["number"]), volume_ml=volume_ml))
+            case "failed":
+                self.phase = f"{entry['device']} in trouble"
+                self._say(f"{entry['device']}: {entry['what']}", "trouble")
+                if entry.get("lowest_ml") is not None and entry.get("highest_ml") is not None:
+                    self._delivered((float(entry["lowest_ml"]) + float(entry["highest_ml"])) / 2.0)
+            case "back":
+                self._say(f"{entry['device']} answers again", "note")
+            case "refilled":
+                self.contents_ml = entry.get("contents_ml", self.contents_ml)
+                self.reservoir_ml = entry.get("reservoir_ml", self.reservoir_ml)
+                self.phase = "filled"
+            case "answered":
+                self.question = None
+                self._say(f"answered: {entry['answer']}", "person")
+            case "refused":
+                self._say(f"refused by the guard: {entry['what']}", "trouble")
+            case "resumed":
+                self._say(f"went on after a gap of {float(entry['gap_s']):.0f} s", "note")
+            case "command":
+                self._command(entry)
+
+    def _reading(self, entry: dict[str, Any]) -> None:
+        potential_mv, temperature_c = float(entry["potential_mv"]), entry.get("temperature_c")
+        self.readings.append(
+            SeenReading(
+                at_s=self.at_s,
+                potential_mv=potential_mv,
+                ph=self._ph(potential_mv, temperature_c),
+                temperature_c=temperature_c,
+                status=printable(str(entry.get("status", "ok"))),
+            )
+        )
+        if not self.paused:
+            self.phase = "settling" if self.doses else "measuring the noise"
+
+    def _ph(self, potential_mv: float, temperature_c: float | None) -> float | None:
+        plan = self.plan
+        if plan is None or plan.probe.calibration is None:
+            return None
+        found = plan.probe.calibration
+        slope_mv = found.slope_fraction * ideal_slope_mv(
+            plan.chemistry.temperature_c if temperature_c is None else float(temperature_c)
+        )
+        return found.isopotential_ph - (potential_mv - found.isopotential_mv) / slope_mv
+
+    def _delivered(self, volume_ml: float) -> None:
+        self.delivered_ml += volume_ml
+        if self.contents_ml is not None:
+            self.contents_ml -= volume_ml
+        if volume_ml > 0:
+            self.doses.append((self.delivered_ml, volume_ml))
+            self.dosed_at_s = self.at_s
+
+    def _command(self, entry: dict[str, Any]) -> None:
+        name, text = str(entry["name"]), entry.get("text")
+        if name == "dose":
+            self._say(f"dose by hand asked: {float(entry.get('volume_ml') or 0):.4f} mL", "person")
+        elif name != "note":
+            self._say(f"command: {name.replace('-', ' ')}" + (f" ({text})" if text else ""), "person")
+
+    def _event(self, kind: str, entry: dict[str, Any]) -> None:
+        if kind == "pump-stop":
+            confirmed = bool(entry.get("confirmed"))
+            said = "the pump stands, confirmed" if confirmed else "NOT CONFIRMED STOPPED: look at the pump"
+            self._say(f"pump stopped ({entry.get('why')}): {said}", "note" if confirmed else "trouble")
+            if not confirmed:
+                self._warn("NOT CONFIRMED STOPPED: the pump may be moving; look at it and switch it off")
+        elif kind == "guard":
+            self._say(f"guard: {entry.get('what')}", "trouble")
+
+    def _close(self, closing: dict[str, Any]) -> None:
+        self.closing, self.question, self.paused = closing, None, False
+        outcome, reason = str(closing.get("outcome")), closing.get("reason")
+        self.phase = outcome
+        self._say(outcome + (f": {reason}" if reason else ""), "note" if outcome == "completed" else "trouble")
+        if self.result.get("end_points"):
+            self.end_points = [_end_point(one) for one in self.result["end_points"]]
+        for text in self.result.get("warnings", []):
+            self._warn(str(text))
+
+    def _warn(self, text: str) -> None:
+        text = printable(text)
+        if text not in self.warnings:
+            self.warnings.append(text)
+            self._say(text, "warning")
+
+    def _say(self, text: str, mark: str) -> None:
+        self.sentences.append(Sentence(at_s=self.at_s, text=printable(text), mark=mark))
+
+    def _pace_saw(self, item: Report | Dosed) -> None:
+        if self._pace is not None:
+            self._pace.saw(item, self.at_s, self.delivered_ml)
+
+
+def _end_point(entry: dict[str, Any]) -> EndPoint:
+    return EndPoint(
+        volume_ml=float(entry["volume_ml"]),
+        standard_uncertainty_ml=entry.get("standard_uncertainty_ml"),
+        ph=entry.get("ph"),
+        estimator=printable(str(entry.get("estimator") or "")),
+    )

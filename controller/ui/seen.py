@@ -1,0 +1,71 @@
+"""What a viewer keeps of a run: points, readings, sentences, end points."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CurvePoint:
+    """One settled point."""
+
+    number: int
+    volume_ml: float
+    delivered_ml: float
+    potential_mv: float
+    ph: float | None
+    settled: bool
+    at_s: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SeenReading:
+    """One reading; `ph` by the run's calibration, None without one."""
+
+    at_s: float
+    potential_mv: float
+    ph: float | None
+    temperature_c: float | None
+    status: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Sentence:
+    """Something the run said. `mark`: "dose", "note", "warning", "end-point", "question", "person" or "trouble"."""
+
+    at_s: float
+    text: str
+    mark: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class EndPoint:
+    """An end point as it was found or evaluated."""
+
+    volume_ml: float
+    standard_uncertainty_ml: float | None
+    ph: float | None
+    estimator: str
+
+
+def stability_mv_min(readings: Sequence[SeenReading], *, dosed_at_s: float, over_s: float = 5.0) -> float | None:
+    """Return how fast the potential moves, mV/min, by a line through the last seconds' readings; None: too few.
+
+    Args:
+        readings: oldest first.
+        dosed_at_s: only readings after this moment count.
+        over_s: how far back the line goes, s.
+    """
+    if not readings:
+        return None
+    since_s = max(readings[-1].at_s - over_s, dosed_at_s)
+    recent = [(one.at_s, one.potential_mv) for one in readings if one.at_s >= since_s and one.status == "ok"]
+    if len(recent) < 3:
+        return None
+    mean_s = sum(at_s for at_s, _ in recent) / len(recent)
+    mean_mv = sum(mv for _, mv in recent) / len(recent)
+    spread = sum((at_s - mean_s) ** 2 for at_s, _ in recent)
+    if spread <= 0:
+        return None
+    return 60.0 * sum((at_s - mean_s) * (mv - mean_mv) for at_s, mv in recent) / spread
