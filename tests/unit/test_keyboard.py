@@ -25,7 +25,7 @@ class Terminal:
         answer = self.answers.pop(0)
         if callable(answer):
             answer()
-            raise AssertionError("it returned")
+            pytest.fail("it returned")
         if isinstance(answer, Exception):
             raise answer
         return str(answer)
