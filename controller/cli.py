@@ -162,6 +162,9 @@ def _evaluate(made: Parser) -> None:
     made.add_argument("--signal-column", metavar="NAME")
     made.add_argument("--signal-unit", choices=("ph", "mv", "v"))
     made.add_argument("--decimal", choices=("point", "comma"), help="the decimal mark, where it can mean two things")
+    made.add_argument(
+        "--interpolate-volumes", action="store_true", help="a time series: volumes between those read run evenly"
+    )
     made.add_argument("--initial-volume-ml", type=float, metavar="ML", help="all liquid in the vessel at the start")
     made.add_argument("--titrant-concentration-mol-l", type=float, metavar="C")
     made.add_argument("--substance", metavar="NAME", help="the substance titrated")

@@ -56,7 +56,10 @@ def _record(given: argparse.Namespace) -> dict[str, Any]:
 
 def _options(given: argparse.Namespace) -> EvaluateOptions:
     return EvaluateOptions(
-        **{name: getattr(given, name) for name in _OPTIONS}, activity=given.activity, end_points=given.end_points
+        **{name: getattr(given, name) for name in _OPTIONS},
+        interpolate_volumes=given.interpolate_volumes,
+        activity=given.activity,
+        end_points=given.end_points,
     )
 
 
