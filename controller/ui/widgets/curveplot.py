@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from itertools import pairwise
+from statistics import median
 from typing import ClassVar
 
 from rich.segment import Segment
@@ -21,6 +22,8 @@ from controller.ui.widgets.figure import Line, Picture, Row, draw
 _NEAR_SHARE = 0.04
 #: volumes closer than this have no derivative, mL
 _CLOSEST_ML = 2e-4
+#: the slope scale reaches at least this many usual slopes
+_STEEP = 6.0
 
 
 class CurvePlot(Widget):
@@ -132,12 +135,14 @@ def picture_of(view: RunView, second: RunView | None, *, near: bool, cursor: int
         if volume.lowest <= volume_ml <= volume.highest
     ]
     band = view.forecast
+    slopes = derivative(points, signal)
     return Picture(
         signal=signal,
         lines=lines,
         volume=volume,
         value=span_of(seen or line.values, narrowest=1.0 if signal == "pH" else 60.0),
-        derivative=derivative(points, signal),
+        derivative=slopes,
+        derivative_floor=_STEEP * median(value for *_, value in slopes) if slopes else 0.0,
         band=None if band is None or view.over else (band[0] - 2.0 * band[1], band[0] + 2.0 * band[1]),
         marks=[
             (one.volume_ml, f"end point {number}: {one.volume_ml:.3f} mL")
@@ -212,7 +217,10 @@ def _near_span(view: RunView) -> Span | None:
     if middle is None or middle[0] <= 0:
         return None
     reach = max(_NEAR_SHARE * middle[0], 4.0 * middle[1])
-    return Span(lowest=max(0.0, middle[0] - reach), highest=middle[0] + reach)
+    highest = middle[0] + reach
+    if view.over:
+        highest = min(highest, view.points[-1].volume_ml + 0.25 * reach)
+    return Span(lowest=max(0.0, middle[0] - reach), highest=max(highest, middle[0] + 0.1 * reach))
 
 
 def _whole_span(view: RunView, second: RunView | None) -> Span:

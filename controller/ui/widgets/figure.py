@@ -39,6 +39,7 @@ class Picture:
         signal: "pH" or "mV".
         lines: curves, the first one with its derivative.
         derivative: (from, to, value) along the volume axis, values above 0.
+        derivative_floor: the highest column stands for at least this, so that a flat curve looks flat.
         band: lowest and highest predicted equivalence volume.
         marks: (volume, text) of end points.
         doses_ml: where doses ended.
@@ -51,6 +52,7 @@ class Picture:
     volume: Span
     value: Span
     derivative: list[tuple[float, float, float]] = field(default_factory=list)
+    derivative_floor: float = 0.0
     band: tuple[float, float] | None = None
     marks: list[tuple[float, str]] = field(default_factory=list)
     doses_ml: list[float] = field(default_factory=list)
@@ -115,7 +117,7 @@ class _Drawing:
             first, last = self._column(start_ml), self._column(end_ml)
             for column in range(max(0, first), min(self.columns - 1, max(first, last - 1)) + 1):
                 heights[column] = max(heights[column], value)
-        highest = max(heights, default=0.0)
+        highest = max(max(heights, default=0.0), self.picture.derivative_floor)
         if highest <= 0:
             return
         room = max(1.0, _DERIVATIVE_SHARE * self.rows_of_plot) * 8.0
