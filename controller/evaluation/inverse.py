@@ -23,6 +23,8 @@ _LN10 = math.log(10.0)
 _DISTANCE_STEPS = (0.10, 0.10, 0.05, 0.025, 0.015, 0.01, 0.01)
 _LARGEST_SOUND_CHI_SQUARE = 20.0
 _LARGEST_SOUND_RELATIVE_SD = 0.35
+#: no solution has a pH beyond this, and no power of ten overflows below it
+LARGEST_PH = 30.0
 
 
 def fit_inverse(
@@ -47,7 +49,9 @@ def fit_inverse(
     Returns:
         The fit, or None where the numbers allow none (fewer than 2 points, singular, no positive volume).
     """
-    if volume_ml.size < 2:
+    if volume_ml.size < 2 or not float(volume_ml.max()) > 0.0:
+        return None
+    if not float(np.abs(ph).max()) < LARGEST_PH:
         return None
     with np.errstate(all="ignore"):
         return _Fit(volume_ml, ph, setting, volume_sd_ml, signal_sd_mv).run(start_ml)

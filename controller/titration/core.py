@@ -26,6 +26,7 @@ from controller.titration.settling import Accepted, FixedWait, SettlingContext, 
 
 #: change of temperature during a run that is warned about
 WARMED_C = 2.0
+LIQUID_C = (0.0, 100.0)
 #: successive fits that contradict the substance before it is said
 DOUBTS = 4
 
@@ -82,7 +83,13 @@ class _Run:
                 )
         potentials, temperatures = yield from self._rest_readings()
         self.probe.noise = noise = measure_noise(potentials, self.plan.probe.resolution_mv)
-        temperature_c = round(median(temperatures), 1) if temperatures else self.plan.chemistry.temperature_c
+        temperature_c = self.plan.chemistry.temperature_c
+        if temperatures and LIQUID_C[0] <= (measured_c := round(median(temperatures), 1)) <= LIQUID_C[1]:
+            temperature_c = measured_c
+        elif temperatures:
+            yield from self.world.warn(
+                f"the temperature sensor reads {measured_c:.1f} °C: {temperature_c:.1f} °C is taken"
+            )
         self._temperature_c = temperature_c
         self.scale = PhScale(self.plan, temperature_c)
         self.forecast = Forecast(self.plan, self.scale)

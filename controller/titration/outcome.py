@@ -7,12 +7,15 @@ its volume. What the evaluation sees and the run did not confirm is remarked upo
 from __future__ import annotations
 
 import math
+import warnings
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from controller.evaluation.curve import Curve, CurveError
+from configs.errors import HalfdropError
+from controller.evaluation.curve import Curve
 from controller.evaluation.evaluate import evaluate
+from controller.evaluation.inverse import LARGEST_PH
 from controller.evaluation.result import Evaluation
 from controller.titration.endpoint import FoundEndPoint
 
@@ -32,11 +35,11 @@ def run_result(run: RunState) -> dict[str, Any]:
     """JSON of `halfdrop run` less run path and seed. No end point found: an empty list and no number."""
     world = run.world
     evaluation = _evaluated(run)
-    warnings = list(world.warnings)
+    remarks = list(world.warnings)
     end_points = [_end_point(run, found, evaluation) for found in run.watch.found]
     if evaluation is not None:
-        warnings += [w for w in evaluation.warnings if w not in warnings]
-        warnings += _unconfirmed(run, evaluation)
+        remarks += [w for w in evaluation.warnings if w not in remarks]
+        remarks += _unconfirmed(run, evaluation)
     return {
         "outcome": run.outcome,
         "reason": run.reason or None,
@@ -47,7 +50,7 @@ def run_result(run: RunState) -> dict[str, Any]:
         "doses": world.doses,
         "duration_s": round(world.elapsed_s, 3),
         "titrant_ml": round(world.delivered_ml, DIGITS),
-        "warnings": warnings,
+        "warnings": remarks,
     }
 
 
@@ -81,14 +84,16 @@ def run_curve(run: RunState) -> Curve:
 def _evaluated(run: RunState) -> Evaluation | None:
     if len(run.points) < FEWEST_POINTS:
         return None
+    if any(point.ph is not None and abs(point.ph) > LARGEST_PH for point in run.points):
+        run.world.warnings.append("readings beyond any pH: the curve is not evaluated")
+        return None
+    detected_ml = [found.volume_ml for found in run.watch.found]
     try:
-        return evaluate(
-            run_curve(run),
-            end_points_expected=run.plan.end_points.expected,
-            detected_ml=[found.volume_ml for found in run.watch.found],
-        )
-    except CurveError as error:
-        run.world.warnings.append(str(error))
+        with np.errstate(all="ignore"), warnings.catch_warnings():
+            warnings.simplefilter("ignore", RuntimeWarning)  # numbers that no formula likes end as "not sound"
+            return evaluate(run_curve(run), end_points_expected=run.plan.end_points.expected, detected_ml=detected_ml)
+    except (HalfdropError, ArithmeticError, ValueError) as error:  # the run must end and its record close
+        run.world.warnings.append(f"the curve could not be evaluated: {error}")
         return None
 
 

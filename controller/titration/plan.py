@@ -9,6 +9,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Literal
 
+from controller.titration.traceability import Traceability
+
 PLAN_SCHEMA_VERSION = 1
 
 DosingPolicy = Literal["model-guided", "slope-adaptive", "equal-volumes"]
@@ -79,6 +81,7 @@ class ProbeCalibration:
     offset_standard_uncertainty_mv: float
     calibrated_utc: str | None = None
     record_sha256: str | None = None
+    slope_offset_covariance_mv: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -244,3 +247,4 @@ class RunPlan:
     questions: tuple[Question, ...]
     report_as: ReportAs | None
     seed: int | None = None
+    traceability: Traceability | None = None
