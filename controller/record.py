@@ -77,7 +77,16 @@ def read_record(path: Path) -> Record:
     Raises:
         NotARecordError: the file does not begin as a record does.
     """
-    lines, rest = _split(_bytes_of(path))
+    return record_of(_bytes_of(path), path)
+
+
+def record_of(data: bytes, path: Path) -> Record:
+    """As `read_record`, for a record's bytes; `path` is what errors name.
+
+    Raises:
+        NotARecordError: they do not begin as a record does.
+    """
+    lines, rest = _split(data)
     record = Record(path, _header(lines[0] if lines else rest, path), [], None)
     record.torn_bytes = len(rest)
     for line in lines[1:]:
@@ -124,8 +133,8 @@ def _first_bad(lines: list[bytes], entries: list[dict[str, Any] | None]) -> tupl
     for index, (line, entry) in enumerate(zip(lines, entries, strict=True)):
         if entry is None:
             after = entries[index + 1] if index + 1 < len(entries) else None
-            if after is not None and _ended_by(after, line):
-                if after["closing"].get("last_whole_sha256") != previous:
+            if after is not None and (ender := _ender(after, line)) is not None:
+                if ender.get("last_whole_sha256") != previous:
                     return index, "it was edited"
                 previous = hashlib.sha256(line).hexdigest()
                 continue
@@ -170,13 +179,15 @@ def _sealed(line: bytes, entry: dict[str, Any], index: int, previous: str) -> bo
     )
 
 
-def _ended_by(entry: dict[str, Any], torn: bytes) -> bool:
-    """True where the next line says that it ended this torn one."""
-    return (
-        isinstance(entry.get("closing"), dict)
-        and entry["closing"].get("torn_bytes_before") == len(torn)
+def _ender(entry: dict[str, Any], torn: bytes) -> dict[str, Any] | None:
+    """Return what the next line (a closing line, or the one of a resumed run) says of the torn one that it ended."""
+    told = entry if entry.get("event") == "resumed" else entry.get("closing")
+    ends = (
+        isinstance(told, dict)
+        and told.get("torn_bytes_before") == len(torn)
         and entry.get("previous_sha256") == hashlib.sha256(torn).hexdigest()
     )
+    return told if ends else None
 
 
 def summarise(path: Path) -> dict[str, Any]:

@@ -9,7 +9,18 @@ from typing import Any
 from controller.execution import Execution
 from controller.guard import Guard
 from controller.titration.actions import (
-    Action, Answered, Ask, Dose, Dosed, Failed, Observation, Prime, Primed, Refill, Refilled, Resumed,
+    Action,
+    Answered,
+    Ask,
+    Dose,
+    Dosed,
+    Failed,
+    Observation,
+    Prime,
+    Primed,
+    Refill,
+    Refilled,
+    Resumed,
 )  # fmt: skip
 
 
@@ -36,7 +47,9 @@ class Resumption:
     finished: dict[str, Any] | None = None
 
 
-def take_up(exchanges: Sequence[tuple[Action, Observation]], execution: Execution, guard: Guard, step_ml: float) -> None:
+def take_up(
+    exchanges: Sequence[tuple[Action, Observation]], execution: Execution, guard: Guard, step_ml: float
+) -> None:
     """Bring the accounts of execution and guard to where they were."""
     for action, answer in exchanges:
         match action, answer:
