@@ -25,6 +25,8 @@ _LARGEST_SOUND_CHI_SQUARE = 20.0
 _LARGEST_SOUND_RELATIVE_SD = 0.35
 #: no solution has a pH beyond this, and no power of ten overflows below it
 LARGEST_PH = 30.0
+#: no constant falls below this share of its nominal value
+SMALLEST_RATIO = 0.01
 
 
 def fit_inverse(
@@ -82,7 +84,11 @@ class _Fit:
         self.cb, self.v0 = s.titrant_concentration_mol_l, s.initial_volume_ml
         self.used = (self.h - self.oh) / self.cb
         self.w = volume_ml + (self.v0 + volume_ml) * self.used
-        nominal = cumulative_constants(s.ladder) if s.ladder.known else (1.0 / float(np.median(a)),)
+        if s.ladder.known:
+            nominal = cumulative_constants(s.ladder)
+        else:  # an idea of it: the pH half-way through what was delivered
+            half_ml = 0.5 * (s.titrated_before_ml + float(volume_ml.max()))
+            nominal = (1.0 / float(a[np.argmin(np.abs(volume_ml - half_ml))]),)
         self.nominal = nominal
         self.powers = np.array([np.power(a, i + 1) * k for i, k in enumerate(nominal)]).reshape(len(nominal), a.size)
         self.order = np.arange(1, len(nominal) + 1, dtype=np.float64)
@@ -140,8 +146,8 @@ class _Fit:
             if step is None or inverse is None:
                 return None
             x = x + step
-            x[1 : m + 2] = np.maximum(x[1 : m + 2], 0.02)
-            x[m + 3] = max(x[m + 3], 0.02)
+            x[1 : m + 2] = np.maximum(x[1 : m + 2], SMALLEST_RATIO)
+            x[m + 3] = max(x[m + 3], SMALLEST_RATIO)
             if not (np.isfinite(x).all() and x[0] > 0.0):
                 return None
         return self._result(x, inverse, chi)
