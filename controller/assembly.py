@@ -72,6 +72,7 @@ class Opening:
         answers_from: where the answers stand, for messages.
         place: the lab folder; simulated devices of different labs are different devices.
         talk: where questions and messages of an operator without a terminal go.
+        start_utc_s: POSIX time at which manual time begins; None: now.
     """
 
     seed: int | None = None
@@ -81,6 +82,7 @@ class Opening:
     answers_from: str = "answers"
     place: Path | None = None
     talk: TextIO | None = None
+    start_utc_s: float | None = None
 
 
 def is_simulated(bench: BenchSettings) -> bool:
@@ -131,7 +133,7 @@ class _Opener:
     def simulated(self, method: MethodSettings, sample: Sample) -> OpenBench:
         simulation, opening = self.bench.simulation, self.opening
         assert simulation is not None  # the bench file was checked
-        clock = clock_of(opening.time_scale)
+        clock = clock_of(opening.time_scale, start_utc_s=opening.start_utc_s)
         seed = simulation.seed if opening.seed is None else opening.seed
         world = simulated_world(self.bench, simulation, method, sample, seed=seed, start_s=clock.now_s())
         pump_device, probe_device = simulated_devices(self.bench, world, place=opening.place)
@@ -148,19 +150,28 @@ class _Opener:
 
     def real(self) -> OpenBench:
         opening, bench = self.opening, self.bench
-        for option, given in (("--seed", opening.seed), ("--time-scale", opening.time_scale)):
-            if given is not None:
-                raise HalfdropError(
-                    f"{option} is for simulated benches, this one is real",
-                    where=f"bench {bench.name}",
-                    remedy=f"Leave {option} out",
-                )
+        if opening.seed is not None:
+            raise self._not_simulated("--seed")
         operator: Operator
         if opening.answers is not None:
             operator = AnswersOperator(opening.answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
         else:
             operator = ConsoleOperator()
-        return self._connected((bench.pump.port, bench.probe.port), SystemClock(), operator)
+        if opening.time_scale is None:
+            return self._connected((bench.pump.port, bench.probe.port), SystemClock(), operator)
+        if opening.time_scale == FAST:
+            raise self._not_simulated(f"--time-scale {FAST}")
+        opened = self._connected((bench.pump.port, bench.probe.port), clock_of(opening.time_scale), operator)
+        if not all(told.startswith(_MAKER) for told in (opened.account.identity, opened.probe_identity)):
+            raise self._not_simulated("--time-scale")  # only a served simulated bench lives at another pace
+        return opened
+
+    def _not_simulated(self, option: str) -> HalfdropError:
+        return HalfdropError(
+            f"{option} is for simulated benches, this one is real",
+            where=f"bench {self.bench.name}",
+            remedy=f"Leave {option} out",
+        )
 
     def _connected(self, urls: tuple[str, str], clock: Clock, operator: Operator) -> OpenBench:
         bench, event = self.bench, self.stop.event
@@ -230,17 +241,18 @@ def serve_bench(
         yield {"pump": ports.add("pump", pump, route).url, "probe": ports.add("probe", probe, route).url}
 
 
-def clock_of(time_scale: str | None) -> Clock:
+def clock_of(time_scale: str | None, *, start_utc_s: float | None = None) -> Clock:
     """Return the clock of a simulated bench.
 
     Args:
         time_scale: None or "fast": as fast as the computer can; else how many times real time.
+        start_utc_s: POSIX time at which manual time begins; None: now.
 
     Raises:
         HalfdropError: neither "fast" nor a number above 0.
     """
     if time_scale is None or time_scale == FAST:
-        return ManualClock(start_utc_s=time.time())
+        return ManualClock(start_utc_s=time.time() if start_utc_s is None else start_utc_s)
     try:
         scale = float(time_scale)
         if not 0 < scale <= 1000:

@@ -189,6 +189,19 @@ def _predict(made: Parser) -> None:
     _json(made)
 
 
+def _resume(made: Parser) -> None:
+    made.set_defaults(function="controller.commands.resume:resume")
+    made.add_argument("run", metavar="RUN", help="a record without an end: its name or file")
+    made.add_argument("--evaluate-only", action="store_true", help="do not go on: end it and evaluate what is there")
+    made.add_argument("--bench", metavar="FILE", help="bench file (default: bench.yaml of the lab folder)")
+    made.add_argument("--operator", metavar="NAME", help="who resumes it (kept in the record)")
+    made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
+    made.add_argument("--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)")
+    made.add_argument("--time-scale", metavar="X", help="served simulated bench only: X times real time")
+    _lab(made)
+    _json(made)
+
+
 def _replay(made: Parser) -> None:
     made.set_defaults(function="controller.commands.replay:replay")
     made.add_argument("run", metavar="RUN", help="a record's name or file")
@@ -221,6 +234,12 @@ def _runs(group: Parser) -> None:
     made.add_argument("--to", metavar="DIR", help="folder for the files (default: CSV on standard output)")
     _lab(made)
     _json(made)
+    made = _action(actions, "report", "controller.commands.report:report", "one record as a page to read and print")
+    made.add_argument("run", metavar="RUN")
+    made.add_argument("--replicate", metavar="RUN", nargs="+", help="further runs of the same sample: mean and spread")
+    made.add_argument("--to", metavar="FILE", help="the page ('-': standard output; default: reports/ of the lab folder)")
+    _lab(made)
+    _json(made)
     made = _action(actions, "close", "controller.commands.runs:close", "end a record that was left open")
     made.add_argument("run", metavar="RUN")
     _lab(made)
@@ -249,6 +268,7 @@ COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
     "decide": ("the decision core alone, over JSON lines", _decide),
     "evaluate": ("end points of a record or CSV file", _evaluate),
     "predict": ("the expected curve before anything moves", _predict),
+    "resume": ("go on with a run that broke off", _resume),
     "replay": ("decide a record again, or watch it again", _replay),
     "schema": ("JSON Schema of a settings file", _schema),
     "runs": ("list, show, verify and export records", _runs),

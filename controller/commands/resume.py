@@ -1,0 +1,93 @@
+"""halfdrop resume: go on with a run that broke off, or end it and evaluate what is there."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from contextlib import ExitStack
+from datetime import datetime
+from pathlib import Path
+
+from configs.errors import HalfdropError
+from configs.settings import load_bench
+from controller.amounts import amount_of_plan
+from controller.assembly import FAST, Opening, is_simulated, open_bench, time_scale_of
+from controller.brokenrun import BrokenRun, gap_s, read_broken
+from controller.commandport import command_port
+from controller.commands.lines import Lines
+from controller.commands.output import say
+from controller.commands.run import tell
+from controller.commands.runs import record_path
+from controller.commands.settings import answers_of, method_of
+from controller.commands.signals import pulling
+from controller.labfolder import Lab, find_lab
+from controller.lock import lock_device, lock_lab
+from controller.outcome import RunResult
+from controller.resimulation import bring_back
+from controller.resume import GO_ON, GoingOn, go_on
+from controller.stopping import StopSwitch
+
+
+def resume(given: argparse.Namespace) -> int:
+    """Resume a run; exit status as of `run`."""
+    lab = find_lab(given.lab).writable()
+    path = record_path(given.run, given)
+    broken = read_broken(path)
+    result = _resumed(given, lab, path, broken)
+    tell(result, as_json=given.json)
+    return result.exit_status
+
+
+def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun) -> RunResult:
+    bench = load_bench(Path(given.bench) if given.bench else lab.bench)
+    simulated = is_simulated(bench)
+    answers = answers_of(given)
+    unattended = given.headless or not sys.stdin.isatty()
+    if unattended and answers is None and not simulated:
+        raise HalfdropError(
+            "nobody is there to say whether the beaker was touched",
+            where="resume",
+            remedy="Give the answers with --answers FILE, or resume at a terminal without --headless",
+        )
+    if simulated and given.time_scale not in (None, FAST):
+        raise HalfdropError(
+            f"got {given.time_scale}, allowed: {FAST}: this simulated bench is brought back by doing everything again",
+            where="--time-scale",
+            remedy="Leave --time-scale out, or serve the bench with 'halfdrop bench serve'",
+        )
+    stop = StopSwitch()
+    _, method = method_of(broken.plan.method_name, lab)
+    opening = Opening(
+        seed=broken.plan.seed if simulated else None,
+        time_scale=given.time_scale,
+        answers={**GO_ON, **(answers or {})} if simulated else answers,
+        answers_from=given.answers or "answers",
+        place=lab.path,
+        start_utc_s=_started_utc_s(broken) if simulated else None,
+    )
+    with ExitStack() as held:
+        held.enter_context(pulling(stop, headless=unattended))
+        held.enter_context(lock_lab(lab.path, {"command": "resume"}))
+        opened = held.enter_context(open_bench(bench, method, broken.plan.sample, opening=opening, stop=stop))
+        for identity in (opened.account.identity, opened.probe_identity):
+            held.enter_context(lock_device(identity, {"lab": str(lab.path)}))
+        if simulated and not given.evaluate_only:
+            bring_back(broken, opened.devices, opened.clock, stop)
+            say(f"simulated bench brought back to {broken.last_run_s:.1f} s into the run")
+        commands = held.enter_context(command_port(stop, path, set_time_scale=time_scale_of(opened.clock)))
+        how = GoingOn(
+            devices=opened.devices,
+            clock=opened.clock,
+            stop=stop,
+            gap_s=0.0 if simulated else gap_s(broken, opened.clock),
+            evaluate_only=given.evaluate_only,
+            operator_name=given.operator,
+            commands=commands,
+            on_progress=Lines(sys.stderr),
+            amount_of=amount_of_plan,
+        )
+        return go_on(broken, how)
+
+
+def _started_utc_s(broken: BrokenRun) -> float:
+    return datetime.fromisoformat(str(broken.record.header["started_utc"])).timestamp()
