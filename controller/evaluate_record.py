@@ -11,10 +11,12 @@ import numpy as np
 
 from controller.amounts import amount_of_plan
 from controller.encoding import plan_from_json
-from controller.evaluation.curve import Curve, CurveError
+from controller.evaluation.curve import Array, Curve, CurveError
 from controller.evaluation.evaluate import evaluate
 from controller.record import Record, points, read_record
+from controller.titration.outcome import STRAIGHTNESS_MV
 from controller.titration.plan import RunPlan
+from simulators.constants import ideal_slope_mv
 
 #: no probe and no calibration is straight to better than this over a few pH
 STRAIGHTNESS_PH = 0.003
@@ -58,6 +60,7 @@ def curve_of(plan: RunPlan, record: Record, *, where: str) -> Curve:
     found.sort(key=lambda one: float(one["volume_ml"]))
     chemistry, analyte = plan.chemistry, plan.chemistry.analyte
     known = all(one["ph"] is not None for one in found)
+    volume_sd, signal_sd = _spreads(plan, found, known=known)
     curve = Curve(
         volume_ml=np.array([one["volume_ml"] for one in found], dtype=np.float64),
         ph=np.array([one["ph"] for one in found], dtype=np.float64) if known else None,
@@ -65,8 +68,8 @@ def curve_of(plan: RunPlan, record: Record, *, where: str) -> Curve:
         initial_volume_ml=plan.sample.initial_volume_ml,
         titrant_concentration_mol_l=plan.titrant.concentration_mol_l,
         titrant_is_acid=plan.titrant.acid,
-        volume_sd_ml=math.hypot(plan.pump.dose_sd_ml, plan.pump.step_ml),
-        signal_sd=STRAIGHTNESS_PH if known else None,
+        volume_sd_ml=volume_sd,
+        signal_sd=signal_sd,
         pkw=chemistry.pkw,
         debye_huckel_a=chemistry.debye_huckel_a,
         temperature_c=chemistry.temperature_c,
@@ -74,6 +77,19 @@ def curve_of(plan: RunPlan, record: Record, *, where: str) -> Curve:
     if analyte is None:
         return curve
     return replace(curve, pka=analyte.pka, charge=analyte.charge, counter_ion_charge=analyte.counter_ion_charge)
+
+
+def _spreads(plan: RunPlan, found: list[dict[str, Any]], *, known: bool) -> tuple[float | Array, float | Array | None]:
+    """Return standard deviations of volume and signal: the run's own where the points hold them."""
+    calibration = plan.probe.calibration
+    if any(one.get("volume_sd_ml") is None or one.get("potential_sd_mv") is None for one in found):
+        return math.hypot(plan.pump.dose_sd_ml, plan.pump.step_ml), STRAIGHTNESS_PH if known else None
+    per_unit = 1.0
+    if known and calibration is not None:
+        per_unit = calibration.slope_fraction * ideal_slope_mv(plan.chemistry.temperature_c)
+    volume = [math.hypot(one["volume_sd_ml"], plan.pump.dose_sd_ml, 0.0005) for one in found]
+    signal = [math.hypot(one["potential_sd_mv"], STRAIGHTNESS_MV) / per_unit for one in found]
+    return np.array(volume, dtype=np.float64), np.array(signal, dtype=np.float64)
 
 
 def _detected_ml(record: Record) -> list[float]:

@@ -84,7 +84,8 @@ class Report:
     """Something for people and the record; needs no answer (the core is sent None).
 
     `what` says which fields are set: "note" (text), "point" (volume_ml: composition at the glass, delivered_ml,
-    potential_mv, ph, settled, text), "forecast" (volume_ml: predicted equivalence volume, standard_uncertainty_ml,
+    potential_mv, ph, settled, text; what the evaluation takes its volume and potential to be worth: volume_sd_ml,
+    potential_sd_mv), "forecast" (volume_ml: predicted equivalence volume, standard_uncertainty_ml,
     end_point), "end-point" (volume_ml, standard_uncertainty_ml, ph, potential_mv, estimator, end_point), "warning"
     (text).
     """
@@ -100,6 +101,8 @@ class Report:
     settled: bool | None = None
     end_point: int | None = None
     estimator: str | None = None
+    volume_sd_ml: float | None = None
+    potential_sd_mv: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -213,7 +213,7 @@ class _Run:
             volume_sd_ml=round(accepted.volume_sd_ml if accepted.volume_sd_ml < 1e3 else 1e3, 7),
             delivered_ml=round(self.world.delivered_ml, 7),
             potential_mv=potential_mv,
-            potential_sd_mv=self.probe.potential_sd_mv(accepted.settled, self._readings),
+            potential_sd_mv=round(self.probe.potential_sd_mv(accepted.settled, self._readings), 5),
             ph=round(self.scale.ph(potential_mv), 6) if self.scale.known else None,
             at_s=self.world.now_s or 0.0,
             settled=accepted.settled,
@@ -228,6 +228,8 @@ class _Run:
                 potential_mv=point.potential_mv,
                 ph=point.ph,
                 settled=point.settled,
+                volume_sd_ml=point.volume_sd_ml,
+                potential_sd_mv=point.potential_sd_mv,
             )
         )
         self.probe.took_point(point.potential_mv, point.settled)
