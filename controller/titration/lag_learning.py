@@ -17,7 +17,8 @@ from controller.evaluation.inverse import InverseFit
 from controller.titration.composition import Composition
 from controller.titration.points import PhScale
 
-FADE = 0.3
+FADE = 0.15  # of what was learned, with every dose
+PRIOR_WEIGHT = 0.25  # the vessel of this run may mix otherwise than the one of the record
 _LARGEST_STEP = 0.15
 _LARGEST_CHANGE = math.log(3.0)
 _OFFSET_SD_ML = 0.05
@@ -54,7 +55,7 @@ class LagLearner:
             rest.append(volume - seen)
             slopes.append(abs(slope))
             weight.append(
-                1.0 / ((1.5 * noise_mv * slope) ** 2 + (0.003 * (volume - fit.equivalence_ml)) ** 2 + 0.0005**2)
+                1.0 / ((1.1 * noise_mv * slope) ** 2 + (0.001 * (volume - fit.equivalence_ml)) ** 2 + 0.0005**2)
             )
         table = np.array(rows)
         if abs(table[-1, 0] - table[0, 0]) < _SMALLEST_MOVE_ML:
@@ -73,15 +74,15 @@ class LagLearner:
     def _update(self, information: npt.NDArray[np.float64], gradient: npt.NDArray[np.float64]) -> None:
         if not (np.isfinite(information).all() and np.isfinite(gradient).all()):
             return
-        old = (1.0 - FADE) * self._learned + self._prior * 0.25
+        old = (1.0 - FADE) * self._learned + PRIOR_WEIGHT * self._prior
         total = old + information
-        step = np.linalg.solve(total, gradient + 0.25 * self._prior @ (self._start - self._mean))
+        step = np.linalg.solve(total, gradient + PRIOR_WEIGHT * self._prior @ (self._start - self._mean))
         largest = float(np.abs(step).max())
         if largest > _LARGEST_STEP:
             step *= _LARGEST_STEP / largest
         self._mean = np.clip(self._mean + step, self._start - _LARGEST_CHANGE, self._start + _LARGEST_CHANGE)
         self._learned = (1.0 - FADE) * self._learned + information
-        covariance = np.linalg.inv(self._learned + 0.25 * self._prior)
+        covariance = np.linalg.inv(self._learned + PRIOR_WEIGHT * self._prior)
         self._composition.retune(
             round(math.exp(float(self._mean[0])), 4),
             round(math.exp(float(self._mean[1])), 4),

@@ -24,6 +24,8 @@ SD_OF_PRECISION = 0.5  # of the pump's precision, as a potential by the local sl
 SD_PER_STEP = 0.03
 SHORTEST_TAUS = 1.5
 LARGEST_CHI_SQUARE = 4.0
+REACH_LIMITS = 4.0  # how far a level may be extrapolated: a drift fits a long tau as well, and leads anywhere
+REACH_SHARE = 0.15
 LONGEST_S = 90.0
 HOLD_S = 60.0
 DRIFT_AFTER_S = 20.0
@@ -84,7 +86,11 @@ class Extrapolated:
         if len(good) >= 5:
             level, sd, chi_square, tau_s = self._averaged(good, context.noise_mv)
             self._last_tau_s = tau_s
-            if sd < limit and chi_square < LARGEST_CHI_SQUARE:
+            left = abs(level - sum(e for _, e in good[-3:]) / 3.0)
+            reach = max(
+                REACH_LIMITS * limit, REACH_SHARE * abs(good[0][1] - good[-1][1]), REACH_SHARE * context.step_mv
+            )
+            if sd < limit and chi_square < LARGEST_CHI_SQUARE and left < reach:
                 return self._accept(context, level, True, "")
             if waited_s > DRIFT_AFTER_S and (drift := _steady_drift(good, context.noise_mv)) is not None:
                 last = [e for _, e in good[-5:]]
