@@ -22,7 +22,7 @@ WATCHED_TIME_SCALE = "10"
 
 def demo(given: argparse.Namespace) -> int:
     """Titrate pressed juice on the simulated bench of a cider house."""
-    folder = Path(given.dir) if given.dir else Path(tempfile.mkdtemp(prefix="halfdrop-demo-")) / "cider-lab"
+    folder = Path(given.dir) if given.dir else _new_folder()
     init_lab(folder)
     if has_terminal() and not (given.headless or given.json):
         return _watched(find_lab(str(folder)), given)
@@ -42,14 +42,32 @@ def demo(given: argparse.Namespace) -> int:
 
 
 def _watched(lab: Lab, given: argparse.Namespace) -> int:
-    """Start the run in its own process and show it on the screen, as any run is shown."""
+    lab, record, speed = start_watched(lab, seed=given.seed, time_scale=given.time_scale)
+    status = show(lab, record, speed=speed)
+    say(f"the records are in {lab.runs}; open them again with: halfdrop --lab {lab.path}")
+    return status
+
+
+def start_watched(
+    lab: Lab | None = None, *, seed: int = 1, time_scale: str | None = None
+) -> tuple[Lab, Path, float | None]:
+    """Start the demo's run in its own process, as any run on the screen.
+
+    Returns:
+        The lab folder (a new one where none is given), the run's record, and how many times real time passes.
+    """
     from controller.launch import record_of, start_run
     from drivers.clock import SystemClock
 
-    scale = given.time_scale or WATCHED_TIME_SCALE
-    arguments = [METHOD, "--sample-id", SAMPLE_ID, "--seed", str(given.seed), "--operator", "virtual chemist"]
+    if lab is None:
+        folder = _new_folder()
+        init_lab(folder)
+        lab = find_lab(str(folder))
+    scale = time_scale or WATCHED_TIME_SCALE
+    arguments = [METHOD, "--sample-id", SAMPLE_ID, "--seed", str(seed), "--operator", "virtual chemist"]
     started = start_run(lab, [*arguments, "--time-scale", scale])
-    record = record_of(started, lab, SystemClock())
-    status = show(lab, record, speed=None if scale == FAST else float(scale))
-    say(f"the records are in {lab.runs}; open them again with: halfdrop --lab {lab.path}")
-    return status
+    return lab, record_of(started, lab, SystemClock()), None if scale == FAST else float(scale)
+
+
+def _new_folder() -> Path:
+    return Path(tempfile.mkdtemp(prefix="halfdrop-demo-")) / "cider-lab"

@@ -1,0 +1,239 @@
+"""The archive: every record of the lab folder, found by words, opened, verified, compared."""
+
+from __future__ import annotations
+
+import json
+from functools import partial
+from pathlib import Path
+from typing import Any, ClassVar
+
+from rich.text import Text as RichText
+from textual.app import ComposeResult
+from textual.binding import Binding, BindingType
+from textual.containers import Horizontal, Vertical
+from textual.screen import Screen
+from textual.widgets import DataTable, Footer, Input
+
+from configs.errors import HalfdropError
+from controller.archive_index import ArchiveIndex, IndexedRun
+from controller.labfolder import Lab
+from controller.record import printable, read_record, verify
+from controller.ui.screens.dialogs import Line, Text
+from controller.ui.screens.help import help_of
+from controller.ui.texts import clock_text, local_time_text
+from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.titlebar import TitleBar
+
+PAGE = 200
+OUTCOMES = (None, "completed", "stopped", "failed", "abandoned", "open", "unreadable")
+_COLUMNS = (("started", 16), ("sample", 18), ("outcome", 9), ("amount", 22), ("end points", 16), ("method", 28))
+
+
+class ArchiveScreen(Screen[None]):
+    """Lists, searches and opens records."""
+
+    HELP = "archive"
+    BINDINGS: ClassVar[list[BindingType]] = [
+        Binding("slash", "search", "Search", key_display="/"),
+        Binding("f", "outcome", "Outcome"),
+        Binding("enter", "open", "Open", priority=False),
+        Binding("v", "verify", "Verify"),
+        Binding("c", "compare", "Compare"),
+        Binding("e", "export", "Export"),
+        Binding("y", "copy", "Copy", show=False),
+        Binding("escape", "list", "List", show=False),
+        Binding("question_mark", "help", "Help", key_display="?"),
+        Binding("q", "app.quit", "Quit"),
+    ]
+
+    def __init__(self, lab: Lab) -> None:
+        super().__init__()
+        self._lab = lab
+        self._index = ArchiveIndex(lab.runs)
+        self._outcome: str | None = None
+        self._shown: list[IndexedRun] = []
+        self._count = 0
+        self._chosen: str | None = None
+
+    def compose(self) -> ComposeResult:
+        """Search, list, what is known of the line under the cursor."""
+        yield TitleBar("archive")
+        with Vertical(classes="page"):
+            with Horizontal(id="search-line"):
+                yield Input(placeholder="/ search in sample, method, operator, outcome", id="search", compact=True)
+                yield Plain("", id="filter")
+            yield DataTable(cursor_type="row", id="runs")
+            yield Plain("", id="about")
+        yield Footer(show_command_palette=False, compact=True)
+
+    def on_mount(self) -> None:
+        """Show what the index knows at once, then bring it up to date."""
+        table = self.query_one(DataTable)
+        for name, width in _COLUMNS:
+            table.add_column(name, width=width, key=name)
+        table.focus()
+        self.run_worker(self._refresh, thread=True, exclusive=True, group="index")
+
+    def _refresh(self) -> None:
+        self._index.refresh(lambda done, of: self.app.call_from_thread(self._say_reading, done, of))
+        self.app.call_from_thread(self.search)
+
+    def _say_reading(self, done: int, of: int) -> None:
+        self.query_one("#about", Plain).say(f"reading records: {done} of {of}")
+
+    # --- the list ----------------------------------------------------------------------------------------------------
+
+    def search(self) -> None:
+        """List what the search finds, from its beginning."""
+        table = self.query_one(DataTable)
+        table.clear()
+        self._shown = []
+        words = self.query_one("#search", Input).value
+        self._count = self._index.count(words, outcome=self._outcome)
+        self._more()
+        self.query_one("#filter", Plain).say(f"f: {self._outcome or 'every outcome'}")
+        if not self._shown:
+            nothing = "nothing found" if words or self._outcome else "no records yet; 2 starts the first run"
+            self.query_one("#about", Plain).say(nothing)
+
+    def _more(self) -> None:
+        words = self.query_one("#search", Input).value
+        found = self._index.find(words, outcome=self._outcome, most=PAGE, after=len(self._shown))
+        table = self.query_one(DataTable)
+        for one in found:
+            table.add_row(*(RichText(printable(cell)) for cell in _cells(one)), key=one.run)
+        self._shown += found
+
+    def on_data_table_row_highlighted(self, event: DataTable.RowHighlighted) -> None:
+        """Tell about the line; near the end of what is listed, list more."""
+        if not 0 <= event.cursor_row < len(self._shown):
+            return
+        one = self._shown[event.cursor_row]
+        place = f"{event.cursor_row + 1} of {self._count}"
+        took = "" if one.duration_s is None else f", {one.doses} doses in {clock_text(one.duration_s)}"
+        why = f" ({one.reason})" if one.reason else ""
+        about = f"{place}   {one.run}\n{one.outcome}{why}{took}, operator: {one.operator or 'not named'}"
+        self.query_one("#about", Plain).say(printable(about.replace("\n", " │ ")).replace(" │ ", "\n", 1))
+        if event.cursor_row >= len(self._shown) - 20 and len(self._shown) < self._count:
+            self._more()
+
+    def on_input_changed(self, _event: Input.Changed) -> None:
+        """Search while typing."""
+        self.search()
+
+    def on_input_submitted(self, _event: Input.Submitted) -> None:
+        """To the list."""
+        self.action_list()
+
+    async def on_data_table_row_selected(self, _event: DataTable.RowSelected) -> None:
+        """Enter or a click on the line."""
+        self.action_open()
+
+    # --- actions -----------------------------------------------------------------------------------------------------
+
+    def _record(self) -> Path | None:
+        row = self.query_one(DataTable).cursor_row
+        return self._lab.runs / f"{self._shown[row].run}.jsonl" if 0 <= row < len(self._shown) else None
+
+    def action_search(self) -> None:
+        """Into the search field."""
+        self.query_one("#search", Input).focus()
+
+    def action_list(self) -> None:
+        """Into the list."""
+        self.query_one(DataTable).focus()
+
+    def action_outcome(self) -> None:
+        """The next outcome alone, or all."""
+        self._outcome = OUTCOMES[(OUTCOMES.index(self._outcome) + 1) % len(OUTCOMES)]
+        self.search()
+
+    def action_open(self) -> None:
+        """Open the run under the cursor."""
+        record = self._record()
+        if record is not None:
+            from controller.ui.screens.record import RecordScreen
+
+            self.app.push_screen(RecordScreen(record))
+
+    def action_compare(self) -> None:
+        """Choose a run; with a second one, show both."""
+        record = self._record()
+        if record is None:
+            return
+        if self._chosen is None or self._chosen == record.stem:
+            self._chosen = record.stem
+            self.notify(f"chosen: {record.stem}; choose a second one with c", markup=False)
+            return
+        from controller.ui.screens.record import CompareScreen
+
+        first, self._chosen = self._lab.runs / f"{self._chosen}.jsonl", None
+        self.app.push_screen(CompareScreen(first, record))
+
+    def action_verify(self) -> None:
+        """Verify the record under the cursor."""
+        record = self._record()
+        if record is not None:
+            self.run_worker(partial(verify_for, self, record), thread=True)
+
+    def action_export(self) -> None:
+        """Ask where the tables go."""
+        record = self._record()
+        if record is not None:
+            where = str(self._lab.path / "exports" / record.stem)
+            ask = Line("Write tables (CSV with units, data package)", "Into which folder?", value=where)
+            self.app.push_screen(ask, partial(self._export, record))
+
+    def _export(self, record: Path, named: str | None) -> None:
+        if named and named.strip():
+            try:
+                files = write_tables(record, Path(named.strip()).expanduser())
+            except (HalfdropError, OSError) as error:
+                self.notify(str(error), severity="error", timeout=12, markup=False)
+            else:
+                self.notify(f"wrote {', '.join(files)} into {named.strip()}", markup=False)
+
+    def action_copy(self) -> None:
+        """Put the list into the clipboard."""
+        self.app.copy_to_clipboard("\n".join("\t".join(_cells(one)) for one in self._shown))
+        self.notify(f"{len(self._shown)} lines are in the clipboard")
+
+    def action_help(self) -> None:
+        """Help for this screen."""
+        self.app.push_screen(help_of("archive"))
+
+
+def _cells(one: IndexedRun) -> tuple[str, ...]:
+    volumes = ", ".join(f"{volume_ml:.4f} mL" for volume_ml in one.end_points_ml)
+    started = local_time_text(one.started_utc)[:16]
+    amount = one.amount.split(" as ")[0].split(" (")[0]
+    return started, one.sample_id, one.outcome, amount or "none", volumes or "none", one.method
+
+
+def verify_for(screen: Screen[Any], record: Path) -> None:
+    """Verify a record and show the finding; for a thread of its own."""
+    try:
+        found = verify(record)
+        text = f"{record.name}\n\n{found.state}: {found.what}"
+    except HalfdropError as error:
+        text = str(error)
+    text += "\n\nIntact means: as the program wrote it. Whoever rewrites every hash makes a new record."
+    screen.app.call_from_thread(screen.app.push_screen, Text("Is the record as it was written?", printable_lines(text)))
+
+
+def printable_lines(text: str) -> str:
+    """Return text of several lines, each fit for a terminal."""
+    return "\n".join(printable(line) for line in text.splitlines())
+
+
+def write_tables(record: Path, folder: Path) -> list[str]:
+    """Write a record's tables and their data package; return the names of the files."""
+    from controller.report.export import data_package, tables
+
+    read = read_record(record)
+    files = dict(tables(read))
+    files["datapackage.json"] = json.dumps(data_package(read, files), indent=2, ensure_ascii=False) + "\n"
+    folder.mkdir(parents=True, exist_ok=True)
+    for name, text in files.items():
+        (folder / name).write_text(text, encoding="utf-8", newline="")
+    return list(files)
