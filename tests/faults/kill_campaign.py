@@ -1,0 +1,224 @@
+"""kill -9 at random moments of whole runs, with the bench in a process of its own that survives; then resume.
+
+    python tests/faults/kill_campaign.py [runs] [--jobs N] [--scale X] [--first-seed N] [--keep DIR]
+
+For every seed: the bench is served, a run is started and killed, resumed to its end, and then held against the pump's
+own step counter (nothing doubled, nothing lost), the record (no synced line lost, chain whole, decided again the same)
+and the same seed's uninterrupted run (end point within the uncertainties, uncertainty at most 1.5 times as large).
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import os
+import random
+import signal
+import subprocess
+import sys
+import tempfile
+import time
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from controller.record import read_record, verify
+from controller.replay import replay
+from drivers.clock import SystemClock
+from drivers.link import LinkSettings, open_link
+from drivers.scpi_pump import ScpiPump
+
+METHOD = "juice-acidity"
+ANSWERS = """\
+protection: "yes"
+stirring-and-tip: "yes"
+degassed: "yes"
+beaker-touched: "no"
+probe-reads-otherwise: "yes"
+rinse-and-store: "yes"
+"""
+STEP_ML = 0.0005
+_HALFDROP = [sys.executable, "-m", "controller.cli"]
+_ROOT = Path(__file__).resolve().parents[2]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Outcome:
+    """What one killed run came to; `problems` is empty where all is well."""
+
+    seed: int
+    killed_s: float
+    lines: int
+    found: str
+    problems: tuple[str, ...]
+
+
+def halfdrop(*arguments: str, place: Path, wait: bool = True) -> subprocess.Popen[bytes]:
+    """Start the command line in a process of its own."""
+    environment = os.environ | {
+        "PYTHONPATH": str(_ROOT), "OPENBLAS_NUM_THREADS": "1", "XDG_STATE_HOME": str(place / "state"),
+        "HOME": str(place),
+    }  # fmt: skip
+    process = subprocess.Popen(
+        [*_HALFDROP, *arguments],
+        cwd=place, env=environment, stdin=subprocess.DEVNULL, stdout=subprocess.PIPE, stderr=subprocess.PIPE,
+    )  # fmt: skip
+    if wait:
+        process.wait()
+    return process
+
+
+def result_of(process: subprocess.Popen[bytes]) -> dict[str, Any]:
+    """Return the JSON document that a command printed."""
+    out, err = process.communicate()
+    try:
+        found: dict[str, Any] = json.loads(out)
+    except ValueError:
+        raise RuntimeError(f"exit {process.returncode}: {err.decode()[-600:]}") from None
+    return found
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Killed:
+    """One run of the campaign while it goes on."""
+
+    seed: int
+    scale: float
+    lab: Path
+    calm: dict[str, Any]
+    keep: Path | None
+
+
+def one(seed: int, scale: float, keep: Path | None) -> Outcome:
+    """Kill one run and resume it."""
+    with tempfile.TemporaryDirectory(prefix="halfdrop-kill-") as folder:
+        place = Path(folder)
+        halfdrop("init", "lab", place=place).communicate()
+        lab = place / "lab"
+        calm = result_of(halfdrop("run", METHOD, "--lab", "lab", "--headless", "--json", f"--seed={seed}", place=place,
+                                  wait=False))  # fmt: skip
+        serve = halfdrop("bench", "serve", "--lab", "lab", f"--seed={seed}", f"--time-scale={scale}", place=place,
+                         wait=False)  # fmt: skip
+        try:
+            return _killed(Killed(seed=seed, scale=scale, lab=lab, calm=calm, keep=keep), serve)
+        finally:
+            serve.send_signal(signal.SIGINT)
+            serve.communicate()
+
+
+def _killed(run: Killed, serve: subprocess.Popen[bytes]) -> Outcome:
+    lab, scale, draws = run.lab, run.scale, random.Random(run.seed)
+    assert serve.stdout is not None
+    ports = json.loads(serve.stdout.readline())
+    bench = lab / "bench.yaml"
+    text = bench.read_text()
+    for role in ("pump", "probe"):
+        text = text.replace("port: simulated", f"port: {json.dumps(ports[role])}", 1)
+    bench.write_text(text)
+    (lab / "answers.yaml").write_text(ANSWERS)
+    usual = ("--lab", "lab", "--headless", "--json", "--answers", "lab/answers.yaml", f"--time-scale={scale}")
+    before = set(lab.glob("runs/*.jsonl"))
+    process = halfdrop("run", METHOD, *usual, place=lab.parent, wait=False)
+    path = _new_record(lab, before, process)
+    moment_s = draws.uniform(0.0, 0.98) * run.calm["duration_s"] / scale
+    time.sleep(moment_s)
+    process.kill()
+    process.communicate()
+    kept = path.read_bytes()
+    if b'"closing"' in kept:
+        lines = kept.count(b"\n")
+        return Outcome(seed=run.seed, killed_s=moment_s * scale, lines=lines, found="ended before", problems=())
+    time.sleep(draws.choice((0.0, 0.3, 2.0)))
+    resumed = result_of(halfdrop("resume", path.stem, *usual, place=lab.parent, wait=False))
+    found, problems = _judged(run, path, kept, resumed, _steps_in_truth(ports["pump"]))
+    if problems and run.keep is not None:
+        (run.keep / f"seed-{run.seed}.jsonl").write_bytes(path.read_bytes())
+    return Outcome(
+        seed=run.seed, killed_s=moment_s * scale, lines=kept.count(b"\n"), found=found, problems=tuple(problems)
+    )
+
+
+def _new_record(lab: Path, before: set[Path], process: subprocess.Popen[bytes]) -> Path:
+    until_s = time.monotonic() + 60.0
+    while time.monotonic() < until_s and process.poll() is None:
+        found = set(lab.glob("runs/*.jsonl")) - before
+        if found:
+            return found.pop()
+        time.sleep(0.02)
+    raise RuntimeError(f"no record was begun: {process.communicate()[1].decode()[-600:]}")
+
+
+def _judged(run: Killed, path: Path, kept: bytes, resumed: dict[str, Any], truth: int) -> tuple[str, list[str]]:
+    problems: list[str] = []
+    data, record = path.read_bytes(), read_record(path)
+    if not data.startswith(kept):
+        problems.append("lines of before were changed")
+    if verify(path).state != "intact":
+        problems.append(f"record: {verify(path).what}")
+    if (difference := replay(record).difference) is not None:
+        problems.append(f"decided otherwise at line {difference.line}: {', '.join(difference.fields())}")
+    [line] = [entry for entry in record.of("resumed") if "event" in entry]
+    found = str(line.get("dose_in_doubt", {}).get("found", "no dose in doubt"))
+    steps = sum(entry.get("steps") or 0 for kind in ("dosed", "failed") for entry in record.of(kind))
+    if steps != truth:
+        problems.append(f"{steps} steps in the record, {truth} in truth")
+    if resumed["outcome"] != "completed" or not resumed["end_points"]:
+        problems.append(f"ended as {resumed['outcome']}: {resumed['reason']}")
+    else:
+        problems += _compared(run.calm["end_points"][0], resumed["end_points"][0])
+    return found, problems
+
+
+def _compared(calm: dict[str, Any], resumed: dict[str, Any]) -> list[str]:
+    problems = []
+    off_ml = resumed["volume_ml"] - calm["volume_ml"]
+    calm_ml, resumed_ml = calm["standard_uncertainty_ml"], resumed["standard_uncertainty_ml"]
+    # two runs of one bench differ by both uncertainties; three of them is a rare event
+    if abs(off_ml) > 3.0 * (calm_ml**2 + resumed_ml**2) ** 0.5:
+        problems.append(f"end point off by {1000 * off_ml:+.2f} uL, u {1000 * resumed_ml:.2f} uL")
+    if resumed_ml > 1.5 * calm_ml:
+        problems.append(f"u {1000 * resumed_ml:.2f} uL, uninterrupted {1000 * calm_ml:.2f} uL")
+    return problems
+
+
+def _steps_in_truth(port: str) -> int:
+    clock = SystemClock()
+    link = open_link(port, LinkSettings(), clock=clock, device="pump")
+    try:
+        return round(ScpiPump(link, clock).delivered_ml() / STEP_ML)
+    finally:
+        link.close()
+
+
+def main() -> int:
+    """Run the campaign and print one line a run and a summary."""
+    asked = argparse.ArgumentParser(description=__doc__)
+    asked.add_argument("runs", type=int, nargs="?", default=200)
+    asked.add_argument("--jobs", type=int, default=6)
+    asked.add_argument("--scale", type=float, default=10.0)
+    asked.add_argument("--first-seed", type=int, default=1)
+    asked.add_argument("--keep", type=Path, help="folder for the records of runs with problems")
+    given = asked.parse_args()
+    seeds = range(given.first_seed, given.first_seed + given.runs)
+    bad, kinds = 0, dict[str, int]()
+    with ThreadPoolExecutor(max_workers=given.jobs) as pool:
+        for outcome in pool.map(lambda seed: _safely(seed, given.scale, given.keep), seeds):
+            kinds[outcome.found] = kinds.get(outcome.found, 0) + 1
+            bad += bool(outcome.problems)
+            told = "; ".join(outcome.problems) or "sound"
+            print(f"seed {outcome.seed}: killed at {outcome.killed_s:.1f} s after {outcome.lines} lines, "
+                  f"{outcome.found}: {told}", flush=True)  # fmt: skip
+    print(f"{given.runs} runs, {bad} with problems; " + ", ".join(f"{count} {name}" for name, count in kinds.items()))
+    return 1 if bad else 0
+
+
+def _safely(seed: int, scale: float, keep: Path | None) -> Outcome:
+    try:
+        return one(seed, scale, keep)
+    except Exception as error:  # a campaign reports and goes on
+        return Outcome(seed=seed, killed_s=0.0, lines=0, found="error", problems=(f"{type(error).__name__}: {error}",))
+
+
+if __name__ == "__main__":
+    sys.exit(main())
