@@ -31,7 +31,12 @@ def evaluate_record(path: Path) -> dict[str, Any]:
     Raises:
         HalfdropError: it is no record, or its plan cannot be read.
     """
-    record = read_record(path)
+    return evaluate_points(read_record(path))
+
+
+def evaluate_points(record: Record) -> dict[str, Any]:
+    """As `evaluate_record`, for a record that is read already."""
+    path = record.path
     plan = plan_from_json(record.header.get("plan"), where=str(path))
     detected = _detected_ml(record)
     closing = record.closing or {}

@@ -1,0 +1,107 @@
+"""The uncertainty budget of a report: one row a quantity, and what checks it."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+from controller.commands.output import decimals
+from controller.report.tables import Table
+from controller.report.wording import DASH, number, with_uncertainty
+
+
+def budget_table(amount: dict[str, Any] | None) -> Table | None:
+    """Return the full table where the result has one, else the contributions; None without an amount.
+
+    Args:
+        amount: the result's "result".
+    """
+    if not amount:
+        return None
+    whole = amount.get("budget")
+    rows = whole.get("rows") if isinstance(whole, dict) else None
+    if isinstance(whole, dict) and isinstance(rows, list) and rows:
+        return _whole(whole, rows, amount)
+    contributions = amount.get("contributions")
+    if not isinstance(contributions, dict) or not contributions:
+        return None
+    total = math.fsum(float(c) ** 2 for c in contributions.values())
+    ordered = sorted(contributions.items(), key=lambda item: -abs(item[1]))
+    made = [(str(name), number(abs(float(c)), _places(amount)), _percent(float(c) ** 2, total)) for name, c in ordered]
+    made.append(("combined standard uncertainty", number(amount.get("standard_uncertainty"), _places(amount)), "100 %"))
+    heads = ("Quantity", f"Contribution / {amount.get('unit')}", "Share of variance")
+    return Table(
+        caption="Uncertainty budget", heads=heads, rows=tuple(made), numeric=(1, 2), note=_coverage(amount, amount)
+    )
+
+
+def _whole(whole: dict[str, Any], rows: list[dict[str, Any]], amount: dict[str, Any]) -> Table:
+    unit = str(amount.get("unit"))
+    made = [_row(row, amount) for row in rows]
+    total = number(amount.get("standard_uncertainty"), _places(amount))
+    made.append(("combined standard uncertainty", "", "", unit, "", "", "", total, "100 %"))
+    heads = ("Quantity", "Value", "u", "Unit", "Distribution", "ν", "Sensitivity", f"Contribution / {unit}", "Share")
+    note = " ".join(filter(None, (_coverage(amount, whole), _monte_carlo(whole, amount), _shared(rows))))
+    return Table(caption="Uncertainty budget", heads=heads, rows=tuple(made), numeric=(1, 2, 5, 6, 7, 8), note=note)
+
+
+def _row(row: dict[str, Any], amount: dict[str, Any]) -> tuple[str, ...]:
+    value, u = with_uncertainty(row.get("value"), row.get("standard_uncertainty"))
+    freedom, sensitivity = row.get("degrees_of_freedom"), row.get("sensitivity")
+    return (
+        str(row.get("quantity") or row.get("name")),
+        value,
+        u,
+        str(row.get("unit") or ""),
+        str(row.get("distribution") or DASH),
+        "∞" if freedom is None or freedom == math.inf else f"{freedom:.3g}",
+        DASH if sensitivity is None else number(float(f"{sensitivity:.3g}")),
+        number(abs(float(row.get("contribution") or 0.0)), _places(amount)),
+        DASH if row.get("share") is None else _percent(row["share"], 1.0),
+    )
+
+
+def _places(amount: dict[str, Any]) -> int:
+    return min(9, decimals(float(amount.get("standard_uncertainty") or 0.0)) + 1)
+
+
+def _percent(part: float, total: float) -> str:
+    return f"{number(100.0 * part / total, 1)} %" if total > 0.0 else DASH
+
+
+def coverage_factor(amount: dict[str, Any]) -> str:
+    """Return k as it is printed: 2 for 2.0, 1.96 for 1.95996."""
+    factor = amount.get("coverage_factor")
+    return DASH if factor is None else f"{factor:.3g}"
+
+
+def _coverage(amount: dict[str, Any], whole: dict[str, Any]) -> str:
+    if amount.get("coverage_factor") is None:
+        return ""
+    probability, freedom = whole.get("coverage_probability"), whole.get("degrees_of_freedom")
+    covers = "about 95 %" if probability is None else f"{100.0 * probability:.3g} %"
+    effective = "" if freedom is None else f" ({freedom:.3g} effective degrees of freedom)"
+    return (
+        f"The expanded uncertainty is the combined one times the coverage factor k = {coverage_factor(amount)}, for "
+        f"{covers} coverage{effective}."
+    )
+
+
+def _monte_carlo(whole: dict[str, Any], amount: dict[str, Any]) -> str:
+    """Monte Carlo (GUM Supplement 1) beside the law of propagation, in a sentence."""
+    found = whole.get("monte_carlo")
+    if not isinstance(found, dict):
+        return ""
+    places = _places(amount)
+    value, u = number(found.get("value"), places), number(found.get("standard_uncertainty"), places)
+    word = {True: "both agree", False: "they DIFFER by more than the numerical tolerance", None: "not compared"}
+    low, high = [number(end, places) for end in found.get("interval") or (None, None)]
+    return (
+        f"Monte Carlo (GUM Supplement 1, {found.get('trials')} trials): {value}, u = {u}, interval {low} to {high}; "
+        f"{word.get(found.get('agrees'), 'not compared')}."
+    )
+
+
+def _shared(rows: list[dict[str, Any]]) -> str:
+    named = [f"{row.get('quantity')} ({row['shared_id']})" for row in rows if row.get("shared_id")]
+    return f"Shared causes enter once: {', '.join(named)}." if named else ""

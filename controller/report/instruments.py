@@ -1,0 +1,128 @@
+"""With what a run was measured: probe, calibration, burette, titrant lot, in the terms that a chemist reads."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from datetime import datetime
+from typing import Any
+
+from controller.report.wording import Facts, facts_of, local_time, number, with_uncertainty
+
+_CALIBRATION_KEYS = (
+    "slope_fraction",
+    "slope_fraction_standard_uncertainty",
+    "isopotential_ph",
+    "isopotential_mv",
+    "offset_standard_uncertainty_mv",
+    "calibrated_utc",
+)
+_TITRANT_KEYS = ("name", "concentration_mol_l", "standard_uncertainty_mol_l", "acid", "lot_id")
+#: parts of a plan that name what a result rests on, where it has them
+_FURTHER = ("blank", "back_titration", "standard", "lots", "balance")
+_SECONDS_A_DAY = 86400.0
+
+
+def instruments(header: Mapping[str, Any]) -> list[tuple[str, Facts]]:
+    """Return the sections "probe", "calibration", "response", "burette", "titrant lot" and what else the plan names.
+
+    Args:
+        header: a record's header.
+    """
+    plan, devices = _dict(header.get("plan")), _dict(header.get("devices"))
+    offset, started = header.get("lab_utc_offset"), header.get("started_utc")
+    probe, pump = _dict(plan.get("probe")), _dict(plan.get("pump"))
+    sections = [
+        ("Probe", [*_device(devices.get("probe")), *_probe(probe, offset)]),
+        ("Calibration of the probe", _calibration(_dict(probe.get("calibration")), offset, started)),
+        ("Response of the probe", _response(_dict(probe.get("response")), offset)),
+        ("Burette", [*_device(devices.get("pump")), *_burette(pump, offset)]),
+        ("Titrant lot", _titrant(_dict(plan.get("titrant")), offset)),
+    ]
+    further = [(key.replace("_", " ").capitalize(), facts_of(plan.get(key), offset)) for key in _FURTHER]
+    return [*sections, *[(title, found) for title, found in further if found]]
+
+
+def _dict(value: Any) -> dict[str, Any]:
+    return value if isinstance(value, dict) else {}
+
+
+def _device(identity: Any) -> Facts:
+    told = _dict(identity)
+    if not told:
+        return []
+    name = " ".join(str(told[key]) for key in ("maker", "model") if told.get(key))
+    return [("device", name), ("serial number", str(told.get("serial"))), ("firmware", str(told.get("firmware")))]
+
+
+def _probe(probe: dict[str, Any], offset: Any) -> Facts:
+    return facts_of(probe, offset, leave_out=("identity", "calibration", "response", "signal"))
+
+
+def _calibration(found: dict[str, Any], offset: Any, started: Any) -> Facts:
+    if not found:
+        return [("state", "none: plain potential")]
+    percent = 100.0 * float(found.get("slope_fraction") or 0.0)
+    slope, u = with_uncertainty(percent, 100.0 * float(found.get("slope_fraction_standard_uncertainty") or 0.0))
+    facts = [
+        ("slope", f"{slope} % of the ideal (u = {u} %)"),
+        ("isopotential pH", number(found.get("isopotential_ph"))),
+        (
+            "potential there",
+            f"{number(found.get('isopotential_mv'))} mV (u = {number(found.get('offset_standard_uncertainty_mv'))} mV)",
+        ),
+    ]
+    when = found.get("calibrated_utc")
+    if when:
+        facts.append(("calibrated", f"{local_time(when, offset)}{_age(when, started)}"))
+    return facts + facts_of(found, offset, leave_out=_CALIBRATION_KEYS)
+
+
+def _age(when: Any, started: Any) -> str:
+    try:
+        days = (datetime.fromisoformat(started) - datetime.fromisoformat(when)).total_seconds() / _SECONDS_A_DAY
+    except (TypeError, ValueError):
+        return ""
+    return f", {days:.0f} days before the run" if days >= 1.5 else ", within a day of the run"
+
+
+def _response(found: dict[str, Any], offset: Any) -> Facts:
+    if not found:
+        return [("state", "not on record")]
+    film, slow = number(found.get("film_s")), number(found.get("slow_s"))
+    share = 100.0 * float(found.get("slow_share") or 0.0)
+    facts = [
+        (
+            "mixing and film",
+            f"{number(found.get('bulk_s'))} s, {film} s; dead time {number(found.get('dead_time_s'))} s",
+        ),
+        ("slow layer", f"{slow} s, {number(share)} % of the signal"),
+    ]
+    if found.get("measured_utc"):
+        facts.append(("measured", local_time(found["measured_utc"], offset)))
+    return facts
+
+
+def _burette(pump: dict[str, Any], offset: Any) -> Facts:
+    gain = 100.0 * float(pump.get("gain_standard_uncertainty") or 0.0)
+    facts = [
+        (
+            "syringe, step",
+            f"{number(pump.get('syringe_ml'))} mL, {number(1000.0 * float(pump.get('step_ml') or 0))} µL",
+        ),
+        ("systematic error", f"u = {number(gain)} % of the volume"),
+        ("position error", f"u = {number(1000.0 * float(pump.get('position_sd_ml') or 0.0))} µL"),
+    ]
+    shown = ("identity", "start_count", "last_dose_number", "step_ml", "rate_ml_min", "syringe_ml", "contents_ml",
+             "reservoir_ml", "refill", "position_sd_ml", "position_correlation_ml", "dose_sd_ml",
+             "gain_standard_uncertainty")  # fmt: skip
+    return facts + facts_of(pump, offset, leave_out=shown)
+
+
+def _titrant(found: dict[str, Any], offset: Any) -> Facts:
+    value, u = with_uncertainty(found.get("concentration_mol_l"), found.get("standard_uncertainty_mol_l"))
+    facts = [
+        ("titrant", f"{found.get('name')}, a strong {'acid' if found.get('acid') else 'base'}"),
+        ("concentration", f"{value} mol/L (u = {u} mol/L)"),
+        ("lot", str(found.get("lot_id") or "not named")),
+    ]
+    return facts + facts_of(found, offset, leave_out=_TITRANT_KEYS)
