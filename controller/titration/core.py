@@ -137,14 +137,22 @@ class _Run:
         text = f"dose {self.world.doses + 1}: {volume_ml:.4f} mL"
         if planned.expected_mv is not None:
             scale = volume_ml / planned.volume_ml if planned.volume_ml > 0.0 else 1.0
-            sign = "+" if self.plan.titrant.acid else "-"
+            sign = "+" if self._potential_rises() else "-"
             text += f", expecting {sign}{planned.expected_mv * scale:.0f} mV ({planned.why})"
         else:
             text += f" ({planned.why})"
         sound = self.forecast.sound
         if sound is not None:
-            text += f"; equivalence predicted at {sound.equivalence_ml:.3f} +/- {sound.standard_uncertainty_ml:.3f} mL"
+            veq, sd = sound.equivalence_ml, sound.standard_uncertainty_ml
+            digits = 3 if sd >= 0.0095 else 4
+            text += f"; equivalence predicted at {veq:.{digits}f} +/- {sd:.{digits}f} mL"
         return text
+
+    def _potential_rises(self) -> bool:
+        """Does the potential rise with titrant: as the titrant has it, or as the points show where there is no pH?"""
+        if self.scale.known or len(self.points) < 2:
+            return self.plan.titrant.acid
+        return self.points[-1].potential_mv > self.points[0].potential_mv
 
     def _settle(self, planned: PlannedDose) -> Talk[Accepted]:
         """Read until the rule accepts a point."""

@@ -115,7 +115,9 @@ class ModelGuided:
             volume, why = self._near(points, fit, delivered_ml, veq, sd), f"a step of {d.model_step_mv:.0f} mV"
         if abs(remaining) < near:
             volume = min(volume, CURVATURE_FACTOR * curvature_limit_ml(points, d))
-        volume = min(max(volume, d.smallest_ml), d.largest_ml)
+        if volume <= d.smallest_ml:
+            volume, why = d.smallest_ml, "the smallest dose"
+        volume = min(volume, d.largest_ml)
         return PlannedDose(
             volume_ml=volume, expected_mv=self._expected_mv(points[-1], fit, delivered_ml + volume), why=why
         )
