@@ -81,17 +81,19 @@ class Exchange:
         def both(units: list[list[bytes]]) -> tuple[Answer, tuple[int, str]]:
             return read(units[:-1]), tree.read_error(units[-1])
 
-        answer, (number, text) = self._once(b"", _CLEAR + command + b";" + question + _ERROR, both, stop)
+        answer, (number, text) = self._once(b"", _CLEAR + command + b";" + question + _ERROR, both, stop, moves=True)
         if -200 < number <= -100:
             raise DeviceGarbledError(f"understood {text!r} ({number})", where=self.where, remedy=_REMEDY)
         if number != 0:
             raise DeviceRefusedError(f"refused: {_told(text)} ({number})", where=self.where, remedy=_remedy(number))
         return answer
 
-    def _once(self, start: bytes, body: bytes, read: Reader[Answer], stop: threading.Event | None) -> Answer:
+    def _once(
+        self, start: bytes, body: bytes, read: Reader[Answer], stop: threading.Event | None, *, moves: bool = False
+    ) -> Answer:
         link = self.link
         number = self._number = self._number % _HIGHEST_NUMBER + 1
-        link.send(start + _PREFIX % number + body + END)
+        link.send(start + _PREFIX % number + body + END, moves=moves)
         deadline_s = link.line_s() + link.settings.reply_deadline_s
         expected = b"%d" % number
         while True:

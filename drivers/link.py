@@ -1,8 +1,11 @@
-"""One serial line, and the only place that speaks pyserial.
+"""One serial line (pyserial itself is spoken in drivers/serialport.py only).
 
 The link sends a request and hands out the lines that come back; what they mean is the grammar's business. It tells
 a silent device, a garbled line and a port that is gone apart. Deadlines are counted here and nowhere else: in real
 seconds, or in manual time under a ManualClock, where a silent device costs no real time.
+
+A port that failed is looked for and opened again when the next question is sent (never for a command: what it would
+move may have been switched off and on meanwhile).
 """
 
 from __future__ import annotations
@@ -10,18 +13,18 @@ from __future__ import annotations
 import threading
 import time
 from collections import deque
-from typing import Any, NoReturn
+from collections.abc import Callable
+from typing import NoReturn
 
 from drivers.clock import Clock, Line, ManualClock
 from drivers.errors import DeviceError, DeviceGarbledError, DeviceGoneError, DeviceSilentError, StoppedError
 from drivers.framing import FrameReader
-from drivers.transport import LinkSettings, TrafficLog, Transport, opener_of
+from drivers.portfailure import is_port_failure, told_of, why_not_opened
+from drivers.serialport import SLICE_S, WRITE_DEADLINE_S, open_port
+from drivers.transport import LinkSettings, Traffic, TrafficLog, Transport
 
-__all__ = ["Link", "LinkSettings", "TrafficLog", "open_link"]
+__all__ = ["SLICE_S", "Link", "LinkSettings", "TrafficLog", "open_link"]
 
-#: longest single blocking read; between two of them a stop gets through
-SLICE_S = 0.05
-WRITE_DEADLINE_S = 1.0
 #: real time within which bytes on a virtual line must arrive under a ManualClock
 ARRIVAL_LIMIT_S = 1.0
 #: reads after which a port that never falls still is used as it is
@@ -34,26 +37,39 @@ def open_link(
     *,
     clock: Clock,
     device: str = "device",
-    traffic: TrafficLog | None = None,
+    traffic: Traffic | None = None,
+    find: Callable[[], str] | None = None,
 ) -> Link:
     """Open the port at `url`: a device name, or any URL that pyserial or a registered scheme knows.
 
     Args:
         device: what is at the other end, for messages ("pump", "probe").
+        find: says where the port is now, after it was gone (OSError: nowhere); None: where it was.
 
     Raises:
         DeviceGoneError: the port cannot be opened.
     """
-    link = Link(url, settings or LinkSettings(), clock=clock, device=device, traffic=traffic)
+    link = Link(url, settings or LinkSettings(), clock=clock, device=device, traffic=traffic, find=find)
     link.open()
     return link
 
 
 class Link:
-    """A line to one device. One owner, one thread; see `open_link`."""
+    """A line to one device. One owner, one thread; see `open_link`.
+
+    `greet` is called when the port was lost and is open again, before anything else is sent: it makes sure that the same
+    device answers, and raises where not. `openings` counts how often the port was opened.
+    """
 
     def __init__(
-        self, url: str, settings: LinkSettings, *, clock: Clock, device: str, traffic: TrafficLog | None = None
+        self,
+        url: str,
+        settings: LinkSettings,
+        *,
+        clock: Clock,
+        device: str,
+        traffic: Traffic | None = None,
+        find: Callable[[], str] | None = None,
     ) -> None:
         self.url, self.settings, self.where = url, settings, f"{device} on {url}"
         self.traffic = traffic
@@ -61,8 +77,11 @@ class Link:
         self._manual = clock if isinstance(clock, ManualClock) else None
         self._line: Line | None = None
         self._port: Transport | None = None
-        self._reader = FrameReader()
+        self._reader = FrameReader(settings.reply_end)
         self._frames: deque[bytes | None] = deque()
+        self._find, self._lost = find, False
+        self.greet: Callable[[], None] | None = None
+        self.openings = 0
 
     def open(self) -> None:
         """Open the port (again); whatever it held before is forgotten.
@@ -79,14 +98,13 @@ class Link:
                 raise self._gone("cannot be opened (another program has opened it)", "Close it there")
             self._manual.settle()
         try:
-            self._port = _open_port(self.url, self.settings)
+            self._port = open_port(self.url, self.settings)
         except Exception as failure:
-            if not _is_port_failure(failure):
+            if not is_port_failure(failure):
                 raise
-            raise self._gone(
-                f"cannot be opened ({_told(failure)})",
-                "Check that it is connected and switched on, that no other program uses it, and its name in the bench",
-            ) from failure
+            raise self._gone(*why_not_opened(self.url, failure)) from failure
+        self.openings += 1
+        self._lost = False
         if self._manual is not None and self._line is not None:
             self._line.clear()
             self._line.attached = True
@@ -109,19 +127,24 @@ class Link:
         try:
             port.close()
         except Exception as failure:
-            if not _is_port_failure(failure):
+            if not is_port_failure(failure):
                 raise
         finally:
             if below is not None:
                 below.close()
 
-    def send(self, data: bytes) -> None:
+    def send(self, data: bytes, *, moves: bool = False) -> None:
         """Send a request; what came unasked before it is thrown away.
 
+        Args:
+            moves: the request may move something, so a port that was lost is not opened again for it.
+
         Raises:
-            DeviceGoneError: the port failed.
+            DeviceGoneError: the port failed, or was lost and is not there again.
             DeviceSilentError: the port takes no bytes.
         """
+        if self._lost and not moves:
+            self._open_again()
         port = self._opened()
         try:
             self._drain(port)
@@ -132,6 +155,37 @@ class Link:
             self._line.link_written += len(data) if written is None else written
         if self.traffic is not None:
             self.traffic.sent(self._clock.now_s(), data)
+
+    def pass_over(self) -> None:
+        """Forget the lines that have come; one that has begun is kept (for devices that talk unasked).
+
+        Raises:
+            DeviceGoneError: as `send`.
+        """
+        if self._lost:
+            self._open_again()
+        port = self._opened()
+        try:
+            self._take_waiting(port)
+        except Exception as failure:
+            self._fail(failure)
+        self._frames.clear()
+
+    def receive_bytes(self, count: int, deadline_s: float) -> bytes:
+        """Return `count` bytes, or those that came before `deadline_s`; for grammars without lines (reply_end empty).
+
+        Raises:
+            DeviceGoneError: the port failed.
+        """
+        while self._reader.waiting < count:
+            if self._manual is not None:
+                self._manual.settle()
+                if self._reader.waiting >= count or self._manual.now_s() >= deadline_s:
+                    break
+                self._manual.step(deadline_s)
+            elif not self._take_some() and time.monotonic() >= deadline_s:
+                break
+        return self._reader.take(count)
 
     def receive(self, deadline_s: float, stop: threading.Event | None = None) -> bytes:
         """Return the next line that comes in before `deadline_s`, an instant of line_s().
@@ -200,15 +254,38 @@ class Link:
         """The link does nothing of itself (ManualClock's party)."""
         return float("inf")
 
+    def _open_again(self) -> None:
+        if self._find is not None:
+            try:
+                self.url = self._find()
+            except OSError as failure:
+                raise self._gone(f"is not there ({told_of(failure)})", "Connect it again") from failure
+        self.open()
+        if self.greet is not None:
+            try:
+                self.greet()
+            except DeviceError:
+                self._lose()
+                raise
+
+    def _lose(self) -> None:
+        self.close()
+        self._lost = True
+
     def _drain(self, port: Transport) -> None:
+        self._take_waiting(port)
+        self._forget()
+
+    def _take_waiting(self, port: Transport) -> None:
         if self._line is not None:
             self.act()
-        else:
-            for _ in range(MOST_STALE_READS):
-                waiting = port.in_waiting
-                if not waiting or not port.read(waiting):
-                    break
-        self._forget()
+            return
+        for _ in range(MOST_STALE_READS):
+            waiting = port.in_waiting
+            data = port.read(waiting) if waiting else b""
+            if not data:
+                break
+            self._took(data)
 
     def _take_some(self) -> bool:
         port = self._opened()
@@ -234,7 +311,9 @@ class Link:
 
     def _opened(self) -> Transport:
         if self._port is None:
-            raise self._gone("the port is not open", "Open it again")
+            raise self._gone(
+                "the port was lost" if self._lost else "the port is not open", "Check the cable, then go on"
+            )
         return self._port
 
     def _nothing(self) -> DeviceError:
@@ -245,14 +324,15 @@ class Link:
         )
 
     def _fail(self, failure: Exception) -> NoReturn:
-        if not _is_port_failure(failure):
+        if not is_port_failure(failure):
             raise failure
         if type(failure).__name__ == "SerialTimeoutException":
             raise DeviceSilentError(
                 f"takes no bytes within {WRITE_DEADLINE_S:g} s", where=self.where, remedy=_SILENT_REMEDY
             ) from failure
+        self._lose()
         raise self._gone(
-            f"the port failed ({_told(failure)})", "Check the cable and the supply, then go on"
+            f"the port failed ({told_of(failure)})", "Check the cable and the supply, then go on"
         ) from failure
 
     def _gone(self, what: str, remedy: str) -> DeviceGoneError:
@@ -261,40 +341,3 @@ class Link:
 
 _SILENT_REMEDY = "Check that it is switched on, its cable, and the baud rate in the bench"
 _GARBLED_REMEDY = "Check the baud rate, the cable's screen and that no other program uses the port"
-
-
-def _is_port_failure(failure: Exception) -> bool:
-    """Whether it is one of the ways in which a port fails: after an unplug all of them were seen.
-
-    `termios.error` is no OSError and termios does not exist everywhere, so it is known by its module. A ValueError is
-    what pyserial says to a URL or setting that it does not know.
-    """
-    return isinstance(failure, OSError | ValueError) or type(failure).__module__ == "termios"
-
-
-def _told(failure: Exception) -> str:
-    return " ".join(str(failure).split()) or type(failure).__name__
-
-
-def _open_port(url: str, settings: LinkSettings) -> Transport:
-    opener = opener_of(url)
-    if opener is not None:
-        return opener(url, settings)
-    import serial
-
-    parities = {"none": serial.PARITY_NONE, "even": serial.PARITY_EVEN, "odd": serial.PARITY_ODD}
-    port: Any = serial.serial_for_url(
-        url,
-        do_not_open=True,
-        exclusive=True,
-        baudrate=settings.baud_rate,
-        bytesize=settings.data_bits,
-        parity=parities[settings.parity],
-        stopbits=settings.stop_bits,
-        timeout=SLICE_S,
-        write_timeout=WRITE_DEADLINE_S,
-    )
-    port.dtr, port.rts = settings.dtr, settings.rts
-    port.open()
-    transport: Transport = port
-    return transport

@@ -39,6 +39,7 @@ class LinkSettings:
     data_bits: Literal[5, 6, 7, 8] = 8
     parity: Literal["none", "even", "odd"] = "none"
     stop_bits: Literal[1, 2] = 1
+    reply_end: bytes = b"\n"  # last byte of a reply; empty: a grammar without lines
     dtr: bool = False
     rts: bool = False
     reply_deadline_s: float = 0.5
@@ -56,6 +57,18 @@ def opener_of(url: str) -> Opener | None:
 def register_scheme(scheme: str, opener: Opener) -> None:
     """Make URLs `scheme://...` openable by something other than pyserial."""
     _OPENERS[scheme] = opener
+
+
+class Traffic(Protocol):
+    """What is told of everything that goes over a line."""
+
+    def sent(self, at_s: float, data: bytes) -> None:
+        """Note what went out."""
+        ...
+
+    def received(self, at_s: float, data: bytes) -> None:
+        """Note what came in."""
+        ...
 
 
 class TrafficLog:

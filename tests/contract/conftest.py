@@ -93,7 +93,7 @@ class PlainSensor:
     """A potential that tells time and index."""
 
     def read(self, at_s: float, sample_index: int) -> PlainReading:
-        return PlainReading(100.0 + 0.5 * at_s + 0.1 * (sample_index % 7), 25.0, "ok")
+        return PlainReading(100.0 + 0.5 * (at_s % 1000.0) + 0.1 * (sample_index % 7), 25.0, "ok")
 
 
 @dataclass
