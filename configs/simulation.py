@@ -10,6 +10,8 @@ from typing import Literal
 
 from pydantic import Field
 
+from configs.calibrating import BufferTruthSettings
+from configs.faultfile import FaultsSettings
 from configs.fields import Disagreement, Settings, SubstanceName, group, number, words
 
 
@@ -118,7 +120,14 @@ class SimulationSettings(Settings):
         default_factory=dict, description="bottles of titrant by the name of their substance"
     )
     samples: dict[str, SampleBottleSettings] = Field(default_factory=dict, description="samples by name")
+    buffers: dict[str, BufferTruthSettings] = Field(
+        default_factory=dict, description="bottles of buffer, by lot, that differ from what is stated"
+    )
+    buffer_temperature_c: float | None = number(
+        0, 60, "temperature of the buffers; left out: that of the beaker", default=None
+    )
     sample: str | None = words("sample in the beaker where the method names none", default=None)
+    faults: FaultsSettings | None = Field(default=None, description="what goes wrong in every run")
 
     def disagreements(self) -> list[Disagreement]:
         """Return a sample that the bench does not hold."""

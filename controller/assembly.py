@@ -18,6 +18,7 @@ from typing import Literal, TextIO
 
 from configs.benchfile import SIMULATED_PORT, BenchSettings, PortSettings
 from configs.errors import HalfdropError
+from configs.faultfile import FaultsSettings
 from configs.method import MethodSettings
 from configs.simulation import ContainedSettings, SampleBottleSettings, SimulationSettings
 from controller.execution import Devices
@@ -35,6 +36,7 @@ from simulators.bench import VirtualBench, virtual_bench
 from simulators.chemist import VirtualChemist
 from simulators.contents import sample_bottle, sample_in_vessel, titrant_in_syringe
 from simulators.devices import ProbeDevice, PumpDevice
+from simulators.faults import FaultScript
 from simulators.port import VirtualPorts
 
 Route = Literal["memory", "pty", "tcp"]
@@ -58,6 +60,7 @@ class OpenBench:
     world: VirtualBench | None = None
     seed: int | None = None
     pump_device: PumpDevice | None = None
+    faults: FaultScript | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -73,6 +76,7 @@ class Opening:
         place: the lab folder; simulated devices of different labs are different devices.
         talk: where questions and messages of an operator without a terminal go.
         start_utc_s: POSIX time at which manual time begins; None: now.
+        faults: simulated bench only: what goes wrong; None: what its file says.
     """
 
     seed: int | None = None
@@ -83,6 +87,7 @@ class Opening:
     place: Path | None = None
     talk: TextIO | None = None
     start_utc_s: float | None = None
+    faults: FaultsSettings | None = None
 
 
 def is_simulated(bench: BenchSettings) -> bool:
@@ -136,7 +141,9 @@ class _Opener:
         clock = clock_of(opening.time_scale, start_utc_s=opening.start_utc_s)
         seed = simulation.seed if opening.seed is None else opening.seed
         world = simulated_world(self.bench, simulation, method, sample, seed=seed, start_s=clock.now_s())
-        pump_device, probe_device = simulated_devices(self.bench, world, place=opening.place)
+        settings = opening.faults or simulation.faults
+        faults = None if settings is None else FaultScript(settings, world, clock)
+        pump_device, probe_device = simulated_devices(self.bench, world, place=opening.place, faults=faults)
         ports = self.held.enter_context(VirtualPorts(clock))
         route = opening.route or simulation.link
         name = f"{os.getpid()}-{id(ports):x}"  # ports in memory share one process
@@ -144,14 +151,18 @@ class _Opener:
             ports.add(f"{role}-{name}", device, route).url
             for role, device in (("pump", pump_device), ("probe", probe_device))
         )
+        if faults is not None:
+            for role in ("pump", "probe"):
+                faults.attach(ports, role, f"{role}-{name}")
         chemist = VirtualChemist(world, clock.now_s, questions=method.questions, answers=opening.answers)
         opened = self._connected((urls[0], urls[1]), clock, chemist)
-        return replace(opened, world=world, seed=seed, pump_device=pump_device)
+        return replace(opened, world=world, seed=seed, pump_device=pump_device, faults=faults)
 
     def real(self) -> OpenBench:
         opening, bench = self.opening, self.bench
-        if opening.seed is not None:
-            raise self._not_simulated("--seed")
+        for option, given in (("--seed", opening.seed), ("--faults", opening.faults)):
+            if given is not None:
+                raise self._not_simulated(option)
         operator: Operator
         if opening.answers is not None:
             operator = AnswersOperator(opening.answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
@@ -317,18 +328,19 @@ def _expected_bottle(method: MethodSettings) -> SampleBottleSettings:
 
 
 def simulated_devices(
-    bench: BenchSettings, world: VirtualBench, *, place: Path | None
+    bench: BenchSettings, world: VirtualBench, *, place: Path | None, faults: FaultScript | None = None
 ) -> tuple[PumpDevice, ProbeDevice]:
-    """Return the virtual pump and probe in front of a world."""
+    """Return the virtual pump and probe in front of a world, or of what faults make of it."""
     serial = hashlib.sha256(str(place or Path.cwd()).encode()).hexdigest()[:8]
     pump = PumpDevice(
-        world.mechanism,
+        world.mechanism if faults is None else faults.syringe,
         Identity(maker=_MAKER, model="syringe pump", serial=f"B-{serial}", firmware="1"),
         refill=bench.pump.refill,
         usual_rate_ml_min=bench.pump.rate_ml_min,
         highest_rate_ml_min=bench.pump.highest_rate_ml_min,
     )
     probe = ProbeDevice(
-        world.sensor, Identity(maker=_MAKER, model="glass electrode", serial=f"P-{serial}", firmware="1")
+        world.sensor if faults is None else faults.sensor,
+        Identity(maker=_MAKER, model="glass electrode", serial=f"P-{serial}", firmware="1"),
     )
     return pump, probe

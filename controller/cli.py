@@ -139,6 +139,7 @@ def _run(made: Parser) -> None:
     made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
     _json(made)
 
+    made.add_argument("--faults", metavar="FILE", help="simulated bench only: what goes wrong, and when (YAML)")
 
 def _watch(made: Parser) -> None:
     made.set_defaults(function="controller.commands.watch:watch")

@@ -167,6 +167,13 @@ class ManualClock:
         """Set UTC forward (or back) against run time, as a suspended computer or a corrected clock does."""
         self._utc_ahead_s += seconds
 
+    def sleep_through(self, seconds: float) -> None:
+        """The computer is suspended: the world goes on for `seconds`, and UTC has moved on against run time after."""
+        limit_s = self._now_s + seconds
+        while self.step(limit_s):
+            pass
+        self.shift_utc(seconds)
+
     def line(self, address: str) -> Line | None:
         """Return the counts of the virtual line at `address`, or None if no virtual port is there."""
         return self._lines.get(address)

@@ -62,6 +62,7 @@ class Beaker:
     ) -> None:
         self.truth = truth
         self.stirred = stirred
+        self._film_factor = 1.0
         self._cascade = LagCascade(self._constants(stirred), at_s=start_s)
         self._drops = Drops(truth.drop_smallest_ml, truth.drop_largest_ml, seed) if truth.tip == "free" else None
         self._leaking_since_s = start_s
@@ -102,6 +103,11 @@ class Beaker:
             self.stirred = on
             self._cascade = self._cascade.changed(at_s, self._constants(on))
 
+    def slow_film(self, factor: float, at_s: float) -> None:
+        """The film at the glass is `factor` times as slow as a sound one's from now on (dried out, coated)."""
+        self._film_factor = factor
+        self._cascade = self._cascade.changed(at_s, self._constants(self.stirred))
+
     # --- what is in it ---
 
     def delivered_ml(self, at_s: float) -> float:
@@ -127,6 +133,8 @@ class Beaker:
 
     def _constants(self, stirred: bool) -> LagConstants:
         lag, truth = self.truth.lag, self.truth
+        if self._film_factor != 1.0:
+            lag = replace(lag, film_s=lag.film_s * self._film_factor)
         if stirred:
             return lag
         return replace(lag, bulk_s=truth.unstirred_bulk_s, film_s=lag.film_s * truth.unstirred_film_factor)

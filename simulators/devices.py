@@ -62,6 +62,13 @@ class PumpDevice(Instrument):
         self._tip_steps_before = self.mechanism.tip_steps_total(at_s)
         self._dose_number, self._dose_steps, self._dose_state = 0, 0, "none"
 
+    def jam(self, at_s: float, what: str) -> None:
+        """The drive finds that its plunger does not move: it halts and says so."""
+        self.happen(at_s)
+        self._halt(at_s)
+        self._fault = what
+        self._note(ScpiError(tree.MOTION_HALTED, what))
+
     def next_event_s(self) -> float:
         """The end of a motion, or the watchdog's time, whichever is first."""
         return min(self._ends_s, self._watchdog_due_s()) if self._in_motion else math.inf

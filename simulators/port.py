@@ -111,6 +111,18 @@ class VirtualPorts:
             self._start()
         return port
 
+    def plug_in(self, name: str, *, other_name: str | None = None) -> VirtualPort:
+        """Bring the device of an unplugged port back, under the same name or another."""
+        with self._lock:
+            gone = self.ports.pop(name)
+        if self._manual is not None:
+            self._manual.leave(gone)
+            self._manual.drop_line(gone.url)
+        route: RouteName = "tcp" if isinstance(gone.route, TcpRoute) else "memory"
+        if isinstance(gone.route, PtyRoute):
+            route = "pty"
+        return self.add(other_name or name, gone.device, route, latency_s=gone.latency_s)
+
     def close(self) -> None:
         """End all lines and the serving thread."""
         self._closing.set()
