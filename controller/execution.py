@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 from controller.guard import Guard
 from controller.journal import Journal
+from controller.patience import last_dose_for_sure
 from controller.stopping import Commands, StopSwitch, halted, wait_out
 from controller.titration.actions import (
     Action,
@@ -37,7 +38,7 @@ from controller.titration.actions import (
 )
 from controller.titration.plan import RunPlan
 from drivers.clock import Clock
-from drivers.errors import DeviceError, StoppedError
+from drivers.errors import DeviceError, DoseUnknownError, StoppedError
 from drivers.operator import Operator
 from drivers.probe import Probe
 from drivers.pump import LastDose, Pump
@@ -223,13 +224,14 @@ class Execution:
         except StoppedError as error:
             self._note_stop(error)
             if error.delivered is None:
-                return self._settle_by_asking(action, "stopped")
+                return self._settle_by_asking(action, "stopped", (0.0, action.volume_ml))
             done = error.delivered
         except DeviceError as error:
             self._down.add("pump")
-            if error.lowest_ml is None or error.highest_ml is None:
-                return self._settle_by_asking(action, str(error))
-            return self._in_bounds(action, str(error), error.lowest_ml, error.highest_ml)
+            bounds = (error.lowest_ml or 0.0, action.volume_ml if error.highest_ml is None else error.highest_ml)
+            if bounds[0] == bounds[1] or isinstance(error, DoseUnknownError):
+                return self._in_bounds(action, str(error), *bounds)
+            return self._settle_by_asking(action, str(error), bounds)
         return self._dosed(action, done.volume_ml, done.steps, done.started_at_s, done.at_s)
 
     def _dosed(
@@ -266,15 +268,13 @@ class Execution:
             steps=steps,
         )
 
-    def _settle_by_asking(self, action: Dose, what: str) -> Observation:
-        """Settle a dose in doubt by what the pump says of its last one."""
+    def _settle_by_asking(self, action: Dose, what: str, bounds_ml: tuple[float, float]) -> Observation:
+        """Settle a dose in doubt by what the pump says of its last one, as soon as it says anything."""
+        self._journal.event("dose-in-doubt", number=action.number, what=what, by="runner")
         try:
-            last = self._devices.pump.last_dose()
-            while last.state == "moving" and not self._stop.event.is_set():
-                self._clock.wait(max(0.1, last.remaining_s), self._stop.event)
-                last = self._devices.pump.last_dose()
+            last = last_dose_for_sure(self._devices.pump, self._clock, self._stop)
         except (DeviceError, StoppedError):
-            return self._in_bounds(action, what, 0.0, action.volume_ml)
+            return self._in_bounds(action, what, *bounds_ml)
         if self._stop.event.is_set() and (last.number < action.number or (last.steps, last.state) == (0, "stopped")):
             self._guard.settle(action, 0.0)  # stopped before it began
             return self.stopped()

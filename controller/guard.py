@@ -16,6 +16,8 @@ from controller.titration.plan import RunPlan
 
 #: rounding in sums of volumes, mL; a thousandth of any pump's step
 ROUNDING_ML = 1e-7
+#: temperatures in a row outside the window that end a run
+READINGS_OUTSIDE = 3
 #: question that must be answered with "yes" before anything is primed
 TIP_OVER_WASTE = "tip-over-waste"
 
@@ -120,6 +122,7 @@ class Guard:
     breach: str | None = None
     _answers: dict[str, str] = field(default_factory=dict)
 
+    _outside: int = 0
     def __post_init__(self) -> None:
         pump = self.plan.pump
         self.account = Account(
@@ -188,9 +191,15 @@ class Guard:
         self.breach = self.breach or self._late(at_s)
 
     def saw_temperature(self, temperature_c: float | None) -> None:
-        """Judge a temperature; outside the bench's window the run ends."""
+        """Judge a temperature; readings in a row outside the bench's window end the run (one may be garbled)."""
         vessel = self.plan.vessel
-        if temperature_c is None or vessel.lowest_temperature_c <= temperature_c <= vessel.highest_temperature_c:
+        if temperature_c is None:
+            return
+        if vessel.lowest_temperature_c <= temperature_c <= vessel.highest_temperature_c:
+            self._outside = 0
+            return
+        self._outside += 1
+        if self._outside < READINGS_OUTSIDE:
             return
         self.breach = self.breach or (
             f"temperature {temperature_c:g} °C is outside {vessel.lowest_temperature_c:g} to "

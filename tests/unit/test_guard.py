@@ -168,8 +168,18 @@ def test_temperatures_inside_the_window_are_fine(make_plan: MakePlan, temperatur
 @pytest.mark.parametrize("temperature_c", [9.9, 40.1, -300.0])
 def test_temperatures_outside_are_not(make_plan: MakePlan, temperature_c: float) -> None:
     guard = Guard(make_plan())
+    for _ in range(2):
+        guard.saw_temperature(temperature_c)
+    assert guard.breach is None  # a digit may be garbled
     guard.saw_temperature(temperature_c)
     assert guard.breach is not None
+
+
+def test_single_garbled_temperatures_never_add_up(make_plan: MakePlan) -> None:
+    guard = Guard(make_plan())
+    for temperature_c in (2.0, 25.0, 250.0, 25.0, 2.0, 2.0, 25.0) * 5:
+        guard.saw_temperature(temperature_c)
+    assert guard.breach is None
 
 
 def test_a_refill_without_valve_or_reservoir_is_refused(make_plan: MakePlan) -> None:

@@ -278,7 +278,11 @@ def test_a_dose_in_doubt_is_settled_by_what_the_pump_says(
 
 def test_bounds_that_the_driver_found_are_taken_over(fake_bench: Any, plan: RunPlan) -> None:
     def trouble(*_: object) -> int:
+        fake_bench.pump.last_dose = gone
         raise DeviceSilentError("gone", where="pump", remedy="Look", lowest_ml=0.02, highest_ml=0.08)
+
+    def gone() -> None:
+        raise DeviceSilentError("gone", where="pump", remedy="Look")
 
     fake_bench.pump.trouble = trouble
     script = Script(GOGGLES, dose(1), DONE)
@@ -348,9 +352,9 @@ def test_a_core_that_is_always_refused_is_cut_off(fake_bench: Any, plan: RunPlan
 
 def test_a_temperature_outside_the_window_stops_the_run(fake_bench: Any, plan: RunPlan) -> None:
     fake_bench.probe.temperature_c = 41.0
-    script = Script(GOGGLES, Read(), dose(1), DONE)
+    script = Script(GOGGLES, Read(), Read(), Read(), dose(1), DONE)
     ended = go(fake_bench, plan, script)
-    assert script.kinds() == ["answered", "reading", "command"]
+    assert script.kinds() == ["answered", "reading", "reading", "reading", "command"]
     assert ended.exit_status == 3
     assert ended.reason is not None
     assert "temperature 41 °C is outside 10 to 40 °C" in ended.reason
