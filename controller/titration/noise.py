@@ -10,6 +10,7 @@ from statistics import fmean, median
 
 READINGS = 20
 OUTLIER_RATIO = 2.5
+QUIET_RESOLUTIONS = 0.6
 _CORRELATED = 0.4
 
 
@@ -51,6 +52,8 @@ def measure_noise(potentials_mv: Sequence[float], resolution_mv: float) -> Noise
     slope = sum((i - middle) * e for i, e in enumerate(potentials_mv)) / sum((i - middle) ** 2 for i in range(n))
     rest = [e - mean - slope * (i - middle) for i, e in enumerate(potentials_mv)]
     power = sum(r * r for r in rest)
+    if power < n * (QUIET_RESOLUTIONS * resolution_mv) ** 2:  # rounding steps of a quiet probe are no correlation
+        power = 0.0
     correlation = sum(a * b for a, b in itertools.pairwise(rest)) / power if power > 0.0 else 0.0
     if correlation > _CORRELATED:
         sd = max(sd, 1.4826 * median(abs(r) for r in rest))

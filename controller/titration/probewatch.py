@@ -11,7 +11,7 @@ from controller.titration.noise import Noise
 
 MOST_BAD_READINGS = 60
 MOST_UNSETTLED_POINTS = 10
-#: readings without any change, points with them, of a probe whose noise moves every reading; of a quiet one
+#: readings and whole points without any change: of a probe whose noise moves every reading; of a quiet one
 STUCK_LIVELY = (25, 1)
 STUCK_QUIET = (60, 5)
 _LAST = 10
@@ -29,7 +29,8 @@ class ProbeWatch:
         self.noise = Noise(sd_mv=resolution_mv, mean_mv=0.0, correlation=0.0)
         self._bad = 0
         self._same = 0
-        self._same_points = 0
+        self._since_point = 0
+        self._same_points = 0  # whole points without any change
         self._unsettled = 0
         self._last_mv: list[float] = []
 
@@ -45,6 +46,7 @@ class ProbeWatch:
                 raise EndOfRunError("failed", f"the probe gave {self._bad} bad readings in a row: {reading.status}")
             return False
         self._bad = 0
+        self._since_point += 1
         unchanged = bool(self._last_mv) and reading.potential_mv == self._last_mv[-1]
         self._same = self._same + 1 if unchanged else 0
         self._last_mv = [*self._last_mv[1 - _LAST :], reading.potential_mv]
@@ -72,7 +74,8 @@ class ProbeWatch:
         self._unsettled = 0 if settled else self._unsettled + 1
         if self._unsettled >= MOST_UNSETTLED_POINTS:
             raise EndOfRunError("failed", f"{self._unsettled} points in a row did not settle")
-        self._same_points = self._same_points + 1 if self._same >= 3 else 0
+        self._same_points = self._same_points + 1 if self._same >= self._since_point else 0
+        self._since_point = 0
         lively = self.noise.sd_mv > 0.5 * self._resolution_mv
         most_readings, most_points = STUCK_LIVELY if lively else STUCK_QUIET
         if self._same >= most_readings and self._same_points >= most_points:

@@ -6,6 +6,7 @@ from dataclasses import replace
 
 import pytest
 
+from controller.study_plan import WITHOUT_RECORD
 from controller.titration.actions import (
     Back,
     Command,
@@ -343,3 +344,25 @@ def test_a_flat_curve_ends_by_its_limit(core_case) -> None:
     result = case.run().result
     assert result["outcome"] == "stopped"
     assert result["end_points"] == []
+
+
+def test_a_quiet_coarse_meter_is_not_taken_for_stuck(core_case) -> None:
+    # 1 mV resolution, no noise, and the hold of 60 s before the end point: long without change, yet alive
+    case = core_case(strategy=WITHOUT_RECORD, seed=2, electrode={"noise_sd_mv": 0.0, "resolution_mv": 1.0})
+    case.plan = replace(case.plan, probe=replace(case.plan.probe, resolution_mv=1.0))
+    result = case.run().result
+    assert result["outcome"] == "completed"
+    assert result["end_points"][0]["volume_ml"] == pytest.approx(case.true_ml[-1], abs=0.006)
+
+
+def test_a_quiet_meter_that_sticks_ends_the_run_too(core_case) -> None:
+    case = core_case(electrode={"noise_sd_mv": 0.0, "resolution_mv": 1.0})
+    case.plan = replace(case.plan, probe=replace(case.plan.probe, resolution_mv=1.0))
+
+    def answer(action):
+        seen = case.world.answer(action)
+        return replace(seen, potential_mv=150.0) if action.kind == "read" and seen.at_s > 60.0 else seen
+
+    result = case.run(answer).result
+    assert result["outcome"] == "failed"
+    assert "sticks" in result["reason"]
