@@ -6,7 +6,8 @@ from typing import Literal
 
 from pydantic import Field
 
-from configs.fields import Disagreement, Settings, number, words
+from configs.calibrating import BalanceSettings, BufferLotSettings, CalibrationRules
+from configs.fields import Disagreement, Settings, group, number, words
 from configs.simulation import SimulationSettings
 
 SIMULATED_PORT = "simulated"
@@ -63,6 +64,9 @@ class PumpSettings(PortSettings):
     position_correlation_ml: float = number(0.0001, 100, "volume over which the position error varies", default=0.05)
     dose_sd_ml: float = number(0, 1, "standard deviation of the error of each dose", default=0.00045)
     gain_standard_uncertainty: float = number(0, 0.1, "relative standard uncertainty of all volumes", default=0.001)
+    titrant_temperature_standard_uncertainty_c: float = number(
+        0, 20, "standard uncertainty of the titrant's temperature", default=0.5
+    )
 
     def disagreements(self) -> list[Disagreement]:
         """Return a rate above the highest and a step larger than the syringe."""
@@ -122,16 +126,27 @@ class BenchSettings(Settings):
     vessel: VesselSettings = Field(description="limits that no method can pass")
     pump: PumpSettings = Field(description="the syringe pump")
     probe: ProbeSettings = Field(description="the probe")
+    balance: BalanceSettings = group(BalanceSettings, "the balance")
+    buffers: tuple[BufferLotSettings, ...] = Field(
+        default=(), max_length=20, description="bottles of buffer that this bench keeps"
+    )
+    calibration_rules: CalibrationRules = group(CalibrationRules, "limits and dates of calibrations")
     simulation: SimulationSettings | None = Field(
         default=None, description="the simulated world behind simulated ports"
     )
 
     def disagreements(self) -> list[Disagreement]:
-        """Return a simulated port without a simulation."""
+        """Return a simulated port without a simulation, and two bottles of one lot."""
+        lots = [bottle.lot_id for bottle in self.buffers]
+        found = [
+            Disagreement(f"buffers.{place}.lot_id", lot, "a lot of its own for each bottle")
+            for place, lot in enumerate(lots)
+            if lot in lots[:place]
+        ]
         if self.simulation is None:
-            return [
+            found += [
                 Disagreement(f"{name}.port", SIMULATED_PORT, "a real port, or a group simulation in this file")
                 for name, device in (("pump", self.pump), ("probe", self.probe))
                 if device.port == SIMULATED_PORT
             ]
-        return []
+        return found

@@ -17,6 +17,7 @@ PLAIN_NAME = r"^[a-z0-9]([a-z0-9-]{0,62}[a-z0-9])?$"
 UNITS = {
     "_mol_l_s": "mol/(L s)", "_mol_l": "mol/L", "_g_mol": "g/mol", "_g_ml": "g/mL", "_mv_min": "mV/min",
     "_ml_min": "mL/min", "_ml": "mL", "_mv": "mV", "_c": "°C", "_s": "s", "_g": "g", "_percent": "%",
+    "_kg_m3": "kg/m³", "_ul": "µL",
 }  # fmt: skip
 
 

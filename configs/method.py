@@ -9,6 +9,7 @@ from typing import Literal
 
 from pydantic import Field
 
+from configs.calibrating import BackTitrationSettings, PreparationSettings, StandardSettings
 from configs.catalogue import substance, substances
 from configs.course import DosingSettings, EndPointSettings, LimitSettings, SettlingSettings
 from configs.fields import Disagreement, PlainName, Settings, SubstanceName, group, number, words
@@ -124,6 +125,15 @@ class MethodSettings(Settings):
     report_as: ReportSettings | None = Field(
         default=None, description="how the amount is reported; left out: volume only"
     )
+    preparation: PreparationSettings | None = Field(
+        default=None, description="moisture, density, dilutions of the sample"
+    )
+    back_titration: BackTitrationSettings | None = Field(default=None, description="reagent added in excess")
+    standard: StandardSettings | None = Field(default=None, description="the primary standard of a standardisation")
+    blank_lot_id: str | None = words("blank that is taken off; left out: none", default=None)
+    buoyancy: Literal["standards", "always", "never"] = Field(
+        default="standards", description="which weighings are corrected for air buoyancy"
+    )
     questions: tuple[QuestionSettings, ...] = Field(
         default=(), max_length=20, description="questions before the first dose"
     )
@@ -158,10 +168,13 @@ class MethodSettings(Settings):
             if self.sample.taken_by != "mass":
                 allowed = "mass, where the titrant is standardised against a standard weighed in"
                 found.append(Disagreement("sample.taken_by", self.sample.taken_by, allowed))
-        elif (report.unit in UNITS_BY_MASS) != (self.sample.taken_by == "mass"):
+        elif (report.unit in UNITS_BY_MASS) != (self.sample.taken_by == "mass") and not self._density_known():
             allowed = f"a unit per {self.sample.taken_by}, as the sample is taken by {self.sample.taken_by}"
             found.append(Disagreement("report_as.unit", report.unit, allowed))
         return found
+
+    def _density_known(self) -> bool:
+        return self.preparation is not None and self.preparation.density_g_ml is not None
 
     def _repeated_questions(self) -> list[Disagreement]:
         keys = [question.key for question in self.questions]

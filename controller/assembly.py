@@ -34,7 +34,7 @@ from drivers.scpi_probe import ScpiProbe
 from drivers.scpi_pump import ScpiPump
 from simulators.bench import VirtualBench, virtual_bench
 from simulators.chemist import VirtualChemist
-from simulators.contents import sample_bottle, sample_in_vessel, titrant_in_syringe
+from simulators.contents import sample_bottle, sample_in_vessel, titrant_in_syringe, true_mass_g
 from simulators.devices import ProbeDevice, PumpDevice
 from simulators.faults import FaultScript
 from simulators.port import VirtualPorts
@@ -298,7 +298,7 @@ def simulated_world(
         sample=sample_in_vessel(
             bottle,
             volume_ml=sample.volume_ml,
-            mass_g=sample.mass_g,
+            mass_g=None if sample.mass_g is None else true_mass_g(bottle, sample.mass_g),
             initial_volume_ml=sample.initial_volume_ml,
             temperature_c=simulation.temperature_c,
         ),

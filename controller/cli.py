@@ -133,13 +133,15 @@ def _run(made: Parser) -> None:
     _lab(made)
     _sample(made)
     _world(made)
+    made.add_argument("--replicates", type=int, metavar="N", help="titrate the sample N times; mean, scatter, Grubbs")
+    made.add_argument("--portions", metavar="LIST", help="mL or g of each replicate, as 10,10,10 or 0.151,0.148,0.153")
     made.add_argument("--operator", metavar="NAME", help="who runs it (kept in the record)")
     made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
     made.add_argument("--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)")
     made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
+    made.add_argument("--faults", metavar="FILE", help="simulated bench only: what goes wrong, and when (YAML)")
     _json(made)
 
-    made.add_argument("--faults", metavar="FILE", help="simulated bench only: what goes wrong, and when (YAML)")
 
 def _watch(made: Parser) -> None:
     made.set_defaults(function="controller.commands.watch:watch")
@@ -173,6 +175,10 @@ def _evaluate(made: Parser) -> None:
     made.add_argument("--activity", choices=("davies", "none"), default="none", help="activity correction of the model")
     _lab(made)
     made.add_argument("--end-points", type=int, metavar="N", help="how many equivalence points are expected")
+    made.add_argument("--identify", action="store_true", help="rank what an unknown acid or base may be (never proof)")
+    made.add_argument("--sample-mass-g", type=float, metavar="G", help="--identify: mass taken (a record has its own)")
+    made.add_argument("--add", action="store_true", help="keep the evaluation of a record beside it, the old one stays")
+    made.add_argument("--reason", metavar="TEXT", help="--add: why it is evaluated again")
     _json(made)
 
 
@@ -205,8 +211,11 @@ def _resume(made: Parser) -> None:
 
 def _replay(made: Parser) -> None:
     made.set_defaults(function="controller.commands.replay:replay")
-    made.add_argument("run", metavar="RUN", help="a record's name or file")
+    made.add_argument("run", metavar="RUN", help="a record's name or file, or a table of volume and pH")
+    made.add_argument("--with", dest="with_method", metavar="METHOD", help="what this method would have done instead")
     made.add_argument("--time-scale", metavar="X", help="watch it again, X times as fast as it was")
+    made.add_argument("--runs", type=int, default=39, metavar="N", help="--with: simulated runs of each method")
+    made.add_argument("--picture", metavar="FILE", help="--with: both methods compared, as SVG")
     _lab(made)
     _world(made)
     _json(made)
@@ -238,7 +247,7 @@ def _runs(group: Parser) -> None:
     made = _action(actions, "report", "controller.commands.report:report", "one record as a page to read and print")
     made.add_argument("run", metavar="RUN")
     made.add_argument("--replicate", metavar="RUN", nargs="+", help="further runs of the same sample: mean and spread")
-    made.add_argument("--to", metavar="FILE", help="the page ('-': standard output; default: reports/ of the lab folder)")
+    made.add_argument("--to", metavar="FILE", help="the page ('-': standard output; default: in the lab's reports/)")
     _lab(made)
     _json(made)
     made = _action(actions, "close", "controller.commands.runs:close", "end a record that was left open")
@@ -270,7 +279,7 @@ COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
     "evaluate": ("end points of a record or CSV file", _evaluate),
     "predict": ("the expected curve before anything moves", _predict),
     "resume": ("go on with a run that broke off", _resume),
-    "replay": ("decide a record again, or watch it again", _replay),
+    "replay": ("decide a record again, or see what another method would do", _replay),
     "schema": ("JSON Schema of a settings file", _schema),
     "runs": ("list, show, verify and export records", _runs),
     "bench": ("show or serve a bench", _bench),

@@ -84,12 +84,14 @@ def start_warnings(plan: RunPlan) -> list[str]:
     reservoir_ml = pump.reservoir_ml if pump.refill == "valve" else 0.0
     worst_ml = plan.sample.initial_volume_ml + pump.syringe_ml + reservoir_ml
     holds_ml = vessel.capacity_ml - vessel.displaced_ml + vessel.tray_ml
+    doubts = list(plan.traceability.warnings) if isinstance(plan, RunPlan) and plan.traceability is not None else []
     if worst_ml <= holds_ml:
-        return []
+        return doubts
     return [
+        *doubts,
         f"a pump that runs away could deliver the syringe ({pump.syringe_ml:g} mL) and the reservoir "
         f"({reservoir_ml:g} mL) onto {plan.sample.initial_volume_ml:g} mL of sample; vessel and tray hold "
-        f"{holds_ml:g} mL. Put in a larger tray or less titrant, or stay with the run"
+        f"{holds_ml:g} mL. Put in a larger tray or less titrant, or stay with the run",
     ]
 
 
@@ -120,9 +122,9 @@ class Guard:
     plan: RunPlan
     account: Account = field(init=False)
     breach: str | None = None
+    _outside: int = 0
     _answers: dict[str, str] = field(default_factory=dict)
 
-    _outside: int = 0
     def __post_init__(self) -> None:
         pump = self.plan.pump
         self.account = Account(

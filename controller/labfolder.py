@@ -55,6 +55,11 @@ class Lab:
         return self.path / "methods"
 
     @property
+    def calibrations(self) -> Path:
+        """The folder of the calibrations' records."""
+        return self.path / "calibrations"
+
+    @property
     def bench(self) -> Path:
         """The bench file."""
         return self.path / "bench.yaml"

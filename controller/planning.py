@@ -7,13 +7,15 @@ and lag record, the pump's account, the questions before the first dose, and how
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from configs.benchfile import BenchSettings, ProbeSettings
 from configs.catalogue import Substance, substance
 from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from configs.version import __version__
+from controller.inforce import InForce
+from controller.stated import stated
 from controller.titration.plan import (
     PLAN_SCHEMA_VERSION,
     Chemistry,
@@ -33,6 +35,7 @@ from controller.titration.plan import (
     Vessel,
     WeakAcid,
 )
+from controller.titration.traceability import Replicate
 from simulators.constants import debye_huckel_a_at, pka_at, pkw_at
 
 #: questions that every run asks before its first dose
@@ -97,14 +100,27 @@ def make_plan(
     pump: PumpAccount,
     probe_identity: str,
     seed: int | None = None,
+    in_force: InForce | None = None,
+    replicate: Replicate | None = None,
 ) -> RunPlan:
     """Return the plan of a run.
+
+    Args:
+        method: what is done.
+        bench: where.
+        choice: the sample.
+        pump: the pump's account.
+        probe_identity: as the probe told it.
+        seed: of a simulated bench.
+        in_force: calibrations, lots and blank found for this run; None: what method and bench state by themselves.
+        replicate: which of how many titrations of the sample it is.
 
     Raises:
         HalfdropError: sample, method and bench do not fit together.
     """
     sample = plan_sample(method, choice)
     titrant = substance(method.titrant.substance)
+    known = in_force or InForce(traceability=stated(method, bench))
     return RunPlan(
         schema_version=PLAN_SCHEMA_VERSION,
         program_version=__version__,
@@ -112,15 +128,9 @@ def make_plan(
         method_name=method.name,
         method_title=method.title,
         sample=sample,
-        titrant=Titrant(
-            name=titrant.name,
-            concentration_mol_l=method.titrant.concentration_mol_l * titrant.equivalents,
-            standard_uncertainty_mol_l=method.titrant.standard_uncertainty_mol_l * titrant.equivalents,
-            acid=titrant.strong == "acid",
-            lot_id=method.titrant.lot_id,
-        ),
+        titrant=_titrant(method, known),
         chemistry=_chemistry(method, sample),
-        probe=_probe(method, bench.probe, probe_identity),
+        probe=_probe(method, bench.probe, probe_identity, known.probe),
         pump=_pump(bench, pump),
         dosing=_dosing(method),
         settling=_settling(method, bench.probe),
@@ -134,6 +144,7 @@ def make_plan(
         questions=_questions(method, acid=titrant.strong == "acid"),
         report_as=_report_as(method),
         seed=seed,
+        traceability=replace(known.traceability, replicate=replicate),
     )
 
 
@@ -161,7 +172,9 @@ def plan_sample(method: MethodSettings, choice: SampleChoice) -> Sample:
     if amount is None:
         raise HalfdropError("no amount is given", where=where, remedy=f"Give {option}")
     initial_ml = settings.initial_volume_ml if choice.initial_volume_ml is None else choice.initial_volume_ml
-    if not (math.isfinite(initial_ml) and initial_ml > 0) or (by_volume and initial_ml < amount):
+    steps = method.preparation.dilutions if method.preparation is not None else ()
+    in_vessel_ml = steps[-1].aliquot_ml if steps else amount if by_volume else 0.0
+    if not (math.isfinite(initial_ml) and initial_ml > 0) or initial_ml < in_vessel_ml:
         raise HalfdropError(
             f"initial volume: got {initial_ml!r} mL, allowed: all liquid in the vessel, sample and water together",
             where=where,
@@ -176,6 +189,21 @@ def plan_sample(method: MethodSettings, choice: SampleChoice) -> Sample:
         mass_standard_uncertainty_g=settings.mass_standard_uncertainty_g,
         purity_fraction=settings.purity_fraction,
         purity_standard_uncertainty=settings.purity_standard_uncertainty,
+    )
+
+
+def _titrant(method: MethodSettings, known: InForce) -> Titrant:
+    settings, titrant = method.titrant, substance(method.titrant.substance)
+    concentration, u = known.titrant_mol_l, known.titrant_standard_uncertainty_mol_l
+    if concentration is None or u is None:  # no lot in force: as the method states it
+        concentration = settings.concentration_mol_l * titrant.equivalents
+        u = settings.standard_uncertainty_mol_l * titrant.equivalents
+    return Titrant(
+        name=titrant.name,
+        concentration_mol_l=concentration,
+        standard_uncertainty_mol_l=u,
+        acid=titrant.strong == "acid",
+        lot_id=settings.lot_id,
     )
 
 
@@ -201,16 +229,19 @@ def _chemistry(method: MethodSettings, sample: Sample) -> Chemistry:
         pkw=pkw_at(method.temperature_c),
         debye_huckel_a=debye_huckel_a_at(method.temperature_c) if method.activity == "davies" else None,
         analyte=analyte,
-        expected_equivalence_volume_ml=_expected_volume_ml(method, sample),
+        expected_equivalence_volume_ml=expected_volume_ml(method, sample),
     )
 
 
-def _expected_volume_ml(method: MethodSettings, sample: Sample) -> float | None:
+def expected_volume_ml(method: MethodSettings, sample: Sample) -> float | None:
+    """Return the titrant expected to the last end point, mL; None where nothing tells it."""
     settings = method.analyte
     if settings.expected_equivalence_volume_ml is not None or settings.substance is None:
         return settings.expected_equivalence_volume_ml
     found = substance(settings.substance)
     titrant = substance(method.titrant.substance)
+    if method.back_titration is not None:
+        return None  # what is left of the excess is not known beforehand
     per_ml = method.titrant.concentration_mol_l * titrant.equivalents
     if sample.mass_g is not None:
         amount_mmol = 1000.0 * sample.mass_g * sample.purity_fraction / found.molar_mass_g_mol
@@ -218,10 +249,14 @@ def _expected_volume_ml(method: MethodSettings, sample: Sample) -> float | None:
         amount_mmol = settings.expected_concentration_mol_l * sample.volume_ml
     else:
         return None
+    for step in method.preparation.dilutions if method.preparation is not None else ():
+        amount_mmol *= step.aliquot_ml / step.made_up_to_ml
     return amount_mmol * found.equivalents / per_ml
 
 
-def _probe(method: MethodSettings, settings: ProbeSettings, identity: str) -> Probe:
+def _probe(
+    method: MethodSettings, settings: ProbeSettings, identity: str, calibrated: ProbeCalibration | None
+) -> Probe:
     if settings.signal == "ph":
         raise HalfdropError(
             "probe.signal: got ph; this version works from the potential, allowed: potential",
@@ -229,14 +264,14 @@ def _probe(method: MethodSettings, settings: ProbeSettings, identity: str) -> Pr
             remedy="Set the meter to give mV, and probe.signal to potential",
         )
     calibration = settings.calibration
-    if method.signal == "ph" and calibration is None:
+    if method.signal == "ph" and calibration is None and calibrated is None:
         raise HalfdropError(
             "the method follows pH, and the probe has no calibration",
             where="bench: probe.calibration",
-            remedy="Calibrate with buffers and enter slope and offset, or use signal: potential",
+            remedy="Calibrate with 'halfdrop calibrate probe', or use signal: potential",
         )
-    planned = None
-    if calibration is not None and method.signal == "ph":
+    planned = calibrated
+    if planned is None and calibration is not None and method.signal == "ph":
         planned = ProbeCalibration(
             slope_fraction=calibration.slope_percent / 100.0,
             isopotential_ph=calibration.isopotential_ph,

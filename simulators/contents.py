@@ -8,11 +8,15 @@ from typing import TYPE_CHECKING
 from configs.catalogue import Substance, substance
 from configs.errors import HalfdropError
 from configs.nearest import did_you_mean
+from configs.water import buoyancy_factor
 from simulators.constants import carbonic_pka_at, pka_at
 from simulators.solution_mixture import Mixture, StrongIon, WeakComponent
 
 if TYPE_CHECKING:
     from configs.simulation import SampleBottleSettings, SimulationSettings, StrongIonSettings
+
+#: air of the simulated laboratory
+AIR_DENSITY_KG_M3 = 1.2
 
 
 def dissolved(found: Substance, concentration_mol_l: float, temperature_c: float) -> Mixture:
@@ -103,6 +107,17 @@ def sample_in_vessel(
         parts.append(dissolved(found, amount_mmol / initial_volume_ml, temperature_c))
     share = volume_ml / initial_volume_ml if volume_ml is not None else 0.0
     return mixed([*parts, Mixture(ions=_ions(bottle.strong_ions, share))])
+
+
+def true_mass_g(bottle: SampleBottleSettings, reading_g: float) -> float:
+    """Return the mass behind a balance's reading: what weighs less in air (1.2 kg/m³) than its density tells.
+
+    A sample of several substances, or of one whose density is not known, is taken as it reads.
+    """
+    densities = [substance(one.name).density_g_ml for one in bottle.substances if one.mass_fraction is not None]
+    if len(densities) != 1 or densities[0] is None:
+        return reading_g
+    return reading_g * buoyancy_factor(1000.0 * densities[0], AIR_DENSITY_KG_M3)
 
 
 def _counter_ions(charge: int, concentration_mol_l: float) -> tuple[StrongIon, ...]:

@@ -16,7 +16,7 @@ from configs.water import buoyancy_factor
 from controller.calibration.findings import Finding, Verdict, verdict
 from controller.evaluation.quantity import Quantity, constant
 from controller.evaluation.statistics import GrubbsTest, Summary, grubbs, summarise
-from controller.evaluation.uncertainty import Array, Budget, Values, budget
+from controller.evaluation.uncertainty import Array, Budget, Model, Values, budget
 
 #: Ph. Eur. 4.2.2: relative standard deviation of the strength, %, and its distance from the nominal one, %
 REPEATABILITY_RSD_PERCENT = 0.2
@@ -60,9 +60,10 @@ class Equipment:
     """Balance and burette with the errors that all replicates share, and the blank subtracted from each volume.
 
     `balance_standard_uncertainty_g` is that of a net weighing (linearity, two readings); `burette_gain` is the
-    correction's gain (1 without one); `burette_error_standard_uncertainty_ml` an error of its calibration that does
-    not grow with the volume. `titrant_temperature_standard_uncertainty_c`: against the burette's reference.
-    `air_density_kg_m3` None: weighings are not corrected for buoyancy.
+    correction's gain (1 without one), `burette_offset_ml` its offset; `burette_error_standard_uncertainty_ml` an error
+    of its calibration that does not grow with the volume; gain and error are independent about `burette_pivot_ml`.
+    `titrant_temperature_standard_uncertainty_c`: against the burette's reference. `air_density_kg_m3` None: weighings
+    are not corrected for buoyancy.
     """
 
     balance_id: str
@@ -76,16 +77,21 @@ class Equipment:
     blank_ml: float = 0.0
     blank_standard_uncertainty_ml: float = 0.0
     blank_degrees_of_freedom: float = math.inf
+    burette_offset_ml: float = 0.0
+    burette_pivot_ml: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Standardisation:
     """Concentration of a titrant, mol/L: mean of the replicates with its budget; nothing is dropped.
 
-    `outlier` is Grubbs' test of the replicates (None below three, or all equal).
+    `outlier` is Grubbs' test of the replicates (None below three, or all equal); `model` and `quantities` are those of
+    the budget, for other propagations.
     """
 
     budget: Budget
+    model: Model
+    quantities: tuple[Quantity, ...]
     concentrations_mol_l: tuple[float, ...]
     summary: Summary
     outlier: GrubbsTest | None
@@ -125,7 +131,10 @@ def standardise(
 
     def concentration(v: Values, i: int) -> Array:
         mass = (v[f"mass {i + 1}"] + v["balance error"]) * v["buoyancy"]
-        volume = v[f"volume {i + 1}"] * v["burette gain"] * v["titrant expansion"] + v["burette error"] - v["blank"]
+        gain = v["burette gain"]
+        line = equipment.burette_offset_ml + gain * v[f"volume {i + 1}"]
+        line = line - (gain - equipment.burette_gain) * equipment.burette_pivot_ml + v["burette error"]
+        volume = line * v["titrant expansion"] - v["blank"]
         return 1000.0 * equivalents * v["purity"] * mass / (v["molar mass"] * volume)
 
     def mean(v: Values) -> Array:
@@ -134,10 +143,16 @@ def standardise(
     exact = {quantity.name: np.array([quantity.value]) for quantity in quantities}
     single = tuple(float(concentration(exact, i)[0]) for i in range(count))
     quantities.append(_repeatability(single, replicates))
-    whole = budget(lambda v: mean(v) * v["repeatability"], quantities, unit="mol/L")
+
+    def model(v: Values) -> Array:
+        return mean(v) * v["repeatability"]
+
+    whole = budget(model, quantities, unit="mol/L")
     outlier = grubbs(single) if count >= FEWEST_REPLICATES else None
     return Standardisation(
         budget=whole,
+        model=model,
+        quantities=tuple(quantities),
         concentrations_mol_l=single,
         summary=summarise(single),
         outlier=outlier,

@@ -38,7 +38,7 @@ def amount_text(amount: dict[str, Any] | None) -> str:
     if not expanded:
         return f"{value:.6g} {unit}"
     places = decimals(expanded)
-    return f"{value:.{places}f} +/- {expanded:.{places}f} {unit} (k = {amount['coverage_factor']:g})"
+    return f"{value:.{places}f} +/- {expanded:.{places}f} {unit} (k = {amount['coverage_factor']:.3g})"
 
 
 def decimals(uncertainty: float) -> int:

@@ -8,6 +8,7 @@ from contextlib import ExitStack
 from dataclasses import replace
 
 from configs.errors import HalfdropError
+from configs.faultfile import load_faults
 from controller.amounts import amount_of_plan
 from controller.assembly import OpenBench, Opening, is_simulated, open_bench, time_scale_of
 from controller.commandport import command_port
@@ -16,15 +17,18 @@ from controller.commands.lines import Lines, result_lines
 from controller.commands.output import print_json
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
 from controller.commands.signals import pulling
+from controller.inforce import find_in_force, utc_day
 from controller.journal import Journal
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.outcome import RunResult
-from controller.planning import SampleChoice, make_plan, plan_sample
+from controller.planning import SampleChoice, expected_volume_ml, make_plan, plan_sample
 from controller.recordfile import new_record
 from controller.runner import run as carry_out
 from controller.stopping import Commands, StopSwitch
 from controller.titration.core import titrate
+from controller.titration.plan import RunPlan
+from controller.titration.traceability import Replicate
 from controller.unclosed import refuse_unclosed
 from drivers.operator import ConsoleOperator
 
@@ -42,19 +46,20 @@ def run(given: argparse.Namespace) -> int:
             where="run",
             remedy="Give the answers with --answers FILE, or start the run at a terminal without --headless",
         )
+    opening = Opening(
+        seed=given.seed,
+        time_scale=given.time_scale,
+        answers=answers,
+        answers_from=given.answers or "answers",
+        place=lab.path,
+        faults=load_faults(given.faults) if given.faults else None,
+    )
+    if given.replicates is not None or given.portions is not None:
+        from controller.commands.replicates import run_replicates
+
+        return run_replicates(picked, lab, given, opening=opening, headless=unattended)
     result = titrate_once(
-        picked,
-        lab,
-        sample_choice(given),
-        opening=Opening(
-            seed=given.seed,
-            time_scale=given.time_scale,
-            answers=answers,
-            answers_from=given.answers or "answers",
-            place=lab.path,
-        ),
-        headless=unattended,
-        operator_name=given.operator,
+        picked, lab, sample_choice(given), opening=opening, headless=unattended, operator_name=given.operator
     )
     tell(result, as_json=given.json)
     return result.exit_status
@@ -68,6 +73,7 @@ def titrate_once(
     opening: Opening,
     headless: bool,
     operator_name: str | None = None,
+    replicate: Replicate | None = None,
 ) -> RunResult:
     """Run one titration on a lab folder's bench; the record is closed when this returns or raises.
 
@@ -83,17 +89,42 @@ def titrate_once(
         for identity in (bench.account.identity, bench.probe_identity):
             held.enter_context(lock_device(identity, {"lab": str(lab.path)}))
         refuse_unclosed(lab.runs, bench.account.identity)
-        return _on_open_bench(picked, lab, choice, bench, operator_name=operator_name, headless=headless)
+        plan, hashes = _planned(picked, lab, choice, bench, replicate)
+        return _on_open_bench(plan, hashes, lab, bench, operator_name=operator_name, headless=headless)
+
+
+def _planned(
+    picked: Chosen, lab: Lab, choice: SampleChoice, bench: OpenBench, replicate: Replicate | None
+) -> tuple[RunPlan, dict[str, str]]:
+    """Return the plan with what is in force, and the hashes of everything that it rests on."""
+    known = find_in_force(
+        picked.method,
+        picked.bench,
+        lab.calibrations,
+        pump_identity=bench.account.identity,
+        probe_identity=bench.probe_identity,
+        today=utc_day(bench.clock.utc_s()),
+        expected_volume_ml=expected_volume_ml(picked.method, plan_sample(picked.method, choice)),
+    )
+    plan = make_plan(
+        picked.method,
+        picked.bench,
+        choice,
+        pump=bench.account,
+        probe_identity=bench.probe_identity,
+        seed=bench.seed,
+        in_force=known,
+        replicate=replicate,
+    )
+    return plan, {**picked.hashes, **known.hashes}
 
 
 def _on_open_bench(
-    picked: Chosen, lab: Lab, choice: SampleChoice, bench: OpenBench, *, operator_name: str | None, headless: bool
+    plan: RunPlan, hashes: dict[str, str], lab: Lab, bench: OpenBench, *, operator_name: str | None, headless: bool
 ) -> RunResult:
-    plan = make_plan(
-        picked.method, picked.bench, choice, pump=bench.account, probe_identity=bench.probe_identity, seed=bench.seed
-    )
     sink = new_record(lab.runs, utc_s=bench.clock.utc_s(), label=plan.method_name)
-    journal = Journal(sink, bench.clock, name=str(sink.path))
+    disk = sink if bench.faults is None else bench.faults.disk(sink)
+    journal = Journal(disk, bench.clock, name=str(sink.path))
     with ExitStack() as held:
         commands: Commands = held.enter_context(
             command_port(bench.stop, sink.path, set_time_scale=time_scale_of(bench.clock))
@@ -112,7 +143,7 @@ def _on_open_bench(
             stop=bench.stop,
             commands=commands,
             operator_name=operator_name,
-            hashes=picked.hashes,
+            hashes=hashes,
             on_progress=Lines(sys.stderr),
             amount_of=amount_of_plan,
         )

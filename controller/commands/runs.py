@@ -7,10 +7,11 @@ import sys
 from pathlib import Path
 
 from configs.errors import HalfdropError
-from controller.commands.output import amount_text, print_json, print_table, say
+from controller.commands.output import amount_text, print_json, print_table, say, volume_text
 from controller.labfolder import Lab, find_lab
 from controller.record import list_records, printable, read_record, summarise
 from controller.record import verify as verify_record
+from controller.reevaluation import AddedEvaluation, added_evaluations
 
 TYPE_CHECKING = False
 if TYPE_CHECKING:
@@ -38,10 +39,11 @@ def show(given: argparse.Namespace) -> int:
     """Show one record: what was run, how it ended, its end points, amount and warnings."""
     path = record_path(given.run, given)
     record = read_record(path)
-    summary = summarise(path)
+    summary, added = summarise(path), added_evaluations(path)
     result: dict[str, Any] = (record.closing or {}).get("result") or {}
     if given.json:
-        print_json({**summary, "header": record.header, "closing": record.closing, "torn_bytes": record.torn_bytes})
+        whole = {**summary, "header": record.header, "closing": record.closing, "torn_bytes": record.torn_bytes}
+        print_json({**whole, "added_evaluations": [one.to_json() for one in added]})
         return DONE
     from controller.commands.lines import result_lines
 
@@ -55,13 +57,26 @@ def show(given: argparse.Namespace) -> int:
     print("\n".join(printable(line) for line in lines))
     if result:
         print("\n".join(result_lines(result)))
+        _show_budget((result.get("result") or {}).get("budget"))
     elif record.closing is not None:
         print(printable(f"outcome: {record.closing.get('outcome')} ({record.closing.get('reason')})"))
     else:
         print("outcome: open (still running, or broken off); 'halfdrop runs verify' tells more")
+    for line in _added_lines(added):
+        print(printable(line))
     found = verify_record(path)
     print(f"verified: {found.state} ({found.what})")
     return DONE
+
+
+def _show_budget(budget: dict[str, Any] | None) -> None:
+    if budget is None:
+        return
+    from controller.commands.budgetlines import HEADS, budget_rows, closing_lines
+
+    print("\nuncertainty budget (contributions in " + budget["unit"] + ")")
+    print_table(HEADS, [tuple(printable(cell) for cell in row) for row in budget_rows(budget)])
+    print("\n".join([*closing_lines(budget), ""]))
 
 
 def verify(given: argparse.Namespace) -> int:
@@ -144,6 +159,24 @@ def _lab(given: argparse.Namespace) -> Lab:
     lab = find_lab(given.lab)
     say(lab.says())
     return lab
+
+
+def _added_lines(added: list[AddedEvaluation]) -> list[str]:
+    """One line for each evaluation beside the record, and what is wrong with its file where something is."""
+    lines = []
+    for one in added:
+        result = one.content.get("result") or {}
+        points = (
+            ", ".join(volume_text(p["volume_ml"], p["standard_uncertainty_ml"]) for p in result["end_points"])
+            if (result.get("end_points"))
+            else "no end point"
+        )
+        flag = {"edited": "; THE FILE WAS EDITED", "other record": "; the record has changed since"}.get(one.state, "")
+        reason = f" ({one.content['reason']})" if one.content.get("reason") else ""
+        when, program = one.content.get("evaluated_utc"), one.content.get("program")
+        amount = amount_text(result.get("result"))
+        lines.append(f"evaluated again, no. {one.number}, {when} by {program}{reason}: {points}; {amount}{flag}")
+    return lines
 
 
 def _row(one: dict[str, Any]) -> tuple[str, ...]:

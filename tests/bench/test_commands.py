@@ -58,7 +58,7 @@ def test_a_run_finds_what_is_in_the_beaker_and_closes_its_record(halfdrop: Run, 
     true_g_l = (2 * 0.045 + 3 * 0.001 - 0.020) / 2 * 134.0874
     assert amount["unit"] == "g/L"
     assert abs(amount["value"] - true_g_l) < amount["expanded_uncertainty"]
-    assert amount["expanded_uncertainty"] == pytest.approx(2 * amount["standard_uncertainty"])
+    assert amount["expanded_uncertainty"] == pytest.approx(amount["coverage_factor"] * amount["standard_uncertainty"])
     record = Path(result["run"])
     assert verify(record).state == "intact"
     steps = sum(entry["steps"] for entry in read_record(record).of("dosed"))

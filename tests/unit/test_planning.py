@@ -77,7 +77,7 @@ def test_without_a_lag_record_readings_are_extrapolated() -> None:
 
 def test_without_a_calibration_a_method_in_ph_is_refused() -> None:
     bare = BENCH.model_copy(update={"probe": BENCH.probe.model_copy(update={"calibration": None})})
-    with pytest.raises(HalfdropError, match=r"no calibration.*buffers"):
+    with pytest.raises(HalfdropError, match=r"no calibration.*calibrate probe"):
         make_plan(
             shipped_method("juice-acidity"), bare, SampleChoice(), pump=expected_account(bare), probe_identity="p"
         )

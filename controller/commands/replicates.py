@@ -1,0 +1,169 @@
+"""Replicates: one sample titrated several times, each in its own record, and what they say together."""
+
+from __future__ import annotations
+
+import argparse
+import math
+from collections.abc import Sequence
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+from configs.errors import HalfdropError
+from controller.amounts import amount_of_replicates
+from controller.assembly import Opening, is_simulated
+from controller.commands.output import amount_text, print_json, say
+from controller.commands.run import tell, titrate_once
+from controller.commands.settings import Chosen, sample_choice
+from controller.encoding import plan_from_json
+from controller.labfolder import Lab
+from controller.outcome import RunResult
+from controller.planning import SampleChoice
+from controller.record import printable, read_record
+from controller.titration.plan import RunPlan
+from controller.titration.traceability import Replicate
+
+MOST_REPLICATES = 20
+
+
+def run_replicates(
+    picked: Chosen, lab: Lab, given: argparse.Namespace, *, opening: Opening, headless: bool
+) -> int:  # fmt: skip
+    """Titrate a sample several times and print each result, then mean, scatter, Grubbs' test and budget.
+
+    The worst exit status of a run is returned; the mean is given over the runs that found the end point.
+    """
+    portions = portions_of(given.portions, given.replicates)
+    results = titrate_replicates(
+        picked, lab, sample_choice(given), portions, opening=opening, headless=headless, operator_name=given.operator
+    )
+    status = max(result.exit_status for result in results)
+    summary, why = _together(results)
+    if given.json:
+        print_json({"replicates": [result.result for result in results], "summary": summary, "reason": why})
+        return status
+    for number, result in enumerate(results, start=1):
+        say(f"replicate {number} of {len(results)}")
+        tell(result, as_json=False)
+    print("\n".join(summary_lines(summary)) if summary is not None else printable(f"no mean: {why}"))
+    return status
+
+
+def titrate_replicates(
+    picked: Chosen,
+    lab: Lab,
+    choice: SampleChoice,
+    portions: Sequence[float | None],
+    *,
+    opening: Opening,
+    headless: bool,
+    operator_name: str | None,
+) -> list[RunResult]:
+    """Run one titration for each portion (None: as the method takes it); a stopped or failed run ends the series."""
+    by_mass = picked.method.sample.taken_by == "mass"
+    simulation = picked.bench.simulation if is_simulated(picked.bench) else None
+    results: list[RunResult] = []
+    for number, portion in enumerate(portions, start=1):
+        if portion is not None:
+            choice = replace(choice, mass_g=portion) if by_mass else replace(choice, volume_ml=portion)
+        own = opening
+        if simulation is not None:  # each beaker of a simulated bench has its own noise
+            first = simulation.seed if opening.seed is None else opening.seed
+            own = replace(opening, seed=first + number - 1)
+        say(f"replicate {number} of {len(portions)}")
+        result = titrate_once(
+            picked,
+            lab,
+            choice,
+            opening=own,
+            headless=headless,
+            operator_name=operator_name,
+            replicate=Replicate(number=number, count=len(portions)),
+        )
+        results.append(result)
+        if result.outcome != "completed":
+            break
+    return results
+
+
+def portions_of(text: str | None, count: int | None) -> list[float | None]:
+    """Return the portions of replicates, None for those taken as the method says.
+
+    Raises:
+        HalfdropError: no positive numbers, or another count than asked for.
+    """
+    if count is not None and not 1 <= count <= MOST_REPLICATES:
+        raise HalfdropError(f"got {count}, allowed: 1 to {MOST_REPLICATES}", where="--replicates", remedy="Correct it")
+    if text is None:
+        return [None] * (count or 1)
+    try:
+        portions = [float(word) for word in text.split(",")]
+    except ValueError:
+        portions = []
+    if not portions or any(not (math.isfinite(one) and one > 0) for one in portions):
+        raise HalfdropError(
+            f"got {text!r}, allowed: numbers above 0 with commas between", where="--portions", remedy="Correct it"
+        )
+    if count is not None and count != len(portions):
+        raise HalfdropError(
+            f"{len(portions)} portions for {count} replicates", where="--portions", remedy="Give one for each"
+        )
+    return list(portions)
+
+
+def plan_and_result(path: Path) -> tuple[RunPlan, dict[str, Any]]:
+    """Return plan and result of a closed record.
+
+    Raises:
+        HalfdropError: no record, no closing line, or it was not completed.
+    """
+    record = read_record(path)
+    result = (record.closing or {}).get("result")
+    if not isinstance(result, dict) or result.get("outcome") != "completed":
+        raise HalfdropError("its run was not completed", where=path.stem, remedy="Leave it out, or titrate again")
+    return plan_from_json(record.header.get("plan"), where=str(path)), {**result, "run": path.stem}
+
+
+def summary_of_records(paths: Sequence[Path]) -> dict[str, Any]:
+    """Return what the records of replicates say together.
+
+    Raises:
+        HalfdropError: a record that cannot be used, or runs of several methods.
+    """
+    pairs = [plan_and_result(path) for path in paths]
+    return {
+        **amount_of_replicates([plan for plan, _ in pairs], [result for _, result in pairs]),
+        "runs": [path.stem for path in paths],
+    }
+
+
+def summary_lines(summary: dict[str, Any]) -> list[str]:
+    """Return the mean of replicates for people."""
+    amount = summary["result"]
+    lines = [f"sample {summary['sample_id']}: {summary['count']} replicates", f"mean: {amount_text(amount)}"]
+    if summary["standard_deviation"] is not None:
+        low, high = summary["confidence_interval"]
+        lines.append(
+            f"s = {summary['standard_deviation']:.3g} {amount['unit']}, RSD = {summary['rsd_percent']:.3g} %, "
+            f"95 % confidence interval of the mean {low:.5g} to {high:.5g} {amount['unit']} (scatter alone)"
+        )
+    test = summary["grubbs"]
+    if test is not None:
+        word = "an outlier" if test["outlier"] else "no outlier"
+        lines.append(
+            f"Grubbs' test: replicate {test['replicate']} ({test['value']:.5g}) is {word} "
+            f"({test['statistic']:.3f} against {test['critical']:.3f} at {100 * test['significance']:g} %); "
+            "nothing was dropped"
+        )
+    lines += [f"warning: {text}" for text in summary["warnings"]]
+    return [printable(line) for line in lines]
+
+
+def _together(results: Sequence[RunResult]) -> tuple[dict[str, Any] | None, str | None]:
+    usable = [Path(result.record) for result in results if result.outcome == "completed" and result.result["result"]]
+    if not usable:
+        return None, "no replicate gave an amount"
+    try:
+        return summary_of_records(usable), None
+    except HalfdropError as error:
+        return None, str(error)

@@ -1,0 +1,79 @@
+"""What method and bench state by themselves, before any calibration of the lab folder is looked up."""
+
+from __future__ import annotations
+
+from configs.benchfile import BenchSettings
+from configs.catalogue import substance
+from configs.method import MethodSettings
+from controller.titration.traceability import (
+    BuretteInForce,
+    Dilution,
+    Excess,
+    Preparation,
+    Traceability,
+    Weighing,
+)
+
+
+def stated(method: MethodSettings, bench: BenchSettings) -> Traceability:
+    """Return what method and bench state by themselves, without any calibration's record."""
+    pump = bench.pump
+    return Traceability(
+        burette=BuretteInForce(
+            gain_standard_uncertainty=pump.gain_standard_uncertainty,
+            titrant_temperature_standard_uncertainty_c=pump.titrant_temperature_standard_uncertainty_c,
+        ),
+        weighing=weighing_of(method, bench),
+        preparation=preparation_of(method),
+        excess=excess_of(method),
+        standard_lot_id=method.standard.lot_id if method.standard is not None else None,
+    )
+
+
+def weighing_of(method: MethodSettings, bench: BenchSettings) -> Weighing:
+    """Return the balance, with the density of what is weighed where its buoyancy is corrected."""
+    report, density_g_ml = method.report_as, None
+    standard = report is not None and report.quantity == "titrant"
+    if report is not None and (standard if method.buoyancy == "standards" else method.buoyancy == "always"):
+        prepared = method.preparation.density_g_ml if method.preparation is not None else None
+        density_g_ml = prepared or (substance(report.substance).density_g_ml if standard else None)
+    return Weighing(
+        balance_id=bench.balance.balance_id,
+        air_density_kg_m3=bench.balance.air_density_kg_m3,
+        density_kg_m3=None if density_g_ml is None else 1000.0 * density_g_ml,
+    )
+
+
+def preparation_of(method: MethodSettings) -> Preparation | None:
+    """Return moisture, density and dilutions of the sample."""
+    given = method.preparation
+    if given is None:
+        return None
+    return Preparation(
+        moisture_fraction=given.moisture_fraction,
+        moisture_standard_uncertainty=given.moisture_standard_uncertainty,
+        density_g_ml=given.density_g_ml,
+        density_standard_uncertainty_g_ml=given.density_standard_uncertainty_g_ml,
+        dilutions=tuple(
+            Dilution(
+                made_up_to_ml=step.made_up_to_ml,
+                aliquot_ml=step.aliquot_ml,
+                made_up_standard_uncertainty_ml=step.made_up_standard_uncertainty_ml,
+                aliquot_standard_uncertainty_ml=step.aliquot_standard_uncertainty_ml,
+            )
+            for step in given.dilutions
+        ),
+    )
+
+
+def excess_of(method: MethodSettings) -> Excess | None:
+    """Return the reagent added in excess."""
+    given = method.back_titration
+    if given is None:
+        return None
+    return Excess(
+        volume_ml=given.excess_volume_ml,
+        standard_uncertainty_ml=given.excess_volume_standard_uncertainty_ml,
+        concentration_mol_l=given.excess_concentration_mol_l,
+        concentration_standard_uncertainty_mol_l=given.excess_concentration_standard_uncertainty_mol_l,
+    )
