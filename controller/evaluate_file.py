@@ -13,6 +13,8 @@ from configs.errors import HalfdropError
 from controller.curvefile import CurveFile, CurveOptions, read_curve
 from controller.evaluation.curve import Curve
 from controller.evaluation.evaluate import evaluate
+from controller.identify import identity_of
+from controller.pointregions import regions_of
 from simulators.constants import debye_huckel_a_at, pka_at, pkw_at
 
 #: a measured pKa further from the catalogue's than this points at the pH scale
@@ -23,7 +25,8 @@ _NOTABLE_PKA_DIFFERENCE = 0.2
 class EvaluateOptions(CurveOptions):
     """What a person may say about a curve: columns and units, and what is known of the titration.
 
-    `activity`: "davies" makes constants thermodynamic, "none" takes concentrations for activities.
+    `activity`: "davies" makes constants thermodynamic, "none" takes concentrations for activities. `identify` ranks
+    what the substance may be, by its equivalent mass too where `sample_mass_g` is given.
     """
 
     initial_volume_ml: float | None = None
@@ -32,6 +35,8 @@ class EvaluateOptions(CurveOptions):
     temperature_c: float | None = None
     activity: Literal["davies", "none"] = "none"
     end_points: int | None = None
+    identify: bool = False
+    sample_mass_g: float | None = None
 
 
 def evaluate_file(path: str | Path, options: EvaluateOptions | None = None) -> dict[str, Any]:
@@ -52,6 +57,9 @@ def evaluate_file(path: str | Path, options: EvaluateOptions | None = None) -> d
     result["duration_s"] = found.duration_s
     for point in result["end_points"]:
         point["standard_uncertainty_ml"] = math.hypot(point["standard_uncertainty_ml"], found.interpolation_sd_ml)
+    result["regions"] = regions_of(curve, result)
+    if options.identify:
+        result["identity"] = identity_of(curve, result["end_points"], mass_g=options.sample_mass_g)
     known = None if options.substance is None else curve.pka
     result["warnings"] = [*found.warnings, *about, *evaluation.warnings, *_pka_warnings(result, known)]
     result["file"] = {
@@ -68,6 +76,7 @@ def _with_checked(options: EvaluateOptions) -> EvaluateOptions:
         ("initial_volume_ml", 0.0, 1e5, "mL"),
         ("titrant_concentration_mol_l", 0.0, 20.0, "mol/L"),
         ("temperature_c", 0.0, 100.0, "°C"),
+        ("sample_mass_g", 0.0, 1e4, "g"),
     ):
         value = getattr(options, name)
         if value is None:

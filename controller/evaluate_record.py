@@ -13,6 +13,8 @@ from controller.amounts import amount_of_plan
 from controller.encoding import plan_from_json
 from controller.evaluation.curve import Array, Curve, CurveError
 from controller.evaluation.evaluate import evaluate
+from controller.identify import identity_of
+from controller.pointregions import regions_of
 from controller.record import Record, points, read_record
 from controller.titration.outcome import STRAIGHTNESS_MV
 from controller.titration.plan import RunPlan
@@ -22,8 +24,13 @@ from simulators.constants import ideal_slope_mv
 STRAIGHTNESS_PH = 0.003
 
 
-def evaluate_record(path: Path) -> dict[str, Any]:
+def evaluate_record(path: Path, *, end_points_expected: int | None = None, identify: bool = False) -> dict[str, Any]:
     """Evaluate a record's settled points with what its plan knows.
+
+    Args:
+        path: the record.
+        end_points_expected: how many end points there should be; None: as its plan says.
+        identify: also rank what the substance may be.
 
     Returns:
         The JSON of `evaluate`; outcome and reason are the run's own, None for a run without an end.
@@ -31,23 +38,33 @@ def evaluate_record(path: Path) -> dict[str, Any]:
     Raises:
         HalfdropError: it is no record, or its plan cannot be read.
     """
-    return evaluate_points(read_record(path))
+    return evaluate_points(read_record(path), end_points_expected=end_points_expected, identify=identify)
 
 
-def evaluate_points(record: Record) -> dict[str, Any]:
+def evaluate_points(
+    record: Record, *, end_points_expected: int | None = None, identify: bool = False
+) -> dict[str, Any]:
     """As `evaluate_record`, for a record that is read already."""
     path = record.path
     plan = plan_from_json(record.header.get("plan"), where=str(path))
-    detected = _detected_ml(record)
+    curve, detected = curve_of(plan, record, where=str(path)), _detected_ml(record)
     closing = record.closing or {}
     result = evaluate(
-        curve_of(plan, record, where=str(path)), end_points_expected=plan.end_points.expected, detected_ml=detected
+        curve,
+        end_points_expected=end_points_expected or plan.end_points.expected,
+        detected_ml=detected,
     ).to_json()
     for point in result["end_points"]:
         point["standard_uncertainty_ml"] = math.hypot(point["standard_uncertainty_ml"], plan.pump.position_sd_ml)
     result["run"], result["seed"] = str(path), plan.seed
     result["run_outcome"] = closing.get("outcome", "open")
     result["result"] = amount_of_plan(plan, result)
+    result["regions"] = regions_of(curve, result)
+    if identify:
+        u_mol_l = plan.titrant.standard_uncertainty_mol_l
+        result["identity"] = identity_of(
+            curve, result["end_points"], mass_g=plan.sample.mass_g, titrant_standard_uncertainty_mol_l=u_mol_l
+        )
     if record.closing is None:
         result["warnings"].append("the run has no closing line: what is evaluated is what was recorded")
     return result

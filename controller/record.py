@@ -228,8 +228,8 @@ def list_records(runs: Path) -> list[Path]:
 def points(record: Record) -> list[dict[str, Any]]:
     """Return the curve: one object a settled point, in the order of the run.
 
-    Keys: `volume_ml` (titrant volume seen by the probe), `delivered_ml`, `potential_mv`, `ph`, `settled`, `at_s`, and the
-    standard deviations that the run gave the point, `volume_sd_ml` and `potential_sd_mv` (None in early records).
+    Keys: `volume_ml` (titrant volume seen by the probe), `delivered_ml`, `potential_mv`, `ph`, `settled`, `at_s`, and
+    the standard deviations that the run gave the point, `volume_sd_ml` and `potential_sd_mv` (None in early records).
     """
     keys = ("volume_ml", "delivered_ml", "potential_mv", "ph", "settled", "volume_sd_ml", "potential_sd_mv")
     return [

@@ -12,6 +12,7 @@ from controller.commands.output import print_json
 from controller.commands.runs import SUFFIX, record_path
 from controller.evaluate_file import EvaluateOptions, evaluate_file
 from controller.evaluate_record import evaluate_record
+from controller.labfolder import find_lab
 
 DONE, NOT_TRUSTED = 0, 1
 _OPTIONS = (
@@ -23,18 +24,24 @@ _OPTIONS = (
     "titrant_concentration_mol_l",
     "substance",
     "temperature_c",
+    "sample_mass_g",
 )
 
 
 def evaluate(given: argparse.Namespace) -> int:
     """Evaluate a file; exit status 1 where it shows no end point."""
-    result = _record(given) if _is_record(given) else evaluate_file(Path(given.file), _options(given))
+    result = _record(given) if _is_record(given) else _table(given)
+    added = _add(given, result) if given.add else None
+    if added is not None:
+        result["evaluation_file"] = str(added)
     if given.json:
         print_json(result)
     else:
         for assumed in result.get("file", {}).get("assumed", []):
             print(f"assumed: {assumed}")
         print("\n".join(_lines(result)))
+        if added is not None:
+            print(f"added beside the record: {added.name}")
     return DONE if result["end_points"] else NOT_TRUSTED
 
 
@@ -51,7 +58,30 @@ def _record(given: argparse.Namespace) -> dict[str, Any]:
             where=given.file,
             remedy="Leave them out, or export the points as CSV and evaluate that",
         )
-    return evaluate_record(record_path(given.file, given))
+    return evaluate_record(
+        record_path(given.file, given), end_points_expected=given.end_points, identify=given.identify
+    )
+
+
+def _table(given: argparse.Namespace) -> dict[str, Any]:
+    if given.add:
+        raise HalfdropError(
+            "--add keeps an evaluation beside a record, and this is none",
+            where=given.file,
+            remedy="Leave --add out, or redirect the output of --json into a file of your own",
+        )
+    return evaluate_file(Path(given.file), _options(given))
+
+
+def _add(given: argparse.Namespace, result: dict[str, Any]) -> Path:
+    from controller.journal import utc_text
+    from controller.reevaluation import add_evaluation
+    from drivers.clock import SystemClock
+
+    path = record_path(given.file, given)
+    if path.parent.name == "runs" and (path.parent.parent / "lab.yaml").is_file():
+        find_lab(str(path.parent.parent)).writable()
+    return add_evaluation(path, result, evaluated_utc=utc_text(SystemClock().utc_s()), reason=given.reason)
 
 
 def _options(given: argparse.Namespace) -> EvaluateOptions:
@@ -60,6 +90,7 @@ def _options(given: argparse.Namespace) -> EvaluateOptions:
         interpolate_volumes=given.interpolate_volumes,
         activity=given.activity,
         end_points=given.end_points,
+        identify=given.identify,
     )
 
 
@@ -67,4 +98,21 @@ def _lines(result: dict[str, Any]) -> list[str]:
     lines = result_lines(result)
     for name, volumes in result["estimators"].items():
         lines.append(f"  {name}: " + ", ".join(f"{volume:.4f} mL" for volume in volumes))
-    return lines
+    return lines + _identity_lines(result.get("identity"))
+
+
+def _identity_lines(identity: dict[str, Any] | None) -> list[str]:
+    if identity is None:
+        return []
+    if identity["refused"]:
+        return [f"no candidates: {identity['refused']}"]
+    lines = ["what it may be, ranked, never proven:"]
+    mass = identity["equivalent_mass_g_mol"]
+    lines += [] if mass is None else [f"  equivalent mass {mass:.1f} g/mol"]
+    for one in identity["candidates"]:
+        protons = ", ".join(str(count) for count in one["protons"])
+        lines.append(
+            f"  {100.0 * one['probability']:5.1f} %  {one['substance']} (protons counted: {protons}; pH off by "
+            f"{one['ph_difference']:+.2f}; equivalent mass {one['equivalent_mass_g_mol']:.1f} g/mol)"
+        )
+    return [*lines, f"  {100.0 * identity['none_of_these']:5.1f} %  none of the catalogue", f"  {identity['model']}"]

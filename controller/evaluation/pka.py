@@ -37,7 +37,8 @@ _LARGEST_FREE_SHARE = 0.01
 class HalfEquivalence:
     """Half-way to an end point: plain pH there, and the pKa by charge balance where it can be had.
 
-    `plain_bias`: plain pH less pKa; `valid_plain`: free H+ and OH- are below 1 % of either form there.
+    `plain_bias`: plain pH less pKa; `valid_plain`: free H+ and OH- are below 1 % of either form there;
+    `conditional_pka`: the constant at the ionic strength of this solution, before the activity correction.
     """
 
     volume_ml: float
@@ -47,6 +48,7 @@ class HalfEquivalence:
     plain_bias: float | None
     valid_plain: bool | None
     remark: str | None
+    conditional_pka: float | None = None
 
 
 def half_equivalence(
@@ -86,6 +88,7 @@ def half_equivalence(
     if single_proton is None and abs(run) > max(_LARGEST_RUN, 6.0 * sd):
         remark = f"no pKa: it runs by {run:+.2f} through the region, so more than one proton (or substance) is at work"
         return _without_pka(half, plain, remark)
+    conditional = pka
     pka += _activity(curve, half, charge_before, log_coefficient)
     return HalfEquivalence(
         volume_ml=half,
@@ -95,6 +98,7 @@ def half_equivalence(
         plain_bias=None if used is None else plain - pka,
         valid_plain=None if used is None else _valid_plain(curve, plain, half, span),
         remark=_UNCORRECTED if used is None else None,
+        conditional_pka=conditional,
     )
 
 

@@ -76,6 +76,7 @@ class Evaluation:
                     "pka": h.pka,
                     "pka_standard_uncertainty": h.standard_uncertainty,
                     "plain_bias": h.plain_bias,
+                    "conditional_pka": h.conditional_pka,
                     "remark": h.remark,
                 }
                 for h in self.half_equivalence

@@ -20,7 +20,7 @@ from controller.report.budget import budget_table, coverage_factor
 from controller.report.cautions import cautions_of
 from controller.report.instruments import instruments
 from controller.report.plots import Mark, curve_figure, gran_figure, residual_figure
-from controller.report.points import points_table
+from controller.report.points import identity_table, points_table
 from controller.report.series import Series, series_of
 from controller.report.wording import DASH, Facts, facts_of, local_time, number, span, with_uncertainty
 
@@ -55,7 +55,7 @@ def report_contents(
     amount = result.get("result")
     added = [] if detached else [one.to_json() for one in added_evaluations(record.path)]
     figures, missing = _figures(record, result)
-    again = _evaluated_again(record)
+    again = _evaluated_again(record, plan)
     repeated = tables.replicates([(one.path.stem, _amount(one)) for one in (record, *replicates)])
     return {
         "title": str(plan.get("method_title") or "Titration"),
@@ -71,7 +71,7 @@ def report_contents(
         "estimators": tables.estimators(result, again),
         "half_equivalence": tables.half_equivalence(result),
         "budget": budget_table(amount),
-        "identity": None,
+        "identity": identity_table(again.get("identity")),
         "replicates": repeated,
         "evaluations": tables.evaluations(result, added, offset),
         "instruments": instruments(header),
@@ -81,7 +81,7 @@ def report_contents(
         "incidents": tables.incidents(record.entries),
         "cautions": cautions_of(plan),
         "doses": tables.doses(record.entries),
-        "points": points_table(record, result),
+        "points": points_table(record, again),
         "record": [] if detached else _record_facts(record, offset),
         "hashes": [(str(name), str(value)) for name, value in _dict(header.get("hashes")).items()],
         "written": local_time(written_utc, offset),
@@ -98,10 +98,10 @@ def _amount(record: Record) -> dict[str, Any] | None:
     return found if isinstance(found, dict) else None
 
 
-def _evaluated_again(record: Record) -> dict[str, Any]:
-    """The evaluation of the record's points by this program; empty where they cannot be evaluated."""
+def _evaluated_again(record: Record, plan: dict[str, Any]) -> dict[str, Any]:
+    """The evaluation of the record's points by this program, an unknown substance ranked; empty where it fails."""
     try:
-        return evaluate_points(record)
+        return evaluate_points(record, identify=_dict(plan.get("chemistry")).get("analyte") is None)
     except HalfdropError:
         return {}
 

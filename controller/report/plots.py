@@ -192,14 +192,14 @@ def _gran_line(axis: Any, line: GranSeries, *, first: bool) -> None:
     shown = line.function_ml <= top
     dots = {"linestyle": "none", "marker": marker, "ms": 3.6, "markeredgecolor": colour, "markeredgewidth": 0.8}
     taken, left = line.used & shown, ~line.used & shown
-    where = "beyond" if line.beyond else "before"
-    axis.plot(line.volume_ml[taken], line.function_ml[taken], color=colour, label=f"{where}: on the line", **dots)
+    where = f"{'beyond' if line.beyond else 'before'} end point {line.end_point}"
+    axis.plot(line.volume_ml[taken], line.function_ml[taken], color=colour, label=where, **dots)
     if np.any(left):
         axis.plot(
             line.volume_ml[left],
             line.function_ml[left],
             markerfacecolor="none",
-            label="not used" if first else None,
+            label="not on the line" if first else None,
             **dots,
         )
     if np.any(taken):

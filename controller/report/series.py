@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -20,9 +20,10 @@ _SMALLEST_STEP_ML = 1e-4
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class GranSeries:
-    """One Gran line, its function scaled so that it reads as titrant in mL: missing before the end point, over beyond.
+    """One Gran line, its function scaled so that it reads as titrant in mL: missing before, over beyond.
 
-    `used` marks the points that the line rests on; the line itself is |volume - intercept_ml|.
+    `used` marks the points that the line rests on; the line itself is |volume - intercept_ml|. `end_point` counts
+    from 1.
     """
 
     name: str
@@ -32,6 +33,7 @@ class GranSeries:
     intercept_ml: float
     standard_uncertainty_ml: float
     beyond: bool
+    end_point: int
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -114,15 +116,15 @@ def _gran(curve: Curve, end_points_ml: list[float]) -> tuple[GranSeries, ...]:
         return ()
     found = []
     before = [0.0, *end_points_ml[:-1]]
-    for previous, end in zip(before, end_points_ml, strict=True):
+    for number, (previous, end) in enumerate(zip(before, end_points_ml, strict=True), start=1):
         line = gran_before(curve, end_point_ml=end, previous_ml=previous) if end > previous else None
         if line is not None:
-            found.append(_before(curve, line, previous, end))
+            found.append(replace(_before(curve, line, previous, end), end_point=number))
     last = end_points_ml[-1]
     signal = float(np.interp(last, curve.volume_ml, curve.decades))
     line = gran_beyond(curve, end_point_ml=last, signal=signal)
     if line is not None:
-        found.append(_beyond(curve, line, last))
+        found.append(replace(_beyond(curve, line, last), end_point=len(end_points_ml)))
     return tuple(found)
 
 
@@ -166,4 +168,5 @@ def _scaled(curve: Curve, line: GranLine, volume: Array, function: Array, shown:
         intercept_ml=line.estimate.volume_ml,
         standard_uncertainty_ml=line.estimate.standard_uncertainty_ml,
         beyond=beyond,
+        end_point=1,
     )

@@ -9,6 +9,7 @@ from typing import Any
 from controller.commands.output import decimals
 
 MINUS, DASH = "\N{MINUS SIGN}", "\N{EN DASH}"
+_NAMES = {"pkw": "pKw", "pka": "pKa", "debye_huckel_a": "Debye–Hückel A"}
 _SUFFIXES = {
     "relative_uncertainty": ("relative uncertainty", ""),
     "mol_l": ("", "mol/L"),
@@ -99,6 +100,8 @@ def clock(seconds: float | None) -> str:
 
 def words_of(key: str) -> tuple[str, str]:
     """Return a settings key as words, and the unit that its suffix names ("smallest_ml": "smallest", "mL")."""
+    if key in _NAMES:
+        return _NAMES[key], ""
     for suffix, (word, unit) in _SUFFIXES.items():
         if key == suffix or key.endswith(f"_{suffix}"):
             stem = key.removesuffix(suffix).rstrip("_").replace("_", " ")
