@@ -1,4 +1,4 @@
-"""halfdrop replay: decide a record again, or watch it again."""
+"""halfdrop replay: decide a record again, watch it again, or ask what another method would have done with it."""
 
 from __future__ import annotations
 
@@ -10,7 +10,7 @@ from pathlib import Path
 from configs.errors import HalfdropError
 from controller.commands.lines import Lines, result_lines
 from controller.commands.output import print_json, say
-from controller.commands.runs import record_path
+from controller.commands.runs import SUFFIX, record_path
 from controller.playback import play
 from controller.record import Record, printable, read_record, verify
 from controller.replay import Difference, Replayed
@@ -21,8 +21,16 @@ DONE, DIFFERS = 0, 1
 
 
 def replay(given: argparse.Namespace) -> int:
-    """Replay a record; exit status 1 where a decision differs."""
+    """Replay a record (or what can be done with a foreign table); exit status 1 where a decision differs."""
+    if not _is_record(given.run):
+        from controller.commands.whatif import foreign
+
+        return foreign(given)
     record, edited = readable(record_path(given.run, given))
+    if given.with_method is not None:
+        from controller.commands.whatif import what_if
+
+        return what_if(given, record)
     if given.time_scale is not None:
         return _watch(record, _scale(given.time_scale))
     found = decide_again(record)
@@ -33,6 +41,11 @@ def replay(given: argparse.Namespace) -> int:
     else:
         print("\n".join(printable(line) for line in replay_lines(found)))
     return DONE if found.identical else DIFFERS
+
+
+def _is_record(named: str) -> bool:
+    path = Path(named)
+    return path.suffix == SUFFIX or (not path.exists() and not path.suffix)
 
 
 def _watch(record: Record, scale: float) -> int:

@@ -40,7 +40,7 @@ def chosen(given: argparse.Namespace, *, lab_needed: bool) -> Chosen:
     Raises:
         HalfdropError: no such method, bench or lab folder, or one with mistakes.
     """
-    lab = _lab(given, needed=lab_needed)
+    lab = lab_of(given, needed=lab_needed)
     say(lab.says() if lab is not None else "no lab folder: shipped bench and methods")
     method_file, method = method_of(given.method, lab)
     bench_file = Path(given.bench) if given.bench else (lab.bench if lab is not None else None)
@@ -91,7 +91,12 @@ def answers_of(given: argparse.Namespace) -> dict[str, str] | None:
     return load_answers(given.answers) if given.answers else None
 
 
-def _lab(given: argparse.Namespace, *, needed: bool) -> Lab | None:
+def lab_of(given: argparse.Namespace, *, needed: bool = False) -> Lab | None:
+    """Return the lab folder by the options, None where there is none and none is needed.
+
+    Raises:
+        LabError: it is needed or named, and is not there.
+    """
     try:
         return find_lab(given.lab)
     except LabError:
