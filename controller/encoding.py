@@ -11,6 +11,7 @@ from functools import lru_cache
 from typing import Any, get_args, get_type_hints
 
 from configs.errors import HalfdropError, SettingsError
+from controller.calibration.plans import AnyPlan
 from controller.titration.plan import PLAN_SCHEMA_VERSION, RunPlan
 
 
@@ -18,7 +19,7 @@ class PlanVersionError(HalfdropError):
     """A plan written by a newer program."""
 
 
-def plan_to_json(plan: RunPlan) -> dict[str, Any]:
+def plan_to_json(plan: AnyPlan) -> dict[str, Any]:
     """Return the plan as plain data: objects, lists, numbers, words, None."""
     return asdict(plan)
 

@@ -10,6 +10,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
+from controller.calibration.plans import AnyPlan
 from controller.guard import Guard
 from controller.journal import Journal
 from controller.patience import last_dose_for_sure
@@ -36,7 +37,6 @@ from controller.titration.actions import (
     Wait,
     Waited,
 )
-from controller.titration.plan import RunPlan
 from drivers.clock import Clock
 from drivers.errors import DeviceError, DoseUnknownError, StoppedError
 from drivers.operator import Operator
@@ -67,7 +67,7 @@ class Execution:
 
     def __init__(
         self,
-        plan: RunPlan,
+        plan: AnyPlan,
         devices: Devices,
         journal: Journal,
         guard: Guard,

@@ -11,6 +11,7 @@ import math
 from dataclasses import dataclass, field
 
 from configs.errors import HalfdropError
+from controller.calibration.plans import AnyPlan, CalibrationPlan
 from controller.titration.actions import Action, Dose, Prime, Refill, Stir, Wait
 from controller.titration.plan import RunPlan
 
@@ -20,6 +21,8 @@ ROUNDING_ML = 1e-7
 READINGS_OUTSIDE = 3
 #: question that must be answered with "yes" before anything is primed
 TIP_OVER_WASTE = "tip-over-waste"
+#: in the check of a burette: the weighing vessel was emptied, or another one stands there
+VESSEL_EMPTIED = "weighing-vessel-empty"
 
 
 class StartRefusedError(HalfdropError):
@@ -32,7 +35,7 @@ class StartRefusedError(HalfdropError):
         self.problems = problems
 
 
-def room_ml(plan: RunPlan) -> float:
+def room_ml(plan: AnyPlan) -> float:
     """Return what the vessel must stay below, mL: capacity less what probe and stirrer displace, less the margin."""
     return plan.vessel.capacity_ml - plan.vessel.displaced_ml - plan.vessel.margin_ml
 
@@ -78,7 +81,7 @@ def check_start(plan: RunPlan) -> None:
         raise StartRefusedError(problems, where=f"method {plan.method_name}")
 
 
-def start_warnings(plan: RunPlan) -> list[str]:
+def start_warnings(plan: AnyPlan) -> list[str]:
     """Return what a person should know before leaving the run alone."""
     vessel, pump = plan.vessel, plan.pump
     reservoir_ml = pump.reservoir_ml if pump.refill == "valve" else 0.0
@@ -95,7 +98,7 @@ def start_warnings(plan: RunPlan) -> list[str]:
     ]
 
 
-def _room_text(plan: RunPlan) -> str:
+def _room_text(plan: AnyPlan) -> str:
     vessel = plan.vessel
     return f"{vessel.capacity_ml:g} mL less {vessel.displaced_ml:g} displaced and {vessel.margin_ml:g} margin"
 
@@ -119,7 +122,7 @@ class Guard:
     found passed, which ends the run.
     """
 
-    plan: RunPlan
+    plan: AnyPlan
     account: Account = field(init=False)
     breach: str | None = None
     _outside: int = 0
@@ -187,6 +190,8 @@ class Guard:
     def answered(self, key: str, answer: str) -> None:
         """Remember an answer: doses and priming depend on some."""
         self._answers[key] = answer
+        if key == VESSEL_EMPTIED and answer == "yes" and isinstance(self.plan, CalibrationPlan):
+            self.account.vessel_ml = self.plan.sample.initial_volume_ml
 
     def saw_time(self, at_s: float) -> None:
         """Judge the run time; past the bench's longest the run ends."""

@@ -11,13 +11,13 @@ from functools import lru_cache
 from typing import Any
 
 from configs.version import __version__
+from controller.calibration.plans import AnyPlan
 from controller.encoding import plan_to_json
 from controller.journal import Clock, encode, utc_text
-from controller.titration.plan import RunPlan
 
 
 def header_of(
-    plan: RunPlan,
+    plan: AnyPlan,
     *,
     devices: Mapping[str, Mapping[str, str]],
     operator_name: str | None,

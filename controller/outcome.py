@@ -9,6 +9,7 @@ from pathlib import PurePath
 from typing import Any
 
 from configs.errors import HalfdropError
+from controller.calibration.plans import AnyPlan
 from controller.execution import Execution
 from controller.stopping import STOP_EXIT_STATUS, StopSwitch
 from controller.titration.plan import RunPlan
@@ -52,7 +53,7 @@ class RunResult:
 
 
 def whole_result(
-    found: Mapping[str, Any], *, plan: RunPlan, execution: Execution, record: str, why_stopped: str | None
+    found: Mapping[str, Any], *, plan: AnyPlan, execution: Execution, record: str, why_stopped: str | None
 ) -> dict[str, Any]:
     """Return every promised key of a run's result.
 
@@ -82,9 +83,9 @@ def whole_result(
     }
 
 
-def add_amount(result: dict[str, Any], plan: RunPlan, amount_of: AmountOf | None) -> None:
+def add_amount(result: dict[str, Any], plan: AnyPlan, amount_of: AmountOf | None) -> None:
     """Put the amount into the result of a completed run; the end points stand where it cannot be computed."""
-    if amount_of is None or result["outcome"] != "completed":
+    if amount_of is None or result["outcome"] != "completed" or not isinstance(plan, RunPlan):
         return
     try:
         result["result"] = amount_of(plan, result)

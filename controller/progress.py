@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 from itertools import pairwise
 from statistics import median
 
+from controller.calibration.plans import AnyPlan
 from controller.titration.actions import Action, Dosed, Observation, Report
 from controller.titration.plan import RunPlan
 
@@ -39,13 +40,14 @@ class Progress:
 class Pace:
     """Estimates the time left from the forecast end point and the time that the last points took."""
 
-    plan: RunPlan
+    plan: AnyPlan
     _point_at_s: deque[float] = field(default_factory=lambda: deque(maxlen=_RECENT_POINTS + 1))
     _forecast_ml: float | None = None
     _doses_behind: int = 0
 
     def __post_init__(self) -> None:
-        self._forecast_ml = self.plan.chemistry.expected_equivalence_volume_ml
+        if isinstance(self.plan, RunPlan):
+            self._forecast_ml = self.plan.chemistry.expected_equivalence_volume_ml
 
     def saw(self, item: Action | Observation, at_s: float, delivered_ml: float) -> None:
         """Take in an entry."""
@@ -67,7 +69,8 @@ class Pace:
         far = math.log(ahead_ml / _NEAR_ML) / -math.log(1.0 - _FAR_SHARE) if ahead_ml > _NEAR_ML else 0.0
         near = _NEAR_DOSES * min(1.0, 0.5 + 0.5 * max(0.0, ahead_ml) / _NEAR_ML) - self._doses_behind
         left_s = each_s * (far + max(1.0, near))
-        return max(0.0, min(left_s, self.plan.limits.run_time_s - at_s))
+        longest_s = self.plan.limits.run_time_s if isinstance(self.plan, RunPlan) else self.plan.vessel.longest_run_s
+        return max(0.0, min(left_s, longest_s - at_s))
 
     def progress(self, item: Action | Observation, at_s: float, delivered_ml: float, doses: int) -> Progress:
         """Take in an entry and return what a watcher is told of it."""

@@ -13,6 +13,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.aftercare import ask_about_probe
+from controller.calibration.plans import AnyPlan
 from controller.clockwatch import ClockWatch
 from controller.execution import Devices, Execution
 from controller.guard import Guard, check_start, start_warnings
@@ -52,7 +53,7 @@ MOST_UNDONE = 50
 
 
 def run(
-    plan: RunPlan,
+    plan: AnyPlan,
     decisions: Decisions,
     devices: Devices,
     journal: Journal,
@@ -97,7 +98,8 @@ def run(
     header: dict[str, Any] | None = None
     if resumption is None:
         try:
-            check_start(plan)
+            if isinstance(plan, RunPlan):
+                check_start(plan)
             identities, pump_before_ml = check_devices(plan, devices)
             header = header_of(plan, devices=identities, operator_name=operator_name, hashes=hashes, clock=clock)
         except BaseException:
@@ -124,7 +126,7 @@ def run(
 class _Run:
     """One run while it goes on."""
 
-    plan: RunPlan
+    plan: AnyPlan
     decisions: Decisions
     devices: Devices
     journal: Journal

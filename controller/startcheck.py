@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from configs.errors import HalfdropError
+from controller.calibration.plans import AnyPlan
 from controller.execution import Devices
-from controller.titration.plan import RunPlan
 from drivers.errors import DeviceError
 
 
-def check_devices(plan: RunPlan, devices: Devices) -> tuple[dict[str, dict[str, str]], float]:
+def check_devices(plan: AnyPlan, devices: Devices) -> tuple[dict[str, dict[str, str]], float]:
     """Ask pump and probe who they are and hold it against the plan; nothing moves.
 
     Returns:
