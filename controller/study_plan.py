@@ -92,26 +92,7 @@ EQUAL_VOLUMES = Strategy(
 
 def nominal_plan(nominal: NominalBench, strategy: Strategy) -> RunPlan:
     """The plan of a nominal bench with what its user knows of it."""
-    known, bench = nominal.known, nominal.bench
-    medium = bench.medium
-    lag = known.lag
-    response = ProbeResponse(
-        bulk_s=lag.bulk_s,
-        film_s=lag.film_s,
-        slow_s=lag.slow_s,
-        slow_share=lag.slow_share,
-        dead_time_s=lag.dead_time_s,
-        time_relative_uncertainty=known.time_relative_uncertainty,
-        share_relative_uncertainty=known.share_relative_uncertainty,
-    )
-    calibration = ProbeCalibration(
-        slope_fraction=known.slope_fraction,
-        isopotential_ph=known.isopotential_ph,
-        isopotential_mv=known.isopotential_mv,
-        slope_fraction_standard_uncertainty=known.slope_fraction_standard_uncertainty,
-        offset_standard_uncertainty_mv=known.offset_standard_uncertainty_mv,
-    )
-    syringe = bench.truth.syringe
+    known, medium = nominal.known, nominal.bench.medium
     return RunPlan(
         schema_version=1,
         program_version="study",
@@ -132,46 +113,75 @@ def nominal_plan(nominal: NominalBench, strategy: Strategy) -> RunPlan:
             analyte=WeakAcid(name=nominal.case, pka=known.pka, charge=known.charge),
             expected_equivalence_volume_ml=known.expected_equivalence_ml,
         ),
-        probe=Probe(
-            identity="virtual probe",
-            signal="ph",
-            calibration=calibration,
-            response=response if strategy.with_record else None,
-            resolution_mv=bench.truth.electrode.resolution_mv,
-            reading_interval_s=READING_INTERVAL_S,
-        ),
-        pump=Pump(
-            identity="virtual pump",
-            start_count=1,
-            last_dose_number=0,
-            step_ml=STEP_ML,
-            rate_ml_min=RATE_ML_MIN,
-            syringe_ml=syringe.syringe_ml,
-            contents_ml=syringe.contents_ml,
-            reservoir_ml=100.0,
-            refill="valve",
-            position_sd_ml=syringe.position_sd_ml,
-            position_correlation_ml=syringe.position_correlation_ml,
-            dose_sd_ml=syringe.stop_sd_ml,
-            gain_standard_uncertainty=0.0,
-        ),
+        probe=_probe(nominal, strategy.with_record),
+        pump=_pump(nominal),
         dosing=strategy.dosing,
         settling=strategy.settling,
         end_points=EndPoints(expected=known.end_points, smallest_rise_mv=60.0, stop_at_last=True),
         limits=Limits(titrant_ml=9.0, run_time_s=7200.0, overrun_ml=1.0),
-        vessel=Vessel(
-            capacity_ml=100.0,
-            displaced_ml=5.0,
-            margin_ml=10.0,
-            tray_ml=500.0,
-            waste_ml=200.0,
-            largest_dose_ml=2.0,
-            highest_rate_ml_min=20.0,
-            longest_run_s=14400.0,
-            lowest_temperature_c=5.0,
-            highest_temperature_c=60.0,
-        ),
+        vessel=_VESSEL,
         questions=(),
         report_as=None,
         seed=nominal.seed,
+    )
+
+
+_VESSEL = Vessel(
+    capacity_ml=100.0,
+    displaced_ml=5.0,
+    margin_ml=10.0,
+    tray_ml=500.0,
+    waste_ml=200.0,
+    largest_dose_ml=2.0,
+    highest_rate_ml_min=20.0,
+    longest_run_s=14400.0,
+    lowest_temperature_c=5.0,
+    highest_temperature_c=60.0,
+)
+
+
+def _probe(nominal: NominalBench, with_record: bool) -> Probe:
+    known = nominal.known
+    response = ProbeResponse(
+        bulk_s=known.lag.bulk_s,
+        film_s=known.lag.film_s,
+        slow_s=known.lag.slow_s,
+        slow_share=known.lag.slow_share,
+        dead_time_s=known.lag.dead_time_s,
+        time_relative_uncertainty=known.time_relative_uncertainty,
+        share_relative_uncertainty=known.share_relative_uncertainty,
+    )
+    calibration = ProbeCalibration(
+        slope_fraction=known.slope_fraction,
+        isopotential_ph=known.isopotential_ph,
+        isopotential_mv=known.isopotential_mv,
+        slope_fraction_standard_uncertainty=known.slope_fraction_standard_uncertainty,
+        offset_standard_uncertainty_mv=known.offset_standard_uncertainty_mv,
+    )
+    return Probe(
+        identity="virtual probe",
+        signal="ph",
+        calibration=calibration,
+        response=response if with_record else None,
+        resolution_mv=nominal.bench.truth.electrode.resolution_mv,
+        reading_interval_s=READING_INTERVAL_S,
+    )
+
+
+def _pump(nominal: NominalBench) -> Pump:
+    syringe = nominal.bench.truth.syringe
+    return Pump(
+        identity="virtual pump",
+        start_count=1,
+        last_dose_number=0,
+        step_ml=STEP_ML,
+        rate_ml_min=RATE_ML_MIN,
+        syringe_ml=syringe.syringe_ml,
+        contents_ml=syringe.contents_ml,
+        reservoir_ml=100.0,
+        refill="valve",
+        position_sd_ml=syringe.position_sd_ml,
+        position_correlation_ml=syringe.position_correlation_ml,
+        dose_sd_ml=syringe.stop_sd_ml,
+        gain_standard_uncertainty=0.0,
     )

@@ -156,32 +156,7 @@ class _Fit:
         self, x: Array, prior_mean: Array, prior_sd: Array, distance_share: float
     ) -> tuple[Array | None, Array | None, float]:
         """One Gauss-Newton pass with weights at x: the step, the inverse normal matrix, reduced chi-square."""
-        s, m = self.setting, len(self.nominal)
-        veq, k, rel, d, acid = float(x[0]), x[1 : m + 1], float(x[m + 1]), float(x[m + 2]), float(x[m + 3])
-        free_acid = acid * self.h / self.cb
-        base = rel * self._prior_base(veq)
-        b = self.powers * k[:, None]
-        inner = self.w - veq * (1.0 - self.order * s.ladder.share)[:, None] + (self.order * d * veq)[:, None]
-        total = self.v0 + self.v
-        f = self.v - veq + total * (free_acid - base * self.oh) + (b * inner).sum(axis=0)
-        slope = 1.0 + free_acid - base * self.oh + (b * (1.0 + self.used)).sum(axis=0)  # dF/dV
-        slope = np.where(slope > 0.02, slope, 0.02)
-        # dF/dq at fixed V gives dV/dq = -F_q / F_V
-        f_q = total * (-free_acid - base * self.oh)
-        w_q = -total * (self.h + self.oh) / self.cb
-        f_q = f_q + (b * (w_q - self.order[:, None] * inner)).sum(axis=0)
-        per_mv = np.abs(_LN10 * f_q / slope) / s.slope_mv
-        sd = np.sqrt((self.sd_e * per_mv) ** 2 + self.sd_v**2 + (distance_share * (self.v - veq)) ** 2)
-        scale = 1.0 / (slope * sd)
-        jacobian = np.empty((self.v.size, m + 4))
-        shares = (1.0 - self.order * s.ladder.share - self.order * d)[:, None]
-        jacobian[:, 0] = -1.0 - (b * shares).sum(axis=0)
-        jacobian[:, 1 : m + 1] = (self.powers * inner).T
-        jacobian[:, m + 1] = -total * self.oh * base / rel
-        jacobian[:, m + 2] = veq * (b * self.order[:, None]).sum(axis=0)
-        jacobian[:, m + 3] = total * self.h / self.cb
-        jacobian *= scale[:, None]
-        r = f * scale
+        r, jacobian = self._weighted(x, distance_share)
         if not (np.isfinite(jacobian).all() and np.isfinite(r).all()):
             return None, None, math.inf
         precision = 1.0 / prior_sd**2
@@ -197,6 +172,37 @@ class _Fit:
         from_prior = (x + step - prior_mean)[1:] / prior_sd[1:]
         chi = (float(after @ after) + float(from_prior @ from_prior)) / max(1, self.v.size - 1)
         return step, inverse, chi
+
+    def _weighted(self, x: Array, distance_share: float) -> tuple[Array, Array]:
+        """Misfit F of the balance at each point, in standard deviations of volume, and its derivatives by x.
+
+        Returns:
+            Shapes (n,) and (n, m + 4); columns as in `run`.
+        """
+        s, m = self.setting, len(self.nominal)
+        veq, k, rel, d, acid = float(x[0]), x[1 : m + 1], float(x[m + 1]), float(x[m + 2]), float(x[m + 3])
+        free_acid = acid * self.h / self.cb
+        base = rel * self._prior_base(veq)
+        b = self.powers * k[:, None]
+        inner = self.w - veq * (1.0 - self.order * s.ladder.share)[:, None] + (self.order * d * veq)[:, None]
+        total = self.v0 + self.v
+        f = self.v - veq + total * (free_acid - base * self.oh) + (b * inner).sum(axis=0)
+        slope = 1.0 + free_acid - base * self.oh + (b * (1.0 + self.used)).sum(axis=0)  # dF/dV
+        slope = np.where(slope > 0.02, slope, 0.02)
+        # dF/dq at fixed V gives dV/dq = -F_q / F_V
+        w_q = -total * (self.h + self.oh) / self.cb
+        f_q = total * (-free_acid - base * self.oh) + (b * (w_q - self.order[:, None] * inner)).sum(axis=0)
+        per_mv = np.abs(_LN10 * f_q / slope) / s.slope_mv
+        sd = np.sqrt((self.sd_e * per_mv) ** 2 + self.sd_v**2 + (distance_share * (self.v - veq)) ** 2)
+        scale = 1.0 / (slope * sd)
+        jacobian = np.empty((self.v.size, m + 4))
+        shares = (1.0 - self.order * s.ladder.share - self.order * d)[:, None]
+        jacobian[:, 0] = -1.0 - (b * shares).sum(axis=0)
+        jacobian[:, 1 : m + 1] = (self.powers * inner).T
+        jacobian[:, m + 1] = -total * self.oh * base / rel
+        jacobian[:, m + 2] = veq * (b * self.order[:, None]).sum(axis=0)
+        jacobian[:, m + 3] = total * self.h / self.cb
+        return f * scale, jacobian * scale[:, None]
 
     def _result(self, x: Array, inverse: Array | None, chi: float) -> InverseFit | None:
         if inverse is None or not math.isfinite(chi):

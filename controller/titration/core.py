@@ -22,6 +22,7 @@ from controller.titration.points import PhScale, Point
 from controller.titration.policies import dosing_policy, settling_rule
 from controller.titration.precision import near_ml, pump_precision_ml
 from controller.titration.probewatch import ProbeWatch
+from controller.titration.reasons import dose_reason
 from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule
 
 #: change of temperature during a run that is warned about
@@ -103,13 +104,17 @@ class _Run:
                 f"successive readings hang together (correlation {noise.correlation:.2f}): averages are worth less"
             )
         level = sum(potentials[-3:]) / 3.0
-        yield from self._take(Accepted(volume_ml=0.0, volume_sd_ml=0.0, potential_mv=level, settled=True), "start")
+        start_ml = self.world.delivered_ml  # 0 unless the operator dosed by hand
+        yield from self._take(Accepted(volume_ml=start_ml, volume_sd_ml=0.0, potential_mv=level, settled=True), "start")
 
     def _rest_readings(self) -> Talk[tuple[list[float], list[float]]]:
         potentials: list[float] = []
         temperatures: list[float] = []
         while len(potentials) < READINGS:
             reading = yield from self.world.read()
+            if self.world.disturbed:  # not at rest: a dose by hand, a gap
+                self.world.disturbed = False
+                potentials, temperatures = [], []
             if self.probe.is_good(reading):
                 potentials.append(reading.potential_mv)
                 if reading.temperature_c is not None:
@@ -126,27 +131,19 @@ class _Run:
             planned = self._doser.next_dose(self.points, self.forecast.sound, self.world.delivered_ml)
             volume_ml = largest_dose_ml(self.plan, self.world, planned.volume_ml)
             before = self.world.delivered_ml
-            yield from self.world.dose(volume_ml, self._reason(planned, volume_ml))
+            reason = dose_reason(
+                self.world.doses + 1,
+                volume_ml,
+                planned,
+                self.forecast.sound,
+                potential_rises=self._potential_rises(),
+            )
+            yield from self.world.dose(volume_ml, reason)
             if self.world.delivered_ml == before:
                 continue
             accepted = yield from self._settle(planned)
             yield from self._take(accepted, accepted.text)
             yield from self._look()
-
-    def _reason(self, planned: PlannedDose, volume_ml: float) -> str:
-        text = f"dose {self.world.doses + 1}: {volume_ml:.4f} mL"
-        if planned.expected_mv is not None:
-            scale = volume_ml / planned.volume_ml if planned.volume_ml > 0.0 else 1.0
-            sign = "+" if self._potential_rises() else "-"
-            text += f", expecting {sign}{planned.expected_mv * scale:.0f} mV ({planned.why})"
-        else:
-            text += f" ({planned.why})"
-        sound = self.forecast.sound
-        if sound is not None:
-            veq, sd = sound.equivalence_ml, sound.standard_uncertainty_ml
-            digits = 3 if sd >= 0.0095 else 4
-            text += f"; equivalence predicted at {veq:.{digits}f} +/- {sd:.{digits}f} mL"
-        return text
 
     def _potential_rises(self) -> bool:
         """Does the potential rise with titrant: as the titrant has it, or as the points show where there is no pH?"""
@@ -157,7 +154,7 @@ class _Run:
     def _settle(self, planned: PlannedDose) -> Talk[Accepted]:
         """Read until the rule accepts a point."""
         world, interval_s = self.world, self.plan.probe.reading_interval_s
-        context = self._context(planned)
+        context = self._context(planned, self.world.log[-1][1])
         self._settler.begin(context)
         world.disturbed = False
         self._readings = 0
@@ -166,7 +163,7 @@ class _Run:
             reading = yield from world.read()
             if world.disturbed:  # by hand, a gap, a failure: the wait starts over
                 world.disturbed = False
-                context = self._context(planned)
+                context = self._context(planned, reading.at_s - interval_s)
                 self._settler.begin(context)
                 self._readings = 0
             if world.elapsed_s > self.plan.limits.run_time_s:
@@ -187,7 +184,7 @@ class _Run:
         )
         self._temperature_c = temperature_c
 
-    def _context(self, planned: PlannedDose) -> SettlingContext:
+    def _context(self, planned: PlannedDose, begun_s: float) -> SettlingContext:
         sound = self.forecast.sound
         slope = local_slope(self.points)
         if sound is not None:
@@ -197,7 +194,7 @@ class _Run:
             except (ZeroDivisionError, OverflowError):
                 pass
         return SettlingContext(
-            at_s=self.world.log[-1][1] if not self.world.disturbed else self.world.now_s or 0.0,
+            at_s=begun_s,
             delivered_ml=self.world.delivered_ml,
             noise_mv=self.probe.noise.sd_mv,
             points=len(self.points),

@@ -88,17 +88,7 @@ class EndPointWatch:
         points = self._spaced(section)
         if len(points) < 6:
             return None
-        slopes, errors, middles = [], [], []
-        for a, b in itertools.pairwise(points):
-            dv = b.volume_ml - a.volume_ml
-            slope = abs(b.potential_mv - a.potential_mv) / dv
-            slopes.append(slope)
-            errors.append(
-                math.hypot(
-                    a.potential_sd_mv / dv, b.potential_sd_mv / dv, slope * self._dose_sd_ml * math.sqrt(2.0) / dv
-                )
-            )
-            middles.append(0.5 * (a.volume_ml + b.volume_ml))
+        slopes, errors, middles = self._slopes(points)
         peak = max(range(len(slopes)), key=lambda i: round(slopes[i], 3))
         height = slopes[peak]
         after = slopes[peak + 1 :]
@@ -125,6 +115,18 @@ class EndPointWatch:
             ph=nearest.ph,
             potential_mv=round(nearest.potential_mv, 2),
         )
+
+    def _slopes(self, points: Sequence[Point]) -> tuple[list[float], list[float], list[float]]:
+        """|dE/dV| between neighbours, its standard error, and the volume half-way."""
+        slopes, errors, middles = [], [], []
+        for a, b in itertools.pairwise(points):
+            dv = b.volume_ml - a.volume_ml
+            slope = abs(b.potential_mv - a.potential_mv) / dv
+            by_volume = slope * self._dose_sd_ml * math.sqrt(2.0) / dv
+            slopes.append(slope)
+            errors.append(math.hypot(a.potential_sd_mv / dv, b.potential_sd_mv / dv, by_volume))
+            middles.append(0.5 * (a.volume_ml + b.volume_ml))
+        return slopes, errors, middles
 
     def _spaced(self, section: Sequence[Point]) -> list[Point]:
         """Points at least half a smallest dose apart (compositions of a lagging probe may nearly coincide)."""
