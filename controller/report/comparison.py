@@ -33,5 +33,5 @@ def _bars(axes: object, values: list[tuple[MethodOutcome, tuple[float, ...]]], t
         drawn.plot([place], [middle], marker=marker, color=colour, markersize=6, linestyle="none")
     drawn.set_title(title)
     drawn.set_xlim(-0.6, 1.6)
-    drawn.set_ylim(bottom=0.0)
+    drawn.set_ylim(0.0, 1.12 * max(highest for _, (_, _, highest) in values))
     drawn.set_xticks([0, 1], ["run's own", "other"])

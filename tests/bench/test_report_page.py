@@ -1,0 +1,286 @@
+"""The report of a whole run: what stands in it, nothing in it from outside, hostile text stays text."""
+
+from __future__ import annotations
+
+import base64
+import json
+import subprocess
+import sys
+import xml.etree.ElementTree as ET
+from collections.abc import Callable
+from html.parser import HTMLParser
+from pathlib import Path
+
+import pytest
+
+from controller.cli import main
+from controller.record import list_records, read_record, verify
+from controller.report.contents import report_contents
+from controller.report.page import render
+from controller.report.wording import local_time
+
+Run = Callable[..., tuple[int, str, str]]
+HOSTILE = (
+    "<script>alert(1)</script>\"'><img src=x onerror=alert(2)>&amp; =cmd|' /C calc'!A0 \x1b[31mred\x07"
+    " {{ 7 * 7 }} $x^2$"
+)
+VOID = {"meta", "img", "br", "hr", "link", "input"}
+
+
+class Page(HTMLParser):
+    """Every element with its attributes, every text, and the tags that did not close in order."""
+
+    def __init__(self, text: str) -> None:
+        super().__init__()
+        self.elements: list[tuple[str, dict[str, str | None]]] = []
+        self.texts: list[str] = []
+        self.open: list[str] = []
+        self.wrong: list[str] = []
+        self.feed(text)
+        self.close()
+
+    def handle_starttag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
+        self.elements.append((tag, dict(attrs)))
+        if tag not in VOID:
+            self.open.append(tag)
+
+    def handle_endtag(self, tag: str) -> None:
+        if not self.open or self.open.pop() != tag:
+            self.wrong.append(tag)
+
+    def handle_data(self, data: str) -> None:
+        self.texts.append(data)
+
+    def all(self, tag: str) -> list[dict[str, str | None]]:
+        return [attributes for name, attributes in self.elements if name == tag]
+
+    @property
+    def text(self) -> str:
+        return " ".join(" ".join(self.texts).split())
+
+
+@pytest.fixture(autouse=True)
+def _own_state(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
+    monkeypatch.setenv("LOCALAPPDATA", str(tmp_path / "state"))
+    monkeypatch.delenv("HALFDROP_LAB", raising=False)
+    monkeypatch.chdir(tmp_path)
+
+
+@pytest.fixture(scope="module")
+def runs(tmp_path_factory: pytest.TempPathFactory) -> list[Path]:
+    """Two runs of juice and one of wash water, made once."""
+    folder = tmp_path_factory.mktemp("report")
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("XDG_STATE_HOME", str(folder / "state"))
+        patch.setenv("LOCALAPPDATA", str(folder / "state"))
+        lab = folder / "cider-lab"
+        assert main(["init", str(lab)]) == 0
+        for method, seed in (("juice-acidity", "1"), ("juice-acidity", "2"), ("wash-water-alkalinity", "4")):
+            given = ["run", method, "--lab", str(lab), "--seed", seed, "--operator", HOSTILE, "--sample-id", HOSTILE]
+            assert main([*given, "--headless"]) == 0
+    return list_records(lab / "runs")
+
+
+@pytest.fixture(scope="module")
+def page(runs: list[Path]) -> Page:
+    contents = report_contents(read_record(runs[0]), written_utc="2026-12-01T15:00:00Z", replicates=[])
+    return Page(render(contents))
+
+
+def test_the_page_is_well_formed_and_takes_nothing_from_outside(page: Page) -> None:
+    assert page.wrong == []
+    assert page.open == []
+    tags = {name for name, _ in page.elements}
+    assert not tags & {"script", "iframe", "object", "embed", "link", "form", "base", "a", "audio", "video"}
+    for _, attributes in page.elements:
+        assert not [name for name in attributes if name.startswith("on")]
+        assert not set(attributes) & {"href", "srcset", "background", "style"}
+    for image in page.all("img"):
+        assert str(image["src"]).startswith("data:image/svg+xml;base64,")
+    policies = [m["content"] for m in page.all("meta") if m.get("http-equiv") == "Content-Security-Policy"]
+    assert policies == ["default-src 'none'; img-src data:; style-src 'unsafe-inline'"]
+
+
+def test_hostile_text_stays_text(page: Page) -> None:
+    assert "<script>alert(1)</script>" in page.text
+    assert "{{ 7 * 7 }}" in page.text
+    assert not [c for text in page.texts for c in text if not c.isprintable() and c not in "\n\t"]
+    assert len(page.all("img")) == 3  # curve, Gran plot, residuals: none of the operator's
+
+
+def test_every_figure_has_words_and_every_table_heads(page: Page) -> None:
+    for image in page.all("img"):
+        assert len(str(image["alt"])) > 30
+    assert all(head.get("scope") in ("col", "row") for head in page.all("th"))
+    assert len(page.all("table")) == len(page.all("caption"))
+    assert page.all("html") == [{"lang": "en"}]
+    assert any("end points at 7.3" in str(image["alt"]) for image in page.all("img"))
+
+
+def test_figures_are_self_contained_and_need_no_font(page: Page) -> None:
+    for image in page.all("img"):
+        svg = base64.b64decode(str(image["src"]).partition(",")[2]).decode()
+        tags = {element.tag.rpartition("}")[2] for element in ET.fromstring(svg).iter()}
+        assert not tags & {"text", "script", "image", "style"} - {"style"}
+        assert "date" not in tags
+        assert "alert" not in svg
+
+
+def test_the_page_says_what_a_reader_must_know(runs: list[Path], page: Page) -> None:
+    record = read_record(runs[0])
+    result = record.closing["result"]
+    for text in (
+        "Simulated bench (seed 1): no real sample was titrated.",
+        f"{result['result']['value']:.3f} ± {result['result']['expanded_uncertainty']:.3f}",
+        "as malic acid",
+        "intact",
+        str(record.closing["last_sha256"]),
+        record.header["plan_sha256"],
+        record.header["hashes"]["method"],
+        "burette gain",
+        "charge-balance fit",
+        "NaOH-2026-11",
+        local_time(record.header["plan"]["probe"]["calibration"]["calibrated_utc"], record.header["lab_utc_offset"]),
+        "Eyes and hands protected",
+        "dose 3:",
+        "Safety data sheets",
+        "Monte Carlo",
+    ):
+        assert text in page.text, text
+    assert f"{record.header['started_utc'][:10]} " in page.text
+    for warning in result["warnings"]:
+        assert warning in page.text
+    details = page.all("details")
+    assert details
+    assert all("open" not in one for one in details)
+
+
+def test_one_record_gives_the_same_page_twice(runs: list[Path]) -> None:
+    pages = [
+        render(report_contents(read_record(runs[2]), written_utc="2026-12-01T15:00:00Z")) for _ in range(2)
+    ]  # fmt: skip
+    assert pages[0] == pages[1]
+    assert "foams" in pages[0]  # a carbonate sample with acid
+    assert "hypochlorite" in pages[0]
+
+
+def test_replicates_have_mean_spread_and_their_test(runs: list[Path]) -> None:
+    first, second = read_record(runs[0]), read_record(runs[1])
+    text = Page(render(report_contents(first, written_utc="2026-12-01T15:00:00Z", replicates=[second]))).text
+    values = [one.closing["result"]["result"]["value"] for one in (first, second)]
+    assert f"Mean of 2: {sum(values) / 2:.3f}" in text
+    assert "Grubbs' test needs three values or more" in text
+    mixed = Page(
+        render(report_contents(first, written_utc="2026-12-01T15:00:00Z", replicates=[read_record(runs[2])]))
+    ).text
+    assert "No mean: the runs report different substances or units." in mixed
+
+
+def test_an_edited_or_open_record_is_told_on_the_page(runs: list[Path], tmp_path: Path) -> None:
+    data = runs[0].read_bytes()
+    edited = tmp_path / "edited.jsonl"
+    edited.write_bytes(data.replace(b'"volume_ml":0.1,', b'"volume_ml":0.2,', 1))
+    text = Page(render(report_contents(read_record(edited), written_utc="2026-12-01T15:00:00Z"))).text
+    assert "not as the program wrote it" in text
+    opened = tmp_path / "open.jsonl"
+    opened.write_bytes(data[: data.rstrip(b"\n").rfind(b"\n") + 1])
+    text = Page(render(report_contents(read_record(opened), written_utc="2026-12-01T15:00:00Z"))).text
+    assert "no closing line" in text
+    assert "no amount" in text
+
+
+def test_a_record_cut_off_before_any_point_still_has_a_page(runs: list[Path], tmp_path: Path) -> None:
+    lines = runs[0].read_bytes().splitlines(keepends=True)
+    cut = tmp_path / "cut.jsonl"
+    cut.write_bytes(b"".join(lines[:12]))
+    text = Page(render(report_contents(read_record(cut), written_utc="2026-12-01T15:00:00Z"))).text
+    assert "No figures" in text
+    assert "not answered" not in text.partition("Questions and answers")[0]
+
+
+@pytest.fixture
+def halfdrop(capsys: pytest.CaptureFixture[str]) -> Run:
+    def run(*arguments: str) -> tuple[int, str, str]:
+        try:
+            status = main(list(arguments))
+        except SystemExit as end:
+            status = int(end.code or 0)
+        said = capsys.readouterr()
+        return status, said.out, said.err
+
+    return run
+
+
+def test_the_command_writes_into_the_lab_folder_and_replaces_only_reports(halfdrop: Run, runs: list[Path]) -> None:
+    lab = runs[0].parent.parent
+    status, out, _ = halfdrop("runs", "report", runs[0].stem, "--lab", str(lab), "--json")
+    assert status == 0
+    told = json.loads(out)
+    written = Path(told["report"])
+    assert written == lab / "reports" / f"{runs[0].stem}.html"
+    assert told["record"]["state"] == "intact"
+    assert halfdrop("runs", "report", runs[0].stem, "--lab", str(lab))[0] == 0  # an earlier report may go
+    other = lab / "reports" / "notes.html"
+    other.write_text("<p>mine</p>", encoding="utf-8")
+    status, _, err = halfdrop("runs", "report", runs[0].stem, "--lab", str(lab), "--to", str(other))
+    assert status == 2
+    assert "no report is in the way" in err
+    assert other.read_text(encoding="utf-8") == "<p>mine</p>"
+    assert not list((lab / "reports").glob("*.part"))
+
+
+def test_an_edited_record_ends_the_command_with_status_1(halfdrop: Run, runs: list[Path], tmp_path: Path) -> None:
+    edited = tmp_path / "edited.jsonl"
+    edited.write_bytes(runs[0].read_bytes().replace(b'"volume_ml":0.1,', b'"volume_ml":0.2,', 1))
+    status, out, _ = halfdrop("runs", "report", str(edited))
+    assert status == 1
+    assert "edited" in out
+    assert "\x1b" not in out
+    assert (tmp_path / "edited.html").is_file()
+
+
+def test_a_run_loads_neither_matplotlib_nor_jinja2(runs: list[Path]) -> None:
+    modules = (
+        "controller.assembly", "controller.runner", "controller.commands.run", "controller.evaluate_record",
+        "controller.report.export", "controller.reevaluation", "controller.commands.evaluate", "controller.commands.runs",
+    )  # fmt: skip
+    code = f"import sys, {', '.join(modules)}; print(sorted({{'matplotlib', 'jinja2'}} & set(sys.modules)))"
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "[]"
+
+
+def test_evaluations_are_added_beside_the_record_and_shown(halfdrop: Run, runs: list[Path]) -> None:
+    record, lab = runs[1], str(runs[1].parent.parent)
+    before = record.read_bytes()
+    for reason in ("newer program", HOSTILE):
+        status, out, err = halfdrop("evaluate", record.stem, "--lab", lab, "--add", "--reason", reason)
+        assert status == 0, err
+        assert "added beside the record" in out
+    assert record.read_bytes() == before
+    assert verify(record).state == "intact"
+    assert [path.name for path in list_records(record.parent)] == [path.name for path in runs]
+    _, out, _ = halfdrop("runs", "show", record.stem, "--lab", lab)
+    assert "evaluated again, no. 1" in out
+    assert "\x1b" not in out
+    told = json.loads(halfdrop("runs", "show", record.stem, "--lab", lab, "--json")[1])["added_evaluations"]
+    assert [one["state"] for one in told] == ["intact", "intact"]
+    own = read_record(record).closing["result"]["end_points"][0]
+    again = told[0]["result"]["end_points"][0]
+    assert again["volume_ml"] == pytest.approx(own["volume_ml"], abs=2e-7)
+    assert again["standard_uncertainty_ml"] == pytest.approx(own["standard_uncertainty_ml"], rel=0.01)
+    text = Page(render(report_contents(read_record(record), written_utc="2026-12-01T15:00:00Z"))).text
+    assert "Evaluations side by side" in text
+    assert "newer program" in text
+    told_path = Path(told[0]["path"])
+    told_path.write_bytes(told_path.read_bytes().replace(b"newer program", b"older program"))
+    text = Page(render(report_contents(read_record(record), written_utc="2026-12-01T15:00:00Z"))).text
+    assert "FILE EDITED" in text
+
+
+def test_add_needs_a_record(halfdrop: Run, tmp_path: Path) -> None:
+    table = tmp_path / "curve.csv"
+    table.write_text("volume_ml,ph\n0,3\n1,4\n2,5\n3,6\n4,10\n5,11\n", encoding="utf-8")
+    status, _, err = halfdrop("evaluate", str(table), "--add")
+    assert status == 2
+    assert "beside a record" in err
