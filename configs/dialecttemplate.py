@@ -1,9 +1,9 @@
 """Templates of a device's commands and replies: plain text with named places in angle brackets, nothing else.
 
-`PUSH <volume> NL` is a command with one place, `V=<delivered>;<state>` a reply with two. A blank stands for one blank or
-more in a reply and for itself in a command. `<skip>` stands for text of no interest; `<<` and `>>` are the brackets
-themselves. There is no repetition, no choice and no expression, so that reading a reply takes time in proportion to its
-length, whatever the device sends.
+`PUSH <volume> NL` is a command with one place, `V=<delivered>;<state>` a reply with two. A blank stands for one blank
+or more in a reply and for itself in a command. `<skip>` stands for text of no interest; `<<` and `>>` are the brackets
+themselves. There is no repetition, no choice and no expression, so that reading a reply takes time in proportion to
+its length, whatever the device sends.
 """
 
 from __future__ import annotations

@@ -6,14 +6,20 @@ from pathlib import Path
 from typing import Any, Literal
 
 from configs.benchfile import BenchSettings
+from configs.dialectfile import DialectSettings
 from configs.fields import Settings, unit_of
 from configs.loading import Problem, load, parse, read_document, read_file, settings_error
 from configs.method import MethodSettings
 from configs.shipped import shipped_bytes, shipped_names
 from configs.solutionfile import SolutionSettings
 
-Kind = Literal["method", "bench", "solution"]
-MODELS: dict[Kind, type[Settings]] = {"method": MethodSettings, "bench": BenchSettings, "solution": SolutionSettings}
+Kind = Literal["method", "bench", "solution", "dialect"]
+MODELS: dict[Kind, type[Settings]] = {
+    "method": MethodSettings,
+    "bench": BenchSettings,
+    "solution": SolutionSettings,
+    "dialect": DialectSettings,
+}
 LONGEST_ANSWER = 400
 
 
@@ -30,6 +36,18 @@ def load_bench(path: str | Path) -> BenchSettings:
 def load_solution(path: str | Path) -> SolutionSettings:
     """Return the two mixtures of a solution file. Raises: SettingsError with every problem."""
     return load(path, SolutionSettings)
+
+
+def load_dialect(named: str, beside: Path | None = None) -> DialectSettings:
+    """Return a dialect by file (relative to `beside`, the bench file's folder) or by the name of a shipped one.
+
+    Raises:
+        SettingsError: with every problem of the file.
+        HalfdropError: nothing of this name ships.
+    """
+    if named.endswith((".yaml", ".yml")) or Path(named).name != named:
+        return load((beside or Path()) / named, DialectSettings)
+    return shipped_dialect(named)
 
 
 def load_answers(path: str | Path) -> dict[str, str]:
@@ -73,6 +91,16 @@ def shipped_method(name: str) -> MethodSettings:
 def shipped_bench(name: str = "simulated") -> BenchSettings:
     """Return a shipped bench. Raises: HalfdropError where nothing of this name ships."""
     return parse(shipped_bytes("benches", name), BenchSettings, where=f"benches/{name}.yaml")
+
+
+def shipped_dialects() -> tuple[str, ...]:
+    """Return the names of the dialects that ship with the program."""
+    return shipped_names("dialects")
+
+
+def shipped_dialect(name: str) -> DialectSettings:
+    """Return a shipped dialect. Raises: HalfdropError where nothing of this name ships."""
+    return parse(shipped_bytes("dialects", name), DialectSettings, where=f"dialects/{name}.yaml")
 
 
 def schema(kind: Kind) -> dict[str, Any]:

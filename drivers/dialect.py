@@ -1,7 +1,7 @@
 """The grammar of a dialect, without I/O: templates become bytes, lines that come back become values.
 
-A reply is matched by a pattern built from the template alone: text as it stands, and bounded fields between. No field can
-hold the letter that ends it, so a line is read in time proportional to its length.
+A reply is matched by a pattern built from the template alone: text as it stands, and bounded fields between. No field
+can hold the letter that ends it, so a line is read in time proportional to its length.
 """
 
 from __future__ import annotations

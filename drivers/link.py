@@ -57,8 +57,8 @@ def open_link(
 class Link:
     """A line to one device. One owner, one thread; see `open_link`.
 
-    `greet` is called when the port was lost and is open again, before anything else is sent: it makes sure that the same
-    device answers, and raises where not. `openings` counts how often the port was opened.
+    `greet` is called when the port was lost and is open again, before anything else is sent: it makes sure that the
+    same device answers, and raises where not. `openings` counts how often the port was opened.
     """
 
     def __init__(
@@ -80,6 +80,7 @@ class Link:
         self._reader = FrameReader(settings.reply_end)
         self._frames: deque[bytes | None] = deque()
         self._find, self._lost = find, False
+        self._failure: DeviceGoneError | None = None
         self.greet: Callable[[], None] | None = None
         self.openings = 0
 
@@ -104,7 +105,7 @@ class Link:
                 raise
             raise self._gone(*why_not_opened(self.url, failure)) from failure
         self.openings += 1
-        self._lost = False
+        self._lost, self._failure = False, None
         if self._manual is not None and self._line is not None:
             self._line.clear()
             self._line.attached = True
@@ -143,11 +144,12 @@ class Link:
             DeviceGoneError: the port failed, or was lost and is not there again.
             DeviceSilentError: the port takes no bytes.
         """
-        if self._lost and not moves:
+        if self._lost and not moves and self._failure is None:
             self._open_again()
         port = self._opened()
         try:
             self._drain(port)
+            port = self._opened()
             written = port.write(data)
         except Exception as failure:
             self._fail(failure)
@@ -162,11 +164,12 @@ class Link:
         Raises:
             DeviceGoneError: as `send`.
         """
-        if self._lost:
+        if self._lost and self._failure is None:
             self._open_again()
         port = self._opened()
         try:
             self._take_waiting(port)
+            self._opened()
         except Exception as failure:
             self._fail(failure)
         self._frames.clear()
@@ -180,6 +183,7 @@ class Link:
         while self._reader.waiting < count:
             if self._manual is not None:
                 self._manual.settle()
+                self._opened()
                 if self._reader.waiting >= count or self._manual.now_s() >= deadline_s:
                     break
                 self._manual.step(deadline_s)
@@ -200,6 +204,7 @@ class Link:
             stopped = stop is not None and stop.is_set()
             if self._manual is not None:
                 self._manual.settle()
+                self._opened()
                 if self._frames:
                     break
                 if self._manual.now_s() < deadline_s and not stopped:
@@ -231,7 +236,10 @@ class Link:
         if line is None or self._port is None:
             return False
         if line.broken:
-            self._take_some()  # shows how the port fails
+            try:
+                self._take_some()  # shows how the port fails
+            except DeviceGoneError as gone:
+                self._failure = gone  # told to whoever uses the link next, not to who waits for time to pass
             return False
         missing = line.device_written - line.link_taken
         if not missing:
@@ -311,6 +319,9 @@ class Link:
 
     def _opened(self) -> Transport:
         if self._port is None:
+            failure, self._failure = self._failure, None
+            if failure is not None:
+                raise failure
             raise self._gone(
                 "the port was lost" if self._lost else "the port is not open", "Check the cable, then go on"
             )

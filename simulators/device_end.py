@@ -5,7 +5,7 @@ from __future__ import annotations
 import time
 from collections import deque
 from collections.abc import Callable
-from typing import Protocol
+from typing import Protocol, runtime_checkable
 
 from configs.errors import HalfdropError
 from drivers.clock import Clock, Line, ManualClock, real_seconds_scale
@@ -30,6 +30,13 @@ class Device(Protocol):
     def next_event_s(self) -> float:
         """When something next happens of itself."""
         ...
+
+
+@runtime_checkable
+class RealTimed(Protocol):
+    """A device with a watchdog, which counts real seconds: `time_scale` is run time in one real second."""
+
+    time_scale: float
 
 
 class LostBytesError(HalfdropError):
@@ -133,6 +140,6 @@ class VirtualPort:
             self._send(reply)
 
     def _send(self, reply: bytes) -> None:
-        if self._manual and not self.line.attached:
+        if self.line.broken or (self._manual and not self.line.attached):
             return
         self.line.device_written += self.route.give(reply)

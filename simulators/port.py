@@ -18,8 +18,7 @@ from typing import Literal, Self
 
 from drivers.clock import Clock, ManualClock, real_seconds_scale
 from drivers.link import SLICE_S
-from simulators.device_end import Device, VirtualPort
-from simulators.devices import PumpDevice
+from simulators.device_end import Device, RealTimed, VirtualPort
 from simulators.routes import MOST_BYTES, MemoryRoute, TcpRoute
 
 RouteName = Literal["memory", "pty", "tcp"]
@@ -100,9 +99,11 @@ class VirtualPorts:
             port.route = MemoryRoute(name, self._serve_memory, read_wait_s=wait_s)
         else:
             port.route = PtyRoute() if route == "pty" else TcpRoute(tcp_port=tcp_port)
-        if isinstance(device, PumpDevice):
+        if isinstance(device, RealTimed):
             device.time_scale = self._scale
         with self._lock:
+            for former in [known for known, held in self.ports.items() if held.device is device and held.line.broken]:
+                self._forget(self.ports.pop(former))
             self.ports[name] = port
         if self._manual is not None:
             self._manual.add_line(port.url, port.line)
@@ -122,6 +123,11 @@ class VirtualPorts:
         if isinstance(gone.route, PtyRoute):
             route = "pty"
         return self.add(other_name or name, gone.device, route, latency_s=gone.latency_s)
+
+    def _forget(self, port: VirtualPort) -> None:
+        if self._manual is not None:
+            self._manual.leave(port)
+            self._manual.drop_line(port.url)
 
     def close(self) -> None:
         """End all lines and the serving thread."""

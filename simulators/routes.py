@@ -159,6 +159,7 @@ class TcpRoute:
 
     def give(self, data: bytes) -> int:
         """Send to the link, if there is one."""
+        self._welcome()
         if self._peer is None:
             return 0
         try:

@@ -166,6 +166,10 @@ class Fault:
         self._chosen = False
         port.spoil_request, port.spoil_reply = self._on_request, self._on_reply
 
+    def hit_from(self, clock: ManualClock, at_s: float) -> None:
+        """Begin to spoil at a time only."""
+        hit, self._hit = self._hit, lambda data: clock.now_s() >= at_s and hit(data)
+
     def _on_request(self, data: bytes) -> bytes:
         self._chosen = self.spoilt < self._times and self._hit(data)
         if self._chosen and self._request is not None:
@@ -178,6 +182,18 @@ class Fault:
             self.spoilt += 1
             return self._reply(data)
         return data
+
+
+@pytest.fixture
+def plain_mechanism() -> PlainMechanism:
+    """A faultless syringe."""
+    return PlainMechanism()
+
+
+@pytest.fixture
+def plain_sensor() -> PlainSensor:
+    """A sensor that tells time and index."""
+    return PlainSensor()
 
 
 @pytest.fixture

@@ -1,0 +1,387 @@
+"""A syringe pump that speaks a dialect: it knows no dose numbers, its count of what it delivered stands in for them."""
+
+from __future__ import annotations
+
+import contextlib
+import threading
+from typing import TYPE_CHECKING
+
+from drivers.clock import Clock
+from drivers.dialect_account import DialectAccount, Tally
+from drivers.dialect_push import POLL_S, DialectPush
+from drivers.dialect_talk import ATTEMPTS, DialectTalk
+from drivers.errors import (
+    DeviceError,
+    DeviceGarbledError,
+    DeviceRefusedError,
+    DeviceSilentError,
+    DoseUnknownError,
+    StoppedError,
+)
+from drivers.identity import Identity
+from drivers.link import Link
+from drivers.pump import Delivered, DoseState, LastDose, PumpStatus, Refill
+from drivers.reunion import Acquaintance
+
+if TYPE_CHECKING:
+    from configs.dialectfile import DialectSettings
+
+#: silence of the controller after which the pump halts of itself, where the dialect can say so
+WATCHDOG_S = 5.0
+LONGEST_FILL_S = 600.0
+
+
+class DialectPump:
+    """See drivers/pump.py. What the device does not tell of itself comes from the bench file.
+
+    A start count that the device does not tell is one of this session: after a restart of the program, or when the
+    device's count was set back, a dose in doubt is then unknown, as it should be.
+    """
+
+    def __init__(
+        self,
+        link: Link,
+        clock: Clock,
+        stop: threading.Event | None = None,
+        *,
+        dialect: DialectSettings,
+        step_ml: float,
+        syringe_ml: float,
+        refill: Refill,
+        rate_ml_min: float,
+    ) -> None:
+        assert dialect.pump is not None  # the bench was checked
+        self._dialect, self._sayings = dialect, dialect.pump
+        self._talk = DialectTalk(link, dialect, self._sayings.set_up)
+        self._account = DialectAccount(self._talk, self._sayings)
+        self._acquaintance = Acquaintance(link, self._who, self._instruct)
+        self._link, self._clock, self._stop = link, clock, stop
+        self.step_ml, self.syringe_ml, self.refill = step_ml, syringe_ml, refill
+        self._rate_ml_min = rate_ml_min
+        self._session = int(clock.utc_s())
+        self._instructed_for = 0
+        self._last: tuple[int, DialectPush, float | None] | None = None  # number, push, its volume where known
+        self._before: Tally | None = None  # the account as it was last known to be right
+        self._pushed_ml, self._held_ml = 0.0, 0.0  # by our own count, for devices that do not say
+
+    def identify(self) -> Identity:
+        """Ask who the device is. Raises: DeviceError."""
+        self._be_instructed()
+        return self._acquaintance.identity()
+
+    def status(self) -> PumpStatus:
+        """Ask for the account. Raises: DeviceError."""
+        self._be_instructed()
+        tally = self._account.standing()
+        self._note_restart(tally)
+        return PumpStatus(
+            start_count=self._start_count(tally),
+            last_dose_number=self._last[0] if self._last else 0,
+            delivered_ml=self._delivered_ml(tally),
+            contents_ml=self._contents_ml(),
+            reservoir_ml=None,
+            moving=tally.moving,
+            fault=tally.fault,
+        )
+
+    def delivered_ml(self) -> float:
+        """Ask for everything delivered through the tip, as far back as the device or this session counts."""
+        return self._delivered_ml(self._account.standing())
+
+    def last_dose(self) -> LastDose:
+        """Ask what became of the last dose of this session. Raises: DeviceError."""
+        tally = self._account.standing()
+        if self._last is None:
+            number, moved, state = 0, 0.0, "none"
+        else:
+            number, push, known_ml = self._last
+            told_ml = known_ml if known_ml is not None else push.moved_ml(tally)
+            if told_ml is None:
+                raise push.unknown("it does not tell what it delivered")
+            moved = told_ml
+            state = "moving" if tally.moving else "done" if moved == push.volume_ml else "stopped"
+        return LastDose(
+            number=number,
+            volume_ml=moved,
+            steps=round(moved / self.step_ml),
+            state=_as_state(state),
+            start_count=self._start_count(tally),
+            remaining_s=(tally.remaining_s or POLL_S) if tally.moving else 0.0,
+        )
+
+    def dose(self, number: int, volume_ml: float) -> Delivered:
+        """Deliver `volume_ml` (rounded to whole steps) as dose `number`, and wait until it is done.
+
+        Raises:
+            DeviceRefusedError: not a volume or number for this pump now; nothing moved.
+            DoseUnknownError: it was switched off and on, or left a doubt that it cannot settle.
+            DoseCutShortError: another volume than asked; it is known.
+            DeviceError: silent, garbled or gone. Every one of these carries lowest_ml and highest_ml.
+            StoppedError: `stop` was set; the pump was told to halt, see its `delivered` and `confirmed`.
+        """
+        what = f"dose {number}"
+        self._may_begin(what)
+        if self._last is not None and number <= self._last[0]:
+            raise self._refused(f"dose {self._last[0]} was started before, asked {number}", "Count on from there")
+        push = self._push(what, volume_ml)
+        self._last = (number, push, None)
+        moved_ml = self._delivered(push, number)
+        self._last = (number, push, moved_ml)
+        return Delivered(
+            number=number,
+            volume_ml=moved_ml,
+            steps=round(moved_ml / self.step_ml),
+            started_at_s=push.started_at_s,
+            at_s=self._clock.now_s(),
+        )
+
+    def prime(self, volume_ml: float) -> float:
+        """Push `volume_ml` (rounded to whole steps) through the tip into the waste, wait, and return what was pushed.
+
+        Raises:
+            DeviceError, StoppedError: as `dose`.
+        """
+        self._may_begin("priming")
+        push = self._push("priming", volume_ml)
+        return self._delivered(push, None)
+
+    def fill(self) -> PumpStatus:
+        """Fill the syringe, and wait until it is done; a fill that is told once more goes no further than full.
+
+        Raises:
+            DeviceRefusedError: there is nothing to fill it from; nothing moved.
+            DeviceError, StoppedError: as `dose`.
+        """
+        self._may_begin("filling")
+        saying = self._sayings.fill
+        if saying is None:
+            if self.refill != "by-hand":
+                raise self._refused("the dialect has no command to fill", "Fill it by hand, refill: by-hand")
+            self._held_ml = self.syringe_ml
+            return self._reckon_anew()
+        for attempt in range(1, ATTEMPTS + 1):
+            try:
+                self._talk.once(saying)
+                break
+            except (DeviceSilentError, DeviceGarbledError):
+                if self._account.standing().moving:
+                    break
+                if attempt == ATTEMPTS:
+                    raise
+        self._until_it_stands("filling")
+        self._held_ml = self.syringe_ml
+        return self._reckon_anew()
+
+    def stop(self) -> bool:
+        """Halt at once. Raises no DeviceError: True when the pump confirmed that it stands."""
+        for _ in range(ATTEMPTS):
+            with contextlib.suppress(DeviceError):  # what counts is whether it stands
+                self._talk.once(self._sayings.stop, moves=False)
+            try:
+                if not self._account.standing().moving:
+                    return True
+            except DeviceError:
+                continue
+        return False
+
+    # the push
+
+    def _push(self, what: str, volume_ml: float) -> DialectPush:
+        steps = self._whole_steps(volume_ml)
+        try:
+            self._be_instructed()
+            before = self._account.standing(self._stop)
+            if before.moving:
+                raise self._refused("it is moving", "Wait, or stop it")
+            self._compare(before, what)
+            push = self._new_push(what, steps * self.step_ml, before)
+            push.set_target()
+        except DeviceError as error:
+            if error.lowest_ml is None:
+                error.lowest_ml = error.highest_ml = 0.0
+            raise
+        self._may_begin(what)
+        return push
+
+    def _new_push(self, what: str, volume_ml: float, before: Tally) -> DialectPush:
+        return DialectPush(
+            self._talk,
+            self._sayings,
+            self._account,
+            self._clock,
+            self._stop,
+            what=what,
+            volume_ml=volume_ml,
+            step_ml=self.step_ml,
+            rate_ml_min=self._rate_ml_min,
+            before=before,
+        )
+
+    def _delivered(self, push: DialectPush, number: int | None) -> float:
+        moved_ml = 0.0
+        try:
+            moved_ml = push.deliver()
+        except StoppedError as stopped:
+            raise self._halted(push, number) from stopped
+        except DeviceError as error:
+            if error.lowest_ml is None:
+                error.lowest_ml, error.highest_ml = push.bounds_ml()
+            if error.lowest_ml == error.highest_ml:
+                self._book(push, error.lowest_ml or 0.0, number)
+            else:
+                self._before = None
+            raise
+        self._book(push, moved_ml, number)
+        return moved_ml
+
+    def _book(self, push: DialectPush, moved_ml: float, number: int | None) -> None:
+        self._pushed_ml += moved_ml
+        self._held_ml -= moved_ml
+        if number is not None:
+            self._last = (number, push, moved_ml)
+        self._before = None
+        if push.before.level_ml is not None:
+            self._before = Tally(
+                moving=False,
+                fault=None,
+                remaining_s=None,
+                level_ml=push.before.level_ml + moved_ml,
+                starts=push.before.starts,
+            )
+
+    def _halted(self, push: DialectPush, number: int | None) -> StoppedError:
+        confirmed = self.stop()
+        moved_ml: float | None = None
+        if confirmed:
+            try:
+                moved_ml = push.moved_ml(self._account.standing())
+            except DeviceError:
+                moved_ml = None
+        delivered = None
+        if moved_ml is None:
+            self._before = None
+        else:
+            self._book(push, moved_ml, number)
+            delivered = Delivered(
+                number=number or 0,
+                volume_ml=moved_ml,
+                steps=round(moved_ml / self.step_ml),
+                started_at_s=push.started_at_s,
+                at_s=self._clock.now_s(),
+            )
+        return self._stopped(f"stopped in {push.what}", confirmed, delivered if number is not None else None)
+
+    def _stopped(self, what: str, confirmed: bool, delivered: Delivered | None = None) -> StoppedError:
+        return StoppedError(
+            what + ("" if confirmed else "; the pump did not confirm that it stands"),
+            where=self._talk.where,
+            remedy="Go on or end the run" if confirmed else "Look at the pump and switch it off if it moves",
+            delivered=delivered,
+            confirmed=confirmed,
+        )
+
+    # what it says of itself
+
+    def _compare(self, now: Tally, what: str) -> None:
+        """Hold the account against what it should be, before anything moves."""
+        before, self._before = self._before, now
+        if before is None or before.level_ml is None or now.level_ml is None:
+            return
+        moved_ml = now.level_ml - before.level_ml
+        tolerance_ml = max(1.001 * self._account.resolution_ml, 0.5 * self.step_ml)
+        if now.starts != before.starts or moved_ml < -tolerance_ml:
+            self._session += 1
+            raise DoseUnknownError(
+                f"it was switched off and on since it was last asked; {what} did not begin",
+                where=self._talk.where,
+                remedy="Check its supply, then go on",
+                lowest_ml=0.0,
+                highest_ml=0.0,
+            )
+        if moved_ml > tolerance_ml:
+            raise DoseUnknownError(
+                f"delivered {moved_ml:g} mL that nobody asked for; {what} did not begin",
+                where=self._talk.where,
+                remedy="Find out who else moves it",
+                lowest_ml=moved_ml,
+                highest_ml=moved_ml,
+            )
+
+    def _note_restart(self, now: Tally) -> None:
+        before = self._before
+        if before is not None and before.level_ml is not None and now.level_ml is not None:
+            if now.level_ml < before.level_ml - self._account.resolution_ml and now.starts == before.starts:
+                self._session += 1
+                self._before = now
+        elif not now.moving:
+            self._before = now
+
+    def _reckon_anew(self) -> PumpStatus:
+        """Take the account as it is now for right: filling moves what a plunger's place counts."""
+        self._before = None
+        return self.status()
+
+    def _start_count(self, tally: Tally) -> int:
+        return self._session if tally.starts is None else tally.starts
+
+    def _delivered_ml(self, tally: Tally) -> float:
+        counts_total = self._sayings.delivered is not None and tally.level_ml is not None
+        return tally.level_ml if counts_total and tally.level_ml is not None else self._pushed_ml
+
+    def _contents_ml(self) -> float:
+        """What the syringe holds; by our own count where the device does not say (0 before it was first filled)."""
+        told_ml = self._account.contents_ml()
+        return max(0.0, self._held_ml) if told_ml is None else max(0.0, told_ml)
+
+    def _who(self) -> Identity:
+        dialect, saying = self._dialect, self._sayings.identify
+        told = self._talk.ask(saying) if saying is not None else {}
+        return Identity(
+            maker=told.get("maker", dialect.maker),
+            model=told.get("model", dialect.model),
+            serial=told.get("serial", self._link.url),
+            firmware=told.get("firmware", "0"),
+        )
+
+    def _be_instructed(self) -> None:
+        if self._instructed_for != self._link.openings:
+            self._instruct()
+
+    def _instruct(self) -> None:
+        """Tell rate and watchdog, which a device may have forgotten."""
+        self._talk.be_set_up()
+        if self._sayings.set_rate is not None:
+            self._talk.repeatable(self._sayings.set_rate, {"rate": self._rate_ml_min})
+        if self._sayings.watchdog is not None:
+            self._talk.repeatable(self._sayings.watchdog, {"seconds": WATCHDOG_S})
+        self._instructed_for = self._link.openings
+
+    def _until_it_stands(self, what: str) -> None:
+        until_s = self._clock.now_s() + LONGEST_FILL_S
+        while self._account.standing(self._stop).moving:
+            if self._clock.wait(POLL_S, self._stop):
+                raise self._stopped(f"stopped while {what}", self.stop())
+            if self._clock.now_s() > until_s:
+                self.stop()
+                raise self._refused(f"{what} does not end", "Look at the pump")
+
+    def _may_begin(self, what: str) -> None:
+        if self._stop is not None and self._stop.is_set():
+            raise StoppedError(f"stopped before {what} began", where=self._talk.where, remedy="Go on or end the run")
+
+    def _whole_steps(self, volume_ml: float) -> int:
+        steps = round(volume_ml / self.step_ml) if abs(volume_ml) < 1e6 else 0  # NaN fails the comparison
+        if not 0 < steps <= round(self.syringe_ml / self.step_ml):
+            raise self._refused(
+                f"volume of {volume_ml:g} mL, allowed {self.step_ml:g} to {self.syringe_ml:g} mL",
+                "Ask for a volume within what is allowed",
+            )
+        return steps
+
+    def _refused(self, what: str, remedy: str) -> DeviceRefusedError:
+        return DeviceRefusedError(what, where=self._talk.where, remedy=remedy, lowest_ml=0.0, highest_ml=0.0)
+
+
+def _as_state(word: str) -> DoseState:
+    states: dict[str, DoseState] = {"none": "none", "moving": "moving", "done": "done", "stopped": "stopped"}
+    return states[word]
