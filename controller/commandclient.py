@@ -11,9 +11,13 @@ from pathlib import Path
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.commandport import HOST, MOST_LINE_BYTES, SUFFIX
-from controller.record import list_records, summarise
+from controller.record import summarise
 
+#: ending of the file in which a run announces itself, next to its record
+SUFFIX = ".port"
+HOST = "127.0.0.1"
+#: a line that is longer is no command, and no reply; its sender is dropped
+MOST_LINE_BYTES = 4096
 #: a run that does not answer within this time does not listen, s
 REPLY_S = 2.0
 
@@ -88,8 +92,9 @@ def _exchange(told: Announcement, line: Mapping[str, Any], record: Path) -> dict
 
 def running(runs: Path) -> Path | None:
     """Return the record of the lab folder's run that goes on and listens, None where there is none."""
-    for record in reversed(list_records(runs)):
-        if record.with_suffix(SUFFIX).exists() and summarise(record).get("outcome") is None:
+    for announced in sorted(runs.glob(f"*{SUFFIX}"), reverse=True):
+        record = announced.with_suffix(".jsonl")
+        if record.is_file() and summarise(record).get("outcome") is None:
             try:
                 send_command(record, "hello")
             except HalfdropError:

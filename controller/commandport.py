@@ -24,13 +24,10 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from controller.commandclient import HOST, MOST_LINE_BYTES, SUFFIX
 from controller.stopping import StopSwitch
 from controller.titration.actions import Command
 
-HOST = "127.0.0.1"
-SUFFIX = ".port"
-#: a line that is longer is no command; its sender is dropped
-MOST_LINE_BYTES = 4096
 MOST_CONNECTIONS = 8
 MOST_WAITING = 32
 MOST_NOTE_CHARACTERS = 500

@@ -13,8 +13,7 @@ from pathlib import Path
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.commandclient import read_announcement
-from controller.commandport import SUFFIX
+from controller.commandclient import SUFFIX, read_announcement
 from controller.labfolder import Lab
 from controller.record import list_records
 from drivers.clock import Clock

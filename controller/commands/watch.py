@@ -60,7 +60,7 @@ def _lab(named: str | None, *, needed: bool) -> Lab | None:
 
 def _follow(record: Path) -> int:
     """Print what the run says until it is over or its process is gone."""
-    from controller.commandport import SUFFIX
+    from controller.commandclient import SUFFIX
     from controller.ui.runview import RunView
     from controller.ui.tail import RecordTail
     from controller.ui.texts import clock_text

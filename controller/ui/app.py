@@ -11,7 +11,6 @@ from textual.binding import Binding, BindingType
 from textual.screen import Screen
 
 from controller.labfolder import Lab
-from controller.ui.screens.help import help_of
 from controller.ui.screens.run import RunScreen, leave_question
 from controller.ui.theme import DAY, NIGHT
 
@@ -124,6 +123,8 @@ class HalfdropApp(App[int]):
 
     def action_help(self) -> None:
         """Help where a screen has none of its own."""
+        from controller.ui.screens.help import help_of
+
         if not self.screen.is_modal:
             self.push_screen(help_of(getattr(self.screen, "HELP", "")))
 

@@ -24,7 +24,7 @@ def file_lines(bench: BenchSettings) -> list[str]:
     room_ml = vessel.capacity_ml - vessel.displaced_ml - vessel.margin_ml
     return [
         f"{printable(bench.name)}{' (simulated: nothing real moves)' if is_simulated(bench) else ''}",
-        f"vessel      takes less than {room_ml:g} mL of liquid; tray {vessel.tray_ml:g} mL, waste {vessel.waste_ml:g} mL",
+        f"vessel      takes less than {room_ml:g} mL; tray {vessel.tray_ml:g} mL, waste {vessel.waste_ml:g} mL",
         f"limits      {vessel.largest_dose_ml:g} mL a dose, {pump.highest_rate_ml_min:g} mL/min, "
         f"{vessel.longest_run_s / 60:g} min, {vessel.lowest_temperature_c:g} to {vessel.highest_temperature_c:g} °C",
     ]

@@ -7,13 +7,13 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.encoding import plan_from_json
-from controller.progress import Pace
 from controller.record import printable
-from controller.titration.actions import Dosed, Report
-from controller.titration.plan import RunPlan
 from controller.ui.seen import CurvePoint, EndPoint, SeenReading, Sentence
-from simulators.constants import ideal_slope_mv
+
+TYPE_CHECKING = False  # what a plan needs is imported with the first header, after the first paint
+if TYPE_CHECKING:
+    from controller.progress import Pace
+    from controller.titration.plan import RunPlan
 
 #: readings kept for the stability shown
 KEPT_READINGS = 120
@@ -101,6 +101,9 @@ class RunView:
     # --- the lines ---------------------------------------------------------------------------------------------------
 
     def _begin(self, header: dict[str, Any]) -> None:
+        from controller.encoding import plan_from_json
+        from controller.progress import Pace
+
         self.header = header
         try:
             self.plan = plan_from_json(header["plan"], where=self.name)
@@ -139,7 +142,7 @@ class RunView:
                 self._point(entry)
             case "forecast":
                 self.forecast = (float(entry["volume_ml"]), float(entry["standard_uncertainty_ml"]))
-                self._pace_saw(Report(what="forecast", volume_ml=self.forecast[0]))
+                self._pace_saw("forecast", self.forecast[0])
             case "end-point":
                 self.end_points.append(_end_point(entry))
                 self.forecast = None
@@ -166,7 +169,7 @@ class RunView:
                 at_s=self.at_s,
             )
         )
-        self._pace_saw(Report(what="point"))
+        self._pace_saw("point")
 
     def _observation(self, kind: str, entry: dict[str, Any]) -> None:
         match kind:
@@ -175,7 +178,7 @@ class RunView:
             case "dosed":
                 volume_ml = float(entry["volume_ml"])
                 self._delivered(volume_ml)
-                self._pace_saw(Dosed(at_s=self.at_s, number=int(entry["number"]), volume_ml=volume_ml))
+                self._pace_saw("dosed", volume_ml)
             case "failed":
                 self.phase = f"{entry['device']} in trouble"
                 self._say(f"{entry['device']}: {entry['what']}", "trouble")
@@ -215,6 +218,8 @@ class RunView:
         plan = self.plan
         if plan is None or plan.probe.calibration is None:
             return None
+        from simulators.constants import ideal_slope_mv
+
         found = plan.probe.calibration
         slope_mv = found.slope_fraction * ideal_slope_mv(
             plan.chemistry.temperature_c if temperature_c is None else float(temperature_c)
@@ -265,9 +270,16 @@ class RunView:
     def _say(self, text: str, mark: str) -> None:
         self.sentences.append(Sentence(at_s=self.at_s, text=printable(text), mark=mark))
 
-    def _pace_saw(self, item: Report | Dosed) -> None:
-        if self._pace is not None:
-            self._pace.saw(item, self.at_s, self.delivered_ml)
+    def _pace_saw(self, what: str, volume_ml: float | None = None) -> None:
+        if self._pace is None:
+            return
+        from controller.titration.actions import Dosed, Report
+
+        if what == "dosed":
+            item: Dosed | Report = Dosed(at_s=self.at_s, number=len(self.doses), volume_ml=volume_ml or 0.0)
+        else:
+            item = Report(what=what, volume_ml=volume_ml)
+        self._pace.saw(item, self.at_s, self.delivered_ml)
 
 
 def _end_point(entry: dict[str, Any]) -> EndPoint:

@@ -14,10 +14,7 @@ from textual.screen import Screen
 from textual.widgets import Footer
 
 from configs.errors import HalfdropError
-from controller.commandclient import read_announcement, send_command
 from controller.ui.runview import RunView
-from controller.ui.screens.dialogs import Choice, Line, Text
-from controller.ui.screens.help import help_of
 from controller.ui.tail import Playback, RecordTail, Source
 from controller.ui.texts import number_of
 from controller.ui.widgets.curveplot import CurvePlot
@@ -26,8 +23,14 @@ from controller.ui.widgets.sentences import Sentences
 from controller.ui.widgets.titlebar import TitleBar
 from controller.ui.widgets.warningbar import WarningBar
 
+TYPE_CHECKING = False  # dialogs and commands are imported when they are used: the first paint must not wait for them
+if TYPE_CHECKING:
+    from controller.ui.screens.dialogs import Choice
+
 #: time between two looks at the record, s: at most four drawings a second
 LOOK_S = 0.25
+#: the plot is painted before the whole screen is; the first look comes after that
+FIRST_LOOK_S = 0.1
 SPEEDS = (1.0, 2.0, 5.0, 10.0, 20.0, 50.0, 100.0, 200.0, 500.0)
 _COMMANDS = {"stop", "pause", "go_on", "dose", "note"}
 
@@ -81,9 +84,9 @@ class RunScreen(Screen[None]):
             yield Sentences()
         yield Footer(show_command_palette=False, compact=True)
 
-    def on_mount(self) -> None:
-        """Begin to look; the first time right after the first paint."""
-        self.call_after_refresh(self.look)
+    def on_curve_plot_painted(self) -> None:
+        """Begin to look: the first paint does not wait for a long record."""
+        self.set_timer(FIRST_LOOK_S, self.look)
         self.set_interval(LOOK_S, self.look)
 
     # --- following ---------------------------------------------------------------------------------------------------
@@ -147,6 +150,8 @@ class RunScreen(Screen[None]):
         self.run_worker(partial(self._send, name, then, details), thread=True, group="commands")
 
     def _send(self, name: str, then: Callable[[], None] | None, details: dict[str, Any]) -> None:
+        from controller.commandclient import send_command
+
         try:
             send_command(self.record, name, **details)
         except HalfdropError as error:
@@ -165,6 +170,8 @@ class RunScreen(Screen[None]):
         self.command("halt")
         if self._halted is not None:
             return
+        from controller.ui.screens.dialogs import Choice
+
         dialog = Choice(
             "Halted",
             "The pump was told to stop at once. Going on needs your answer.",
@@ -197,6 +204,8 @@ class RunScreen(Screen[None]):
 
     def action_dose(self) -> None:
         """Ask for a dose by hand."""
+        from controller.ui.screens.dialogs import Line
+
         plan = self.view.plan
         most = "" if plan is None else f", at most {plan.vessel.largest_dose_ml:g} mL"
         text = f"Volume in mL{most}. It counts like every dose, and the guard judges it."
@@ -213,6 +222,8 @@ class RunScreen(Screen[None]):
 
     def action_note(self) -> None:
         """Ask for a note."""
+        from controller.ui.screens.dialogs import Line
+
         self.app.push_screen(Line("A note into the record", "It is kept with its time."), self._note)
 
     def _note(self, typed: str | None) -> None:
@@ -256,6 +267,8 @@ class RunScreen(Screen[None]):
 
     def action_warnings(self) -> None:
         """Read the warnings."""
+        from controller.ui.screens.dialogs import Text
+
         bar = self.query_one(WarningBar)
         text = "\n\n".join(f"{number}. {one}" for number, one in enumerate(bar.all, start=1))
         self.app.push_screen(Text("Warnings of this run", text or "There are none."), lambda _: bar.mark_read())
@@ -270,11 +283,13 @@ class RunScreen(Screen[None]):
 
     def action_help(self) -> None:
         """Help for this screen."""
+        from controller.ui.screens.help import help_of
+
         self.app.push_screen(help_of("run" if self.live else "record"))
 
     def action_leave(self) -> None:
         """Leave; a run that goes on is asked about."""
-        if self.live and self._listens and read_announcement(self.record) is not None:
+        if self.live and self._listens:
             self.app.push_screen(leave_question(), self._left)
         else:
             self.post_leave()
@@ -292,6 +307,8 @@ class RunScreen(Screen[None]):
 
 def leave_question() -> Choice:
     """Ask what is to become of a run that goes on."""
+    from controller.ui.screens.dialogs import Choice
+
     return Choice(
         "The run goes on without this screen",
         "It has a process of its own: leaving changes nothing for it. 'halfdrop watch' shows it again.",

@@ -8,7 +8,8 @@ from typing import ClassVar
 
 from rich.segment import Segment
 from rich.style import Style
-from textual.geometry import Size
+from textual.geometry import Region, Size
+from textual.message import Message
 from textual.reactive import reactive
 from textual.strip import Strip
 from textual.widget import Widget
@@ -34,6 +35,9 @@ class CurvePlot(Widget):
         "plot--now", "plot--doses", "plot--key",
     }  # fmt: skip
 
+    class Painted(Message):
+        """It was painted for the first time."""
+
     near: reactive[bool] = reactive(False)
     cursor: reactive[int | None] = reactive(None)
 
@@ -41,8 +45,10 @@ class CurvePlot(Widget):
         super().__init__(id="plot")
         self._view: RunView | None = None
         self._second: RunView | None = None
+        self._rows: list[Row] = []
         self._strips: list[Strip] = []
         self._drawn_for: Size | None = None
+        self._painted = False
 
     # --- what is shown -----------------------------------------------------------------------------------------------
 
@@ -69,15 +75,30 @@ class CurvePlot(Widget):
         return points[self.cursor]
 
     def _changed(self) -> None:
-        self._drawn_for = None
-        self.refresh()
+        """Draw anew, but paint only the rows that differ."""
+        if not self._painted or self._drawn_for != self.size:
+            self.refresh()
+            return
+        before, self._rows = self._rows, self._drawn()
+        self._strips = [self._strip(row) for row in self._rows]
+        if len(before) != len(self._rows):
+            self.refresh()
+            return
+        width = self.size.width
+        differ = [Region(0, y, width, 1) for y, row in enumerate(self._rows) if row != before[y]]
+        if differ:
+            self.refresh(*differ)
 
     # --- drawing -----------------------------------------------------------------------------------------------------
 
     def render_line(self, y: int) -> Strip:
-        """Return one row; all of them are made when the first is asked for after a change."""
+        """Return one row; all of them are made when the first is asked for after a change of size."""
+        if not self._painted:
+            self._painted = True
+            self.post_message(self.Painted())
         if self._drawn_for != self.size:
-            self._strips = [self._strip(row) for row in self._rows()]
+            self._rows = self._drawn()
+            self._strips = [self._strip(row) for row in self._rows]
             self._drawn_for = self.size
         return self._strips[y] if y < len(self._strips) else Strip.blank(self.size.width)
 
@@ -93,7 +114,7 @@ class CurvePlot(Widget):
     def _style(self, name: str) -> Style:
         return self.get_component_rich_style(f"plot--{name}")
 
-    def _rows(self) -> list[Row]:
+    def _drawn(self) -> list[Row]:
         width, height = self.size
         if self._view is None or height < 2:
             return []
