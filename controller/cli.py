@@ -135,6 +135,10 @@ def _run(made: Parser) -> None:
     _world(made)
     made.add_argument("--replicates", type=int, metavar="N", help="titrate the sample N times; mean, scatter, Grubbs")
     made.add_argument("--portions", metavar="LIST", help="mL or g of each replicate, as 10,10,10 or 0.151,0.148,0.153")
+    made.add_argument("--series", metavar="FILE", help="a table of samples: id, amount, method, replicates")
+    made.add_argument(
+        "--on-failure", choices=("stop", "skip", "repeat-once"), default="stop", help="series: where a sample fails"
+    )
     made.add_argument("--operator", metavar="NAME", help="who runs it (kept in the record)")
     made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
     made.add_argument("--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)")
@@ -198,7 +202,7 @@ def _predict(made: Parser) -> None:
 
 def _resume(made: Parser) -> None:
     made.set_defaults(function="controller.commands.resume:resume")
-    made.add_argument("run", metavar="RUN", help="a record without an end: its name or file")
+    made.add_argument("run", metavar="RUN", help="a record without an end (of a run or a series): its name or file")
     made.add_argument("--evaluate-only", action="store_true", help="do not go on: end it and evaluate what is there")
     made.add_argument("--bench", metavar="FILE", help="bench file (default: bench.yaml of the lab folder)")
     made.add_argument("--operator", metavar="NAME", help="who resumes it (kept in the record)")
@@ -246,7 +250,7 @@ def _runs(group: Parser) -> None:
     _json(made)
     made = _action(actions, "report", "controller.commands.report:report", "one record as a page to read and print")
     made.add_argument("run", metavar="RUN")
-    made.add_argument("--replicate", metavar="RUN", nargs="+", help="further runs of the same sample: mean and spread")
+    made.add_argument("--replicate", metavar="RUN", nargs="+", help="further runs of the sample (default: those of its series)")
     made.add_argument("--to", metavar="FILE", help="the page ('-': standard output; default: in the lab's reports/)")
     _lab(made)
     _json(made)

@@ -29,13 +29,24 @@ from controller.stopping import StopSwitch
 
 
 def resume(given: argparse.Namespace) -> int:
-    """Resume a run; exit status as of `run`."""
+    """Resume a run or a series; exit status as of `run`."""
+    from controller.commands.series import is_series, resume_series
+
     lab = find_lab(given.lab).writable()
-    path = record_path(given.run, given)
-    broken = read_broken(path)
-    result = _resumed(given, lab, path, broken)
+    if (series := is_series(given.run, lab)) is not None:
+        return resume_series(series, lab, given)
+    result = resume_run(given, lab, record_path(given.run, given))
     tell(result, as_json=given.json)
     return result.exit_status
+
+
+def resume_run(given: argparse.Namespace, lab: Lab, path: Path) -> RunResult:
+    """Go on with one run.
+
+    Raises:
+        HalfdropError: it cannot go on; nothing was written.
+    """
+    return _resumed(given, lab, path, read_broken(path))
 
 
 def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun) -> RunResult:

@@ -54,6 +54,10 @@ def run(given: argparse.Namespace) -> int:
         place=lab.path,
         faults=load_faults(given.faults) if given.faults else None,
     )
+    if given.series is not None:
+        from controller.commands.series import run_series
+
+        return run_series(picked, lab, given, opening=opening, headless=unattended)
     if given.replicates is not None or given.portions is not None:
         from controller.commands.replicates import run_replicates
 
