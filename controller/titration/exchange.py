@@ -144,6 +144,10 @@ class Exchange:
         volume_ml = round(steps * self.plan.pump.step_ml, 9)
         if volume_ml > self.contents_ml + 1e-9:
             yield from self.refill(f"{volume_ml:.4f} mL asked, {max(self.contents_ml, 0.0):.3f} mL in the syringe")
+            if volume_ml > self.contents_ml + 1e-9:
+                raise EndOfRunError(
+                    "stopped", f"the reservoir is empty: {max(self.contents_ml, 0.0):.3f} mL of titrant left"
+                )
         action = Dose(number=self.last_number + 1, volume_ml=volume_ml, reason=reason)
         while True:
             answer = yield action

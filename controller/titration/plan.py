@@ -82,6 +82,7 @@ class ProbeCalibration:
     calibrated_utc: str | None = None
     record_sha256: str | None = None
     slope_offset_covariance_mv: float = 0.0
+    source: Literal["buffers", "meter"] = "buffers"  # meter: a meter's own, seen through an ideal electrode
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

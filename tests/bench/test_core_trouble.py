@@ -13,6 +13,7 @@ from controller.titration.actions import (
     Dosed,
     Failed,
     Reading,
+    Refilled,
     Refused,
     Resumed,
     Waited,
@@ -366,3 +367,18 @@ def test_a_quiet_meter_that_sticks_ends_the_run_too(core_case) -> None:
     result = case.run(answer).result
     assert result["outcome"] == "failed"
     assert "sticks" in result["reason"]
+
+
+def test_an_empty_reservoir_stops_the_run(core_case) -> None:
+    case = core_case()
+    case.plan = replace(case.plan, pump=replace(case.plan.pump, contents_ml=1.0))
+
+    def answer(action):
+        if action.kind == "refill":
+            return Refilled(at_s=case.world.now_s, contents_ml=0.02, reservoir_ml=0.0)
+        return case.world.answer(action)
+
+    result = case.run(answer).result
+    assert result["outcome"] == "stopped"
+    assert "reservoir is empty" in result["reason"]
+    assert result["titrant_ml"] <= 1.02
