@@ -16,25 +16,26 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Literal, TextIO
 
-from configs.benchfile import SIMULATED_PORT, BenchSettings, PortSettings
+from configs.benchfile import SIMULATED_PORT, BenchSettings
 from configs.errors import HalfdropError
 from configs.faultfile import FaultsSettings
 from configs.method import MethodSettings
 from configs.simulation import ContainedSettings, SampleBottleSettings, SimulationSettings
+from controller.connection import Connecting, check_capabilities
 from controller.execution import Devices
 from controller.planning import PumpAccount
 from controller.stopping import StopSwitch
 from controller.titration.plan import Sample
+from controller.trafficlog import TrafficFile
+from controller.virtualdevices import virtual_probe, virtual_pump
 from drivers.clock import Clock, ManualClock, ScaledClock, SystemClock
-from drivers.errors import DeviceError
 from drivers.identity import Identity
-from drivers.link import Link, LinkSettings, TrafficLog, open_link
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator
-from drivers.scpi_probe import ScpiProbe
-from drivers.scpi_pump import ScpiPump
+from drivers.transport import TrafficLog
 from simulators.bench import VirtualBench, virtual_bench
 from simulators.chemist import VirtualChemist
 from simulators.contents import sample_bottle, sample_in_vessel, titrant_in_syringe, true_mass_g
+from simulators.device_end import Device
 from simulators.devices import ProbeDevice, PumpDevice
 from simulators.faults import FaultScript
 from simulators.port import VirtualPorts
@@ -59,7 +60,7 @@ class OpenBench:
     traffic: Mapping[str, TrafficLog]
     world: VirtualBench | None = None
     seed: int | None = None
-    pump_device: PumpDevice | None = None
+    pump_device: Device | None = None
     faults: FaultScript | None = None
 
 
@@ -77,6 +78,8 @@ class Opening:
         talk: where questions and messages of an operator without a terminal go.
         start_utc_s: POSIX time at which manual time begins; None: now.
         faults: simulated bench only: what goes wrong; None: what its file says.
+        unattended: nobody is there; see controller/connection.py.
+        traffic_log: keep everything that goes over the lines in logs/ of the lab folder.
     """
 
     seed: int | None = None
@@ -88,6 +91,8 @@ class Opening:
     talk: TextIO | None = None
     start_utc_s: float | None = None
     faults: FaultsSettings | None = None
+    unattended: bool = False
+    traffic_log: bool = False
 
 
 def is_simulated(bench: BenchSettings) -> bool:
@@ -122,7 +127,7 @@ def open_bench(
         HalfdropError: settings that do not fit together.
     """
     with ExitStack() as held:
-        opener = _Opener(bench=bench, opening=opening, stop=stop, held=held)
+        opener = _Opener(bench=bench, opening=opening, stop=stop, held=held, temperature_c=method.temperature_c)
         yield opener.simulated(method, sample) if is_simulated(bench) else opener.real()
 
 
@@ -134,6 +139,7 @@ class _Opener:
     opening: Opening
     stop: StopSwitch
     held: ExitStack
+    temperature_c: float
 
     def simulated(self, method: MethodSettings, sample: Sample) -> OpenBench:
         simulation, opening = self.bench.simulation, self.opening
@@ -143,7 +149,7 @@ class _Opener:
         world = simulated_world(self.bench, simulation, method, sample, seed=seed, start_s=clock.now_s())
         settings = opening.faults or simulation.faults
         faults = None if settings is None else FaultScript(settings, world, clock)
-        pump_device, probe_device = simulated_devices(self.bench, world, place=opening.place, faults=faults)
+        pump_device, probe_device = spoken_devices(self.bench, world, place=opening.place, faults=faults)
         ports = self.held.enter_context(VirtualPorts(clock))
         route = opening.route or simulation.link
         name = f"{os.getpid()}-{id(ports):x}"  # ports in memory share one process
@@ -186,19 +192,15 @@ class _Opener:
 
     def _connected(self, urls: tuple[str, str], clock: Clock, operator: Operator) -> OpenBench:
         bench, event = self.bench, self.stop.event
-        traffic = {"pump": TrafficLog(), "probe": TrafficLog()}
-        pump_link = self._link(urls[0], bench.pump, clock, "pump", traffic)
-        probe_link = self._link(urls[1], bench.probe, clock, "probe", traffic)
-        pump = ScpiPump(pump_link, clock, event, rate_ml_min=bench.pump.rate_ml_min)
-        probe = ScpiProbe(probe_link, clock, event)
+        traffic = self._traffic()
+        opening = self.opening
+        connecting = Connecting(
+            clock=clock, stop=event, held=self.held, place=opening.place, unattended=opening.unattended
+        )
+        pump = connecting.pump(bench.pump, url=urls[0], traffic=traffic["pump"])
+        probe = connecting.probe(bench.probe, temperature_c=self.temperature_c, url=urls[1], traffic=traffic["probe"])
         pump_identity, probe_identity, status = pump.identify(), probe.identify(), pump.status()
-        if abs(pump.step_ml - bench.pump.step_ml) > 1e-9 or abs(pump.syringe_ml - bench.pump.syringe_ml) > 1e-6:
-            raise DeviceError(
-                f"its step is {pump.step_ml:g} mL and its syringe {pump.syringe_ml:g} mL; the bench file says "
-                f"{bench.pump.step_ml:g} and {bench.pump.syringe_ml:g} mL",
-                where=f"pump on {urls[0]}",
-                remedy="Correct step_ml and syringe_ml in the bench file",
-            )
+        check_capabilities(bench.pump, pump)
         return OpenBench(
             clock=clock,
             devices=Devices(pump=pump, probe=probe, operator=operator),
@@ -214,14 +216,20 @@ class _Opener:
             traffic=traffic,
         )
 
-    def _link(self, url: str, port: PortSettings, clock: Clock, device: str, traffic: Mapping[str, TrafficLog]) -> Link:
-        link = open_link(url, _link_settings(port), clock=clock, device=device, traffic=traffic[device])
-        self.held.callback(link.close)
-        return link
-
-
-def _link_settings(port: PortSettings) -> LinkSettings:
-    return LinkSettings(baud_rate=port.baud_rate, dtr=port.dtr, rts=port.rts, reply_deadline_s=port.reply_time_out_s)
+    def _traffic(self) -> dict[str, TrafficLog]:
+        opening = self.opening
+        if not (opening.traffic_log or self.bench.traffic_log) or opening.place is None:
+            return {"pump": TrafficLog(), "probe": TrafficLog()}
+        try:
+            file = TrafficFile(opening.place / "logs")
+        except OSError as failure:
+            raise HalfdropError(
+                f"the traffic log cannot be written ({failure})",
+                where=str(opening.place / "logs"),
+                remedy="See to the folder, or leave --traffic-log and traffic_log out",
+            ) from failure
+        self.held.callback(file.close)
+        return {"pump": file.line("pump"), "probe": file.line("probe")}
 
 
 @contextmanager
@@ -247,7 +255,7 @@ def serve_bench(
         bench, simulation, method, sample, seed=simulation.seed if seed is None else seed, start_s=clock.now_s()
     )
     world.stir(True, clock.now_s())  # nobody is asked here
-    pump, probe = simulated_devices(bench, world, place=place)
+    pump, probe = spoken_devices(bench, world, place=place)
     with VirtualPorts(clock) as ports:
         yield {"pump": ports.add("pump", pump, route).url, "probe": ports.add("probe", probe, route).url}
 
@@ -327,20 +335,40 @@ def _expected_bottle(method: MethodSettings) -> SampleBottleSettings:
     return SampleBottleSettings(substances=(content,))
 
 
+def simulated_identities(place: Path | None) -> tuple[Identity, Identity]:
+    """Return who pump and probe of a simulated bench are; those of different lab folders are different devices."""
+    serial = hashlib.sha256(str(place or Path.cwd()).encode()).hexdigest()[:8]
+    return (
+        Identity(maker=_MAKER, model="syringe pump", serial=f"B-{serial}", firmware="1"),
+        Identity(maker=_MAKER, model="glass electrode", serial=f"P-{serial}", firmware="1"),
+    )
+
+
+def spoken_devices(
+    bench: BenchSettings, world: VirtualBench, *, place: Path | None, faults: FaultScript | None = None
+) -> tuple[Device, Device]:
+    """Return the virtual pump and probe in front of a world, each in the grammar that the bench file says."""
+    pump_identity, probe_identity = simulated_identities(place)
+    return (
+        virtual_pump(bench, world.mechanism if faults is None else faults.syringe, pump_identity),
+        virtual_probe(bench, world.sensor if faults is None else faults.sensor, probe_identity),
+    )
+
+
 def simulated_devices(
     bench: BenchSettings, world: VirtualBench, *, place: Path | None, faults: FaultScript | None = None
 ) -> tuple[PumpDevice, ProbeDevice]:
     """Return the virtual pump and probe in front of a world, or of what faults make of it."""
-    serial = hashlib.sha256(str(place or Path.cwd()).encode()).hexdigest()[:8]
+    pump_identity, probe_identity = simulated_identities(place)
     pump = PumpDevice(
         world.mechanism if faults is None else faults.syringe,
-        Identity(maker=_MAKER, model="syringe pump", serial=f"B-{serial}", firmware="1"),
+        pump_identity,
         refill=bench.pump.refill,
         usual_rate_ml_min=bench.pump.rate_ml_min,
         highest_rate_ml_min=bench.pump.highest_rate_ml_min,
     )
     probe = ProbeDevice(
         world.sensor if faults is None else faults.sensor,
-        Identity(maker=_MAKER, model="glass electrode", serial=f"P-{serial}", firmware="1"),
+        probe_identity,
     )
     return pump, probe

@@ -153,6 +153,57 @@ def _watch(made: Parser) -> None:
     _lab(made)
 
 
+def _calibration(actions: Any, name: str, about: str) -> Parser:
+    made = _action(actions, name, f"controller.commands.calibrate:{name}", about)
+    _lab(made)
+    _world(made)
+    made.add_argument("--operator", metavar="NAME", help="who does it (kept in the record)")
+    made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
+    made.add_argument("--answers", metavar="FILE", help="answers to its questions, headless (YAML)")
+    made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
+    _json(made)
+    return made
+
+
+def _from_runs(made: Parser) -> None:
+    made.add_argument("method", metavar="METHOD", help="a method's name or file")
+    made.add_argument("--lot-id", metavar="NAME", help="name of the lot (default: the method's)")
+    made.add_argument("--from", dest="runs_from", metavar="RUN", nargs="+", help="runs that are there already")
+
+
+def _calibrate(group: Parser) -> None:
+    actions = group.add_subparsers(dest="action", metavar="ACTION", parser_class=Parser, required=True)
+    made = _calibration(actions, "probe", "calibrate the probe with the bench's buffers")
+    made.add_argument("--lots", metavar="LIST", help="bottles to use, in this order, as B4-118,B7-204 (default: all)")
+    made.add_argument("--no-check", action="store_true", help="leave the check buffer out (then it is no pass)")
+    made = _calibration(actions, "burette", "check the burette by weighing (ISO 8655-6)")
+    made.add_argument("--weighings", metavar="FILE", help="balance readings made before: CSV of set_volume_ml, mass_g")
+    made.add_argument("--deliveries", type=int, default=10, metavar="N", help="of each volume (default: 10)")
+    made.add_argument("--water-temperature-c", type=float, metavar="T")
+    made.add_argument("--air-temperature-c", type=float, metavar="T")
+    made.add_argument("--pressure-hpa", type=float, default=1013.25, metavar="P")
+    made.add_argument("--humidity-percent", type=float, default=50.0, metavar="H")
+    made.add_argument("--evaporation-mg", type=float, default=0.0, metavar="MG", help="loss per delivery, as measured")
+    made = _calibration(actions, "titrant", "standardise a titrant against a primary standard")
+    _from_runs(made)
+    _sample(made)
+    made.add_argument("--replicates", type=int, metavar="N", help="how many portions are titrated (default: 3)")
+    made.add_argument("--portions", metavar="LIST", help="g of standard of each, as 0.1512,0.1490,0.1533")
+    made.add_argument("--preparation", metavar="TEXT", help="how the titrant was prepared")
+    made.add_argument("--prepared-on", metavar="DAY", help="as 2026-12-01")
+    made.add_argument("--expires", metavar="DAY", help="last day of use, as 2027-06-30")
+    made = _calibration(actions, "blank", "settle a blank from runs without sample, or typed volumes")
+    _from_runs(made)
+    made.add_argument("--volumes-ml", metavar="LIST", help="volumes in mL, none where no end point was found")
+    made = _action(actions, "list", "controller.commands.calibrations:list_calibrations", "what is in force, and since")
+    _lab(made)
+    _json(made)
+    made = _action(actions, "history", "controller.commands.calibrations:history", "how a kind moved over time")
+    made.add_argument("kind", choices=("probe", "burette", "titrant", "blank"))
+    _lab(made)
+    _json(made)
+
+
 def _decide(made: Parser) -> None:
     made.set_defaults(function="controller.commands.decide:decide")
     made.add_argument("method", metavar="METHOD", nargs="?", help="a method's name or file")
@@ -250,7 +301,7 @@ def _runs(group: Parser) -> None:
     _json(made)
     made = _action(actions, "report", "controller.commands.report:report", "one record as a page to read and print")
     made.add_argument("run", metavar="RUN")
-    made.add_argument("--replicate", metavar="RUN", nargs="+", help="further runs of the sample (default: those of its series)")
+    made.add_argument("--replicate", metavar="RUN", nargs="+", help="more runs of the sample (default: its series)")
     made.add_argument("--to", metavar="FILE", help="the page ('-': standard output; default: in the lab's reports/)")
     _lab(made)
     _json(made)
@@ -279,6 +330,7 @@ COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
     "init": ("make a lab folder", _init),
     "run": ("titrate by a method", _run),
     "watch": ("follow a run that goes on, and command it", _watch),
+    "calibrate": ("probe, burette, titrant and blank", _calibrate),
     "decide": ("the decision core alone, over JSON lines", _decide),
     "evaluate": ("end points of a record or CSV file", _evaluate),
     "predict": ("the expected curve before anything moves", _predict),

@@ -1,0 +1,273 @@
+"""halfdrop calibrate: probe, burette, titrant and blank, each into a record of its own, and what is in force."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from contextlib import ExitStack
+from dataclasses import replace
+from pathlib import Path
+
+from configs.benchfile import BenchSettings
+from configs.errors import HalfdropError
+from configs.settings import load_bench
+from controller.assembly import Opening, is_simulated
+from controller.calibration.burette_session import check_burette
+from controller.calibration.lot_session import settle_lot
+from controller.calibration.planning import plan_probe
+from controller.calibration.planning_burette import WeighingConditions, plan_burette, read_weighings
+from controller.calibration.plans import CalibrationPlan
+from controller.calibration.probe_session import calibrate_probe
+from controller.calibration.store import in_force
+from controller.calibrationbench import CalibrationBench, open_burette, open_desk, open_probe
+from controller.commands.calibrationlines import calibration_lines
+from controller.commands.lines import Lines
+from controller.commands.output import print_json, say
+from controller.commands.replicates import portions_of, titrate_replicates
+from controller.commands.runs import record_path
+from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
+from controller.commands.signals import pulling
+from controller.inforce import utc_day
+from controller.journal import Journal
+from controller.labfolder import Lab, find_lab
+from controller.lock import lock_device, lock_lab
+from controller.lots import Preparation, SettledLot, blank_lot, titrant_lot
+from controller.outcome import RunResult
+from controller.recordfile import new_record
+from controller.runner import run as carry_out
+from controller.stopping import StopSwitch
+from controller.titration.actions import Decisions
+
+DONE, NOT_TRUSTED = 0, 1
+
+
+def probe(given: argparse.Namespace) -> int:
+    """Calibrate the probe with the bench's buffers."""
+    lab, bench = _lab_and_bench(given)
+    opening, headless = _opening(given, lab, bench)
+    lots = tuple(word.strip() for word in given.lots.split(",")) if given.lots else ()
+    stop = StopSwitch()
+    with ExitStack() as held:
+        held.enter_context(pulling(stop, headless=headless))
+        held.enter_context(lock_lab(lab.path, {"command": "calibrate probe"}))
+        opened = held.enter_context(open_probe(bench, opening=opening, stop=stop, lots=lots))
+        held.enter_context(lock_device(opened.probe_identity, {"lab": str(lab.path)}))
+        plan = plan_probe(
+            bench,
+            probe_identity=opened.probe_identity,
+            today=utc_day(opened.clock.utc_s()),
+            last=in_force(lab.calibrations, "probe", opened.probe_identity),
+            lots=lots,
+            check=not given.no_check,
+            seed=opened.seed,
+        )
+        result = _carry_out(plan, calibrate_probe(plan), opened, lab, stop=stop, operator_name=given.operator)
+    return _told(result, plan, lab, as_json=given.json)
+
+
+def burette(given: argparse.Namespace) -> int:
+    """Check the burette by weighing, or from balance readings in a CSV file."""
+    lab, bench = _lab_and_bench(given)
+    opening, headless = _opening(given, lab, bench)
+    readings = read_weighings(Path(given.weighings)) if given.weighings else None
+    water_c = given.water_temperature_c
+    if water_c is None:
+        water_c = bench.simulation.temperature_c if is_simulated(bench) and bench.simulation else 20.0
+    conditions = WeighingConditions(
+        water_temperature_c=water_c,
+        air_temperature_c=given.air_temperature_c,
+        pressure_hpa=given.pressure_hpa,
+        relative_humidity_percent=given.humidity_percent,
+        evaporation_mg=given.evaporation_mg,
+    )
+    stop = StopSwitch()
+    with ExitStack() as held:
+        held.enter_context(pulling(stop, headless=headless))
+        held.enter_context(lock_lab(lab.path, {"command": "calibrate burette"}))
+        opened = held.enter_context(open_burette(bench, opening=opening, stop=stop))
+        assert opened.account is not None  # a pump was opened
+        held.enter_context(lock_device(opened.account.identity, {"lab": str(lab.path)}))
+        plan = plan_burette(
+            bench,
+            pump=opened.account,
+            today=utc_day(opened.clock.utc_s()),
+            last=in_force(lab.calibrations, "burette", opened.account.identity),
+            conditions=conditions,
+            readings_g=readings,
+            deliveries=given.deliveries,
+            seed=opened.seed,
+        )
+        result = _carry_out(plan, check_burette(plan), opened, lab, stop=stop, operator_name=given.operator)
+    return _told(result, plan, lab, as_json=given.json)
+
+
+def titrant(given: argparse.Namespace) -> int:
+    """Standardise a titrant: titrate portions of the standard, or take runs that are there."""
+    picked = chosen(given, lab_needed=True)
+    assert picked.lab is not None
+    lab, method, bench = picked.lab.writable(), picked.method, picked.bench
+    opening, headless = _opening(given, lab, bench)
+    lot_id = given.lot_id or method.titrant.lot_id
+    if lot_id is None:
+        raise HalfdropError("the lot has no name", where="titrant", remedy="Give --lot-id, or lot_id in the method")
+    if lot_id != method.titrant.lot_id:
+        method = method.model_copy(update={"titrant": method.titrant.model_copy(update={"lot_id": lot_id})})
+    if given.runs_from:
+        records = [record_path(name, given) for name in given.runs_from]
+    else:
+        records = _titrated(given, replace(picked, method=method), lab, opening=opening, headless=headless)
+    with open_desk(bench, opening=opening) as opened:
+        settled = titrant_lot(
+            method,
+            bench,
+            lab.calibrations,
+            records,
+            lot_id=lot_id,
+            today=utc_day(opened.clock.utc_s()),
+            last=in_force(lab.calibrations, "titrant", lot_id),
+            preparation=Preparation(text=given.preparation or "", prepared_on=given.prepared_on, expires=given.expires),
+        )
+        return _settled(settled, opened, lab, given)
+
+
+def blank(given: argparse.Namespace) -> int:
+    """Settle a blank from runs without sample, or from volumes typed in."""
+    picked = chosen(given, lab_needed=True)
+    assert picked.lab is not None
+    lab, method, bench = picked.lab.writable(), picked.method, picked.bench
+    opening, _ = _opening(given, lab, bench)
+    lot_id = given.lot_id or method.blank_lot_id
+    if lot_id is None:
+        raise HalfdropError("the blank has no name", where="blank", remedy="Give --lot-id, or blank_lot_id there")
+    if bool(given.runs_from) == bool(given.volumes_ml):
+        raise HalfdropError(
+            "either runs or volumes are needed", where="calibrate blank", remedy="Give --from RUN ..., or --volumes-ml"
+        )
+    with open_desk(bench, opening=opening) as opened:
+        settled = blank_lot(
+            method,
+            bench,
+            records=[record_path(name, given) for name in given.runs_from or ()],
+            volumes_ml=_volumes(given.volumes_ml) if given.volumes_ml else (),
+            lot_id=lot_id,
+            today=utc_day(opened.clock.utc_s()),
+            last=in_force(lab.calibrations, "blank", lot_id),
+        )
+        return _settled(settled, opened, lab, given)
+
+
+def _titrated(given: argparse.Namespace, picked: Chosen, lab: Lab, *, opening: Opening, headless: bool) -> list[Path]:
+    """Titrate the portions of the standard; return the records.
+
+    Raises:
+        HalfdropError: a run found no end point or was stopped.
+    """
+    portions = portions_of(given.portions, given.replicates or (None if given.portions else 3))
+    results = titrate_replicates(
+        picked,
+        lab,
+        sample_choice(given),
+        portions,
+        opening=opening,
+        headless=headless,
+        operator_name=given.operator,
+    )
+    for result in results:
+        if result.outcome != "completed" or not result.result["end_points"]:
+            raise HalfdropError(
+                f"no end point: {result.reason or 'none was found'}",
+                where=Path(result.record).stem,
+                remedy="Look at the record; titrate again, and name good runs with --from",
+            )
+    return [Path(result.record) for result in results]
+
+
+def _settled(settled: SettledLot, opened: CalibrationBench, lab: Lab, given: argparse.Namespace) -> int:
+    core = settle_lot(
+        settled.plan,
+        verdict=settled.verdict,
+        notes=settled.notes,
+        details=settled.details,
+        warnings=settled.warnings,
+    )
+    with lock_lab(lab.path, {"command": "calibrate"}):
+        result = _carry_out(settled.plan, core, opened, lab, stop=StopSwitch(), operator_name=given.operator)
+    return _told(result, settled.plan, lab, as_json=given.json)
+
+
+def _carry_out(
+    plan: CalibrationPlan,
+    core: Decisions,
+    opened: CalibrationBench,
+    lab: Lab,
+    *,
+    stop: StopSwitch,
+    operator_name: str | None,
+) -> RunResult:
+    lab.calibrations.mkdir(exist_ok=True)
+    sink = new_record(lab.calibrations, utc_s=opened.clock.utc_s(), label=plan.method_name)
+    return carry_out(
+        plan,
+        core,
+        opened.devices,
+        Journal(sink, opened.clock, name=str(sink.path)),
+        clock=opened.clock,
+        stop=stop,
+        operator_name=operator_name,
+        on_progress=Lines(sys.stderr),
+        ask_afterwards=plan.kind == "probe",
+    )
+
+
+def _told(result: RunResult, plan: CalibrationPlan, lab: Lab, *, as_json: bool) -> int:
+    found = result.result.get("calibration") or {}
+    if as_json:
+        print_json(result.result)
+    else:
+        print("\n".join(calibration_lines(result.result)))
+        kept = in_force(lab.calibrations, plan.kind, plan.subject)
+        if not found.get("accepted"):
+            what = f"in force stays the one of {kept.on} ({kept.path.stem})" if kept else "none is in force"
+            print(f"not taken into force; {what}")
+    if result.outcome != "completed" and result.exit_status != DONE:
+        return result.exit_status
+    return DONE if found.get("passed") and found.get("accepted") else NOT_TRUSTED
+
+
+def _lab_and_bench(given: argparse.Namespace) -> tuple[Lab, BenchSettings]:
+    lab = find_lab(given.lab).writable()
+    say(lab.says())
+    return lab, load_bench(Path(given.bench) if given.bench else lab.bench)
+
+
+def _opening(given: argparse.Namespace, lab: Lab, bench: BenchSettings) -> tuple[Opening, bool]:
+    answers = answers_of(given)
+    unattended = given.headless or not sys.stdin.isatty()
+    if unattended and answers is None and not is_simulated(bench):
+        raise HalfdropError(
+            "nobody is there to answer its questions",
+            where="calibrate",
+            remedy="Give the answers with --answers FILE, or start it at a terminal without --headless",
+        )
+    opening = Opening(
+        seed=given.seed,
+        time_scale=given.time_scale,
+        answers=answers,
+        answers_from=given.answers or "answers",
+        place=lab.path,
+    )
+    return opening, unattended
+
+
+def _volumes(text: str) -> list[float | None]:
+    volumes: list[float | None] = []
+    for word in (part.strip().casefold() for part in text.split(",")):
+        try:
+            volumes.append(None if word == "none" else float(word))
+        except ValueError:
+            raise HalfdropError(
+                f"got {word!r}, allowed: numbers in mL, or none where no end point was found",
+                where="--volumes-ml",
+                remedy="Write it as 0.012,none,0.009",
+            ) from None
+    return volumes
