@@ -25,11 +25,13 @@ def report(given: argparse.Namespace) -> int:
     from controller.record import verify
     from controller.report.contents import report_contents
     from controller.report.page import render
+    from controller.report.series_of_runs import found_replicates
     from drivers.clock import SystemClock
 
     path = record_path(given.run, given)
     record = read_record(path)
-    others = [read_record(record_path(name, given)) for name in given.replicate or []]
+    named = [read_record(record_path(name, given)) for name in given.replicate or []]
+    others = named or found_replicates(record)
     page = render(report_contents(record, written_utc=utc_text(SystemClock().utc_s()), replicates=others))
     state = verify(path)
     if given.to == _STDOUT:

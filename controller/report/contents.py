@@ -17,11 +17,13 @@ from controller.record import Record, verify
 from controller.reevaluation import added_evaluations
 from controller.report import tables
 from controller.report.budget import budget_table, coverage_factor
+from controller.report.calibrations import FOLDER, calibrations_table
 from controller.report.cautions import cautions_of
 from controller.report.instruments import instruments
 from controller.report.plots import Mark, curve_figure, gran_figure, residual_figure
 from controller.report.points import identity_table, points_table
 from controller.report.series import Series, series_of
+from controller.report.series_of_runs import together
 from controller.report.wording import DASH, Facts, facts_of, local_time, number, span, with_uncertainty
 
 
@@ -56,24 +58,27 @@ def report_contents(
     added = [] if detached else [one.to_json() for one in added_evaluations(record.path)]
     figures, missing = _figures(record, result)
     again = _evaluated_again(record, plan)
-    repeated = tables.replicates([(one.path.stem, _amount(one)) for one in (record, *replicates)])
+    repeated = together([record, *replicates])
+    mean = repeated.amount if repeated is not None else None
     return {
         "title": str(plan.get("method_title") or "Titration"),
         "sample_id": str(_dict(plan.get("sample")).get("sample_id") or "not named"),
-        "amount": _headline(amount),
+        "amount": _headline(mean or amount),
+        "mean_of": repeated.count if repeated is not None and mean else 0,
         "facts": _facts(record, plan, result, offset),
         "alerts": _alerts(record, plan, closing, detached=detached),
-        "warnings": [str(one) for one in [*header.get("warnings", []), *result.get("warnings", [])]],
+        "warnings": _warnings(header, plan, result),
         "outcome": _outcome(record, closing),
         "figures": figures,
         "missing": missing,
         "end_points": tables.end_points(result),
         "estimators": tables.estimators(result, again),
         "half_equivalence": tables.half_equivalence(result),
-        "budget": budget_table(amount),
+        "budget": budget_table(mean or amount),
         "identity": identity_table(again.get("identity")),
         "replicates": repeated,
         "evaluations": tables.evaluations(result, added, offset),
+        "calibrations": calibrations_table(_dict(header.get("hashes")), record.path.parent.parent / FOLDER, offset),
         "instruments": instruments(header),
         "sample": _sample(_dict(plan.get("sample")), offset),
         "settings": _settings(plan, offset),
@@ -93,11 +98,6 @@ def _dict(value: Any) -> dict[str, Any]:
     return value if isinstance(value, dict) else {}
 
 
-def _amount(record: Record) -> dict[str, Any] | None:
-    found = _dict((record.closing or {}).get("result")).get("result")
-    return found if isinstance(found, dict) else None
-
-
 def _evaluated_again(record: Record, plan: dict[str, Any]) -> dict[str, Any]:
     """The evaluation of the record's points by this program, an unknown substance ranked; empty where it fails."""
     try:
@@ -113,6 +113,12 @@ def _sample(sample: dict[str, Any], offset: Any) -> Facts:
     if sample.get("mass_g") is None:
         absent += ["purity_fraction", "purity_standard_uncertainty"]
     return facts_of(sample, offset, leave_out=("sample_id", *absent))
+
+
+def _warnings(header: dict[str, Any], plan: dict[str, Any], result: dict[str, Any]) -> list[str]:
+    """Every warning once: of the start, of what is in force, of the result."""
+    parts = header.get("warnings"), _dict(plan.get("traceability")).get("warnings"), result.get("warnings")
+    return list(dict.fromkeys(str(one) for part in parts for one in part or []))
 
 
 def _headline(amount: dict[str, Any] | None) -> dict[str, str] | None:

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from datetime import datetime
 from typing import Any
 
+from controller.report.calibrations import traceability
 from controller.report.wording import Facts, facts_of, local_time, number, with_uncertainty
 
 _CALIBRATION_KEYS = (
@@ -14,11 +15,10 @@ _CALIBRATION_KEYS = (
     "isopotential_ph",
     "isopotential_mv",
     "offset_standard_uncertainty_mv",
+    "slope_offset_covariance_mv",
     "calibrated_utc",
 )
 _TITRANT_KEYS = ("name", "concentration_mol_l", "standard_uncertainty_mol_l", "acid", "lot_id")
-#: parts of a plan that name what a result rests on, where it has them
-_FURTHER = ("blank", "back_titration", "standard", "lots", "balance")
 _SECONDS_A_DAY = 86400.0
 
 
@@ -38,8 +38,7 @@ def instruments(header: Mapping[str, Any]) -> list[tuple[str, Facts]]:
         ("Burette", [*_device(devices.get("pump")), *_burette(pump, offset)]),
         ("Titrant lot", _titrant(_dict(plan.get("titrant")), offset)),
     ]
-    further = [(key.replace("_", " ").capitalize(), facts_of(plan.get(key), offset)) for key in _FURTHER]
-    return [*sections, *[(title, found) for title, found in further if found]]
+    return [*sections, *traceability(plan, offset)]
 
 
 def _dict(value: Any) -> dict[str, Any]:

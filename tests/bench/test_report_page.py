@@ -243,7 +243,8 @@ def test_an_edited_record_ends_the_command_with_status_1(halfdrop: Run, runs: li
 def test_a_run_loads_neither_matplotlib_nor_jinja2(runs: list[Path]) -> None:
     modules = (
         "controller.assembly", "controller.runner", "controller.commands.run", "controller.evaluate_record",
-        "controller.report.export", "controller.reevaluation", "controller.commands.evaluate", "controller.commands.runs",
+        "controller.report.export", "controller.reevaluation", "controller.commands.evaluate",
+        "controller.commands.runs",
     )  # fmt: skip
     code = f"import sys, {', '.join(modules)}; print(sorted({{'matplotlib', 'jinja2'}} & set(sys.modules)))"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)

@@ -1,0 +1,79 @@
+"""The calibrations that a run rests on: which, of what day, with what verdict, and whether the records still stand."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from controller.calibration.store import Calibration, calibrations
+from controller.report.tables import Table
+from controller.report.wording import DASH, Facts, facts_of, local_time, number, with_uncertainty
+
+FOLDER = "calibrations"
+_PREFIX = "calibration "
+_PARTS = ("burette", "blank", "weighing", "preparation", "excess")
+
+
+def calibrations_table(hashes: Mapping[str, Any], folder: Path, offset: Any) -> Table | None:
+    """Return one row for each calibration that the header names; None where it names none.
+
+    Args:
+        hashes: of the record's header ("calibration probe": SHA-256).
+        folder: the lab folder's calibrations; may be missing.
+        offset: the lab's offset from UTC.
+    """
+    wanted = {name.removeprefix(_PREFIX): str(sha) for name, sha in hashes.items() if name.startswith(_PREFIX)}
+    if not wanted:
+        return None
+    known = {one.sha256: one for one in calibrations(folder)}
+    rows = tuple(_row(kind, sha, known.get(sha), offset) for kind, sha in sorted(wanted.items()))
+    heads = ("Kind", "Of", "Made", "Verdict", "Record", "SHA-256")
+    note = "Found by hash in the lab folder: a record of this hash is unchanged since the run took it over."
+    return Table(caption="Calibrations in force", heads=heads, rows=rows, note=note)
+
+
+def _row(kind: str, sha256: str, found: Calibration | None, offset: Any) -> tuple[str, ...]:
+    if found is None:
+        return kind, DASH, DASH, DASH, "not in this lab folder, or changed since", sha256
+    verdict = str(found.result.get("verdict") or ("passed" if found.passed else "did not pass"))
+    return kind, found.subject, local_time(found.started_utc, offset), verdict, found.path.stem, sha256
+
+
+def traceability(plan: Mapping[str, Any], offset: Any) -> list[tuple[str, Facts]]:
+    """Return what the plan says that the result rests on: lot, burette, blank, weighing, preparation, excess."""
+    trace = plan.get("traceability")
+    if not isinstance(trace, dict):
+        return []
+    sections: list[tuple[str, Facts]] = []
+    lot = trace.get("lot")
+    if isinstance(lot, dict):
+        sections.append(("Standardised lot in force", _lot(lot, offset)))
+    if trace.get("standard_lot_id"):
+        sections.append(("Primary standard", [("lot", str(trace["standard_lot_id"]))]))
+    for part in _PARTS:
+        facts = facts_of(trace.get(part), offset, leave_out=("dilutions",))
+        facts += _dilutions(trace.get(part))
+        if facts:
+            sections.append((f"{part.capitalize()} taken into account", facts))
+    return sections
+
+
+def _lot(lot: dict[str, Any], offset: Any) -> Facts:
+    facts = facts_of(lot, offset, leave_out=("causes", "concentration_mol_l", "own_standard_uncertainty_mol_l"))
+    value, u = with_uncertainty(lot.get("concentration_mol_l"), lot.get("own_standard_uncertainty_mol_l"))
+    facts.insert(1, ("concentration", f"{value} mol/L (own u = {u} mol/L)"))
+    for cause in lot.get("causes") or []:
+        facts.append((f"shared with {cause.get('shared_id')}", f"{number(cause.get('contribution_mol_l'))} mol/L"))
+    return facts
+
+
+def _dilutions(part: Any) -> Facts:
+    given = part.get("dilutions") if isinstance(part, dict) else None
+    return [
+        (
+            f"dilution {index}",
+            f"made up to {number(one.get('made_up_to_ml'))} mL, {number(one.get('aliquot_ml'))} mL on",
+        )
+        for index, one in enumerate(given or [], start=1)
+    ]
