@@ -44,11 +44,22 @@ class PortSettings(Settings):
     port: str = words(
         '"simulated", a port name, a device path, a pyserial URL, or the USB serial number of the adapter'
     )
-    speaks: Literal["scpi"] = Field(default="scpi", description="grammar of the device")
+    speaks: Literal["scpi", "dialect", "modbus"] = Field(default="scpi", description="grammar of the device")
+    dialect: str | None = words(
+        "how it is spoken to where it speaks no SCPI: a file of the lab folder, or the name of a shipped dialect",
+        default=None,
+    )
     baud_rate: int = number(300, 4000000, "symbols per second on the line", default=115200)
     dtr: bool = Field(default=False, description="state of the DTR line when the port opens; many boards restart on it")
     rts: bool = Field(default=False, description="state of the RTS line when the port opens")
     reply_time_out_s: float = number(0.05, 30, "time in which the device must answer", default=1.0)
+
+    def disagreements(self) -> list[Disagreement]:
+        """Return a dialect where none is spoken, and none where one is."""
+        if (self.dialect is None) != (self.speaks == "scpi"):
+            allowed = "nothing with speaks: scpi, a file or a shipped name with speaks: dialect or modbus"
+            return [Disagreement("dialect", self.dialect or "nothing", allowed)]
+        return []
 
 
 class PumpSettings(PortSettings):
@@ -69,8 +80,10 @@ class PumpSettings(PortSettings):
     )
 
     def disagreements(self) -> list[Disagreement]:
-        """Return a rate above the highest and a step larger than the syringe."""
-        found = []
+        """Return a rate above the highest, a step larger than the syringe, and what does not fit its port."""
+        found = super().disagreements()
+        if self.speaks == "modbus":
+            found.append(Disagreement("speaks", "modbus", "scpi | dialect: Modbus is for transmitters, not for pumps"))
         if self.rate_ml_min > self.highest_rate_ml_min:
             allowed = f"at most highest_rate_ml_min, {self.highest_rate_ml_min:g} mL/min"
             found.append(Disagreement("rate_ml_min", self.rate_ml_min, allowed))
@@ -109,6 +122,9 @@ class ProbeSettings(PortSettings):
     """The probe with its meter."""
 
     signal: Literal["potential", "ph"] = Field(default="potential", description="what the meter gives")
+    ph_standard_uncertainty: float | None = number(
+        0.0001, 1, "standard uncertainty of the meter's own pH, with signal: ph", default=None
+    )
     resolution_mv: float = number(0.0001, 10, "smallest step of a reading", default=0.1)
     reading_interval_s: float = number(0.05, 60, "time between readings", default=0.5)
     typed_temperature_c: float | None = number(-5, 100, "temperature where there is no sensor", default=None)
@@ -116,6 +132,19 @@ class ProbeSettings(PortSettings):
     response: ResponseSettings | None = Field(
         default=None, description="last response check; left out: lag is not known"
     )
+
+    def disagreements(self) -> list[Disagreement]:
+        """Return a meter's own pH without its uncertainty, or with a calibration that is not its own."""
+        found = super().disagreements()
+        own = self.signal == "ph"
+        if own and self.speaks == "scpi":
+            found.append(Disagreement("signal", "ph", "potential with speaks: scpi, whose probes give the potential"))
+        if own != (self.ph_standard_uncertainty is not None):
+            allowed = "a number with signal: ph, nothing with signal: potential"
+            found.append(Disagreement("ph_standard_uncertainty", self.ph_standard_uncertainty, allowed))
+        if own and self.calibration is not None:
+            found.append(Disagreement("calibration", "a mapping", "nothing with signal: ph: the meter has its own"))
+        return found
 
 
 class BenchSettings(Settings):
@@ -131,6 +160,7 @@ class BenchSettings(Settings):
         default=(), max_length=20, description="bottles of buffer that this bench keeps"
     )
     calibration_rules: CalibrationRules = group(CalibrationRules, "limits and dates of calibrations")
+    traffic_log: bool = Field(default=False, description="keep everything that goes over the lines in logs/traffic.log")
     simulation: SimulationSettings | None = Field(
         default=None, description="the simulated world behind simulated ports"
     )

@@ -131,8 +131,8 @@ class _Search:
 
     def _probe(self, identity: str) -> ProbeCalibration | None:
         remedy = "Calibrate with 'halfdrop calibrate probe'"
-        if self.method.signal != "ph":
-            return None
+        if self.method.signal != "ph" or self.bench.probe.signal == "ph":
+            return None  # no pH is followed, or the meter has a calibration of its own
         record = self._taken("probe", identity, "probe calibration", remedy)
         if record is None:
             self._entered_by_hand(remedy)

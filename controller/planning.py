@@ -36,7 +36,7 @@ from controller.titration.plan import (
     WeakAcid,
 )
 from controller.titration.traceability import Replicate
-from simulators.constants import debye_huckel_a_at, pka_at, pkw_at
+from simulators.constants import debye_huckel_a_at, ideal_slope_mv, pka_at, pkw_at
 
 #: questions that every run asks before its first dose
 PROTECTION = Question(
@@ -257,13 +257,9 @@ def expected_volume_ml(method: MethodSettings, sample: Sample) -> float | None:
 def _probe(
     method: MethodSettings, settings: ProbeSettings, identity: str, calibrated: ProbeCalibration | None
 ) -> Probe:
-    if settings.signal == "ph":
-        raise HalfdropError(
-            "probe.signal: got ph; this version works from the potential, allowed: potential",
-            where="bench",
-            remedy="Set the meter to give mV, and probe.signal to potential",
-        )
     calibration = settings.calibration
+    if settings.signal == "ph":
+        calibrated = _meters_own(method, settings)
     if method.signal == "ph" and calibration is None and calibrated is None:
         raise HalfdropError(
             "the method follows pH, and the probe has no calibration",
@@ -287,6 +283,25 @@ def _probe(
         response=_response(settings),
         resolution_mv=settings.resolution_mv,
         reading_interval_s=settings.reading_interval_s,
+    )
+
+
+def _meters_own(method: MethodSettings, settings: ProbeSettings) -> ProbeCalibration:
+    """Return what makes a meter's own pH again of the potential that its driver made of it (drivers/meter_ph.py)."""
+    if method.signal != "ph":
+        raise HalfdropError(
+            "the method follows the potential, the meter gives only its own pH (probe.signal: ph)",
+            where=f"method {method.name}",
+            remedy="Use a method with signal: ph, or a meter that gives mV",
+        )
+    assert settings.ph_standard_uncertainty is not None  # the bench file was checked
+    return ProbeCalibration(
+        slope_fraction=1.0,
+        isopotential_ph=7.0,
+        isopotential_mv=0.0,
+        slope_fraction_standard_uncertainty=0.0,
+        offset_standard_uncertainty_mv=settings.ph_standard_uncertainty * ideal_slope_mv(method.temperature_c),
+        source="meter",
     )
 
 

@@ -60,6 +60,10 @@ class BuretteTalk:
         """The smallest volume it can deliver."""
         return self.known.step_ml
 
+    def forget(self) -> None:
+        """Ask what it says of itself anew, and set its watchdog again: it may have been switched off meanwhile."""
+        self._known = None
+
     def identity(self) -> Identity:
         """Ask who it is."""
         return self.exchange.ask(tree.IDENTITY.query, lambda units: tree.read_identity(only(units)))

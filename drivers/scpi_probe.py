@@ -10,6 +10,7 @@ from drivers.exchange import Exchange, only
 from drivers.identity import Identity
 from drivers.link import Link
 from drivers.probe import ProbeReading
+from drivers.reunion import Acquaintance
 from drivers.scpi import ScpiError
 
 _READ = tree.READ.query
@@ -23,6 +24,7 @@ class ScpiProbe:
         self._exchange = Exchange(link)
         self._clock, self._stop = clock, stop
         self._last_sequence: int | None = None
+        self._acquaintance = Acquaintance(link, self._who)
 
     def identify(self) -> Identity:
         """Ask who the device is.
@@ -30,6 +32,9 @@ class ScpiProbe:
         Raises:
             DeviceError: silent, garbled or gone.
         """
+        return self._acquaintance.identity()
+
+    def _who(self) -> Identity:
         return self._exchange.ask(_IDENTIFY, lambda units: tree.read_identity(only(units)))
 
     def read(self) -> ProbeReading:

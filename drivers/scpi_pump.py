@@ -18,6 +18,7 @@ from drivers.exchange import ATTEMPTS
 from drivers.identity import Identity
 from drivers.link import Link
 from drivers.pump import Delivered, LastDose, PumpStatus, Refill
+from drivers.reunion import Acquaintance
 from drivers.scpi_burette import BuretteTalk
 from drivers.scpi_dose import ScpiDose, pause_s
 
@@ -35,6 +36,7 @@ class ScpiPump:
     ) -> None:
         self._talk = BuretteTalk(link)
         self._where = link.where
+        self._acquaintance = Acquaintance(link, self._talk.identity, self._talk.forget)
         self._clock, self._stop, self._rate_ml_min = clock, stop, rate_ml_min
 
     @property
@@ -58,7 +60,7 @@ class ScpiPump:
         Raises:
             DeviceError: silent, garbled or gone.
         """
-        return self._talk.identity()
+        return self._acquaintance.identity()
 
     def status(self) -> PumpStatus:
         """Ask for the account; while the pump stands, until two replies in a row agree, as a digit may be garbled.

@@ -10,6 +10,7 @@ waits for one; potentials are in 0.01 mV, temperatures in 0.1 degrees C.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import TYPE_CHECKING, Literal
 
 from configs.errors import HalfdropError
@@ -210,7 +211,7 @@ class OrchardLaneMeter:
 
     Args:
         streams_every_s: it tells a reading of itself so often; None: only when asked.
-        ph_temperature_c: it gives pH (ideal slope, zero at pH 7) at this temperature; None: it gives the potential.
+        ph_of: its own calibration: it gives the pH of a potential in mV; None: it gives the potential.
     """
 
     def __init__(
@@ -219,10 +220,10 @@ class OrchardLaneMeter:
         *,
         serial: str,
         streams_every_s: float | None = None,
-        ph_temperature_c: float | None = None,
+        ph_of: Callable[[float], float] | None = None,
     ) -> None:
         self.sensor, self.serial, self.readings = sensor, serial, 0
-        self._every_s, self._ph_temperature_c = streams_every_s, ph_temperature_c
+        self._every_s, self._ph_of = streams_every_s, ph_of
         self._next_s = 0.0 if streams_every_s else math.inf
         self._lines = _Lines()
 
@@ -259,7 +260,6 @@ class OrchardLaneMeter:
         seen = self.sensor.read(at_s, self.readings)
         status = {"ok": "fine", "open circuit": "open"}.get(seen.status, "wet")
         tenths = "none" if seen.temperature_c is None else str(round(10.0 * seen.temperature_c))
-        if self._ph_temperature_c is None:
+        if self._ph_of is None:
             return f"{self.readings}: {round(100.0 * seen.potential_mv)} at {tenths}, {status}"
-        slope_mv = 0.19842143 * (self._ph_temperature_c + 273.15)  # 1000 ln 10 R/F, mV/K
-        return f"{self.readings}: pH {7.0 - seen.potential_mv / slope_mv:.3f} at {tenths}, {status}"
+        return f"{self.readings}: pH {self._ph_of(seen.potential_mv):.3f} at {tenths}, {status}"

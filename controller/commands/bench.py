@@ -54,7 +54,9 @@ def _lines(bench: BenchSettings) -> list[str]:
         f"probe on {probe.port}: reads every {probe.reading_interval_s:g} s to {probe.resolution_mv:g} mV",
     ]
     found = probe.calibration
-    if found is None:
+    if probe.signal == "ph":
+        lines.append(f"calibration: the meter's own, u = {probe.ph_standard_uncertainty:g} as stated in the bench file")
+    elif found is None:
         lines.append("calibration: none; only methods with signal: potential can run")
     else:
         lines.append(

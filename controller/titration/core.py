@@ -85,6 +85,9 @@ class _Run:
         potentials, temperatures = yield from self._rest_readings()
         self.probe.noise = noise = measure_noise(potentials, self.plan.probe.resolution_mv)
         temperature_c = self.plan.chemistry.temperature_c
+        calibration = self.plan.probe.calibration
+        if calibration is not None and calibration.source == "meter":
+            temperatures = []  # its own pH became a potential at the plan's temperature, and becomes pH again there
         if temperatures and LIQUID_C[0] <= (measured_c := round(median(temperatures), 1)) <= LIQUID_C[1]:
             temperature_c = measured_c
         elif temperatures:

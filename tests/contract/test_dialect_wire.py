@@ -332,7 +332,7 @@ def probe(request, route, built, plain_sensor):
         return built(route, stream, sensor=plain_sensor, streams_every_s=0.25)
     if kind == "ph":
         as_ph = changed(PROBE, "probe", read={"say": "tell", "hear": "<sequence>: pH <ph> at <temperature>, <status>"})
-        return built(route, as_ph, sensor=plain_sensor, ph_temperature_c=25.0)
+        return built(route, as_ph, sensor=plain_sensor, ph_of=lambda mv: 7.0 - mv / 59.1593)
     return built(route, PROBE, sensor=plain_sensor)
 
 
