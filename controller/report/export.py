@@ -12,6 +12,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from controller.record import Record, points
+from controller.reevaluation import added_evaluations
 
 #: file name: (title, columns as (name, Table Schema type, what it is))
 TABLES: dict[str, tuple[str, tuple[tuple[str, str, str], ...]]] = {
@@ -24,6 +25,31 @@ TABLES: dict[str, tuple[str, tuple[tuple[str, str, str], ...]]] = {
             ("potential_mv", "number", "potential, mV"),
             ("ph", "number", "pH by the calibration of the record"),
             ("settled", "boolean", "whether the reading settled within the time allowed"),
+            ("volume_sd_ml", "number", "standard deviation that the run gave the volume, mL"),
+            ("potential_sd_mv", "number", "standard deviation that the run gave the potential, mV"),
+        ),
+    ),
+    "doses.csv": (
+        "Every dose with its reason",
+        (
+            ("at_s", "number", "run time at its end, s"),
+            ("number", "integer", "number of the dose"),
+            ("volume_ml", "number", "volume as the pump reports it, mL"),
+            ("delivered_ml", "number", "titrant volume delivered since the start, mL"),
+            ("reason", "string", "why this volume"),
+        ),
+    ),
+    "end_points.csv": (
+        "End points and every estimator's word on them",
+        (
+            ("evaluation", "string", "with the run, or the number of an added one"),
+            ("end_point", "integer", "number of the end point, from 1"),
+            ("reported", "boolean", "whether this estimate is the one that is reported"),
+            ("estimator", "string", "name of the estimator"),
+            ("volume_ml", "number", "end point volume, mL"),
+            ("standard_uncertainty_ml", "number", "its standard uncertainty, mL (reported estimates)"),
+            ("ph", "number", "pH there"),
+            ("potential_mv", "number", "potential there, mV"),
         ),
     ),
     "readings.csv": (
@@ -44,6 +70,8 @@ def tables(record: Record) -> dict[str, str]:
     return {
         "points.csv": _table("points.csv", points(record)),
         "readings.csv": _table("readings.csv", _readings(record)),
+        "doses.csv": _table("doses.csv", _doses(record)),
+        "end_points.csv": _table("end_points.csv", _end_points(record)),
     }
 
 
@@ -60,8 +88,15 @@ def data_package(record: Record, files: Mapping[str, str]) -> dict[str, Any]:
 
 
 def whole(record: Record) -> dict[str, Any]:
-    """Return a record as one JSON object: header, points, closing line."""
-    return {"run": str(record.path), "header": record.header, "points": points(record), "closing": record.closing}
+    """Return a record as one JSON object: header, points, doses, closing line, evaluations added beside it."""
+    return {
+        "run": str(record.path),
+        "header": record.header,
+        "points": points(record),
+        "doses": _doses(record),
+        "closing": record.closing,
+        "added_evaluations": [one.to_json() for one in added_evaluations(record.path)],
+    }
 
 
 def neutral(text: str) -> str:
@@ -76,6 +111,36 @@ def _readings(record: Record) -> list[dict[str, Any]]:
             delivered_ml += entry["volume_ml"]
         elif entry.get("observation") == "reading":
             rows.append({"status": "ok", **entry, "delivered_ml": round(delivered_ml, 9)})
+    return rows
+
+
+def _doses(record: Record) -> list[dict[str, Any]]:
+    rows, delivered_ml, reasons = [], 0.0, dict[Any, str]()
+    for entry in record.entries:
+        if entry.get("action") == "dose":
+            reasons[entry.get("number")] = str(entry.get("reason") or "")
+        elif entry.get("observation") == "dosed":
+            delivered_ml += entry["volume_ml"]
+            reason = reasons.get(entry.get("number"), "")
+            rows.append({**entry, "delivered_ml": round(delivered_ml, 9), "reason": reason})
+    keys = [column[0] for column in TABLES["doses.csv"][1]]
+    return [{key: row.get(key) for key in keys} for row in rows]
+
+
+def _end_points(record: Record) -> list[dict[str, Any]]:
+    own = (record.closing or {}).get("result") or {}
+    added = [(f"added {one.number}", one.content["result"]) for one in added_evaluations(record.path)
+             if one.state == "intact"]  # fmt: skip
+    rows = []
+    for evaluation, result in [("with the run", own), *added]:
+        for index, point in enumerate(result.get("end_points") or []):
+            shared = {"evaluation": evaluation, "end_point": index + 1}
+            rows.append({**shared, **point, "reported": True})
+            rows += [
+                {**shared, "reported": False, "estimator": name, "volume_ml": volumes[index]}
+                for name, volumes in (result.get("estimators") or {}).items()
+                if index < len(volumes) and name != point.get("estimator")
+            ]
     return rows
 
 

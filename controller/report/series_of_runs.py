@@ -97,6 +97,7 @@ def _what(header: dict[str, Any]) -> tuple[Any, Any]:
 
 def together(records: Sequence[Record]) -> Together | None:
     """Return what runs of one sample say together; None for fewer than two."""
+    records = sorted(records, key=lambda one: str(one.header.get("started_utc")))
     named = [(one.path.stem, _result(one).get("result")) for one in records]
     made = replicates(named)
     if made is None:

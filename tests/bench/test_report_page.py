@@ -3,7 +3,11 @@
 from __future__ import annotations
 
 import base64
+import csv
+import hashlib
+import io
 import json
+import math
 import subprocess
 import sys
 import xml.etree.ElementTree as ET
@@ -16,6 +20,7 @@ import pytest
 from controller.cli import main
 from controller.record import list_records, read_record, verify
 from controller.report.contents import report_contents
+from controller.report.export import data_package, tables
 from controller.report.page import render
 from controller.report.wording import local_time
 
@@ -285,3 +290,43 @@ def test_add_needs_a_record(halfdrop: Run, tmp_path: Path) -> None:
     status, _, err = halfdrop("evaluate", str(table), "--add")
     assert status == 2
     assert "beside a record" in err
+
+
+def test_every_exported_cell_is_of_the_type_that_the_package_states(runs: list[Path]) -> None:
+    # Table Schema (frictionlessdata.io): number, integer and boolean as its text defines them; missing is empty
+    record = read_record(runs[2])
+    files = tables(record)
+    package = data_package(record, files)
+    assert {one["path"] for one in package["resources"]} == {
+        "points.csv",
+        "readings.csv",
+        "doses.csv",
+        "end_points.csv",
+    }
+    for resource in package["resources"]:
+        text = files[resource["path"]]
+        assert resource["hash"] == f"sha256:{hashlib.sha256(text.encode()).hexdigest()}"
+        head, *rows = csv.reader(io.StringIO(text))
+        fields = resource["schema"]["fields"]
+        assert head == [one["name"] for one in fields]
+        assert rows
+        for row in rows:
+            for cell, field in zip(row, fields, strict=True):
+                assert fits(cell, field["type"]), (resource["path"], field["name"], cell)
+    doses = list(csv.DictReader(io.StringIO(files["doses.csv"])))
+    assert float(doses[-1]["delivered_ml"]) == pytest.approx(record.closing["result"]["titrant_ml"])
+    reported = [one for one in csv.DictReader(io.StringIO(files["end_points.csv"])) if one["reported"] == "true"]
+    assert [one["end_point"] for one in reported] == ["1", "2"]
+    assert not any(cell[:1] in ("=", "+", "-", "@") for one in doses for cell in (one["reason"],))
+
+
+def fits(cell: str, kind: str) -> bool:
+    """Whether a cell is empty or of a Table Schema type."""
+    if cell == "" or kind == "string":
+        return True
+    if kind == "boolean":
+        return cell in ("true", "false")
+    try:
+        return math.isfinite(float(cell)) and (kind != "integer" or cell.lstrip("-").isdigit())
+    except ValueError:
+        return False

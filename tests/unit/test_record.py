@@ -223,9 +223,10 @@ def test_points_and_tables(tmp_path: Path) -> None:
     assert [point["volume_ml"] for point in points(record)] == [0.099, 0.2]
     files = tables(record)
     rows = list(csv.reader(io.StringIO(files["points.csv"])))
-    assert rows[0] == ["at_s", "volume_ml", "delivered_ml", "potential_mv", "ph", "settled"]
-    assert rows[1] == ["1.25", "0.099", "0.1", "-17.5", "7.3", "true"]
-    assert rows[2] == ["1.25", "0.2", "0.2", "-20.0", "", "false"]
+    names = ["at_s", "volume_ml", "delivered_ml", "potential_mv", "ph", "settled"]
+    assert rows[0] == [*names, "volume_sd_ml", "potential_sd_mv"]
+    assert rows[1] == ["1.25", "0.099", "0.1", "-17.5", "7.3", "true", "", ""]
+    assert rows[2] == ["1.25", "0.2", "0.2", "-20.0", "", "false", "", ""]
     readings = list(csv.DictReader(io.StringIO(files["readings.csv"])))
     assert readings == [
         {"at_s": "1.25", "delivered_ml": "0.1", "potential_mv": "-17.5", "temperature_c": "25.0", "status": "ok"}
