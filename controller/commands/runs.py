@@ -18,6 +18,8 @@ if TYPE_CHECKING:
     from typing import Any
 
 SUFFIX = ".jsonl"
+#: stands for the newest record of the lab folder
+LATEST = "latest"
 DONE, CHECK_FAILED = 0, 1
 
 
@@ -144,12 +146,17 @@ def record_path(named: str, given: argparse.Namespace) -> Path:
     path = Path(named)
     if path.suffix == SUFFIX and path.is_file():
         return path
-    runs = _lab(given).runs
-    if path.name == named and (inside := runs / (path.stem + SUFFIX)).is_file():
-        return inside
+    lab = _lab(given)
+    runs = lab.runs
+    for folder in (runs, lab.calibrations):
+        if path.name == named and (inside := folder / (path.stem + SUFFIX)).is_file():
+            return inside
     from configs.nearest import did_you_mean
 
-    names = [one.stem for one in list_records(runs)]
+    records = list_records(runs)
+    if named == LATEST and records:
+        return records[-1]
+    names = [one.stem for one in records]
     raise HalfdropError(
         f"no record {named!r}{did_you_mean(named, names)}", where=str(runs), remedy="See 'halfdrop runs list'"
     )
