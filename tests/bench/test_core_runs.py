@@ -97,6 +97,23 @@ def test_carbonate_shows_two_end_points_with_an_acid(core_case) -> None:
     assert second == pytest.approx(5.0, abs=0.008)
 
 
+@pytest.mark.parametrize("strategy", [MODEL_GUIDED, BASELINE], ids=lambda s: s.name)
+def test_two_end_points_are_found_without_knowing_the_substance(core_case, strategy: Strategy) -> None:
+    case = core_case(
+        Mixture(weak=(weak(6.35, 10.33, mol_l=0.005),), ions=(cation(0.010),)),
+        analyte=None,
+        acid_titrant=True,
+        end_points=2,
+        strategy=strategy,
+        expected_ml=None,
+    )
+    result = case.run().result
+    assert result["outcome"] == "completed"
+    for found, true_ml in zip(result["end_points"], (2.5, 5.0), strict=True):
+        assert abs(found["volume_ml"] - true_ml) < 4.0 * found["standard_uncertainty_ml"]
+        assert found["standard_uncertainty_ml"] < 0.02
+
+
 def test_a_half_neutralised_salt_counts_its_last_proton(core_case) -> None:
     # hydrogen phthalate: 2.95 and 5.41 (NIST 46, from memory)
     case = core_case(
