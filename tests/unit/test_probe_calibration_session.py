@@ -1,4 +1,4 @@
-"""Calibrating the probe step by step: buffers recognised, refused, swapped; verdicts; acceptance. No devices, no files."""
+"""Calibrating the probe step by step: buffers recognised, refused, swapped; verdicts; acceptance."""
 
 from __future__ import annotations
 
@@ -15,7 +15,18 @@ from configs.settings import shipped_bench
 from controller.calibration.planning import PROBE_QUESTIONS, plan_probe
 from controller.calibration.plans import ProbePlan
 from controller.calibration.probe_session import calibrate_probe, lot_of
-from controller.titration.actions import Action, Answered, Ask, Command, Finish, Observation, Read, Reading, Report, Wait
+from controller.titration.actions import (
+    Action,
+    Answered,
+    Ask,
+    Command,
+    Finish,
+    Observation,
+    Read,
+    Reading,
+    Report,
+    Wait,
+)
 from simulators.buffer_beaker import BufferChemist, BufferShelf, Settling
 from simulators.electrode import Electrode, ElectrodeTruth
 
@@ -115,9 +126,7 @@ def test_every_step_says_rinse_blot_fresh_portion_and_never_back() -> None:
 
     table.calibrate(answer)
     assert len(texts) == 3
-    assert all(
-        words in text for text in texts for words in ("Rinse", "blot", "fresh portion", "Never pour it back")
-    )
+    assert all(words in text for text in texts for words in ("Rinse", "blot", "fresh portion", "Never pour it back"))
 
 
 def test_swapped_buffers_are_told_and_taken_for_what_they_read() -> None:
