@@ -116,6 +116,45 @@ def local_route() -> Route:
     return "pty" if os.name == "posix" else "tcp"
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ReachedBench:
+    """A bench whose devices can be opened one by one; none of them is. `temperature_c` is the method's."""
+
+    clock: Clock
+    operator: Operator
+    urls: tuple[str, str]
+    traffic: Mapping[str, TrafficLog]
+    temperature_c: float
+    connecting: Connecting
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Served:
+    """The devices of a simulated bench behind their ports."""
+
+    urls: tuple[str, str]
+    clock: Clock
+    world: VirtualBench
+    seed: int
+    pump_device: Device
+    faults: FaultScript | None
+
+
+@contextmanager
+def reach_bench(
+    bench: BenchSettings, method: MethodSettings, sample: Sample, *, opening: Opening, stop: StopSwitch
+) -> Iterator[ReachedBench]:
+    """Serve the ports of a simulated bench, open nothing, and close afterwards whatever was opened.
+
+    Raises:
+        HalfdropError: settings that do not fit together.
+    """
+    with ExitStack() as held:
+        yield _Opener(bench=bench, opening=opening, stop=stop, held=held, temperature_c=method.temperature_c).reached(
+            method, sample
+        )
+
+
 @contextmanager
 def open_bench(
     bench: BenchSettings, method: MethodSettings, sample: Sample, *, opening: Opening, stop: StopSwitch
@@ -142,6 +181,16 @@ class _Opener:
     temperature_c: float
 
     def simulated(self, method: MethodSettings, sample: Sample) -> OpenBench:
+        served = self.served(method, sample)
+        chemist = VirtualChemist(
+            served.world, served.clock.now_s, questions=method.questions, answers=self.opening.answers
+        )
+        opened = self._connected(served.urls, served.clock, chemist)
+        return replace(
+            opened, world=served.world, seed=served.seed, pump_device=served.pump_device, faults=served.faults
+        )
+
+    def served(self, method: MethodSettings, sample: Sample) -> _Served:
         simulation, opening = self.bench.simulation, self.opening
         assert simulation is not None  # the bench file was checked
         clock = clock_of(opening.time_scale, start_utc_s=opening.start_utc_s)
@@ -153,27 +202,42 @@ class _Opener:
         ports = self.held.enter_context(VirtualPorts(clock))
         route = opening.route or simulation.link
         name = f"{os.getpid()}-{id(ports):x}"  # ports in memory share one process
-        urls = tuple(
-            ports.add(f"{role}-{name}", device, route).url
-            for role, device in (("pump", pump_device), ("probe", probe_device))
-        )
+        pump_url = ports.add(f"pump-{name}", pump_device, route).url
+        probe_url = ports.add(f"probe-{name}", probe_device, route).url
         if faults is not None:
             for role in ("pump", "probe"):
                 faults.attach(ports, role, f"{role}-{name}")
-        chemist = VirtualChemist(world, clock.now_s, questions=method.questions, answers=opening.answers)
-        opened = self._connected((urls[0], urls[1]), clock, chemist)
-        return replace(opened, world=world, seed=seed, pump_device=pump_device, faults=faults)
+        return _Served(
+            urls=(pump_url, probe_url), clock=clock, world=world, seed=seed, pump_device=pump_device, faults=faults
+        )
+
+    def reached(self, method: MethodSettings, sample: Sample) -> ReachedBench:
+        opening, bench = self.opening, self.bench
+        clock: Clock
+        if is_simulated(bench):
+            served = self.served(method, sample)
+            urls, clock = served.urls, served.clock
+            answers = {"tip-over-waste": "yes", "probe-stored": "yes", **(opening.answers or {})}
+            operator: Operator = AnswersOperator(answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
+        else:
+            urls = (bench.pump.port, bench.probe.port)
+            clock = SystemClock() if opening.time_scale is None else clock_of(opening.time_scale)
+            operator = self._operator()
+        return ReachedBench(
+            clock=clock,
+            operator=operator,
+            urls=urls,
+            traffic=self._traffic(),
+            temperature_c=self.temperature_c,
+            connecting=self._connecting(clock),
+        )
 
     def real(self) -> OpenBench:
         opening, bench = self.opening, self.bench
         for option, given in (("--seed", opening.seed), ("--faults", opening.faults)):
             if given is not None:
                 raise self._not_simulated(option)
-        operator: Operator
-        if opening.answers is not None:
-            operator = AnswersOperator(opening.answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
-        else:
-            operator = ConsoleOperator()
+        operator = self._operator()
         if opening.time_scale is None:
             return self._connected((bench.pump.port, bench.probe.port), SystemClock(), operator)
         if opening.time_scale == FAST:
@@ -183,6 +247,21 @@ class _Opener:
             raise self._not_simulated("--time-scale")  # only a served simulated bench lives at another pace
         return opened
 
+    def _operator(self) -> Operator:
+        opening = self.opening
+        if opening.answers is None:
+            return ConsoleOperator()
+        return AnswersOperator(opening.answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
+
+    def _connecting(self, clock: Clock) -> Connecting:
+        return Connecting(
+            clock=clock,
+            stop=self.stop.event,
+            held=self.held,
+            place=self.opening.place,
+            unattended=self.opening.unattended,
+        )
+
     def _not_simulated(self, option: str) -> HalfdropError:
         return HalfdropError(
             f"{option} is for simulated benches, this one is real",
@@ -191,12 +270,9 @@ class _Opener:
         )
 
     def _connected(self, urls: tuple[str, str], clock: Clock, operator: Operator) -> OpenBench:
-        bench, event = self.bench, self.stop.event
+        bench = self.bench
         traffic = self._traffic()
-        opening = self.opening
-        connecting = Connecting(
-            clock=clock, stop=event, held=self.held, place=opening.place, unattended=opening.unattended
-        )
+        connecting = self._connecting(clock)
         pump = connecting.pump(bench.pump, url=urls[0], traffic=traffic["pump"])
         probe = connecting.probe(bench.probe, temperature_c=self.temperature_c, url=urls[1], traffic=traffic["probe"])
         pump_identity, probe_identity, status = pump.identify(), probe.identify(), pump.status()

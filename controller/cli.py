@@ -278,7 +278,7 @@ def _replay(made: Parser) -> None:
 
 def _schema(made: Parser) -> None:
     made.set_defaults(function="controller.commands.schema:schema")
-    made.add_argument("kind", choices=("method", "bench", "solution"))
+    made.add_argument("kind", choices=("method", "bench", "solution", "dialect"))
 
 
 def _runs(group: Parser) -> None:
@@ -310,12 +310,31 @@ def _runs(group: Parser) -> None:
     _lab(made)
 
 
+def _at_bench(made: Parser) -> None:
+    _lab(made)
+    _world(made)
+    made.add_argument("--answers", metavar="FILE", help="answers to the questions (YAML)")
+    made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
+    made.add_argument("--traffic-log", action="store_true", help="keep what goes over the lines in logs/traffic.log")
+    _json(made)
+
+
 def _bench(group: Parser) -> None:
     actions = group.add_subparsers(dest="action", metavar="ACTION", parser_class=Parser, required=True)
     made = _action(actions, "show", "controller.commands.bench:show", "devices, limits, accounts, calibration")
     _lab(made)
     made.add_argument("--bench", metavar="FILE")
     _json(made)
+    made = _action(actions, "ports", "controller.commands.bench_ready:ports", "serial ports by lasting names")
+    _json(made)
+    made = _action(actions, "check", "controller.commands.bench_ready:check", "readings, a dry dose, stop, watchdog")
+    _at_bench(made)
+    made.add_argument("--no-motion", action="store_true", help="only what moves nothing")
+    made = _action(actions, "ready", "controller.commands.bench_ready:ready", "could a run begin now; nothing moves")
+    _at_bench(made)
+    made = _action(actions, "shut-down", "controller.commands.bench_ready:shut_down", "stop, empty, see to the probe")
+    _at_bench(made)
+    made.add_argument("--empty", action="store_true", help="push what the syringe holds into the waste")
     made = _action(actions, "serve", "controller.commands.bench:serve", "offer a simulated bench's ports to programs")
     _lab(made)
     _world(made)

@@ -6,7 +6,7 @@ import contextlib
 import threading
 from typing import TYPE_CHECKING
 
-from drivers.clock import Clock
+from drivers.clock import Clock, real_seconds_scale
 from drivers.dialect_account import DialectAccount, Tally
 from drivers.dialect_push import POLL_S, DialectPush
 from drivers.dialect_talk import ATTEMPTS, DialectTalk
@@ -144,6 +144,26 @@ class DialectPump:
         self._may_begin("priming")
         push = self._push("priming", volume_ml)
         return self._delivered(push, None)
+
+    def watchdog_s(self) -> float | None:
+        """Return the silence, s of real time, after which the pump halts; None: the dialect cannot say so."""
+        return None if self._sayings.watchdog is None else WATCHDOG_S
+
+    def dose_and_fall_silent(self, number: int, volume_ml: float, silence_s: float) -> LastDose:
+        """Begin a dose, say nothing for `silence_s` of real time, then ask what became of it (see drivers/silence.py).
+
+        Raises:
+            DeviceError, StoppedError: as `dose`.
+        """
+        push = self._push(f"dose {number}", volume_ml)
+        self._last = (number, push, None)
+        push.begin()
+        if self._clock.wait(silence_s * real_seconds_scale(self._clock), self._stop):
+            raise self._halted(push, number)
+        last = self.last_dose()
+        if last.state != "moving":
+            self._book(push, last.volume_ml, number)
+        return last
 
     def fill(self) -> PumpStatus:
         """Fill the syringe, and wait until it is done; a fill that is told once more goes no further than full.

@@ -129,6 +129,10 @@ class DialectPush:
         """Whether a count of nothing after an unfinished push may be that of a pump just switched on."""
         return tally.starts is None and tally.level_ml is not None and abs(tally.level_ml) <= self._tolerance_ml
 
+    def begin(self) -> None:
+        """Push and wait for nothing. Raises: as `deliver`."""
+        self._begin()
+
     def unknown(self, why: str) -> DoseUnknownError:
         """Return the error of a push whose volume cannot be told."""
         return DoseUnknownError(

@@ -109,6 +109,10 @@ class ScpiDose:
             highest_ml=last.volume_ml,
         )
 
+    def begin(self) -> None:
+        """Start it and wait for nothing. Raises: as `deliver`."""
+        self._start()
+
     def _start(self) -> LastDose:
         self._started_at_s = self._clock.now_s()
         self._may_have_begun = True

@@ -6,7 +6,7 @@ import threading
 from collections.abc import Callable
 
 from drivers import scpi_tree as tree
-from drivers.clock import Clock
+from drivers.clock import Clock, real_seconds_scale
 from drivers.errors import (
     DeviceError,
     DeviceGarbledError,
@@ -19,7 +19,7 @@ from drivers.identity import Identity
 from drivers.link import Link
 from drivers.pump import Delivered, LastDose, PumpStatus, Refill
 from drivers.reunion import Acquaintance
-from drivers.scpi_burette import BuretteTalk
+from drivers.scpi_burette import WATCHDOG_S, BuretteTalk
 from drivers.scpi_dose import ScpiDose, pause_s
 
 
@@ -118,6 +118,27 @@ class ScpiPump:
             if error.lowest_ml is None:
                 error.lowest_ml, error.highest_ml = (0.0, 0.0) if dose is None else dose.bounds_ml()
             raise
+
+    def watchdog_s(self) -> float | None:
+        """Return the silence, s of real time, after which the pump halts."""
+        return WATCHDOG_S
+
+    def dose_and_fall_silent(self, number: int, volume_ml: float, silence_s: float) -> LastDose:
+        """Begin a dose, say nothing for `silence_s` of real time, then ask what became of it (see drivers/silence.py).
+
+        Raises:
+            DeviceError, StoppedError: as `dose`.
+        """
+        rate = self._rate_ml_min or self._talk.known.usual_rate_ml_min
+        steps = self._whole_steps(volume_ml)
+        dose = ScpiDose(self._talk, self._clock, self._stop, number=number, steps=steps, rate=rate)
+        dose.arm()
+        dose.begin()
+        if self._clock.wait(silence_s * real_seconds_scale(self._clock), self._stop):
+            raise StoppedError(
+                f"stopped in dose {number}", where=self._where, remedy="Look at the pump", confirmed=self.stop()
+            )
+        return self.last_dose()
 
     def fill(self) -> PumpStatus:
         """Fill the syringe, and wait until it is done.

@@ -1,0 +1,210 @@
+"""halfdrop bench check, ready, ports, shut-down: is everything there, does it work, and is it left as it should be."""
+
+from __future__ import annotations
+
+import argparse
+import os
+from argparse import Namespace
+from collections.abc import Callable, Iterable, Iterator
+from contextlib import ExitStack, contextmanager
+from dataclasses import asdict
+from pathlib import Path
+
+from configs.benchfile import BenchSettings
+from controller.assembly import Opening, ReachedBench, reach_bench
+from controller.bench_check import BenchCheck
+from controller.bench_finding import Finding
+from controller.bench_shutdown import shut_down_steps
+from controller.commands.bench import DEFAULT_METHOD
+from controller.commands.output import print_json, print_table, say
+from controller.commands.settings import Chosen, answers_of, chosen
+from controller.commands.signals import pulling
+from controller.labfolder import Lab
+from controller.lock import lock_device, lock_lab
+from controller.planning import SampleChoice, plan_sample
+from controller.record import printable
+from controller.stopping import StopSwitch
+from controller.unclosed import unclosed
+from drivers.errors import StoppedError
+from drivers.ports import named_ports
+
+DONE, CHECK_FAILED = 0, 1
+
+
+def check(given: argparse.Namespace) -> int:
+    """Walk through the bench; exit status 1 where a step failed."""
+    return _walked(given, lambda bench: bench.walk(moving=not given.no_motion))
+
+
+def ready(given: argparse.Namespace) -> int:
+    """Tell whether a run could begin now; nothing moves."""
+
+    def steps(bench: BenchCheck, picked: Chosen) -> Iterator[Finding]:
+        yield from bench.walk(moving=False)
+        yield from _account(picked.bench, bench)
+        yield from _calibrated(picked.bench)
+        if picked.lab is not None and bench.passed.pump_identity is not None:
+            yield from _open_runs(picked.lab, bench.passed.pump_identity)
+
+    return _walked(given, steps, with_choice=True)
+
+
+def shut_down(given: argparse.Namespace) -> int:
+    """Stop the pump, empty the syringe if asked to, and see to the probe."""
+
+    def steps(bench: BenchCheck, picked: Chosen) -> Iterator[Finding]:
+        yield from bench.pump()
+        yield from shut_down_steps(
+            bench.passed.pump, bench.passed.status, bench.operator, picked.bench, empty=given.empty
+        )
+
+    return _walked(given, steps, with_choice=True)
+
+
+def ports(given: argparse.Namespace) -> int:
+    """List the ports of this computer by the names a bench file may use; sends nothing to anything."""
+    found = named_ports()
+    if given.json:
+        print_json({"ports": [asdict(port) for port in found]})
+        return DONE
+    if not found:
+        say("no serial port is there" + _hint())
+        return DONE
+    rows = [
+        [
+            printable(text)
+            for text in (
+                port.stable, port.path, port.usb_serial or "-", port.vendor_product or "-", port.owner or "free",
+                port.description,
+            )
+        ]
+        for port in found
+    ]  # fmt: skip
+    print_table(("name for the bench file", "path now", "USB serial", "USB id", "used by", "what it is"), rows)
+    return DONE
+
+
+def _hint() -> str:
+    if os.name != "posix":
+        return "; look into the device manager for a driver that is missing"
+    return "; plug the adapter in and look again (in a virtual machine or container it must be passed through)"
+
+
+def _walked(given: argparse.Namespace, steps: Callable[..., Iterable[Finding]], *, with_choice: bool = False) -> int:
+    picked = chosen(Namespace(**{**vars(given), "method": DEFAULT_METHOD}), lab_needed=False)
+    findings: list[Finding] = []
+    why_ended: str | None = None
+    with _bench(given, picked) as bench:
+        try:
+            for finding in steps(bench, picked) if with_choice else steps(bench):
+                findings.append(finding)
+                if not given.json:
+                    print("\n".join(printable(line) for line in _lines(finding)), flush=True)
+        except StoppedError as stopped:
+            why_ended = str(stopped)
+    failed = [finding for finding in findings if finding.verdict == "failed"]
+    if given.json:
+        print_json({"verdict": _verdict(findings, why_ended), "findings": [asdict(one) for one in findings]})
+    else:
+        print(f"verdict: {_verdict(findings, why_ended)}")
+    return CHECK_FAILED if failed or why_ended else DONE
+
+
+@contextmanager
+def _bench(given: argparse.Namespace, picked: Chosen) -> Iterator[BenchCheck]:
+    stop, lab = StopSwitch(), picked.lab
+    opening = Opening(
+        seed=given.seed,
+        time_scale=given.time_scale,
+        answers=answers_of(given),
+        answers_from=given.answers or "answers",
+        place=Path.cwd() if lab is None else lab.path,
+        traffic_log=given.traffic_log,
+    )
+    sample = plan_sample(picked.method, SampleChoice())
+    with ExitStack() as held:
+        held.enter_context(pulling(stop, headless=True))
+        if lab is not None:
+            held.enter_context(lock_lab(lab.writable().path, {"command": "bench"}))
+        reached: ReachedBench = held.enter_context(
+            reach_bench(picked.bench, picked.method, sample, opening=opening, stop=stop)
+        )
+
+        def locked(identity: str) -> None:
+            held.enter_context(lock_device(identity, {"command": "bench"}))
+
+        yield BenchCheck(picked.bench, reached, stop, locked)
+
+
+def _lines(finding: Finding) -> list[str]:
+    lines = [f"{finding.verdict:11s}  {finding.step}: {finding.what}"]
+    if finding.remedy is not None:
+        lines.append(f"{'':11s}  -> {finding.remedy}")
+    return lines
+
+
+def _verdict(findings: list[Finding], why_ended: str | None) -> str:
+    if why_ended is not None:
+        return f"broken off: {why_ended}"
+    count = {
+        verdict: sum(one.verdict == verdict for one in findings) for verdict in ("failed", "warning", "passed over")
+    }
+    if not any(count.values()):
+        return "all is well"
+    parts = [f"{number} {word}" for word, number in count.items() if number]
+    return ", ".join(parts)
+
+
+def _account(settings: BenchSettings, bench: BenchCheck) -> Iterator[Finding]:
+    status, pump = bench.passed.status, settings.pump
+    if status is None:
+        return
+    if pump.refill == "valve" and (pump.reservoir_ml if status.reservoir_ml is None else status.reservoir_ml) <= 0:
+        yield Finding(
+            step="titrant",
+            verdict="warning",
+            what="the reservoir is empty by its account",
+            remedy="Fill it, and say so",
+        )
+    most_ml = pump.syringe_ml + pump.reservoir_ml
+    room_ml = settings.vessel.tray_ml + settings.vessel.capacity_ml
+    if most_ml > room_ml:
+        yield Finding(
+            step="tray",
+            verdict="warning",
+            what=f"syringe and reservoir hold {most_ml:g} mL, vessel and tray {room_ml:g} mL: a runaway pump spills",
+            remedy="Use a larger tray, or a smaller reservoir",
+        )
+
+
+def _calibrated(settings: BenchSettings) -> Iterator[Finding]:
+    probe = settings.probe
+    if probe.signal == "ph":
+        yield Finding(
+            step="calibration", verdict="ok", what=f"the meter's own, u = {probe.ph_standard_uncertainty:g} as stated"
+        )
+    elif probe.calibration is None:
+        yield Finding(
+            step="calibration",
+            verdict="warning",
+            what="none stands in the bench file",
+            remedy="Calibrate the probe (halfdrop calibrate probe), unless it was and its record is in calibrations/",
+        )
+    else:
+        yield Finding(
+            step="calibration",
+            verdict="ok",
+            what=f"slope {probe.calibration.slope_percent:g} %, {probe.calibration.calibrated_utc or 'no date'}",
+        )
+
+
+def _open_runs(lab: Lab, pump_identity: str) -> Iterator[Finding]:
+    if records := unclosed(lab.runs, pump_identity):
+        yield Finding(
+            step="records",
+            verdict="failed",
+            what=f"a run was left open: {', '.join(record.stem for record in records)}",
+            remedy=f"Look at bench and vessel, then halfdrop resume {records[0].stem}, or runs close",
+        )
+    else:
+        yield Finding(step="records", verdict="ok", what="no run is open")
