@@ -141,6 +141,7 @@ def _run(made: Parser) -> None:
     )
     made.add_argument("--operator", metavar="NAME", help="who runs it (kept in the record)")
     made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
+    made.add_argument("--traffic-log", action="store_true", help="keep what goes over the lines in logs/traffic.log")
     made.add_argument("--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)")
     made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
     made.add_argument("--faults", metavar="FILE", help="simulated bench only: what goes wrong, and when (YAML)")

@@ -75,6 +75,7 @@ def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun)
         answers_from=given.answers or "answers",
         place=lab.path,
         start_utc_s=_started_utc_s(broken) if simulated else None,
+        unattended=unattended,
     )
     with ExitStack() as held:
         held.enter_context(pulling(stop, headless=unattended))

@@ -53,6 +53,8 @@ def run(given: argparse.Namespace) -> int:
         answers_from=given.answers or "answers",
         place=lab.path,
         faults=load_faults(given.faults) if given.faults else None,
+        unattended=unattended,
+        traffic_log=given.traffic_log,
     )
     if given.series is not None:
         from controller.commands.series import run_series

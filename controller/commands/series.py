@@ -101,6 +101,7 @@ def resume_series(path: Path, lab: Lab, given: argparse.Namespace) -> int:
         answers=answers,
         answers_from=given.answers or "answers",
         place=lab.path,
+        unattended=given.headless or not sys.stdin.isatty(),
     )
     broken_off = _finish_open_run(state, lab, given)
     going = SeriesRun(
