@@ -52,7 +52,7 @@ def send_command(record: Path, command: str, **details: Any) -> None:
     Args:
         record: the run's record.
         command: "halt" (the pump stops at once, the run waits), "end", "pause", "go-on", "dose" (volume_ml), "note"
-            (text), "time-scale" (scale), "hello".
+            (text), "answer" (key, text), "time-scale" (scale), "hello".
         details: as the command needs.
 
     Raises:

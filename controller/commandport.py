@@ -27,6 +27,7 @@ from typing import Any
 from controller.commandclient import HOST, MOST_LINE_BYTES, SUFFIX
 from controller.stopping import StopSwitch
 from controller.titration.actions import Command
+from drivers.operator import fitting_choice
 
 MOST_CONNECTIONS = 8
 MOST_WAITING = 32
@@ -72,6 +73,9 @@ class CommandPort:
         self._wake, self._woken = socket.socketpair()
         self._selector.register(self._woken, selectors.EVENT_READ)
         self._over = False
+        self._watched_s: float | None = None
+        self._asked: tuple[str, tuple[str, ...]] | None = None
+        self.answer: str | None = None  # of a viewer, to what is asked
         self._thread = threading.Thread(target=self._serve, name="command port", daemon=True)
         self._thread.start()
 
@@ -82,6 +86,21 @@ class CommandPort:
     def take(self) -> Command | None:
         """Return the next command, None where there is none."""
         return self._commands.popleft() if self._commands else None
+
+    def watched_within(self, seconds: float | None) -> bool:
+        """Tell whether anybody with the token was heard in the last real seconds (None: ever)."""
+        if self._watched_s is None:
+            return False
+        return seconds is None or time.monotonic() - self._watched_s <= seconds
+
+    @contextmanager
+    def asking(self, key: str, choices: tuple[str, ...]) -> Iterator[None]:
+        """Take answers to this question while the block runs; `answer` is set when one came."""
+        self.answer, self._asked = None, (key, choices)
+        try:
+            yield
+        finally:
+            self._asked = None
 
     def close(self) -> None:
         """Hang up on everybody."""
@@ -152,6 +171,7 @@ class CommandPort:
         token = told.get("token") if isinstance(told, dict) else None
         if not isinstance(token, str) or not hmac.compare_digest(token.encode(), self._token):
             return {"done": False, "what": "wrong token"}, False
+        self._watched_s = time.monotonic()
         try:
             self._obey(told)
         except CommandRefusedError as error:
@@ -170,12 +190,24 @@ class CommandPort:
                 if self._set_time_scale is None:
                     raise CommandRefusedError("time is real on this bench")
                 self._set_time_scale(_number(told, "scale", 0.1, 1000.0))
+            case "answer":
+                self._take_answer(told)
             case str(name) if name in QUEUED:
                 if len(self._commands) >= MOST_WAITING:
                     raise CommandRefusedError(f"{MOST_WAITING} commands wait already")
                 self._commands.append(_command(name, told))
             case other:
                 raise CommandRefusedError(f"no command {other!r}")
+
+
+    def _take_answer(self, told: dict[str, Any]) -> None:
+        asked = self._asked
+        if asked is None or told.get("key") != asked[0]:
+            raise CommandRefusedError("this is not asked (any more)")
+        answer = fitting_choice(str(told.get("text", "")), asked[1])
+        if answer is None:
+            raise CommandRefusedError(f"allowed: {', '.join(asked[1]) or 'any text'}")
+        self.answer = answer
 
 
 def _command(name: str, told: dict[str, Any]) -> Command:

@@ -13,16 +13,18 @@ from controller.amounts import amount_of_plan
 from controller.assembly import OpenBench, Opening, is_simulated, open_bench, time_scale_of
 from controller.commandport import command_port
 from controller.commands.keyboard import Keyboard
-from controller.commands.lines import Lines, result_lines
+from controller.commands.lines import result_lines
 from controller.commands.output import print_json
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
 from controller.commands.signals import pulling
+from controller.commands.watching import watching
 from controller.inforce import find_in_force, utc_day
 from controller.journal import Journal
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.outcome import RunResult
 from controller.planning import SampleChoice, expected_volume_ml, make_plan, plan_sample
+from controller.portoperator import PortOperator
 from controller.recordfile import new_record
 from controller.runner import run as carry_out
 from controller.stopping import Commands, StopSwitch
@@ -132,10 +134,11 @@ def _on_open_bench(
     disk = sink if bench.faults is None else bench.faults.disk(sink)
     journal = Journal(disk, bench.clock, name=str(sink.path))
     with ExitStack() as held:
-        commands: Commands = held.enter_context(
-            command_port(bench.stop, sink.path, set_time_scale=time_scale_of(bench.clock))
-        )
+        port = held.enter_context(command_port(bench.stop, sink.path, set_time_scale=time_scale_of(bench.clock)))
+        commands: Commands = port
         devices = bench.devices
+        if headless and bench.world is None:
+            devices = replace(devices, operator=PortOperator(devices.operator, port, bench.clock, bench.stop))
         if not headless:
             keyboard = Keyboard(bench.stop, devices.operator, ConsoleOperator(), commands)
             held.enter_context(pulling(bench.stop, headless=False, interrupt=keyboard.interrupt))
@@ -150,7 +153,7 @@ def _on_open_bench(
             commands=commands,
             operator_name=operator_name,
             hashes=hashes,
-            on_progress=Lines(sys.stderr),
+            on_progress=watching(plan, journal),
             amount_of=amount_of_plan,
         )
 

@@ -11,7 +11,8 @@ from textual.binding import Binding, BindingType
 from textual.screen import Screen
 
 from controller.labfolder import Lab
-from controller.ui.screens.run import RunScreen, leave_question
+from controller.ui.screens.commanding import leave_question
+from controller.ui.screens.run import RunScreen
 from controller.ui.theme import DAY, NIGHT
 
 
@@ -131,7 +132,7 @@ class HalfdropApp(App[int]):
     async def action_quit(self) -> None:
         """Leave the program; a run that goes on is asked about."""
         screen = self.screen
-        if isinstance(screen, RunScreen) and screen.live and screen._listens:
+        if isinstance(screen, RunScreen) and screen.live and screen.listens:
             self.push_screen(leave_question(), self._quit)
         else:
             self.exit(0)

@@ -40,6 +40,8 @@ class RunView:
     forecast: tuple[float, float] | None = None
     phase: str = "starting"
     question: str | None = None
+    question_key: str = ""
+    choices: tuple[str, ...] = ()
     paused: bool = False
     delivered_ml: float = 0.0
     contents_ml: float | None = None
@@ -122,6 +124,8 @@ class RunView:
                 self._say(str(entry["reason"]), "dose")
             case "ask":
                 self.question, self.phase = printable(str(entry["text"])), "waiting for an answer"
+                self.question_key = str(entry["key"])
+                self.choices = tuple(printable(str(one)) for one in entry.get("choices", ()))
                 self._say(str(entry["text"]), "question")
             case "refill":
                 self.phase = "filling the syringe"

@@ -25,6 +25,7 @@ from controller.ui.widgets.readout import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
 PLAYED_AT = 20.0
+_NAMES_WIDTH = 17
 
 
 class RecordScreen(RunScreen):
@@ -84,7 +85,8 @@ class CompareScreen(Screen[None]):
         first, second = (view_of(path) for path in self._paths)
         self.query_one(CurvePlot).show(first, second)
         self._text = compared_text(first, second)
-        self.query_one("#compared", Plain).say(self._text)
+        widest = (self.app.size.width - _NAMES_WIDTH) // 2
+        self.query_one("#compared", Plain).say(compared_text(first, second, widest=widest))
 
     def action_near(self) -> None:
         """Look closely at the equivalence point."""
@@ -109,9 +111,15 @@ def view_of(record: Path) -> RunView:
     return view
 
 
-def compared_text(first: RunView, second: RunView) -> str:
-    """Return both results as a small table, and how far they differ in their uncertainties."""
+def compared_text(first: RunView, second: RunView, *, widest: int = 200) -> str:
+    """Return both results as a small table, and how far they differ in their uncertainties.
+
+    Args:
+        first, second: the runs.
+        widest: longer cells are cut.
+    """
     rows = [("", "A", "B"), *zip(_names(), _facts(first), _facts(second), strict=True)]
+    rows = [(name, one[:widest], other[:widest]) for name, one, other in rows]
     widths = [max(len(row[column]) for row in rows) for column in range(3)]
     lines = ["  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows]
     return "\n".join([*lines, difference_text(first, second)])

@@ -16,13 +16,12 @@ from controller.labfolder import find_lab, init_lab
 from controller.ui.screens.dialogs import Line
 from controller.ui.widgets.readout import Plain
 
-_TEXT = """\
-halfdrop titrates while nobody watches, and can defend the number afterwards.
-
-There is no lab folder here. A lab folder holds your bench, your methods and every record. It can be made now; its
-bench is a simulated one until you describe your own in bench.yaml.
-
-Safety data sheets, your local rules and licensed practice come before anything this program says."""
+_TEXT = (
+    "halfdrop titrates while nobody watches, and can defend the number afterwards.\n\n"
+    "There is no lab folder here. A lab folder holds your bench, your methods and every record. It can be made now; "
+    "its bench is a simulated one until you describe your own in bench.yaml.\n\n"
+    "Safety data sheets, your local rules and licensed practice come before anything this program says."
+)
 
 
 class WelcomeScreen(Screen[None]):

@@ -100,7 +100,7 @@ class CurvePlot(Widget):
             self._rows = self._drawn()
             self._strips = [self._strip(row) for row in self._rows]
             self._drawn_for = self.size
-        return self._strips[y] if y < len(self._strips) else Strip.blank(self.size.width)
+        return self._strips[y] if y < len(self._strips) else Strip.blank(self.size.width, self.rich_style)
 
     def notify_style_update(self) -> None:
         """Another theme: draw anew."""
@@ -108,8 +108,8 @@ class CurvePlot(Widget):
         self._drawn_for = None
 
     def _strip(self, row: Row) -> Strip:
-        width = self.size.width
-        return Strip([Segment(text, self._style(name)) for text, name in row]).adjust_cell_length(width)
+        strip = Strip([Segment(text, self._style(name)) for text, name in row])
+        return strip.adjust_cell_length(self.size.width, self.rich_style)
 
     def _style(self, name: str) -> Style:
         return self.get_component_rich_style(f"plot--{name}")
@@ -188,20 +188,19 @@ def derivative(points: list[CurvePoint], signal: str) -> list[tuple[float, float
 
 
 def key_text(view: RunView, picture: Picture, second: RunView | None, width: int) -> str:
-    """Return the words for what is drawn, as many as fit."""
+    """Return the words for what is drawn, as long as fits."""
     steepest = max((value for *_, value in picture.derivative), default=0.0)
-    parts = [f" {picture.signal} ⠉⠒⠤"]
     if second is not None:
-        parts = [f" A ⠉⠒⠤ {view.sample_id}", f"B ⠁⠂⠄ {second.sample_id}"]
-    elif steepest:
-        parts.append(f"slope ▂▅█ to {steepest:.3g} {picture.signal}/mL")
+        return f" A ⠉⠒⠤ {view.sample_id}   B ⠁⠂⠄ {second.sample_id}"
+    slope = f"▂▅█ slope to {steepest:.2g} {picture.signal}/mL" if steepest else ""
+    band = ""
     if picture.band is not None and view.forecast is not None:
-        parts.append(f"░ equivalence {view.forecast[0]:.3f} ± {view.forecast[1]:.3f} mL")
-    text = parts[0]
-    for part in parts[1:]:
-        if len(text) + len(part) + 3 <= width:
-            text += f"   {part}"
-    return text
+        band = f"░ expected {view.forecast[0]:.3f} ± {view.forecast[1]:.3f} mL"
+    for parts in ((slope, band), (slope.partition(" to")[0], band), (band,)):
+        text = "   ".join([f" {picture.signal} ⠉⠒⠤", *(part for part in parts if part)])
+        if len(text) <= width:
+            return text
+    return f" {picture.signal}"
 
 
 def _line(view: RunView, signal: str, *, dotted: bool = False) -> Line:
