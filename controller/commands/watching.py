@@ -1,0 +1,26 @@
+"""Whoever watches a run from its own process: progress as lines, and departures from what the plan expects."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Callable
+
+from controller.commands.lines import Lines
+from controller.commands.output import say
+from controller.departure import DepartureWatch
+from controller.journal import Journal
+from controller.progress import Progress
+from controller.titration.plan import RunPlan
+
+
+def watching(plan: RunPlan, journal: Journal) -> Callable[[Progress], None]:
+    """Return what the runner calls with every entry; a departure is written into the record and said."""
+    lines, watch = Lines(sys.stderr), DepartureWatch.of(plan)
+
+    def saw(progress: Progress) -> None:
+        lines(progress)
+        if watch is not None and (text := watch.saw(progress.item)) is not None:
+            journal.event("departure", what=text, by="watch")
+            say(f"warning: {text}")
+
+    return saw
