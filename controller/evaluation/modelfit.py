@@ -81,6 +81,45 @@ def fit_charge_balance(curve: Curve, *, priors: Priors | None = None) -> ModelFi
         return _Balance.of(curve, priors or _priors_of(curve)).run()
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Linearised:
+    """The fit as a linear problem about its solution, every row divided by the point's standard deviation.
+
+    `residual`: measured volume less the fit's, shape (n,); `design`: derivatives by the free parameters, (n, p);
+    `precision`: of what is known of the parameters beforehand, (p,); `sd_ml` and `ml_per_ph` of each point, (n,).
+    """
+
+    residual: Array
+    design: Array
+    precision: Array
+    sd_ml: Array
+    ml_per_ph: Array
+
+
+def linearised(curve: Curve, fit: ModelFit) -> Linearised:
+    """Return the linear problem about a fit of this curve (with the priors of `fit_charge_balance`)."""
+    p = _priors_of(curve)
+    with np.errstate(all="ignore"):
+        balance = _Balance.of(curve, p)
+        strong = fit.strong_ion_mol_l - curve.counter_ion_charge * fit.amount_mol_l
+        theta = np.array([fit.amount_mol_l, strong, *(fit.pka - balance.pka), fit.offset_ph, fit.slope_error])
+        balance.unit = np.asarray(fit.log_coefficient)
+        steps = np.array([1e-6, 1e-6, *[1e-5] * (balance.weak + 2)])
+        sds = [math.inf, math.inf, *[p.pka_sd] * balance.weak, p.offset_sd_ph, p.slope_sd]
+        free = [i for i in range(len(theta)) if i != 0 or balance.weak]
+        at = balance.volume(theta)
+        columns = [(balance.volume(theta + np.eye(len(theta))[i] * steps[i]) - at) / steps[i] for i in free]
+        slope = balance.slope(theta)
+        sd = np.hypot(balance.sd_v, slope * balance.sd_ph)
+    return Linearised(
+        residual=(curve.volume_ml - at) / sd,
+        design=np.stack(columns, axis=1) / sd[:, None],
+        precision=np.array([1.0 / sds[i] ** 2 for i in free]),
+        sd_ml=sd,
+        ml_per_ph=slope,
+    )
+
+
 def _priors_of(curve: Curve) -> Priors:
     """Thermodynamic constants may be 0.15 off as conditional ones (Davies at 0.02 to 0.1 mol/L)."""
     return Priors() if curve.debye_huckel_a is not None else Priors(pka_sd=0.15)

@@ -24,12 +24,18 @@ class Composition:
             slow_share=response.slow_share,
             dead_time_s=response.dead_time_s,
         )
+        self._recorded_s = response.bulk_s + response.film_s
         self._slow_sd_s = response.time_relative_uncertainty * response.slow_s
         self._share_sd = response.share_relative_uncertainty * response.slow_share
         relative = response.time_relative_uncertainty**2
         #: covariance of (ln bulk, ln film): xx, xy, yy
         self.covariance = (relative, 0.0, relative)
         self._cascade: LagCascade | None = None
+
+    @property
+    def slowness(self) -> float:
+        """Bulk and film time as they are now, as a multiple of the record's."""
+        return (self.constants.bulk_s + self.constants.film_s) / self._recorded_s
 
     def cascade(self) -> LagCascade:
         """The cascade with every dose of the log in it."""

@@ -25,6 +25,7 @@ from controller.titration.probewatch import ProbeWatch
 from controller.titration.reasons import dose_reason
 from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule
 
+from controller.titration.settling_lag import LagCorrected
 #: change of temperature during a run that is warned about
 WARMED_C = 2.0
 LIQUID_C = (0.0, 100.0)
@@ -73,6 +74,11 @@ class _Run:
         self._temperature_c = plan.chemistry.temperature_c
 
     # --- before the first dose ---
+
+    @property
+    def slowness(self) -> float | None:
+        """How many times as slowly as its record says the probe answered; None where that is not known."""
+        return self._settler.slowness if isinstance(self._settler, LagCorrected) else None
 
     def start(self) -> Talk[None]:
         """Questions, noise, the tools of the run, the first point."""

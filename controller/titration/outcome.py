@@ -17,7 +17,9 @@ from controller.evaluation.curve import Curve
 from controller.evaluation.evaluate import evaluate
 from controller.evaluation.inverse import LARGEST_PH
 from controller.evaluation.result import Evaluation
+from controller.titration.audit import Audit, audited
 from controller.titration.endpoint import FoundEndPoint
+from controller.titration.precision import pump_precision_ml
 
 if TYPE_CHECKING:
     from controller.titration.core import RunState
@@ -29,6 +31,8 @@ COARSER = 4.0
 #: no probe and no calibration is straight to better than this over a few pH, mV
 STRAIGHTNESS_MV = 0.2
 DIGITS = 7
+#: what the run calls an end point that it saw by the shape of the curve, until the evaluation confirms it
+SHAPE_ALONE = "inflection"
 
 
 def run_result(run: RunState) -> dict[str, Any]:
@@ -36,13 +40,18 @@ def run_result(run: RunState) -> dict[str, Any]:
     world = run.world
     evaluation = _evaluated(run)
     remarks = list(world.warnings)
-    end_points = [_end_point(run, found, evaluation) for found in run.watch.found]
+    audit = _audited(run, evaluation)
+    end_points = audit.end_points
+    outcome, reason = run.outcome, run.reason or None
+    if audit.withheld is not None and outcome == "completed":
+        outcome, reason = "stopped", audit.withheld
+    remarks += audit.warnings
     if evaluation is not None:
         remarks += [w for w in evaluation.warnings if w not in remarks]
         remarks += _unconfirmed(run, evaluation)
     return {
-        "outcome": run.outcome,
-        "reason": run.reason or None,
+        "outcome": outcome,
+        "reason": reason,
         "end_points": end_points,
         "half_equivalence": _halves(evaluation) if end_points else [],
         "estimators": _rounded(evaluation.estimators()) if evaluation is not None and end_points else {},
@@ -95,6 +104,24 @@ def _evaluated(run: RunState) -> Evaluation | None:
     except (HalfdropError, ArithmeticError, ValueError) as error:  # the run must end and its record close
         run.world.warnings.append(f"the curve could not be evaluated: {error}")
         return None
+
+
+def _audited(run: RunState, evaluation: Evaluation | None) -> Audit:
+    found = [_end_point(run, one, evaluation) for one in run.watch.found]
+    unconfirmed = [p for p in found if p["estimator"] == SHAPE_ALONE]
+    if unconfirmed and len(run.points) >= FEWEST_POINTS:
+        at_ml = unconfirmed[0]["volume_ml"]
+        return Audit([], withheld=f"the whole curve does not show the jump that was seen at {at_ml:.3f} mL")
+    if evaluation is None or not found:
+        return Audit(found)
+    return audited(
+        found,
+        run_curve(run),
+        [point.at_s for point in run.points],
+        evaluation.estimates,
+        slowness=run.slowness,
+        precision_ml=pump_precision_ml(run.plan),
+    )
 
 
 def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | None) -> dict[str, Any]:

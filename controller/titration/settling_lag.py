@@ -37,6 +37,11 @@ class LagCorrected:
         self._context: SettlingContext | None = None
         self._readings: list[tuple[float, float]] = []
 
+    @property
+    def slowness(self) -> float:
+        """The fast lag as learned, as a multiple of the record's."""
+        return self._composition.slowness
+
     def begin(self, context: SettlingContext) -> None:
         """See SettlingRule."""
         self._context = context

@@ -201,9 +201,7 @@ def carry_out(bench: FaultyBench, number: int = 0, faults: tuple[str, ...] = ())
     )  # fmt: skip
 
 
-def _wrong(
-    bench: FaultyBench, result: dict[str, Any], outcome: str, confirmed: bool | None, reason: str
-) -> list[str]:
+def _wrong(bench: FaultyBench, result: dict[str, Any], outcome: str, confirmed: bool | None, reason: str) -> list[str]:
     wrong = []
     plan, world, clock = bench.plan, bench.world, bench.clock
     ended_s = clock.now_s()
@@ -283,6 +281,9 @@ def draw_fault(what: str, dice: random.Random) -> dict[str, Any]:
         "at_dose": dice.randint(1, 22),
         "at_volume_ml": round(dice.uniform(0.05, 6.0), 4),
     }[moment]
+    if what == "slow-probe":  # a probe does not age within a run
+        fault.pop(moment)
+        fault["at_s"] = 0.5
     either = dice.choice(["pump", "probe"])
     if what in ("lost-reply", "lost-message", "garbled-reply", "garbled-message", "earlier-reply", "late-reply"):
         fault["device"] = either
@@ -299,12 +300,12 @@ def draw_fault(what: str, dice: random.Random) -> dict[str, Any]:
         fault |= {"device": either, "for_s": round(10 ** dice.uniform(0, 1.5), 3), "other_port": False}
     sizes: dict[str, dict[str, Any]] = {
         "stalled-plunger": {"for_s": round(dice.uniform(2, 20), 2)},
-        "air-in-syringe": {"volume_ml": round(10 ** dice.uniform(-1.3, -0.3), 4)},
+        "air-in-syringe": {"volume_ml": round(dice.uniform(0.12, 0.5), 4)},
         "leaking-valve": {"rate_ml_min": round(10 ** dice.uniform(-1, 0.3), 4)},
         "stuck-reading": {"for_s": round(dice.uniform(2, 120), 2)},
         "open-circuit": {"for_s": round(dice.uniform(1, 25), 2)},
         "bubble-at-probe": {"by_mv": round(dice.choice([-1, 1]) * dice.uniform(5, 300), 2), "for_s": round(dice.uniform(1, 40), 2)},
-        "slow-probe": {"factor": round(dice.uniform(1.5, 5), 2)},
+        "slow-probe": {"factor": round(dice.uniform(1.2, 3.0), 2)},
         "drift": {"by_mv_min": round(dice.choice([-1, 1]) * 10 ** dice.uniform(-0.5, 1.3), 3)},
         "temperature-step": {"by_c": round(dice.choice([-1, 1]) * dice.uniform(0.5, 15), 2)},
         "stirrer-stopped": {"for_s": round(dice.uniform(5, 120), 1)},
@@ -318,7 +319,9 @@ def draw(number: int, campaign_seed: int, *, kinds: tuple[str, ...] | None) -> t
     """The run of this number: bench, method and faults."""
     seed = campaign_seed * 1_000_000 + number
     dice = random.Random(seed)
-    case = dice.choices(["acetic", "malic", "citric", "strong-acid", "phosphoric", "dilute-acid"], [4, 3, 2, 1, 1, 1])[0]
+    case = dice.choices(["acetic", "malic", "citric", "strong-acid", "phosphoric", "dilute-acid"], [4, 3, 2, 1, 1, 1])[
+        0
+    ]
     strategy = dice.choices([MODEL_GUIDED, WITHOUT_RECORD], [3, 1])[0]
     names: tuple[str, ...] = ()
     if kinds:
@@ -339,10 +342,14 @@ def one(job: tuple[int, int, tuple[str, ...] | None]) -> Ended:
 def table(ended: list[Ended]) -> str:
     """Outcomes by fault; a run with several faults counts under each."""
     kinds = sorted({name for run_ in ended for name in run_.faults} or {"none"})
-    lines = [f"{'fault':18} {'runs':>5} {'result':>7} {'warned':>7} {'no result':>9} {'stopped':>8} {'failed':>7} {'killed':>7} {'WRONG':>6}"]
+    lines = [
+        f"{'fault':18} {'runs':>5} {'result':>7} {'warned':>7} {'no result':>9} {'stopped':>8} {'failed':>7} {'killed':>7} {'WRONG':>6}"
+    ]
     for kind in kinds:
         of_kind = [r for r in ended if kind in r.faults or (kind == "none" and not r.faults)]
-        count = Counter(r.outcome if r.outcome != "completed" else "result" if r.end_points else "none" for r in of_kind)
+        count = Counter(
+            r.outcome if r.outcome != "completed" else "result" if r.end_points else "none" for r in of_kind
+        )
         warned = sum(r.outcome == "completed" and r.end_points > 0 and bool(r.warnings) for r in of_kind)
         wrong = sum(bool(r.wrong) for r in of_kind)
         lines.append(
@@ -381,10 +388,20 @@ def main() -> int:
     print(table(free + ended))
     wrong = [r for r in free + ended if r.wrong]
     for r in wrong:
-        print(f"run {r.number}: {', '.join(r.faults)}: {r.outcome} ({r.reason}): {'; '.join(r.wrong)}; warnings {list(r.warnings)}")
+        print(
+            f"run {r.number}: {', '.join(r.faults)}: {r.outcome} ({r.reason}): {'; '.join(r.wrong)}; warnings {list(r.warnings)}"
+        )
     if given.verbose:
         for r in ended:
-            print(r.number, r.faults, r.outcome, r.end_points, r.reason[:150], [w[:110] for w in r.warnings], r.off_u and round(r.off_u, 1))
+            print(
+                r.number,
+                r.faults,
+                r.outcome,
+                r.end_points,
+                r.reason[:150],
+                [w[:110] for w in r.warnings],
+                r.off_u and round(r.off_u, 1),
+            )
     only_recoverable = [r for r in ended if r.faults and set(r.faults) <= set(RECOVERABLE)]
     with_result = sum(r.outcome == "completed" and r.end_points > 0 for r in only_recoverable)
     if free:

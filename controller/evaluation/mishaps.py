@@ -1,0 +1,191 @@
+"""Do the points of a curve hang together, or did something happen while they were taken?
+
+The charge balance says where every point must lie. Three tests look at what is left over, each as one more column of
+the linear problem about the fit: a step in volume (air in the syringe, a knock: titrant that was counted and did not
+come, or the other way round), a leak (volume that grows with time), a drift (potential that runs away with time). What
+is found is not corrected: it widens the uncertainty. Points that no acid or base could give, even with constants of
+its own, carry no result at all.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from typing import Literal
+
+import numpy as np
+import numpy.typing as npt
+
+from controller.evaluation.curve import Array, Curve
+from controller.evaluation.modelfit import ModelFit, Priors, fit_charge_balance, linearised
+
+Kind = Literal["step", "leak", "drift"]
+#: standard deviations from which a mishap is believed; 120 runs without any showed at most 4.0
+SURE_SDS = 4.5
+#: share of the points that may lie anywhere: a bubble spoils some and leaves the others true
+STRAY_SHARE = 0.13
+FEWEST_STRAYS = 2
+_STRAY_SDS = 6.0
+#: reduced chi-square of the others (robust); 120 runs without a mishap showed at most 0.9, those with one that left
+#: the result true up to 2.2
+LARGEST_OF_STATED, LARGEST_OF_ANY = 3.0, 2.5
+#: constants of an acid or base that is not the stated one
+_ANY_PKA: tuple[tuple[float, ...], ...] = ((4.8,), (3.5, 6.5))
+_ANY_PKA_SD = 3.0
+FEWEST_POINTS = 9
+_EVERY = 2  # gaps between points that a leak or drift is tried to begin at
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Mishap:
+    """What one more column explains: how sure (in standard deviations), from which volume and time on, and how much.
+
+    `amount`: mL of a step, mL/min of a leak, pH/min of a drift.
+    """
+
+    kind: Kind
+    sds: float
+    after_ml: float
+    after_s: float
+    amount: float
+
+
+def contradiction(curve: Curve, fit: ModelFit, *, allowed: float = 1.0) -> float | None:
+    """Return the misfit (robust reduced chi-square, strays left out) of points that no acid or base could give.
+
+    Args:
+        curve: the points.
+        fit: of this curve, with the stated substance.
+        allowed: how many times the usual limits are allowed, where a known cause spreads the points.
+
+    Returns:
+        None where the stated substance, or another of one or two constants, describes them.
+    """
+    if len(curve.volume_ml) < FEWEST_POINTS:
+        return None
+    stated = misfit(fit)
+    if stated <= LARGEST_OF_STATED * allowed:
+        return None
+    for pka in _ANY_PKA:
+        free = replace(curve, pka=pka, charge=0, counter_ion_charge=0)
+        other = fit_charge_balance(free, priors=Priors(pka_sd=_ANY_PKA_SD))
+        if other is not None and misfit(other) <= LARGEST_OF_ANY * allowed:
+            return None
+    return round(stated, 1)
+
+
+def misfit(fit: ModelFit) -> float:
+    """Return the robust reduced chi-square of the points, the worst of them left out."""
+    off = np.sort(np.abs(np.asarray(fit.residual_ml) / np.asarray(fit.residual_sd_ml)))
+    kept = off[: len(off) - max(FEWEST_STRAYS, math.ceil(STRAY_SHARE * len(off)))]
+    return float(np.sum(2.0 * (np.sqrt(1.0 + kept**2) - 1.0))) / max(1, len(kept) - 3)
+
+
+def find_mishap(curve: Curve, fit: ModelFit, at_s: Array) -> Mishap | None:
+    """Return the mishap that explains most of what the fit leaves over, None where nothing needs one.
+
+    Args:
+        curve: the points.
+        fit: of this curve, with the stated substance.
+        at_s: when each point was taken, s, shape (n,).
+    """
+    line = linearised(curve, fit)
+    stray = strays(line.residual)
+    for kept in [np.ones_like(stray), ~stray] if stray.any() else [~stray]:
+        problem = _Problem(
+            residual=line.residual[kept],
+            design=line.design[kept],
+            precision=line.precision,
+            sd_ml=line.sd_ml[kept],
+            ml_per_ph=line.ml_per_ph[kept],
+            minutes=(np.asarray(at_s, dtype=np.float64)[kept] - float(at_s[0])) / 60.0,
+        )
+        best = problem.best() if problem.usable() else None
+        if best is None or (kept.all() and stray.any() and not best.clears):
+            continue  # points that lie off with it too are strays, and no sign of it
+        return Mishap(
+            kind=best.kind,
+            sds=best.sds,
+            after_ml=float(curve.volume_ml[kept][best.after]),
+            after_s=float(np.asarray(at_s)[kept][best.after]),
+            amount=best.amount,
+        )
+    return None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Found:
+    """One column that was tried; `clears`: with it no point lies off the others any more."""
+
+    kind: Kind
+    after: int
+    sds: float
+    amount: float
+    clears: bool
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Problem:
+    """The linear problem of some points; see `Linearised`."""
+
+    residual: Array
+    design: Array
+    precision: Array
+    sd_ml: Array
+    ml_per_ph: Array
+    minutes: Array
+
+    def usable(self) -> bool:
+        """Enough points, all of them finite numbers."""
+        finite = np.isfinite(self.residual).all() and np.isfinite(self.design).all()
+        return len(self.residual) >= FEWEST_POINTS and bool(finite)
+
+    def best(self) -> _Found | None:
+        """The column that explains most, None where none explains enough."""
+        inverse: Array = np.asarray(
+            np.linalg.pinv(self.design.T @ self.design + np.diag(self.precision)), dtype=np.float64
+        )
+        found = [self._tried(inverse, *one) for one in self._columns()]
+        best = max((one for one in found if one is not None), key=lambda one: one.sds, default=None)
+        return best if best is not None and best.sds > SURE_SDS else None
+
+    def _columns(self) -> Iterator[tuple[Kind, int, Array]]:
+        n = len(self.residual)
+        for after in range(n - 1):
+            yield "step", after, (np.arange(n) > after).astype(np.float64)
+            if after % _EVERY == 0:
+                since = np.maximum(0.0, self.minutes - self.minutes[after])
+                yield "leak", after, -since
+                yield "drift", after, -self.ml_per_ph * since
+
+    def _tried(self, inverse: Array, kind: Kind, after: int, column: Array) -> _Found | None:
+        scaled = column / self.sd_ml
+        own = scaled - self.design @ (inverse @ (self.design.T @ scaled))
+        information = float(own @ own)
+        if information <= 1e-12:
+            return None
+        amount = float(own @ self.residual) / information
+        left = self.residual - amount * own
+        spread = max(1.0, float(left @ left) / max(1, len(left) - self.design.shape[1] - 1))
+        sds = abs(amount) * math.sqrt(information / spread)
+        return _Found(kind=kind, after=after, sds=sds, amount=amount, clears=bool(np.max(np.abs(left)) < _STRAY_SDS))
+
+
+def strays(residual: Array) -> npt.NDArray[np.bool_]:
+    """Return which points lie off all others: blocks of few, with true ones before and after.
+
+    A block that reaches the first or last point is none: there, what changed may have changed for good.
+    """
+    off = np.abs(residual) > _STRAY_SDS
+    found = np.zeros(len(off), dtype=np.bool_)
+    most = max(FEWEST_STRAYS, math.ceil(STRAY_SHARE * len(off)))
+    begin: int | None = None
+    for i, is_off in enumerate(off):
+        if is_off and begin is None:
+            begin = i
+        elif not is_off and begin is not None:
+            if begin > 0 and i - begin <= most:
+                found[begin:i] = True
+            begin = None
+    return found

@@ -1,0 +1,168 @@
+"""The last look at a result before it is given: do the points hang together, and is the number as sure as it says?
+
+A result is widened where something happened that the points show, and withheld where they contradict one another. It
+is never corrected: what went wrong is known too badly for that.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from controller.evaluation.curve import Curve
+from controller.evaluation.estimate import SECOND_DERIVATIVE, Estimate
+from controller.evaluation.mishaps import LARGEST_OF_STATED, Mishap, contradiction, find_mishap, misfit
+from controller.evaluation.modelfit import ModelFit, fit_charge_balance
+
+#: relative standard uncertainty above which a number is remarked upon, and above which none is given
+NOTABLE_SHARE, LARGEST_SHARE = 0.005, 0.1
+#: a fit that leaves so little over is believed against another estimator
+GOOD_MISFIT = 1.5
+#: standard uncertainties by which the reported value may differ from a good fit
+ALLOWED_SDS = 4.0
+#: the probe answers so many times as slowly as its record says before it is remarked upon
+NOTABLE_SLOWNESS = 1.35
+#: what a slowness of one more time the record's may cost, in precisions of the pump
+SLOWNESS_COST = 5.0
+
+EndPoint = dict[str, Any]
+
+
+@dataclass(slots=True)
+class Audit:
+    """What became of the end points: `withheld` says why none is given, else None."""
+
+    end_points: list[EndPoint]
+    warnings: list[str] = field(default_factory=list)
+    withheld: str | None = None
+
+    def widen(self, number: int, by_ml: float) -> None:
+        """Add to the standard uncertainty of one end point."""
+        point = self.end_points[number]
+        u_ml = math.hypot(point["standard_uncertainty_ml"], by_ml)
+        self.end_points[number] = {**point, "standard_uncertainty_ml": round(u_ml, 7)}
+
+
+def audited(
+    end_points: Sequence[EndPoint],
+    curve: Curve,
+    at_s: Sequence[float],
+    estimates: Sequence[Sequence[Estimate]],
+    *,
+    slowness: float | None,
+    precision_ml: float,
+) -> Audit:
+    """Look at every end point once more.
+
+    Args:
+        end_points: as they would be given.
+        curve: the run's points.
+        at_s: when each was taken.
+        estimates: by end point of the evaluation, the reported one first.
+        slowness: learned lag over the record's, where there is a record.
+        precision_ml: of the pump.
+    """
+    audit = Audit(list(end_points))
+    if not audit.end_points:
+        return audit
+    fit = fit_charge_balance(curve)
+    slow = slowness if slowness is not None and slowness > NOTABLE_SLOWNESS else None
+    if fit is not None:
+        # before a slow probe was known for one, its points were taken too early
+        if (left := contradiction(curve, fit, allowed=1.0 if slow is None else slow * slow)) is not None:
+            audit.withheld = (
+                f"the points contradict one another (misfit {left:g}, allowed {LARGEST_OF_STATED:g}): something "
+                "happened to sample, titrant or probe while they were taken, so no number is given"
+            )
+            audit.end_points = []
+            return audit
+        mishap = find_mishap(curve, fit, np.asarray(at_s, dtype=np.float64))
+        if mishap is not None:
+            _widen_by_mishap(audit, mishap, curve, at_s, estimates)
+        _hold_against_fit(audit, fit, estimates)
+    if slow is not None:
+        audit.warnings.append(
+            f"the probe answers {slow:.1f} times as slowly as its record says: clean it, or repeat the response check"
+        )
+        for number in range(len(audit.end_points)):
+            audit.widen(number, SLOWNESS_COST * (slow - 1.0) * precision_ml)
+    _judge_uncertainty(audit)
+    return audit
+
+
+def _widen_by_mishap(
+    audit: Audit, mishap: Mishap, curve: Curve, at_s: Sequence[float], estimates: Sequence[Sequence[Estimate]]
+) -> None:
+    audit.warnings.append(_told(mishap))
+    for number, point in enumerate(audit.end_points):
+        volume_ml = float(point["volume_ml"])
+        if mishap.kind == "drift":
+            if shape := _shape_near(volume_ml, estimates):
+                audit.widen(number, abs(shape.volume_ml - volume_ml))
+        elif volume_ml >= mishap.after_ml:
+            by_ml = abs(mishap.amount)
+            if mishap.kind == "leak":
+                passed = min(int(np.searchsorted(curve.volume_ml, volume_ml)), len(at_s) - 1)
+                by_ml *= max(0.0, at_s[passed] - mishap.after_s) / 60.0
+            audit.widen(number, by_ml)
+
+
+def _told(mishap: Mishap) -> str:
+    place = f"after {mishap.after_ml:.3f} mL"
+    match mishap.kind:
+        case "step":
+            way = "less titrant came than was counted" if mishap.amount > 0 else "more titrant came than was counted"
+            said = f"{place} {abs(mishap.amount):.3f} mL do not fit ({way}: air in the line? a drop? a knock?)"
+        case "leak":
+            said = (
+                f"{place} the volume runs away by {-mishap.amount:+.3f} mL/min (a leaking valve, or a slow reaction?)"
+            )
+        case "drift":
+            said = (
+                f"{place} the potential runs away by {mishap.amount:+.2f} pH/min (the reference, or the temperature?)"
+            )
+    return f"{said}; the uncertainty is widened by it"
+
+
+def _hold_against_fit(audit: Audit, fit: ModelFit, estimates: Sequence[Sequence[Estimate]]) -> None:
+    """Widen where a good fit says otherwise, or where the model spoke though its fit is not sound."""
+    good = misfit(fit) < GOOD_MISFIT
+    for number, point in enumerate(audit.end_points):
+        volume_ml, u_ml = float(point["volume_ml"]), float(point["standard_uncertainty_ml"])
+        if good:
+            pairs = list(zip(fit.equivalence_ml, fit.equivalence_sd_ml, strict=True))
+            near_ml, sd_ml = min(pairs, key=lambda pair: abs(pair[0] - volume_ml))
+            off_ml = abs(near_ml - volume_ml)
+            if off_ml > ALLOWED_SDS * math.hypot(u_ml, sd_ml):
+                audit.warnings.append(
+                    f"end point {number + 1}: the charge balance of most points is at {near_ml:.4f} mL, not at "
+                    f"{volume_ml:.4f} mL; the uncertainty is widened by the difference"
+                )
+                audit.widen(number, off_ml)
+        elif not fit.sound and (shape := _shape_near(volume_ml, estimates)) is not None:
+            audit.widen(number, abs(shape.volume_ml - volume_ml))
+
+
+def _shape_near(volume_ml: float, estimates: Sequence[Sequence[Estimate]]) -> Estimate | None:
+    shapes = [e for found in estimates for e in found if e.estimator == SECOND_DERIVATIVE]
+    return min(shapes, key=lambda e: abs(e.volume_ml - volume_ml), default=None)
+
+
+def _judge_uncertainty(audit: Audit) -> None:
+    for number, point in enumerate(audit.end_points):
+        share = point["standard_uncertainty_ml"] / max(abs(point["volume_ml"]), 1e-9)
+        if share > LARGEST_SHARE:
+            audit.withheld = (
+                f"end point {number + 1} would be known to {100.0 * share:.0f} % only (allowed "
+                f"{100.0 * LARGEST_SHARE:.0f} %), so no number is given"
+            )
+            audit.end_points = []
+            return
+        if share > NOTABLE_SHARE:
+            audit.warnings.append(
+                f"end point {number + 1} is known to {100.0 * share:.1f} % only (standard uncertainty)"
+            )
