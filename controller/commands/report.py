@@ -10,11 +10,13 @@ from pathlib import Path
 from configs.errors import HalfdropError
 from controller.commands.output import print_json
 from controller.commands.runs import record_path
+from controller.labfolder import find_lab
 from controller.record import printable, read_record
 
 DONE, NOT_TRUSTED = 0, 1
 FOLDER = "reports"
 _STDOUT = "-"
+_LAB_FOLDERS = ("runs", "calibrations")
 
 
 def report(given: argparse.Namespace) -> int:
@@ -28,7 +30,7 @@ def report(given: argparse.Namespace) -> int:
     from controller.report.series_of_runs import found_replicates
     from drivers.clock import SystemClock
 
-    path = record_path(given.run, given)
+    path = _found(given)
     record = read_record(path)
     named = [read_record(record_path(name, given)) for name in given.replicate or []]
     others = named or found_replicates(record)
@@ -48,10 +50,22 @@ def report(given: argparse.Namespace) -> int:
     return DONE if state.state == "intact" else NOT_TRUSTED
 
 
+def _found(given: argparse.Namespace) -> Path:
+    """A record of the runs folder, or else of the calibrations folder."""
+    try:
+        return record_path(given.run, given)
+    except HalfdropError:
+        folder = find_lab(given.lab).path / "calibrations"
+        inside = folder / f"{Path(given.run).stem}.jsonl"
+        if Path(given.run).name == given.run and inside.is_file():
+            return inside
+        raise
+
+
 def _target(record: Path) -> Path:
-    """A record in the runs folder of a lab has its report in `reports` beside that folder, any other beside itself."""
+    """A record of a lab folder has its report in the folder's `reports`, any other beside itself."""
     name = f"{record.stem}.html"
-    return record.parent.parent / FOLDER / name if record.parent.name == "runs" else record.with_name(name)
+    return record.parent.parent / FOLDER / name if record.parent.name in _LAB_FOLDERS else record.with_name(name)
 
 
 def _write(target: Path, page: str) -> None:

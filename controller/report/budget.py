@@ -9,6 +9,11 @@ from controller.commands.output import decimals
 from controller.report.tables import Table
 from controller.report.wording import DASH, number, with_uncertainty
 
+#: more degrees of freedom than this are as good as infinitely many
+_MANY_DEGREES = 1000.0
+#: Student's t has no variance with so few degrees of freedom
+_NO_VARIANCE = 2.0
+
 
 def budget_table(amount: dict[str, Any] | None) -> Table | None:
     """Return the full table where the result has one, else the contributions; None without an amount.
@@ -37,11 +42,12 @@ def budget_table(amount: dict[str, Any] | None) -> Table | None:
 
 def _whole(whole: dict[str, Any], rows: list[dict[str, Any]], amount: dict[str, Any]) -> Table:
     unit = str(amount.get("unit"))
-    made = [_row(row, amount) for row in rows]
+    made = [_row(row, amount) for row in rows if not _exact(row)]
     total = number(amount.get("standard_uncertainty"), _places(amount))
     made.append(("combined standard uncertainty", "", "", unit, "", "", "", total, "100 %"))
     heads = ("Quantity", "Value", "u", "Unit", "Distribution", "ν", "Sensitivity", f"Contribution / {unit}", "Share")
-    note = " ".join(filter(None, (_coverage(amount, whole), _monte_carlo(whole, amount), _shared(rows))))
+    parts = (_coverage(amount, whole), _monte_carlo(whole, rows, amount), _shared(rows), _taken_as_exact(rows))
+    note = " ".join(filter(None, parts))
     return Table(caption="Uncertainty budget", heads=heads, rows=tuple(made), numeric=(1, 2, 5, 6, 7, 8), note=note)
 
 
@@ -54,7 +60,7 @@ def _row(row: dict[str, Any], amount: dict[str, Any]) -> tuple[str, ...]:
         u,
         str(row.get("unit") or ""),
         str(row.get("distribution") or DASH),
-        "∞" if freedom is None or freedom == math.inf else f"{freedom:.3g}",
+        "∞" if freedom is None or freedom >= _MANY_DEGREES else f"{freedom:.3g}",
         DASH if sensitivity is None else number(float(f"{sensitivity:.3g}")),
         number(abs(float(row.get("contribution") or 0.0)), _places(amount)),
         DASH if row.get("share") is None else _percent(row["share"], 1.0),
@@ -80,14 +86,15 @@ def _coverage(amount: dict[str, Any], whole: dict[str, Any]) -> str:
         return ""
     probability, freedom = whole.get("coverage_probability"), whole.get("degrees_of_freedom")
     covers = "about 95 %" if probability is None else f"{100.0 * probability:.3g} %"
-    effective = "" if freedom is None else f" ({freedom:.3g} effective degrees of freedom)"
+    few = freedom is not None and freedom < _MANY_DEGREES
+    effective = f" ({freedom:.3g} effective degrees of freedom)" if few else ""
     return (
         f"The expanded uncertainty is the combined one times the coverage factor k = {coverage_factor(amount)}, for "
         f"{covers} coverage{effective}."
     )
 
 
-def _monte_carlo(whole: dict[str, Any], amount: dict[str, Any]) -> str:
+def _monte_carlo(whole: dict[str, Any], rows: list[dict[str, Any]], amount: dict[str, Any]) -> str:
     """Monte Carlo (GUM Supplement 1) beside the law of propagation, in a sentence."""
     found = whole.get("monte_carlo")
     if not isinstance(found, dict):
@@ -95,11 +102,27 @@ def _monte_carlo(whole: dict[str, Any], amount: dict[str, Any]) -> str:
     places = _places(amount)
     value, u = number(found.get("value"), places), number(found.get("standard_uncertainty"), places)
     word = {True: "both agree", False: "they DIFFER by more than the numerical tolerance", None: "not compared"}
+    few = [row for row in rows if (row.get("degrees_of_freedom") or math.inf) <= _NO_VARIANCE]
+    why = ""
+    if few and found.get("agrees") is False:
+        why = (
+            f" {few[0].get('quantity')} has {number(few[0]['degrees_of_freedom'])} degrees of freedom, too few for "
+            "Student's t to have a variance: compare the intervals."
+        )
     low, high = [number(end, places) for end in found.get("interval") or (None, None)]
     return (
         f"Monte Carlo (GUM Supplement 1, {found.get('trials')} trials): {value}, u = {u}, interval {low} to {high}; "
-        f"{word.get(found.get('agrees'), 'not compared')}."
+        f"{word.get(found.get('agrees'), 'not compared')}.{why}"
     )
+
+
+def _exact(row: dict[str, Any]) -> bool:
+    return row.get("standard_uncertainty") == 0.0 and not row.get("shared_id")
+
+
+def _taken_as_exact(rows: list[dict[str, Any]]) -> str:
+    named = [f"{row.get('quantity')} {number(row.get('value'))} {row.get('unit')}" for row in rows if _exact(row)]
+    return f"Without uncertainty of their own here: {', '.join(named)}." if named else ""
 
 
 def _shared(rows: list[dict[str, Any]]) -> str:

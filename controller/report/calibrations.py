@@ -7,16 +7,15 @@ from pathlib import Path
 from typing import Any
 
 from controller.calibration.store import Calibration, calibrations
-from controller.report.tables import Table
-from controller.report.wording import DASH, Facts, facts_of, local_time, number, with_uncertainty
+from controller.report.wording import Facts, facts_of, local_time, number, with_uncertainty
 
 FOLDER = "calibrations"
 _PREFIX = "calibration "
 _PARTS = ("burette", "blank", "weighing", "preparation", "excess")
 
 
-def calibrations_table(hashes: Mapping[str, Any], folder: Path, offset: Any) -> Table | None:
-    """Return one row for each calibration that the header names; None where it names none.
+def calibrations_in_force(hashes: Mapping[str, Any], folder: Path, offset: Any) -> Facts:
+    """Return a line for each calibration that the header names: of what, when, verdict, record and hash.
 
     Args:
         hashes: of the record's header ("calibration probe": SHA-256).
@@ -25,19 +24,17 @@ def calibrations_table(hashes: Mapping[str, Any], folder: Path, offset: Any) -> 
     """
     wanted = {name.removeprefix(_PREFIX): str(sha) for name, sha in hashes.items() if name.startswith(_PREFIX)}
     if not wanted:
-        return None
+        return []
     known = {one.sha256: one for one in calibrations(folder)}
-    rows = tuple(_row(kind, sha, known.get(sha), offset) for kind, sha in sorted(wanted.items()))
-    heads = ("Kind", "Of", "Made", "Verdict", "Record", "SHA-256")
-    note = "Found by hash in the lab folder: a record of this hash is unchanged since the run took it over."
-    return Table(caption="Calibrations in force", heads=heads, rows=rows, note=note)
+    return [(kind, f"{_told(known.get(sha), offset)}; SHA-256 {sha}") for kind, sha in sorted(wanted.items())]
 
 
-def _row(kind: str, sha256: str, found: Calibration | None, offset: Any) -> tuple[str, ...]:
+def _told(found: Calibration | None, offset: Any) -> str:
     if found is None:
-        return kind, DASH, DASH, DASH, "not in this lab folder, or changed since", sha256
-    verdict = str(found.result.get("verdict") or ("passed" if found.passed else "did not pass"))
-    return kind, found.subject, local_time(found.started_utc, offset), verdict, found.path.stem, sha256
+        return "its record is not in this lab folder, or has changed since the run took it over"
+    verdict = found.result.get("verdict") or ("passed" if found.passed else "did not pass")
+    made = local_time(found.started_utc, offset)
+    return f"{found.subject}, made {made}, {verdict}; record {found.path.stem}, unchanged since"
 
 
 def traceability(plan: Mapping[str, Any], offset: Any) -> list[tuple[str, Facts]]:

@@ -17,7 +17,8 @@ from controller.record import Record, verify
 from controller.reevaluation import added_evaluations
 from controller.report import tables
 from controller.report.budget import budget_table, coverage_factor
-from controller.report.calibrations import FOLDER, calibrations_table
+from controller.report.calibration_part import calibration_part
+from controller.report.calibrations import FOLDER, calibrations_in_force
 from controller.report.cautions import cautions_of
 from controller.report.instruments import instruments
 from controller.report.plots import Mark, curve_figure, gran_figure, residual_figure
@@ -65,6 +66,7 @@ def report_contents(
         "sample_id": str(_dict(plan.get("sample")).get("sample_id") or "not named"),
         "amount": _headline(mean or amount),
         "mean_of": repeated.count if repeated is not None and mean else 0,
+        "calibration": calibration_part(plan, result, offset),
         "facts": _facts(record, plan, result, offset),
         "alerts": _alerts(record, plan, closing, detached=detached),
         "warnings": _warnings(header, plan, result),
@@ -78,9 +80,9 @@ def report_contents(
         "identity": identity_table(again.get("identity")),
         "replicates": repeated,
         "evaluations": tables.evaluations(result, added, offset),
-        "calibrations": calibrations_table(_dict(header.get("hashes")), record.path.parent.parent / FOLDER, offset),
+        "calibrations": calibrations_in_force(_dict(header.get("hashes")), record.path.parent.parent / FOLDER, offset),
         "instruments": instruments(header),
-        "sample": _sample(_dict(plan.get("sample")), offset),
+        "sample": _sample(_dict(plan.get("sample")), offset) if plan.get("titrant") else [],
         "settings": _settings(plan, offset),
         "questions": tables.questions(record.entries),
         "incidents": tables.incidents(record.entries),
@@ -150,18 +152,26 @@ def _facts(record: Record, plan: dict[str, Any], result: dict[str, Any], offset:
     concentration, u = with_uncertainty(titrant.get("concentration_mol_l"), titrant.get("standard_uncertainty_mol_l"))
     doses = DASH if result.get("doses") is None else str(result["doses"])
     volume = number(result.get("titrant_ml"), 4)
-    return [
+    told = [
         ("Started", local_time(header.get("started_utc"), offset)),
         ("Operator", str(header.get("operator") or "not named")),
         ("Method", str(plan.get("method_name") or DASH)),
+        ("Record", record.path.stem),
+    ]
+    if not titrant:
+        return [*told, ("Took", span(result.get("duration_s")))]
+    return [
+        *told,
         ("Titrant", f"{titrant.get('name') or DASH}, {concentration} mol/L (u = {u})"),
         ("Course", f"{doses} doses, {volume} mL, {span(result.get('duration_s'))}"),
-        ("Record", record.path.stem),
     ]
 
 
 def _alerts(record: Record, plan: dict[str, Any], closing: dict[str, Any], *, detached: bool) -> list[str]:
     found = []
+    part = _dict(_dict(closing.get("result")).get("calibration"))
+    if part and not part.get("accepted"):
+        found.append(f"This calibration is not in force: {part.get('verdict')}.")
     if closing.get("stop_confirmed") is False:
         found.append(NOT_CONFIRMED)
     if closing.get("outcome") not in (None, "completed"):
@@ -171,7 +181,8 @@ def _alerts(record: Record, plan: dict[str, Any], closing: dict[str, Any], *, de
     if not detached and (state := verify(record.path)).state == "edited":
         found.append(f"The record is not as the program wrote it ({state.what}). Do not use these numbers.")
     if plan.get("seed") is not None:
-        found.append(f"Simulated bench (seed {plan['seed']}): no real sample was titrated.")
+        what = "nothing real was measured" if part else "no real sample was titrated"
+        found.append(f"Simulated bench (seed {plan['seed']}): {what}.")
     return found
 
 

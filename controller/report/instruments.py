@@ -31,6 +31,8 @@ def instruments(header: Mapping[str, Any]) -> list[tuple[str, Facts]]:
     plan, devices = _dict(header.get("plan")), _dict(header.get("devices"))
     offset, started = header.get("lab_utc_offset"), header.get("started_utc")
     probe, pump = _dict(plan.get("probe")), _dict(plan.get("pump"))
+    if not plan.get("titrant"):
+        return _calibrated(probe, pump, devices, offset)
     sections = [
         ("Probe", [*_device(devices.get("probe")), *_probe(probe, offset)]),
         ("Calibration of the probe", _calibration(_dict(probe.get("calibration")), offset, started)),
@@ -39,6 +41,18 @@ def instruments(header: Mapping[str, Any]) -> list[tuple[str, Facts]]:
         ("Titrant lot", _titrant(_dict(plan.get("titrant")), offset)),
     ]
     return [*sections, *traceability(plan, offset)]
+
+
+def _calibrated(
+    probe: dict[str, Any], pump: dict[str, Any], devices: dict[str, Any], offset: Any
+) -> list[tuple[str, Facts]]:
+    """The devices that a calibration used; one that it had no use for is named "not used" in its record."""
+    found = []
+    if "not used" not in str(probe.get("identity")):
+        found.append(("Probe", [*_device(devices.get("probe")), *_probe(probe, offset)]))
+    if "not used" not in str(pump.get("identity")):
+        found.append(("Burette", [*_device(devices.get("pump")), *_burette(pump, offset)]))
+    return found
 
 
 def _dict(value: Any) -> dict[str, Any]:
@@ -62,13 +76,11 @@ def _calibration(found: dict[str, Any], offset: Any, started: Any) -> Facts:
         return [("state", "none: plain potential")]
     percent = 100.0 * float(found.get("slope_fraction") or 0.0)
     slope, u = with_uncertainty(percent, 100.0 * float(found.get("slope_fraction_standard_uncertainty") or 0.0))
+    potential, u_mv = with_uncertainty(found.get("isopotential_mv"), found.get("offset_standard_uncertainty_mv"))
     facts = [
         ("slope", f"{slope} % of the ideal (u = {u} %)"),
         ("isopotential pH", number(found.get("isopotential_ph"))),
-        (
-            "potential there",
-            f"{number(found.get('isopotential_mv'))} mV (u = {number(found.get('offset_standard_uncertainty_mv'))} mV)",
-        ),
+        ("potential there", f"{potential} mV (u = {u_mv} mV)"),
     ]
     when = found.get("calibrated_utc")
     if when:

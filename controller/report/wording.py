@@ -19,8 +19,14 @@ _SUFFIXES = {
     "mmol_l": ("", "mmol/L"),
     "percent": ("", "%"),
     "ml": ("", "mL"),
+    "ul": ("", "µL"),
+    "kg_m3": ("", "kg/m³"),
+    "g_ml": ("", "g/mL"),
+    "hpa": ("", "hPa"),
+    "days": ("", "days"),
     "mv": ("", "mV"),
     "mg": ("", "mg"),
+    "sha256": ("SHA-256", ""),
     "g": ("", "g"),
     "c": ("", "°C"),
     "s": ("", "s"),
@@ -119,7 +125,7 @@ def facts_of(data: Any, offset: Any, *, leave_out: tuple[str, ...] = ()) -> Fact
     """
     found: Facts = []
     for key, value in (data if isinstance(data, dict) else {}).items():
-        if key in leave_out or value is None:
+        if key in leave_out or value is None or value == "":
             continue
         words, unit = words_of(str(key))
         if isinstance(value, dict):
@@ -127,6 +133,13 @@ def facts_of(data: Any, offset: Any, *, leave_out: tuple[str, ...] = ()) -> Fact
         else:
             found.append((words, _value(str(key), value, unit, offset)))
     return found
+
+
+def cell(key: str, value: Any, offset: Any) -> str:
+    """Return one value of a settings key for a table whose head names the unit."""
+    if isinstance(value, float):
+        return number(float(f"{value:.5g}"))
+    return DASH if value is None else _value(key, value, "", offset)
 
 
 def _value(key: str, value: Any, unit: str, offset: Any) -> str:
