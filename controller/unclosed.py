@@ -21,7 +21,8 @@ class UnclosedRunError(HalfdropError):
         super().__init__(
             f"a run was left open: {names}",
             where="bench",
-            remedy=f"Look at bench and vessel, then close it: halfdrop runs close {records[0].stem}",
+            remedy=f"Look at bench and vessel, then go on with it: halfdrop resume {records[0].stem}, "
+            f"or close it: halfdrop runs close {records[0].stem}",
         )
         self.records = records
 
