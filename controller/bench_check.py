@@ -60,11 +60,15 @@ class BenchCheck:
         yield from self.probe()
         yield from self.readings()
         if moving:
-            if self.passed.pump is None or self.passed.status is None:
-                yield from passed_over(STEPS, "the pump is not ready")
-            else:
-                motion = MotionCheck(self._bench, self._reached, self._stop, self.passed.pump)
-                yield from motion.walk(self.passed.status)
+            yield from self.walk_motion()
+
+    def walk_motion(self) -> Iterator[Finding]:
+        """Yield the findings of what moves liquid."""
+        if self.passed.pump is None or self.passed.status is None:
+            yield from passed_over(STEPS, "the pump is not ready")
+            return
+        motion = MotionCheck(self._bench, self._reached, self._stop, self.passed.pump)
+        yield from motion.walk(self.passed.status)
 
     # what is asked
 

@@ -33,21 +33,22 @@ def told_of(failure: Exception) -> str:
 
 def why_not_opened(url: str, failure: Exception) -> tuple[str, str]:
     """Return what is wrong with a port that cannot be opened, and the remedy, as far as this computer tells."""
-    what = f"cannot be opened ({told_of(failure)})"
-    if "://" in url:
-        return what, GENERAL
     number = _error_number(failure)
+    if "://" in url or number is None:
+        return f"cannot be opened ({told_of(failure)})", GENERAL
+    said = os.strerror(number).lower()
+    what = f"cannot be opened ({said})"
     if number in (errno.EACCES, errno.EPERM) and sys.platform == "win32":
         return what, "Another program has it open, most likely: close it there"
     if number in (errno.EACCES, errno.EPERM):
-        return f"this account may not use it ({told_of(failure)})", _permission_remedy(url)
+        return f"this account may not use it ({said})", _permission_remedy(url)
     if number == errno.ENOENT:
         return what, _absent_remedy(url)
     owner = owner_of(url)
     if owner is not None or number in (errno.EBUSY, errno.EAGAIN):
         holder = f"{owner[1]} (process {owner[0]})" if owner else "another program, perhaps of another account"
         remedy = _UDEV_RULE if owner and owner[1].startswith(_MODEM_MANAGER) else "Close it there"
-        return f"is in use by {holder} ({told_of(failure)})", remedy
+        return f"cannot be opened: in use by {holder}", remedy
     return what, GENERAL
 
 
