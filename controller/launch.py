@@ -22,6 +22,8 @@ from drivers.clock import Clock
 LONGEST_START_S = 30.0
 _LOOK_S = 0.05
 _LOG_LINES = 6
+#: processes that this one started and will not wait for; kept, so that none is given up while it runs
+_LEFT_RUNNING: list[subprocess.Popen[bytes]] = []
 
 
 class RunNotStartedError(HalfdropError):
@@ -62,6 +64,7 @@ def start_run(lab: Lab, arguments: Sequence[str], *, answers: Mapping[str, str] 
             stderr=subprocess.STDOUT,
             **_detached(),
         )
+    _LEFT_RUNNING[:] = [one for one in _LEFT_RUNNING if one.poll() is None] + [process]
     return Started(process=process, log=log, before=before)
 
 
