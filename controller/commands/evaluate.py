@@ -8,7 +8,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.commands.lines import result_lines
-from controller.commands.output import print_json
+from controller.commands.output import chance_text, print_json
 from controller.commands.runs import SUFFIX, record_path
 from controller.evaluate_file import EvaluateOptions, evaluate_file
 from controller.evaluate_record import evaluate_record
@@ -112,7 +112,7 @@ def _identity_lines(identity: dict[str, Any] | None) -> list[str]:
     for one in identity["candidates"]:
         protons = ", ".join(str(count) for count in one["protons"])
         lines.append(
-            f"  {100.0 * one['probability']:5.1f} %  {one['substance']} (protons counted: {protons}; pH off by "
+            f"  {chance_text(one['probability']):>8}  {one['substance']} (protons counted: {protons}; pH off by "
             f"{one['ph_difference']:+.2f}; equivalent mass {one['equivalent_mass_g_mol']:.1f} g/mol)"
         )
-    return [*lines, f"  {100.0 * identity['none_of_these']:5.1f} %  none of the catalogue", f"  {identity['model']}"]
+    return [*lines, f"  {chance_text(identity['none_of_these']):>8}  none of the catalogue", f"  {identity['model']}"]

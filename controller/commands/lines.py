@@ -9,6 +9,8 @@ from controller.progress import Progress
 from controller.record import printable
 from controller.titration.actions import Command, Dose, Failed, Refill, Refused, Report
 
+#: a plain half-equivalence pH nearer to the pKa than this may stand for it
+LARGEST_PLAIN_BIAS = 0.02
 _TOLD = {"note", "warning", "end-point"}
 
 
@@ -57,6 +59,16 @@ def _course(result: dict[str, Any]) -> list[str]:
     return []
 
 
+def _half_line(half: dict[str, Any]) -> str:
+    """PKa with the plain pH half-way beside it, and its bias where that is known."""
+    line = f"pKa about {half['pka']:.2f} from the half-equivalence at {half['volume_ml']:.3f} mL"
+    bias = half.get("plain_bias")
+    if bias is None or half.get("ph") is None:
+        return line
+    word = "" if abs(bias) <= LARGEST_PLAIN_BIAS else ": too far to stand for the pKa"
+    return f"{line} (plain pH there {half['ph']:.2f}, {bias:+.2f} from it{word})"
+
+
 def result_lines(result: dict[str, Any]) -> list[str]:
     """Return how a run ended, for people."""
     lines = [f"outcome: {result.get('run_outcome', result['outcome'])}"]
@@ -68,14 +80,11 @@ def result_lines(result: dict[str, Any]) -> list[str]:
         lines.append(f"end point {number}: {volume}{ph}, by {point['estimator']}")
     if not result["end_points"]:
         lines.append("no end point was found, so no amount is given")
-    lines += [
-        f"pKa about {half['pka']:.2f} from the half-equivalence at {half['volume_ml']:.3f} mL"
-        for half in result["half_equivalence"]
-        if half.get("pka") is not None
-    ]
+    lines += [_half_line(half) for half in result["half_equivalence"] if half.get("pka") is not None]
     if result.get("result"):
         lines.append(f"amount: {amount_text(result['result'])}")
     lines += _course(result)
+    lines += [f"note: {note}" for note in result.get("notes") or []]
     lines += [f"warning: {warning}" for warning in result["warnings"]]
     if result.get("run"):
         lines.append(f"record: {result['run']}")

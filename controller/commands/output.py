@@ -56,3 +56,11 @@ def volume_text(volume_ml: float, uncertainty_ml: float | None) -> str:
         return f"{volume_ml:.4f} mL"
     places = max(3, decimals(uncertainty_ml))
     return f"{volume_ml:.{places}f} mL, u = {uncertainty_ml:.{places}f} mL"
+
+
+def chance_text(probability: float) -> str:
+    """Return a probability in percent; what rounds to none or all is told as a bound, for neither is meant."""
+    percent = 100.0 * probability
+    if percent > 99.9:
+        return "> 99.9 %"
+    return "< 0.1 %" if percent < 0.1 else f"{percent:.1f} %"

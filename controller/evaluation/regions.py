@@ -77,7 +77,7 @@ def henderson_hasselbalch(curve: Curve, volume_ml: float, step: Step) -> BufferE
     for name, free in (("H+", math.pow(10.0, -ph)), ("OH-", math.pow(10.0, ph - curve.pkw))):
         share = free / min(made, left)
         if share > LARGEST_FREE_SHARE:
-            return _refused(f"free {name} is {100.0 * share:.2g} % of the scarcer form, allowed: up to 1 %")
+            return _refused(f"free {name} is {100.0 * share:.3g} % of the scarcer form, allowed: up to 1 %")
     return BufferEquation(ph=ph, refused=None)
 
 

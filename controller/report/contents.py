@@ -37,16 +37,13 @@ class Figure:
     caption: str
 
 
-def report_contents(
-    record: Record, *, written_utc: str, replicates: Sequence[Record] = (), detached: bool = False
-) -> dict[str, Any]:
+def report_contents(record: Record, *, written_utc: str, replicates: Sequence[Record] = ()) -> dict[str, Any]:
     """Return everything that the page shows.
 
     Args:
         record: the run.
         written_utc: when the report is written, ISO 8601.
         replicates: further runs of the same sample, for mean and spread.
-        detached: True: the record is no file (tests), so that it has no hash and nothing beside it.
 
     Raises:
         HalfdropError: the record cannot be read.
@@ -55,44 +52,65 @@ def report_contents(
     closing = record.closing or {}
     result = _dict(closing.get("result"))
     offset = header.get("lab_utc_offset")
-    amount = result.get("result")
-    added = [] if detached else [one.to_json() for one in added_evaluations(record.path)]
-    figures, missing = _figures(record, result)
     again = _evaluated_again(record, plan)
-    repeated = together([record, *replicates])
-    mean = repeated.amount if repeated is not None else None
+    figures, missing = _figures(record, result)
     return {
         "title": str(plan.get("method_title") or "Titration"),
         "sample_id": str(_dict(plan.get("sample")).get("sample_id") or "not named"),
-        "amount": _headline(mean or amount),
-        "mean_of": repeated.count if repeated is not None and mean else 0,
         "calibration": calibration_part(plan, result, offset),
         "facts": _facts(record, plan, result, offset),
-        "alerts": _alerts(record, plan, closing, detached=detached),
+        "alerts": _alerts(record, plan, closing),
         "warnings": _warnings(header, plan, result),
         "outcome": _outcome(record, closing),
         "figures": figures,
         "missing": missing,
-        "end_points": tables.end_points(result),
-        "estimators": tables.estimators(result, again),
-        "half_equivalence": tables.half_equivalence(result),
-        "budget": budget_table(mean or amount),
-        "identity": identity_table(again.get("identity")),
-        "replicates": repeated,
-        "evaluations": tables.evaluations(result, added, offset),
+        **_amounts(record, result, replicates),
+        **_evaluated(record, result, again, offset),
         "calibrations": calibrations_in_force(_dict(header.get("hashes")), record.path.parent.parent / FOLDER, offset),
         "instruments": instruments(header),
         "sample": _sample(_dict(plan.get("sample")), offset) if plan.get("titrant") else [],
-        "settings": _settings(plan, offset),
+        **_course(record, plan, again, offset),
+        "record": _record_facts(record),
+        "hashes": [(str(name), str(value)) for name, value in _dict(header.get("hashes")).items()],
+        "written": local_time(written_utc, offset),
+        "program": __version__,
+    }
+
+
+def _amounts(record: Record, result: dict[str, Any], replicates: Sequence[Record]) -> dict[str, Any]:
+    """The amount, that of the mean where there are replicates, with its budget."""
+    repeated = together([record, *replicates])
+    mean = repeated.amount if repeated is not None else None
+    amount = mean or result.get("result")
+    return {
+        "amount": _headline(amount),
+        "mean_of": repeated.count if repeated is not None and mean else 0,
+        "budget": budget_table(amount),
+        "replicates": repeated,
+    }
+
+
+def _evaluated(record: Record, result: dict[str, Any], again: dict[str, Any], offset: Any) -> dict[str, Any]:
+    """End points, estimators, half-equivalence, candidates, and the evaluations kept beside the record."""
+    added = [one.to_json() for one in added_evaluations(record.path)]
+    return {
+        "end_points": tables.end_points(result),
+        "estimators": tables.estimators(result, again),
+        "half_equivalence": tables.half_equivalence(result),
+        "identity": identity_table(again.get("identity")),
+        "evaluations": tables.evaluations(result, added, offset),
+    }
+
+
+def _course(record: Record, plan: dict[str, Any], again: dict[str, Any], offset: Any) -> dict[str, Any]:
+    """What was asked, what went against the plan, every dose and every point."""
+    return {
         "questions": tables.questions(record.entries),
         "incidents": tables.incidents(record.entries),
         "cautions": cautions_of(plan),
         "doses": tables.doses(record.entries),
         "points": points_table(record, again),
-        "record": [] if detached else _record_facts(record, offset),
-        "hashes": [(str(name), str(value)) for name, value in _dict(header.get("hashes")).items()],
-        "written": local_time(written_utc, offset),
-        "program": __version__,
+        "settings": _settings(plan, offset),
     }
 
 
@@ -167,7 +185,7 @@ def _facts(record: Record, plan: dict[str, Any], result: dict[str, Any], offset:
     ]
 
 
-def _alerts(record: Record, plan: dict[str, Any], closing: dict[str, Any], *, detached: bool) -> list[str]:
+def _alerts(record: Record, plan: dict[str, Any], closing: dict[str, Any]) -> list[str]:
     found = []
     part = _dict(_dict(closing.get("result")).get("calibration"))
     if part and not part.get("accepted"):
@@ -178,7 +196,7 @@ def _alerts(record: Record, plan: dict[str, Any], closing: dict[str, Any], *, de
         found.append(f"The run did not complete: {closing.get('reason') or closing.get('outcome')}.")
     if record.closing is None:
         found.append("The record has no closing line: the run is still going on or was broken off.")
-    if not detached and (state := verify(record.path)).state == "edited":
+    if (state := verify(record.path)).state == "edited":
         found.append(f"The record is not as the program wrote it ({state.what}). Do not use these numbers.")
     if plan.get("seed") is not None:
         what = "nothing real was measured" if part else "no real sample was titrated"
@@ -255,7 +273,7 @@ def _settings(plan: dict[str, Any], offset: Any) -> list[tuple[str, Facts]]:
     return [(title, facts) for title, facts in found if facts]
 
 
-def _record_facts(record: Record, offset: Any) -> Facts:
+def _record_facts(record: Record) -> Facts:
     found = verify(record.path)
     data = record.path.read_bytes()
     versions = _dict(record.header.get("versions"))

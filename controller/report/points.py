@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
+from controller.commands.output import chance_text
 from controller.record import Record, points
 from controller.report.tables import Table
 from controller.report.wording import DASH, clock, number
@@ -55,7 +56,7 @@ def identity_table(identity: dict[str, Any] | None) -> Table | None:
     rows: list[tuple[str, ...]] = [
         (
             str(one["substance"]),
-            f"{number(100.0 * one['probability'], 1)} %",
+            chance_text(one["probability"]),
             ", ".join(str(count) for count in one["protons"]),
             number(one["ph_difference"], 2),
             number(one["equivalent_mass_g_mol"], 1),
@@ -63,7 +64,7 @@ def identity_table(identity: dict[str, Any] | None) -> Table | None:
         )
         for one in identity["candidates"]
     ]
-    rows.append(("none of the catalogue", f"{number(100.0 * identity['none_of_these'], 1)} %", *[DASH] * 4))
+    rows.append(("none of the catalogue", chance_text(identity["none_of_these"]), *[DASH] * 4))
     mass = identity.get("equivalent_mass_g_mol")
     found = "" if mass is None else f"Equivalent mass found: {number(mass, 1)} g/mol. "
     heads = ("Substance", "Probability", "Protons counted", "pH off by", "Equivalent mass / (g/mol)", "Off by / %")

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
+from controller.commands.lines import LARGEST_PLAIN_BIAS
 from controller.commands.output import decimals
 from controller.evaluation.statistics import StatisticsError, grubbs, summarise
 from controller.report.wording import DASH, clock, facts_of, local_time, number, with_uncertainty
@@ -84,7 +85,7 @@ def half_equivalence(result: dict[str, Any]) -> Table:
         shown = with_uncertainty(pka, u) if u else (number(pka, 3), DASH)
         bias = half.get("plain_bias")
         remark = str(half.get("remark") or "")
-        if not remark and bias is not None and abs(bias) > 0.02:
+        if not remark and bias is not None and abs(bias) > LARGEST_PLAIN_BIAS:
             remark = "the plain pH half-way is no pKa here: its bias exceeds 0.02"
         rows.append((number(half.get("volume_ml"), 3), number(half.get("ph"), 2), number(bias, 3), *shown, remark))
     heads = ("Volume / mL", "Plain pH half-way", "Its bias", "pKa", "u(pKa)", "Remark")

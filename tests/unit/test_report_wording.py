@@ -9,6 +9,8 @@ from pathlib import Path
 import pytest
 
 from configs.errors import HalfdropError
+from controller.commands.lines import result_lines
+from controller.commands.output import chance_text
 from controller.reevaluation import add_evaluation, added_evaluations
 from controller.report.budget import budget_table
 from controller.report.cautions import cautions_of
@@ -233,3 +235,20 @@ def test_an_evaluation_tells_that_its_record_has_changed(tmp_path: Path) -> None
 def test_an_evaluation_that_cannot_be_written_says_so(tmp_path: Path) -> None:
     with pytest.raises(HalfdropError, match="cannot be read"):
         add_evaluation(tmp_path / "none.jsonl", {}, evaluated_utc="2026-12-01T10:00:00Z", reason=None)
+
+
+def test_a_probability_is_never_told_as_certain() -> None:
+    assert chance_text(1.0) == "> 99.9 %"
+    assert chance_text(0.0) == "< 0.1 %"
+    assert chance_text(0.4936) == "49.4 %"
+
+
+def test_lines_for_people_show_the_plain_ph_beside_the_pka() -> None:
+    result = {"outcome": "completed", "reason": None, "end_points": [], "warnings": []}
+    half = {"volume_ml": 2.5, "ph": 3.135, "pka": 3.0, "plain_bias": 0.135}
+    (line,) = [one for one in result_lines({**result, "half_equivalence": [half]}) if "pKa" in one]
+    assert line.endswith("(plain pH there 3.13, +0.14 from it: too far to stand for the pKa)")
+    (line,) = [
+        one for one in result_lines({**result, "half_equivalence": [{**half, "plain_bias": 0.01}]}) if "pKa" in one
+    ]
+    assert line.endswith("+0.01 from it)")
