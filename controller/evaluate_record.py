@@ -13,15 +13,20 @@ from controller.amounts import amount_of_plan
 from controller.encoding import plan_from_json
 from controller.evaluation.curve import Array, Curve, CurveError
 from controller.evaluation.evaluate import evaluate
+from controller.evaluation.result import Evaluation
 from controller.identify import identity_of
 from controller.pointregions import regions_of
 from controller.record import Record, points, read_record
+from controller.titration.audit import audited
 from controller.titration.outcome import STRAIGHTNESS_MV
 from controller.titration.plan import RunPlan
+from controller.titration.precision import pump_precision_ml
 from simulators.constants import ideal_slope_mv
 
 #: no probe and no calibration is straight to better than this over a few pH
 STRAIGHTNESS_PH = 0.003
+#: an uncertainty larger than this many times another one is another one
+_LARGER = 1.02
 
 
 def evaluate_record(path: Path, *, end_points_expected: int | None = None, identify: bool = False) -> dict[str, Any]:
@@ -49,13 +54,13 @@ def evaluate_points(
     plan = plan_from_json(record.header.get("plan"), where=str(path))
     curve, detected = curve_of(plan, record, where=str(path)), _detected_ml(record)
     closing = record.closing or {}
-    result = evaluate(
+    evaluation = evaluate(
         curve,
         end_points_expected=end_points_expected or plan.end_points.expected,
         detected_ml=detected,
-    ).to_json()
-    for point in result["end_points"]:
-        point["standard_uncertainty_ml"] = math.hypot(point["standard_uncertainty_ml"], plan.pump.position_sd_ml)
+    )
+    result = evaluation.to_json()
+    _hold_against_run(result, evaluation, plan, record, curve)
     result["run"], result["seed"] = str(path), plan.seed
     result["run_outcome"] = closing.get("outcome", "open")
     result["result"] = amount_of_plan(plan, result)
@@ -70,16 +75,74 @@ def evaluate_points(
     return result
 
 
+def _hold_against_run(
+    result: dict[str, Any], evaluation: Evaluation, plan: RunPlan, record: Record, curve: Curve
+) -> None:
+    """Bring in what the points alone do not tell: plunger, doses in doubt, the last look, the run's own doubts."""
+    beyond_ml = _beyond_points_ml(plan, record)
+    for point in result["end_points"]:
+        point["standard_uncertainty_ml"] = math.hypot(point["standard_uncertainty_ml"], beyond_ml)
+    audit = audited(
+        result["end_points"],
+        curve,
+        [float(one["at_s"] or 0.0) for one in _used(record)],
+        evaluation.estimates,
+        slowness=None,  # learned while it ran; what it cost is in the run's own uncertainty, below
+        precision_ml=pump_precision_ml(plan),
+    )
+    result["end_points"] = audit.end_points
+    result["warnings"] += audit.warnings
+    result["reason"] = audit.withheld or result["reason"]
+    own = (record.closing or {}).get("result") or {}
+    for point in result["end_points"]:
+        _keep_doubts(point, own.get("end_points") or [], result["warnings"])
+    if record.closing is not None and result["end_points"] and not own.get("end_points"):
+        result["warnings"].append(
+            f"the run itself gave no end point: {record.closing.get('reason') or 'no reason told'}"
+        )
+
+
+def _keep_doubts(point: dict[str, Any], own: list[dict[str, Any]], warnings: list[str]) -> None:
+    """The run saw more than its points (time, a slow probe): its larger uncertainty of the same end point stays."""
+    u_ml = float(point["standard_uncertainty_ml"])
+    for one in own:
+        theirs = float(one.get("standard_uncertainty_ml") or 0.0)
+        near = abs(float(one["volume_ml"]) - float(point["volume_ml"])) <= max(u_ml, theirs)
+        if near and theirs > _LARGER * u_ml:
+            point["standard_uncertainty_ml"] = theirs
+            warnings.append(
+                f"end point at {point['volume_ml']:.4f} mL: the run's own uncertainty, {theirs:.2g} mL, is kept; its "
+                f"points alone give {u_ml:.2g} mL"
+            )
+            return
+
+
+def _beyond_points_ml(plan: RunPlan, record: Record) -> float:
+    """Standard uncertainty of a volume by the plunger's positions (two more for each refill) and doses in doubt, mL."""
+    pump = plan.pump
+    begun_full = pump.contents_ml >= pump.syringe_ml - pump.step_ml
+    refills = sum(1 for _ in record.of("refilled"))
+    positions = (1.0 if begun_full else 2.0) + 2.0 * refills
+    doubts = [float(one["highest_ml"]) - float(one["lowest_ml"]) for one in record.of("failed")
+              if one.get("highest_ml") is not None and one.get("lowest_ml") is not None]  # fmt: skip
+    return math.hypot(pump.position_sd_ml * math.sqrt(positions), *[doubt / math.sqrt(12.0) for doubt in doubts])
+
+
+def _used(record: Record) -> list[dict[str, Any]]:
+    """The points that make the curve, in the order of volume."""
+    found = [one for one in points(record) if one["volume_ml"] is not None and one["potential_mv"] is not None]
+    return sorted(found, key=lambda one: float(one["volume_ml"]))
+
+
 def curve_of(plan: RunPlan, record: Record, *, where: str) -> Curve:
     """Return the record's points as a curve.
 
     Raises:
         CurveError: there are too few, or they make no curve.
     """
-    found = [one for one in points(record) if one["volume_ml"] is not None and one["potential_mv"] is not None]
+    found = _used(record)
     if not found:
         raise CurveError("no points in it", where=where, remedy="Nothing can be evaluated")
-    found.sort(key=lambda one: float(one["volume_ml"]))
     chemistry, analyte = plan.chemistry, plan.chemistry.analyte
     known = all(one["ph"] is not None for one in found)
     volume_sd, signal_sd = _spreads(plan, found, known=known)

@@ -20,7 +20,7 @@ def regions_of(curve: Curve, result: dict[str, Any]) -> list[dict[str, Any]]:
     """
     volumes = [float(point["volume_ml"]) for point in result["end_points"]]
     steps = []
-    for previous, end in zip([0.0, *volumes[:-1]], volumes, strict=True):
+    for previous, end in zip([0.0, *volumes], volumes, strict=False):
         halves = [half for half in result["half_equivalence"] if previous < half["volume_ml"] < end]
         pka = halves[0].get("conditional_pka") if halves else None
         steps.append(Step(previous_ml=previous, end_point_ml=end, pka=pka))

@@ -286,6 +286,18 @@ def test_evaluations_are_added_beside_the_record_and_shown(halfdrop: Run, runs: 
     assert "FILE EDITED" in text
 
 
+def test_a_curve_without_an_end_point_is_evaluated_all_the_same(halfdrop: Run, tmp_path: Path) -> None:
+    table = tmp_path / "flat.csv"
+    table.write_text("volume_ml,ph\n" + "".join(f"{i},{4.0 + 0.01 * i}\n" for i in range(12)), encoding="utf-8")
+    status, out, err = halfdrop("evaluate", str(table), "--identify", "--json")
+    assert status == 1, err
+    told = json.loads(out)
+    assert told["end_points"] == []
+    assert {one["region"] for one in told["regions"]} == {"no end point is known"}
+    assert told["identity"]["candidates"] == []
+    assert told["identity"]["refused"]
+
+
 def test_add_needs_a_record(halfdrop: Run, tmp_path: Path) -> None:
     table = tmp_path / "curve.csv"
     table.write_text("volume_ml,ph\n0,3\n1,4\n2,5\n3,6\n4,10\n5,11\n", encoding="utf-8")
