@@ -82,6 +82,8 @@ class ProbeRules(Settings):
     )
     lowest_buffer_temperature_c: float = number(0, 60, "buffers colder than this are refused", default=15.0)
     highest_buffer_temperature_c: float = number(0, 60, "buffers warmer than this are refused", default=35.0)
+    largest_film_s: float = number(None, 600, "slowest film of a probe in order", default=10.0, above=0)
+    largest_slow_share_percent: float = number(None, 50, "largest slow share of a probe in order", default=5.0, above=0)
     isopotential_ph: float = number(0, 14, "pH at which temperature does not change the potential", default=7.0)
     isopotential_standard_uncertainty: float = number(0, 3, "standard uncertainty of that pH", default=0.5)
 

@@ -190,6 +190,7 @@ def _calibrate(group: Parser) -> None:
     _sample(made)
     made.add_argument("--replicates", type=int, metavar="N", help="how many portions are titrated (default: 3)")
     made.add_argument("--portions", metavar="LIST", help="g of standard of each, as 0.1512,0.1490,0.1533")
+    made.add_argument("--response-check", action="store_true", help="hold twice before the last end point: probe's lag")
     made.add_argument("--preparation", metavar="TEXT", help="how the titrant was prepared")
     made.add_argument("--prepared-on", metavar="DAY", help="as 2026-12-01")
     made.add_argument("--expires", metavar="DAY", help="last day of use, as 2027-06-30")
@@ -200,7 +201,7 @@ def _calibrate(group: Parser) -> None:
     _lab(made)
     _json(made)
     made = _action(actions, "history", "controller.commands.calibrations:history", "how a kind moved over time")
-    made.add_argument("kind", choices=("probe", "burette", "titrant", "blank"))
+    made.add_argument("kind", choices=("probe", "response", "burette", "titrant", "blank"))
     _lab(made)
     _json(made)
 

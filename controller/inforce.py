@@ -20,7 +20,7 @@ from controller.calibration.burette import titrant_volume_warning
 from controller.calibration.store import Calibration, in_force
 from controller.calibration.validity import Validity
 from controller.stated import stated
-from controller.titration.plan import ProbeCalibration
+from controller.titration.plan import ProbeCalibration, ProbeResponse
 from controller.titration.traceability import BlankInForce, BuretteInForce, Cause, LotInForce, Traceability
 
 
@@ -34,6 +34,7 @@ class InForce:
 
     traceability: Traceability
     probe: ProbeCalibration | None = None
+    response: ProbeResponse | None = None
     titrant_mol_l: float | None = None
     titrant_standard_uncertainty_mol_l: float | None = None
     hashes: Mapping[str, str] = field(default_factory=dict)
@@ -88,6 +89,7 @@ class _Search:
         probe = self._probe(probe_identity)
         burette = self._burette(pump_identity) or plain.burette
         lot, blank = self._lot(), self._blank()
+        response = self._response(probe_identity)
         self._standard()
         if expected_ml is not None and (text := titrant_volume_warning(expected_ml, self.bench.pump.syringe_ml)):
             self.warnings.append(text)
@@ -97,6 +99,7 @@ class _Search:
         return InForce(
             traceability=replace(plain, lot=lot, burette=burette, blank=blank, warnings=tuple(self.warnings)),
             probe=probe,
+            response=response,
             titrant_mol_l=concentration,
             titrant_standard_uncertainty_mol_l=u,
             hashes=self.hashes,
@@ -154,6 +157,23 @@ class _Search:
             slope_offset_covariance_mv=line["slope_offset_covariance_mv"],
             calibrated_utc=record.started_utc,
             record_sha256=record.sha256,
+        )
+
+    def _response(self, identity: str) -> ProbeResponse | None:
+        record = in_force(self.folder, "response", identity)
+        if record is None:
+            return None
+        self.hashes["calibration response"] = record.sha256
+        found = record.result["response"]
+        return ProbeResponse(
+            bulk_s=found["bulk_s"],
+            film_s=found["film_s"],
+            slow_s=found["slow_s"],
+            slow_share=found["slow_share"],
+            dead_time_s=found["dead_time_s"],
+            time_relative_uncertainty=found["time_relative_uncertainty"],
+            share_relative_uncertainty=found["share_relative_uncertainty"],
+            measured_utc=record.started_utc,
         )
 
     def _entered_by_hand(self, remedy: str) -> None:

@@ -130,10 +130,10 @@ def make_plan(
         sample=sample,
         titrant=_titrant(method, known),
         chemistry=_chemistry(method, sample),
-        probe=_probe(method, bench.probe, probe_identity, known.probe),
+        probe=_probe(method, bench.probe, probe_identity, known),
         pump=_pump(bench, pump),
         dosing=_dosing(method),
-        settling=_settling(method, bench.probe),
+        settling=_settling(method, lag_known=(known.response or bench.probe.response) is not None),
         end_points=EndPoints(
             expected=method.end_points.expected,
             smallest_rise_mv=method.end_points.smallest_rise_mv,
@@ -254,9 +254,8 @@ def expected_volume_ml(method: MethodSettings, sample: Sample) -> float | None:
     return amount_mmol * found.equivalents / per_ml
 
 
-def _probe(
-    method: MethodSettings, settings: ProbeSettings, identity: str, calibrated: ProbeCalibration | None
-) -> Probe:
+def _probe(method: MethodSettings, settings: ProbeSettings, identity: str, known: InForce) -> Probe:
+    calibrated = known.probe
     calibration = settings.calibration
     if settings.signal == "ph":
         calibrated = _meters_own(method, settings)
@@ -280,7 +279,7 @@ def _probe(
         identity=identity,
         signal=method.signal,
         calibration=planned,
-        response=_response(settings),
+        response=known.response or _response(settings),
         resolution_mv=settings.resolution_mv,
         reading_interval_s=settings.reading_interval_s,
     )
@@ -355,10 +354,10 @@ def _dosing(method: MethodSettings) -> Dosing:
     )
 
 
-def _settling(method: MethodSettings, probe: ProbeSettings) -> Settling:
+def _settling(method: MethodSettings, *, lag_known: bool) -> Settling:
     settings = method.settling
     rule = settings.rule
-    if rule == "lag-corrected" and probe.response is None:
+    if rule == "lag-corrected" and not lag_known:
         rule = "extrapolated"  # without a record of the lag there is nothing to correct with
     return Settling(
         rule=rule,

@@ -11,7 +11,7 @@ from typing import Literal
 
 from controller.titration.plan import Probe, Pump, Question, RunPlan, Sample, Vessel
 
-Kind = Literal["probe", "burette", "titrant", "blank"]
+Kind = Literal["probe", "burette", "titrant", "blank", "response"]
 CALIBRATION_PLAN_VERSION = 1
 
 
@@ -153,6 +153,15 @@ class BlankPlan(CalibrationPlan):
     detection_limit_ml: float
     end_point_ph: float | None = None
     expires: str | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResponsePlan(CalibrationPlan):
+    """Lag of the probe from the holds of a run with a response check."""
+
+    runs: tuple[SourceRun, ...]
+    largest_film_s: float
+    largest_slow_share: float
 
 
 AnyPlan = RunPlan | CalibrationPlan

@@ -31,12 +31,14 @@ from controller.inforce import utc_day
 from controller.journal import Journal
 from controller.labfolder import Lab, find_lab
 from controller.lock import lock_device, lock_lab
-from controller.lots import Preparation, SettledLot, blank_lot, titrant_lot
+from controller.lots import Preparation, SettledLot, blank_lot, response_record, titrant_lot
 from controller.outcome import RunResult
+from controller.record import read_record
 from controller.recordfile import new_record
 from controller.runner import run as carry_out
 from controller.stopping import StopSwitch
 from controller.titration.actions import Decisions
+from controller.titration.plan import ResponseCheck
 
 DONE, NOT_TRUSTED = 0, 1
 
@@ -117,6 +119,8 @@ def titrant(given: argparse.Namespace) -> int:
     else:
         records = _titrated(given, replace(picked, method=method), lab, opening=opening, headless=headless)
     with open_desk(bench, opening=opening) as opened:
+        if given.response_check and not given.runs_from:
+            _response(bench, records[-1], opened, lab, given)
         settled = titrant_lot(
             method,
             bench,
@@ -171,6 +175,7 @@ def _titrated(given: argparse.Namespace, picked: Chosen, lab: Lab, *, opening: O
         opening=opening,
         headless=headless,
         operator_name=given.operator,
+        response_check=ResponseCheck() if given.response_check else None,
     )
     for result in results:
         if result.outcome != "completed" or not result.result["end_points"]:
@@ -180,6 +185,28 @@ def _titrated(given: argparse.Namespace, picked: Chosen, lab: Lab, *, opening: O
                 remedy="Look at the record; titrate again, and name good runs with --from",
             )
     return [Path(result.record) for result in results]
+
+
+def _response(bench: BenchSettings, path: Path, opened: CalibrationBench, lab: Lab, given: argparse.Namespace) -> None:
+    """Keep the probe's lag from the held run; where none follows that is said, and the standardisation goes on."""
+    identity = read_record(path).header["plan"]["probe"]["identity"]
+    try:
+        settled = response_record(
+            bench,
+            path,
+            probe_identity=identity,
+            today=utc_day(opened.clock.utc_s()),
+            last=in_force(lab.calibrations, "response", identity),
+        )
+    except HalfdropError as error:
+        say(f"response check: {error}")
+        return
+    with lock_lab(lab.path, {"command": "calibrate"}):
+        core = settle_lot(
+            settled.plan, verdict=settled.verdict, notes=settled.notes, details=settled.details, warnings=()
+        )
+        result = _carry_out(settled.plan, core, opened, lab, stop=StopSwitch(), operator_name=given.operator)
+    say("\n".join(calibration_lines(result.result)))
 
 
 def _settled(settled: SettledLot, opened: CalibrationBench, lab: Lab, given: argparse.Namespace) -> int:

@@ -49,6 +49,11 @@ FOLLOWED: dict[str, tuple[tuple[str, str, tuple[str, ...]], ...]] = {
         ("offset at pH 7", "mV", ("line", "offset_mv")),
         ("response time", "s", ("response_s",)),
     ),
+    "response": (
+        ("film time", "s", ("response", "film_s")),
+        ("slow time", "s", ("response", "slow_s")),
+        ("slow share", "", ("response", "slow_share")),
+    ),
     "burette": (("gain", "", ("correction", "gain")),),
     "titrant": (("concentration", "mol/L", ("lot", "concentration_mol_l")),),
     "blank": (("blank", "mL", ("mean_ml",)),),

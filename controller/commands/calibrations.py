@@ -102,6 +102,6 @@ def _trend_text(quantity: str, series: list[tuple[str, float]]) -> str:
         f"change {30.0 * line.change_per_day:+.3g} a month, {'significant' if line.significant else 'not significant'}"
     )
     first = sum(values[:3]) / 3
-    if quantity == "response time" and values[-1] > SLOWING * first > 0:
+    if quantity in ("response time", "film time") and values[-1] > SLOWING * first > 0:
         text += f"; the probe is slowing: {values[-1]:.0f} s, it was {first:.0f} s: clean or replace it"
     return text

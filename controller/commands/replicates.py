@@ -20,7 +20,7 @@ from controller.labfolder import Lab
 from controller.outcome import RunResult
 from controller.planning import SampleChoice
 from controller.record import printable, read_record
-from controller.titration.plan import RunPlan
+from controller.titration.plan import ResponseCheck, RunPlan
 from controller.titration.traceability import Replicate
 
 MOST_REPLICATES = 20
@@ -58,8 +58,12 @@ def titrate_replicates(
     opening: Opening,
     headless: bool,
     operator_name: str | None,
+    response_check: ResponseCheck | None = None,
 ) -> list[RunResult]:
-    """Run one titration for each portion (None: as the method takes it); a stopped or failed run ends the series."""
+    """Run one titration for each portion (None: as the method takes it); a stopped or failed run ends the series.
+
+    The last one holds for a response check, where one is asked for.
+    """
     by_mass = picked.method.sample.taken_by == "mass"
     simulation = picked.bench.simulation if is_simulated(picked.bench) else None
     results: list[RunResult] = []
@@ -79,6 +83,7 @@ def titrate_replicates(
             headless=headless,
             operator_name=operator_name,
             replicate=Replicate(number=number, count=len(portions)),
+            response_check=response_check if number == len(portions) else None,
         )
         results.append(result)
         if result.outcome != "completed":

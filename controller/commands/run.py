@@ -29,7 +29,7 @@ from controller.recordfile import new_record
 from controller.runner import run as carry_out
 from controller.stopping import Commands, StopSwitch
 from controller.titration.core import titrate
-from controller.titration.plan import RunPlan
+from controller.titration.plan import ResponseCheck, RunPlan
 from controller.titration.traceability import Replicate
 from controller.unclosed import refuse_unclosed
 from drivers.operator import ConsoleOperator
@@ -82,6 +82,7 @@ def titrate_once(
     headless: bool,
     operator_name: str | None = None,
     replicate: Replicate | None = None,
+    response_check: ResponseCheck | None = None,
 ) -> RunResult:
     """Run one titration on a lab folder's bench; the record is closed when this returns or raises.
 
@@ -98,6 +99,8 @@ def titrate_once(
             held.enter_context(lock_device(identity, {"lab": str(lab.path)}))
         refuse_unclosed(lab.runs, bench.account.identity)
         plan, hashes = _planned(picked, lab, choice, bench, replicate)
+        if response_check is not None:
+            plan = replace(plan, response_check=response_check)
         return _on_open_bench(plan, hashes, lab, bench, operator_name=operator_name, headless=headless)
 
 

@@ -23,9 +23,10 @@ from controller.titration.policies import dosing_policy, settling_rule
 from controller.titration.precision import near_ml, pump_precision_ml
 from controller.titration.probewatch import ProbeWatch
 from controller.titration.reasons import dose_reason
+from controller.titration.response_hold import ResponseHold
 from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule
-
 from controller.titration.settling_lag import LagCorrected
+
 #: change of temperature during a run that is warned about
 WARMED_C = 2.0
 LIQUID_C = (0.0, 100.0)
@@ -68,17 +69,18 @@ class _Run:
         self.probe = ProbeWatch(plan.probe.resolution_mv)
         self.watch = EndPointWatch(plan)
         self.forecast = Forecast(plan, self.scale)
+        self.hold = ResponseHold(plan)
         self._settler: SettlingRule = FixedWait(plan.settling)
         self._doser: DosingPolicy = EqualVolumes(plan.dosing)
         self._readings = 0  # good ones of the point that settles
         self._temperature_c = plan.chemistry.temperature_c
 
-    # --- before the first dose ---
-
     @property
     def slowness(self) -> float | None:
         """How many times as slowly as its record says the probe answered; None where that is not known."""
         return self._settler.slowness if isinstance(self._settler, LagCorrected) else None
+
+    # --- before the first dose ---
 
     def start(self) -> Talk[None]:
         """Questions, noise, the tools of the run, the first point."""
@@ -152,6 +154,8 @@ class _Run:
                 continue
             accepted = yield from self._settle(planned)
             yield from self._take(accepted, accepted.text)
+            sound = self.forecast.sound
+            yield from self.hold.after_dose(self.world, None if sound is None else sound.equivalence_ml)
             yield from self._look()
 
     def _potential_rises(self) -> bool:

@@ -210,6 +210,15 @@ class Question:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class ResponseCheck:
+    """Hold for `hold_s` after each of `doses` doses that end within `within_ml` before the end point."""
+
+    hold_s: float = 120.0
+    doses: int = 2
+    within_ml: float = 0.15
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class ReportAs:
     """How the amount is reported: which end point (from 1), how many protons or hydroxides it counts, in what unit.
 
@@ -249,3 +258,4 @@ class RunPlan:
     report_as: ReportAs | None
     seed: int | None = None
     traceability: Traceability | None = None
+    response_check: ResponseCheck | None = None
