@@ -42,6 +42,8 @@ from simulators.port import VirtualPorts
 
 Route = Literal["memory", "pty", "tcp"]
 FAST = "fast"
+#: what says where pump and probe are after a drop-out; None: looked for by the name in the bench file
+Finders = tuple[Callable[[], str] | None, Callable[[], str] | None]
 _MAKER = "halfdrop simulated bench"
 
 
@@ -138,6 +140,7 @@ class _Served:
     seed: int
     pump_device: Device
     faults: FaultScript | None
+    find: Finders
 
 
 @contextmanager
@@ -185,7 +188,7 @@ class _Opener:
         chemist = VirtualChemist(
             served.world, served.clock.now_s, questions=method.questions, answers=self.opening.answers
         )
-        opened = self._connected(served.urls, served.clock, chemist)
+        opened = self._connected(served.urls, served.clock, chemist, served.find)
         return replace(
             opened, world=served.world, seed=served.seed, pump_device=served.pump_device, faults=served.faults
         )
@@ -208,7 +211,13 @@ class _Opener:
             for role in ("pump", "probe"):
                 faults.attach(ports, role, f"{role}-{name}")
         return _Served(
-            urls=(pump_url, probe_url), clock=clock, world=world, seed=seed, pump_device=pump_device, faults=faults
+            urls=(pump_url, probe_url),
+            clock=clock,
+            world=world,
+            seed=seed,
+            pump_device=pump_device,
+            faults=faults,
+            find=(lambda: ports.where(pump_device), lambda: ports.where(probe_device)),
         )
 
     def reached(self, method: MethodSettings, sample: Sample) -> ReachedBench:
@@ -269,12 +278,16 @@ class _Opener:
             remedy=f"Leave {option} out",
         )
 
-    def _connected(self, urls: tuple[str, str], clock: Clock, operator: Operator) -> OpenBench:
+    def _connected(
+        self, urls: tuple[str, str], clock: Clock, operator: Operator, find: Finders = (None, None)
+    ) -> OpenBench:
         bench = self.bench
         traffic = self._traffic()
         connecting = self._connecting(clock)
-        pump = connecting.pump(bench.pump, url=urls[0], traffic=traffic["pump"])
-        probe = connecting.probe(bench.probe, temperature_c=self.temperature_c, url=urls[1], traffic=traffic["probe"])
+        pump = connecting.pump(bench.pump, url=urls[0], traffic=traffic["pump"], find=find[0])
+        probe = connecting.probe(
+            bench.probe, temperature_c=self.temperature_c, url=urls[1], traffic=traffic["probe"], find=find[1]
+        )
         pump_identity, probe_identity, status = pump.identify(), probe.identify(), pump.status()
         check_capabilities(bench.pump, pump)
         return OpenBench(

@@ -45,11 +45,19 @@ class Connecting:
     place: Path | None = None
     unattended: bool = False
 
-    def pump(self, settings: PumpSettings, *, url: str | None = None, traffic: TrafficLog | None = None) -> Pump:
+    def pump(
+        self,
+        settings: PumpSettings,
+        *,
+        url: str | None = None,
+        traffic: TrafficLog | None = None,
+        find: Callable[[], str] | None = None,
+    ) -> Pump:
         """Open the pump's port and return its driver; asks nothing yet.
 
         Args:
             url: where it is; None: at the port of the settings.
+            find: says where it is after a drop-out; None: looked for by the name in the settings.
 
         Raises:
             DeviceGoneError: the port cannot be opened.
@@ -63,7 +71,7 @@ class Connecting:
                 where=f"pump, dialect {settings.dialect}",
                 remedy="Add delivered or position to the dialect, or stay with it: start the run at a terminal",
             )
-        link = self._link(settings, dialect, "pump", url, traffic)
+        link = self._link(settings, dialect, "pump", url=url, traffic=traffic, find=find)
         if dialect is None:
             return ScpiPump(link, self.clock, self.stop, rate_ml_min=settings.rate_ml_min)
         return DialectPump(
@@ -84,6 +92,7 @@ class Connecting:
         temperature_c: float,
         url: str | None = None,
         traffic: TrafficLog | None = None,
+        find: Callable[[], str] | None = None,
     ) -> Probe:
         """Open the probe's port and return its driver; asks nothing yet.
 
@@ -94,7 +103,7 @@ class Connecting:
             DeviceGoneError, HalfdropError: as `pump`; also where a library is missing.
         """
         dialect = dialect_of(settings, "probe", self.place)
-        link = self._link(settings, dialect, "probe", url, traffic)
+        link = self._link(settings, dialect, "probe", url=url, traffic=traffic, find=find)
         if dialect is None:
             return ScpiProbe(link, self.clock, self.stop)
         kind = DialectProbe if dialect.transmitter is None else ModbusProbe
@@ -105,11 +114,12 @@ class Connecting:
         settings: PortSettings,
         dialect: DialectSettings | None,
         device: str,
+        *,
         url: str | None,
         traffic: TrafficLog | None,
+        find: Callable[[], str] | None,
     ) -> Link:
-        find: Callable[[], str] | None = None
-        if url is None or url == settings.port:
+        if url is None or (url == settings.port and find is None):
             find = PortFinder(settings.port)
             try:
                 url = find()

@@ -155,11 +155,12 @@ class DialectTalk:
         return True
 
     def _fall_still(self) -> None:
-        """Read until nothing comes for the time of a reply, so that a late one is not taken for the next."""
+        """Read for the time of a reply, so that a late one is not taken for the next."""
         link = self.link
+        until_s = link.line_s() + link.settings.reply_deadline_s
         for _ in range(MOST_LINES):
             try:
-                link.receive(link.line_s() + link.settings.reply_deadline_s)
+                link.receive(until_s)
             except DeviceGarbledError:
                 continue
             except DeviceSilentError:

@@ -19,6 +19,8 @@ if TYPE_CHECKING:
     from configs.dialectfile import DialectSettings, Register
 
 ATTEMPTS = 3
+#: of RTU (Modbus over Serial Line 1.02, 2.5.1)
+LONGEST_FRAME_BYTES = 256
 LARGEST_MV = 2000.0
 LOWEST_C, HIGHEST_C = -50.0, 200.0
 _FUNCTIONS = {"input": 4, "holding": 3}
@@ -106,6 +108,8 @@ class ModbusProbe:
             except (DeviceSilentError, DeviceGarbledError):
                 if attempt == ATTEMPTS:
                     raise
+                link = self._link  # a late reply must not be taken for the next
+                link.receive_bytes(LONGEST_FRAME_BYTES, link.line_s() + link.settings.reply_deadline_s)
         raise AssertionError  # not reached
 
     def _once(self, register: Register) -> float:

@@ -124,6 +124,21 @@ class VirtualPorts:
             route = "pty"
         return self.add(other_name or name, gone.device, route, latency_s=gone.latency_s)
 
+    def where(self, device: Device) -> str:
+        """Return the address at which a device is now, whatever stands between it and its port.
+
+        Raises:
+            OSError: it is unplugged.
+        """
+        with self._lock:
+            for port in self._living():
+                end: object = port.device
+                while end is not device and hasattr(end, "device"):
+                    end = end.device
+                if end is device:
+                    return port.url
+        raise OSError(errno.ENODEV, "the device is not plugged in")
+
     def _forget(self, port: VirtualPort) -> None:
         if self._manual is not None:
             self._manual.leave(port)

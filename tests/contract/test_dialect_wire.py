@@ -404,3 +404,30 @@ def test_real_time_smoke_of_the_pump(route, built, plain_mechanism):
     assert pump.driver.dose(1, 0.005).steps == 10
     assert pump.driver.stop()
     assert pump.pushed() == 10
+
+
+def test_a_late_reply_is_not_taken_for_the_next(probe, spoil):
+    """A transmitter's temperature and status are one register each: nothing in a reply tells which it is."""
+    held = []
+
+    def late(data):
+        held.append(data)
+        probe.clock.call_at(probe.clock.now_s() + 0.7, lambda: probe.port._send(data))
+        return b""
+
+    spoil(probe.port, lambda request: b"\x00\x0c\x00\x01" in request or b"tell" in request, reply=late)
+    before = probe.clock.now_s()
+    reading = probe.driver.read()
+    assert (reading.temperature_c, reading.status) == (25.0, "ok")
+    assert held == [] or probe.clock.now_s() - before >= 0.7
+
+
+def test_a_device_that_never_stops_talking_is_garbled_and_ends(route, built, plain_sensor, spoil):
+    probe = built(route, PROBE, sensor=plain_sensor)
+    spoil(probe.port, has(b"tell"), reply=lambda data: b"(noise)\r\n" * 300, times=99)
+    with pytest.raises((DeviceGarbledError, DeviceSilentError)):
+        probe.driver.read()
+    spoil(probe.port, has(b"tell"), reply=lambda data: b"x" * 100_000, times=99)
+    with pytest.raises(DeviceGarbledError):
+        probe.driver.read()
+    assert probe.link._reader.waiting <= 1024
