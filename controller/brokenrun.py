@@ -16,6 +16,9 @@ from controller.titration.actions import Action, Dose, Dosed, Failed, Observatio
 from controller.titration.plan import RunPlan
 from drivers.clock import Clock, real_seconds_scale
 
+#: how every record begins
+_HEADER = b'{"line":1,"utc":"'
+
 
 class ResumeRefusedError(HalfdropError):
     """The run cannot go on; what is there can be evaluated. `difference` is set where the decisions differ."""
@@ -96,11 +99,11 @@ def read_broken(path: Path) -> BrokenRun:
             f"it cannot be read ({error.strerror})", where=str(path), remedy="See 'halfdrop runs list'"
         ) from error
     mended = whole_lines(data)
-    record = record_of(mended, path)
-    if not mended.count(b"\n"):
+    if not mended.count(b"\n") and _HEADER.startswith(mended[: len(_HEADER)]):
         raise ResumeRefusedError(
             "it breaks off in its first line: nothing was begun", where=str(path), remedy="Start the run again"
         )
+    record = record_of(mended, path)
     try:
         check_open(mended, str(path))
     except HalfdropError as refused:

@@ -114,7 +114,8 @@ def _edited(whole: bytes) -> bytes:
             "record version 9; this program reads up to 1",
             id="newer record",
         ),
-        pytest.param(lambda whole: whole[:300], "not a run record", id="torn header"),
+        pytest.param(lambda whole: whole[:300], "breaks off in its first line: nothing was begun", id="torn header"),
+        pytest.param(lambda whole: b"", "nothing was begun", id="empty"),
     ],
 )
 def test_what_cannot_be_resumed_is_refused_and_left_alone(

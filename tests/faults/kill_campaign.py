@@ -129,6 +129,8 @@ def _killed(run: Killed, serve: subprocess.Popen[bytes]) -> Outcome:
     if b'"closing"' in kept:
         lines = kept.count(b"\n")
         return Outcome(seed=run.seed, killed_s=moment_s * scale, lines=lines, found="ended before", problems=())
+    if not kept.count(b"\n"):
+        return Outcome(seed=run.seed, killed_s=moment_s * scale, lines=0, found="nothing was begun", problems=())
     time.sleep(draws.choice((0.0, 0.3, 2.0)))
     resumed = result_of(halfdrop("resume", path.stem, *usual, place=lab.parent, wait=False))
     found, problems = _judged(run, path, kept, resumed, _steps_in_truth(ports["pump"]))
