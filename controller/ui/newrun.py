@@ -31,6 +31,8 @@ class Wanted:
     mass_g: float | None = None
     initial_volume_ml: float | None = None
     operator: str | None = None
+    replicates: int = 1
+    series: str | None = None
     time_scale: str | None = None
 
     def choice(self) -> SampleChoice:
@@ -99,6 +101,10 @@ def begin(lab: Lab, wanted: Wanted, answers: Mapping[str, str]) -> Path:
         HalfdropError: it did not begin.
     """
     arguments = wanted.arguments()
+    if wanted.series:
+        arguments = [wanted.method, f"--series={wanted.series}"]
+    elif wanted.replicates > 1:
+        arguments.append(f"--replicates={wanted.replicates}")
     if wanted.operator:
         arguments.append(f"--operator={wanted.operator}")
     if wanted.time_scale:

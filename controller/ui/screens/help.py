@@ -32,7 +32,10 @@ Numbers may have a decimal point or a decimal comma. What the run is expected to
 
   Tab        next field
   F5         expect: how long, how much titrant, what to heed
-  F9         start the run"""
+  F9         start the run
+
+More than one replicate, or a series from a table (CSV: id, amount, method, replicates), runs one after the other;
+1 goes to the run that goes on now."""
 
 _BENCH = """\
 Pump and probe as they answer, the account of titrant, the calibration and its age, and what to do where something is
@@ -57,6 +60,7 @@ A run as its record tells it.
   a          play it again; + and - change the speed, Space holds it
   z  ← →     look closely; walk from point to point
   v          verify the record
+  b  r       what the uncertainty is made of; write the report (a page to print)
   w          warnings
   q          back"""
 

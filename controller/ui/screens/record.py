@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import subprocess
+import sys
 from functools import partial
 from pathlib import Path
 from typing import Any, ClassVar
@@ -15,7 +17,8 @@ from textual.widgets import Footer
 from controller.commands.output import amount_text, volume_text
 from controller.record import printable
 from controller.ui.runview import RunView
-from controller.ui.screens.archive import verify_for
+from controller.ui.screens.archive import printable_lines, verify_for
+from controller.ui.screens.dialogs import Text
 from controller.ui.screens.help import help_of
 from controller.ui.screens.run import RunScreen
 from controller.ui.tail import Playback, all_entries
@@ -34,12 +37,16 @@ class RecordScreen(RunScreen):
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("a", "again", "Play again"),
         Binding("v", "verify", "Verify"),
+        Binding("b", "budget", "Budget"),
+        Binding("r", "report", "Report"),
     ]
 
     def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
         """A run that goes on is not played again."""
-        if action in ("again", "verify"):
+        if action in ("again", "verify", "report"):
             return not self.live
+        if action == "budget":
+            return bool((self.view.result.get("result") or {}).get("budget"))
         return super().check_action(action, parameters)
 
     def action_again(self) -> None:
@@ -51,9 +58,46 @@ class RecordScreen(RunScreen):
         """Verify the record."""
         self.run_worker(partial(verify_for, self, self.record), thread=True)
 
+    def action_budget(self) -> None:
+        """Show what the amount's uncertainty is made of."""
+        self.app.push_screen(Text("What the uncertainty is made of", budget_text(self.view.result["result"])))
+
+    def action_report(self) -> None:
+        """Let a process of its own write the report."""
+        self.notify("writing the report")
+        self.run_worker(partial(report_for, self, self.record), thread=True)
+
     def post_leave(self) -> None:
         """Back to where it was opened."""
         self.app.pop_screen()
+
+
+def budget_text(amount: dict[str, Any]) -> str:
+    """Return the budget of an amount: the shares as bars, the largest first, then the whole."""
+    from controller.commands.budgetlines import closing_lines
+
+    budget = amount["budget"]
+    rows = sorted(budget["rows"], key=lambda row: -row["share"])
+    widest = max(len(str(row["quantity"])) for row in rows)
+    lines = [printable(amount_text(amount)), ""]
+    for row in rows:
+        share = max(0.0, float(row["share"]))
+        bar = "█" * round(20 * share)
+        lines.append(f"{row['quantity']!s:<{widest}}  {100 * share:5.1f} %  {bar}")
+    text = [printable(line) for line in (*lines, "", *closing_lines(budget))]
+    return "\n".join(text)
+
+
+def report_for(screen: Screen[Any], record: Path) -> None:
+    """Write a record's report in a process of its own and say where it is; for a thread of its own."""
+    arguments = [sys.executable, "-P", "-m", "controller.cli", "runs", "report", str(record)]
+    lab = getattr(screen.app, "lab", None)
+    if lab is not None:
+        arguments += ["--lab", str(lab.path)]
+    done = subprocess.run(arguments, capture_output=True, text=True, check=False, stdin=subprocess.DEVNULL)
+    said = done.stdout if done.returncode == 0 else done.stderr
+    told = Text("The report" if done.returncode == 0 else "No report was written", printable_lines(said.strip()))
+    screen.app.call_from_thread(screen.app.push_screen, told)
 
 
 class CompareScreen(Screen[None]):

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from functools import partial
+from pathlib import Path
 from typing import Any, ClassVar
 
 from textual.app import ComposeResult
@@ -24,6 +25,7 @@ from controller.ui.widgets.answerfield import AnswerField
 from controller.ui.widgets.readout import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
+MOST_REPLICATES = 20
 _SCALES = (("real time", "1"), ("10 times real time", "10"), ("50 times real time", "50"), ("at once", "fast"))
 
 
@@ -56,6 +58,8 @@ class SetUpScreen(Screen[None]):
             yield from _row("sample", Input(id="sample-id", placeholder="what the record calls it", compact=True))
             yield from _row("amount", Input(id="amount", compact=True))
             yield from _row("all liquid, mL", Input(id="initial", compact=True))
+            yield from _row("replicates", Input(value="1", id="replicates", compact=True))
+            yield from _row("or a series", Input(id="series", placeholder="a CSV file of samples", compact=True))
             yield from _row("operator", Input(value=_user(), id="operator", compact=True))
             yield from _row("simulated time", Select(_SCALES, id="scale", value="10", allow_blank=False, compact=True))
             yield Plain("", id="problem", classes="problem")
@@ -141,6 +145,12 @@ class SetUpScreen(Screen[None]):
             if typed.strip() and (value is None or value <= 0):
                 return f"{what}: got {printable(typed)!r}, allowed: a number above 0 (decimal point or comma)"
             numbers[name] = value
+        replicates = self.query_one("#replicates", Input).value.strip() or "1"
+        if not (replicates.isdecimal() and 1 <= int(replicates) <= MOST_REPLICATES):
+            return f"replicates: got {printable(replicates)!r}, allowed: 1 to {MOST_REPLICATES}"
+        series = self.query_one("#series", Input).value.strip()
+        if series and not Path(series).expanduser().is_file():
+            return f"series: there is no file {printable(series)}"
         by_volume = self._prepared.method.sample.taken_by == "volume"
         scale = self.query_one("#scale", Select).value
         return Wanted(
@@ -150,6 +160,8 @@ class SetUpScreen(Screen[None]):
             mass_g=None if by_volume else numbers["amount"],
             initial_volume_ml=numbers["initial"],
             operator=self.query_one("#operator", Input).value.strip() or None,
+            replicates=int(replicates),
+            series=str(Path(series).expanduser().resolve()) if series else None,
             time_scale=str(scale) if self._prepared.simulated else None,
         )
 
@@ -161,7 +173,7 @@ class SetUpScreen(Screen[None]):
         missing = next((one for one in fields if not one.fits), None)
         if isinstance(wanted, str):
             self.notify(wanted, severity="error", markup=False)
-        elif wanted.sample_id is None:
+        elif wanted.sample_id is None and wanted.series is None:
             self.notify("say what the record should call the sample", severity="error")
             self.query_one("#sample-id", Input).focus()
         elif missing is not None:

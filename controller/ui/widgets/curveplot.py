@@ -192,7 +192,7 @@ def key_text(view: RunView, picture: Picture, second: RunView | None, width: int
     steepest = max((value for *_, value in picture.derivative), default=0.0)
     if second is not None:
         return f" A ⠉⠒⠤ {view.sample_id}   B ⠁⠂⠄ {second.sample_id}"
-    slope = f"▂▅█ slope to {steepest:.2g} {picture.signal}/mL" if steepest else ""
+    slope = f"▂▅█ slope to {_short(steepest)} {picture.signal}/mL" if steepest else ""
     band = ""
     if picture.band is not None and view.forecast is not None:
         band = f"░ expected {view.forecast[0]:.3f} ± {view.forecast[1]:.3f} mL"
@@ -201,6 +201,10 @@ def key_text(view: RunView, picture: Picture, second: RunView | None, width: int
         if len(text) <= width:
             return text
     return f" {picture.signal}"
+
+
+def _short(value: float) -> str:
+    return f"{value:.0f}" if value >= 10 else f"{value:.2g}"
 
 
 def _line(view: RunView, signal: str, *, dotted: bool = False) -> Line:
@@ -239,7 +243,7 @@ def _near_span(view: RunView) -> Span | None:
     reach = max(_NEAR_SHARE * middle[0], 4.0 * middle[1])
     highest = middle[0] + reach
     if view.over:
-        highest = min(highest, view.points[-1].volume_ml + 0.25 * reach)
+        highest = min(highest, view.points[-1].volume_ml + 0.1 * reach)
     return Span(lowest=max(0.0, middle[0] - reach), highest=max(highest, middle[0] + 0.1 * reach))
 
 
