@@ -105,9 +105,10 @@ def _monte_carlo(whole: dict[str, Any], rows: list[dict[str, Any]], amount: dict
     few = [row for row in rows if (row.get("degrees_of_freedom") or math.inf) <= _NO_VARIANCE]
     why = ""
     if few and found.get("agrees") is False:
+        freedom = number(few[0]["degrees_of_freedom"])
         why = (
-            f" {few[0].get('quantity')} has {number(few[0]['degrees_of_freedom'])} degrees of freedom, too few for "
-            "Student's t to have a variance: compare the intervals."
+            f" The quantity {few[0].get('quantity')} has {freedom} degrees of freedom, too few for Student's t to have "
+            "a variance: compare the intervals."
         )
     low, high = [number(end, places) for end in found.get("interval") or (None, None)]
     return (

@@ -61,6 +61,7 @@ def report_contents(record: Record, *, written_utc: str, replicates: Sequence[Re
         "facts": _facts(record, plan, result, offset),
         "alerts": _alerts(record, plan, closing),
         "warnings": _warnings(header, plan, result),
+        "notes": [str(one) for one in result.get("notes") or []],
         "outcome": _outcome(record, closing),
         "figures": figures,
         "missing": missing,

@@ -37,7 +37,7 @@ def instruments(header: Mapping[str, Any]) -> list[tuple[str, Facts]]:
         ("Probe", [*_device(devices.get("probe")), *_probe(probe, offset)]),
         ("Calibration of the probe", _calibration(_dict(probe.get("calibration")), offset, started)),
         ("Response of the probe", _response(_dict(probe.get("response")), offset)),
-        ("Burette", [*_device(devices.get("pump")), *_burette(pump, offset)]),
+        ("Burette", [*_device(devices.get("pump")), *_burette(pump, offset, checked=_checked(plan))]),
         ("Titrant lot", _titrant(_dict(plan.get("titrant")), offset)),
     ]
     return [*sections, *traceability(plan, offset)]
@@ -113,14 +113,19 @@ def _response(found: dict[str, Any], offset: Any) -> Facts:
     return facts
 
 
-def _burette(pump: dict[str, Any], offset: Any) -> Facts:
+def _checked(plan: dict[str, Any]) -> bool:
+    """Whether a gravimetric check stands in for the stated systematic error."""
+    return bool(_dict(_dict(plan.get("traceability")).get("burette")).get("record_sha256"))
+
+
+def _burette(pump: dict[str, Any], offset: Any, *, checked: bool = False) -> Facts:
     gain = 100.0 * float(pump.get("gain_standard_uncertainty") or 0.0)
     facts = [
         (
             "syringe, step",
             f"{number(pump.get('syringe_ml'))} mL, {number(1000.0 * float(pump.get('step_ml') or 0))} µL",
         ),
-        ("systematic error", f"u = {number(gain)} % of the volume"),
+        ("systematic error", "by its check, below" if checked else f"u = {number(gain)} % of the volume, as stated"),
         ("position error", f"u = {number(1000.0 * float(pump.get('position_sd_ml') or 0.0))} µL"),
     ]
     shown = ("identity", "start_count", "last_dose_number", "step_ml", "rate_ml_min", "syringe_ml", "contents_ml",

@@ -155,7 +155,7 @@ def test_the_page_says_what_a_reader_must_know(runs: list[Path], page: Page) -> 
     ):
         assert text in page.text, text
     assert f"{record.header['started_utc'][:10]} " in page.text
-    for warning in result["warnings"]:
+    for warning in [*result["warnings"], *result.get("notes", [])]:
         assert warning in page.text
     details = page.all("details")
     assert details
