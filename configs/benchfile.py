@@ -8,6 +8,7 @@ from pydantic import Field
 
 from configs.calibrating import BalanceSettings, BufferLotSettings, CalibrationRules
 from configs.fields import Disagreement, Settings, group, number, words
+from configs.notifying import NotifySettings
 from configs.simulation import SimulationSettings
 
 SIMULATED_PORT = "simulated"
@@ -161,6 +162,7 @@ class BenchSettings(Settings):
     )
     calibration_rules: CalibrationRules = group(CalibrationRules, "limits and dates of calibrations")
     traffic_log: bool = Field(default=False, description="keep everything that goes over the lines in logs/traffic.log")
+    notify: NotifySettings | None = Field(default=None, description="who is told when a run ends, fails or asks")
     simulation: SimulationSettings | None = Field(
         default=None, description="the simulated world behind simulated ports"
     )

@@ -20,6 +20,7 @@ from configs.benchfile import SIMULATED_PORT, BenchSettings
 from configs.errors import HalfdropError
 from configs.faultfile import FaultsSettings
 from configs.method import MethodSettings
+from configs.notifying import NotifySettings
 from configs.simulation import ContainedSettings, SampleBottleSettings, SimulationSettings
 from controller.connection import Connecting, check_capabilities
 from controller.execution import Devices
@@ -64,6 +65,7 @@ class OpenBench:
     seed: int | None = None
     pump_device: Device | None = None
     faults: FaultScript | None = None
+    notify: NotifySettings | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -170,7 +172,8 @@ def open_bench(
     """
     with ExitStack() as held:
         opener = _Opener(bench=bench, opening=opening, stop=stop, held=held, temperature_c=method.temperature_c)
-        yield opener.simulated(method, sample) if is_simulated(bench) else opener.real()
+        opened = opener.simulated(method, sample) if is_simulated(bench) else opener.real()
+        yield replace(opened, notify=bench.notify)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -11,6 +11,7 @@ from configs.errors import HalfdropError
 from configs.faultfile import load_faults
 from controller.amounts import amount_of_plan
 from controller.assembly import OpenBench, Opening, is_simulated, open_bench, time_scale_of
+from controller.attendance import attended
 from controller.commandport import command_port
 from controller.commands.keyboard import Keyboard
 from controller.commands.lines import result_lines
@@ -146,19 +147,22 @@ def _on_open_bench(
             keyboard = Keyboard(bench.stop, devices.operator, ConsoleOperator(), commands)
             held.enter_context(pulling(bench.stop, headless=False, interrupt=keyboard.interrupt))
             devices, commands = replace(devices, operator=keyboard), keyboard
-        return carry_out(
+        watch = held.enter_context(attended(lab.path / "logs", bench.notify, bench.clock, run=sink.path.stem))
+        result = carry_out(
             plan,
             titrate(plan),
-            devices,
+            replace(devices, operator=watch.operator(devices.operator)),
             journal,
             clock=bench.clock,
             stop=bench.stop,
             commands=commands,
             operator_name=operator_name,
             hashes=hashes,
-            on_progress=watching(plan, journal),
+            on_progress=watch.looking_on(watching(plan, journal)),
             amount_of=amount_of_plan,
         )
+        watch.ended(result)
+        return result
 
 
 def tell(result: RunResult, *, as_json: bool) -> None:

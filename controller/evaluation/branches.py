@@ -23,6 +23,8 @@ _MODEL_SD = 0.005
 _LARGEST_CHI_SQUARE = 4.0
 #: a point further off than this, units of pH, contradicts the other branch
 _NOTABLE = 0.05
+#: standard deviations that a volume may be off
+_VOLUME_SDS = 4.0
 
 
 def branch_remarks(curve: Curve, end_point_ml: float) -> list[str]:
@@ -52,6 +54,9 @@ def branch_remarks(curve: Curve, end_point_ml: float) -> list[str]:
     good = excess > 0.0
     expected = curve.pkw + np.log10(np.where(good, excess, 1.0))
     off = np.where(good, frame[beyond] - expected, 0.0)
+    # close to the end point the smallest error of a volume is a large one of the pH
+    slack = _VOLUME_SDS / _LN10 * curve.volume_sd[beyond] / np.maximum(curve.volume_ml[beyond] - ve, 1e-9)
+    off = np.sign(off) * np.maximum(0.0, np.abs(off) - slack)
     return _sentences(curve, beyond, off if curve.rising else -off)
 
 

@@ -96,9 +96,9 @@ class Linearised:
     ml_per_ph: Array
 
 
-def linearised(curve: Curve, fit: ModelFit) -> Linearised:
-    """Return the linear problem about a fit of this curve (with the priors of `fit_charge_balance`)."""
-    p = _priors_of(curve)
+def linearised(curve: Curve, fit: ModelFit, *, priors: Priors | None = None) -> Linearised:
+    """Return the linear problem about a fit of this curve with the same priors."""
+    p = priors or _priors_of(curve)
     with np.errstate(all="ignore"):
         balance = _Balance.of(curve, p)
         strong = fit.strong_ion_mol_l - curve.counter_ion_charge * fit.amount_mol_l

@@ -20,8 +20,8 @@ from controller.evaluation.modelfit import ModelFit, fit_charge_balance
 
 #: relative standard uncertainty above which a number is remarked upon, and above which none is given
 NOTABLE_SHARE, LARGEST_SHARE = 0.005, 0.1
-#: a fit that leaves so little over is believed against another estimator
-GOOD_MISFIT = 1.5
+#: pKa so far apart show a jump between them
+JUMP_PKA = 2.5
 #: standard uncertainties by which the reported value may differ from a good fit
 ALLOWED_SDS = 4.0
 #: the probe answers so many times as slowly as its record says before it is remarked upon
@@ -83,7 +83,7 @@ def audited(
         mishap = find_mishap(curve, fit, np.asarray(at_s, dtype=np.float64))
         if mishap is not None:
             _widen_by_mishap(audit, mishap, curve, at_s, estimates)
-        _hold_against_fit(audit, fit, estimates)
+        _hold_against_fit(audit, fit, estimates, acid_titrant=bool(curve.acid_titrant))
     if slow is not None:
         audit.warnings.append(
             f"the probe answers {slow:.1f} times as slowly as its record says: clean it, or repeat the response check"
@@ -128,14 +128,15 @@ def _told(mishap: Mishap) -> str:
     return f"{said}; the uncertainty is widened by it"
 
 
-def _hold_against_fit(audit: Audit, fit: ModelFit, estimates: Sequence[Sequence[Estimate]]) -> None:
+def _hold_against_fit(
+    audit: Audit, fit: ModelFit, estimates: Sequence[Sequence[Estimate]], *, acid_titrant: bool
+) -> None:
     """Widen where a good fit says otherwise, or where the model spoke though its fit is not sound."""
-    good = misfit(fit) < GOOD_MISFIT
+    good = misfit(fit) <= LARGEST_OF_STATED
     for number, point in enumerate(audit.end_points):
         volume_ml, u_ml = float(point["volume_ml"]), float(point["standard_uncertainty_ml"])
         if good:
-            pairs = list(zip(fit.equivalence_ml, fit.equivalence_sd_ml, strict=True))
-            near_ml, sd_ml = min(pairs, key=lambda pair: abs(pair[0] - volume_ml))
+            near_ml, sd_ml = min(_shown(fit, acid_titrant), key=lambda pair: abs(pair[0] - volume_ml))
             off_ml = abs(near_ml - volume_ml)
             if off_ml > ALLOWED_SDS * math.hypot(u_ml, sd_ml):
                 audit.warnings.append(
@@ -145,6 +146,16 @@ def _hold_against_fit(audit: Audit, fit: ModelFit, estimates: Sequence[Sequence[
                 audit.widen(number, off_ml)
         elif not fit.sound and (shape := _shape_near(volume_ml, estimates)) is not None:
             audit.widen(number, abs(shape.volume_ml - volume_ml))
+
+
+def _shown(fit: ModelFit, acid_titrant: bool) -> list[tuple[float, float]]:
+    """Volume and standard deviation of the fit's equivalence points that show a jump; the titration's last counts."""
+    last = 0 if acid_titrant else len(fit.pka)
+    return [
+        (fit.equivalence_ml[lost], fit.equivalence_sd_ml[lost])
+        for lost in range(len(fit.pka) + 1)
+        if lost == last or (0 < lost < len(fit.pka) and fit.pka[lost] - fit.pka[lost - 1] >= JUMP_PKA)
+    ]
 
 
 def _shape_near(volume_ml: float, estimates: Sequence[Sequence[Estimate]]) -> Estimate | None:

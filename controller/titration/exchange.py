@@ -68,6 +68,7 @@ class Exchange:
         self.reservoir_ml = plan.pump.reservoir_ml
         self.last_number = plan.pump.last_dose_number
         self.doses = 0
+        self.refills = 0
         self.doubt_ml = 0.0  # standard uncertainty of everything delivered after a dose in doubt
         self.log: list[tuple[float, float, float]] = []  # begun, ended, volume
         self.disturbed = False  # something changed in the vessel or in time while a point was settling
@@ -126,6 +127,7 @@ class Exchange:
             if (yield from self.ask("refill-by-hand", text, ("filled", "stop"))) != "filled":
                 raise EndOfRunError("stopped", "the operator did not refill the syringe")
         filled = yield from self._ask(Refill(reason=reason), Refilled)
+        self.refills += 1
         before = self.contents_ml
         self.contents_ml = self.plan.pump.syringe_ml if filled.contents_ml is None else filled.contents_ml
         if filled.reservoir_ml is not None:

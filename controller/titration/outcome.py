@@ -31,6 +31,8 @@ COARSER = 4.0
 #: no probe and no calibration is straight to better than this over a few pH, mV
 STRAIGHTNESS_MV = 0.2
 DIGITS = 7
+#: what casts no doubt on the end points is a note, not a warning
+ABOUT_PKA = "no pKa:"
 #: what the run calls an end point that it saw by the shape of the curve, until the evaluation confirms it
 SHAPE_ALONE = "inflection"
 
@@ -47,7 +49,7 @@ def run_result(run: RunState) -> dict[str, Any]:
         outcome, reason = "stopped", audit.withheld
     remarks += audit.warnings
     if evaluation is not None:
-        remarks += [w for w in evaluation.warnings if w not in remarks]
+        remarks += [w for w in evaluation.warnings if w not in remarks and not w.startswith(ABOUT_PKA)]
         remarks += _unconfirmed(run, evaluation)
     return {
         "outcome": outcome,
@@ -59,6 +61,7 @@ def run_result(run: RunState) -> dict[str, Any]:
         "doses": world.doses,
         "duration_s": round(world.elapsed_s, 3),
         "titrant_ml": round(world.delivered_ml, DIGITS),
+        "notes": [w for w in evaluation.warnings if w.startswith(ABOUT_PKA)] if evaluation is not None else [],
         "warnings": remarks,
     }
 
@@ -135,14 +138,20 @@ def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | Non
             volume_ml, sd_ml, estimator = point.volume_ml, point.standard_uncertainty_ml, point.estimator
             ph, potential_mv = point.ph, point.potential_mv
             break
-    pump = run.plan.pump
     return {
         "volume_ml": round(volume_ml, DIGITS),
-        "standard_uncertainty_ml": round(math.hypot(sd_ml, pump.position_sd_ml, run.world.doubt_ml), DIGITS),
+        "standard_uncertainty_ml": round(math.hypot(sd_ml, _position_sd_ml(run), run.world.doubt_ml), DIGITS),
         "ph": None if ph is None else round(ph, 4),
         "potential_mv": None if potential_mv is None else round(potential_mv, 2),
         "estimator": estimator,
     }
+
+
+def _position_sd_ml(run: RunState) -> float:
+    """Of a volume between two positions of the plunger; the full syringe is where positions are counted from."""
+    pump = run.plan.pump
+    begun_full = pump.contents_ml >= pump.syringe_ml - pump.step_ml
+    return pump.position_sd_ml * math.sqrt((1.0 if begun_full else 2.0) + 2.0 * run.world.refills)
 
 
 def _unconfirmed(run: RunState, evaluation: Evaluation) -> list[str]:

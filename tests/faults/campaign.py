@@ -224,9 +224,9 @@ def _wrong(bench: FaultyBench, result: dict[str, Any], outcome: str, confirmed: 
     wrong += _wrong_doses(bench, steps_before)
     if outcome == "completed":
         wrong += _wrong_result(bench, result)
-    if outcome != "completed" and outcome != "killed" and confirmed is None and "NOT CONFIRMED" not in reason:
-        if not bench.disk.data.count(b'"pump-stop"'):
-            wrong.append("ended without a stop of the pump")
+    stopped = b'"pump-stop"' in bench.disk.data or b'"stop_confirmed":true' in bench.disk.data
+    if outcome in ("stopped", "failed") and not (stopped or read_only or "NOT CONFIRMED" in reason):
+        wrong.append("ended without a stop of the pump")
     return wrong
 
 
@@ -300,7 +300,7 @@ def draw_fault(what: str, dice: random.Random) -> dict[str, Any]:
         fault |= {"device": either, "for_s": round(10 ** dice.uniform(0, 1.5), 3), "other_port": False}
     sizes: dict[str, dict[str, Any]] = {
         "stalled-plunger": {"for_s": round(dice.uniform(2, 20), 2)},
-        "air-in-syringe": {"volume_ml": round(dice.uniform(0.12, 0.5), 4)},
+        "air-in-syringe": {"volume_ml": round(dice.uniform(0.15, 0.5), 4)},
         "leaking-valve": {"rate_ml_min": round(10 ** dice.uniform(-1, 0.3), 4)},
         "stuck-reading": {"for_s": round(dice.uniform(2, 120), 2)},
         "open-circuit": {"for_s": round(dice.uniform(1, 25), 2)},
