@@ -11,22 +11,20 @@ from collections.abc import Iterator, Mapping
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass
 
-from configs.benchfile import BenchSettings, PortSettings
+from configs.benchfile import BenchSettings
 from configs.buffers import buffer
 from configs.calibrating import BufferLotSettings
 from configs.errors import HalfdropError
 from controller.assembly import Opening, Route, clock_of, is_simulated, simulated_devices, simulated_identities
 from controller.calibration.buffers import BufferLot
 from controller.calibration.planning import PROBE_QUESTIONS
+from controller.connection import Connecting
 from controller.execution import Devices
 from controller.planning import PumpAccount
 from controller.stopping import StopSwitch
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
 from drivers.clock import Clock, SystemClock
-from drivers.link import LinkSettings, TrafficLog, open_link
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator
-from drivers.scpi_probe import ScpiProbe
-from drivers.scpi_pump import ScpiPump
 from simulators.balance import WeighingChemist
 from simulators.bench import virtual_bench, world_truth
 from simulators.buffer_beaker import BufferChemist, BufferShelf, Settling
@@ -34,6 +32,9 @@ from simulators.devices import ProbeDevice, PumpDevice
 from simulators.electrode import Electrode
 from simulators.port import VirtualPorts
 from simulators.solution_mixture import Mixture
+
+#: at which a meter's own pH becomes a potential; a calibration works from potentials alone
+_TEMPERATURE_C = 25.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -62,7 +63,16 @@ def open_probe(
     Raises:
         DeviceError: the port cannot be opened, or the probe does not answer.
     """
+    if bench.probe.signal == "ph":
+        raise HalfdropError(
+            "the meter gives its own pH: calibrate it at the meter",
+            where="bench: probe.signal",
+            remedy="Enter ph_standard_uncertainty, or set the meter to give mV",
+        )
     with ExitStack() as held:
+        clock: Clock
+        seed: int | None
+        url: str | None
         if is_simulated(bench):
             clock, seed = _simulated_clock(bench, opening)
             shelf = _shelf(bench, seed, clock.now_s())
@@ -77,10 +87,9 @@ def open_probe(
                 answers=opening.answers,
             )
         else:
-            clock, seed, url, operator = SystemClock(), None, bench.probe.port, _operator(opening)
-        link = open_link(url, _link(bench.probe), clock=clock, device="probe", traffic=TrafficLog())
-        held.callback(link.close)
-        probe = ScpiProbe(link, clock, stop.event)
+            clock, seed, url, operator = SystemClock(), None, None, _operator(opening)
+        connecting = Connecting(clock=clock, stop=stop.event, held=held, place=opening.place)
+        probe = connecting.probe(bench.probe, temperature_c=_TEMPERATURE_C, url=url)
         yield CalibrationBench(
             clock=clock,
             devices=Devices(pump=AbsentPump(), probe=probe, operator=operator),
@@ -98,6 +107,9 @@ def open_burette(bench: BenchSettings, *, opening: Opening, stop: StopSwitch) ->
         DeviceError: the port cannot be opened, or the pump does not answer.
     """
     with ExitStack() as held:
+        clock: Clock
+        seed: int | None
+        url: str | None
         if is_simulated(bench):
             clock, seed = _simulated_clock(bench, opening)
             world = virtual_bench(
@@ -110,10 +122,11 @@ def open_burette(bench: BenchSettings, *, opening: Opening, stop: StopSwitch) ->
                 world, clock.now_s, temperature_c=temperature_c, seed=seed, answers=opening.answers
             )
         else:
-            clock, seed, url, operator = SystemClock(), None, bench.pump.port, _operator(opening)
-        link = open_link(url, _link(bench.pump), clock=clock, device="pump", traffic=TrafficLog())
-        held.callback(link.close)
-        pump = ScpiPump(link, clock, stop.event, rate_ml_min=bench.pump.rate_ml_min)
+            clock, seed, url, operator = SystemClock(), None, None, _operator(opening)
+        connecting = Connecting(
+            clock=clock, stop=stop.event, held=held, place=opening.place, unattended=opening.answers is not None
+        )
+        pump = connecting.pump(bench.pump, url=url)
         identity, status = pump.identify(), pump.status()
         yield CalibrationBench(
             clock=clock,
@@ -213,7 +226,3 @@ def _operator(opening: Opening) -> Operator:
     if opening.answers is None:
         return ConsoleOperator()
     return AnswersOperator(opening.answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
-
-
-def _link(port: PortSettings) -> LinkSettings:
-    return LinkSettings(baud_rate=port.baud_rate, dtr=port.dtr, rts=port.rts, reply_deadline_s=port.reply_time_out_s)

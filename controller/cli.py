@@ -139,6 +139,7 @@ def _run(made: Parser) -> None:
     made.add_argument(
         "--on-failure", choices=("stop", "skip", "repeat-once"), default="stop", help="series: where a sample fails"
     )
+    made.add_argument("--check-buffer-every", type=int, metavar="N", help="series: probe into the check buffer, each N")
     made.add_argument("--operator", metavar="NAME", help="who runs it (kept in the record)")
     made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
     made.add_argument("--traffic-log", action="store_true", help="keep what goes over the lines in logs/traffic.log")
@@ -191,6 +192,7 @@ def _calibrate(group: Parser) -> None:
     made.add_argument("--replicates", type=int, metavar="N", help="how many portions are titrated (default: 3)")
     made.add_argument("--portions", metavar="LIST", help="g of standard of each, as 0.1512,0.1490,0.1533")
     made.add_argument("--response-check", action="store_true", help="hold twice before the last end point: probe's lag")
+    made.add_argument("--carbonate-run", metavar="RUN", help="a run on strong acid: is there carbonate in the titrant?")
     made.add_argument("--preparation", metavar="TEXT", help="how the titrant was prepared")
     made.add_argument("--prepared-on", metavar="DAY", help="as 2026-12-01")
     made.add_argument("--expires", metavar="DAY", help="last day of use, as 2027-06-30")
@@ -365,6 +367,9 @@ COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
 
 def main(arguments: list[str] | None = None) -> int:
     """Run one command; return its exit status."""
+    for stream in (sys.stdout, sys.stderr):  # a terminal without Unicode shows escapes instead of failing
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="backslashreplace")
     given = sys.argv[1:] if arguments is None else arguments
     whole = parser(chosen=given[0] if given else "")
     if given[:1] == ["--lab"] and len(given) > 2:
@@ -389,6 +394,11 @@ def main(arguments: list[str] | None = None) -> int:
     except BrokenPipeError:
         sys.stderr.close()
         return DONE
+    except OSError as error:
+        place = error.filename or "standard output"
+        print(f"halfdrop: {place}: {error.strerror or error}. Check the place, and what may be read and written there.",
+              file=sys.stderr)  # fmt: skip
+        return WRONG_USE
 
 
 if __name__ == "__main__":

@@ -6,7 +6,7 @@ import datetime as dt
 import hashlib
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
@@ -16,15 +16,19 @@ from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from controller.amounts import standardisation_of, statistics_to_json
 from controller.calibration.blank import Blank, blank_of
+from controller.calibration.carbonate import CarbonateJudgement, judge_carbonate
 from controller.calibration.findings import Finding, Verdict
 from controller.calibration.planning import common, no_pump, probe_of, vessel_of
 from controller.calibration.plans import BlankPlan, CalibrationPlan, ResponsePlan, SourceRun, TitrantPlan
 from controller.calibration.store import Calibration, calibrations
 from controller.calibration.titrant import Standardisation
 from controller.encoding import plan_from_json
+from controller.evaluate_record import curve_of
 from controller.evaluation.budget_table import budget_to_json
 from controller.evaluation.carried import carry
 from controller.evaluation.control import trend
+from controller.evaluation.estimate import GRAN_BEFORE, GRAN_BEYOND
+from controller.evaluation.evaluate import evaluate
 from controller.evaluation.statistics import StatisticsError
 from controller.record import read_record
 from controller.responsecheck import response_of
@@ -66,8 +70,11 @@ def titrant_lot(
     today: dt.date,
     last: Calibration | None,
     preparation: Preparation,
+    carbonate_run: Path | None = None,
 ) -> SettledLot:
     """Return a titrant's lot from the runs of its standardisation.
+
+    `carbonate_run` is a titration of strong acid with it, well past the end point.
 
     Raises:
         HalfdropError: a run that cannot be used, or figures from which no concentration follows.
@@ -108,13 +115,44 @@ def titrant_lot(
         expires=preparation.expires,
     )
     drift = drift_of(folder, lot_id, today, found.concentration_mol_l)
+    carbonate = None if carbonate_run is None else _carbonate(carbonate_run, lot_id, found.concentration_mol_l)
+    doubts = [] if carbonate is None or carbonate.accepted else [carbonate.text]
     return SettledLot(
         plan=plan,
         verdict=found.verdict,
-        notes=tuple(_replicate_notes(found)),
-        warnings=(*found.warnings, *drift.get("warnings", [])),
-        details={"lot": _lot_to_json(found), "replicates": _statistics(found), "drift": drift or None},
+        notes=(*_replicate_notes(found), *([] if carbonate is None else [carbonate.text])),
+        warnings=(*found.warnings, *drift.get("warnings", []), *doubts),
+        details={
+            "lot": _lot_to_json(found),
+            "replicates": _statistics(found),
+            "drift": drift or None,
+            "carbonate": None if carbonate is None else asdict(carbonate),
+        },
     )
+
+
+def _carbonate(path: Path, lot_id: str, concentration_mol_l: float) -> CarbonateJudgement:
+    """Judge the carbonate by the Gran lines of both branches.
+
+    Raises:
+        HalfdropError: another lot, or no line on one of the sides.
+    """
+    record = read_record(path)
+    plan = plan_from_json(record.header.get("plan"), where=str(path))
+    if plan.titrant.lot_id != lot_id:
+        what = f"it titrated with lot {plan.titrant.lot_id!r}, not {lot_id!r}"
+        raise HalfdropError(what, where=path.stem, remedy="Name a run with this lot")
+    result = (record.closing or {}).get("result") or {}
+    detected = [float(point["volume_ml"]) for point in result.get("end_points", [])]
+    found = evaluate(curve_of(plan, record, where=str(path)), end_points_expected=1, detected_ml=detected)
+    lines = {e.estimator: e for estimates in found.estimates for e in estimates}
+    if GRAN_BEFORE not in lines or GRAN_BEYOND not in lines:
+        raise HalfdropError(
+            "no straight line on both sides of its end point",
+            where=path.stem,
+            remedy="Titrate strong acid, and go at least 2 mL past the end point",
+        )
+    return judge_carbonate(lines[GRAN_BEFORE], lines[GRAN_BEYOND], concentration_mol_l=concentration_mol_l)
 
 
 def drift_of(folder: Path, lot_id: str, today: dt.date, value: float) -> dict[str, Any]:
@@ -160,6 +198,9 @@ def blank_lot(
     for path in records:
         _, result = _closed(path)
         points = result["end_points"]
+        if not points and "no end point" not in str(result.get("reason")):
+            what = f"it ended before it could find one ({result.get('reason')})"
+            raise HalfdropError(what, where=path.stem, remedy="Leave it out, or titrate the blank again")
         volumes.append(float(points[0]["volume_ml"]) if points else None)
     found = blank_of(volumes, lot_id=lot_id, detection_limit_ml=rules.detection_limit_ml, end_point_ph=None)
     plan = BlankPlan(

@@ -129,6 +129,7 @@ def titrant(given: argparse.Namespace) -> int:
             lot_id=lot_id,
             today=utc_day(opened.clock.utc_s()),
             last=in_force(lab.calibrations, "titrant", lot_id),
+            carbonate_run=record_path(given.carbonate_run, given) if given.carbonate_run else None,
             preparation=Preparation(text=given.preparation or "", prepared_on=given.prepared_on, expires=given.expires),
         )
         return _settled(settled, opened, lab, given)

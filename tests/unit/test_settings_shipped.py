@@ -26,7 +26,14 @@ WASH_WATER = "wash-water-alkalinity"
 
 
 def test_what_ships() -> None:
-    assert shipped_methods() == (JUICE, STANDARDISE, WASH_WATER)
+    assert shipped_methods() == (
+        "carbonate-check",
+        JUICE,
+        "standardise-hydrochloric-acid-carbonate",
+        "standardise-hydrochloric-acid-tris",
+        STANDARDISE,
+        WASH_WATER,
+    )
     assert shipped_benches() == ("simulated",)
 
 
