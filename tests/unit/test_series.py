@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from pathlib import Path
 from typing import Any
 
@@ -11,7 +12,7 @@ import pytest
 from configs.errors import HalfdropError, SettingsError
 from configs.settings import shipped_method, shipped_methods
 from controller.cli import main
-from controller.commands import series as command
+from controller.commands import seriesrun as command
 from controller.labfolder import init_lab
 from controller.outcome import RunResult
 from controller.record import read_record, verify
@@ -255,3 +256,31 @@ def test_an_operator_can_skip_or_end(lab: Path, tmp_path: Path, capsys: pytest.C
 def test_options_of_a_single_run_do_not_go_with_a_series(lab: Path, capsys: pytest.CaptureFixture[str]):
     assert run(lab, samples(lab, TWO), "--sample-id", "x") == 2
     assert "--sample-id stands beside --series" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize(("limit_ph", "status"), [(0.05, 0), (0.001, 3)])
+def test_the_check_buffer_is_read_in_between(
+    lab: Path, limit_ph: float, status: int, capsys: pytest.CaptureFixture[str]
+):
+    bench = lab / "bench.yaml"
+    rules = f"calibration_rules:\n  probe:\n    largest_check_error_ph: {limit_ph}\n"
+    bench.write_text(re.sub(r"calibration_rules:\n(  .*\n)+", rules, bench.read_text()))
+    assert run(lab, samples(lab, "id,amount\na,10\nb,10\n"), "--check-buffer-every", "1") == status
+    told = capsys.readouterr()
+    done = [one["outcomes"] for one in json.loads(told.out)["samples"]]
+    assert done == [["completed"], ["completed"] if status == 0 else ["not titrated"]]
+    [path] = (lab / "series").glob("*.jsonl")
+    checks = [json.loads(line) for line in path.read_text().splitlines() if '"buffer-check"' in line]
+    # the simulated electrode differs from its calibration by 0.1 % of slope and 0.4 mV: some 0.005 pH at pH 9.18
+    assert all(0.001 < abs(one["error_ph"]) < 0.03 for one in checks)
+    assert [one["passed"] for one in checks] == ([True, True] if status == 0 else [False])
+    assert read_state(path).closed == (status == 0)
+
+
+def test_a_bench_without_a_check_buffer_is_told(lab: Path, capsys: pytest.CaptureFixture[str]):
+    bench = lab / "bench.yaml"
+    bench.write_text(bench.read_text().replace("role: check", "role: calibration"))
+    assert run(lab, samples(lab, TWO), "--check-buffer-every", "1") == 2
+    assert "keeps no check buffer" in capsys.readouterr().err
+    assert run(lab, samples(lab, TWO), "--check-buffer-every", "0") == 2
+    assert "--check-buffer-every: got 0, allowed: 1 to 1000" in capsys.readouterr().err
