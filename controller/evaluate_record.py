@@ -16,7 +16,7 @@ from controller.evaluation.evaluate import evaluate
 from controller.evaluation.result import Evaluation
 from controller.identify import identity_of
 from controller.pointregions import regions_of
-from controller.record import Record, points, read_record
+from controller.record import Record, points, read_record, verify
 from controller.titration.audit import audited
 from controller.titration.outcome import STRAIGHTNESS_MV
 from controller.titration.plan import RunPlan
@@ -38,12 +38,18 @@ def evaluate_record(path: Path, *, end_points_expected: int | None = None, ident
         identify: also rank what the substance may be.
 
     Returns:
-        The JSON of `evaluate`; outcome and reason are the run's own, None for a run without an end.
+        The JSON of `evaluate`; outcome and reason are the run's own, None for a run without an end; `record_state`
+        tells whether the record is as it was written.
 
     Raises:
         HalfdropError: it is no record, or its plan cannot be read.
     """
-    return evaluate_points(read_record(path), end_points_expected=end_points_expected, identify=identify)
+    found = verify(path)
+    result = evaluate_points(read_record(path), end_points_expected=end_points_expected, identify=identify)
+    result["record_state"] = found.state
+    if found.state == "edited":
+        result["warnings"].insert(0, f"NOT TO BE TRUSTED: the record is not as it was written ({found.what})")
+    return result
 
 
 def evaluate_points(

@@ -69,6 +69,13 @@ def check_start(plan: RunPlan) -> None:
             f"the titrant limit of {limits.titrant_ml:g} mL exceeds the titrant at hand: {source} {at_hand:g} mL; "
             "fill up, or lower the limit"
         )
+    expected_ml = plan.chemistry.expected_equivalence_volume_ml
+    if expected_ml is not None and expected_ml > limits.titrant_ml:
+        problems.append(
+            f"the last end point is expected at {expected_ml:.4g} mL, beyond the titrant limit of "
+            f"{limits.titrant_ml:g} mL; take at most {0.9 * limits.titrant_ml / expected_ml:.2g} of the sample, or "
+            "raise the limit"
+        )
     for what, wanted, allowed, unit in (
         ("largest dose", plan.dosing.largest_ml, vessel.largest_dose_ml, "mL"),
         ("largest dose", plan.dosing.largest_ml, pump.syringe_ml, "mL, the whole syringe"),
@@ -88,6 +95,13 @@ def start_warnings(plan: AnyPlan) -> list[str]:
     worst_ml = plan.sample.initial_volume_ml + pump.syringe_ml + reservoir_ml
     holds_ml = vessel.capacity_ml - vessel.displaced_ml + vessel.tray_ml
     doubts = list(plan.traceability.warnings) if isinstance(plan, RunPlan) and plan.traceability is not None else []
+    expected_ml = plan.chemistry.expected_equivalence_volume_ml if isinstance(plan, RunPlan) else None
+    if isinstance(plan, RunPlan) and expected_ml is not None:
+        limit_ml = plan.limits.titrant_ml
+        if expected_ml <= limit_ml < 1.05 * expected_ml:
+            doubts.append(
+                f"the end point expected at {expected_ml:.4g} mL is close to the titrant limit {limit_ml:g} mL"
+            )
     if worst_ml <= holds_ml:
         return doubts
     return [
@@ -125,6 +139,7 @@ class Guard:
     plan: AnyPlan
     account: Account = field(init=False)
     breach: str | None = None
+    refused_answer: str | None = None
     _outside: int = 0
     _answers: dict[str, str] = field(default_factory=dict)
 
@@ -190,6 +205,9 @@ class Guard:
     def answered(self, key: str, answer: str) -> None:
         """Remember an answer: doses and priming depend on some."""
         self._answers[key] = answer
+        wanted = next((question.must_be for question in self.plan.questions if question.key == key), None)
+        if wanted is not None and answer != wanted:
+            self.refused_answer = f"{key} was answered {answer!r}, allowed: {wanted!r}"
         if key == VESSEL_EMPTIED and answer == "yes" and isinstance(self.plan, CalibrationPlan):
             self.account.vessel_ml = self.plan.sample.initial_volume_ml
 

@@ -298,7 +298,12 @@ class _Run:
             outcome=result["outcome"],
             reason=reason,
             result=result,
-            exit_status=exit_status(result, stop=self.stop, stop_confirmed=confirmed, safety=self.safety is not None),
+            exit_status=exit_status(
+                result,
+                stop=self.stop,
+                stop_confirmed=confirmed,
+                safety=self.safety is not None or self.guard.refused_answer is not None,
+            ),
             record=self.journal.name,
             steps=self.execution.steps,
             stop_confirmed=confirmed,

@@ -29,7 +29,7 @@ _OPTIONS = (
 
 
 def evaluate(given: argparse.Namespace) -> int:
-    """Evaluate a file; exit status 1 where it shows no end point."""
+    """Evaluate a file; exit status 1 where it shows no end point, or is a record that was edited."""
     result = _record(given) if _is_record(given) else _table(given)
     added = _add(given, result) if given.add else None
     if added is not None:
@@ -42,7 +42,7 @@ def evaluate(given: argparse.Namespace) -> int:
         print("\n".join(_lines(result)))
         if added is not None:
             print(f"added beside the record: {added.name}")
-    return DONE if result["end_points"] else NOT_TRUSTED
+    return DONE if result["end_points"] and result.get("record_state") != "edited" else NOT_TRUSTED
 
 
 def _is_record(given: argparse.Namespace) -> bool:

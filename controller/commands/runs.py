@@ -38,16 +38,20 @@ def list_runs(given: argparse.Namespace) -> int:
 
 
 def show(given: argparse.Namespace) -> int:
-    """Show one record: what was run, how it ended, its end points, amount and warnings."""
+    """Show one record: what was run, how it ended, its end points, amount and warnings; 1 where it was edited."""
     path = record_path(given.run, given)
-    record = read_record(path)
+    record, found = read_record(path), verify_record(path)
+    status = CHECK_FAILED if found.state == "edited" else DONE
     summary, added = summarise(path), added_evaluations(path)
     result: dict[str, Any] = (record.closing or {}).get("result") or {}
     if given.json:
         whole = {**summary, "header": record.header, "closing": record.closing, "torn_bytes": record.torn_bytes}
-        print_json({**whole, "added_evaluations": [one.to_json() for one in added]})
-        return DONE
+        print_json({**whole, "record_state": found.state, "added_evaluations": [one.to_json() for one in added]})
+        return status
     from controller.commands.lines import result_lines
+
+    if status != DONE:
+        print(f"NOT TO BE TRUSTED: the record is not as it was written ({printable(found.what)})")
 
     plan = record.header.get("plan") or {}
     sample = plan.get("sample") or {}
@@ -66,9 +70,8 @@ def show(given: argparse.Namespace) -> int:
         print("outcome: open (still running, or broken off); 'halfdrop runs verify' tells more")
     for line in _added_lines(added):
         print(printable(line))
-    found = verify_record(path)
-    print(f"verified: {found.state} ({found.what})")
-    return DONE
+    print(f"verified: {found.state} ({printable(found.what)})")
+    return status
 
 
 def _show_budget(budget: dict[str, Any] | None) -> None:
@@ -95,17 +98,21 @@ def verify(given: argparse.Namespace) -> int:
 
 
 def export(given: argparse.Namespace) -> int:
-    """Write a record's points and readings as CSV with a data package, or everything as JSON."""
+    """Write a record's points and readings as CSV with a data package, or everything as JSON; 1 if it was edited."""
     from controller.report.export import data_package, tables, whole
 
-    record = read_record(record_path(given.run, given))
+    path = record_path(given.run, given)
+    record, found = read_record(path), verify_record(path)
+    status = CHECK_FAILED if found.state == "edited" else DONE
+    if status != DONE:
+        say(f"NOT TO BE TRUSTED: the record is not as it was written ({printable(found.what)})")
     if given.json:
-        print_json(whole(record))
-        return DONE
+        print_json({**whole(record), "record_state": found.state})
+        return status
     files = tables(record)
     if given.to is None:
         sys.stdout.write(files["points.csv"])
-        return DONE
+        return status
     import json
 
     folder = Path(given.to)
@@ -119,7 +126,7 @@ def export(given: argparse.Namespace) -> int:
         raise HalfdropError(
             f"it cannot be written ({error.strerror})", where=str(folder), remedy="Name another folder with --to"
         ) from error
-    return DONE
+    return status
 
 
 def close(given: argparse.Namespace) -> int:
@@ -135,6 +142,31 @@ def close(given: argparse.Namespace) -> int:
     print(f"{path.stem}: closed as {closing['outcome']}, {closing['lines']} lines; evaluate it with")
     print(f"  halfdrop evaluate {path}")
     return DONE
+
+
+def mean(given: argparse.Namespace) -> int:
+    """Give mean, scatter, Grubbs' test and budget of runs on one sample, named or by its id."""
+    from controller.commands.replicates import summary_lines, summary_of_records
+
+    paths = _of_sample(given.run[0], given) if len(given.run) == 1 else []
+    summary = summary_of_records(paths or [record_path(name, given) for name in given.run])
+    if given.json:
+        print_json(summary)
+        return DONE
+    print("\n".join(summary_lines(summary)))
+    _show_budget(summary["result"]["budget"])
+    return DONE
+
+
+def _of_sample(sample_id: str, given: argparse.Namespace) -> list[Path]:
+    """Return the completed runs on a sample by the method that was used last."""
+    found = [(path, summarise(path)) for path in list_records(_lab(given).runs)]
+    mine = [
+        (path, one)
+        for path, one in found
+        if one["readable"] and one["sample_id"] == sample_id and one["outcome"] == "completed" and one["result"]
+    ]
+    return [path for path, one in mine if one["method"] == mine[-1][1]["method"]]
 
 
 def record_path(named: str, given: argparse.Namespace) -> Path:

@@ -109,7 +109,7 @@ def test_records_are_listed_shown_verified_and_exported(halfdrop: Run, lab: Path
     assert halfdrop("runs", "verify", name, "--lab", str(lab))[0] == 0
     assert halfdrop("runs", "export", name, "--to", str(tmp_path / "out"), "--lab", str(lab))[0] == 0
     package = json.loads((tmp_path / "out" / "datapackage.json").read_text())
-    assert [one["path"] for one in package["resources"]] == ["points.csv", "readings.csv"]
+    assert {one["path"] for one in package["resources"]} >= {"points.csv", "readings.csv"}
     again = json.loads(halfdrop("evaluate", name, "--json", "--lab", str(lab))[1])
     assert again["end_points"][0]["volume_ml"] == pytest.approx(TRUE_JUICE_ML, abs=0.006)
     path = lab / "runs" / f"{name}.jsonl"
@@ -117,6 +117,11 @@ def test_records_are_listed_shown_verified_and_exported(halfdrop: Run, lab: Path
     status, out, _ = halfdrop("runs", "verify", name, "--lab", str(lab))
     assert status == 1
     assert "edited" in out
+    for command in (("runs", "show", name), ("runs", "export", name), ("evaluate", name)):
+        status, out, err = halfdrop(*command, "--lab", str(lab))
+        assert status == 1
+        assert "NOT TO BE TRUSTED" in out + err
+    assert json.loads(halfdrop("evaluate", name, "--json", "--lab", str(lab))[1])["record_state"] == "edited"
 
 
 def test_a_flat_curve_ends_at_its_limit_and_gives_no_number(halfdrop: Run, lab: Path) -> None:
@@ -176,10 +181,42 @@ def test_a_wrong_safety_answer_starts_nothing(halfdrop: Run, lab: Path) -> None:
         "run", "wash-water-alkalinity", "--lab", str(lab), "--answers", str(lab / "answers.yaml"), "--json"
     )
     result = json.loads(out)
-    assert status != 0
+    assert status == 3
     assert result["outcome"] == "stopped"
     assert result["titrant_ml"] == 0
     assert result["doses"] == 0
+
+
+def test_too_much_sample_for_the_titrant_limit_is_refused_before_anything_moves(halfdrop: Run, lab: Path) -> None:
+    status, _, err = halfdrop("run", "standardise-sodium-hydroxide", "--lab", str(lab), "--sample-mass-g", "0.5")
+    assert status == 2
+    assert "expected at 24.48 mL, beyond the titrant limit of 15 mL; take at most 0.55 of the sample" in err
+    assert list_records(lab / "runs") == []
+
+
+@pytest.mark.parametrize("text", ["1,7\n2,7\n3,7\n4,7\n5,7\n6,7\n", "1,3\n2,4\n3,5\n4,6\n5,7\n6,8\n7,9\n"])
+def test_a_table_without_a_jump_says_so(halfdrop: Run, tmp_path: Path, text: str) -> None:
+    (tmp_path / "flat.csv").write_text("volume_ml,ph\n" + text)
+    status, out, err = halfdrop("evaluate", "flat.csv")
+    assert status == 1
+    assert "no end point" in out
+    assert "Traceback" not in err
+
+
+def test_a_terminal_without_unicode_shows_the_bench(halfdrop: Run, lab: Path) -> None:
+    import subprocess
+    import sys
+
+    done = subprocess.run(
+        [sys.executable, "-m", "controller.cli", "bench", "show", "--lab", str(lab)],
+        cwd=Path(__file__).parents[2],
+        env={"PYTHONIOENCODING": "ascii", "PATH": ""},
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+    assert done.returncode == 0, done.stderr
+    assert "\\xb0C" in done.stdout
 
 
 def test_decide_speaks_the_core_over_json_lines(halfdrop: Run, lab: Path, monkeypatch: pytest.MonkeyPatch) -> None:
