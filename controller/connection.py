@@ -132,6 +132,8 @@ class Connecting:
         link = open_link(
             url, link_settings(settings, dialect), clock=self.clock, device=device, traffic=traffic, find=find
         )
+        if url != settings.port and not is_simulated_port(settings):
+            link.name = settings.port
         self.held.callback(link.close)
         return link
 

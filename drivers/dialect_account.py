@@ -33,7 +33,8 @@ class DialectAccount:
 
     def __init__(self, talk: DialectTalk, sayings: PumpSayings) -> None:
         self._talk, self._sayings = talk, sayings
-        self.counts = sayings.delivered is not None or sayings.position is not None
+        self.counts_total = sayings.delivered is not None
+        self.counts = self.counts_total or sayings.position is not None
         #: how finely the device tells what it delivered, mL
         self.resolution_ml = talk.grammar.resolution("delivered" if sayings.delivered is not None else "position")
 

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from drivers.clock import Clock
 from drivers.dialect import Values
+from drivers.dialect_manners import ask_identity
 from drivers.dialect_talk import ATTEMPTS, DialectTalk
 from drivers.errors import DeviceGarbledError
 from drivers.identity import Identity
@@ -39,10 +40,11 @@ class DialectProbe:
         ph_temperature_c: float = 25.0,
     ) -> None:
         assert dialect.probe is not None  # the bench was checked
-        self._dialect, self._sayings = dialect, dialect.probe
+        self._sayings = dialect.probe
         self._talk = DialectTalk(link, dialect, self._sayings.set_up)
-        self._acquaintance = Acquaintance(link, self._who, self._talk.be_set_up)
-        self._link, self._clock, self._stop = link, clock, stop
+        talk, identify = self._talk, self._sayings.identify
+        self._acquaintance = Acquaintance(link, lambda: ask_identity(talk, dialect, identify), talk.be_set_up)
+        self._clock, self._stop = clock, stop
         self._ph_temperature_c = ph_temperature_c
         self._sequence, self._last_told = 0, -1
 
@@ -103,16 +105,6 @@ class DialectProbe:
         if "status" not in told:
             return "ok"
         return self._sayings.statuses.get(told["status"], f"unknown status {told['status']}")
-
-    def _who(self) -> Identity:
-        dialect, saying = self._dialect, self._sayings.identify
-        told = self._talk.ask(saying) if saying is not None else {}
-        return Identity(
-            maker=told.get("maker", dialect.maker),
-            model=told.get("model", dialect.model),
-            serial=told.get("serial", self._link.url),
-            firmware=told.get("firmware", "0"),
-        )
 
     def _garbled(self, what: str) -> DeviceGarbledError:
         return DeviceGarbledError(

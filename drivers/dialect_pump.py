@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING
 
 from drivers.clock import Clock, real_seconds_scale
 from drivers.dialect_account import DialectAccount, Tally
+from drivers.dialect_ledger import DialectLedger
+from drivers.dialect_manners import WATCHDOG_S, PumpManners
 from drivers.dialect_push import POLL_S, DialectPush
 from drivers.dialect_talk import ATTEMPTS, DialectTalk
 from drivers.errors import (
@@ -15,19 +17,15 @@ from drivers.errors import (
     DeviceGarbledError,
     DeviceRefusedError,
     DeviceSilentError,
-    DoseUnknownError,
     StoppedError,
 )
 from drivers.identity import Identity
 from drivers.link import Link
 from drivers.pump import Delivered, DoseState, LastDose, PumpStatus, Refill
-from drivers.reunion import Acquaintance
 
 if TYPE_CHECKING:
     from configs.dialectfile import DialectSettings
 
-#: silence of the controller after which the pump halts of itself, where the dialect can say so
-WATCHDOG_S = 5.0
 LONGEST_FILL_S = 600.0
 
 
@@ -51,34 +49,31 @@ class DialectPump:
         rate_ml_min: float,
     ) -> None:
         assert dialect.pump is not None  # the bench was checked
-        self._dialect, self._sayings = dialect, dialect.pump
+        self._sayings = dialect.pump
         self._talk = DialectTalk(link, dialect, self._sayings.set_up)
         self._account = DialectAccount(self._talk, self._sayings)
-        self._acquaintance = Acquaintance(link, self._who, self._instruct)
-        self._link, self._clock, self._stop = link, clock, stop
+        self._manners = PumpManners(self._talk, dialect, self._sayings, rate_ml_min)
+        self._clock, self._stop = clock, stop
         self.step_ml, self.syringe_ml, self.refill = step_ml, syringe_ml, refill
         self._rate_ml_min = rate_ml_min
-        self._session = int(clock.utc_s())
-        self._instructed_for = 0
+        self._ledger = DialectLedger(self._account, link.where, step_ml=step_ml, session=int(clock.utc_s()))
         self._last: tuple[int, DialectPush, float | None] | None = None  # number, push, its volume where known
-        self._before: Tally | None = None  # the account as it was last known to be right
-        self._pushed_ml, self._held_ml = 0.0, 0.0  # by our own count, for devices that do not say
 
     def identify(self) -> Identity:
         """Ask who the device is. Raises: DeviceError."""
-        self._be_instructed()
-        return self._acquaintance.identity()
+        self._manners.be_instructed()
+        return self._manners.identity()
 
     def status(self) -> PumpStatus:
         """Ask for the account. Raises: DeviceError."""
-        self._be_instructed()
+        self._manners.be_instructed()
         tally = self._account.standing()
-        self._note_restart(tally)
+        self._ledger.note(tally)
         return PumpStatus(
-            start_count=self._start_count(tally),
+            start_count=self._ledger.start_count(tally),
             last_dose_number=self._last[0] if self._last else 0,
-            delivered_ml=self._delivered_ml(tally),
-            contents_ml=self._contents_ml(),
+            delivered_ml=self._ledger.delivered_ml(tally),
+            contents_ml=self._ledger.contents_ml(),
             reservoir_ml=None,
             moving=tally.moving,
             fault=tally.fault,
@@ -86,7 +81,7 @@ class DialectPump:
 
     def delivered_ml(self) -> float:
         """Ask for everything delivered through the tip, as far back as the device or this session counts."""
-        return self._delivered_ml(self._account.standing())
+        return self._ledger.delivered_ml(self._account.standing())
 
     def last_dose(self) -> LastDose:
         """Ask what became of the last dose of this session. Raises: DeviceError."""
@@ -105,7 +100,7 @@ class DialectPump:
             volume_ml=moved,
             steps=round(moved / self.step_ml),
             state=_as_state(state),
-            start_count=self._start_count(tally),
+            start_count=self._ledger.start_count(tally),
             remaining_s=(tally.remaining_s or POLL_S) if tally.moving else 0.0,
         )
 
@@ -177,7 +172,7 @@ class DialectPump:
         if saying is None:
             if self.refill != "by-hand":
                 raise self._refused("the dialect has no command to fill", "Fill it by hand, refill: by-hand")
-            self._held_ml = self.syringe_ml
+            self._ledger.held_ml = self.syringe_ml
             return self._reckon_anew()
         for attempt in range(1, ATTEMPTS + 1):
             try:
@@ -189,7 +184,7 @@ class DialectPump:
                 if attempt == ATTEMPTS:
                     raise
         self._until_it_stands("filling")
-        self._held_ml = self.syringe_ml
+        self._ledger.held_ml = self.syringe_ml
         return self._reckon_anew()
 
     def stop(self) -> bool:
@@ -209,11 +204,11 @@ class DialectPump:
     def _push(self, what: str, volume_ml: float) -> DialectPush:
         steps = self._whole_steps(volume_ml)
         try:
-            self._be_instructed()
+            self._manners.be_instructed()
             before = self._account.standing(self._stop)
             if before.moving:
                 raise self._refused("it is moving", "Wait, or stop it")
-            self._compare(before, what)
+            self._ledger.compare(before, what)
             push = self._new_push(what, steps * self.step_ml, before)
             push.set_target()
         except DeviceError as error:
@@ -249,25 +244,15 @@ class DialectPump:
             if error.lowest_ml == error.highest_ml:
                 self._book(push, error.lowest_ml or 0.0, number)
             else:
-                self._before = None
+                self._ledger.forget()
             raise
         self._book(push, moved_ml, number)
         return moved_ml
 
     def _book(self, push: DialectPush, moved_ml: float, number: int | None) -> None:
-        self._pushed_ml += moved_ml
-        self._held_ml -= moved_ml
+        self._ledger.book(push.before, moved_ml)
         if number is not None:
             self._last = (number, push, moved_ml)
-        self._before = None
-        if push.before.level_ml is not None:
-            self._before = Tally(
-                moving=False,
-                fault=None,
-                remaining_s=None,
-                level_ml=push.before.level_ml + moved_ml,
-                starts=push.before.starts,
-            )
 
     def _halted(self, push: DialectPush, number: int | None) -> StoppedError:
         confirmed = self.stop()
@@ -279,7 +264,7 @@ class DialectPump:
                 moved_ml = None
         delivered = None
         if moved_ml is None:
-            self._before = None
+            self._ledger.forget()
         else:
             self._book(push, moved_ml, number)
             delivered = Delivered(
@@ -302,79 +287,10 @@ class DialectPump:
 
     # what it says of itself
 
-    def _compare(self, now: Tally, what: str) -> None:
-        """Hold the account against what it should be, before anything moves."""
-        before, self._before = self._before, now
-        if before is None or before.level_ml is None or now.level_ml is None:
-            return
-        moved_ml = now.level_ml - before.level_ml
-        tolerance_ml = max(1.001 * self._account.resolution_ml, 0.5 * self.step_ml)
-        if now.starts != before.starts or moved_ml < -tolerance_ml:
-            self._session += 1
-            raise DoseUnknownError(
-                f"it was switched off and on since it was last asked; {what} did not begin",
-                where=self._talk.where,
-                remedy="Check its supply, then go on",
-                lowest_ml=0.0,
-                highest_ml=0.0,
-            )
-        if moved_ml > tolerance_ml:
-            raise DoseUnknownError(
-                f"delivered {moved_ml:g} mL that nobody asked for; {what} did not begin",
-                where=self._talk.where,
-                remedy="Find out who else moves it",
-                lowest_ml=moved_ml,
-                highest_ml=moved_ml,
-            )
-
-    def _note_restart(self, now: Tally) -> None:
-        before = self._before
-        if before is not None and before.level_ml is not None and now.level_ml is not None:
-            if now.level_ml < before.level_ml - self._account.resolution_ml and now.starts == before.starts:
-                self._session += 1
-                self._before = now
-        elif not now.moving:
-            self._before = now
-
     def _reckon_anew(self) -> PumpStatus:
         """Take the account as it is now for right: filling moves what a plunger's place counts."""
-        self._before = None
+        self._ledger.forget()
         return self.status()
-
-    def _start_count(self, tally: Tally) -> int:
-        return self._session if tally.starts is None else tally.starts
-
-    def _delivered_ml(self, tally: Tally) -> float:
-        counts_total = self._sayings.delivered is not None and tally.level_ml is not None
-        return tally.level_ml if counts_total and tally.level_ml is not None else self._pushed_ml
-
-    def _contents_ml(self) -> float:
-        """What the syringe holds; by our own count where the device does not say (0 before it was first filled)."""
-        told_ml = self._account.contents_ml()
-        return max(0.0, self._held_ml) if told_ml is None else max(0.0, told_ml)
-
-    def _who(self) -> Identity:
-        dialect, saying = self._dialect, self._sayings.identify
-        told = self._talk.ask(saying) if saying is not None else {}
-        return Identity(
-            maker=told.get("maker", dialect.maker),
-            model=told.get("model", dialect.model),
-            serial=told.get("serial", self._link.url),
-            firmware=told.get("firmware", "0"),
-        )
-
-    def _be_instructed(self) -> None:
-        if self._instructed_for != self._link.openings:
-            self._instruct()
-
-    def _instruct(self) -> None:
-        """Tell rate and watchdog, which a device may have forgotten."""
-        self._talk.be_set_up()
-        if self._sayings.set_rate is not None:
-            self._talk.repeatable(self._sayings.set_rate, {"rate": self._rate_ml_min})
-        if self._sayings.watchdog is not None:
-            self._talk.repeatable(self._sayings.watchdog, {"seconds": WATCHDOG_S})
-        self._instructed_for = self._link.openings
 
     def _until_it_stands(self, what: str) -> None:
         until_s = self._clock.now_s() + LONGEST_FILL_S

@@ -17,10 +17,11 @@ from collections.abc import Callable
 from typing import NoReturn
 
 from drivers.clock import Clock, Line, ManualClock
-from drivers.errors import DeviceError, DeviceGarbledError, DeviceGoneError, DeviceSilentError, StoppedError
+from drivers.errors import DeviceError, DeviceGoneError, StoppedError
 from drivers.framing import FrameReader
+from drivers.linktrouble import failed, garbled, gone, silent, takes_no_bytes
 from drivers.portfailure import is_port_failure, told_of, why_not_opened
-from drivers.serialport import SLICE_S, WRITE_DEADLINE_S, open_port
+from drivers.serialport import SLICE_S, close_port, open_port
 from drivers.transport import LinkSettings, Traffic, TrafficLog, Transport
 
 __all__ = ["SLICE_S", "Link", "LinkSettings", "TrafficLog", "open_link"]
@@ -58,7 +59,8 @@ class Link:
     """A line to one device. One owner, one thread; see `open_link`.
 
     `greet` is called when the port was lost and is open again, before anything else is sent: it makes sure that the
-    same device answers, and raises where not. `openings` counts how often the port was opened.
+    same device answers, and raises where not. `openings` counts how often the port was opened. `name` is what the port
+    is called for good, whatever its address is by now.
     """
 
     def __init__(
@@ -71,7 +73,8 @@ class Link:
         traffic: Traffic | None = None,
         find: Callable[[], str] | None = None,
     ) -> None:
-        self.url, self.settings, self.where = url, settings, f"{device} on {url}"
+        self.url = self.name = url
+        self.settings, self.where = settings, f"{device} on {url}"
         self.traffic = traffic
         self._clock = clock
         self._manual = clock if isinstance(clock, ManualClock) else None
@@ -94,16 +97,18 @@ class Link:
         if self._manual is not None:
             self._line = self._manual.line(self.url)
             if self._line is None or self._line.broken:
-                raise self._gone("no virtual port of this bench is there", "Serve the bench before opening its ports")
+                raise gone(
+                    self.where, "no virtual port of this bench is there", "Serve the bench before opening its ports"
+                )
             if self._line.attached:
-                raise self._gone("cannot be opened (another program has opened it)", "Close it there")
+                raise gone(self.where, "cannot be opened (another program has opened it)", "Close it there")
             self._manual.settle()
         try:
             self._port = open_port(self.url, self.settings)
         except Exception as failure:
             if not is_port_failure(failure):
                 raise
-            raise self._gone(*why_not_opened(self.url, failure)) from failure
+            raise gone(self.where, *why_not_opened(self.url, failure)) from failure
         self.openings += 1
         self._lost, self._failure = False, None
         if self._manual is not None and self._line is not None:
@@ -113,26 +118,20 @@ class Link:
 
     def close(self) -> None:
         """Give the port back; harmless if it is closed or gone."""
+        if self._port is not None and self._manual is not None and self._line is not None and not self._line.broken:
+            self._manual.settle()  # no byte stays behind in the line
+        self._give_back()
+
+    def _give_back(self) -> None:
         if self._port is None:
             return
         if self._manual is not None and self._line is not None:
-            if not self._line.broken:
-                self._manual.settle()  # no byte stays behind in the line
             self._manual.leave(self)
             self._line.clear()
             self._line.attached = False
         port, self._port = self._port, None
         self._forget()
-        # pyserial forgets a socket unclosed when its other end is gone; close it ourselves
-        below = getattr(port, "_socket", None)
-        try:
-            port.close()
-        except Exception as failure:
-            if not is_port_failure(failure):
-                raise
-        finally:
-            if below is not None:
-                below.close()
+        close_port(port)
 
     def send(self, data: bytes, *, moves: bool = False) -> None:
         """Send a request; what came unasked before it is thrown away.
@@ -216,10 +215,12 @@ class Link:
                     continue
             if stopped and self.line_s() < deadline_s:
                 raise StoppedError("stopped while waiting for an answer", where=self.where, remedy="Start again")
-            raise self._nothing()
+            if self._reader.held:
+                raise garbled(self.where, "a line came without its end")
+            raise silent(self.where, self.settings.reply_deadline_s)
         frame = self._frames.popleft()
         if frame is None:
-            raise DeviceGarbledError("a line without end came", where=self.where, remedy=_GARBLED_REMEDY)
+            raise garbled(self.where, "a line without end came")
         return frame
 
     def line_s(self) -> float:
@@ -238,8 +239,8 @@ class Link:
         if line.broken:
             try:
                 self._take_some()  # shows how the port fails
-            except DeviceGoneError as gone:
-                self._failure = gone  # told to whoever uses the link next, not to who waits for time to pass
+            except DeviceGoneError as failure:
+                self._failure = failure  # told to whoever uses the link next, not to who waits for time to pass
             return False
         missing = line.device_written - line.link_taken
         if not missing:
@@ -253,7 +254,7 @@ class Link:
             if not data:
                 limit_s = limit_s or time.monotonic() + ARRIVAL_LIMIT_S
                 if time.monotonic() > limit_s:
-                    raise self._gone(f"{missing} bytes did not arrive within {ARRIVAL_LIMIT_S} s", "Start again")
+                    raise gone(self.where, f"{missing} bytes did not arrive within {ARRIVAL_LIMIT_S} s", "Start again")
             missing -= len(data)
             self._took(data)
         return True
@@ -267,7 +268,7 @@ class Link:
             try:
                 self.url = self._find()
             except OSError as failure:
-                raise self._gone(f"is not there ({told_of(failure)})", "Connect it again") from failure
+                raise gone(self.where, f"is not there ({told_of(failure)})", "Connect it again") from failure
         self.open()
         if self.greet is not None:
             try:
@@ -277,7 +278,7 @@ class Link:
                 raise
 
     def _lose(self) -> None:
-        self.close()
+        self._give_back()
         self._lost = True
 
     def _drain(self, port: Transport) -> None:
@@ -322,33 +323,12 @@ class Link:
             failure, self._failure = self._failure, None
             if failure is not None:
                 raise failure
-            raise self._gone(
-                "the port was lost" if self._lost else "the port is not open", "Check the cable, then go on"
-            )
+            raise gone(self.where, "the port was lost" if self._lost else "the port is not open")
         return self._port
-
-    def _nothing(self) -> DeviceError:
-        if self._reader.held:
-            return DeviceGarbledError("a line came without its end", where=self.where, remedy=_GARBLED_REMEDY)
-        return DeviceSilentError(
-            f"no answer within {self.settings.reply_deadline_s:g} s", where=self.where, remedy=_SILENT_REMEDY
-        )
 
     def _fail(self, failure: Exception) -> NoReturn:
         if not is_port_failure(failure):
             raise failure
-        if type(failure).__name__ == "SerialTimeoutException":
-            raise DeviceSilentError(
-                f"takes no bytes within {WRITE_DEADLINE_S:g} s", where=self.where, remedy=_SILENT_REMEDY
-            ) from failure
-        self._lose()
-        raise self._gone(
-            f"the port failed ({told_of(failure)})", "Check the cable and the supply, then go on"
-        ) from failure
-
-    def _gone(self, what: str, remedy: str) -> DeviceGoneError:
-        return DeviceGoneError(what, where=self.where, remedy=remedy)
-
-
-_SILENT_REMEDY = "Check that it is switched on, its cable, and the baud rate in the bench"
-_GARBLED_REMEDY = "Check the baud rate, the cable's screen and that no other program uses the port"
+        if not takes_no_bytes(failure):
+            self._lose()
+        raise failed(self.where, failure) from failure

@@ -95,7 +95,7 @@ class ModbusProbe:
         return self._within("potential", self._value(self._map.potential), -LARGEST_MV, LARGEST_MV, "mV")
 
     def _who(self) -> Identity:
-        serial = f"{self._link.url} unit {self._map.unit_address}"
+        serial = f"{self._link.name} unit {self._map.unit_address}"
         if self._map.serial is not None:
             serial = str(round(self._value(self._map.serial)))
         return Identity(maker=self._dialect.maker, model=self._dialect.model, serial=serial, firmware="0")

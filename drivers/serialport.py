@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Any
 
+from drivers.portfailure import is_port_failure
 from drivers.transport import LinkSettings, Transport, opener_of
 
 #: longest single blocking read; between two of them a stop gets through
@@ -35,6 +36,20 @@ def serial_ports() -> list[SerialPort]:
         )
         for found in sorted(comports(), key=lambda port: str(port.device))
     ]
+
+
+def close_port(port: Transport) -> None:
+    """Give a port back, whatever became of it."""
+    # pyserial forgets a socket unclosed when its other end is gone; close it ourselves
+    below = getattr(port, "_socket", None)
+    try:
+        port.close()
+    except Exception as failure:
+        if not is_port_failure(failure):
+            raise
+    finally:
+        if below is not None:
+            below.close()
 
 
 def open_port(url: str, settings: LinkSettings) -> Transport:

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import itertools
 import math
+import random
 import threading
 from dataclasses import dataclass
 from typing import Any
@@ -19,6 +20,7 @@ from drivers.clock import ManualClock, SystemClock
 from drivers.dialect_probe import DialectProbe
 from drivers.dialect_pump import DialectPump
 from drivers.errors import (
+    DeviceError,
     DeviceGarbledError,
     DeviceGoneError,
     DeviceRefusedError,
@@ -431,3 +433,66 @@ def test_a_device_that_never_stops_talking_is_garbled_and_ends(route, built, pla
     with pytest.raises(DeviceGarbledError):
         probe.driver.read()
     assert probe.link._reader.waiting <= 1024
+
+
+@pytest.mark.parametrize("dialect", [PROBE, TRANSMITTER], ids=["dialect", "modbus"])
+def test_any_reply_is_a_sound_reading_or_a_typed_error(built, plain_sensor, spoil, dialect):
+    probe = built("memory", dialect, sensor=plain_sensor)
+    chance = random.Random(20261201)
+
+    def mangle(data):
+        kind = chance.randrange(5)
+        if kind == 0:
+            return chance.randbytes(chance.randrange(300))
+        if kind == 1:
+            return data[: chance.randrange(len(data) + 1)]
+        if kind == 2:
+            return data * chance.randrange(2, 4)
+        where = chance.randrange(len(data))
+        return data[:where] + chance.randbytes(1) + data[where + 1 :]
+
+    spoil(probe.port, lambda request: True, reply=mangle, times=10**9)
+    outcomes = {"reading": 0, "error": 0}
+    for _ in range(300):
+        try:
+            reading = probe.driver.read()
+        except DeviceError:
+            outcomes["error"] += 1
+        else:
+            outcomes["reading"] += 1
+            assert abs(reading.potential_mv) <= 2000
+            assert reading.temperature_c is None or -50 <= reading.temperature_c <= 200
+    assert min(outcomes.values()) > 10
+
+
+@pytest.mark.parametrize("way", ["reply", "request"])
+@pytest.mark.parametrize(
+    ("dialect", "counts"), [(BY_SUM, "sum"), (BY_PLACE, "place"), (AT_ONCE, "sum")], ids=["sum", "place", "at-once"]
+)
+def test_a_pump_on_a_line_that_garbles_a_tenth_never_lies(built, plain_mechanism, spoil, dialect, counts, way):
+    """What dose() returns, or the bounds that it raises, always hold what went through the tip."""
+    pump = built("memory", dialect, mechanism=plain_mechanism, counts=counts)
+    chance = random.Random(7)
+    pump.driver.identify()
+
+    def mangle(data):
+        where = chance.randrange(len(data))
+        return data[:where] + chance.randbytes(1) + data[where + 1 :] if chance.random() < 0.9 else b""
+
+    spoil(pump.port, lambda request: chance.random() < 0.1, **{way: mangle}, times=10**9)
+    exact = 0
+    for number in range(1, 120):
+        if pump.mechanism.contents_steps(pump.clock.now_s()) < 400:
+            pump.port.spoil_reply = pump.port.spoil_request = None
+            pump.driver.fill()
+            spoil(pump.port, lambda request: chance.random() < 0.1, **{way: mangle}, times=10**9)
+        before = pump.pushed()
+        try:
+            steps = pump.driver.dose(number, 0.0005 * chance.randrange(1, 200)).steps
+            lowest, highest = steps, steps
+            exact += 1
+        except DeviceError as error:
+            pump.clock.wait(30.0)
+            lowest, highest = round(error.lowest_ml / 0.0005), round(error.highest_ml / 0.0005)
+        assert lowest <= pump.pushed() - before <= highest
+    assert exact > 90
