@@ -40,19 +40,13 @@ class PlacedRefill:
         return abs(self.volume_ml - self.equivalence_ml) <= near_ml
 
 
-def plan_problems(plan: RunPlan, expected_ml: float) -> tuple[str, ...]:
-    """Return why the run would be refused, or would end without its end point."""
-    problems: list[str] = []
+def plan_problems(plan: RunPlan) -> tuple[str, ...]:
+    """Return why the run would be refused at its start."""
     try:
         check_start(plan)
     except StartRefusedError as refused:
-        problems += refused.problems
-    if expected_ml >= plan.limits.titrant_ml:
-        problems.append(
-            f"the end point is expected at {expected_ml:.3f} mL, beyond the titrant limit of "
-            f"{plan.limits.titrant_ml:g} mL; take less sample, a stronger titrant, or a higher limit"
-        )
-    return tuple(problems)
+        return tuple(refused.problems)
+    return ()
 
 
 def jump_mv(plan: RunPlan, *, expected_ml: float, stronger: float = 1.0) -> float:

@@ -121,7 +121,7 @@ def predict_run(
     if runs < 2:
         raise ValueError("a band needs at least 2 runs")
     expected_ml = expected_volume_ml(plan)
-    problems = plan_problems(plan, expected_ml)
+    problems = plan_problems(plan)
     asked_nothing = replace(plan, questions=())
     worlds, done = [], []
     for number in range(runs):

@@ -93,13 +93,13 @@ def test_the_curve_is_the_solvers_and_has_a_range():
 
 def test_an_end_point_beyond_the_titrant_limit_is_named():
     plan = with_expected(plan_of(), 20.0)
-    [problem] = plan_problems(plan, 20.0)
+    [problem] = plan_problems(plan)
     assert "beyond the titrant limit of 18 mL" in problem
 
 
 def test_a_full_vessel_is_named():
     plan = plan_of(initial_volume_ml=80.0)
-    assert any("vessel" in problem for problem in plan_problems(plan, 8.0))
+    assert any("vessel" in problem for problem in plan_problems(plan))
 
 
 def test_too_dilute_and_too_weak_are_told_apart():
