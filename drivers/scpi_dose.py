@@ -124,7 +124,12 @@ class ScpiDose:
             except (DeviceSilentError, DeviceGarbledError, DeviceRefusedError) as doubt:
                 failure, last = doubt, None
             if last is None or not self._fits(last):
-                last = self._ask(self._stop)
+                try:
+                    last = self._ask(self._stop)
+                except DeviceGarbledError:
+                    if isinstance(failure, DeviceRefusedError):
+                        raise failure from None  # refused, and it holds nothing armed: its own words say more
+                    raise
             if last.state != "armed":
                 return last
             if refused_before and isinstance(failure, DeviceRefusedError):

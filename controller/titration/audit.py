@@ -13,6 +13,7 @@ from typing import Any
 
 import numpy as np
 
+from controller.evaluation.agreement import COVERAGE_FACTOR
 from controller.evaluation.curve import Curve
 from controller.evaluation.estimate import SECOND_DERIVATIVE, Estimate
 from controller.evaluation.mishaps import LARGEST_OF_STATED, Mishap, contradiction, find_mishap, misfit
@@ -144,8 +145,27 @@ def _hold_against_fit(
                     f"{volume_ml:.4f} mL; the uncertainty is widened by the difference"
                 )
                 audit.widen(number, off_ml)
-        elif not fit.sound and (shape := _shape_near(volume_ml, estimates)) is not None:
-            audit.widen(number, abs(shape.volume_ml - volume_ml))
+        else:
+            audit.widen(number, _disagreement_ml(volume_ml, estimates))
+
+
+def _disagreement_ml(volume_ml: float, estimates: Sequence[Sequence[Estimate]]) -> float:
+    """By how much the estimators of the end point at this volume differ beyond what they claim, at most.
+
+    Where the stated substance does not describe the points, none of them has its word alone.
+    """
+    here = min(estimates, key=lambda found: abs(found[0].volume_ml - volume_ml), default=())
+    if not here:
+        return 0.0
+    reported = here[0]
+    off = [
+        abs(e.volume_ml - reported.volume_ml)
+        for e in here[1:]
+        if e.sound
+        and abs(e.volume_ml - reported.volume_ml)
+        > COVERAGE_FACTOR * math.hypot(e.standard_uncertainty_ml, reported.standard_uncertainty_ml)
+    ]
+    return max(off, default=0.0)
 
 
 def _shown(fit: ModelFit, acid_titrant: bool) -> list[tuple[float, float]]:
