@@ -132,14 +132,10 @@ def make_plan(
         chemistry=_chemistry(method, sample),
         probe=_probe(method, bench.probe, probe_identity, known),
         pump=_pump(bench, pump),
-        dosing=_dosing(method),
-        settling=_settling(method, lag_known=(known.response or bench.probe.response) is not None),
-        end_points=EndPoints(
-            expected=method.end_points.expected,
-            smallest_rise_mv=method.end_points.smallest_rise_mv,
-            stop_at_last=method.end_points.stop_at_last,
-        ),
-        limits=_limits(method),
+        dosing=Dosing(**method.dosing.model_dump()),
+        settling=Settling(**method.settling.model_dump()),
+        end_points=EndPoints(**method.end_points.model_dump()),
+        limits=Limits(**method.limits.model_dump()),
         vessel=_vessel(bench),
         questions=_questions(method, acid=titrant.strong == "acid"),
         report_as=_report_as(method),
@@ -339,63 +335,8 @@ def _pump(bench: BenchSettings, account: PumpAccount) -> Pump:
     )
 
 
-def _dosing(method: MethodSettings) -> Dosing:
-    settings = method.dosing
-    return Dosing(
-        policy=settings.policy,
-        smallest_ml=settings.smallest_ml,
-        largest_ml=settings.largest_ml,
-        largest_past_equivalence_ml=settings.largest_past_equivalence_ml,
-        model_step_mv=settings.model_step_mv,
-        slope_step_mv=settings.slope_step_mv,
-        growth_limit=settings.growth_limit,
-        equal_volume_ml=settings.equal_volume_ml,
-        first_dose_ml=settings.first_dose_ml,
-    )
-
-
-def _settling(method: MethodSettings, *, lag_known: bool) -> Settling:
-    settings = method.settling
-    rule = settings.rule
-    if rule == "lag-corrected" and not lag_known:
-        rule = "extrapolated"  # without a record of the lag there is nothing to correct with
-    return Settling(
-        rule=rule,
-        shortest_s=settings.shortest_s,
-        longest_s=settings.longest_s,
-        stability_limit_mv_min=settings.stability_limit_mv_min,
-        stability_readings=settings.stability_readings,
-        fixed_wait_s=settings.fixed_wait_s,
-    )
-
-
-def _limits(method: MethodSettings) -> Limits:
-    settings = method.limits
-    return Limits(
-        titrant_ml=settings.titrant_ml,
-        run_time_s=settings.run_time_s,
-        overrun_ml=settings.overrun_ml,
-        lowest_ph=settings.lowest_ph,
-        highest_ph=settings.highest_ph,
-        lowest_mv=settings.lowest_mv,
-        highest_mv=settings.highest_mv,
-    )
-
-
 def _vessel(bench: BenchSettings) -> Vessel:
-    settings = bench.vessel
-    return Vessel(
-        capacity_ml=settings.capacity_ml,
-        displaced_ml=settings.displaced_ml,
-        margin_ml=settings.margin_ml,
-        tray_ml=settings.tray_ml,
-        waste_ml=settings.waste_ml,
-        largest_dose_ml=settings.largest_dose_ml,
-        highest_rate_ml_min=bench.pump.highest_rate_ml_min,
-        longest_run_s=settings.longest_run_s,
-        lowest_temperature_c=settings.lowest_temperature_c,
-        highest_temperature_c=settings.highest_temperature_c,
-    )
+    return Vessel(highest_rate_ml_min=bench.pump.highest_rate_ml_min, **bench.vessel.model_dump())
 
 
 def _questions(method: MethodSettings, *, acid: bool) -> tuple[Question, ...]:

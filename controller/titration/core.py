@@ -110,6 +110,9 @@ class _Run:
         yield from self.world.say(
             Report(what="note", text=f"noise {noise.sd_mv:.2f} mV from {READINGS} readings at {temperature_c:.1f} °C")
         )
+        if self.plan.settling.rule == "lag-corrected" and self.plan.probe.response is None:
+            text = "the probe's lag has no record: readings are extrapolated instead of corrected for it"
+            yield from self.world.say(Report(what="note", text=text))
         if noise.correlated:
             yield from self.world.warn(
                 f"successive readings hang together (correlation {noise.correlation:.2f}): averages are worth less"

