@@ -11,11 +11,11 @@ from pathlib import Path
 from configs.errors import HalfdropError
 from configs.settings import load_bench
 from controller.amounts import amount_of_plan
-from controller.assembly import FAST, Opening, is_simulated, open_bench, time_scale_of
+from controller.assembly import FAST, Opening, is_simulated, open_bench
 from controller.brokenrun import BrokenRun, gap_s, read_broken
-from controller.commandport import command_port
 from controller.commands.lines import Lines
 from controller.commands.output import say
+from controller.commands.present import at_the_bench
 from controller.commands.run import tell
 from controller.commands.runs import record_path
 from controller.commands.settings import answers_of, method_of
@@ -86,19 +86,21 @@ def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun)
         if simulated and not given.evaluate_only:
             bring_back(broken, opened.devices, opened.clock, stop)
             say(f"simulated bench brought back to {broken.last_run_s:.1f} s into the run")
-        commands = held.enter_context(command_port(stop, path, set_time_scale=time_scale_of(opened.clock)))
+        present = held.enter_context(at_the_bench(opened, lab, path, headless=unattended))
         how = GoingOn(
-            devices=opened.devices,
+            devices=present.devices,
             clock=opened.clock,
             stop=stop,
             gap_s=0.0 if simulated else gap_s(broken, opened.clock),
             evaluate_only=given.evaluate_only,
             operator_name=given.operator,
-            commands=commands,
-            on_progress=Lines(sys.stderr),
+            commands=present.commands,
+            on_progress=present.watch.looking_on(Lines(sys.stderr)),
             amount_of=amount_of_plan,
         )
-        return go_on(broken, how)
+        result = go_on(broken, how)
+        present.watch.ended(result)
+        return result
 
 
 def _started_utc_s(broken: BrokenRun) -> float:

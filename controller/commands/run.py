@@ -10,12 +10,10 @@ from dataclasses import replace
 from configs.errors import HalfdropError
 from configs.faultfile import load_faults
 from controller.amounts import amount_of_plan
-from controller.assembly import OpenBench, Opening, is_simulated, open_bench, time_scale_of
-from controller.attendance import attended
-from controller.commandport import command_port
-from controller.commands.keyboard import Keyboard
+from controller.assembly import OpenBench, Opening, is_simulated, open_bench
 from controller.commands.lines import result_lines
 from controller.commands.output import print_json
+from controller.commands.present import at_the_bench
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
 from controller.commands.signals import pulling
 from controller.commands.watching import watching
@@ -25,15 +23,13 @@ from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.outcome import RunResult
 from controller.planning import SampleChoice, expected_volume_ml, make_plan, plan_sample
-from controller.portoperator import PortOperator
 from controller.recordfile import new_record
 from controller.runner import run as carry_out
-from controller.stopping import Commands, StopSwitch
+from controller.stopping import StopSwitch
 from controller.titration.core import titrate
 from controller.titration.plan import ResponseCheck, RunPlan
 from controller.titration.traceability import Replicate
 from controller.unclosed import refuse_unclosed
-from drivers.operator import ConsoleOperator
 
 
 def run(given: argparse.Namespace) -> int:
@@ -41,7 +37,7 @@ def run(given: argparse.Namespace) -> int:
     picked = chosen(given, lab_needed=True)
     assert picked.lab is not None
     lab, simulated = picked.lab.writable(), is_simulated(picked.bench)
-    answers = answers_of(given)
+    answers = answers_of(given, picked.method)
     unattended = given.headless or not sys.stdin.isatty()
     if unattended and answers is None and not simulated:
         raise HalfdropError(
@@ -137,31 +133,21 @@ def _on_open_bench(
     sink = new_record(lab.runs, utc_s=bench.clock.utc_s(), label=plan.method_name)
     disk = sink if bench.faults is None else bench.faults.disk(sink)
     journal = Journal(disk, bench.clock, name=str(sink.path))
-    with ExitStack() as held:
-        port = held.enter_context(command_port(bench.stop, sink.path, set_time_scale=time_scale_of(bench.clock)))
-        commands: Commands = port
-        devices = bench.devices
-        if headless and bench.world is None:
-            devices = replace(devices, operator=PortOperator(devices.operator, port, bench.clock, bench.stop))
-        if not headless:
-            keyboard = Keyboard(bench.stop, devices.operator, ConsoleOperator(), commands)
-            held.enter_context(pulling(bench.stop, headless=False, interrupt=keyboard.interrupt))
-            devices, commands = replace(devices, operator=keyboard), keyboard
-        watch = held.enter_context(attended(lab.path / "logs", bench.notify, bench.clock, run=sink.path.stem))
+    with at_the_bench(bench, lab, sink.path, headless=headless) as present:
         result = carry_out(
             plan,
             titrate(plan),
-            replace(devices, operator=watch.operator(devices.operator)),
+            present.devices,
             journal,
             clock=bench.clock,
             stop=bench.stop,
-            commands=commands,
+            commands=present.commands,
             operator_name=operator_name,
             hashes=hashes,
-            on_progress=watch.looking_on(watching(plan, journal)),
+            on_progress=present.watch.looking_on(watching(plan, journal)),
             amount_of=amount_of_plan,
         )
-        watch.ended(result)
+        present.watch.ended(result)
         return result
 
 

@@ -1,0 +1,46 @@
+"""Who and what is at the bench while a run goes on: the operator, the keyboard, the command port, whoever looks on."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from controller.assembly import OpenBench, time_scale_of
+from controller.attendance import Attendance, attended
+from controller.commandport import command_port
+from controller.commands.keyboard import Keyboard
+from controller.commands.signals import pulling
+from controller.execution import Devices
+from controller.labfolder import Lab
+from controller.portoperator import PortOperator
+from controller.stopping import Commands
+from drivers.operator import ConsoleOperator
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Present:
+    """Who and what is there while a run goes on: devices with the operator who answers, commands, whoever looks on."""
+
+    devices: Devices
+    commands: Commands
+    watch: Attendance
+
+
+@contextmanager
+def at_the_bench(bench: OpenBench, lab: Lab, record: Path, *, headless: bool) -> Iterator[Present]:
+    """Open the run's command port, and put keyboard, port or chemist in the operator's place."""
+    with ExitStack() as held:
+        port = held.enter_context(command_port(bench.stop, record, set_time_scale=time_scale_of(bench.clock)))
+        commands: Commands = port
+        devices = bench.devices
+        if headless and bench.world is None:
+            devices = replace(devices, operator=PortOperator(devices.operator, port, bench.clock, bench.stop))
+        if not headless:
+            keyboard = Keyboard(bench.stop, devices.operator, ConsoleOperator(), commands)
+            held.enter_context(pulling(bench.stop, headless=False, interrupt=keyboard.interrupt))
+            devices, commands = replace(devices, operator=keyboard), keyboard
+        watch = held.enter_context(attended(lab.path / "logs", bench.notify, bench.clock, run=record.stem))
+        devices = replace(devices, operator=watch.operator(devices.operator))
+        yield Present(devices=devices, commands=commands, watch=watch)
