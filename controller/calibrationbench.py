@@ -15,20 +15,21 @@ from configs.benchfile import BenchSettings
 from configs.buffers import buffer
 from configs.calibrating import BufferLotSettings
 from configs.errors import HalfdropError
-from controller.assembly import Opening, Route, clock_of, is_simulated, simulated_devices, simulated_identities
+from controller.assembly import Opening, Route, clock_of, is_simulated, simulated_identities, spoken_devices
 from controller.calibration.buffers import BufferLot
 from controller.calibration.planning import PROBE_QUESTIONS
 from controller.connection import Connecting
 from controller.execution import Devices
 from controller.planning import PumpAccount
 from controller.stopping import StopSwitch
+from controller.virtualdevices import virtual_probe
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
 from drivers.clock import Clock, SystemClock
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator
 from simulators.balance import WeighingChemist
 from simulators.bench import virtual_bench, world_truth
 from simulators.buffer_beaker import BufferChemist, BufferShelf, Settling
-from simulators.devices import ProbeDevice, PumpDevice
+from simulators.device_end import Device
 from simulators.electrode import Electrode
 from simulators.port import VirtualPorts
 from simulators.solution_mixture import Mixture
@@ -76,7 +77,7 @@ def open_probe(
         if is_simulated(bench):
             clock, seed = _simulated_clock(bench, opening)
             shelf = _shelf(bench, seed, clock.now_s())
-            device = ProbeDevice(shelf, simulated_identities(opening.place)[1])
+            device = virtual_probe(bench, shelf, simulated_identities(opening.place)[1])
             url = _served(held, clock, opening, _route(bench), device)
             operator: Operator = BufferChemist(
                 shelf,
@@ -115,7 +116,7 @@ def open_burette(bench: BenchSettings, *, opening: Opening, stop: StopSwitch) ->
             world = virtual_bench(
                 bench, sample=Mixture(), titrant=Mixture(), initial_volume_ml=1.0, seed=seed, start_s=clock.now_s()
             )
-            device, _ = simulated_devices(bench, world, place=opening.place)
+            device, _ = spoken_devices(bench, world, place=opening.place)
             url = _served(held, clock, opening, _route(bench), device)
             temperature_c = bench.simulation.temperature_c if bench.simulation is not None else 20.0
             operator: Operator = WeighingChemist(
@@ -212,7 +213,7 @@ def _lot(one: BufferLotSettings) -> BufferLot:
     )
 
 
-def _served(held: ExitStack, clock: Clock, opening: Opening, usual: Route, device: ProbeDevice | PumpDevice) -> str:
+def _served(held: ExitStack, clock: Clock, opening: Opening, usual: Route, device: Device) -> str:
     """Return the address of a virtual device's port."""
     ports = held.enter_context(VirtualPorts(clock))
     return ports.add(f"calibrated-{os.getpid()}-{id(ports):x}", device, opening.route or usual).url
