@@ -19,11 +19,13 @@ class Lines:
 
     def __init__(self, sink: TextIO) -> None:
         self._sink = sink
+        self._last = ""
 
     def __call__(self, progress: Progress) -> None:
         """Take in an entry of the record."""
         text = _text_of(progress)
-        if text:
+        repeated, self._last = text == self._last, text or self._last
+        if text and not repeated:
             left = "" if progress.time_left_s is None else f", about {_clock_text(progress.time_left_s)} left"
             self._sink.write(f"[{_clock_text(progress.at_s)}{left}] {printable(text)}\n")
             self._sink.flush()
@@ -86,6 +88,8 @@ def result_lines(result: dict[str, Any]) -> list[str]:
     lines += _course(result)
     lines += [f"note: {note}" for note in result.get("notes") or []]
     lines += [f"warning: {warning}" for warning in result["warnings"]]
+    if result.get("seed") is not None:
+        lines.append(f"simulated bench, seed {result['seed']}: the same seed gives the same readings again")
     if result.get("run"):
         lines.append(f"record: {result['run']}")
     return [printable(line) for line in lines]

@@ -23,6 +23,16 @@ from controller.commands.output import say
 from controller.labfolder import Lab, LabError, find_lab
 from controller.planning import SampleChoice
 
+#: questions that any run may ask besides its method's own
+ASKED_KEYS = (
+    "protection",
+    "stirring-and-tip",
+    "toxic-gas",
+    "refill-by-hand",
+    "tip-over-waste",
+    "rinse-and-store",
+)
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Chosen:
@@ -86,9 +96,22 @@ def sample_choice(given: argparse.Namespace) -> SampleChoice:
     )
 
 
-def answers_of(given: argparse.Namespace) -> dict[str, str] | None:
-    """Return the answers of the file that the options name, None where there is none."""
-    return load_answers(given.answers) if given.answers else None
+def answers_of(given: argparse.Namespace, method: MethodSettings | None = None) -> dict[str, str] | None:
+    """Return the answers of the file that the options name, None where there is none; say which keys nobody asks for.
+
+    Args:
+        given: the options.
+        method: whose questions are known besides those of every run.
+    """
+    if not given.answers:
+        return None
+    found = load_answers(given.answers)
+    if method is not None:
+        known = [*ASKED_KEYS, *(question.key for question in method.questions)]
+        for key in found:
+            if key not in known:
+                say(f"{given.answers}: nobody asks {key!r}{did_you_mean(key, known)}")
+    return found
 
 
 def lab_of(given: argparse.Namespace, *, needed: bool = False) -> Lab | None:
