@@ -103,3 +103,51 @@ def test_a_bad_line_never_makes_the_account_wrong(build, seed):
         truth_ml = (bench.pushed() - before) * 0.0005
         assert bounds_ml[0] - 1e-9 <= truth_ml <= bounds_ml[1] + 1e-9
     assert done >= 6  # it is the account that counts, but most doses come through
+
+
+def test_a_dose_armed_with_a_garbled_rate_is_armed_again_and_never_started_so(build, spoil):
+    bench = build("memory")
+    _ = bench.pump.step_ml
+    fault = spoil(
+        bench.pump_port,
+        lambda data: b"DOSE:ARM 1," in data,
+        request=lambda data: data.replace(b",0.25,5.0;", b",0.25,2.5;"),
+    )
+    delivered = bench.pump.dose(1, VOLUME_ML)
+    assert fault.spoilt == 1
+    assert delivered.steps == bench.pushed() == STEPS
+    assert bench.clock.now_s() == pytest.approx(60.0 * VOLUME_ML / 5.0, abs=0.01)
+
+
+def test_a_rate_that_is_never_taken_as_meant_starts_nothing(build, spoil):
+    bench = build("memory")
+    _ = bench.pump.step_ml
+    spoil(
+        bench.pump_port,
+        lambda data: b"DOSE:ARM 1," in data,
+        request=lambda data: data.replace(b",0.25,5.0;", b",0.25,2.5;"),
+        times=100,
+    )
+    with pytest.raises(DeviceError, match="dose 1 of 500 steps is not what it reads back"):
+        bench.pump.dose(1, VOLUME_ML)
+    bench.clock.wait(60.0)
+    assert bench.pushed() == 0
+
+
+def test_steps_that_go_backwards_cannot_be_true_and_are_asked_again(build, spoil):
+    """After 166 steps at 1 s the pump says 2 of 500, moving, with nothing left to wait for, then the truth."""
+    bench = build("memory")
+    _ = bench.pump.step_ml
+    fault = spoil(
+        bench.pump_port,
+        lambda data: b"LAST?" in data and b"STAR" not in data,
+        reply=lambda data: data.replace(b"MOVING,250,0.125,1.5", b"MOVING,2,0.001,1.5"),
+    )
+    fault.hit_from(bench.manual, 1.5)
+    before = len(bench.pump_traffic.entries)
+    assert bench.pump.dose(1, VOLUME_ML).steps == bench.pushed() == STEPS
+    asked_s = [
+        at_s for at_s, kind, data in list(bench.pump_traffic.entries)[before:] if kind == "sent" and b"LAST?" in data
+    ]
+    assert fault.spoilt == 1
+    assert asked_s.count(1.5) == 2  # not believed: asked once more at once

@@ -223,3 +223,27 @@ def test_wrong_options_are_refused(tmp_path: Path, said: dict[str, object], word
     path.write_text(table("volume_ml,ph"))
     with pytest.raises(HalfdropError, match=words):
         evaluate_file(path, EvaluateOptions(**said))  # type: ignore[arg-type]
+
+
+@pytest.mark.parametrize(
+    ("cell", "value"),
+    [("0,275", 0.275), (",275", 0.275), ("12,75", 12.75), ("1234,567", 1234.567), ("1,2345", 1.2345)],
+)
+def test_a_comma_that_cannot_part_thousands_is_a_decimal(read: Reader, cell: str, value: float) -> None:
+    found = read(f"volume_ml;ph\n0;3\n{cell};4\n")
+    np.testing.assert_allclose(found.curve.volume_ml, [0.0, value])
+    assert any(f"decimal comma (line 3: {cell})" in note for note in found.notes)
+
+
+@pytest.mark.parametrize("cell", ["1,234", "12,345", "123,456", "1,234,567"])
+def test_a_comma_that_may_part_thousands_is_asked_about(read: Reader, cell: str) -> None:
+    with pytest.raises(TableError, match=f"'{cell}' can mean two things.*--decimal"):
+        read(f"volume_ml;ph\n0;3\n{cell};4\n")
+
+
+@pytest.mark.parametrize(
+    ("decimal", "cell", "value"),
+    [("comma", "1.234,5", 1234.5), ("point", "1,234.5", 1234.5), ("comma", "2,5", 2.5), ("point", "12,345", 12345.0)],
+)
+def test_thousands_are_parted_by_the_other_mark(read: Reader, decimal: str, cell: str, value: float) -> None:
+    np.testing.assert_allclose(read(f"volume_ml;ph\n0;3\n{cell};4\n", decimal=decimal).curve.volume_ml, [0.0, value])

@@ -255,3 +255,10 @@ def test_a_runaway_pump_that_would_overflow_is_warned_of(make_plan: MakePlan) ->
 def test_titrant_at_hand(make_plan: MakePlan) -> None:
     assert titrant_at_hand_ml(make_plan()) == 110.0
     assert titrant_at_hand_ml(make_plan(pump={"refill": "none"})) == 10.0
+
+
+def test_the_syringe_counts_in_the_worst_case_of_a_runaway_pump(make_plan: MakePlan) -> None:
+    """50 mL of sample, 100 of reservoir and the syringe; vessel and tray hold 100 - 10 + tray_ml."""
+    assert start_warnings(make_plan(vessel={"tray_ml": 70.0})) == []
+    [warning] = start_warnings(make_plan(vessel={"tray_ml": 69.9}))
+    assert "the syringe (10 mL)" in warning

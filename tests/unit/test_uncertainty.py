@@ -182,3 +182,21 @@ def test_contradicting_correlations_are_refused():
     ]
     with pytest.raises(QuantityError, match="contradict"):
         budget(lambda v: v["a"], [q("a", 1.0, 0.1), q("b", 1.0, 0.1), q("c", 1.0, 0.1)], unit="1", correlations=links)
+
+
+@pytest.mark.parametrize("freedom", [(4.0, 50.0), (50.0, 4.0)])
+def test_a_correlated_block_has_the_smallest_of_its_degrees_of_freedom(freedom):
+    """Beside an exact quantity the block is all there is, and its Welch-Satterthwaite sum is its own freedom."""
+    quantities = [q(name, 1.0, 0.1, degrees_of_freedom=nu) for name, nu in zip("ab", freedom, strict=True)]
+    related = [Correlation(first="a", second="b", coefficient=0.5)]
+    result = budget(lambda v: v["a"] + v["b"], quantities, unit="1", correlations=related)
+    assert result.degrees_of_freedom == pytest.approx(4.0)
+
+
+@pytest.mark.parametrize("freedom", [(4.0, 50.0), (50.0, 4.0)])
+def test_quantities_of_one_cause_have_the_smallest_of_their_degrees_of_freedom(freedom):
+    quantities = [
+        q(name, 1.0, 0.1, degrees_of_freedom=nu, shared_id="one cause") for name, nu in zip("ab", freedom, strict=True)
+    ]
+    result = budget(lambda v: v["a"] + v["b"], quantities, unit="1")
+    assert result.degrees_of_freedom == pytest.approx(4.0)
