@@ -12,6 +12,7 @@ from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from configs.settings import load_bench, load_method
+from controller.archive_index import ArchiveIndex
 from controller.assembly import is_simulated
 from controller.guard import check_start, start_warnings
 from controller.labfolder import Lab
@@ -71,6 +72,15 @@ class Prepared:
 def methods_of(lab: Lab) -> list[str]:
     """Return the names of the lab folder's methods."""
     return sorted(path.stem for path in lab.methods.glob("*.yaml"))
+
+
+def usual_method(lab: Lab) -> str | None:
+    """Return the method to offer first: that of the newest run, else the first by name."""
+    known = methods_of(lab)
+    newest = ArchiveIndex(lab.runs).find(most=1)
+    if newest and newest[0].method in known:
+        return newest[0].method
+    return known[0] if known else None
 
 
 def prepare(lab: Lab, wanted: Wanted) -> Prepared:

@@ -49,6 +49,7 @@ CURVE = (
     (7.3155, 7.71), (7.3205, 7.95), (7.3255, 8.33), (7.3305, 8.80), (7.3355, 9.12),
 )  # fmt: skip
 END_POINT_ML, END_POINT_U_ML = 7.323, 0.001
+METHODS = ("juice-acidity", "standardise-sodium-hydroxide", "wash-water-alkalinity")
 SAMPLE = "press 3, [bold]Tuesday[/bold]"
 
 
@@ -204,7 +205,11 @@ def stage(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Stage]:
     if hasattr(time, "tzset"):
         time.tzset()
     init_lab(tmp_path / "cider-lab")
-    yield Stage(find_lab(str(tmp_path / "cider-lab")))
+    made = find_lab(str(tmp_path / "cider-lab"))
+    for method in made.methods.glob("*.yaml"):  # whatever else ships: a screen's text must not depend on it
+        if method.stem not in METHODS:
+            method.unlink()
+    yield Stage(made)
     monkeypatch.undo()
     if hasattr(time, "tzset"):
         time.tzset()

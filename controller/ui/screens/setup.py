@@ -16,7 +16,7 @@ from textual.widgets import Footer, Input, Select
 from configs.errors import HalfdropError
 from controller.labfolder import Lab
 from controller.record import printable
-from controller.ui.newrun import Prepared, Wanted, begin, expectation_text, methods_of, prepare
+from controller.ui.newrun import Prepared, Wanted, begin, expectation_text, methods_of, prepare, usual_method
 from controller.ui.screens.archive import printable_lines
 from controller.ui.screens.dialogs import Text
 from controller.ui.screens.help import help_of
@@ -52,8 +52,12 @@ class SetUpScreen(Screen[None]):
         methods = methods_of(self._lab)
         yield TitleBar("set-up")
         with VerticalScroll(classes="page", id="form"):
-            yield from _row("method", Select([(name, name) for name in methods], id="method", allow_blank=not methods,
-                                             compact=True))  # fmt: skip
+            choices = [(name, name) for name in methods]
+            first = usual_method(self._lab)
+            if first is None:
+                yield from _row("method", Select(choices, id="method", allow_blank=True, compact=True))
+            else:
+                yield from _row("method", Select(choices, id="method", value=first, allow_blank=False, compact=True))
             yield from _row("", Plain("", id="method-title", classes="quiet"))
             yield from _row("sample", Input(id="sample-id", placeholder="what the record calls it", compact=True))
             yield from _row("amount", Input(id="amount", compact=True))
