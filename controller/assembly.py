@@ -6,7 +6,6 @@ in nothing else.
 
 from __future__ import annotations
 
-import hashlib
 import os
 import sys
 import time
@@ -21,23 +20,19 @@ from configs.errors import HalfdropError
 from configs.faultfile import FaultsSettings
 from configs.method import MethodSettings
 from configs.notifying import NotifySettings
-from configs.simulation import ContainedSettings, SampleBottleSettings, SimulationSettings
 from controller.connection import Connecting, check_capabilities
 from controller.execution import Devices
 from controller.planning import PumpAccount
 from controller.stopping import StopSwitch
 from controller.titration.plan import Sample
 from controller.trafficlog import TrafficFile
-from controller.virtualdevices import virtual_probe, virtual_pump
+from controller.virtualdevices import MAKER, simulated_world, spoken_devices
 from drivers.clock import Clock, ManualClock, ScaledClock, SystemClock
-from drivers.identity import Identity
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator
 from drivers.transport import TrafficLog
-from simulators.bench import VirtualBench, virtual_bench
+from simulators.bench import VirtualBench
 from simulators.chemist import VirtualChemist
-from simulators.contents import sample_bottle, sample_in_vessel, titrant_in_syringe, true_mass_g
 from simulators.device_end import Device
-from simulators.devices import ProbeDevice, PumpDevice
 from simulators.faults import FaultScript
 from simulators.port import VirtualPorts
 
@@ -45,7 +40,6 @@ Route = Literal["memory", "pty", "tcp"]
 FAST = "fast"
 #: what says where pump and probe are after a drop-out; None: looked for by the name in the bench file
 Finders = tuple[Callable[[], str] | None, Callable[[], str] | None]
-_MAKER = "halfdrop simulated bench"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -255,7 +249,7 @@ class _Opener:
         if opening.time_scale == FAST:
             raise self._not_simulated(f"--time-scale {FAST}")
         opened = self._connected((bench.pump.port, bench.probe.port), clock_of(opening.time_scale), operator)
-        if not all(told.startswith(_MAKER) for told in (opened.account.identity, opened.probe_identity)):
+        if not all(told.startswith(MAKER) for told in (opened.account.identity, opened.probe_identity)):
             raise self._not_simulated("--time-scale")  # only a served simulated bench lives at another pace
         return opened
 
@@ -380,87 +374,3 @@ def clock_of(time_scale: str | None, *, start_utc_s: float | None = None) -> Clo
 def time_scale_of(clock: Clock) -> Callable[[float], None] | None:
     """Return what changes how fast a simulated bench's time passes; None where time is real, or passes by itself."""
     return clock.change_scale if isinstance(clock, ScaledClock) else None
-
-
-def simulated_world(
-    bench: BenchSettings,
-    simulation: SimulationSettings,
-    method: MethodSettings,
-    sample: Sample,
-    *,
-    seed: int,
-    start_s: float,
-) -> VirtualBench:
-    """Return the world around the sample that the method names (or that it expects)."""
-    bottle = sample_bottle(simulation, method.simulated_sample) or _expected_bottle(method)
-    return virtual_bench(
-        bench,
-        sample=sample_in_vessel(
-            bottle,
-            volume_ml=sample.volume_ml,
-            mass_g=None if sample.mass_g is None else true_mass_g(bottle, sample.mass_g),
-            initial_volume_ml=sample.initial_volume_ml,
-            temperature_c=simulation.temperature_c,
-        ),
-        titrant=titrant_in_syringe(simulation, method.titrant.substance, method.titrant.concentration_mol_l),
-        initial_volume_ml=sample.initial_volume_ml,
-        seed=seed,
-        start_s=start_s,
-        stirred=False,
-    )
-
-
-def _expected_bottle(method: MethodSettings) -> SampleBottleSettings:
-    analyte = method.analyte
-    by_mass = method.sample.taken_by == "mass"
-    if analyte.substance is None or (not by_mass and analyte.expected_concentration_mol_l is None):
-        raise HalfdropError(
-            "nothing says what the simulated beaker holds",
-            where=f"method {method.name}",
-            remedy="Set simulated_sample to a sample of the bench, or analyte with expected_concentration_mol_l",
-        )
-    content = ContainedSettings(
-        name=analyte.substance,
-        concentration_mol_l=None if by_mass else analyte.expected_concentration_mol_l,
-        mass_fraction=method.sample.purity_fraction if by_mass else None,
-    )
-    return SampleBottleSettings(substances=(content,))
-
-
-def simulated_identities(place: Path | None) -> tuple[Identity, Identity]:
-    """Return who pump and probe of a simulated bench are; those of different lab folders are different devices."""
-    serial = hashlib.sha256(str(place or Path.cwd()).encode()).hexdigest()[:8]
-    return (
-        Identity(maker=_MAKER, model="syringe pump", serial=f"B-{serial}", firmware="1"),
-        Identity(maker=_MAKER, model="glass electrode", serial=f"P-{serial}", firmware="1"),
-    )
-
-
-def spoken_devices(
-    bench: BenchSettings, world: VirtualBench, *, place: Path | None, faults: FaultScript | None = None
-) -> tuple[Device, Device]:
-    """Return the virtual pump and probe in front of a world, each in the grammar that the bench file says."""
-    pump_identity, probe_identity = simulated_identities(place)
-    return (
-        virtual_pump(bench, world.mechanism if faults is None else faults.syringe, pump_identity),
-        virtual_probe(bench, world.sensor if faults is None else faults.sensor, probe_identity),
-    )
-
-
-def simulated_devices(
-    bench: BenchSettings, world: VirtualBench, *, place: Path | None, faults: FaultScript | None = None
-) -> tuple[PumpDevice, ProbeDevice]:
-    """Return the virtual pump and probe in front of a world, or of what faults make of it."""
-    pump_identity, probe_identity = simulated_identities(place)
-    pump = PumpDevice(
-        world.mechanism if faults is None else faults.syringe,
-        pump_identity,
-        refill=bench.pump.refill,
-        usual_rate_ml_min=bench.pump.rate_ml_min,
-        highest_rate_ml_min=bench.pump.highest_rate_ml_min,
-    )
-    probe = ProbeDevice(
-        world.sensor if faults is None else faults.sensor,
-        probe_identity,
-    )
-    return pump, probe

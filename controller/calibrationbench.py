@@ -15,14 +15,14 @@ from configs.benchfile import BenchSettings
 from configs.buffers import buffer
 from configs.calibrating import BufferLotSettings
 from configs.errors import HalfdropError
-from controller.assembly import Opening, Route, clock_of, is_simulated, simulated_identities, spoken_devices
+from controller.assembly import Opening, Route, clock_of, is_simulated
 from controller.calibration.buffers import BufferLot
 from controller.calibration.planning import PROBE_QUESTIONS
 from controller.connection import Connecting
 from controller.execution import Devices
 from controller.planning import PumpAccount
 from controller.stopping import StopSwitch
-from controller.virtualdevices import virtual_probe
+from controller.virtualdevices import simulated_identities, spoken_devices, virtual_probe
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
 from drivers.clock import Clock, SystemClock
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator
