@@ -6,6 +6,7 @@ What is past its date or has failed refuses the run or warns, as the bench's rul
 from __future__ import annotations
 
 import datetime as dt
+import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -15,13 +16,17 @@ from configs.benchfile import BenchSettings
 from configs.catalogue import substance
 from configs.errors import HalfdropError
 from configs.method import MethodSettings
-from configs.water import water_density_kg_m3
 from controller.calibration.burette import titrant_volume_warning
 from controller.calibration.store import Calibration, in_force
+from controller.calibration.titrant_lot import TitrantLot
 from controller.calibration.validity import Validity
+from controller.evaluation.carried import CarriedResult
 from controller.stated import stated
 from controller.titration.plan import ProbeCalibration, ProbeResponse
 from controller.titration.traceability import BlankInForce, BuretteInForce, Cause, LotInForce, Traceability
+
+#: up to here a titrant is known to expand like water
+WARMEST_C = 40.0
 
 
 class NotInForceError(HalfdropError):
@@ -250,9 +255,25 @@ class _Search:
 def _lot_at(record: Calibration, temperature_c: float) -> LotInForce:
     """The lot's concentration at another temperature, expanding like water."""
     found, made_c = record.result["lot"], float(record.plan["temperature_c"])
+    lot = TitrantLot(
+        lot_id=record.subject,
+        substance=str(record.plan["substance"]),
+        acid=bool(record.plan["acid"]),
+        result=CarriedResult(
+            name=record.subject,
+            value=float(found["concentration_mol_l"]),
+            unit="mol/L",
+            parts=(),
+            own_standard_uncertainty=float(found["own_standard_uncertainty_mol_l"]),
+            own_degrees_of_freedom=math.inf,
+        ),
+        temperature_c=made_c,
+        standard_lot_id=str(record.plan["standard_lot_id"]),
+        standardised_on=dt.date.fromisoformat(record.on),
+    )
     factor = 1.0
-    if abs(temperature_c - made_c) > 0.01 and max(temperature_c, made_c) <= 40.0:
-        factor = water_density_kg_m3(temperature_c) / water_density_kg_m3(made_c)
+    if abs(temperature_c - made_c) > 0.01 and max(temperature_c, made_c) <= WARMEST_C:
+        factor = lot.concentration_at(temperature_c) / lot.concentration_mol_l
     return LotInForce(
         lot_id=record.subject,
         concentration_mol_l=factor * found["concentration_mol_l"],

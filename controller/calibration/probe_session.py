@@ -27,7 +27,16 @@ from controller.calibration.buffers import (
     misplaced,
     recognise,
 )
-from controller.calibration.electrode import BufferPoint, CalibrationLine, Isopotential, PriorSlope, fit_line
+from controller.calibration.electrode import (
+    BufferPoint,
+    CalibrationError,
+    CalibrationLine,
+    Isopotential,
+    PriorSlope,
+    Residual,
+    fit_line,
+)
+from controller.calibration.isopotential import LEAST_TEMPERATURE_SPAN_C, fit_isopotential
 from controller.calibration.plans import PlannedBuffer, PlannedLimits, ProbePlan
 from controller.calibration.stability import NotStable, Stable, read_until_stable
 from controller.titration.actions import Action, Answered, Ask, Decisions, Observation, Report
@@ -113,9 +122,10 @@ class _Session:
         check = yield from self._check(line)
         verdict = judge_probe(line, [_limits(one) for one in plan.limits], check=check)
         self.warnings += calibration_warnings([one.point for one in self.measured])
+        pairs = zip(self.measured, line.residuals, strict=True)
         details: dict[str, Any] = {
             "line": line_to_json(line),
-            "buffers": [_to_json(one, line) for one in self.measured],
+            "buffers": [_to_json(one, residual) for one, residual in pairs],
         }
         details["check"] = None if check is None else {
             "buffer": check.buffer, "ph": check.ph, "error_ph": check.error_ph,
@@ -127,12 +137,32 @@ class _Session:
     def _of_role(self, role: str) -> list[PlannedBuffer]:
         return [one for one in self.plan.buffers if one.role == role]
 
+    def _lots(self) -> list[BufferLot]:
+        """The set without repeats: one bottle may be measured at two temperatures."""
+        return [lot_of(one) for one in {one.lot_id: one for one in self._of_role("calibration")}.values()]
+
+    def _isopotential(self) -> Isopotential:
+        """As stated; as measured where buffers at temperatures 10 °C apart tell it better."""
+        iso = Isopotential(
+            ph=self.plan.isopotential_ph, standard_uncertainty=self.plan.isopotential_standard_uncertainty
+        )
+        try:
+            found = fit_isopotential([one.point for one in self.measured]).isopotential
+        except CalibrationError:
+            return iso
+        if found.standard_uncertainty >= iso.standard_uncertainty:
+            return iso
+        self.warnings.append(
+            f"isopotential pH {found.ph:.2f} +- {found.standard_uncertainty:.2f} from buffers at two temperatures"
+        )
+        return found
+
     def _line(self) -> CalibrationLine:
         plan = self.plan
         prior = PriorSlope(
             fraction=plan.last_slope_fraction or EXPECTED_SLOPE_FRACTION, standard_uncertainty=_PRIOR_SLOPE_UNCERTAINTY
         )
-        iso = Isopotential(ph=plan.isopotential_ph, standard_uncertainty=plan.isopotential_standard_uncertainty)
+        iso = self._isopotential()
         one = len(self.measured) == 1
         return fit_line([one.point for one in self.measured], isopotential=iso, prior_slope=prior if one else None)
 
@@ -201,7 +231,8 @@ class _Session:
         lot = yield from self._recognised(key, planned, stable, temperature_c)
         if lot is None:
             return None, f"{stable.potential_mv:.1f} mV fits no buffer of the set"
-        if any(one.lot.lot_id == lot.lot_id for one in self.measured):
+        again = [one for one in self.measured if one.lot.lot_id == lot.lot_id]
+        if any(abs(one.temperature_c - temperature_c) < LEAST_TEMPERATURE_SPAN_C for one in again):
             return None, f"{lot.buffer.name}, lot {lot.lot_id}, was measured already"
         return _Measured(asked=planned.lot_id, lot=lot, stable=stable, temperature_c=temperature_c), ""
 
@@ -210,7 +241,7 @@ class _Session:
     ) -> Generator[Action, Observation | None, BufferLot | None]:
         if planned.role == "check":
             return lot_of(planned)  # what it is judged by must not be chosen by its reading
-        lots = [lot_of(one) for one in self._of_role("calibration")]
+        lots = self._lots()
         found = recognise(
             stable.potential_mv,
             temperature_c,
@@ -230,7 +261,7 @@ class _Session:
         return next((lot for lot in lots if lot.lot_id == named), None)
 
     def _look_for_swaps(self) -> None:
-        lots = [lot_of(one) for one in self._of_role("calibration")]
+        lots = self._lots()
         declared = [
             DeclaredReading(lot_id=one.asked, potential_mv=one.stable.potential_mv, temperature_c=one.temperature_c)
             for one in self.measured
@@ -286,9 +317,8 @@ def line_to_json(line: CalibrationLine) -> dict[str, Any]:
     }
 
 
-def _to_json(one: _Measured, line: CalibrationLine) -> dict[str, Any]:
+def _to_json(one: _Measured, residual: Residual) -> dict[str, Any]:
     point = one.point
-    residual = next(residual for residual in line.residuals if residual.buffer == point.buffer)
     return {
         "buffer": one.lot.buffer.name,
         "lot_id": one.lot.lot_id,

@@ -11,7 +11,7 @@ from pathlib import Path
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import load_bench
-from controller.assembly import Opening, is_simulated
+from controller.assembly import Opening, is_simulated, time_scale_of
 from controller.calibration.burette_session import check_burette
 from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import plan_probe
@@ -20,6 +20,7 @@ from controller.calibration.plans import CalibrationPlan
 from controller.calibration.probe_session import calibrate_probe
 from controller.calibration.store import in_force
 from controller.calibrationbench import CalibrationBench, open_burette, open_desk, open_probe
+from controller.commandport import command_port
 from controller.commands.calibrationlines import calibration_lines
 from controller.commands.lines import Lines
 from controller.commands.output import print_json, say
@@ -31,11 +32,13 @@ from controller.inforce import utc_day
 from controller.journal import Journal
 from controller.labfolder import Lab, find_lab
 from controller.lock import lock_device, lock_lab
-from controller.lots import Preparation, SettledLot, blank_lot, response_record, titrant_lot
+from controller.lots import Preparation, SettledLot, titrant_lot
 from controller.outcome import RunResult
+from controller.portoperator import PortOperator
 from controller.record import read_record
 from controller.recordfile import new_record
 from controller.runner import run as carry_out
+from controller.settled_blanks import blank_lot, response_record
 from controller.stopping import StopSwitch
 from controller.titration.actions import Decisions
 from controller.titration.plan import ResponseCheck
@@ -63,7 +66,8 @@ def probe(given: argparse.Namespace) -> int:
             check=not given.no_check,
             seed=opened.seed,
         )
-        result = _carry_out(plan, calibrate_probe(plan), opened, lab, stop=stop, operator_name=given.operator)
+        who = {"operator_name": given.operator, "attended": given.attended}
+        result = _carry_out(plan, calibrate_probe(plan), opened, lab, stop=stop, **who)
     return _told(result, plan, lab, as_json=given.json)
 
 
@@ -99,7 +103,8 @@ def burette(given: argparse.Namespace) -> int:
             deliveries=given.deliveries,
             seed=opened.seed,
         )
-        result = _carry_out(plan, check_burette(plan), opened, lab, stop=stop, operator_name=given.operator)
+        who = {"operator_name": given.operator, "attended": given.attended}
+        result = _carry_out(plan, check_burette(plan), opened, lab, stop=stop, **who)
     return _told(result, plan, lab, as_json=given.json)
 
 
@@ -231,20 +236,27 @@ def _carry_out(
     *,
     stop: StopSwitch,
     operator_name: str | None,
+    attended: bool = False,
 ) -> RunResult:
     lab.calibrations.mkdir(exist_ok=True)
     sink = new_record(lab.calibrations, utc_s=opened.clock.utc_s(), label=plan.method_name)
-    return carry_out(
-        plan,
-        core,
-        opened.devices,
-        Journal(sink, opened.clock, name=str(sink.path)),
-        clock=opened.clock,
-        stop=stop,
-        operator_name=operator_name,
-        on_progress=Lines(sys.stderr),
-        ask_afterwards=plan.kind == "probe",
-    )
+    with command_port(stop, sink.path, set_time_scale=time_scale_of(opened.clock)) as port:
+        devices = opened.devices
+        if attended:
+            operator = PortOperator(devices.operator, port, opened.clock, stop, attended=True)
+            devices = replace(devices, operator=operator)
+        return carry_out(
+            plan,
+            core,
+            devices,
+            Journal(sink, opened.clock, name=str(sink.path)),
+            clock=opened.clock,
+            stop=stop,
+            commands=port,
+            operator_name=operator_name,
+            on_progress=Lines(sys.stderr),
+            ask_afterwards=plan.kind == "probe",
+        )
 
 
 def _told(result: RunResult, plan: CalibrationPlan, lab: Lab, *, as_json: bool) -> int:
@@ -271,7 +283,9 @@ def _lab_and_bench(given: argparse.Namespace) -> tuple[Lab, BenchSettings]:
 def _opening(given: argparse.Namespace, lab: Lab, bench: BenchSettings) -> tuple[Opening, bool]:
     answers = answers_of(given)
     unattended = given.headless or not sys.stdin.isatty()
-    if unattended and answers is None and not is_simulated(bench):
+    if getattr(given, "attended", False):
+        answers = answers or {}
+    elif unattended and answers is None and not is_simulated(bench):
         raise HalfdropError(
             "nobody is there to answer its questions",
             where="calibrate",

@@ -89,6 +89,9 @@ def _sample_is_right(halfdrop: Run, lab: Path, made: dict[str, object]) -> None:
         gain = next(row for row in budget["rows"] if "burette gain" in row["members"])
         assert len(gain["members"]) == 2
         assert gain["share"] < 0.001
+    together = json.loads(halfdrop("runs", "mean", "press-3", "--lab", str(lab), "--json")[1])
+    assert together["count"] == 3
+    assert abs(together["result"]["value"] - TRUE_JUICE_G_L) < together["result"]["expanded_uncertainty"]
     out = halfdrop("runs", "show", samples[0].stem, "--lab", str(lab))[1]
     assert "uncertainty budget" in out
     assert "pipette error" in out

@@ -239,3 +239,20 @@ def test_stop_ends_it_and_nothing_comes_into_force() -> None:
 def test_no_answer_to_accept_leaves_the_old_one() -> None:
     found = Table(plan(), answers={"accept-calibration": "no"}).calibrate()["calibration"]
     assert (found["passed"], found["accepted"]) == (True, False)
+
+
+def test_two_temperatures_tell_the_isopotential_ph() -> None:
+    truth = ElectrodeTruth(slope_fraction=0.99, isopotential_ph=6.4, isopotential_mv=8.0, noise_sd_mv=0.1)
+    table = Table(plan(lots=("B4-118", "B10-077", "B4-118", "B10-077"), check=False), truth=truth, temperature_c=17.0)
+
+    def answer(action: Action) -> Observation | None:
+        if isinstance(action, Ask) and action.key == "buffer-3":
+            table.shelf.temperature_c = 33.0
+            table.shelf._ph.update({one.lot_id: lot_of(one).ph_at(33.0) for one in table.plan.buffers})
+        return table.answer(action)
+
+    found = table.calibrate(answer)["calibration"]
+    line = found["line"]
+    assert len(found["buffers"]) == 4
+    assert abs(line["isopotential_ph"] - 6.4) < 3 * line["isopotential_ph_standard_uncertainty"]
+    assert line["isopotential_ph_standard_uncertainty"] < 0.5
