@@ -83,7 +83,7 @@ def fit_lag(
     prior_sd = max(0.2, response.time_relative_uncertainty)
     start = np.log([response.bulk_s, response.film_s])
     theta = start.copy()
-    covariance = np.eye(2) * prior_sd**2
+    covariance: Array = np.eye(2) * prior_sd**2
     for _ in range(_STEPS):
         base = _residuals(theta, problem)
         columns = []
@@ -98,7 +98,7 @@ def fit_lag(
         step = -np.linalg.solve(normal, jacobian.T @ (base * robust) + (theta - start) / prior_sd**2)
         theta = theta + np.clip(step, -0.3, 0.3)
         spread = max(1.0, float(np.mean(robust * base**2)))
-        covariance = np.linalg.inv(normal) * spread
+        covariance = np.asarray(np.linalg.inv(normal) * spread, dtype=np.float64)
         if float(np.abs(step).max()) < 1e-3:
             break
     return FittedLag(
