@@ -10,7 +10,7 @@ import pytest
 
 from controller.study import StudyRun, StudyWorld, drive
 from controller.study_plan import MODEL_GUIDED, Strategy, nominal_plan
-from controller.titration.actions import Action, Observation
+from controller.titration.actions import Action, Dosed, Failed, Observation
 from controller.titration.plan import RunPlan, WeakAcid
 from simulators.bench import VirtualBench, WorldTruth
 from simulators.nominal import nominal_bench
@@ -27,7 +27,12 @@ class CoreCase:
 
     def run(self, answer: Callable[[Action], Observation | None] | None = None) -> StudyRun:
         """Run the core in this world, every action and answer kept."""
-        return drive(self.plan, answer or self.world.answer, keep_entries=True)
+        run = drive(self.plan, answer or self.world.answer, keep_entries=True)
+        if not any(isinstance(answered, Failed) for _, answered in run.entries):
+            told = sum(answered.steps or 0 for _, answered in run.entries if isinstance(answered, Dosed))
+            mechanism = self.world.bench.mechanism
+            assert told == mechanism.tip_steps_total(self.world.now_s), "steps told and steps pushed differ"
+        return run
 
 
 def build_case(
