@@ -1,6 +1,7 @@
-"""The contract of Pump and Probe again, for devices that speak a dialect or Modbus, on every route.
+"""One body of tests for every grammar on every route: SCPI, dialects, and (probes) Modbus.
 
-The virtual devices here share no code with the drivers or with the SCPI devices: they are written out by hand.
+The devices of dialects and Modbus share no code with the drivers or the SCPI devices: they are written out by hand.
+What belongs to one grammar alone stands at the end; for SCPI that is tests/contract/test_wire.py.
 """
 
 from __future__ import annotations
@@ -29,13 +30,23 @@ from drivers.errors import (
     DoseUnknownError,
     StoppedError,
 )
+from drivers.identity import Identity
 from drivers.link import LinkSettings, open_link
 from drivers.modbus import ModbusProbe
+from drivers.scpi_probe import ScpiProbe
+from drivers.scpi_pump import ScpiPump
 from simulators.ascii_devices import OrchardLaneMeter, OrchardLanePump
+from simulators.devices import ProbeDevice, PumpDevice
 from simulators.modbus_devices import Transmitter
 from simulators.port import VirtualPorts
 
 NAMES = itertools.count()
+SCPI = None  # needs no dialect
+WHO_PUMP = Identity(maker="Orchard Lane Works", model="plunger drive", serial="OL-7", firmware="1")
+WHO_PROBE = Identity(maker="Orchard Lane Works", model="glass meter", serial="OL-9", firmware="1")
+#: what stands in the requests of a grammar
+SCPI_WORDS = {"push": b"STAR ", "prime": b"PRIM", "who": b"*IDN?", "any": b"EXCH", "halt": b"*RST\n"}
+DIALECT_WORDS = {"push": b"PUSH", "prime": b"PUSH", "who": b"WHO", "any": b"P2", "halt": b"P2 HALT*53\r\n"}
 PUMP = shipped_dialect("orchard-lane-pump")
 PROBE = shipped_dialect("orchard-lane-probe")
 TRANSMITTER = shipped_dialect("orchard-lane-transmitter")
@@ -71,6 +82,7 @@ class Built:
     link: Any
     driver: Any
     stop: threading.Event
+    words: dict[str, bytes]
 
     def pushed(self) -> int:
         return self.mechanism.tip_steps_total(self.clock.now_s())
@@ -81,28 +93,37 @@ def built(monkeypatch, build):
     """Builds one device on a route; `build` brings the quiet socket of the other contract tests."""
     made = []
 
-    def settings(dialect, **changes):
-        return LinkSettings(reply_end=b"" if dialect.transmitter else b"\n", **changes)
+    def ends(dialect, mechanism, sensor, device):
+        if dialect is SCPI:
+            if mechanism is not None:
+                return PumpDevice(mechanism, WHO_PUMP)
+            return ProbeDevice(sensor, WHO_PROBE)
+        if dialect.pump is not None:
+            return OrchardLanePump(mechanism, serial="OL-7", **device)
+        if dialect.probe is not None:
+            return OrchardLaneMeter(sensor, serial="OL-9", **device)
+        return Transmitter(sensor, serial=70_017, **device)
 
-    def builder(route, dialect, clock=None, *, mechanism=None, sensor=None, latency_s=0.0, **device):
-        clock, stop = clock or ManualClock(), threading.Event()
-        ports = VirtualPorts(clock)
+    def drivers(dialect, link, clock, stop, mechanism):
+        if dialect is SCPI:
+            return ScpiPump(link, clock, stop) if mechanism is not None else ScpiProbe(link, clock, stop)
         if dialect.pump is not None:
-            end = OrchardLanePump(mechanism, serial="OL-7", **device)
-        elif dialect.probe is not None:
-            end = OrchardLaneMeter(sensor, serial="OL-9", **device)
-        else:
-            end = Transmitter(sensor, serial=70_017, **device)
-        port = ports.add(f"dialect {next(NAMES)}", end, route, latency_s=latency_s)
-        link = open_link(port.url, settings(dialect), clock=clock, device="device")
-        if dialect.pump is not None:
-            driver: Any = DialectPump(
+            return DialectPump(
                 link, clock, stop, dialect=dialect, step_ml=0.0005, syringe_ml=10.0, refill="valve", rate_ml_min=5.0
             )
-        else:
-            kind = DialectProbe if dialect.probe is not None else ModbusProbe
-            driver = kind(link, clock, stop, dialect=dialect)
-        made.append(Built(clock, ports, mechanism, end, port, link, driver, stop))
+        kind = DialectProbe if dialect.probe is not None else ModbusProbe
+        return kind(link, clock, stop, dialect=dialect)
+
+    def builder(route, dialect, clock=None, *, mechanism=None, sensor=None, **device):
+        clock, stop = clock or ManualClock(), threading.Event()
+        ports = VirtualPorts(clock)
+        end = ends(dialect, mechanism, sensor, device)
+        port = ports.add(f"device {next(NAMES)}", end, route)
+        lines = dialect is SCPI or dialect.transmitter is None
+        link = open_link(port.url, LinkSettings(reply_end=b"\n" if lines else b""), clock=clock, device="device")
+        driver = drivers(dialect, link, clock, stop, mechanism)
+        words = SCPI_WORDS if dialect is SCPI else DIALECT_WORDS
+        made.append(Built(clock, ports, mechanism, end, port, link, driver, stop, words))
         return made[-1]
 
     yield builder
@@ -111,8 +132,23 @@ def built(monkeypatch, build):
         one.ports.close()
 
 
-@pytest.fixture(params=[(BY_SUM, "sum"), (BY_PLACE, "place"), (AT_ONCE, "sum")], ids=["sum", "place", "at-once"])
+OF_DIALECTS = [
+    pytest.param((BY_SUM, "sum"), id="sum"),
+    pytest.param((BY_PLACE, "place"), id="place"),
+    pytest.param((AT_ONCE, "sum"), id="at-once"),
+]
+
+
+@pytest.fixture(params=[pytest.param((SCPI, None), id="scpi"), *OF_DIALECTS])
 def pump(request, route, built, plain_mechanism):
+    """A pump of every grammar."""
+    dialect, counts = request.param
+    return built(route, dialect, mechanism=plain_mechanism, **({} if dialect is SCPI else {"counts": counts}))
+
+
+@pytest.fixture(params=OF_DIALECTS)
+def dialect_pump(request, route, built, plain_mechanism):
+    """A pump of every kind of dialect."""
     dialect, counts = request.param
     return built(route, dialect, mechanism=plain_mechanism, counts=counts)
 
@@ -156,35 +192,35 @@ def test_a_number_is_never_used_twice(pump):
 
 @pytest.mark.parametrize("times", [1, 3])
 def test_a_lost_reply_to_the_push_is_settled_by_the_count(pump, spoil, times):
-    fault = spoil(pump.port, has(b"PUSH"), reply=lose, times=times)
+    fault = spoil(pump.port, has(pump.words["push"]), reply=lose, times=times)
     assert pump.driver.dose(1, 0.05).steps == 100
     assert fault.spoilt == 1  # it was not sent again
     assert pump.pushed() == 100
 
 
 def test_a_lost_push_is_sent_again_once_the_pump_said_that_nothing_moved(pump, spoil):
-    fault = spoil(pump.port, has(b"PUSH"), request=lose, times=2)
+    fault = spoil(pump.port, has(pump.words["push"]), request=lose, times=2)
     assert pump.driver.dose(1, 0.05).steps == 100
     assert fault.spoilt == 2
     assert pump.pushed() == 100
 
 
 @pytest.mark.parametrize("word", [b"NEXT", b"SUM", b"PLACE", b"STATE", b"PUSH"])
-def test_garbled_replies_are_asked_again(pump, spoil, word):
-    spoil(pump.port, has(word), reply=lambda data: data.replace(b"P2", b"P\xff"), times=1)
-    assert pump.driver.dose(1, 0.05).steps == 100
-    assert pump.pushed() == 100
+def test_garbled_replies_are_asked_again(dialect_pump, spoil, word):
+    spoil(dialect_pump.port, has(word), reply=lambda data: data.replace(b"P2", b"P\xff"), times=1)
+    assert dialect_pump.driver.dose(1, 0.05).steps == 100
+    assert dialect_pump.pushed() == 100
 
 
 @pytest.mark.parametrize("word", [b"NEXT", b"PUSH"])
-def test_a_command_garbled_on_its_way_does_not_move_another_volume(pump, spoil, word):
-    spoil(pump.port, has(word), request=lambda data: data.replace(b"500", b"900"), times=1)
-    assert pump.driver.dose(1, 0.05).steps == 100
-    assert pump.pushed() == 100
+def test_a_command_garbled_on_its_way_does_not_move_another_volume(dialect_pump, spoil, word):
+    spoil(dialect_pump.port, has(word), request=lambda data: data.replace(b"500", b"900"), times=1)
+    assert dialect_pump.driver.dose(1, 0.05).steps == 100
+    assert dialect_pump.pushed() == 100
 
 
 def test_a_silent_device_is_named(pump, spoil):
-    spoil(pump.port, has(b"WHO"), request=lose, times=99)
+    spoil(pump.port, has(pump.words["who"]), request=lose, times=99)
     with pytest.raises(DeviceSilentError, match=r"device on .*no answer within"):
         pump.driver.identify()
 
@@ -221,7 +257,7 @@ def test_a_stop_within_a_dose_reports_what_was_delivered(pump):
 
 def test_a_stop_that_is_not_answered_is_not_confirmed(pump, spoil):
     pump.driver.status()
-    spoil(pump.port, has(b"P2"), request=lose, times=999).hit_from(pump.clock, 0.9)
+    spoil(pump.port, has(pump.words["any"]), request=lose, times=999).hit_from(pump.clock, 0.9)
     pump.clock.call_at(1.0, pump.stop.set)
     with pytest.raises(StoppedError, match="did not confirm") as caught:
         pump.driver.dose(1, 5.0)
@@ -239,8 +275,8 @@ def test_a_halt_that_nobody_asked_for_is_exact(pump):
 
 
 def halt_by_hand(pump):
-    pump.device.feed(b"P2 HALT*53\r\n", pump.clock.now_s())
-    assert not pump.device._going
+    pump.device.feed(pump.words["halt"], pump.clock.now_s())
+    assert pump.device.next_event_s() == math.inf  # it stands
 
 
 def test_a_restart_within_a_dose_is_noticed(pump):
@@ -255,7 +291,7 @@ def test_a_restart_within_a_dose_is_noticed(pump):
 
 def test_the_guard_halts_a_pump_whose_controller_fell_silent(pump, spoil):
     pump.driver.status()
-    spoil(pump.port, has(b"P2"), request=lose, times=999).hit_from(pump.clock, 0.9)
+    spoil(pump.port, has(pump.words["any"]), request=lose, times=999).hit_from(pump.clock, 0.9)
     with pytest.raises(DeviceSilentError) as caught:
         pump.driver.dose(1, 9.0)
     pump.clock.wait(100.0)
@@ -264,47 +300,47 @@ def test_the_guard_halts_a_pump_whose_controller_fell_silent(pump, spoil):
 
 
 def test_priming_survives_a_lost_reply(pump, spoil):
-    spoil(pump.port, has(b"PUSH"), reply=lose)
+    spoil(pump.port, has(pump.words["prime"]), reply=lose)
     assert pump.driver.prime(0.5) == pytest.approx(0.5)
     assert pump.pushed() == 1000
 
 
-def test_more_than_was_asked_halts_the_pump(pump):
-    begin = pump.mechanism.begin
-    pump.mechanism.begin = lambda steps, rate, at_s: begin(10 * steps, rate, at_s)  # a scale that is wrong
+def test_more_than_was_asked_halts_the_pump(dialect_pump):
+    begin = dialect_pump.mechanism.begin
+    dialect_pump.mechanism.begin = lambda steps, rate, at_s: begin(10 * steps, rate, at_s)  # a scale that is wrong
     with pytest.raises(DoseCutShortError, match="Check volume and units") as caught:
-        pump.driver.dose(1, 0.1)
-    assert caught.value.lowest_ml == pytest.approx(pump.pushed() * 0.0005)
-    assert pump.pushed() < 1000
+        dialect_pump.driver.dose(1, 0.1)
+    assert caught.value.lowest_ml == pytest.approx(dialect_pump.pushed() * 0.0005)
+    assert dialect_pump.pushed() < 1000
 
 
-def test_a_pump_that_comes_back_within_a_dose_tells_what_became_of_it(pump, route, plain_mechanism):
-    pump.driver.identify()
-    begun = pump.clock.now_s()
-    pump.clock.call_at(begun + 1.0, pump.port.unplug)
+def test_a_pump_that_comes_back_within_a_dose_tells_what_became_of_it(dialect_pump, route, plain_mechanism):
+    dialect_pump.driver.identify()
+    begun = dialect_pump.clock.now_s()
+    dialect_pump.clock.call_at(begun + 1.0, dialect_pump.port.unplug)
     found = []
 
     def back():
-        again = pump.ports.add(f"again {next(NAMES)}", pump.device, route)
+        again = dialect_pump.ports.add(f"again {next(NAMES)}", dialect_pump.device, route)
         found.append(again.url)
 
-    pump.clock.call_at(begun + 4.0, back)
-    pump.link._find = lambda: found[0] if found else (_ for _ in ()).throw(OSError("nowhere"))
+    dialect_pump.clock.call_at(begun + 4.0, back)
+    dialect_pump.link._find = lambda: found[0] if found else (_ for _ in ()).throw(OSError("nowhere"))
     # the guard would halt it after 5 s of silence; it is back after 3 s and goes on to its end
-    assert pump.driver.dose(1, 0.5).steps == 1000
-    assert pump.pushed() == 1000
+    assert dialect_pump.driver.dose(1, 0.5).steps == 1000
+    assert dialect_pump.pushed() == 1000
 
 
-def test_another_pump_at_the_port_is_refused(pump, route, plain_mechanism):
-    pump.driver.identify()
-    pump.port.unplug()
+def test_another_pump_at_the_port_is_refused(dialect_pump, route, plain_mechanism):
+    dialect_pump.driver.identify()
+    dialect_pump.port.unplug()
     other = OrchardLanePump(plain_mechanism, serial="OL-8")
-    again = pump.ports.add(f"other {next(NAMES)}", other, route)
-    pump.link._find = lambda: again.url
+    again = dialect_pump.ports.add(f"other {next(NAMES)}", other, route)
+    dialect_pump.link._find = lambda: again.url
     with pytest.raises(DeviceGoneError, match="Check the cable"):
-        pump.driver.status()
+        dialect_pump.driver.status()
     with pytest.raises(DeviceGoneError, match="another device answers: Orchard Lane Works plunger drive OL-8"):
-        pump.driver.status()
+        dialect_pump.driver.status()
 
 
 def test_a_pump_that_counts_nothing_leaves_a_doubt(route, built, spoil, plain_mechanism):
@@ -321,9 +357,11 @@ def test_a_pump_that_counts_nothing_leaves_a_doubt(route, built, spoil, plain_me
 # the probe
 
 
-@pytest.fixture(params=["dialect", "stream", "ph", "modbus", "modbus-ph"])
+@pytest.fixture(params=["scpi", "dialect", "stream", "ph", "modbus", "modbus-ph"])
 def probe(request, route, built, plain_sensor):
     kind = request.param
+    if kind == "scpi":
+        return built(route, SCPI, sensor=plain_sensor)
     if kind == "modbus":
         return built(route, TRANSMITTER, sensor=plain_sensor)
     if kind == "modbus-ph":
@@ -469,7 +507,7 @@ def test_any_reply_is_a_sound_reading_or_a_typed_error(built, plain_sensor, spoi
 @pytest.mark.parametrize(
     ("dialect", "counts"), [(BY_SUM, "sum"), (BY_PLACE, "place"), (AT_ONCE, "sum")], ids=["sum", "place", "at-once"]
 )
-def test_a_pump_on_a_line_that_garbles_a_tenth_never_lies(built, plain_mechanism, spoil, dialect, counts, way):
+def test_a_pump_on_a_line_that_garbles_a_tenth_never_lies(built, plain_mechanism, spoil, *, dialect, counts, way):
     """What dose() returns, or the bounds that it raises, always hold what went through the tip."""
     pump = built("memory", dialect, mechanism=plain_mechanism, counts=counts)
     chance = random.Random(7)
