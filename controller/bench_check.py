@@ -47,7 +47,7 @@ class BenchCheck:
     ) -> None:
         self._bench, self._reached, self._stop, self._locked = bench, reached, stop, locked
         self._clock: Clock = reached.clock
-        self.operator = reached.operator
+        self.operator, self.stop = reached.operator, stop
         self.passed = Passed()
 
     def walk(self, *, moving: bool = True) -> Iterator[Finding]:

@@ -94,6 +94,8 @@ class MotionCheck:
         try:
             done = pump.dose(number, asked_ml)
         except StoppedError as stopped:
+            if self._stop.request is not None:
+                raise  # a person stopped it, not the trial
             if not stopped.confirmed or stopped.delivered is None:
                 raise wrong(
                     "NOT CONFIRMED STOPPED", "Switch the pump off; check stop and state in the grammar"
@@ -102,7 +104,8 @@ class MotionCheck:
             return f"stands after {stopped.delivered.volume_ml:g} of {asked_ml:g} mL, and confirms it"
         finally:
             cancel()
-            self._stop.event.clear()
+            if self._stop.request is None:
+                self._stop.event.clear()
         self.delivered_ml += done.volume_ml
         raise wrong(f"the dose of {asked_ml:g} mL was over before the stop was told", "Lower rate_ml_min")
 

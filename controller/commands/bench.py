@@ -49,9 +49,11 @@ def _lines(bench: BenchSettings) -> list[str]:
         f"waste {vessel.waste_ml:g} mL",
         f"limits: {vessel.largest_dose_ml:g} mL a dose, {pump.highest_rate_ml_min:g} mL/min, "
         f"{vessel.longest_run_s:g} s, {vessel.lowest_temperature_c:g} to {vessel.highest_temperature_c:g} °C",
-        f"pump on {pump.port}: syringe {pump.syringe_ml:g} mL, step {1000 * pump.step_ml:g} µL, "
+        f"pump on {pump.port}, speaks {pump.dialect or pump.speaks}",
+        f"pump: syringe {pump.syringe_ml:g} mL, step {1000 * pump.step_ml:g} µL, "
         f"{pump.rate_ml_min:g} mL/min, refill: {pump.refill}, reservoir {pump.reservoir_ml:g} mL",
-        f"probe on {probe.port}: reads every {probe.reading_interval_s:g} s to {probe.resolution_mv:g} mV",
+        f"probe on {probe.port}, speaks {probe.dialect or probe.speaks}",
+        f"probe: reads every {probe.reading_interval_s:g} s to {probe.resolution_mv:g} mV",
     ]
     found = probe.calibration
     if probe.signal == "ph":

@@ -23,7 +23,7 @@ from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.planning import SampleChoice, plan_sample
 from controller.record import printable
-from controller.stopping import StopSwitch
+from controller.stopping import STOP_EXIT_STATUS, StopSwitch, halted
 from controller.unclosed import unclosed
 from drivers.errors import StoppedError
 from drivers.ports import named_ports
@@ -93,21 +93,28 @@ def _hint() -> str:
 def _walked(given: argparse.Namespace, steps: Callable[..., Iterable[Finding]], *, with_choice: bool = False) -> int:
     picked = chosen(Namespace(**{**vars(given), "method": DEFAULT_METHOD}), lab_needed=False)
     findings: list[Finding] = []
-    why_ended: str | None = None
     with _bench(given, picked) as bench:
         try:
             for finding in steps(bench, picked) if with_choice else steps(bench):
                 findings.append(finding)
                 if not given.json:
                     print("\n".join(printable(line) for line in _lines(finding)), flush=True)
+                if bench.stop.request is not None:
+                    break
         except StoppedError as stopped:
-            why_ended = str(stopped)
+            say(str(stopped))
+        ended = bench.stop.request
+        if ended is not None and bench.passed.pump is not None and not halted(bench.passed.pump):
+            say("NOT CONFIRMED STOPPED: look at the pump, and switch it off if it moves")
+    why_ended = None if ended is None else ended.why
     failed = [finding for finding in findings if finding.verdict == "failed"]
     if given.json:
         print_json({"verdict": _verdict(findings, why_ended), "findings": [asdict(one) for one in findings]})
     else:
         print(f"verdict: {_verdict(findings, why_ended)}")
-    return CHECK_FAILED if failed or why_ended else DONE
+    if ended is not None:
+        return STOP_EXIT_STATUS[ended.kind] or CHECK_FAILED
+    return CHECK_FAILED if failed else DONE
 
 
 @contextmanager

@@ -18,7 +18,7 @@ from controller.bench_finding import Finding
 from controller.bench_shutdown import shut_down_steps
 from controller.planning import SampleChoice, plan_sample
 from controller.stopping import StopSwitch
-from drivers.errors import DeviceSilentError
+from drivers.errors import DeviceSilentError, StoppedError
 
 METHOD = shipped_method("juice-acidity")
 Walk = Callable[..., dict[str, Finding]]
@@ -211,3 +211,28 @@ def test_a_pump_that_does_not_answer_is_not_confirmed_stopped(
     monkeypatch.setattr(pump, "stop", silent)
     found = by_step(shut_down_steps(pump, check.passed.status, check.operator, bench_with(), empty=False))
     assert (found["stop"][0].verdict, found["stop"][0].what) == ("failed", "NOT CONFIRMED STOPPED")
+
+
+def test_a_person_who_stops_the_walk_is_not_taken_for_the_trial_of_the_stop(reach: Callable[..., BenchCheck]) -> None:
+    check = reach(bench_with())
+    steps = []
+
+    def walked() -> None:
+        for finding in check.walk():
+            steps.append(finding.step)
+            if finding.step == "dry dose":
+                check.stop.pull("interrupt")
+
+    with pytest.raises(StoppedError):
+        walked()
+    assert "stop" not in steps
+    assert check.stop.event.is_set()
+    assert check.passed.pump is not None
+    assert not check.passed.pump.status().moving
+
+
+def test_the_trial_of_the_stop_leaves_the_switch_as_it_was(reach: Callable[..., BenchCheck]) -> None:
+    check = reach(bench_with())
+    assert by_step(check.walk())["stop"][0].verdict == "ok"
+    assert not check.stop.event.is_set()
+    assert check.stop.request is None
