@@ -162,6 +162,7 @@ def _calibration(actions: Any, name: str, about: str) -> Parser:
     made.add_argument("--operator", metavar="NAME", help="who does it (kept in the record)")
     made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
     made.add_argument("--answers", metavar="FILE", help="answers to its questions, headless (YAML)")
+    made.add_argument("--attended", action="store_true", help="questions wait for whoever watches it on a screen")
     made.add_argument("--time-scale", metavar="X", help="simulated bench only: X times real time, or 'fast' (default)")
     _json(made)
     return made

@@ -32,20 +32,30 @@ class RunNotStartedError(HalfdropError):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Started:
-    """A process that was started, where its messages go, and the records that were there before."""
+    """A process that was started, where its messages and its record go, and the records that were there before."""
 
     process: subprocess.Popen[bytes]
     log: Path
+    records: Path
     before: frozenset[Path]
 
 
-def start_run(lab: Lab, arguments: Sequence[str], *, answers: Mapping[str, str] | None = None) -> Started:
+def start_run(
+    lab: Lab,
+    arguments: Sequence[str],
+    *,
+    answers: Mapping[str, str] | None = None,
+    command: Sequence[str] = ("run",),
+    records: Path | None = None,
+) -> Started:
     """Start `halfdrop run ARGUMENTS --headless` on a lab folder, detached from terminal and parent.
 
     Args:
         lab: where the record goes.
-        arguments: of `halfdrop run`, the method first.
+        arguments: of the command; of `halfdrop run` the method first.
         answers: to the questions before the first dose; None: a simulated bench answers for itself.
+        command: another command that writes a record ("calibrate", "probe").
+        records: folder of its records; default: the lab's runs.
     """
     stamp = datetime.now(UTC).strftime("%Y-%m-%dT%H%M%S%fZ")
     log = lab.writable().path / "logs" / f"run-{stamp}.log"
@@ -55,20 +65,22 @@ def start_run(lab: Lab, arguments: Sequence[str], *, answers: Mapping[str, str] 
         file = log.with_suffix(".answers.yaml")
         file.write_text(json.dumps(dict(answers), ensure_ascii=False, indent=1), encoding="utf-8")  # JSON is YAML too
         given += ["--answers", str(file)]
-    before = frozenset(list_records(lab.runs))
+    folder = records or lab.runs
+    folder.mkdir(exist_ok=True)
+    before = frozenset(list_records(folder))
     with log.open("wb") as sink:
         process = subprocess.Popen(
-            [sys.executable, "-P", "-m", "controller.cli", "run", *given],
+            [sys.executable, "-P", "-m", "controller.cli", *command, *given],
             stdin=subprocess.DEVNULL,
             stdout=sink,
             stderr=subprocess.STDOUT,
             **_detached(),
         )
     _LEFT_RUNNING[:] = [one for one in _LEFT_RUNNING if one.poll() is None] + [process]
-    return Started(process=process, log=log, before=before)
+    return Started(process=process, log=log, records=folder, before=before)
 
 
-def record_of(started: Started, lab: Lab, clock: Clock) -> Path:
+def record_of(started: Started, clock: Clock) -> Path:
     """Wait until a started run has its record, and return it.
 
     Raises:
@@ -77,7 +89,7 @@ def record_of(started: Started, lab: Lab, clock: Clock) -> Path:
     until_s = clock.now_s() + LONGEST_START_S
     while clock.now_s() < until_s:
         ended = started.process.poll() is not None
-        new = [path for path in list_records(lab.runs) if path not in started.before]
+        new = [path for path in list_records(started.records) if path not in started.before]
         for path in new:
             told = read_announcement(path) if path.with_suffix(SUFFIX).exists() else None
             if ended or (told is not None and told.pid == started.process.pid):

@@ -27,10 +27,14 @@ class PortOperator:
         port: the run's command port.
         clock: real time.
         stop: the run's stop switch.
+        attended: somebody will watch: questions wait from the beginning.
     """
 
-    def __init__(self, beforehand: Operator, port: CommandPort, clock: Clock, stop: StopSwitch) -> None:
+    def __init__(
+        self, beforehand: Operator, port: CommandPort, clock: Clock, stop: StopSwitch, *, attended: bool = False
+    ) -> None:
         self._beforehand, self._port, self._clock, self._stop = beforehand, port, clock, stop
+        self._attended = attended
 
     def ask(self, key: str, text: str, choices: tuple[str, ...]) -> str:
         """Return the answer given beforehand, or the viewers'.
@@ -42,7 +46,7 @@ class PortOperator:
         try:
             return self._beforehand.ask(key, text, choices)
         except AnswerMissingError:
-            if not self._port.watched_within(None):
+            if not (self._attended or self._port.watched_within(None)):
                 raise
             with self._port.asking(key, choices):
                 while (answer := self._port.answer) is None:

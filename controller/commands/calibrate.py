@@ -66,8 +66,15 @@ def probe(given: argparse.Namespace) -> int:
             check=not given.no_check,
             seed=opened.seed,
         )
-        who = {"operator_name": given.operator, "attended": given.attended}
-        result = _carry_out(plan, calibrate_probe(plan), opened, lab, stop=stop, **who)
+        result = _carry_out(
+            plan,
+            calibrate_probe(plan),
+            opened,
+            lab,
+            stop=stop,
+            operator_name=given.operator,
+            attended=given.attended,
+        )
     return _told(result, plan, lab, as_json=given.json)
 
 
@@ -103,8 +110,15 @@ def burette(given: argparse.Namespace) -> int:
             deliveries=given.deliveries,
             seed=opened.seed,
         )
-        who = {"operator_name": given.operator, "attended": given.attended}
-        result = _carry_out(plan, check_burette(plan), opened, lab, stop=stop, **who)
+        result = _carry_out(
+            plan,
+            check_burette(plan),
+            opened,
+            lab,
+            stop=stop,
+            operator_name=given.operator,
+            attended=given.attended,
+        )
     return _told(result, plan, lab, as_json=given.json)
 
 

@@ -21,7 +21,7 @@ def list_calibrations(given: argparse.Namespace) -> int:
     lab = find_lab(given.lab)
     say(lab.says())
     found = calibrations(lab.calibrations)
-    rows = [_entry(one, in_force(lab.calibrations, one.kind, one.subject)) for one in found]
+    rows = [calibration_entry(one, in_force(lab.calibrations, one.kind, one.subject)) for one in found]
     if given.json:
         print_json({"lab": str(lab.path), "calibrations": rows})
     elif rows:
@@ -43,7 +43,7 @@ def history(given: argparse.Namespace) -> int:
     say(lab.says())
     found = [one for one in calibrations(lab.calibrations, kind=given.kind) if one.accepted]
     subjects = sorted({one.subject for one in found})
-    told = {subject: _followed([one for one in found if one.subject == subject]) for subject in subjects}
+    told = {subject: followed([one for one in found if one.subject == subject]) for subject in subjects}
     if given.json:
         print_json({"lab": str(lab.path), "kind": given.kind, "history": told})
         return 0
@@ -58,7 +58,8 @@ def history(given: argparse.Namespace) -> int:
     return 0
 
 
-def _entry(one: Calibration, kept: Calibration | None) -> dict[str, Any]:
+def calibration_entry(one: Calibration, kept: Calibration | None) -> dict[str, Any]:
+    """Return what a list shows of a calibration; `kept` is the one in force of its subject."""
     if kept is not None and kept.path == one.path:
         state = "in force"
     elif not one.intact:
@@ -77,7 +78,8 @@ def _entry(one: Calibration, kept: Calibration | None) -> dict[str, Any]:
     }
 
 
-def _followed(entries: list[Calibration]) -> list[dict[str, Any]]:
+def followed(entries: list[Calibration]) -> list[dict[str, Any]]:
+    """Return the followed figures of one subject's calibrations, oldest first, with their trend in words."""
     told = []
     for quantity, unit, path in FOLLOWED[entries[0].kind]:
         series = [(one.on, value) for one in entries if (value := figure_of(one, path)) is not None]

@@ -66,7 +66,7 @@ def start_watched(
     scale = time_scale or WATCHED_TIME_SCALE
     arguments = [METHOD, "--sample-id", SAMPLE_ID, "--seed", str(seed), "--operator", "virtual chemist"]
     started = start_run(lab, [*arguments, "--time-scale", scale])
-    return lab, record_of(started, lab, SystemClock()), None if scale == FAST else float(scale)
+    return lab, record_of(started, SystemClock()), None if scale == FAST else float(scale)
 
 
 def _new_folder() -> Path:

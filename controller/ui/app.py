@@ -33,6 +33,7 @@ class HalfdropApp(App[int]):
         Binding("2", "go('set-up')", "New run", show=False),
         Binding("3", "go('bench')", "Bench", show=False),
         Binding("4", "go('archive')", "Archive", show=False),
+        Binding("5", "go('calibrations')", "Calibrate", show=False),
         Binding("f2", "colours", "Colours", show=False),
         Binding("f1,question_mark", "help", "Help", show=False),
         Binding("ctrl+q", "quit", "Quit", show=False, priority=True),
@@ -87,6 +88,10 @@ class HalfdropApp(App[int]):
                 from controller.ui.screens.bench import BenchScreen
 
                 return BenchScreen(self.lab)
+            case "calibrations":
+                from controller.ui.screens.calibration import CalibrationsScreen
+
+                return CalibrationsScreen(self.lab)
             case _:
                 from controller.ui.screens.archive import ArchiveScreen
 

@@ -119,7 +119,7 @@ def begin(lab: Lab, wanted: Wanted, answers: Mapping[str, str]) -> Path:
         arguments.append(f"--operator={wanted.operator}")
     if wanted.time_scale:
         arguments.append(f"--time-scale={wanted.time_scale}")
-    return record_of(start_run(lab, arguments, answers=answers), lab, SystemClock())
+    return record_of(start_run(lab, arguments, answers=answers), SystemClock())
 
 
 def expectation_text(lab: Lab, wanted: Wanted) -> str:

@@ -63,12 +63,13 @@ class RunView:
     @property
     def sample_id(self) -> str:
         """The sample, fit for a terminal."""
-        return printable(self.plan.sample.sample_id) if self.plan else self.name
+        told = self.header.get("plan") or {}
+        return printable(str((told.get("sample") or {}).get("sample_id") or self.name))
 
     @property
     def method_title(self) -> str:
         """The method's title, fit for a terminal."""
-        return printable(self.plan.method_title) if self.plan else ""
+        return printable(str((self.header.get("plan") or {}).get("method_title") or ""))
 
     @property
     def signal(self) -> str:
@@ -107,6 +108,8 @@ class RunView:
         from controller.progress import Pace
 
         self.header = header
+        if (header.get("plan") or {}).get("kind") not in (None, "equivalence"):
+            return  # a calibration: no curve, no account
         try:
             self.plan = plan_from_json(header["plan"], where=self.name)
         except HalfdropError:
@@ -137,7 +140,7 @@ class RunView:
             case "finish":
                 self.phase = "evaluated"
             case "read" if not self.paused:
-                self.phase = "settling" if self.doses else "measuring the noise"
+                self.phase = self._reading_phase()
 
     def _report(self, what: str, entry: dict[str, Any]) -> None:
         text = str(entry.get("text", ""))
@@ -216,7 +219,12 @@ class RunView:
             )
         )
         if not self.paused:
-            self.phase = "settling" if self.doses else "measuring the noise"
+            self.phase = self._reading_phase()
+
+    def _reading_phase(self) -> str:
+        if self.plan is None:
+            return "reading until it is steady"
+        return "settling" if self.doses else "measuring the noise"
 
     def _ph(self, potential_mv: float, temperature_c: float | None) -> float | None:
         plan = self.plan

@@ -1,4 +1,4 @@
-"""What the screens cost: first paint, a viewer's share of a core, redraws, the archive's list, and how fast a halt acts.
+"""What the screens cost: first paint, share of a core, redraws, the archive's list, and how fast a halt acts.
 
     python tests/benchmarks/viewer.py [--seconds 120] [--records 10000]
 
@@ -109,7 +109,7 @@ def long_run(lab: Lab, points: int) -> Path:
     text = text.replace("name: juice-acidity", "name: many-points").replace("run_time_s: 3600", "run_time_s: 7200")
     (lab.methods / "many-points.yaml").write_text(text, encoding="utf-8")
     started = start_run(lab, ["many-points", "--time-scale=200", "--sample-id=many points"])
-    record = record_of(started, lab, CLOCK)
+    record = record_of(started, CLOCK)
     while sum(entry.get("what") == "point" for entry in all_entries(record)) < points:
         CLOCK.wait(0.5)
     send_command(record, "time-scale", scale=1)
@@ -188,7 +188,7 @@ def main() -> None:
     lab = find_lab(str(folder))
     print(json.dumps({"load": os.getloadavg(), "cpus": os.cpu_count()}))
     done = start_run(lab, ["juice-acidity", "--time-scale=fast", "--sample-id=press 3"])
-    finished = record_of(done, lab, CLOCK)
+    finished = record_of(done, CLOCK)
     done.process.wait()
     archive_row(finished, given.records)
     paint_row(lab, finished, given.paints)

@@ -70,7 +70,7 @@ def made_lab() -> Lab:
 def run_going(lab: Lab, folder: Path) -> None:
     """The run screen shortly before the end point, at both sizes, then its end."""
     run = ["juice-acidity", "--sample-id=press 3, Tuesday", "--seed=1", "--operator=Ada", "--time-scale=30"]
-    record = record_of(start_run(lab, run), lab, CLOCK)
+    record = record_of(start_run(lab, run), CLOCK)
     app = HalfdropApp(lab=lab, record=record, speed=30.0)
 
     async def near_the_end(pilot: Any) -> None:

@@ -51,7 +51,7 @@ def started(stage: Any, request: pytest.FixtureRequest) -> Iterator[tuple[Lab, P
     scale = getattr(request, "param", "100")
     process = start_run(stage.lab, ["juice-acidity", "--sample-id=press 4", f"--time-scale={scale}", "--seed=3"])
     try:
-        yield stage.lab, record_of(process, stage.lab, SystemClock())
+        yield stage.lab, record_of(process, SystemClock())
     finally:
         process.process.terminate()
         process.process.wait(DEADLINE_S)
@@ -168,7 +168,7 @@ def test_a_halt_stops_the_pump_and_the_end_closes_the_record(started: tuple[Lab,
 def test_a_run_that_cannot_begin_says_why(stage: Any) -> None:
     process = start_run(stage.lab, ["juice-acidty", "--sample-id=x"])
     with pytest.raises(RunNotStartedError, match="did you mean juice-acidity"):
-        record_of(process, stage.lab, SystemClock())
+        record_of(process, SystemClock())
     assert list(stage.lab.runs.glob("*.jsonl")) == []
 
 

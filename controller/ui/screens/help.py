@@ -6,7 +6,7 @@ from controller.ui.screens.dialogs import Text
 
 _EVERYWHERE = """\
 Everywhere
-  1 2 3 4    run, new run, bench, archive
+  1 to 5     run, new run, bench, archive, calibrations
   y          copy what the screen says; or mark text with the mouse, then Ctrl-C
   F2         day or night colours
   ?          this help
@@ -64,11 +64,24 @@ A run as its record tells it.
   w          warnings
   q          back"""
 
+_CALIBRATIONS = """\
+Every calibration is a record; the newest accepted one of a probe or burette is in force. A new one goes step by step:
+it says what to do, shows the reading and how steady it is, and judges against stated limits at the end.
+
+  p          calibrate the probe with the bench's buffers
+  u          check the burette by weighing
+  h          trend of slope and offset, or of the volumes
+  Enter      open a record; in a calibration that goes on: answer its question
+  s          end a calibration; nothing comes into force
+
+Titrants and blanks come from titrations: halfdrop calibrate titrant METHOD, halfdrop calibrate blank METHOD."""
+
 _TEXTS = {
     "run": ("A run", _RUN),
     "set-up": ("A new run", _SET_UP),
     "bench": ("The bench", _BENCH),
     "archive": ("The archive", _ARCHIVE),
+    "calibrations": ("Calibrations", _CALIBRATIONS),
     "record": ("A finished run", _RECORD),
 }
 

@@ -90,7 +90,7 @@ class RunScreen(Commanding):
         for entry in entries:
             self.view.feed(entry)
         if entries:
-            self._show()
+            self.show_view()
         if (over, question) != (self.view.over, self.view.question):
             self.refresh_bindings()
             self.question_gone()
@@ -104,18 +104,20 @@ class RunScreen(Commanding):
     def heard(self, listens: bool) -> None:
         """Somebody began or ceased to take commands."""
         super().heard(listens)
-        self._show()
+        self.show_view()
 
-    def _show(self) -> None:
+    def show_view(self) -> None:
+        """Show the run as it is now."""
         view = self.view
-        self.query_one("#phase", Plain).say(self._phase_text())
+        self.query_one("#phase", Plain).say(self.phase_text())
         self.query_one(CurvePlot).show(view)
         self.query_one(Readout).show(view)
         self.query_one(Sentences).show(view.sentences)
         self.query_one(WarningBar).show(view.warnings)
         self.say_halted()
 
-    def _phase_text(self) -> str:
+    def phase_text(self) -> str:
+        """Return what the run does now, and for which sample."""
         view, phase = self.view, self.view.phase
         if self._playback is not None:
             held = ", held" if self._playback.paused else ""
@@ -142,7 +144,7 @@ class RunScreen(Commanding):
         """Hold the playback, or let it go on."""
         if self._playback is not None:
             self._playback.pause(not self._playback.paused)
-            self._show()
+            self.show_view()
 
     def action_speed(self, by: int) -> None:
         """Let a playback or a simulated bench go faster or slower."""
@@ -152,7 +154,7 @@ class RunScreen(Commanding):
         self._speed = SPEEDS[min(max(0, place + by), len(SPEEDS) - 1)]
         if self._playback is not None:
             self._playback.change_speed(self._speed)
-            self._show()
+            self.show_view()
         else:
             said = partial(self.notify, f"simulated time passes {self._speed:g} times as fast")
             self.command("time-scale", scale=self._speed, then=said)

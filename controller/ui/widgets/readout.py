@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 from textual.app import ComposeResult
 from textual.containers import Vertical
 from textual.widgets import Digits, Static
@@ -62,6 +64,9 @@ class Readout(Vertical):
 
     def _show_result(self, view: RunView, width: int) -> None:
         amount = view.result.get("result")
+        if calibration := view.result.get("calibration"):
+            self._show_calibration(calibration)
+            return
         if amount:
             text, _, unit = amount_text(amount).partition(" ")
             self._say("quantity", f"amount as {_reported(view)}")
@@ -74,6 +79,14 @@ class Readout(Vertical):
         self._say("trace", "")
         self._say("account", "\n".join(result_lines(view)))
         self._say("progress", f"took {clock_text(view.at_s)}"[:width])
+
+    def _show_calibration(self, found: dict[str, Any]) -> None:
+        self._say("quantity", "passed" if found.get("passed") else "not passed")
+        self._digits("")
+        self._say("reading", "in force from now on" if found.get("accepted") else "not taken into force")
+        self._say("trace", "")
+        self._say("account", "\n".join(printable(str(one["text"])) for one in found.get("findings", ())))
+        self._say("progress", printable(str(found.get("verdict", ""))))
 
     def _say(self, name: str, text: str) -> None:
         self.query_one(f"#{name}", Plain).say(text)
@@ -131,6 +144,8 @@ def trace(values: list[float], width: int) -> str:
 
 def account_lines(view: RunView) -> list[str]:
     """Return what was dosed and what is left."""
+    if view.plan is None and not view.doses:
+        return []
     lines = [f"{len(view.doses)} doses, {view.delivered_ml:.4f} mL"]
     if view.contents_ml is not None and view.plan is not None:
         lines.append(f"syringe {max(0.0, view.contents_ml):.2f} of {view.plan.pump.syringe_ml:g} mL")
@@ -142,6 +157,8 @@ def account_lines(view: RunView) -> list[str]:
 def progress_text(view: RunView, width: int) -> str:
     """Return a bar with the time left in words."""
     left_s = view.time_left_s()
+    if view.plan is None:
+        return clock_text(view.at_s)
     words = f"{clock_text(view.at_s)}, {left_text(left_s)}"
     if left_s is None or view.at_s + left_s <= 0:
         return words

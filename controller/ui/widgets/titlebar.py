@@ -6,7 +6,13 @@ from textual.content import Content
 from textual.widgets import Static
 
 #: the places, in the order of their keys
-PLACES = (("1", "run", "Run"), ("2", "set-up", "New run"), ("3", "bench", "Bench"), ("4", "archive", "Archive"))
+PLACES = (
+    ("1", "run", "Run"),
+    ("2", "set-up", "New run"),
+    ("3", "bench", "Bench"),
+    ("4", "archive", "Archive"),
+    ("5", "calibrations", "Calibrate"),
+)
 
 
 class TitleBar(Static):
@@ -25,5 +31,5 @@ class TitleBar(Static):
             parts.append(Content(text).stylize("bold" if here else f"@click=app.go('{place}')"))
         lab = getattr(self.app, "lab", None)
         if lab is not None:
-            parts.append(Content(f"   {lab.path.name}"))
+            parts.append(Content(f"  {lab.path.name}"))
         self.update(Content("").join(parts))
