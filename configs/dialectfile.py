@@ -25,6 +25,10 @@ _MUST = {
     "state": ("state",), "delivered": ("delivered",), "position": ("position",), "contents": ("contents",),
     "starts": ("starts",), "read_target": ("volume",),
 }  # fmt: skip
+#: what a command may carry; every other carries nothing
+_MAY_CARRY = {
+    "set_rate": ("rate",), "target": ("volume",), "dose": ("volume", "rate"), "watchdog": ("seconds",),
+}  # fmt: skip
 _ONE_OF_READ = ("potential", "ph")
 
 
@@ -144,7 +148,7 @@ class PumpSayings(Settings):
 
     def disagreements(self) -> list[Disagreement]:
         """Return questions without what they ask for, and a dose that carries no volume."""
-        found = _missing(self, _MUST)
+        found = _missing(self, _MUST) + _carried(self)
         volumes = (self.dose.asked() + (self.target.asked() if self.target else ())).count("volume")
         if volumes != 1:
             found.append(Disagreement("dose.say", f"<volume> {volumes} times", "<volume> once, in dose or in target"))
@@ -170,7 +174,7 @@ class ProbeSayings(Settings):
 
     def disagreements(self) -> list[Disagreement]:
         """Return a reading without a signal."""
-        found = []
+        found = _carried(self)
         told = self.read.told()
         if sum(told.count(name) for name in _ONE_OF_READ) != 1:
             found.append(Disagreement("read.hear", "not one signal", "one of the places <potential> and <ph>"))
@@ -250,6 +254,20 @@ def _bad(text: str) -> bool:
     except TemplateError:
         return True
     return False
+
+
+def _carried(sayings: PumpSayings | ProbeSayings) -> list[Disagreement]:
+    """Return places that a command cannot fill."""
+    found = []
+    commands = {name: getattr(sayings, name) for name in type(sayings).model_fields}
+    commands |= {f"set_up.{number}": saying for number, saying in enumerate(sayings.set_up)}
+    for name, saying in commands.items():
+        if not isinstance(saying, Saying):
+            continue
+        allowed = _MAY_CARRY.get(name, ())
+        text = ", ".join(f"<{place}>" for place in allowed) or "no place"
+        found += [Disagreement(f"{name}.say", f"<{place}>", text) for place in saying.asked() if place not in allowed]
+    return found
 
 
 def _missing(sayings: PumpSayings, must: Mapping[str, tuple[str, ...]]) -> list[Disagreement]:

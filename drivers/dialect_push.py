@@ -55,7 +55,7 @@ class DialectPush:
         self._talk, self._sayings, self._account = talk, sayings, account
         self._clock, self._stop = clock, stop
         self.what, self.volume_ml, self.step_ml, self.before = what, volume_ml, step_ml, before
-        self._nominal_s = 60.0 * volume_ml / rate_ml_min
+        self._nominal_s, self._rate_ml_min = 60.0 * volume_ml / rate_ml_min, rate_ml_min
         self._tolerance_ml = max(1.001 * account.resolution_ml, 0.5 * step_ml)
         self._seen_ml = 0.0
         self.may_have_begun = False
@@ -145,7 +145,7 @@ class DialectPush:
 
     def _begin(self) -> None:
         saying = self._sayings.dose
-        values = {"volume": self.volume_ml} if "volume" in saying.asked() else {}
+        values = {"volume": self.volume_ml, "rate": self._rate_ml_min}
         for attempt in range(1, ATTEMPTS + 1):
             self.started_at_s = self._clock.now_s()
             self.may_have_begun = True

@@ -50,6 +50,7 @@ class ModbusProbe:
         self._dialect, self._map = dialect, dialect.transmitter
         self._library = _library(link.where)
         self._instrument: Any = self._library.Instrument(_SerialOfLink(link), self._map.unit_address)
+        self._instrument.handle_local_echo = dialect.line.echo  # of an adapter that hears itself
         self._link, self._clock, self._stop = link, clock, stop
         self._ph_temperature_c = ph_temperature_c
         self._sequence = 0
@@ -133,7 +134,7 @@ class ModbusProbe:
             raise DeviceRefusedError(
                 f"refused register {number}: {_told(failure)}", where=self._link.where, remedy=_REMEDY
             ) from failure
-        except (self._library.ModbusException, ValueError, TypeError) as failure:
+        except (self._library.LocalEchoError, self._library.ModbusException, ValueError, TypeError) as failure:
             raise DeviceGarbledError(
                 f"answered wrongly for register {number}: {_told(failure)}", where=self._link.where, remedy=_REMEDY
             ) from failure

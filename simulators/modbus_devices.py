@@ -39,12 +39,21 @@ class Transmitter:
     Args:
         unit_address: 1 to 247; other frames are not answered.
         ph_temperature_c: at which the ideal slope of its pH is taken.
+        echoes: the line hears itself, as some two-wire adapters do.
     """
 
-    def __init__(self, sensor: Sensor, *, serial: int, unit_address: int = 7, ph_temperature_c: float = 25.0) -> None:
+    def __init__(
+        self,
+        sensor: Sensor,
+        *,
+        serial: int,
+        unit_address: int = 7,
+        ph_temperature_c: float = 25.0,
+        echoes: bool = False,
+    ) -> None:
         self.sensor, self.serial, self.unit_address = sensor, serial, unit_address
         self.readings = 0
-        self._ph_temperature_c = ph_temperature_c
+        self._ph_temperature_c, self._echoes = ph_temperature_c, echoes
         self._held, self._heard_s = b"", 0.0
 
     def next_event_s(self) -> float:
@@ -66,7 +75,7 @@ class Transmitter:
         frame, self._held = self._held[:REQUEST_BYTES], b""
         if crc_16(frame[:-2]) != int.from_bytes(frame[-2:], "little") or frame[0] != self.unit_address:
             return b""
-        return self._reply(frame, at_s)
+        return (frame if self._echoes else b"") + self._reply(frame, at_s)
 
     def _reply(self, frame: bytes, at_s: float) -> bytes:
         function, first, count = struct.unpack(">BHH", frame[1:6])

@@ -433,6 +433,13 @@ def test_a_wrong_address_is_silence_and_a_wrong_register_a_refusal(route, built,
         built(route, away, sensor=plain_sensor).driver.read()
 
 
+def test_an_adapter_that_hears_itself_is_understood(route, built, plain_sensor):
+    echoing = changed(TRANSMITTER, "line", echo=True)
+    assert built(route, echoing, sensor=plain_sensor, echoes=True).driver.read().status == "ok"
+    with pytest.raises(DeviceGarbledError):
+        built(route, TRANSMITTER, sensor=plain_sensor, echoes=True).driver.read()
+
+
 @pytest.mark.parametrize("dialect", [PROBE, TRANSMITTER], ids=["dialect", "modbus"])
 def test_real_time_smoke_of_probes(route, built, plain_sensor, dialect):
     probe = built(route, dialect, SystemClock(), sensor=plain_sensor)

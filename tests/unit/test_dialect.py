@@ -211,6 +211,8 @@ def test_a_small_dialect_is_enough():
     ("old", "new", "problem"),
     [
         ('hear: "<state>"', 'hear: "<stat>"', "5:27: pump.state.hear: got \"<stat>\", allowed: <stat> is no place"),
+        ('say: "H"', 'say: "H <volume>"', "pump.stop.say: got <volume>, allowed: no place"),
+        ('say: "P <volume>"', 'say: "P <volume> <seconds>"', "pump.dose.say: got <seconds>, allowed: <volume>, <rate>"),
         ('say: "P <volume>"', 'say: "P"', "pump.dose.say: got <volume> 0 times, allowed: <volume> once"),
         ('hear: "<delivered>"', 'hear: "OK"', "pump.delivered.hear: got no <delivered>, allowed: the place"),
         ("M: moving", "M: running", "allowed: moving | standing | fault"),
@@ -220,7 +222,7 @@ def test_a_small_dialect_is_enough():
         ("name: ours", "name: ours\nnumbers: {volume: {times: 0}}", "numbers.volume.times: got 0, allowed: 1e-09 to"),
         ("name: ours", "name: ours\nprobe: {read: {say: T, hear: \"<ph>\"}}", "exactly one of pump, probe"),
     ],
-    ids=range(9),
+    ids=range(11),
 )  # fmt: skip
 def test_mistakes_are_named_with_their_place(old, new, problem):
     assert old in GOOD
