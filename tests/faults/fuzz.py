@@ -15,7 +15,7 @@ import resource
 import sys
 import tempfile
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -26,7 +26,8 @@ from configs.errors import HalfdropError
 from configs.faultfile import FaultsSettings
 from configs.loading import parse
 from configs.method import MethodSettings
-from configs.settings import BenchSettings, SolutionSettings
+from configs.dialectfile import DialectSettings
+from configs.settings import BenchSettings, SolutionSettings, shipped_dialect
 from configs.shipped import shipped_bytes
 from controller.curvefile import CurveOptions, read_curve
 from controller.journal import Journal
@@ -34,12 +35,15 @@ from controller.record import read_record, verify_bytes
 from controller.recordfile import MemorySink
 from controller.titration.actions import Dose, Dosed, Read, Reading, from_entry
 from drivers.clock import ManualClock
+from drivers.dialect import DialectGrammar, DialectMismatchError
 from drivers.framing import FrameReader
 from drivers.identity import Identity
 from drivers.scpi import ScpiError, parse_message, parse_reply
 from drivers import scpi_tree as tree
+from simulators.ascii_devices import OrchardLanePump
 from simulators.bench import VirtualBench
 from simulators.devices import ProbeDevice, PumpDevice
+from simulators.modbus_devices import Transmitter
 from simulators.nominal import nominal_bench
 
 #: what a reader may raise
@@ -139,6 +143,43 @@ def _parsed(data: bytes, model: Any) -> None:
     parse(data, model, where="fuzz")
 
 
+def _dialect(name: str, template: str) -> Reads:
+    grammar = DialectGrammar(shipped_dialect(name))
+
+    def feed(data: bytes) -> None:
+        for frame in FrameReader().feed(data + b"\n"):
+            try:
+                text = grammar.told(frame or b"")
+                values = None if text is None else grammar.read(template, text)
+                if isinstance(values, Mapping):
+                    grammar.quantity(values, "delivered" if "delivered" in values else "potential")
+            except DialectMismatchError as refusal:
+                raise HalfdropError(str(refusal), where="fuzz", remedy="None") from None
+
+    return feed
+
+
+def _ascii_pump() -> Reads:
+    bench = nominal_bench("acetic", 1).bench
+    device, clock = OrchardLanePump(bench.mechanism, serial="1"), ManualClock()
+
+    def feed(data: bytes) -> None:
+        clock.wait(1.0)
+        device.feed(data, clock.now_s())
+
+    return feed
+
+
+def _transmitter() -> Reads:
+    device, clock = Transmitter(nominal_bench("acetic", 1).bench.sensor, serial=1), ManualClock()
+
+    def feed(data: bytes) -> None:
+        clock.wait(1.0)
+        device.feed(data, clock.now_s())
+
+    return feed
+
+
 BOMB = b"a: &a [x,x,x,x,x,x,x,x,x]\n" + b"".join(
     b"%c: &%c [*%c,*%c,*%c,*%c,*%c,*%c,*%c,*%c,*%c]\n" % ((c, c) + (c - 1,) * 9) for c in range(ord("b"), ord("j"))
 )
@@ -160,6 +201,16 @@ def targets() -> dict[str, tuple[Reads, list[bytes], float]]:
         "scpi reply": (_reply, replies, 0.16),
         "pump device": (_pump(), talk, 0.12),
         "probe device": (_probe(), talk, 0.05),
+        "dialect pump reply": (
+            _dialect("orchard-lane-pump", "SUM <delivered>"), [b"P2 SUM 5990*2C\r\n", b"P2 TICK*57\r\nP2 SUM 5990*2C"], 0.06,
+        ),
+        "dialect probe reply": (
+            _dialect("orchard-lane-probe", "<sequence>: <potential> at <temperature>, <status>"),
+            [b"ready> 12: 21585 at 250, fine\r\n"], 0.06,
+        ),
+        "dialect pump device": (_ascii_pump(), [b"P2 NEXT 425*56\r\n", b"P2 HALT*53\r\nP2 STARTS*51\r\n"], 0.05),
+        "modbus slave": (_transmitter(), [bytes.fromhex("0704000a000251af")], 0.03),
+        "dialect yaml": (_yaml(DialectSettings), [shipped_bytes("dialects", "orchard-lane-pump"), BOMB], 0.015),
         "record verify": (_verify, [record, record[:-40]], 0.06),
         "record read": (_in_file(read_record, "run.jsonl"), [record], 0.06),
         "record line": (_entry, lines, 0.12),
