@@ -51,7 +51,7 @@ def _talk(port: CommandPort, data: bytes) -> bytes:
             heard = b""
             while got := connection.recv(4096):
                 heard += got
-        except ConnectionError:
+        except OSError:  # reset, or hung up before it could be
             return b"reset"
         return heard
 
