@@ -149,7 +149,7 @@ class RunView:
                 self._point(entry)
             case "forecast":
                 self.forecast = (float(entry["volume_ml"]), float(entry["standard_uncertainty_ml"]))
-                self._pace_saw("forecast", self.forecast[0])
+                self._pace_saw("forecast", self.forecast[0], entry.get("end_point"))
             case "end-point":
                 self.end_points.append(_end_point(entry))
                 self.forecast = None
@@ -282,7 +282,7 @@ class RunView:
     def _say(self, text: str, mark: str) -> None:
         self.sentences.append(Sentence(at_s=self.at_s, text=printable(text), mark=mark))
 
-    def _pace_saw(self, what: str, volume_ml: float | None = None) -> None:
+    def _pace_saw(self, what: str, volume_ml: float | None = None, end_point: int | None = None) -> None:
         if self._pace is None:
             return
         from controller.titration.actions import Dosed, Report
@@ -290,7 +290,7 @@ class RunView:
         if what == "dosed":
             item: Dosed | Report = Dosed(at_s=self.at_s, number=len(self.doses), volume_ml=volume_ml or 0.0)
         else:
-            item = Report(what=what, volume_ml=volume_ml)
+            item = Report(what=what, volume_ml=volume_ml, end_point=end_point)
         self._pace.saw(item, self.at_s, self.delivered_ml)
 
 
