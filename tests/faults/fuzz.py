@@ -22,11 +22,11 @@ from typing import Any
 if __name__ == "__main__":
     sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
+from configs.dialectfile import DialectSettings
 from configs.errors import HalfdropError
 from configs.faultfile import FaultsSettings
 from configs.loading import parse
 from configs.method import MethodSettings
-from configs.dialectfile import DialectSettings
 from configs.settings import BenchSettings, SolutionSettings, shipped_dialect
 from configs.shipped import shipped_bytes
 from controller.curvefile import CurveOptions, read_curve
@@ -34,12 +34,12 @@ from controller.journal import Journal
 from controller.record import read_record, verify_bytes
 from controller.recordfile import MemorySink
 from controller.titration.actions import Dose, Dosed, Read, Reading, from_entry
+from drivers import scpi_tree as tree
 from drivers.clock import ManualClock
 from drivers.dialect import DialectGrammar, DialectMismatchError
 from drivers.framing import FrameReader
 from drivers.identity import Identity
 from drivers.scpi import ScpiError, parse_message, parse_reply
-from drivers import scpi_tree as tree
 from simulators.ascii_devices import OrchardLanePump
 from simulators.bench import VirtualBench
 from simulators.devices import ProbeDevice, PumpDevice
@@ -82,7 +82,14 @@ def _message(data: bytes) -> None:
 
 def _reply(data: bytes) -> None:
     units = parse_reply(data)
-    for read in (tree.read_identity, tree.read_status, tree.read_reading, tree.read_error, tree.read_motion, tree.read_armed):
+    for read in (
+        tree.read_identity,
+        tree.read_status,
+        tree.read_reading,
+        tree.read_error,
+        tree.read_motion,
+        tree.read_armed,
+    ):
         for unit in units:
             try:
                 read(unit)
@@ -104,7 +111,9 @@ def _pump() -> Reads:
 
 
 def _probe() -> Reads:
-    device = ProbeDevice(nominal_bench("acetic", 1).bench.sensor, Identity(maker="a", model="b", serial="c", firmware="d"))
+    device = ProbeDevice(
+        nominal_bench("acetic", 1).bench.sensor, Identity(maker="a", model="b", serial="c", firmware="d")
+    )
 
     def feed(data: bytes) -> None:
         assert len(device.feed(data[:2000] + b"\n", 1.0)) < 200_000
@@ -193,7 +202,12 @@ def targets() -> dict[str, tuple[Reads, list[bytes], float]]:
     lines = record.splitlines()
     bench = shipped_bytes("benches", "simulated")
     method = shipped_bytes("methods", "juice-acidity")
-    talk = [b":BUR:DOSE:ARM 1,0.25,5;:BUR:DOSE:ARM?", b"*IDN?;:SYST:ERR?", b":SYST:EXCH? 7;:PROB:READ?", b"*ESE 255;*OPC?"]
+    talk = [
+        b":BUR:DOSE:ARM 1,0.25,5;:BUR:DOSE:ARM?",
+        b"*IDN?;:SYST:ERR?",
+        b":SYST:EXCH? 7;:PROB:READ?",
+        b"*ESE 255;*OPC?",
+    ]
     replies = [b"7;12,243.6000,25.000,OK", b"Orchard,Bench,1,1", b'1;0,"No error"', b"51;1,4,MOVING,583,0.2915,2.5"]
     return {
         "framing": (_frames, [b"1;2,3\n" * 20, b"x" * 5000 + b"\n"], 0.15),
@@ -202,11 +216,14 @@ def targets() -> dict[str, tuple[Reads, list[bytes], float]]:
         "pump device": (_pump(), talk, 0.12),
         "probe device": (_probe(), talk, 0.05),
         "dialect pump reply": (
-            _dialect("orchard-lane-pump", "SUM <delivered>"), [b"P2 SUM 5990*2C\r\n", b"P2 TICK*57\r\nP2 SUM 5990*2C"], 0.06,
+            _dialect("orchard-lane-pump", "SUM <delivered>"),
+            [b"P2 SUM 5990*2C\r\n", b"P2 TICK*57\r\nP2 SUM 5990*2C"],
+            0.06,
         ),
         "dialect probe reply": (
             _dialect("orchard-lane-probe", "<sequence>: <potential> at <temperature>, <status>"),
-            [b"ready> 12: 21585 at 250, fine\r\n"], 0.06,
+            [b"ready> 12: 21585 at 250, fine\r\n"],
+            0.06,
         ),
         "dialect pump device": (_ascii_pump(), [b"P2 NEXT 425*56\r\n", b"P2 HALT*53\r\nP2 STARTS*51\r\n"], 0.05),
         "modbus slave": (_transmitter(), [bytes.fromhex("0704000a000251af")], 0.03),
@@ -214,7 +231,11 @@ def targets() -> dict[str, tuple[Reads, list[bytes], float]]:
         "record verify": (_verify, [record, record[:-40]], 0.06),
         "record read": (_in_file(read_record, "run.jsonl"), [record], 0.06),
         "record line": (_entry, lines, 0.12),
-        "csv curve": (_in_file(lambda path: read_curve(path, CurveOptions()), "curve.csv"), [CSV, CSV.replace(b",", b";").replace(b".", b",")], 0.06),
+        "csv curve": (
+            _in_file(lambda path: read_curve(path, CurveOptions()), "curve.csv"),
+            [CSV, CSV.replace(b",", b";").replace(b".", b",")],
+            0.06,
+        ),
         "method yaml": (_yaml(MethodSettings), [method], 0.015),
         "bench yaml": (_yaml(BenchSettings), [bench, BOMB], 0.015),
         "solution yaml": (_yaml(SolutionSettings), [BOMB, b"sample: {volume_ml: 50}\n"], 0.015),
@@ -223,9 +244,10 @@ def targets() -> dict[str, tuple[Reads, list[bytes], float]]:
 
 
 MARKS = [
-    b"\n", b"\r\n", b"\x00", b"\xff\xfe", b";", b",", b":", b"?", b'"', b"'", b"#", b"&a", b"*a", b"- ", b"{", b"}", b"[",
-    b"]", b"9" * 400, b"1e999", b"-inf", b"NaN", b"\x1b[2J", b"\x1b]0;x\x07", b"=cmd|' /C calc'!A0", b"<script>", b"[b]",
-    b"\xe2\x80\xae", b"../../etc/passwd", b"!!python/object/apply:os.system [id]", b"%s%n", b"\t", b" ", b"#9999999999",
+    b"\n", b"\r\n", b"\x00", b"\xff\xfe", b";", b",", b":", b"?", b'"', b"'", b"#", b"&a", b"*a", b"- ", b"{", b"}",
+    b"[", b"]", b"9" * 400, b"1e999", b"-inf", b"NaN", b"\x1b[2J", b"\x1b]0;x\x07", b"=cmd|' /C calc'!A0", b"<script>",
+    b"[b]", b"\xe2\x80\xae", b"../../etc/passwd", b"!!python/object/apply:os.system [id]", b"%s%n", b"\t", b" ",
+    b"#9999999999",
     b"yes", b"0x10", b"1_000", b"12:30", b"*IDN?", b":BUR:DOSE", b"\\u0000", b'{"line":1', b"volume_ml", b"ph",
 ]  # fmt: skip
 
@@ -255,7 +277,10 @@ def spoil(data: bytes, dice: random.Random) -> bytes:
 
 def noise(dice: random.Random) -> bytes:
     """Marks and random bytes in a row."""
-    parts = [dice.choice(MARKS) if dice.random() < 0.7 else dice.randbytes(dice.randrange(9)) for _ in range(dice.randrange(40))]
+    parts = [
+        dice.choice(MARKS) if dice.random() < 0.7 else dice.randbytes(dice.randrange(9))
+        for _ in range(dice.randrange(40))
+    ]
     return b"".join(parts)[:LARGEST_INPUT]
 
 
@@ -280,7 +305,7 @@ def fuzz(inputs: int, seed: int, only: str | None = None) -> dict[str, dict[str,
                 read(data)
             except ALLOWED:
                 refused += 1
-            except BaseException as error:  # noqa: BLE001 (that is what is looked for)
+            except BaseException as error:
                 bad.append(f"{type(error).__name__}: {error} for {data[:200]!r}")
             slowest_s = max(slowest_s, time.process_time() - began_s)
         report[name] = {"inputs": count, "refused": refused, "bad": bad, "slowest_s": slowest_s}
@@ -303,7 +328,10 @@ def main() -> int:
     report = fuzz(given.inputs, given.seed, given.only)
     growth_mb = used_mb() - before_mb
     for name, row in report.items():
-        print(f"{name:16} {row['inputs']:7} inputs {row['refused']:7} refused {len(row['bad']):4} bad, slowest {row['slowest_s']:.3f} s")
+        print(
+            f"{name:16} {row['inputs']:7} inputs {row['refused']:7} refused {len(row['bad']):4} bad, "
+            f"slowest {row['slowest_s']:.3f} s"
+        )
         for text in row["bad"][:3]:
             print("   ", text[:400])
     print(f"memory grew by {growth_mb:.1f} MB (allowed {LARGEST_GROWTH_MB:g})")
