@@ -18,6 +18,7 @@ from controller.bench_motion import STEPS, MotionCheck
 from controller.connection import check_capabilities, dialect_of
 from controller.stopping import StopSwitch
 from drivers.clock import Clock, real_seconds_scale
+from drivers.portfailure import owner_of
 from drivers.probe import Probe, ProbeReading
 from drivers.pump import Pump, PumpStatus
 
@@ -83,6 +84,7 @@ class BenchCheck:
         if pump is None:
             yield from passed_over(("pump: identity", "pump: grammar", "pump: account"), "its port is not open")
             return
+        yield from _shared("pump", reached.urls[0])
         passed.pump_identity = yield from self._identified("pump", pump.identify)
         if passed.pump_identity is None:
             yield from passed_over(("pump: grammar", "pump: account"), "it does not say who it is")
@@ -112,6 +114,7 @@ class BenchCheck:
         if probe is None:
             yield from passed_over(("probe: identity", "probe: grammar"), "its port is not open")
             return
+        yield from _shared("probe", reached.urls[1])
         passed.probe_identity = yield from self._identified("probe", probe.identify)
         if passed.probe_identity is None:
             yield from passed_over(("probe: grammar",), "it does not say who it is")
@@ -247,6 +250,18 @@ class BenchCheck:
     @staticmethod
     def _warning(what: str, remedy: str, verdict: Verdict = "warning") -> Finding:
         return Finding(step="probe: readings", verdict=verdict, what=what, remedy=remedy)
+
+
+def _shared(role: str, url: str) -> Iterator[Finding]:
+    """Some programs hold a port without locking it; a served pseudo-terminal is held by who serves it."""
+    owner = None if "://" in url or url.startswith("/dev/pts/") else owner_of(url)
+    if owner is not None:
+        yield Finding(
+            step=f"{role}: port",
+            verdict="warning",
+            what=f"{owner[1]} (process {owner[0]}) holds it open as well",
+            remedy="Close it there: two readers of one line each get half of what comes",
+        )
 
 
 def _readings_text(seen: list[ProbeReading]) -> str:

@@ -236,3 +236,13 @@ def test_the_trial_of_the_stop_leaves_the_switch_as_it_was(reach: Callable[..., 
     assert by_step(check.walk())["stop"][0].verdict == "ok"
     assert not check.stop.event.is_set()
     assert check.stop.request is None
+
+
+def test_a_port_that_another_program_holds_as_well_is_a_warning(monkeypatch: pytest.MonkeyPatch) -> None:
+    from controller.bench_check import _shared
+
+    monkeypatch.setattr("controller.bench_check.owner_of", lambda path: (4711, "terminal"))
+    (finding,) = _shared("probe", "/dev/ttyUSB0")
+    assert (finding.verdict, finding.what) == ("warning", "terminal (process 4711) holds it open as well")
+    for url in ("memory://probe", "socket://127.0.0.1:9", "/dev/pts/3"):
+        assert list(_shared("probe", url)) == []
