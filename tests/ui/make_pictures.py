@@ -19,6 +19,7 @@ from controller.commandclient import send_command
 from controller.labfolder import Lab, find_lab, init_lab
 from controller.launch import record_of, start_run
 from controller.ui.app import HalfdropApp
+from controller.ui.screens.calibration import CalibrationScreen
 from controller.ui.widgets.answerfield import AnswerField
 from drivers.clock import SystemClock
 
@@ -131,6 +132,23 @@ def other_places(lab: Lab, folder: Path) -> None:
     picture(compared, (120, 40), two, folder / "compare.svg")
 
 
+def calibration(lab: Lab, folder: Path) -> None:
+    """A calibration of the probe that goes on."""
+    started = start_run(
+        lab, ["--attended", "--time-scale=20"], command=("calibrate", "probe"), records=lab.calibrations
+    )
+    record = record_of(started, CLOCK)
+    app = HalfdropApp(lab=lab)
+
+    async def third_buffer(pilot: Any) -> None:
+        await app.switch_screen(CalibrationScreen(record, speed=20.0))
+        await until(pilot, lambda: sum("stable after" in one.text for one in app.screen.view.sentences) >= 2)  # type: ignore[attr-defined]
+        await pilot.pause(1.0)
+
+    picture(app, (100, 30), third_buffer, folder / "calibration.svg")
+    started.process.wait()
+
+
 def main() -> None:
     """Make them all."""
     folder = Path(sys.argv[1]) if len(sys.argv) > 1 else Path(__file__).parent / "pictures"
@@ -138,6 +156,7 @@ def main() -> None:
     lab = made_lab()
     run_going(lab, folder)
     other_places(lab, folder)
+    calibration(lab, folder)
 
 
 if __name__ == "__main__":
