@@ -131,7 +131,7 @@ def build(
     world = VirtualBench(truth, sample=sound.sample, titrant=sound.titrant, seed=seed, medium=sound.medium)
     nominal = replace(nominal, bench=world)
     clock, stop, holder = ManualClock(), StopSwitch(), []
-    script = FaultScript(faults, world, clock, kill=lambda: holder[0].die())
+    script = FaultScript(faults, world, clock, kill=lambda: holder[0].die())  # noqa: PLW0108 (it is not there yet)
     ports, name = VirtualPorts(clock), next(NAMES)
     served = {
         "pump": PumpDevice(script.syringe, Identity(maker="Orchard", model="Burette", serial="1", firmware="1")),
@@ -304,7 +304,10 @@ def draw_fault(what: str, dice: random.Random) -> dict[str, Any]:
         "leaking-valve": {"rate_ml_min": round(10 ** dice.uniform(-1, 0.3), 4)},
         "stuck-reading": {"for_s": round(dice.uniform(2, 120), 2)},
         "open-circuit": {"for_s": round(dice.uniform(1, 25), 2)},
-        "bubble-at-probe": {"by_mv": round(dice.choice([-1, 1]) * dice.uniform(5, 300), 2), "for_s": round(dice.uniform(1, 40), 2)},
+        "bubble-at-probe": {
+            "by_mv": round(dice.choice([-1, 1]) * dice.uniform(5, 300), 2),
+            "for_s": round(dice.uniform(1, 40), 2),
+        },
         "slow-probe": {"factor": round(dice.uniform(1.2, 3.0), 2)},
         "drift": {"by_mv_min": round(dice.choice([-1, 1]) * 10 ** dice.uniform(-0.5, 1.3), 3)},
         "temperature-step": {"by_c": round(dice.choice([-1, 1]) * dice.uniform(0.5, 15), 2)},
@@ -342,9 +345,8 @@ def one(job: tuple[int, int, tuple[str, ...] | None]) -> Ended:
 def table(ended: list[Ended]) -> str:
     """Outcomes by fault; a run with several faults counts under each."""
     kinds = sorted({name for run_ in ended for name in run_.faults} or {"none"})
-    lines = [
-        f"{'fault':18} {'runs':>5} {'result':>7} {'warned':>7} {'no result':>9} {'stopped':>8} {'failed':>7} {'killed':>7} {'WRONG':>6}"
-    ]
+    heads = ("runs", "result", "warned", "no result", "stopped", "failed", "killed", "WRONG")
+    lines = [f"{'fault':18} " + " ".join(f"{head:>9}" for head in heads)]
     for kind in kinds:
         of_kind = [r for r in ended if kind in r.faults or (kind == "none" and not r.faults)]
         count = Counter(
@@ -353,8 +355,20 @@ def table(ended: list[Ended]) -> str:
         warned = sum(r.outcome == "completed" and r.end_points > 0 and bool(r.warnings) for r in of_kind)
         wrong = sum(bool(r.wrong) for r in of_kind)
         lines.append(
-            f"{kind:18} {len(of_kind):5} {count['result']:7} {warned:7} {count['none']:9} {count['stopped']:8} "
-            f"{count['failed']:7} {count['killed']:7} {wrong:6}"
+            f"{kind:18} "
+            + " ".join(
+                f"{n:9}"
+                for n in (
+                    len(of_kind),
+                    count["result"],
+                    warned,
+                    count["none"],
+                    count["stopped"],
+                    count["failed"],
+                    count["killed"],
+                    wrong,
+                )
+            )
         )
     return "\n".join(lines)
 
@@ -389,7 +403,8 @@ def main() -> int:
     wrong = [r for r in free + ended if r.wrong]
     for r in wrong:
         print(
-            f"run {r.number}: {', '.join(r.faults)}: {r.outcome} ({r.reason}): {'; '.join(r.wrong)}; warnings {list(r.warnings)}"
+            f"run {r.number}: {', '.join(r.faults)}: {r.outcome} ({r.reason}): {'; '.join(r.wrong)}; "
+            f"warnings {list(r.warnings)}"
         )
     if given.verbose:
         for r in ended:

@@ -1,0 +1,187 @@
+"""Hostile bytes, text and files: typed errors only, nothing obeyed, nothing unbounded."""
+
+from __future__ import annotations
+
+import json
+import random
+from pathlib import Path
+from typing import Any
+
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from configs.errors import HalfdropError, SettingsError
+from configs.faultfile import FaultsSettings
+from configs.loading import parse
+from configs.settings import BenchSettings
+from controller.execution import Execution
+from controller.guard import Guard, room_ml
+from controller.journal import Journal
+from controller.log import LabLog
+from controller.record import printable, verify_bytes
+from controller.recordfile import MemorySink, new_record
+from controller.stopping import StopSwitch
+from controller.titration.actions import Dose, Dosed, Prime, Read, Reading, Refill, Refused, Wait
+from drivers.clock import ManualClock
+
+
+def _record(lines: int = 4) -> bytes:
+    sink, clock = MemorySink(), ManualClock()
+    journal = Journal(sink, clock)
+    journal.begin({"plan": {"method_name": "juice"}, "operator": "Ada"})
+    for number in range(lines):
+        journal.write(Read())
+        journal.write(Reading(at_s=number + 0.5, potential_mv=12.5 - number, temperature_c=25.0, sequence=number))
+        clock.wait(1.0)
+    journal.close("completed", result={"end_points": [{"volume_ml": 5.0}]})
+    return sink.data
+
+
+RECORD = _record()
+
+
+@pytest.mark.parametrize("change", [1, 0x20, 0x80], ids=["last bit", "letter case", "high bit"])
+def test_verify_finds_every_one_byte_edit(change: int) -> None:
+    missed = []
+    for place in range(len(RECORD)):
+        edited = bytearray(RECORD)
+        edited[place] ^= change
+        if verify_bytes(bytes(edited)).state == "intact":
+            missed.append(place)
+    assert missed == []
+
+
+def test_verify_finds_every_byte_taken_out_or_put_in() -> None:
+    for place in range(len(RECORD)):
+        assert verify_bytes(RECORD[:place] + RECORD[place + 1 :]).state != "intact", f"cut at {place}"
+        for byte in (b" ", b"0", b"\n", RECORD[place : place + 1]):
+            assert verify_bytes(RECORD[:place] + byte + RECORD[place:]).state != "intact", f"{byte!r} at {place}"
+
+
+def test_verify_finds_every_cut_of_the_end_and_every_line_taken_out_moved_or_doubled() -> None:
+    for length in range(len(RECORD)):
+        assert verify_bytes(RECORD[:length]).state != "intact"
+    lines = RECORD.splitlines(keepends=True)
+    for number, line in enumerate(lines):
+        rest = lines[:number] + lines[number + 1 :]
+        assert verify_bytes(b"".join(rest)).state != "intact"
+        for place in range(len(lines) + 1):
+            assert verify_bytes(b"".join([*lines[:place], line, *lines[place:]])).state != "intact"
+            if [*rest[:place], line, *rest[place:]] != lines:
+                assert verify_bytes(b"".join([*rest[:place], line, *rest[place:]])).state != "intact"
+    assert verify_bytes(RECORD).state == "intact"
+
+
+def test_readers_survive_hostile_bytes(fuzzer: Any) -> None:
+    """A small round of the fuzz script; 100 000 inputs run as `python tests/faults/fuzz.py`."""
+    report = fuzzer.fuzz(2500, seed=7)
+    assert {name: row["bad"] for name, row in report.items() if row["bad"]} == {}
+    assert sum(row["refused"] for row in report.values()) > 500
+
+
+@pytest.mark.parametrize("model", [BenchSettings, FaultsSettings])
+def test_a_bomb_of_references_is_refused_at_once(fuzzer: Any, model: Any) -> None:
+    with pytest.raises(SettingsError):
+        parse(fuzzer.BOMB, model, where="bomb.yaml")
+
+
+@given(st.text(max_size=80))
+def test_no_text_reaches_a_terminal_as_a_command(text: str) -> None:
+    shown = printable(text)
+    assert len(shown) == len(text)
+    assert all(letter.isprintable() for letter in shown)
+
+
+@given(st.text(alphabet=st.characters(codec="utf-8"), max_size=60))
+@settings(max_examples=50, deadline=None)
+def test_no_label_becomes_a_path(tmp_path_factory: pytest.TempPathFactory, label: str) -> None:
+    runs = tmp_path_factory.mktemp("runs")
+    sink = new_record(runs, utc_s=0.0, label=label, durable=False)
+    sink.write(b"x\n")
+    sink.close()
+    [made] = list(runs.rglob("*"))
+    assert made.parent == runs
+    assert ":" not in made.name
+
+
+def test_a_log_keeps_one_line_a_message_and_stays_bounded(tmp_path: Path) -> None:
+    log = LabLog(tmp_path)
+    log.write("first\n\x1b[2J2026-01-01 forged line", utc_s=0.0)
+    for _ in range(900):
+        log.write("x" * 5000, utc_s=1.0)
+    log.close()
+    files = sorted(tmp_path.glob("halfdrop.log*"))
+    assert 2 <= len(files) <= 6
+    assert sum(file.stat().st_size for file in files) < 6_100_000
+    assert all("\x1b" not in file.read_text(encoding="utf-8") for file in files)
+
+
+def test_a_log_that_cannot_be_written_stops_nothing(tmp_path: Path) -> None:
+    log = LabLog(tmp_path / "not there")
+    log.write("said to nobody", utc_s=0.0)
+    log.close()
+
+
+# --- a hostile core -----------------------------------------------------------------------------------------------
+
+volumes = st.one_of(st.floats(allow_nan=True, allow_infinity=True), st.floats(0.0005, 3.0), st.sampled_from([0.5, 2.0]))
+asked = st.one_of(
+    st.builds(Dose, number=st.integers(-2, 40), volume_ml=volumes, reason=st.just("")),
+    st.builds(Prime, volume_ml=volumes),
+    st.builds(Wait, seconds=st.floats(-5, 4000)),
+    st.just(Refill()),
+    st.just(Read()),
+)
+
+
+@settings(max_examples=40, deadline=None)
+@given(st.lists(asked, max_size=80), st.floats(40.0, 84.0))
+def test_no_core_can_pass_a_limit_of_vessel_syringe_or_numbers(
+    campaign: Any, actions: list[Any], initial_ml: float
+) -> None:
+    """Whatever is asked goes through execution, drivers, wire and device; the world is then measured."""
+    from dataclasses import replace
+
+    bench = campaign.build("acetic", 3, campaign.settings_of([], 3))
+    plan = replace(bench.plan, sample=replace(bench.plan.sample, initial_volume_ml=initial_ml))
+    guard, journal = Guard(plan), Journal(MemorySink(), bench.clock)
+    journal.begin({})
+    execution = Execution(plan, bench.devices, journal, guard, clock=bench.clock, stop=StopSwitch())
+    seen: set[int] = set()
+    for action in actions:
+        answer = execution.carry_out(action)
+        if isinstance(answer, Dosed):
+            assert answer.number not in seen, "a number was used twice"
+            seen.add(answer.number)
+            assert isinstance(action, Dose)
+            assert answer.volume_ml <= plan.vessel.largest_dose_ml + 1e-6
+        if isinstance(action, Prime):
+            assert isinstance(answer, Refused), "nobody said that the tip is over the waste"
+        assert initial_ml + bench.world.true_delivered_ml(bench.clock.now_s()) < room_ml(plan)
+    assert execution.steps == bench.world.mechanism.tip_steps_total(bench.clock.now_s())
+    assert execution.at_s() <= plan.vessel.longest_run_s + 1e-6
+    bench.ports.close()
+
+
+def test_a_note_with_markup_stays_text_in_the_record() -> None:
+    sink = MemorySink()
+    journal = Journal(sink, ManualClock())
+    journal.begin({"operator": "<script>alert(1)</script>\x1b[31m"})
+    journal.event("note", text="=cmd|' /C calc'!A0\n[bold]x[/bold]")
+    journal.close("completed")
+    lines = sink.data.splitlines()
+    assert len(lines) == 3
+    assert json.loads(lines[1])["text"] == "=cmd|' /C calc'!A0\n[bold]x[/bold]"
+    assert b"\x1b" not in sink.data
+
+
+def test_garbage_as_a_fault_file_is_told_apart_from_a_program_error(fuzzer: Any) -> None:
+    dice, told = random.Random(5), []
+    for _ in range(300):
+        try:
+            parse(fuzzer.spoil(fuzzer.FAULTS, dice), FaultsSettings, where="faults.yaml")
+        except HalfdropError as error:
+            told.append(str(error))
+    assert len(told) > 100
+    assert not [text for text in told if "\x1b" in text]
