@@ -341,6 +341,7 @@ def _bench(group: Parser) -> None:
     made.add_argument("--no-motion", action="store_true", help="only what moves nothing")
     made = _action(actions, "ready", "controller.commands.bench_ready:ready", "could a run begin now; nothing moves")
     _at_bench(made)
+    made.add_argument("--method", metavar="METHOD", help="the method to be ready for")
     made = _action(actions, "shut-down", "controller.commands.bench_ready:shut_down", "stop, empty, see to the probe")
     _at_bench(made)
     made.add_argument("--empty", action="store_true", help="push what the syringe holds into the waste")
