@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime as dt
+import json
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -18,6 +19,7 @@ from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import common, no_pump, probe_of, vessel_of
 from controller.calibration.plans import BlankPlan, CalibrationPlan, TitrantPlan
 from controller.calibration.store import calibrations, in_force
+from controller.encoding import plan_from_json, plan_to_json
 from controller.execution import Devices
 from controller.inforce import NotInForceError, find_in_force
 from controller.journal import Journal
@@ -134,6 +136,7 @@ def test_a_lot_in_force_brings_its_causes_into_the_plan(tmp_path: Path) -> None:
         method(), bench(), SampleChoice(), pump=expected_account(bench()), probe_identity="p", in_force=known
     )
     assert plan.titrant.concentration_mol_l == 0.1
+    assert plan_from_json(json.loads(json.dumps(plan_to_json(plan)))) == plan
     titrant = titrant_of(plan)
     assert titrant.parts[0].shared_id == "burette b gain"
     assert titrant.standard_uncertainty == pytest.approx(plan.titrant.standard_uncertainty_mol_l)
