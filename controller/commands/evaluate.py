@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.commands.lines import result_lines
+from controller.commands.lines import estimator_lines, result_lines
 from controller.commands.output import chance_text, print_json
 from controller.commands.runs import SUFFIX, record_path
 from controller.evaluate_file import EvaluateOptions, evaluate_file
@@ -95,10 +95,7 @@ def _options(given: argparse.Namespace) -> EvaluateOptions:
 
 
 def _lines(result: dict[str, Any]) -> list[str]:
-    lines = result_lines(result)
-    for name, volumes in result["estimators"].items():
-        lines.append(f"  {name}: " + ", ".join(f"{volume:.4f} mL" for volume in volumes))
-    return lines + _identity_lines(result.get("identity"))
+    return [*result_lines(result), *estimator_lines(result), *_identity_lines(result.get("identity"))]
 
 
 def _identity_lines(identity: dict[str, Any] | None) -> list[str]:

@@ -93,3 +93,15 @@ def result_lines(result: dict[str, Any]) -> list[str]:
     if result.get("run"):
         lines.append(f"record: {result['run']}")
     return [printable(line) for line in lines]
+
+
+def estimator_lines(result: dict[str, Any]) -> list[str]:
+    """Return what each estimator gives, in the order of end points; one that does not apply is marked, with why."""
+    volumes: dict[str, list[str]] = {}
+    for estimates in result.get("estimates") or []:
+        for one in estimates:
+            text = f"{one['volume_ml']:.4f} mL"
+            if not one["sound"]:
+                text += f" (does not apply: {one['remark'] or 'it does not fit this curve'})"
+            volumes.setdefault(one["estimator"], []).append(text)
+    return [printable(f"  {name}: {', '.join(texts)}") for name, texts in volumes.items()]
