@@ -51,6 +51,10 @@ class BenchCheck:
         self.operator, self.stop = reached.operator, stop
         self.passed = Passed()
 
+    def utc_s(self) -> float:
+        """Return POSIX time by the bench's clock."""
+        return self._clock.utc_s()
+
     def walk(self, *, moving: bool = True) -> Iterator[Finding]:
         """Yield the findings one by one, as they are made.
 

@@ -13,12 +13,13 @@ from pathlib import Path
 from configs.benchfile import BenchSettings
 from controller.assembly import Opening, ReachedBench, reach_bench
 from controller.bench_check import BenchCheck
-from controller.bench_finding import Finding
+from controller.bench_finding import Finding, passed_over
 from controller.bench_shutdown import shut_down_steps
 from controller.commands.bench import DEFAULT_METHOD
 from controller.commands.output import print_json, print_table, say
 from controller.commands.settings import Chosen, answers_of, chosen
 from controller.commands.signals import pulling
+from controller.inforce import NotInForceError, find_in_force, utc_day
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.planning import SampleChoice, plan_sample
@@ -42,7 +43,7 @@ def ready(given: argparse.Namespace) -> int:
     def steps(bench: BenchCheck, picked: Chosen) -> Iterator[Finding]:
         yield from bench.walk(moving=False)
         yield from _account(picked.bench, bench)
-        yield from _calibrated(picked.bench)
+        yield from _calibrated(picked, bench)
         if picked.lab is not None and bench.passed.pump_identity is not None:
             yield from _open_runs(picked.lab, bench.passed.pump_identity)
 
@@ -91,7 +92,9 @@ def _hint() -> str:
 
 
 def _walked(given: argparse.Namespace, steps: Callable[..., Iterable[Finding]], *, with_choice: bool = False) -> int:
-    picked = chosen(Namespace(**{**vars(given), "method": DEFAULT_METHOD}), lab_needed=False)
+    picked = chosen(
+        Namespace(**{**vars(given), "method": getattr(given, "method", None) or DEFAULT_METHOD}), lab_needed=False
+    )
     findings: list[Finding] = []
     with _bench(given, picked) as bench:
         try:
@@ -184,25 +187,33 @@ def _account(settings: BenchSettings, bench: BenchCheck) -> Iterator[Finding]:
         )
 
 
-def _calibrated(settings: BenchSettings) -> Iterator[Finding]:
-    probe = settings.probe
-    if probe.signal == "ph":
-        yield Finding(
-            step="calibration", verdict="ok", what=f"the meter's own, u = {probe.ph_standard_uncertainty:g} as stated"
+def _calibrated(picked: Chosen, bench: BenchCheck) -> Iterator[Finding]:
+    """What is in force for the method on this bench: calibrations, burette check, titrant lot."""
+    known, passed = picked.bench.probe, bench.passed
+    if known.signal == "ph":
+        what = f"the meter's own, u = {known.ph_standard_uncertainty:g} as stated"
+        yield Finding(step="calibration", verdict="ok", what=what)
+    if picked.lab is None or passed.pump_identity is None or passed.probe_identity is None:
+        yield from passed_over(("calibrations",), "there is no lab folder, or not both devices answer")
+        return
+    try:
+        found = find_in_force(
+            picked.method,
+            picked.bench,
+            picked.lab.calibrations,
+            pump_identity=passed.pump_identity,
+            probe_identity=passed.probe_identity,
+            today=utc_day(bench.utc_s()),
         )
-    elif probe.calibration is None:
-        yield Finding(
-            step="calibration",
-            verdict="warning",
-            what="none stands in the bench file",
-            remedy="Calibrate the probe (halfdrop calibrate probe), unless it was and its record is in calibrations/",
-        )
-    else:
-        yield Finding(
-            step="calibration",
-            verdict="ok",
-            what=f"slope {probe.calibration.slope_percent:g} %, {probe.calibration.calibrated_utc or 'no date'}",
-        )
+    except NotInForceError as refusal:
+        yield Finding(step="calibrations", verdict="failed", what=refusal.what, remedy=refusal.remedy)
+        return
+    for warning in found.traceability.warnings:
+        what, _, remedy = warning.rpartition("; ")
+        yield Finding(step="calibrations", verdict="warning", what=what or warning, remedy=remedy if what else None)
+    if not found.traceability.warnings:
+        named = ", ".join(sorted(found.hashes)) or "as the bench file says"
+        yield Finding(step="calibrations", verdict="ok", what=f"in force for {picked.method.name}: {named}")
 
 
 def _open_runs(lab: Lab, pump_identity: str) -> Iterator[Finding]:
