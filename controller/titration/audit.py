@@ -23,6 +23,8 @@ from controller.evaluation.modelfit import ModelFit, fit_charge_balance
 NOTABLE_SHARE, LARGEST_SHARE = 0.005, 0.1
 #: pKa so far apart show a jump between them
 JUMP_PKA = 2.5
+#: reduced chi-square above which the fit says too little of its uncertainty; 120 runs without a mishap: at most 1.4
+NOTABLE_CHI_SQUARE = 1.5
 #: standard uncertainties by which the reported value may differ from a good fit
 ALLOWED_SDS = 4.0
 #: the probe answers so many times as slowly as its record says before it is remarked upon
@@ -139,6 +141,8 @@ def _hold_against_fit(
         if good:
             near_ml, sd_ml = min(_shown(fit, acid_titrant), key=lambda pair: abs(pair[0] - volume_ml))
             off_ml = abs(near_ml - volume_ml)
+            if fit.chi_square > NOTABLE_CHI_SQUARE:
+                audit.widen(number, u_ml * math.sqrt(fit.chi_square**2 - 1.0))
             if off_ml > ALLOWED_SDS * math.hypot(u_ml, sd_ml):
                 audit.warnings.append(
                     f"end point {number + 1}: the charge balance of most points is at {near_ml:.4f} mL, not at "

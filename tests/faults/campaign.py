@@ -17,7 +17,8 @@ import sys
 import time
 from collections import Counter
 from concurrent.futures import ProcessPoolExecutor
-from dataclasses import dataclass, field, replace
+from contextlib import ExitStack
+from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -328,7 +329,7 @@ def draw(number: int, campaign_seed: int, *, kinds: tuple[str, ...] | None) -> t
     strategy = dice.choices([MODEL_GUIDED, WITHOUT_RECORD], [3, 1])[0]
     names: tuple[str, ...] = ()
     if kinds:
-        names = tuple(dice.choice(kinds) for _ in range(dice.choice([1, 1, 2, 3])))
+        names = tuple(dice.sample(kinds, min(len(kinds), dice.choice([1, 1, 2, 3]))))  # different ones
     faults = [draw_fault(name, dice) for name in names]
     contents_ml = round(dice.uniform(1.5, 4.0), 3) if "empty-reservoir" in names or dice.random() < 0.3 else 10.0
     contents_ml = round(round(contents_ml / 0.0005) * 0.0005, 4)
@@ -373,11 +374,28 @@ def table(ended: list[Ended]) -> str:
     return "\n".join(lines)
 
 
-def campaign(jobs: list[tuple[int, int, tuple[str, ...] | None]], workers: int) -> list[Ended]:
-    if workers <= 1:
-        return [one(job) for job in jobs]
-    with ProcessPoolExecutor(workers) as pool:
-        return list(pool.map(one, jobs, chunksize=8))
+def campaign(jobs: list[tuple[int, int, tuple[str, ...] | None]], workers: int, log: Path | None = None) -> list[Ended]:
+    """Run them all; `log` gets a JSON line for each as it ends, so that a long campaign can be looked at."""
+    ended: list[Ended] = []
+    with ExitStack() as held:
+        file = None if log is None else held.enter_context(log.open("a", encoding="utf-8"))
+        results = (
+            (one(job) for job in jobs)
+            if workers <= 1
+            else held.enter_context(ProcessPoolExecutor(workers)).map(one, jobs, chunksize=4)
+        )
+        for result in results:
+            ended.append(result)
+            if file is not None:
+                file.write(json.dumps(asdict(result)) + "\n")
+                file.flush()
+    return ended
+
+
+def read_log(log: Path) -> list[Ended]:
+    """What a campaign has logged so far."""
+    rows = [json.loads(line) for line in log.read_text(encoding="utf-8").splitlines()]
+    return [Ended(**{key: tuple(v) if isinstance(v, list) else v for key, v in row.items()}) for row in rows]
 
 
 def main() -> int:
@@ -388,17 +406,28 @@ def main() -> int:
     options.add_argument("--seed", type=int, default=1)
     options.add_argument("--jobs", type=int, default=1)
     options.add_argument("--only", nargs="*")
+    options.add_argument("--log", type=Path, help="a JSON line a run, as they end")
+    options.add_argument("--show", type=Path, help="run nothing: the table of such a log")
     options.add_argument("--recoverable", action="store_true")
     options.add_argument("--verbose", action="store_true")
     given = options.parse_args()
     began_s = time.monotonic()
-    free = campaign([(900_000 + n, given.seed, None) for n in range(given.fault_free)], given.jobs)
+    if given.show is not None:
+        everything = read_log(given.show)
+        return report([r for r in everything if not r.faults], [r for r in everything if r.faults], given.verbose)
+    free = campaign([(900_000 + n, given.seed, None) for n in range(given.fault_free)], given.jobs, given.log)
     kinds = tuple(given.only) if given.only else RECOVERABLE if given.recoverable else None
     jobs: list[tuple[int, int, tuple[str, ...] | None]] = []
     for n in range(given.first, given.first + given.runs):
         mix = kinds or (RECOVERABLE if n % 2 else RECOVERABLE + GRAVE)
         jobs.append((n, given.seed, mix))
-    ended = campaign(jobs, given.jobs)
+    status = report(free, campaign(jobs, given.jobs, given.log), given.verbose)
+    print(f"seed {given.seed}; {time.monotonic() - began_s:.0f} s")
+    return status
+
+
+def report(free: list[Ended], ended: list[Ended], verbose: bool) -> int:
+    """Print the table and every bar; 1 where a run was wrong."""
     print(table(free + ended))
     wrong = [r for r in free + ended if r.wrong]
     for r in wrong:
@@ -406,27 +435,19 @@ def main() -> int:
             f"run {r.number}: {', '.join(r.faults)}: {r.outcome} ({r.reason}): {'; '.join(r.wrong)}; "
             f"warnings {list(r.warnings)}"
         )
-    if given.verbose:
-        for r in ended:
-            print(
-                r.number,
-                r.faults,
-                r.outcome,
-                r.end_points,
-                r.reason[:150],
-                [w[:110] for w in r.warnings],
-                r.off_u and round(r.off_u, 1),
-            )
-    only_recoverable = [r for r in ended if r.faults and set(r.faults) <= set(RECOVERABLE)]
-    with_result = sum(r.outcome == "completed" and r.end_points > 0 for r in only_recoverable)
+    for r in ended if verbose else []:
+        off = None if r.off_u is None else round(r.off_u, 1)
+        print(r.number, r.faults, r.outcome, r.end_points, r.reason[:150], [w[:110] for w in r.warnings], off)
     if free:
         warned = sum(bool(r.warnings) for r in free)
         no_result = sum(not r.end_points for r in free)
         print(f"fault-free: {warned} of {len(free)} with a warning, {no_result} without a result")
         print(Counter(w[:60] for r in free for w in r.warnings))
-    if only_recoverable:
-        print(f"only recoverable faults: {with_result} of {len(only_recoverable)} end with a result")
-    print(f"{len(wrong)} of {len(free) + len(ended)} runs wrong; seed {given.seed}; {time.monotonic() - began_s:.0f} s")
+    recoverable = [r for r in ended if r.faults and set(r.faults) <= set(RECOVERABLE)]
+    if recoverable:
+        with_result = sum(r.outcome == "completed" and r.end_points > 0 for r in recoverable)
+        print(f"only recoverable faults: {with_result} of {len(recoverable)} end with a result")
+    print(f"{len(wrong)} of {len(free) + len(ended)} runs wrong")
     return 1 if wrong else 0
 
 
