@@ -1,7 +1,8 @@
 """How much processor time it takes to start: ratios to an empty Python process, interleaved, medians.
 
 Run with `python tests/benchmarks/startup.py`; bars: `halfdrop --help` 3.5, `halfdrop runs list --json` on a lab folder
-of some records 6. Needs POSIX. Processor time of the children (user and system) is counted, so that other load matters little.
+of some records 6. Needs POSIX. Processor time of the children (user and system) is counted, so that other load matters
+little.
 """
 
 from __future__ import annotations
