@@ -28,6 +28,7 @@ from controller.evaluation.samplechain import Inputs, Reported, Titration
 from controller.evaluation.statistics import grubbs, summarise
 from controller.titration.plan import ReportAs, RunPlan
 from controller.titration.traceability import Traceability
+from simulators.constants import ideal_slope_mv
 
 _FEWEST_FOR_GRUBBS = 3
 
@@ -37,11 +38,13 @@ def amount_of_plan(plan: RunPlan, result: dict[str, Any]) -> dict[str, Any] | No
 
     Args:
         plan: the run's plan.
-        result: the run's result with its end points; warnings about the amount are added to it.
+        result: the run's result with its end points; the uncertainty of their pH and warnings about the amount are
+            added to it.
 
     Raises:
         HalfdropError: the amount cannot be computed from these numbers.
     """
+    add_ph_uncertainty(plan, result)
     report = plan.report_as
     if report is None or len(result["end_points"]) < report.end_point:
         return None
@@ -51,6 +54,25 @@ def amount_of_plan(plan: RunPlan, result: dict[str, Any]) -> dict[str, Any] | No
     result.setdefault("warnings", []).extend(w for w in warnings if w not in result.get("warnings", []))
     what = {"quantity": report.quantity, "substance": report.substance}
     return {**amount_to_json(found, seed=plan.seed or 1), **what}
+
+
+def add_ph_uncertainty(plan: RunPlan, result: dict[str, Any]) -> None:
+    """Add to each end point the standard uncertainty that the probe's calibration gives its pH.
+
+    pH = pH_iso - (E - E_iso) / (s k): of offset, slope and their covariance, at the temperature of the plan.
+    """
+    calibration = plan.probe.calibration
+    if calibration is None:
+        return
+    per_mv = 1.0 / (calibration.slope_fraction * ideal_slope_mv(plan.chemistry.temperature_c))
+    for point in result["end_points"]:
+        if point.get("ph") is None:
+            continue
+        per_slope = -(point["ph"] - calibration.isopotential_ph) / calibration.slope_fraction
+        variance = (per_mv * calibration.offset_standard_uncertainty_mv) ** 2
+        variance += (per_slope * calibration.slope_fraction_standard_uncertainty) ** 2
+        variance += 2.0 * per_mv * per_slope * calibration.slope_offset_covariance_mv
+        point["ph_standard_uncertainty"] = math.sqrt(max(0.0, variance))
 
 
 def amount_of_replicates(plans: Sequence[RunPlan], results: Sequence[dict[str, Any]]) -> dict[str, Any]:

@@ -14,6 +14,7 @@ from configs.benchfile import BenchSettings
 from configs.method import MethodSettings
 from configs.settings import shipped_bench, shipped_method
 from controller.amountinputs import burette_of, titrant_of
+from controller.amounts import add_ph_uncertainty
 from controller.calibration.findings import Finding, Verdict
 from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import common, no_pump, probe_of, vessel_of
@@ -27,6 +28,7 @@ from controller.planning import SampleChoice, expected_account, make_plan
 from controller.recordfile import new_record
 from controller.runner import run
 from controller.stopping import StopSwitch
+from controller.titration.plan import ProbeCalibration
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
 from drivers.clock import ManualClock
 from drivers.operator import AnswersOperator
@@ -225,3 +227,33 @@ def test_an_expired_standard_is_named(tmp_path: Path) -> None:
     assert any(
         "standard KHP-2026-03: expired on 2026-06-30" in t for t in found(tmp_path, of=old).traceability.warnings
     )
+
+
+def test_the_ph_of_an_end_point_has_the_uncertainty_of_the_line(tmp_path: Path) -> None:
+    from controller.calibration.electrode import BufferPoint, fit_line, ph_from
+    from simulators.constants import ideal_slope_mv
+
+    slope_mv = ideal_slope_mv(25.0)
+    points = [
+        BufferPoint(buffer=str(ph), ph=ph, standard_uncertainty_ph=0.01, temperature_c=25.0,
+                    potential_mv=-slope_mv * (ph - 7.0), standard_uncertainty_mv=0.1)
+        for ph in (4.0, 7.0, 10.01)
+    ]  # fmt: skip
+    line = fit_line(points)
+    calibration = ProbeCalibration(
+        slope_fraction=line.slope_fraction,
+        isopotential_ph=line.isopotential.ph,
+        isopotential_mv=line.isopotential_mv,
+        slope_fraction_standard_uncertainty=line.covariance[1][1] ** 0.5,
+        offset_standard_uncertainty_mv=line.covariance[0][0] ** 0.5,
+        slope_offset_covariance_mv=line.covariance[0][1],
+    )
+    plan = make_plan(
+        method(), bench(), SampleChoice(), pump=expected_account(bench()), probe_identity="p",
+        in_force=replace(found(tmp_path), probe=calibration),
+    )  # fmt: skip
+    result: dict[str, Any] = {"end_points": [{"ph": 8.3}, {"ph": None}]}
+    add_ph_uncertainty(plan, result)
+    read = ph_from(line, -slope_mv * 1.3 * line.slope_fraction + line.isopotential_mv, 25.0)
+    assert result["end_points"][0]["ph_standard_uncertainty"] == pytest.approx(read.from_line, rel=1e-6)
+    assert "ph_standard_uncertainty" not in result["end_points"][1]
