@@ -72,6 +72,7 @@ class PumpSettings(PortSettings):
     highest_rate_ml_min: float = number(0.01, 200, "rate that no method can pass", default=10.0)
     refill: Literal["valve", "by-hand", "none"] = Field(default="valve", description="how the syringe is filled again")
     reservoir_ml: float = number(0, 100000, "titrant in the reservoir bottle when it was last changed", default=0.0)
+    reservoir_changed_utc: str | None = words("when that was, UTC, in quotes; change it with the bottle", default=None)
     position_sd_ml: float = number(0, 1, "standard deviation of the slowly varying position error", default=0.0009)
     position_correlation_ml: float = number(0.0001, 100, "volume over which the position error varies", default=0.05)
     dose_sd_ml: float = number(0, 1, "standard deviation of the error of each dose", default=0.00045)

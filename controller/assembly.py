@@ -60,6 +60,7 @@ class OpenBench:
     pump_device: Device | None = None
     faults: FaultScript | None = None
     notify: NotifySettings | None = None
+    reservoir_told: bool = True
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -297,6 +298,7 @@ class _Opener:
                 contents_ml=status.contents_ml,
                 reservoir_ml=bench.pump.reservoir_ml if status.reservoir_ml is None else status.reservoir_ml,
             ),
+            reservoir_told=status.reservoir_ml is not None,
             probe_identity=probe_identity.key,
             stop=self.stop,
             traffic=traffic,

@@ -16,6 +16,7 @@ from controller.commands.output import print_json
 from controller.commands.present import at_the_bench
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
 from controller.commands.signals import pulling
+from controller.commands.titrant import titrant_counted
 from controller.commands.watching import watching
 from controller.inforce import find_in_force, utc_day
 from controller.journal import Journal
@@ -95,6 +96,7 @@ def titrate_once(
         for identity in (bench.account.identity, bench.probe_identity):
             held.enter_context(lock_device(identity, {"lab": str(lab.path)}))
         refuse_unclosed(lab.runs, bench.account.identity)
+        bench = held.enter_context(titrant_counted(lab, picked.bench.pump, bench))
         plan, hashes = _planned(picked, lab, choice, bench, replicate)
         if response_check is not None:
             plan = replace(plan, response_check=response_check)
