@@ -15,6 +15,7 @@ from configs.marked import LARGEST_FILE_BYTES, Marked, Trap, UnreadableYamlError
 from configs.nearest import did_you_mean
 
 Model = TypeVar("Model", bound=Settings)
+_NOT_TEXT = ("number", "whole number", "true or false")
 _DECIMAL_COMMA = re.compile(r"[-+]?\d+,\d+")
 
 
@@ -43,7 +44,7 @@ def parse(data: bytes, model: type[Model], *, where: str) -> Model:
         SettingsError: anything is wrong; every problem is listed.
     """
     document, traps = read_document(data, where=where)
-    problems = [Problem(trap.line, trap.column, trap.key, trap.text) for trap in traps]
+    problems = [Problem(trap.line, trap.column, trap.key, _trap_text(trap, model)) for trap in traps]
     trapped = {(trap.line, trap.column) for trap in traps}
     try:
         settings = model.model_validate(document.plain())
@@ -175,6 +176,15 @@ def _text(kind: str, got: Any, context: dict[str, Any], model: type[Settings], l
     elif wanted == "whole number" and isinstance(got, float):
         return f"got {got!r}, allowed: {allowed}, without a decimal point"
     return f"got {shown(got)}, allowed: {allowed}{hint}"
+
+
+def _trap_text(trap: Trap, model: type[Settings]) -> str:
+    """Return what was refused, and what the setting there may be where that is no text (quotes would not help)."""
+    if trap.got is None:
+        return trap.text
+    location: Location = tuple(int(part) - 1 if part.isdigit() else part for part in re.findall(r"[^.\[\]]+", trap.key))
+    kind = kind_of(field_at(model, location)[1])
+    return f"{trap.got}, allowed: {allowed_at(model, location)}" if kind in _NOT_TEXT or " | " in kind else trap.text
 
 
 def _dotted(location: Location) -> str:

@@ -69,12 +69,16 @@ class UnreadableYamlError(ValueError):
 
 @dataclass(frozen=True, slots=True)
 class Trap:
-    """Something refused, where, under which key, and why; reading went on after it."""
+    """Something refused, where, under which key, and why; reading went on after it.
+
+    `got`: of a plain value, the part of `text` that says what stands there.
+    """
 
     line: int
     column: int
     key: str
     text: str
+    got: str | None = None
 
 
 def read_marked(data: bytes, *, all_text: bool = False) -> tuple[Marked | None, list[Trap]]:
@@ -190,18 +194,18 @@ class _Reader:
         for pattern, what, instead in _TRAPS:
             if pattern.fullmatch(text):
                 allowed = f'{instead} "{text}" in quotes'.strip()
-                self._refuse(*_place(event), key, f"got {text} ({what}), allowed: {allowed}")
+                self._refuse(*_place(event), key, f"allowed: {allowed}", got=f"got {text} ({what})")
                 return None
         if _INTEGER.fullmatch(text) and len(text) < LONGEST_SHOWN:
             return int(text)
         if _NUMBER.fullmatch(text):
             if math.isinf(number := float(text)):
-                self._refuse(*_place(event), key, f"got {text}, allowed: a finite number")
+                self._refuse(*_place(event), key, "allowed: a finite number", got=f"got {text}")
             return number
         return text
 
-    def _refuse(self, line: int, column: int, key: str, text: str) -> None:
-        self.traps.append(Trap(line, column, key, text))
+    def _refuse(self, line: int, column: int, key: str, text: str, *, got: str | None = None) -> None:
+        self.traps.append(Trap(line, column, key, text if got is None else f"{got}, {text}", got))
 
 
 def shown(value: object) -> str:

@@ -128,19 +128,23 @@ def test_the_text_that_the_cases_start_from_is_right() -> None:
         ),
         pytest.param(
             "settling: {rule: NO}",
-            'm.yaml:7:18: settling.rule: got NO (a yes-or-no word to YAML), allowed: true or false, or "NO" in quotes',
+            "m.yaml:7:18: settling.rule: got NO (a yes-or-no word to YAML), allowed: "
+            "lag-corrected | extrapolated | stability-limit | fixed-wait",
             id="yes-or-no word, told once",
         ),
         pytest.param(
+            "temperature_c: no",
+            "m.yaml:7:16: temperature_c: got no (a yes-or-no word to YAML), allowed: 0 to 60 °C",
+            id="yes-or-no word where a number belongs",
+        ),
+        pytest.param(
             "limits: {run_time_s: 12:30}",
-            "m.yaml:7:22: limits.run_time_s: got 12:30 (a number to base 60 to YAML), allowed: a plain number, "
-            'or "12:30" in quotes',
+            "m.yaml:7:22: limits.run_time_s: got 12:30 (a number to base 60 to YAML), allowed: 10 to 86400 s",
             id="time of day",
         ),
         pytest.param(
             "limits: {titrant_ml: .inf}",
-            "m.yaml:7:22: limits.titrant_ml: got .inf (no finite number), allowed: a finite number, or "
-            '".inf" in quotes',
+            "m.yaml:7:22: limits.titrant_ml: got .inf (no finite number), allowed: above 0 up to 1000 mL",
             id="infinity",
         ),
         pytest.param(
