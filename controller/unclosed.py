@@ -10,7 +10,11 @@ from typing import Any
 from configs.errors import HalfdropError
 from controller.journal import Clock, encode, sealed, utc_text
 from controller.lock import sync_to_disk
-from controller.record import list_records, read_record, summarise, verify_bytes
+from controller.record import NotARecordError, list_records, read_record, summarise, verify_bytes
+
+_DAMAGED_REMEDY = (
+    "Look at bench and vessel; then restore the record from a backup, or move the file out of runs/ and keep it"
+)
 
 
 class UnclosedRunError(HalfdropError):
@@ -18,10 +22,13 @@ class UnclosedRunError(HalfdropError):
 
     def __init__(self, records: list[Path]) -> None:
         names = ", ".join(record.stem for record in records)
+        damaged = _is_damaged(records[0])
         super().__init__(
-            f"a run was left open: {names}",
+            f"a run was left open: {names}{' (its header is damaged)' if damaged else ''}",
             where="bench",
-            remedy=f"Look at bench and vessel, then go on with it: halfdrop resume {records[0].stem}, "
+            remedy=_DAMAGED_REMEDY
+            if damaged
+            else f"Look at bench and vessel, then go on with it: halfdrop resume {records[0].stem}, "
             f"or close it: halfdrop runs close {records[0].stem}",
         )
         self.records = records
@@ -30,7 +37,9 @@ class UnclosedRunError(HalfdropError):
 def unclosed(runs: Path, pump_identity: str | None = None) -> list[Path]:
     """Return the records without a closing line, oldest first.
 
-    Hold the lab folder's lock: otherwise one of them may be a run that still goes on.
+    Hold the lab folder's lock: otherwise one of them may be a run that still goes on. A record whose header is damaged
+    counts, for every pump, once a line follows the header; a header alone, whole or torn, is on the medium before
+    anything moves.
 
     Args:
         runs: folder of the records.
@@ -39,9 +48,10 @@ def unclosed(runs: Path, pump_identity: str | None = None) -> list[Path]:
     found = []
     for path in list_records(runs):
         told = summarise(path)
-        if not told["readable"] or told["outcome"] is not None:
-            continue
-        if pump_identity is None or _pump_of(path) == pump_identity:
+        if not told["readable"]:
+            if _is_damaged(path):
+                found.append(path)
+        elif told["outcome"] is None and pump_identity in (None, _pump_of(path)):
             found.append(path)
     return found
 
@@ -74,6 +84,8 @@ def close_record(path: Path, *, clock: Clock, operator_name: str | None, reason:
         NotARecordError: it is no record.
         HalfdropError: it is closed already, or was edited.
     """
+    if _is_damaged(path):
+        raise HalfdropError("its header is damaged", where=str(path), remedy=_DAMAGED_REMEDY)
     read_record(path)
     data = path.read_bytes()
     found = verify_bytes(data)
@@ -105,6 +117,31 @@ def close_record(path: Path, *, clock: Clock, operator_name: str | None, reason:
         sync_to_disk(file.fileno())
     path.with_suffix(".reserve").unlink(missing_ok=True)
     return closing
+
+
+def _is_damaged(path: Path) -> bool:
+    """Is it the record of a run that went on behind its header and has no end, and whose header cannot be read?"""
+    try:
+        read_record(path)
+    except NotARecordError:
+        pass
+    else:
+        return False
+    try:
+        lines = path.read_bytes().split(b"\n")[:-1]
+    except OSError:
+        return True  # nobody knows
+    later = [_object(line) for line in lines[1:]]
+    of_a_run = any(entry is not None and "previous_sha256" in entry for entry in later)
+    return of_a_run and (later[-1] is None or "closing" not in later[-1])
+
+
+def _object(line: bytes) -> dict[str, Any] | None:
+    try:
+        found = json.loads(line)
+    except (ValueError, RecursionError):
+        return None
+    return found if isinstance(found, dict) else None
 
 
 def _pump_of(path: Path) -> str | None:

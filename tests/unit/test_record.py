@@ -318,3 +318,36 @@ def test_a_pump_with_an_open_run_starts_nothing(tmp_path: Path) -> None:
         refuse_unclosed(tmp_path, "Orchard Burette 0001")
     close_record(path, clock=ManualClock(), operator_name=None, reason="seen to")
     refuse_unclosed(tmp_path, "Orchard Burette 0001")
+
+
+HEADER_LENGTH = len(OPEN.splitlines(keepends=True)[0])
+
+
+def test_a_run_left_open_counts_though_its_header_is_damaged(tmp_path: Path) -> None:
+    """Whose pump it was nobody can read any more: it counts for every one, and is not closed over the damage."""
+    path = left_open(tmp_path, "2026-b.jsonl", b"{" + b"?" * (HEADER_LENGTH - 2) + OPEN[HEADER_LENGTH - 1 :])
+    assert unclosed(tmp_path) == unclosed(tmp_path, "Another 9") == [path]
+    with pytest.raises(UnclosedRunError, match=r"2026-b \(its header is damaged\).*move the file out of runs"):
+        refuse_unclosed(tmp_path, "Another 9")
+    before = path.read_bytes()
+    with pytest.raises(HalfdropError, match=r"its header is damaged.*backup"):
+        close_record(path, clock=ManualClock(), operator_name=None, reason="x")
+    assert path.read_bytes() == before
+
+
+def test_a_torn_last_line_behind_a_damaged_header_is_an_open_run_too(tmp_path: Path) -> None:
+    path = left_open(tmp_path, "2026-b.jsonl", b"?" * (HEADER_LENGTH - 1) + OPEN[HEADER_LENGTH - 1 : -5])
+    assert unclosed(tmp_path) == [path]
+
+
+def test_a_closed_run_with_a_damaged_header_is_no_open_one(tmp_path: Path) -> None:
+    left_open(tmp_path, "2026-a.jsonl", b"?" + CLOSED[1:])
+    assert unclosed(tmp_path) == []
+
+
+@pytest.mark.parametrize("length", [0, 1, HEADER_LENGTH // 2, HEADER_LENGTH - 2])
+def test_a_record_torn_in_its_header_is_none_because_nothing_had_moved(tmp_path: Path, length: int) -> None:
+    """The header is on the medium before anything leaves the program."""
+    left_open(tmp_path, "2026-b.jsonl", OPEN[:length])
+    assert unclosed(tmp_path) == []
+    refuse_unclosed(tmp_path, "Orchard Burette 0001")
