@@ -60,6 +60,9 @@ TOXIC_GAS = Question(
 )
 
 
+LONGEST_SAMPLE_ID = 200
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class SampleChoice:
     """What the operator says of the sample; None: as the method says."""
@@ -148,7 +151,7 @@ def plan_sample(method: MethodSettings, choice: SampleChoice) -> Sample:
     """Return the sample as taken.
 
     Raises:
-        HalfdropError: no amount, an amount of the wrong kind, or more sample than liquid in the vessel.
+        HalfdropError: no amount, one of the wrong kind, more sample than liquid in the vessel, or an id that is none.
     """
     settings = method.sample
     where = f"sample of method {method.name}"
@@ -170,6 +173,12 @@ def plan_sample(method: MethodSettings, choice: SampleChoice) -> Sample:
     initial_ml = settings.initial_volume_ml if choice.initial_volume_ml is None else choice.initial_volume_ml
     steps = method.preparation.dilutions if method.preparation is not None else ()
     in_vessel_ml = steps[-1].aliquot_ml if steps else amount if by_volume else 0.0
+    if given is not None and in_vessel_ml == given > initial_ml > 0 and choice.initial_volume_ml is None:
+        raise HalfdropError(
+            f"got {given:g} mL of sample, allowed: at most {initial_ml:g} mL, all liquid in the vessel by the method",
+            where=where,
+            remedy=f"Correct {option}, or say with --initial-volume-ml what sample and water are together",
+        )
     if not (math.isfinite(initial_ml) and initial_ml > 0) or initial_ml < in_vessel_ml:
         raise HalfdropError(
             f"initial volume: got {initial_ml!r} mL, allowed: all liquid in the vessel, sample and water together",
@@ -177,7 +186,7 @@ def plan_sample(method: MethodSettings, choice: SampleChoice) -> Sample:
             remedy="Correct --initial-volume-ml",
         )
     return Sample(
-        sample_id=choice.sample_id or method.simulated_sample or method.name,
+        sample_id=_sample_id(choice, where) or method.simulated_sample or method.name,
         initial_volume_ml=initial_ml,
         volume_ml=amount if by_volume else None,
         mass_g=None if by_volume else amount,
@@ -186,6 +195,24 @@ def plan_sample(method: MethodSettings, choice: SampleChoice) -> Sample:
         purity_fraction=settings.purity_fraction,
         purity_standard_uncertainty=settings.purity_standard_uncertainty,
     )
+
+
+def _sample_id(choice: SampleChoice, where: str) -> str | None:
+    """Return the sample's id as given; records, reports and tables must be able to hold it."""
+    sample_id = choice.sample_id
+    if sample_id is None:
+        return None
+    if not sample_id.strip() or len(sample_id) > LONGEST_SAMPLE_ID:
+        raise HalfdropError(
+            f"the sample's id has {len(sample_id)} characters, allowed: 1 to {LONGEST_SAMPLE_ID}, not all blank",
+            where=where,
+            remedy="Correct --sample-id, or leave it out",
+        )
+    if any("\ud800" <= character <= "\udfff" for character in sample_id):
+        raise HalfdropError(
+            "the sample's id holds bytes that are no text (not UTF-8)", where=where, remedy="Type --sample-id again"
+        )
+    return sample_id
 
 
 def _titrant(method: MethodSettings, known: InForce) -> Titrant:

@@ -10,7 +10,7 @@ from typing import Any
 from configs.errors import HalfdropError, SettingsError
 from configs.method import MethodSettings
 from configs.nearest import did_you_mean
-from controller.planning import SampleChoice
+from controller.planning import LONGEST_SAMPLE_ID, SampleChoice
 from controller.tablefile import Row, Table, TableError, decimal_mark, number, read_table
 
 #: names of the columns, as they may be written
@@ -24,7 +24,6 @@ COLUMNS: dict[str, tuple[str, ...]] = {
 _TAKEN_BY = {"volume_ml": "volume", "sample_volume_ml": "volume", "mass_g": "mass", "sample_mass_g": "mass"}
 MOST_REPLICATES = 20
 MOST_TITRATIONS = 1000
-LONGEST_ID = 100
 LARGEST_AMOUNT = 5000.0
 
 
@@ -152,8 +151,8 @@ class _Reader:
     def _item(self, row: Row, methods: dict[str, MethodSettings]) -> tuple[SeriesItem | None, list[str]]:
         problems: list[str] = []
         sample_id = self._cell(row, "sample_id")
-        if not sample_id or len(sample_id) > LONGEST_ID or not sample_id.isprintable():
-            problems.append(f"id: got {sample_id[:40]!r}, allowed: 1 to {LONGEST_ID} printable characters")
+        if not sample_id or len(sample_id) > LONGEST_SAMPLE_ID or not sample_id.isprintable():
+            problems.append(f"id: got {sample_id[:40]!r}, allowed: 1 to {LONGEST_SAMPLE_ID} printable characters")
         name = self._cell(row, "method") or self.usual_method
         method = self._method(name, methods, problems)
         amount = self._amount(row, method, problems)

@@ -96,3 +96,26 @@ def test_without_a_calibration_a_method_in_ph_is_refused() -> None:
 def test_an_amount_that_does_not_fit_is_refused(name: str, choice: SampleChoice, says: str) -> None:
     with pytest.raises(HalfdropError, match=says):
         planned(name, choice)
+
+
+def test_a_sample_larger_than_the_liquid_in_the_vessel_is_told_as_it_was_typed() -> None:
+    with pytest.raises(HalfdropError, match=r"got 1e\+09 mL of sample, allowed: at most 50 mL.*--sample-volume-ml"):
+        planned("juice-acidity", SampleChoice(volume_ml=1e9))
+    with pytest.raises(HalfdropError, match=r"initial volume: got 20.0 mL.*--initial-volume-ml"):
+        planned("juice-acidity", SampleChoice(volume_ml=30.0, initial_volume_ml=20.0))
+
+
+@pytest.mark.parametrize("sample_id", ["", " ", "x" * 201])
+def test_an_id_is_neither_empty_nor_endless(sample_id: str) -> None:
+    with pytest.raises(HalfdropError, match=rf"{len(sample_id)} characters, allowed: 1 to 200.*--sample-id"):
+        planned("juice-acidity", SampleChoice(sample_id=sample_id))
+
+
+def test_an_id_of_bytes_that_are_no_text_is_refused() -> None:
+    with pytest.raises(HalfdropError, match=r"no text \(not UTF-8\).*--sample-id"):
+        planned("juice-acidity", SampleChoice(sample_id="press \udcff"))
+
+
+@pytest.mark.parametrize("sample_id", ["x" * 200, "Most č. 3 🍏", "=press\x1b[31m"])
+def test_any_other_text_is_an_id(sample_id: str) -> None:
+    assert planned("juice-acidity", SampleChoice(sample_id=sample_id)).sample.sample_id == sample_id

@@ -61,7 +61,7 @@ def test_lines_become_items(tmp_path: Path):
         pytest.param("b,ten,,", "amount: got 'ten', allowed: a number", id="a word"),
         pytest.param("b,=1+1,,", "amount: '=1+1' is a formula, not a number", id="formula"),
         pytest.param("A,1,,", "id: 'A' stands in line 2 already", id="doubled id, other case"),
-        pytest.param(",1,,", "id: got '', allowed: 1 to 100 printable characters", id="no id"),
+        pytest.param(",1,,", "id: got '', allowed: 1 to 200 printable characters", id="no id"),
         pytest.param("b,1,,0", "replicates: got '0', allowed: a whole number from 1 to 20", id="no replicate"),
         pytest.param("b,1,,2.5", "replicates: got '2.5'", id="half a replicate"),
         pytest.param("b,1,nothing,", "method: no method 'nothing'", id="unknown method"),
@@ -144,7 +144,7 @@ def test_a_series_runs_and_is_summed_up(lab: Path, capsys: pytest.CaptureFixture
 def test_nothing_moves_where_a_line_is_wrong(lab: Path, capsys: pytest.CaptureFixture[str]):
     # 90 mL of sample do not fit into the 50 mL that the method has in the vessel
     assert run(lab, samples(lab, "id,amount\na,10\nb,90\n")) == 2
-    assert "samples.csv:3: amount: initial volume" in capsys.readouterr().err
+    assert "samples.csv:3: amount: got 90 mL of sample, allowed: at most 50 mL" in capsys.readouterr().err
     assert not list((lab / "runs").glob("*.jsonl"))
     assert not (lab / "series").exists()
 
