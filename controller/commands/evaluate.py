@@ -15,6 +15,7 @@ from controller.evaluate_record import evaluate_record
 from controller.labfolder import find_lab
 
 DONE, NOT_TRUSTED = 0, 1
+_SETTINGS_SUFFIXES = (".yaml", ".yml")
 _OPTIONS = (
     "volume_column",
     "signal_column",
@@ -64,6 +65,12 @@ def _record(given: argparse.Namespace) -> dict[str, Any]:
 
 
 def _table(given: argparse.Namespace) -> dict[str, Any]:
+    if Path(given.file).suffix.lower() in _SETTINGS_SUFFIXES:
+        raise HalfdropError(
+            "a file of settings, no table of volume and pH or potential",
+            where=given.file,
+            remedy="Name a record or a CSV file; a solution file's curve is computed by 'halfdrop predict'",
+        )
     if given.add:
         raise HalfdropError(
             "--add keeps an evaluation beside a record, and this is none",

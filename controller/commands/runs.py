@@ -9,7 +9,7 @@ from pathlib import Path
 from configs.errors import HalfdropError
 from controller.commands.output import amount_text, print_json, print_table, say, volume_text
 from controller.labfolder import Lab, find_lab
-from controller.record import list_records, printable, read_record, summarise
+from controller.record import NotARecordError, Verification, list_records, printable, read_record, summarise
 from controller.record import verify as verify_record
 from controller.reevaluation import AddedEvaluation, added_evaluations
 
@@ -18,6 +18,8 @@ if TYPE_CHECKING:
     from typing import Any
 
 SUFFIX = ".jsonl"
+#: longest sample id in a table; the whole one stands in the record
+LONGEST_CELL = 40
 #: stands for the newest record of the lab folder
 LATEST = "latest"
 DONE, CHECK_FAILED = 0, 1
@@ -85,9 +87,9 @@ def _show_budget(budget: dict[str, Any] | None) -> None:
 
 
 def verify(given: argparse.Namespace) -> int:
-    """Tell of each record whether it is intact, edited, torn or cut; exit status 1 where one is not intact."""
+    """Tell of each record whether it is intact, edited, torn, cut or unreadable; exit status 1: one is not intact."""
     paths = [record_path(name, given) for name in given.run] if given.run else list_records(_lab(given).runs)
-    found = [(path, verify_record(path)) for path in paths]
+    found = [(path, _judged(path)) for path in paths]
     if given.json:
         print_json({"runs": [{"run": path.stem, "path": str(path), **one.to_json()} for path, one in found]})
     else:
@@ -95,6 +97,14 @@ def verify(given: argparse.Namespace) -> int:
             print(f"{path.stem}: {one.state}: {printable(one.what)}")
         print("Intact means: as the program wrote it. Whoever rewrites every hash makes a new record.")
     return DONE if all(one.state == "intact" for _, one in found) else CHECK_FAILED
+
+
+def _judged(path: Path) -> Verification:
+    """As `verify_record`; a file that cannot be read is a finding too, so that the others are judged."""
+    try:
+        return verify_record(path)
+    except NotARecordError as error:
+        return Verification("unreadable", lines=0, what=error.what)
 
 
 def export(given: argparse.Namespace) -> int:
@@ -195,8 +205,11 @@ def record_path(named: str, given: argparse.Namespace) -> Path:
 
 
 def _lab(given: argparse.Namespace) -> Lab:
-    lab = find_lab(given.lab)
-    say(lab.says())
+    """Return the command's lab folder; which one it is is said once."""
+    lab: Lab | None = getattr(given, "lab_in_use", None)
+    if lab is None:
+        lab = given.lab_in_use = find_lab(given.lab)
+        say(lab.says())
     return lab
 
 
@@ -224,4 +237,6 @@ def _row(one: dict[str, Any]) -> tuple[str, ...]:
     volumes = ", ".join(f"{point['volume_ml']:.4f} mL" for point in one["end_points"])
     outcome = one["outcome"] or "open"
     amount = amount_text(one["result"]) if one["result"] else ""
-    return one["run"], printable(str(one["sample_id"])), outcome, volumes or "none", amount
+    sample = printable(str(one["sample_id"]))
+    sample = sample if len(sample) <= LONGEST_CELL else f"{sample[: LONGEST_CELL - 3]}..."
+    return one["run"], sample, outcome, volumes or "none", amount

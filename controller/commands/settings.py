@@ -76,9 +76,9 @@ def method_of(named: str, lab: Lab | None) -> tuple[Path | None, MethodSettings]
     if lab is None:
         return None, shipped_method(named)
     path = lab.methods / f"{named}.yaml"
-    if path.is_file():
+    if path.exists():  # a folder of that name is told so
         return path, load_method(path)
-    known = sorted(one.stem for one in lab.methods.glob("*.yaml"))
+    known = sorted(one.stem for one in lab.methods.glob("*.yaml") if one.is_file())
     raise HalfdropError(
         f"no method {named!r}{did_you_mean(named, known)}",
         where=str(lab.methods),
