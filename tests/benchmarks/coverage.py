@@ -95,6 +95,17 @@ class Hidden:
     titrant_mol_l: float
 
 
+@dataclass(frozen=True, slots=True)
+class Unknown:
+    """The sample: acid, its case on the nominal bench, protons titrated, content, and whether one burette is used."""
+
+    acid: str
+    case: NominalCase
+    protons: int
+    mol_l: float
+    one_burette: bool
+
+
 def even(rng: np.random.Generator, u: float) -> float:
     """An error of standard deviation `u`, evenly spread."""
     return float(rng.uniform(-1.0, 1.0)) * math.sqrt(3.0) * u
@@ -119,7 +130,8 @@ def laboratory(seed: int) -> Outcome:
     true_mol_l = concentration / protons * float(rng.uniform(0.9, 1.1))
     try:
         lot = _standardised(seed, hidden, rng)
-        plan, result = _sample_run(seed, case, acid, protons, true_mol_l, hidden, lot, one_burette=one_burette, rng=rng)
+        unknown = Unknown(acid, case, protons, true_mol_l, one_burette)
+        plan, result = _sample_run(seed, unknown, hidden, lot, rng=rng)
         found = determination_of([plan], [result])[0].budget
     except Exception as error:  # a laboratory without a result is counted, not hidden
         return Outcome(
@@ -183,17 +195,10 @@ def _standardised(seed: int, hidden: Hidden, rng: np.random.Generator) -> LotInF
 
 
 def _sample_run(
-    seed: int,
-    case: NominalCase,
-    acid: str,
-    protons: int,
-    true_mol_l: float,
-    hidden: Hidden,
-    lot: LotInForce,
-    *,
-    one_burette: bool,
-    rng: np.random.Generator,
+    seed: int, unknown: Unknown, hidden: Hidden, lot: LotInForce, *, rng: np.random.Generator
 ) -> tuple[RunPlan, dict[str, Any]]:
+    acid, case, protons, true_mol_l = unknown.acid, unknown.case, unknown.protons, unknown.mol_l
+    one_burette = unknown.one_burette
     known = substance(acid)
     taken_ml = SAMPLE_ML + hidden.pipette_ml
     mixture, pka = _off(dissolved(known, true_mol_l * taken_ml / INITIAL_ML, 25.0), rng)
