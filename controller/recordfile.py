@@ -32,13 +32,17 @@ class FileSink:
         flags = os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_APPEND | getattr(os, "O_BINARY", 0)
         self._descriptor = os.open(path, flags | getattr(os, "O_CLOEXEC", 0), 0o644)
         self.path, self._durable, self._size = path, durable, 0
-        self._reserve = path.with_suffix(".reserve") if durable else None
+        self._keep_reserve()
+
+    def _keep_reserve(self) -> None:
+        """Take the space for the last lines; a record that cannot have it is closed again."""
+        self._reserve = self.path.with_suffix(".reserve") if self._durable else None
         if self._reserve is not None:
             try:
                 with self._reserve.open("wb", buffering=0) as reserve:
                     reserve.write(bytes(RESERVE_BYTES))
                     sync_to_disk(reserve.fileno())
-                sync_folder(path.parent)
+                sync_folder(self.path.parent)
             except OSError:
                 self.close()
                 raise

@@ -10,9 +10,8 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.journal import Clock, Journal, Sink
-from controller.lock import sync_folder, sync_to_disk
 from controller.record import verify_bytes
-from controller.recordfile import RESERVE_BYTES, FileSink
+from controller.recordfile import FileSink
 
 
 class ReopenedSink(FileSink):
@@ -30,16 +29,7 @@ class ReopenedSink(FileSink):
         flags = os.O_WRONLY | os.O_APPEND | getattr(os, "O_BINARY", 0) | getattr(os, "O_CLOEXEC", 0)
         self._descriptor = os.open(path, flags)
         self.path, self._durable, self._size = path, durable, os.fstat(self._descriptor).st_size
-        self._reserve = path.with_suffix(".reserve") if durable else None
-        if self._reserve is not None:
-            try:
-                with self._reserve.open("wb", buffering=0) as reserve:
-                    reserve.write(bytes(RESERVE_BYTES))
-                    sync_to_disk(reserve.fileno())
-                sync_folder(path.parent)
-            except OSError:
-                self.close()
-                raise
+        self._keep_reserve()
 
 
 class ReopenedJournal(Journal):

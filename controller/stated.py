@@ -49,21 +49,8 @@ def preparation_of(method: MethodSettings) -> Preparation | None:
     given = method.preparation
     if given is None:
         return None
-    return Preparation(
-        moisture_fraction=given.moisture_fraction,
-        moisture_standard_uncertainty=given.moisture_standard_uncertainty,
-        density_g_ml=given.density_g_ml,
-        density_standard_uncertainty_g_ml=given.density_standard_uncertainty_g_ml,
-        dilutions=tuple(
-            Dilution(
-                made_up_to_ml=step.made_up_to_ml,
-                aliquot_ml=step.aliquot_ml,
-                made_up_standard_uncertainty_ml=step.made_up_standard_uncertainty_ml,
-                aliquot_standard_uncertainty_ml=step.aliquot_standard_uncertainty_ml,
-            )
-            for step in given.dilutions
-        ),
-    )
+    dilutions = tuple(Dilution(**step.model_dump()) for step in given.dilutions)
+    return Preparation(**given.model_dump(exclude={"dilutions"}), dilutions=dilutions)
 
 
 def excess_of(method: MethodSettings) -> Excess | None:
