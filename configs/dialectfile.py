@@ -18,7 +18,6 @@ Checksum = Literal["none", "sum", "exclusive-or"]
 Motion = Literal["moving", "standing", "fault"]
 Conversion = Literal["volume", "rate", "seconds", "delivered", "position", "contents", "reservoir", "remaining",
                      "potential", "ph", "temperature"]  # fmt: skip
-LONGEST_LINE_END = 2
 
 #: what a reply to each question must hold, and what else it may hold
 _MUST = {

@@ -15,7 +15,6 @@ PLAN_SCHEMA_VERSION = 1
 
 DosingPolicy = Literal["model-guided", "slope-adaptive", "equal-volumes"]
 SettlingRule = Literal["lag-corrected", "extrapolated", "stability-limit", "fixed-wait"]
-Direction = Literal["rising", "falling"]
 RefillRoute = Literal["valve", "by-hand", "none"]
 Signal = Literal["ph", "potential"]
 
