@@ -63,8 +63,8 @@ class RunView:
     @property
     def sample_id(self) -> str:
         """The sample, fit for a terminal."""
-        told = self.header.get("plan") or {}
-        return printable(str((told.get("sample") or {}).get("sample_id") or self.name))
+        sample = (self.header.get("plan") or {}).get("sample") or {}
+        return printable(str(sample.get("sample_id") or self.name))
 
     @property
     def method_title(self) -> str:
@@ -133,8 +133,6 @@ class RunView:
             case "refill":
                 self.phase = "filling the syringe"
                 self._say(f"filling the syringe: {entry.get('reason') or 'it is empty'}", "note")
-            case "prime":
-                self.phase = "priming"
             case "report":
                 self._report(str(entry["what"]), entry)
             case "finish":
@@ -191,8 +189,6 @@ class RunView:
                 self._say(f"{entry['device']}: {entry['what']}", "trouble")
                 if entry.get("lowest_ml") is not None and entry.get("highest_ml") is not None:
                     self._delivered((float(entry["lowest_ml"]) + float(entry["highest_ml"])) / 2.0)
-            case "back":
-                self._say(f"{entry['device']} answers again", "note")
             case "refilled":
                 self.contents_ml = entry.get("contents_ml", self.contents_ml)
                 self.reservoir_ml = entry.get("reservoir_ml", self.reservoir_ml)
@@ -255,7 +251,7 @@ class RunView:
 
     def _event(self, kind: str, entry: dict[str, Any]) -> None:
         if kind == "pump-stop":
-            confirmed = bool(entry.get("confirmed"))
+            confirmed = entry.get("confirmed") is True
             said = "the pump stands, confirmed" if confirmed else "NOT CONFIRMED STOPPED: look at the pump"
             self._say(f"pump stopped ({entry.get('why')}): {said}", "note" if confirmed else "trouble")
             if not confirmed:

@@ -181,13 +181,16 @@ class Stage:
         """Return what the terminal would show, without trailing blanks."""
         return "\n".join(strip.text.rstrip() for strip in app.screen._compositor.render_strips())
 
-    def check_snapshot(self, app: Any, name: str) -> None:
-        """Compare the screen with the kept text of this name; HALFDROP_KEEP_SNAPSHOTS=1 keeps the new one."""
+    async def check_snapshot(self, pilot: Any, name: str) -> None:
+        """Wait until the screen shows the kept text of this name; HALFDROP_KEEP_SNAPSHOTS=1 keeps what it shows."""
         path = Path(__file__).parent / "snapshots" / f"{name}.txt"
-        text = self.text(app) + "\n"
         if os.environ.get("HALFDROP_KEEP_SNAPSHOTS"):
-            path.write_text(text, encoding="utf-8")
-        assert text == path.read_text(encoding="utf-8"), f"the screen differs from {path.name}:\n{text}"
+            await pilot.pause(1.0)
+            path.write_text(self.text(pilot.app) + "\n", encoding="utf-8")
+        kept, deadline = path.read_text(encoding="utf-8"), time.monotonic() + 10.0
+        while (text := self.text(pilot.app) + "\n") != kept and time.monotonic() < deadline:
+            await pilot.pause(0.05)
+        assert text == kept, f"the screen differs from {path.name}:\n{text}"
 
     @contextmanager
     def listening(self, record: Path) -> Iterator[tuple[CommandPort, StopSwitch]]:

@@ -86,7 +86,7 @@ def test_a_step_is_asked_and_answered_on_the_screen(stage: Any, size: tuple[int,
             await app.switch_screen(CalibrationScreen(path))
             await stage.until(pilot, lambda: app.screen.view.question == PLACE)
             await pilot.pause()
-            stage.check_snapshot(app, f"calibration-{size[0]}x{size[1]}")
+            await stage.check_snapshot(pilot, f"calibration-{size[0]}x{size[1]}")
             await pilot.press("enter")
             await stage.until(pilot, lambda: isinstance(app.screen, Choice))
             await pilot.press("1")

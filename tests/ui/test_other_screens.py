@@ -44,7 +44,7 @@ def test_the_archive_as_it_looks(stage: Any, size: tuple[int, int]) -> None:
     async def steps(pilot: Any) -> None:
         await stage.until(pilot, lambda: len(app.screen._shown) == 3)
         await pilot.pause()
-        stage.check_snapshot(app, _name("archive", size))
+        await stage.check_snapshot(pilot, _name("archive", size))
 
     stage.drive(app, steps, size)
 
@@ -114,7 +114,7 @@ def test_two_runs_in_one_plot(stage: Any, size: tuple[int, int]) -> None:
         await pilot.press("c", "down", "down", "c")
         await stage.until(pilot, lambda: isinstance(app.screen, CompareScreen))
         await pilot.pause()
-        stage.check_snapshot(app, _name("compare", size))
+        await stage.check_snapshot(pilot, _name("compare", size))
         await pilot.press("y")
         assert "B - A: +0 g/L as malic acid, 0.0 times" in app.clipboard
         await pilot.press("q")
@@ -151,7 +151,7 @@ def test_the_set_up_as_it_looks(stage: Any, size: tuple[int, int]) -> None:
         await pilot.press("2")
         await stage.until(pilot, lambda: len(app.screen.query(AnswerField)) == 3)
         await pilot.pause()
-        stage.check_snapshot(app, _name("set-up", size))
+        await stage.check_snapshot(pilot, _name("set-up", size))
 
     stage.drive(app, steps, size)
 
@@ -252,7 +252,7 @@ def test_the_bench_as_it_looks(stage: Any, monkeypatch: pytest.MonkeyPatch, size
         await pilot.press("3")
         await stage.until(pilot, lambda: "Orchard [meter]" in stage.text(app))
         await pilot.pause()
-        stage.check_snapshot(app, _name("bench", size))
+        await stage.check_snapshot(pilot, _name("bench", size))
 
     stage.drive(app, steps, size)
 
@@ -323,7 +323,7 @@ def test_without_a_lab_folder_one_can_be_made(stage: Any, tmp_path: Path, size: 
 
     async def steps(pilot: Any) -> None:
         assert isinstance(app.screen, WelcomeScreen)
-        stage.check_snapshot(app, _name("welcome", size))
+        await stage.check_snapshot(pilot, _name("welcome", size))
         await pilot.press("m")
         await stage.until(pilot, lambda: isinstance(app.screen, Line))
         app.screen.query_one("Input").value = str(tmp_path / "new-lab")

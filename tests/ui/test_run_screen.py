@@ -28,10 +28,10 @@ def test_a_finished_run_as_it_looks(stage: Any, size: tuple[int, int]) -> None:
     async def steps(pilot: Any) -> None:
         await stage.until(pilot, lambda: app.screen.view.over)
         await pilot.pause()
-        stage.check_snapshot(app, f"run-finished-{_size_name(size)}")
+        await stage.check_snapshot(pilot, f"run-finished-{_size_name(size)}")
         await pilot.press("z")
         await pilot.pause()
-        stage.check_snapshot(app, f"run-near-{_size_name(size)}")
+        await stage.check_snapshot(pilot, f"run-near-{_size_name(size)}")
 
     stage.drive(app, steps, size)
 
@@ -46,7 +46,7 @@ def test_a_run_that_goes_on_as_it_looks(stage: Any, monkeypatch: pytest.MonkeyPa
     async def steps(pilot: Any) -> None:
         await stage.until(pilot, lambda: len(app.screen.view.points) == 16)
         await pilot.pause()
-        stage.check_snapshot(app, f"run-going-{_size_name(size)}")
+        await stage.check_snapshot(pilot, f"run-going-{_size_name(size)}")
 
     with stage.listening(script.path):
         stage.drive(app, steps, size)
