@@ -11,7 +11,7 @@ from typing import Any
 
 from controller.titration.actions import Decisions, Finish, Report
 from controller.titration.dosing import DosingPolicy, EqualVolumes, PlannedDose, local_slope
-from controller.titration.endpoint import EndPointWatch, FoundEndPoint
+from controller.titration.endpoint import EndPointWatch, end_point_report
 from controller.titration.exchange import EndOfRunError, Exchange, Talk
 from controller.titration.forecast import Forecast
 from controller.titration.limits import check_limits, largest_dose_ml
@@ -284,27 +284,13 @@ class _Run:
         found = self.watch.look(self.points, sound)
         if found is None:
             return
-        yield from self._report_end_point(found)
+        yield from self.world.say(end_point_report(found))
         self.forecast.next_end_point(found.volume_ml)
         if found.number >= self.plan.end_points.expected:
             if self.plan.end_points.stop_at_last:
                 raise EndOfRunError("completed", f"end point {found.number} of {self.plan.end_points.expected} found")
             return
         self.forecast.update(self.points)
-
-    def _report_end_point(self, found: FoundEndPoint) -> Talk[None]:
-        yield from self.world.say(
-            Report(
-                what="end-point",
-                text=f"end point {found.number} at {found.volume_ml:.4f} mL by {found.estimator}",
-                volume_ml=found.volume_ml,
-                standard_uncertainty_ml=found.standard_uncertainty_ml,
-                ph=found.ph,
-                potential_mv=found.potential_mv,
-                estimator=found.estimator,
-                end_point=found.number,
-            )
-        )
 
 
 RunState = _Run

@@ -8,6 +8,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from controller.evaluation.inverse import InverseFit
+from controller.titration.actions import Report
 from controller.titration.plan import RunPlan
 from controller.titration.points import Point
 from controller.titration.precision import near_ml, pump_precision_ml
@@ -30,6 +31,20 @@ class FoundEndPoint:
     estimator: str
     ph: float | None
     potential_mv: float | None
+
+
+def end_point_report(found: FoundEndPoint) -> Report:
+    """The report of a detected end point."""
+    return Report(
+        what="end-point",
+        text=f"end point {found.number} at {found.volume_ml:.4f} mL by {found.estimator}",
+        volume_ml=found.volume_ml,
+        standard_uncertainty_ml=found.standard_uncertainty_ml,
+        ph=found.ph,
+        potential_mv=found.potential_mv,
+        estimator=found.estimator,
+        end_point=found.number,
+    )
 
 
 class EndPointWatch:

@@ -29,8 +29,9 @@ class CoreCase:
         """Run the core in this world, every action and answer kept."""
         run = drive(self.plan, answer or self.world.answer, keep_entries=True)
         if not any(isinstance(answered, Failed) for _, answered in run.entries):
-            told = sum(answered.steps or 0 for _, answered in run.entries if isinstance(answered, Dosed))
             mechanism = self.world.bench.mechanism
+            dosed = [answered for _, answered in run.entries if isinstance(answered, Dosed)]
+            told = sum(round(d.volume_ml / mechanism.step_ml) if d.steps is None else d.steps for d in dosed)
             assert told == mechanism.tip_steps_total(self.world.now_s), "steps told and steps pushed differ"
         return run
 
