@@ -162,15 +162,6 @@ def open_desk(bench: BenchSettings, *, opening: Opening) -> Iterator[Calibration
     )
 
 
-def pump_identity_of(bench: BenchSettings, opening: Opening) -> str:
-    """Return who the pump is, without moving it: asked, or on a simulated bench known."""
-    if is_simulated(bench):
-        return simulated_identities(opening.place)[0].key
-    with open_burette(bench, opening=opening, stop=StopSwitch()) as opened:
-        assert opened.account is not None  # a pump was opened
-        return opened.account.identity
-
-
 def _simulated_clock(bench: BenchSettings, opening: Opening) -> tuple[Clock, int]:
     simulation = bench.simulation
     assert simulation is not None  # the bench file was checked

@@ -12,7 +12,7 @@ import json
 import os
 import re
 import sys
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from pathlib import Path
 from types import TracebackType
 from typing import Any
@@ -127,18 +127,6 @@ def lock_device(identity: str, details: Mapping[str, Any] | None = None, *, stat
     slug = re.sub(r"[^A-Za-z0-9]+", "-", identity).strip("-")[:40]
     name = f"{slug}-{hashlib.sha256(identity.encode()).hexdigest()[:12]}.lock"
     return lock_file((state or state_folder()) / "locks" / name, what=f"device {identity}", details=details)
-
-
-@contextlib.contextmanager
-def lock_bench(
-    lab: Path, identities: list[str], details: Mapping[str, Any], *, state: Path | None = None
-) -> Iterator[None]:
-    """Hold the lab folder's lock and every device's for as long as the block runs."""
-    with contextlib.ExitStack() as held:
-        held.enter_context(lock_lab(lab, details))
-        for identity in sorted(set(identities)):
-            held.enter_context(lock_device(identity, details, state=state))
-        yield
 
 
 def state_folder(environment: Mapping[str, str] | None = None, platform: str = sys.platform) -> Path:

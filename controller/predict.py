@@ -7,7 +7,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, TextIO
+from typing import TYPE_CHECKING
 
 from configs.catalogue import substance
 from configs.errors import HalfdropError
@@ -120,11 +120,6 @@ def curve_text(curve: PredictedCurve) -> str:
     """The curve as CSV: a header `volume_ml,ph`, pH with 12 decimals, a point a line, decimal points."""
     rows = (f"{volume!r},{ph:.12f}" for volume, ph in zip(curve.volume_ml, curve.ph, strict=True))
     return "\n".join((f"{VOLUME_COLUMN},ph", *rows, ""))
-
-
-def write_curve(curve: PredictedCurve, stream: TextIO) -> None:
-    """Write `curve_text` to a stream."""
-    stream.write(curve_text(curve))
 
 
 def read_volumes(path: str | Path) -> tuple[float, ...]:

@@ -44,11 +44,6 @@ class Exchanged:
     entry: dict[str, Any]
     answer: Observation | None
 
-    @property
-    def needs_answer(self) -> bool:
-        """True where the core waits for an observation."""
-        return self.entry.get("action") not in ("report", "finish")
-
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Difference:

@@ -149,15 +149,6 @@ class LagCascade:
         _, film, slow = self._advance(self._anchor(at_s), at_s)
         return film + self._share * (slow - film)
 
-    def lag_left_ml(self, at_s: float) -> float:
-        """Volume delivered less the volume seen."""
-        return self.delivered_ml(at_s) - self.seen_ml(at_s)
-
-    def seen_rate_ml_s(self, at_s: float) -> float:
-        """How fast the composition at the glass moves."""
-        bulk, film, slow = self.states(at_s)
-        return (1.0 - self._share) * (bulk - film) * self._b + self._share * (film - slow) * self._c
-
     def seen_with_derivatives(self, at_s: float) -> tuple[float, LagDerivatives]:
         """Composition at the glass and its derivatives by the constants, over the whole record.
 

@@ -115,10 +115,6 @@ class CalibrationLine:
     def _lever_mv(self) -> float:
         return ideal_slope_mv(self.temperature_c) * (7.0 - self.isopotential.ph)
 
-    def slope_mv_per_ph(self, temperature_c: float) -> float:
-        """Slope at a temperature, mV per pH unit (positive)."""
-        return self.slope_fraction * ideal_slope_mv(temperature_c)
-
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class PhValue:

@@ -16,7 +16,7 @@ import numpy as np
 
 from controller.report.series import GranSeries, Series
 
-INK, QUIET, HAIR = "#23281d", "#6a7060", "#c9c6b4"
+INK, QUIET = "#23281d", "#6a7060"
 AMBER, BLUE, GREEN = "#9a5b00", "#245a86", "#4b6b12"
 #: half the width of the window around an end point, as a share of its volume and at least, mL
 _WINDOW_SHARE, _SMALLEST_WINDOW_ML = 0.02, 0.05

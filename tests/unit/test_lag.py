@@ -84,7 +84,6 @@ def test_values_do_not_depend_on_the_order_of_questions():
 def test_everything_is_seen_in_the_end():
     cascade = filled(USUAL)
     assert cascade.seen_ml(1000.0) == pytest.approx(0.875, abs=1e-12)
-    assert cascade.lag_left_ml(1000.0) == pytest.approx(0.0, abs=1e-12)
     assert cascade.delivered_ml(15.0) == pytest.approx(0.525)
 
 
@@ -105,12 +104,6 @@ def test_derivatives_agree_with_differences(constants, at_s):
         high, low = (cascade.retuned(replace(constants, **{name: value * f})).seen_ml(at_s) for f in (1.0001, 0.9999))
         # in mL for a change of the constant by all of itself
         assert getattr(slopes, name) * value == pytest.approx((high - low) / 2e-4, abs=1e-8 + 2e-4 * abs(high - low))
-
-
-def test_the_rate_seen_is_the_slope_in_time():
-    cascade = filled(USUAL)
-    slope = (cascade.seen_ml(14.0005) - cascade.seen_ml(13.9995)) / 1e-3
-    assert cascade.seen_rate_ml_s(14.0) == pytest.approx(slope, rel=1e-6)
 
 
 def test_a_ramp_cut_short_is_as_one_that_was_never_longer():

@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 from configs.errors import HalfdropError
-from controller.lock import LockedError, holder_of, lock_bench, lock_device, lock_file, lock_lab, state_folder
+from controller.lock import LockedError, holder_of, lock_device, lock_file, lock_lab, state_folder
 
 ROOT = Path(__file__).resolve().parents[2]
 HOLD = """
@@ -56,18 +56,6 @@ def test_a_lab_folder_is_locked_for_writing(tmp_path: Path) -> None:
     (tmp_path / "runs").mkdir()
     with lock_lab(tmp_path), pytest.raises(LockedError, match="lab folder"):
         lock_lab(tmp_path)
-
-
-def test_a_bench_that_is_partly_in_use_leaves_nothing_locked(tmp_path: Path) -> None:
-    lab, state = tmp_path / "lab", tmp_path / "state"
-    with (
-        lock_device("probe", state=state),
-        pytest.raises(LockedError, match="device probe"),
-        lock_bench(lab, ["pump", "probe"], {}, state=state),
-    ):
-        pytest.fail("the probe is in use")
-    with lock_bench(lab, ["pump", "probe", "pump"], {}, state=state):
-        pass
 
 
 @pytest.mark.skipif(sys.platform == "win32", reason="POSIX modes")
