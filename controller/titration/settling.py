@@ -69,8 +69,8 @@ class SettlingRule(Protocol):
         ...
 
 
-class StabilityLimit:
-    """Accept when the slope of the last readings stays below a limit, between a shortest and a longest time."""
+class _LastReadings:
+    """Keeps the readings since the dose; its point is the mean of the last three, where they were taken."""
 
     def __init__(self, settling: Settling) -> None:
         self._settling = settling
@@ -81,6 +81,24 @@ class StabilityLimit:
         """See SettlingRule."""
         self._context = context
         self._readings = []
+
+    def learn(self, context: SettlingContext, accepted: Accepted) -> None:
+        """Nothing to learn."""
+
+    def _point(self, *, settled: bool = True, text: str = "") -> Accepted:
+        assert self._context is not None
+        last = self._readings[-3:]
+        return Accepted(
+            volume_ml=self._context.delivered_ml,
+            volume_sd_ml=0.0,
+            potential_mv=sum(e for _, e in last) / len(last),
+            settled=settled,
+            text=text,
+        )
+
+
+class StabilityLimit(_LastReadings):
+    """Accept when the slope of the last readings stays below a limit, between a shortest and a longest time."""
 
     def add(self, at_s: float, potential_mv: float) -> Accepted | None:
         """See SettlingRule."""
@@ -96,30 +114,12 @@ class StabilityLimit:
         stable = len(readings) >= rule.stability_readings and drift <= rule.stability_limit_mv_min
         if not stable and waited_s < rule.longest_s:
             return None
-        return Accepted(
-            volume_ml=context.delivered_ml,
-            volume_sd_ml=0.0,
-            potential_mv=sum(e for _, e in readings[-3:]) / len(readings[-3:]),
-            settled=stable,
-            text="" if stable else f"not settled: still {drift:.1f} mV/min after {waited_s:.0f} s",
-        )
-
-    def learn(self, context: SettlingContext, accepted: Accepted) -> None:
-        """Nothing to learn."""
+        text = "" if stable else f"not settled: still {drift:.1f} mV/min after {waited_s:.0f} s"
+        return self._point(settled=stable, text=text)
 
 
-class FixedWait:
+class FixedWait(_LastReadings):
     """Accept the mean of the last three readings after a set time."""
-
-    def __init__(self, settling: Settling) -> None:
-        self._settling = settling
-        self._context: SettlingContext | None = None
-        self._readings: list[tuple[float, float]] = []
-
-    def begin(self, context: SettlingContext) -> None:
-        """See SettlingRule."""
-        self._context = context
-        self._readings = []
 
     def add(self, at_s: float, potential_mv: float) -> Accepted | None:
         """See SettlingRule."""
@@ -128,16 +128,7 @@ class FixedWait:
         self._readings.append((at_s, potential_mv))
         if at_s - context.at_s < self._settling.fixed_wait_s - 1e-6:
             return None
-        last = self._readings[-3:]
-        return Accepted(
-            volume_ml=context.delivered_ml,
-            volume_sd_ml=0.0,
-            potential_mv=sum(e for _, e in last) / len(last),
-            settled=True,
-        )
-
-    def learn(self, context: SettlingContext, accepted: Accepted) -> None:
-        """Nothing to learn."""
+        return self._point()
 
 
 def slope_mv_min(readings: list[tuple[float, float]]) -> float:
