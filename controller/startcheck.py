@@ -7,6 +7,9 @@ from controller.calibration.plans import AnyPlan
 from controller.execution import Devices
 from drivers.errors import DeviceError
 
+#: times that a device of another name is asked again
+ASK_AGAIN = 2
+
 
 def check_devices(plan: AnyPlan, devices: Devices) -> tuple[dict[str, dict[str, str]], float]:
     """Ask pump and probe who they are and hold it against the plan; nothing moves.
@@ -19,6 +22,10 @@ def check_devices(plan: AnyPlan, devices: Devices) -> tuple[dict[str, dict[str, 
         HalfdropError: it is another device than the plan's, or it was started or used since the plan was made.
     """
     pump, probe, status = devices.pump.identify(), devices.probe.identify(), devices.pump.status()
+    for _ in range(ASK_AGAIN):  # a letter of a name may be garbled
+        if (pump.key, probe.key) == (plan.pump.identity, plan.probe.identity):
+            break
+        pump, probe = devices.pump.identify(), devices.probe.identify()
     for role, told, planned in (("pump", pump.key, plan.pump.identity), ("probe", probe.key, plan.probe.identity)):
         if told != planned:
             raise HalfdropError(

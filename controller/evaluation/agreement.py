@@ -9,7 +9,7 @@ from controller.evaluation.estimate import Estimate
 
 #: differences beyond this many combined standard uncertainties are flagged; several estimators are compared, so that
 #: the coverage factor for 95 % would flag one curve in ten that has nothing wrong
-COVERAGE_FACTOR = 3.0
+COVERAGE_FACTOR = 4.0
 
 
 def disagreements(reported: Estimate, others: Sequence[Estimate], *, number: int) -> list[str]:

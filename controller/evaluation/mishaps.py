@@ -25,6 +25,8 @@ Kind = Literal["step", "leak", "drift"]
 SURE_SDS = 4.5
 #: and what must be left of it where the constants are free
 SURE_SDS_FREE = 3.2
+#: from which it is believed by free constants alone, where the stated ones show at least a hint
+SURE_SDS_ALONE, HINTED_SDS = 6.0, 3.0
 #: share of the points that may lie anywhere: a bubble spoils some and leaves the others true
 STRAY_SHARE = 0.13
 FEWEST_STRAYS = 2
@@ -55,28 +57,25 @@ class Mishap:
     amount: float
 
 
-def contradiction(curve: Curve, fit: ModelFit, *, allowed: float = 1.0) -> float | None:
-    """Return the misfit (robust reduced chi-square, strays left out) of points that no acid or base could give.
+def believed(curve: Curve, fit: ModelFit, *, allowed: float = 1.0) -> ModelFit | None:
+    """Return the fit that describes the points: of the stated substance, else of one with constants of its own.
 
     Args:
         curve: the points.
         fit: of this curve, with the stated substance.
-        allowed: how many times the usual limits are allowed, where a known cause spreads the points.
+        allowed: how many times the usual limit is allowed to the stated substance, where a known cause spreads points.
 
     Returns:
-        None where the stated substance, or another of one or two constants, describes them.
+        None where the points are those of no acid or base with one or two constants.
     """
-    if len(curve.volume_ml) < FEWEST_POINTS:
-        return None
-    stated = misfit(fit)
-    if stated <= LARGEST_OF_STATED * allowed:
-        return None
+    if len(curve.volume_ml) < FEWEST_POINTS or misfit(fit) <= LARGEST_OF_STATED * allowed:
+        return fit
     for pka in _ANY_PKA:
         free = replace(curve, pka=pka, charge=0, counter_ion_charge=0)
         other = fit_charge_balance(free, priors=_ANY)
-        if other is not None and misfit(other) <= LARGEST_OF_ANY * allowed:
-            return None
-    return round(stated, 1)
+        if other is not None and misfit(other) <= LARGEST_OF_ANY:
+            return other
+    return None
 
 
 def misfit(fit: ModelFit) -> float:
@@ -97,16 +96,25 @@ def find_mishap(curve: Curve, fit: ModelFit, at_s: Array) -> Mishap | None:
         fit: of this curve, with the stated substance.
         at_s: when each point was taken, s, shape (n,).
     """
-    found = _most_likely(curve, fit, at_s, None, SURE_SDS)
+    found = _most_likely(curve, fit, at_s, None, HINTED_SDS)
     if found is None:
         return None
-    known = curve.pka or ()
+    known, freely = curve.pka or (), []
     for more in _MORE_PKA:
         freer = replace(curve, pka=tuple(sorted((*known, more))))
         other = fit_charge_balance(freer, priors=_ANY)
-        if other is not None and _most_likely(freer, other, at_s, _ANY, SURE_SDS_FREE) is None:
-            return None
-    return found
+        if other is not None:
+            shown = _most_likely(freer, other, at_s, _ANY, 0.0)
+            freely.append((0.0 if shown is None else shown.sds, shown or found, misfit(other)))
+    closest = min(freely, key=lambda one: one[2], default=(math.inf, found, 0.0))
+    # what runs away smoothly is what a wrong model leaves over too; a step is not
+    judges = [closest] if found.kind == "step" else freely
+    if found.sds > SURE_SDS and all(one[0] > SURE_SDS_FREE for one in judges):
+        return found
+    # a large step may hide from the stated constants behind what it does to the rest of the fit
+    steps = [one for one in freely if one[1].kind == "step"]
+    surest = max(steps, key=lambda one: one[0], default=(0.0, found, 0.0))
+    return surest[1] if surest[0] > SURE_SDS_ALONE else None
 
 
 def _most_likely(curve: Curve, fit: ModelFit, at_s: Array, priors: Priors | None, sure_sds: float) -> Mishap | None:

@@ -16,7 +16,7 @@ import numpy as np
 from controller.evaluation.agreement import COVERAGE_FACTOR
 from controller.evaluation.curve import Curve
 from controller.evaluation.estimate import SECOND_DERIVATIVE, Estimate
-from controller.evaluation.mishaps import LARGEST_OF_STATED, Mishap, contradiction, find_mishap, misfit
+from controller.evaluation.mishaps import LARGEST_OF_STATED, Mishap, believed, find_mishap, misfit
 from controller.evaluation.modelfit import ModelFit, fit_charge_balance
 
 #: relative standard uncertainty above which a number is remarked upon, and above which none is given
@@ -76,17 +76,21 @@ def audited(
     slow = slowness if slowness is not None and slowness > NOTABLE_SLOWNESS else None
     if fit is not None:
         # before a slow probe was known for one, its points were taken too early
-        if (left := contradiction(curve, fit, allowed=1.0 if slow is None else slow * slow)) is not None:
+        shown = believed(curve, fit, allowed=1.0 if slow is None else math.pow(slow, 1.5))
+        if shown is None:
             audit.withheld = (
-                f"the points contradict one another (misfit {left:g}, allowed {LARGEST_OF_STATED:g}): something "
-                "happened to sample, titrant or probe while they were taken, so no number is given"
+                f"the points contradict one another (misfit {misfit(fit):.1f}, allowed {LARGEST_OF_STATED:g}): "
+                "something happened to sample, titrant or probe while they were taken, so no number is given"
             )
             audit.end_points = []
             return audit
         mishap = find_mishap(curve, fit, np.asarray(at_s, dtype=np.float64))
         if mishap is not None:
             _widen_by_mishap(audit, mishap, curve, at_s, estimates)
-        _hold_against_fit(audit, fit, estimates, acid_titrant=bool(curve.acid_titrant))
+        _hold_against_fit(audit, shown, acid_titrant=bool(curve.acid_titrant))
+        if shown is not fit:  # where the stated substance does not describe the points, no estimator has its word alone
+            for number, point in enumerate(audit.end_points):
+                audit.widen(number, _disagreement_ml(float(point["volume_ml"]), estimates))
     if slow is not None:
         audit.warnings.append(
             f"the probe answers {slow:.1f} times as slowly as its record says: clean it, or repeat the response check"
@@ -131,33 +135,24 @@ def _told(mishap: Mishap) -> str:
     return f"{said}; the uncertainty is widened by it"
 
 
-def _hold_against_fit(
-    audit: Audit, fit: ModelFit, estimates: Sequence[Sequence[Estimate]], *, acid_titrant: bool
-) -> None:
-    """Widen where a good fit says otherwise, or where the model spoke though its fit is not sound."""
-    good = misfit(fit) <= LARGEST_OF_STATED
+def _hold_against_fit(audit: Audit, fit: ModelFit, *, acid_titrant: bool) -> None:
+    """Widen where the fit that describes the points says otherwise, or leaves much over."""
     for number, point in enumerate(audit.end_points):
         volume_ml, u_ml = float(point["volume_ml"]), float(point["standard_uncertainty_ml"])
-        if good:
-            near_ml, sd_ml = min(_shown(fit, acid_titrant), key=lambda pair: abs(pair[0] - volume_ml))
-            off_ml = abs(near_ml - volume_ml)
-            if fit.chi_square > NOTABLE_CHI_SQUARE:
-                audit.widen(number, u_ml * math.sqrt(fit.chi_square**2 - 1.0))
-            if off_ml > ALLOWED_SDS * math.hypot(u_ml, sd_ml):
-                audit.warnings.append(
-                    f"end point {number + 1}: the charge balance of most points is at {near_ml:.4f} mL, not at "
-                    f"{volume_ml:.4f} mL; the uncertainty is widened by the difference"
-                )
-                audit.widen(number, off_ml)
-        else:
-            audit.widen(number, _disagreement_ml(volume_ml, estimates))
+        near_ml, sd_ml = min(_shown(fit, acid_titrant), key=lambda pair: abs(pair[0] - volume_ml))
+        off_ml = abs(near_ml - volume_ml)
+        if fit.chi_square > NOTABLE_CHI_SQUARE:
+            audit.widen(number, u_ml * math.sqrt(fit.chi_square**2 - 1.0))
+        if off_ml > ALLOWED_SDS * math.hypot(u_ml, sd_ml):
+            audit.warnings.append(
+                f"end point {number + 1}: the charge balance of most points is at {near_ml:.4f} mL, not at "
+                f"{volume_ml:.4f} mL; the uncertainty is widened by the difference"
+            )
+            audit.widen(number, off_ml)
 
 
 def _disagreement_ml(volume_ml: float, estimates: Sequence[Sequence[Estimate]]) -> float:
-    """By how much the estimators of the end point at this volume differ beyond what they claim, at most.
-
-    Where the stated substance does not describe the points, none of them has its word alone.
-    """
+    """By how much the estimators of the end point at this volume differ beyond what they claim, at most."""
     here = min(estimates, key=lambda found: abs(found[0].volume_ml - volume_ml), default=())
     if not here:
         return 0.0

@@ -11,7 +11,7 @@ from statistics import fmean, median
 READINGS = 20
 OUTLIER_RATIO = 2.5
 QUIET_RESOLUTIONS = 0.6
-_CORRELATED = 0.4
+_CORRELATED = 0.5
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

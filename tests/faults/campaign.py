@@ -56,12 +56,12 @@ LONGEST_REAL_S = 60.0
 RECOVERABLE = (
     "silence", "lost-reply", "lost-message", "garbled-reply", "garbled-message", "late-reply", "earlier-reply",
     "unplugged", "bubble-at-probe", "clock-jump", "computer-asleep", "slow-probe", "open-circuit",
-    "stirrer-stopped", "stalled-plunger",
+    "stalled-plunger",
 )  # fmt: skip
 #: with which the run ends, or gives its number with a warning
 GRAVE = (
     "stuck-reading", "pump-restart", "air-in-syringe", "empty-reservoir", "leaking-valve", "cracked-probe", "drift",
-    "temperature-step", "disk-full", "read-only-disk", "process-killed",
+    "temperature-step", "stirrer-stopped", "disk-full", "read-only-disk", "process-killed",
 )  # fmt: skip
 
 
@@ -152,6 +152,8 @@ def build(
         try:
             status = devices.pump.status()
             keys = devices.probe.identify().key, devices.pump.identify().key
+            if keys != ("Orchard Probe 2", "Orchard Burette 1"):
+                continue  # a letter was garbled
             break
         except HalfdropError:
             continue
@@ -205,6 +207,8 @@ def carry_out(bench: FaultyBench, number: int = 0, faults: tuple[str, ...] = ())
 def _wrong(bench: FaultyBench, result: dict[str, Any], outcome: str, confirmed: bool | None, reason: str) -> list[str]:
     wrong = []
     plan, world, clock = bench.plan, bench.world, bench.clock
+    if not bench.disk.data and world.mechanism.tip_steps_total(clock.now_s()) == 0 and outcome == "failed":
+        return []  # refused before anything moved, and no record was begun
     ended_s = clock.now_s()
     if ended_s > LONGEST_VIRTUAL_S:
         wrong.append(f"took {ended_s:.0f} s of virtual time")

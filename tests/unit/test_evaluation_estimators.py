@@ -225,12 +225,12 @@ def estimate(name: str, volume_ml: float, sd_ml: float, *, sound: bool = True) -
 
 def test_estimators_are_flagged_only_beyond_their_combined_uncertainty() -> None:
     reported = estimate(CHARGE_BALANCE, 5.0, 0.003)
-    near, far = estimate(SECOND_DERIVATIVE, 5.014, 0.004), estimate(GRAN_BEYOND, 5.016, 0.004)
+    near, far = estimate(SECOND_DERIVATIVE, 5.019, 0.004), estimate(GRAN_BEYOND, 5.021, 0.004)
     unsound = estimate(INVERSE, 6.0, 0.001, sound=False)
     flags = disagreements(reported, [reported, near, far, unsound], number=1)
     assert len(flags) == 1
     assert GRAN_BEYOND in flags[0]
-    assert "+0.0160 mL" in flags[0]
+    assert "+0.0210 mL" in flags[0]
 
 
 def test_the_reported_estimator_follows_the_stated_rule() -> None:
