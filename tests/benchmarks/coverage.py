@@ -9,8 +9,8 @@ with three portions of potassium hydrogen phthalate, then titrates one sample of
 run whole through the decision core against the simulated bench; the amount and its interval are what the program
 reports. Half of the laboratories use one burette for both, half use another for the sample.
 
-Bars: 93 to 97 % over all, 90 to 99 % within each acid and concentration (240 laboratories each; 120 leave a cell of 95 %
-outside its bar by chance in about one run of ten).
+Bars: 93 to 97 % over all, 90 to 99 % within each acid and concentration (240 laboratories each: with 120, one
+of the twelve would lie outside by chance in about one run of four, though each covered 95 %).
 """
 
 from __future__ import annotations
