@@ -7,8 +7,9 @@ may still move, and its record says so.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import Any
 from weakref import WeakKeyDictionary
 
@@ -82,10 +83,35 @@ def step_accounts() -> Iterator[StepAccounts]:
         yield accounts
 
 
+@pytest.fixture
+def accounts_of_records() -> Callable[[Path], Iterator[str]]:
+    """What is wrong with the accounts of the records in a folder."""
+    return wrong_accounts
+
+
 @pytest.fixture(autouse=True)
-def _no_step_is_lost(step_accounts: StepAccounts) -> Iterator[None]:
-    """Fail the test whose run left a difference behind."""
+def _no_step_is_lost(step_accounts: StepAccounts, request: pytest.FixtureRequest) -> Iterator[None]:
+    """Fail the test whose run left a difference behind, in this process or, by the record it kept, in another."""
+    place = request.getfixturevalue("tmp_path") if "tmp_path" in request.fixturenames else None
     yield
-    wrong = list(step_accounts.wrong)
+    wrong = [*step_accounts.wrong, *(wrong_accounts(place) if place is not None else ())]
     step_accounts.wrong.clear()
     assert not wrong, "; ".join(wrong)
+
+
+def wrong_accounts(place: Path) -> Iterator[str]:
+    """Hold intact records of simulated pumps against the pump's own account, which counts its mechanism's steps."""
+    for path in place.rglob("*.jsonl"):
+        data = path.read_bytes() if path.is_file() else b""
+        if b'"model":"syringe pump"' not in data or b'"event":"account"' not in data:
+            continue
+        from controller.record import read_record, verify_bytes
+
+        if verify_bytes(data).state != "intact":
+            continue
+        record = read_record(path)
+        step_ml = record.header["plan"]["pump"]["step_ml"]
+        pump_steps = [round(one["pump_ml"] / step_ml) for one in record.of("account")]
+        told = (record.closing or {}).get("steps")
+        if told is not None and pump_steps != [told]:  # a run closed by hand tells none
+            yield f"{path.name}: the record holds {told} steps, the pump counted {pump_steps}"

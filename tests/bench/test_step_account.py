@@ -12,7 +12,7 @@ from controller.execution import Devices
 from controller.journal import Journal
 from controller.outcome import RunResult
 from controller.planning import SampleChoice, make_plan, plan_sample
-from controller.recordfile import MemorySink
+from controller.recordfile import FileSink, MemorySink
 from controller.runner import run
 from controller.stopping import StopSwitch
 from controller.titration.core import titrate
@@ -33,7 +33,7 @@ class ForgetfulPump:
         return replace(delivered, steps=delivered.steps - 1) if number == 3 else delivered
 
 
-def _run(place: Path, *, forgetful: bool) -> RunResult:
+def _run(place: Path, *, forgetful: bool, record: Path | None = None) -> RunResult:
     bench, method = shipped_bench(), shipped_method("juice-acidity")
     choice, stop = SampleChoice(sample_id="press 3"), StopSwitch()
     with open_bench(
@@ -44,7 +44,8 @@ def _run(place: Path, *, forgetful: bool) -> RunResult:
         )
         pump = ForgetfulPump(opened.devices.pump) if forgetful else opened.devices.pump
         devices = Devices(pump=pump, probe=opened.devices.probe, operator=opened.devices.operator)
-        journal = Journal(MemorySink(), opened.clock)
+        sink = MemorySink() if record is None else FileSink(record, durable=False)
+        journal = Journal(sink, opened.clock)
         return run(plan, titrate(plan), devices, journal, clock=opened.clock, stop=stop)
 
 
@@ -59,4 +60,18 @@ def test_a_single_step_that_the_record_lacks_is_seen(step_accounts: Any, tmp_pat
     steps = _run(tmp_path, forgetful=True).steps
     [wrong] = step_accounts.wrong
     assert f"holds {steps} steps, {steps + 1} were pushed" in wrong
+    step_accounts.wrong.clear()
+
+
+def test_a_record_is_held_against_the_pump_s_own_account(
+    step_accounts: Any, accounts_of_records: Any, tmp_path: Path
+) -> None:
+    record = tmp_path / "run.jsonl"
+    _run(tmp_path, forgetful=False, record=record)
+    assert list(accounts_of_records(tmp_path)) == []
+    record.unlink()
+    steps = _run(tmp_path, forgetful=True, record=record).steps
+    [wrong] = accounts_of_records(tmp_path)
+    assert f"holds {steps} steps, the pump counted [{steps + 1}]" in wrong
+    record.unlink()
     step_accounts.wrong.clear()
