@@ -199,15 +199,19 @@ class CommandPort:
             case other:
                 raise CommandRefusedError(f"no command {other!r}")
 
-
     def _take_answer(self, told: dict[str, Any]) -> None:
         asked = self._asked
         if asked is None or told.get("key") != asked[0]:
             raise CommandRefusedError("this is not asked (any more)")
-        answer = fitting_choice(str(told.get("text", "")), asked[1])
+        answer = fitting_choice(_whole_text(str(told.get("text", ""))), asked[1])
         if answer is None:
             raise CommandRefusedError(f"allowed: {', '.join(asked[1]) or 'any text'}")
         self.answer = answer
+
+
+def _whole_text(text: str) -> str:
+    """JSON can hold half a character, which no file can: a question mark takes its place."""
+    return text.encode(errors="replace").decode()
 
 
 def _command(name: str, told: dict[str, Any]) -> Command:
@@ -215,7 +219,7 @@ def _command(name: str, told: dict[str, Any]) -> Command:
     text = told.get("text")
     if name == "note" and not (isinstance(text, str) and text.strip()):
         raise CommandRefusedError("a note needs a text")
-    kept = text.strip()[:MOST_NOTE_CHARACTERS] if isinstance(text, str) else None
+    kept = _whole_text(text.strip()[:MOST_NOTE_CHARACTERS]) if isinstance(text, str) else None
     return Command(name=name, volume_ml=volume_ml, text=kept)
 
 

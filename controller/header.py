@@ -10,10 +10,13 @@ from datetime import UTC, datetime
 from functools import lru_cache
 from typing import Any
 
+from configs.errors import HalfdropError
 from configs.version import __version__
 from controller.calibration.plans import AnyPlan
 from controller.encoding import plan_to_json
 from controller.journal import Clock, encode, utc_text
+
+LONGEST_NAME = 200
 
 
 def header_of(
@@ -32,7 +35,11 @@ def header_of(
         operator_name: as typed; kept beside the account that the program runs under.
         hashes: SHA-256 of calibrations, lots and settings files by name.
         clock: tells UTC.
+
+    Raises:
+        HalfdropError: the operator's name is no text.
     """
+    check_operator(operator_name)
     data, utc_s = plan_to_json(plan), clock.utc_s()
     return {
         "plan": data,
@@ -45,6 +52,23 @@ def header_of(
         "lab_utc_offset": _offset_text(utc_s),
         "versions": versions(),
     }
+
+
+def check_operator(operator_name: str | None) -> None:
+    """Refuse a name that no record can hold.
+
+    Raises:
+        HalfdropError: bytes that are no text, or too many characters.
+    """
+    if operator_name is None:
+        return
+    wrong = None
+    if any("\ud800" <= character <= "\udfff" for character in operator_name):
+        wrong = "the operator's name holds bytes that are no text (not UTF-8)"
+    elif len(operator_name) > LONGEST_NAME:
+        wrong = f"the operator's name has {len(operator_name)} characters, allowed: up to {LONGEST_NAME}"
+    if wrong is not None:
+        raise HalfdropError(wrong, where="--operator", remedy="Type it again")
 
 
 @lru_cache(maxsize=1)

@@ -19,6 +19,8 @@ from typing import Any, Protocol
 from configs.errors import HalfdropError
 from controller.titration.actions import Action, Observation, to_entry
 
+#: half a character (no UTF-8 has it) is written as JSON's own escape, so that no text can end a run
+NO_TEXT = "backslashreplace"
 RECORD_VERSION = 1
 #: what is on the medium is never older than this, s
 SYNC_INTERVAL_S = 5.0
@@ -173,7 +175,7 @@ class Journal:
     def _append(self, body: str) -> None:
         if self._held_back is not None:
             raise DiskFullError("no space left", where=self.name, remedy="Close the record")
-        self._put(f'{self._stamp()}{body},"previous_sha256":"{self._previous}"}}'.encode())
+        self._put(f'{self._stamp()}{body},"previous_sha256":"{self._previous}"}}'.encode(errors=NO_TEXT))
 
     def _append_closing(self, closing: str) -> None:
         self._put(sealed(f'{self._stamp()}"closing":{closing},"previous_sha256":"{self._previous}"'))
@@ -205,7 +207,8 @@ class Journal:
 
 def sealed(text: str) -> bytes:
     """Return a closing line: this text, an open JSON object, ended with the SHA-256 of itself."""
-    return f'{text},"own_sha256":"{hashlib.sha256(text.encode()).hexdigest()}"}}'.encode()
+    own_sha256 = hashlib.sha256(text.encode(errors=NO_TEXT)).hexdigest()
+    return f'{text},"own_sha256":"{own_sha256}"}}'.encode(errors=NO_TEXT)
 
 
 def utc_text(utc_s: float) -> str:

@@ -12,7 +12,7 @@ from typing import Any
 from controller.brokenrun import BrokenRun
 from controller.doubt import PumpNow, SettledDose, ask_pump, check_unused, settle_dose
 from controller.execution import Devices
-from controller.header import versions
+from controller.header import check_operator, versions
 from controller.outcome import AmountOf, RunResult
 from controller.progress import Progress
 from controller.recordcheck import check_identities, check_probe
@@ -90,6 +90,7 @@ def go_on(broken: BrokenRun, how: GoingOn) -> RunResult:
         HalfdropError: other devices than the plan's, or a question that nobody answers; nothing was written.
     """
     plan, where = broken.plan, str(broken.path)
+    check_operator(how.operator_name)
     check_identities(plan, how.devices, where=where)
     run_s = _RunTime(how.clock, broken.last_run_s + how.gap_s)
     pump = ask_pump(how.devices.pump, how.clock, known_start_count=broken.start_count())

@@ -134,3 +134,11 @@ def test_ids_that_are_none_move_nothing(halfdrop: Run, lab: Path) -> None:
         assert status == 2
         assert "the sample's id" in err
     assert len(list((lab / "runs").glob("*.jsonl"))) == 1
+
+
+@pytest.mark.parametrize("name", ["\udcff", "x" * 201])
+def test_a_name_that_no_record_can_hold_moves_nothing(halfdrop: Run, lab: Path, name: str) -> None:
+    status, _, err = halfdrop("run", "juice-acidity", "--lab", str(lab), "--operator", name, "--headless")
+    assert status == 2
+    assert "--operator: the operator's name h" in err
+    assert len(list((lab / "runs").glob("*.jsonl"))) == 1

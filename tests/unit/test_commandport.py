@@ -73,6 +73,11 @@ def test_commands_are_queued_in_order_for_the_engine(port: CommandPort, record: 
     ]
 
 
+def test_half_a_character_in_a_note_is_replaced_before_the_run_sees_it(port: CommandPort, record: Path) -> None:
+    send_command(record, "note", text="cloudy \ud83c sample")
+    assert port.take() == Command(name="note", text="cloudy ? sample")
+
+
 def test_halt_holds_the_switch_and_end_pulls_it(port: CommandPort, record: Path, stop: StopSwitch) -> None:
     send_command(record, "halt")
     assert stop.event.is_set()

@@ -13,7 +13,7 @@ import pytest
 
 from configs.errors import HalfdropError
 from controller.journal import DiskFullError, Journal, RecordError, encode, utc_text
-from controller.record import read_record, verify
+from controller.record import read_record, verify, verify_bytes
 from controller.recordfile import RESERVE_BYTES, FileSink, MemorySink, new_record
 from controller.titration.actions import Dose, Read, Reading
 from drivers.clock import ManualClock
@@ -236,3 +236,14 @@ def test_numbers_of_numpy_are_written_as_numbers() -> None:
 
 def test_utc_is_written_in_iso_8601() -> None:
     assert utc_text(START_UTC_S + 0.25) == "2026-01-01T00:00:00.250Z"
+
+
+def test_half_a_character_ends_no_run_and_is_read_back() -> None:
+    sink = MemorySink()
+    journal = Journal(sink, ManualClock())
+    journal.begin({"plan": {}, "operator": "Ada \udcff"})
+    journal.event("note", text="press \ud83c 3")
+    journal.close("completed", stop_confirmed=None, reason="\udc00")
+    assert verify_bytes(sink.data).state == "intact"
+    assert json.loads(sink.lines[0])["header"]["operator"] == "Ada \udcff"
+    assert json.loads(sink.lines[1])["text"] == "press \ud83c 3"
