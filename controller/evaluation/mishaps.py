@@ -30,6 +30,7 @@ SURE_SDS_ALONE, HINTED_SDS = 6.0, 3.0
 #: share of the points that may lie anywhere: a bubble spoils some and leaves the others true
 STRAY_SHARE = 0.13
 FEWEST_STRAYS = 2
+SIDE_BY_SIDE = 1.2
 _STRAY_SDS = 6.0
 #: reduced chi-square of the others (robust); 120 runs without a mishap showed at most 0.9, those with one that left
 #: the result true up to 2.2
@@ -79,10 +80,18 @@ def believed(curve: Curve, fit: ModelFit, *, allowed: float = 1.0) -> ModelFit |
 
 
 def misfit(fit: ModelFit) -> float:
-    """Return the robust reduced chi-square of the points, the worst of them left out."""
-    off = np.sort(np.abs(np.asarray(fit.residual_ml) / np.asarray(fit.residual_sd_ml)))
+    """Return the robust reduced chi-square of the points, the worst of them left out.
+
+    Many that lie off side by side are not the worst of a true curve: with them left in it must not be much larger.
+    """
+    residual = np.asarray(fit.residual_ml) / np.asarray(fit.residual_sd_ml)
+    off = np.sort(np.abs(residual))
     kept = off[: len(off) - max(FEWEST_STRAYS, math.ceil(STRAY_SHARE * len(off)))]
-    return float(np.sum(2.0 * (np.sqrt(1.0 + kept**2) - 1.0))) / max(1, len(kept) - 3)
+    return max(_reduced(kept), _reduced(residual[~strays(residual)]) / SIDE_BY_SIDE)
+
+
+def _reduced(residual: Array) -> float:
+    return float(np.sum(2.0 * (np.sqrt(1.0 + residual**2) - 1.0))) / max(1, len(residual) - 3)
 
 
 def find_mishap(curve: Curve, fit: ModelFit, at_s: Array) -> Mishap | None:
