@@ -28,7 +28,8 @@ class CoreCase:
     def run(self, answer: Callable[[Action], Observation | None] | None = None) -> StudyRun:
         """Run the core in this world, every action and answer kept."""
         run = drive(self.plan, answer or self.world.answer, keep_entries=True)
-        if not any(isinstance(answered, Failed) for _, answered in run.entries):
+        believed = run.result["outcome"] != "failed"  # an answer for another dose moved nothing
+        if believed and not any(isinstance(answered, Failed) for _, answered in run.entries):
             mechanism = self.world.bench.mechanism
             dosed = [answered for _, answered in run.entries if isinstance(answered, Dosed)]
             told = sum(round(d.volume_ml / mechanism.step_ml) if d.steps is None else d.steps for d in dosed)
