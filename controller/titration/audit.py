@@ -29,6 +29,8 @@ NOTABLE_CHI_SQUARE = 1.5
 ALLOWED_SDS = 4.0
 #: the probe answers so many times as slowly as its record says before it is remarked upon
 NOTABLE_SLOWNESS = 1.35
+#: how much more the points of a slow probe may leave over: its slowness to this power
+SLOW_POINTS = 3.0
 #: what a slowness of one more time the record's may cost, in precisions of the pump
 SLOWNESS_COST = 5.0
 
@@ -76,7 +78,7 @@ def audited(
     slow = slowness if slowness is not None and slowness > NOTABLE_SLOWNESS else None
     if fit is not None:
         # before a slow probe was known for one, its points were taken too early
-        shown = believed(curve, fit, allowed=1.0 if slow is None else math.pow(slow, 1.5))
+        shown = believed(curve, fit, allowed=1.0 if slowness is None else math.pow(max(1.0, slowness), SLOW_POINTS))
         if shown is None:
             audit.withheld = (
                 f"the points contradict one another (misfit {misfit(fit):.1f}, allowed {LARGEST_OF_STATED:g}): "
