@@ -147,7 +147,7 @@ def curvature_limit_ml(points: Sequence[Point], dosing: Dosing) -> float:
     """
     if len(points) < 3:
         return dosing.largest_ml
-    slope, before = local_slope(points), local_slope(points[:-1])
+    slope, before = local_slope(points), local_slope(points[-3:-1])
     if slope < 1e-6 or before < 1e-6:
         return dosing.largest_ml
     between_mv = abs(points[-1].potential_mv - points[-3].potential_mv) / 2.0

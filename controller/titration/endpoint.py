@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
+from bisect import bisect_right
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -12,6 +13,7 @@ from controller.titration.actions import Report
 from controller.titration.plan import RunPlan
 from controller.titration.points import Point
 from controller.titration.precision import near_ml, pump_precision_ml
+from controller.titration.thinning import thinned
 
 EXCESS_OVER_LEFT = 3.0
 EXCESS_SDS = 5.0
@@ -61,7 +63,8 @@ class EndPointWatch:
     def look(self, points: Sequence[Point], sound: InverseFit | None) -> FoundEndPoint | None:
         """The next end point if the points show it now."""
         start_ml = self.found[-1].volume_ml if self.found else -math.inf
-        section = [p for p in points if p.volume_ml > start_ml]
+        first = bisect_right(points, start_ml, key=lambda p: p.volume_ml)
+        section = thinned(points, start=first, near_ml=None if sound is None else sound.equivalence_ml)
         if len(section) < 4:
             return None
         end_point = self._by_model(section, sound) if sound is not None else None

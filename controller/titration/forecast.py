@@ -12,6 +12,7 @@ from controller.evaluation.protons import STRONG_LADDER, UNKNOWN_LADDER, ProtonL
 from controller.titration.plan import RunPlan
 from controller.titration.points import PhScale, Point
 from controller.titration.precision import pump_precision_ml
+from controller.titration.thinning import thinned
 
 JUMP_SDS = 8.0
 #: above this reduced chi-square the substance named is doubted, and a model with a free constant tried
@@ -58,11 +59,12 @@ class Forecast:
         self.fit = self.sound = self._last = None
 
     def update(self, points: Sequence[Point]) -> None:
-        """Fit again with the latest points."""
+        """Fit again with the latest points, a bounded number of them in a long run."""
+        near_ml = self._last[0] if self._last is not None else None
         self.fit = self.sound = None
         if not self._possible or len(points) < 2:
             return
-        self.fit = fit = self._best_fit(points)
+        self.fit = fit = self._best_fit(thinned(points, near_ml=near_ml))
         if fit is None or not fit.sound:
             return
         veq, sd_veq = round(fit.equivalence_ml, 6), round(fit.standard_uncertainty_ml, 6)
