@@ -20,13 +20,13 @@ from configs.errors import HalfdropError
 from configs.faultfile import FaultsSettings
 from configs.method import MethodSettings
 from configs.notifying import NotifySettings
-from controller.connection import Connecting, check_capabilities
-from controller.execution import Devices
-from controller.planning import PumpAccount
-from controller.stopping import StopSwitch
+from controller.benchwork.connection import Connecting, check_capabilities
+from controller.benchwork.virtualdevices import MAKER, simulated_world, spoken_devices
+from controller.planning.runplan import PumpAccount
+from controller.running.execution import Devices
+from controller.running.stopping import StopSwitch
+from controller.running.trafficlog import TrafficFile
 from controller.titration.plan import Sample
-from controller.trafficlog import TrafficFile
-from controller.virtualdevices import MAKER, simulated_world, spoken_devices
 from drivers.clock import Clock, ManualClock, ScaledClock, SystemClock
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator
 from drivers.transport import TrafficLog
@@ -77,7 +77,7 @@ class Opening:
         talk: where questions and messages of an operator without a terminal go.
         start_utc_s: POSIX time at which manual time begins; None: now.
         faults: simulated bench only: what goes wrong; None: what its file says.
-        unattended: nobody is there; see controller/connection.py.
+        unattended: nobody is there; see controller/benchwork/connection.py.
         traffic_log: keep everything that goes over the lines in logs/ of the lab folder.
     """
 

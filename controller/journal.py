@@ -3,7 +3,7 @@
 Line 1 is the header (the RunPlan and where, when and with what it was run), then one line per action, observation and
 event, at the end a closing line. Every line holds its number, UTC, the run time and the SHA-256 of the line before (its
 bytes without the line feed); the closing line, which nothing follows, ends with the SHA-256 of its own text. That makes
-edits evident, not impossible. `controller/record.py` reads it.
+edits evident, not impossible. `controller/records/record.py` reads it.
 """
 
 from __future__ import annotations

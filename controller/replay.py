@@ -12,10 +12,10 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from configs.version import __version__
-from controller.encoding import plan_from_json
-from controller.header import versions
 from controller.journal import encode
-from controller.record import Record
+from controller.records.encoding import plan_from_json
+from controller.records.header import versions
+from controller.records.record import Record
 from controller.titration.actions import Action, Decisions, Finish, Observation, Report, from_entry, to_entry
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan
@@ -247,7 +247,7 @@ def _reasons(record: Record, plan: RunPlan | None) -> list[str]:
     if planned != __version__ and not any(text.startswith("program:") for text in told):
         told.append(f"the plan was made by program version {planned}, this is {__version__}")
     if plan is not None:
-        from controller.encoding import plan_to_json
+        from controller.records.encoding import plan_to_json
 
         told += [f"settings: {text}" for text in _changed(record.header.get("plan") or {}, plan_to_json(plan), "")]
     return told

@@ -12,14 +12,15 @@ from dataclasses import dataclass, field, replace
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.aftercare import ask_about_probe
 from controller.calibration.plans import AnyPlan
-from controller.clockwatch import ClockWatch
-from controller.execution import Devices, Execution
 from controller.guard import Guard, check_start, start_warnings
-from controller.header import header_of
 from controller.journal import Journal, RecordError
-from controller.outcome import (
+from controller.records.header import header_of
+from controller.resuming.resumption import Resumption, take_up
+from controller.running.aftercare import ask_about_probe
+from controller.running.clockwatch import ClockWatch
+from controller.running.execution import Devices, Execution
+from controller.running.outcome import (
     NOT_CONFIRMED,
     AmountOf,
     RunFailedError,
@@ -30,10 +31,9 @@ from controller.outcome import (
     exit_status,
     whole_result,
 )
-from controller.progress import Pace, Progress
-from controller.resumption import Resumption, take_up
-from controller.startcheck import check_devices
-from controller.stopping import Commands, StopSwitch
+from controller.running.progress import Pace, Progress
+from controller.running.startcheck import check_devices
+from controller.running.stopping import Commands, StopSwitch
 from controller.titration.actions import (
     Action,
     Decisions,

@@ -11,7 +11,7 @@ from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, field
 from typing import Any
 
-from controller.study_plan import Strategy, nominal_plan
+from controller.foresight.study_plan import Strategy, nominal_plan
 from controller.titration.actions import (
     Action,
     Answered,

@@ -15,7 +15,7 @@ from controller.calibration.burette import DELIVERIES, FRACTIONS, default_limits
 from controller.calibration.planning import common, probe_of, vessel_of
 from controller.calibration.plans import BurettePlan, WeighingSeries
 from controller.calibration.store import Calibration
-from controller.planning import PumpAccount
+from controller.planning.runplan import PumpAccount
 from controller.titration.plan import Pump, Question
 from drivers.absent import ABSENT
 

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from controller.record import NotARecordError, list_records, read_record, verify
+from controller.records.record import NotARecordError, list_records, read_record, verify
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -16,9 +16,9 @@ from controller.commands.output import print_json, say
 from controller.commands.settings import chosen, sample_choice
 from controller.commands.signals import pulling
 from controller.labfolder import find_lab
-from controller.planning import plan_sample
-from controller.record import printable
-from controller.stopping import StopSwitch
+from controller.planning.runplan import plan_sample
+from controller.records.record import printable
+from controller.running.stopping import StopSwitch
 
 DONE = 0
 DEFAULT_METHOD = "juice-acidity"

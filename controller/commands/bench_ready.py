@@ -12,20 +12,20 @@ from pathlib import Path
 
 from configs.benchfile import BenchSettings
 from controller.assembly import Opening, ReachedBench, reach_bench
-from controller.bench_check import BenchCheck
-from controller.bench_finding import Finding, passed_over
-from controller.bench_shutdown import shut_down_steps
+from controller.benchwork.bench_check import BenchCheck
+from controller.benchwork.bench_finding import Finding, passed_over
+from controller.benchwork.bench_shutdown import shut_down_steps
 from controller.commands.bench import DEFAULT_METHOD
 from controller.commands.output import print_json, print_table, say
 from controller.commands.settings import Chosen, answers_of, chosen
 from controller.commands.signals import pulling
-from controller.inforce import NotInForceError, find_in_force, utc_day
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
-from controller.planning import SampleChoice, plan_sample
-from controller.record import printable
-from controller.stopping import STOP_EXIT_STATUS, StopSwitch, halted
-from controller.unclosed import unclosed
+from controller.planning.inforce import NotInForceError, find_in_force, utc_day
+from controller.planning.runplan import SampleChoice, plan_sample
+from controller.records.record import printable
+from controller.records.unclosed import unclosed
+from controller.running.stopping import STOP_EXIT_STATUS, StopSwitch, halted
 from drivers.errors import StoppedError
 from drivers.ports import named_ports
 

@@ -12,6 +12,7 @@ from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import load_bench
 from controller.assembly import Opening, is_simulated, time_scale_of
+from controller.benchwork.calibrationbench import CalibrationBench, open_burette, open_desk, open_probe
 from controller.calibration.burette_session import check_burette
 from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import plan_probe
@@ -19,8 +20,6 @@ from controller.calibration.planning_burette import WeighingConditions, plan_bur
 from controller.calibration.plans import CalibrationPlan
 from controller.calibration.probe_session import calibrate_probe
 from controller.calibration.store import in_force
-from controller.calibrationbench import CalibrationBench, open_burette, open_desk, open_probe
-from controller.commandport import command_port
 from controller.commands.calibrationlines import calibration_lines
 from controller.commands.lines import Lines
 from controller.commands.output import print_json, say
@@ -28,18 +27,19 @@ from controller.commands.replicates import portions_of, titrate_replicates
 from controller.commands.runs import record_path
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
 from controller.commands.signals import pulling
-from controller.inforce import utc_day
 from controller.journal import Journal
 from controller.labfolder import Lab, find_lab
 from controller.lock import lock_device, lock_lab
-from controller.lots import Preparation, SettledLot, titrant_lot
-from controller.outcome import RunResult
-from controller.portoperator import PortOperator
-from controller.record import read_record
-from controller.recordfile import new_record
+from controller.planning.inforce import utc_day
+from controller.planning.lots import Preparation, SettledLot, titrant_lot
+from controller.planning.settled_blanks import blank_lot, response_record
+from controller.records.record import read_record
+from controller.records.recordfile import new_record
 from controller.runner import run as carry_out
-from controller.settled_blanks import blank_lot, response_record
-from controller.stopping import StopSwitch
+from controller.running.commandport import command_port
+from controller.running.outcome import RunResult
+from controller.running.portoperator import PortOperator
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import Decisions
 from controller.titration.plan import ResponseCheck
 

@@ -6,7 +6,7 @@ import datetime as dt
 from typing import Any
 
 from controller.calibration.store import Calibration
-from controller.record import printable
+from controller.records.record import printable
 
 
 def calibration_lines(result: dict[str, Any]) -> list[str]:

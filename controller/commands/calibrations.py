@@ -10,7 +10,7 @@ from controller.calibration.store import Calibration, calibrations, in_force
 from controller.commands.calibrationlines import FOLLOWED, due_day, figure_of
 from controller.commands.output import print_json, print_table, say
 from controller.labfolder import find_lab
-from controller.record import printable
+from controller.records.record import printable
 
 #: a probe that needs this many times the response of its first calibrations is named as slowing
 SLOWING = 2.0

@@ -9,9 +9,9 @@ from pathlib import Path
 
 from configs.errors import HalfdropError
 from controller.commands.settings import chosen, sample_choice
-from controller.decide import decide as talk
-from controller.encoding import plan_from_json
-from controller.planning import expected_account, make_plan
+from controller.planning.runplan import expected_account, make_plan
+from controller.records.encoding import plan_from_json
+from controller.running.decide import decide as talk
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan
 

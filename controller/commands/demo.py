@@ -13,7 +13,7 @@ from controller.commands.run import tell, titrate_once
 from controller.commands.settings import chosen
 from controller.commands.watch import has_terminal, show
 from controller.labfolder import Lab, find_lab, init_lab
-from controller.planning import SampleChoice
+from controller.planning.runplan import SampleChoice
 
 METHOD, SAMPLE_ID = "juice-acidity", "press 3, Tuesday"
 #: how many times real time a run on the screen passes, unless told otherwise; + and - change it there
@@ -56,7 +56,7 @@ def start_watched(
     Returns:
         The lab folder (a new one where none is given), the run's record, and how many times real time passes.
     """
-    from controller.launch import record_of, start_run
+    from controller.running.launch import record_of, start_run
     from drivers.clock import SystemClock
 
     if lab is None:

@@ -10,8 +10,8 @@ from configs.errors import HalfdropError
 from controller.commands.lines import estimator_lines, result_lines
 from controller.commands.output import chance_text, print_json
 from controller.commands.runs import SUFFIX, record_path
-from controller.evaluate_file import EvaluateOptions, evaluate_file
-from controller.evaluate_record import evaluate_record
+from controller.curves.evaluate_file import EvaluateOptions, evaluate_file
+from controller.curves.evaluate_record import evaluate_record
 from controller.labfolder import find_lab
 
 DONE, NOT_TRUSTED = 0, 1
@@ -82,7 +82,7 @@ def _table(given: argparse.Namespace) -> dict[str, Any]:
 
 def _add(given: argparse.Namespace, result: dict[str, Any]) -> Path:
     from controller.journal import utc_text
-    from controller.reevaluation import add_evaluation
+    from controller.records.reevaluation import add_evaluation
     from drivers.clock import SystemClock
 
     path = record_path(given.file, given)

@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Protocol
 
 from configs.errors import HalfdropError
-from controller.stopping import Commands, StopSwitch
+from controller.running.stopping import Commands, StopSwitch
 from controller.titration.actions import Command
 from drivers.operator import Operator
 

@@ -5,8 +5,8 @@ from __future__ import annotations
 from typing import Any, TextIO
 
 from controller.commands.output import amount_text, volume_text
-from controller.progress import Progress
-from controller.record import printable
+from controller.records.record import printable
+from controller.running.progress import Progress
 from controller.titration.actions import Command, Dose, Failed, Refill, Refused, Report
 
 #: a plain half-equivalence pH nearer to the pKa than this may stand for it

@@ -12,9 +12,9 @@ from configs.settings import load_solution
 from controller.commands.output import decimals, print_json, say
 from controller.commands.progressbar import ProgressBar
 from controller.commands.settings import chosen, sample_choice
-from controller.planning import expected_account, make_plan
-from controller.predict import curve_text, predict_solution, read_volumes
-from controller.prediction import Band, Prediction, predict_run
+from controller.foresight.predict import curve_text, predict_solution, read_volumes
+from controller.foresight.prediction import Band, Prediction, predict_run
+from controller.planning.runplan import expected_account, make_plan
 
 #: keys at the top of a solution file, and of a method file
 _SOLUTION_KEYS, _METHOD_KEYS = {"volumes_ml", "pkw", "debye_huckel_a"}, {"name", "kind", "title", "end_points"}

@@ -8,14 +8,14 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from controller.assembly import OpenBench, time_scale_of
-from controller.attendance import Attendance, attended
-from controller.commandport import command_port
 from controller.commands.keyboard import Keyboard
 from controller.commands.signals import pulling
-from controller.execution import Devices
 from controller.labfolder import Lab
-from controller.portoperator import PortOperator
-from controller.stopping import Commands
+from controller.running.attendance import Attendance, attended
+from controller.running.commandport import command_port
+from controller.running.execution import Devices
+from controller.running.portoperator import PortOperator
+from controller.running.stopping import Commands
 from drivers.operator import ConsoleOperator
 
 

@@ -11,8 +11,8 @@ from configs.errors import HalfdropError
 from controller.commands.lines import Lines, result_lines
 from controller.commands.output import print_json, say
 from controller.commands.runs import SUFFIX, record_path
-from controller.playback import play
-from controller.record import Record, printable, read_record, verify
+from controller.records.playback import play
+from controller.records.record import Record, printable, read_record, verify
 from controller.replay import Difference, Replayed
 from controller.replay import replay as decide_again
 from drivers.clock import ScaledClock

@@ -10,16 +10,16 @@ from pathlib import Path
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.amounts import amount_of_replicates
 from controller.assembly import Opening, is_simulated
 from controller.commands.output import amount_text, print_json, say
 from controller.commands.run import tell, titrate_once
 from controller.commands.settings import Chosen, sample_choice
-from controller.encoding import plan_from_json
 from controller.labfolder import Lab
-from controller.outcome import RunResult
-from controller.planning import SampleChoice
-from controller.record import printable, read_record
+from controller.planning.amounts import amount_of_replicates
+from controller.planning.runplan import SampleChoice
+from controller.records.encoding import plan_from_json
+from controller.records.record import printable, read_record
+from controller.running.outcome import RunResult
 from controller.titration.plan import ResponseCheck, RunPlan
 from controller.titration.traceability import Replicate
 

@@ -11,7 +11,7 @@ from configs.errors import HalfdropError
 from controller.commands.output import print_json
 from controller.commands.runs import record_path
 from controller.labfolder import find_lab
-from controller.record import printable, read_record
+from controller.records.record import printable, read_record
 
 DONE, NOT_TRUSTED = 0, 1
 FOLDER = "reports"
@@ -24,7 +24,7 @@ def report(given: argparse.Namespace) -> int:
     import hashlib
 
     from controller.journal import utc_text
-    from controller.record import verify
+    from controller.records.record import verify
     from controller.report.contents import report_contents
     from controller.report.page import render
     from controller.report.series_of_runs import found_replicates

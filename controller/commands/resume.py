@@ -10,9 +10,7 @@ from pathlib import Path
 
 from configs.errors import HalfdropError
 from configs.settings import load_bench
-from controller.amounts import amount_of_plan
 from controller.assembly import FAST, Opening, is_simulated, open_bench
-from controller.brokenrun import BrokenRun, gap_s, read_broken
 from controller.commands.lines import Lines
 from controller.commands.output import say
 from controller.commands.present import at_the_bench
@@ -22,10 +20,12 @@ from controller.commands.settings import answers_of, method_of
 from controller.commands.signals import pulling
 from controller.labfolder import Lab, find_lab
 from controller.lock import lock_device, lock_lab
-from controller.outcome import RunResult
-from controller.resimulation import bring_back
-from controller.resume import GO_ON, GoingOn, go_on
-from controller.stopping import StopSwitch
+from controller.planning.amounts import amount_of_plan
+from controller.records.brokenrun import BrokenRun, gap_s, read_broken
+from controller.resuming.resimulation import bring_back
+from controller.resuming.resume import GO_ON, GoingOn, go_on
+from controller.running.outcome import RunResult
+from controller.running.stopping import StopSwitch
 
 
 def resume(given: argparse.Namespace) -> int:

@@ -9,7 +9,6 @@ from dataclasses import replace
 
 from configs.errors import HalfdropError
 from configs.faultfile import load_faults
-from controller.amounts import amount_of_plan
 from controller.assembly import OpenBench, Opening, is_simulated, open_bench
 from controller.commands.lines import result_lines
 from controller.commands.output import print_json
@@ -18,19 +17,20 @@ from controller.commands.settings import Chosen, answers_of, chosen, sample_choi
 from controller.commands.signals import pulling
 from controller.commands.titrant import titrant_counted
 from controller.commands.watching import watching
-from controller.inforce import find_in_force, utc_day
 from controller.journal import Journal
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
-from controller.outcome import RunResult
-from controller.planning import SampleChoice, expected_volume_ml, make_plan, plan_sample
-from controller.recordfile import new_record
+from controller.planning.amounts import amount_of_plan
+from controller.planning.inforce import find_in_force, utc_day
+from controller.planning.runplan import SampleChoice, expected_volume_ml, make_plan, plan_sample
+from controller.records.recordfile import new_record
+from controller.records.unclosed import refuse_unclosed
 from controller.runner import run as carry_out
-from controller.stopping import StopSwitch
+from controller.running.outcome import RunResult
+from controller.running.stopping import StopSwitch
 from controller.titration.core import titrate
 from controller.titration.plan import ResponseCheck, RunPlan
 from controller.titration.traceability import Replicate
-from controller.unclosed import refuse_unclosed
 
 
 def run(given: argparse.Namespace) -> int:

@@ -9,9 +9,9 @@ from pathlib import Path
 from configs.errors import HalfdropError
 from controller.commands.output import amount_text, print_json, print_table, say, volume_text
 from controller.labfolder import Lab, find_lab
-from controller.record import NotARecordError, Verification, list_records, printable, read_record, summarise
-from controller.record import verify as verify_record
-from controller.reevaluation import AddedEvaluation, added_evaluations
+from controller.records.record import NotARecordError, Verification, list_records, printable, read_record, summarise
+from controller.records.record import verify as verify_record
+from controller.records.reevaluation import AddedEvaluation, added_evaluations
 
 TYPE_CHECKING = False
 if TYPE_CHECKING:
@@ -142,7 +142,7 @@ def export(given: argparse.Namespace) -> int:
 def close(given: argparse.Namespace) -> int:
     """End a record that was left open by a crash; nothing in it is changed."""
     from controller.lock import lock_lab
-    from controller.unclosed import close_record
+    from controller.records.unclosed import close_record
     from drivers.clock import SystemClock
 
     lab = _lab(given).writable()

@@ -16,13 +16,13 @@ from controller.commands.seriesrun import SeriesRun
 from controller.commands.settings import Chosen, answers_of, chosen, method_of
 from controller.guard import check_start
 from controller.labfolder import Lab
-from controller.outcome import RunResult
-from controller.planning import SampleChoice, expected_account, make_plan
-from controller.record import read_record
-from controller.series import MOST_TITRATIONS, Series, read_series
-from controller.seriescheck import require_check_buffer
-from controller.seriesrecord import FOLDER, SeriesState, new_series, read_state, reopen_series
-from controller.unclosed import unclosed
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.planning.series import MOST_TITRATIONS, Series, read_series
+from controller.planning.seriescheck import require_check_buffer
+from controller.records.record import read_record
+from controller.records.seriesrecord import FOLDER, SeriesState, new_series, read_state, reopen_series
+from controller.records.unclosed import unclosed
+from controller.running.outcome import RunResult
 from drivers.clock import SystemClock
 
 

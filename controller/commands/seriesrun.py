@@ -16,12 +16,12 @@ from controller.commands.seriestable import print_series, summed_up
 from controller.commands.settings import Chosen
 from controller.journal import Journal
 from controller.labfolder import Lab
-from controller.outcome import RunResult
-from controller.record import printable, read_record
+from controller.planning.series import SeriesItem, Titration, titrations_of
+from controller.planning.seriescheck import check_in_buffer
+from controller.records.record import printable, read_record
 from controller.replay import plan_of_record
-from controller.series import SeriesItem, Titration, titrations_of
-from controller.seriescheck import check_in_buffer
-from controller.stopping import StopSwitch
+from controller.running.outcome import RunResult
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import Answered, Ask
 from controller.titration.traceability import Replicate
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator

@@ -9,8 +9,8 @@ from typing import Any
 from configs.errors import HalfdropError
 from controller.commands.output import amount_text, print_table
 from controller.commands.replicates import summary_of_records
-from controller.record import printable
-from controller.series import SeriesItem
+from controller.planning.series import SeriesItem
+from controller.records.record import printable
 
 
 def summed_up(

@@ -21,7 +21,7 @@ from configs.settings import (
 )
 from controller.commands.output import say
 from controller.labfolder import Lab, LabError, find_lab
-from controller.planning import SampleChoice
+from controller.planning.runplan import SampleChoice
 
 #: questions that any run may ask besides its method's own
 ASKED_KEYS = (

@@ -8,7 +8,7 @@ from contextlib import contextmanager
 from types import FrameType
 from typing import Any
 
-from controller.stopping import StopSwitch
+from controller.running.stopping import StopSwitch
 
 
 @contextmanager

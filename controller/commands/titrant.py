@@ -11,7 +11,7 @@ from configs.errors import HalfdropError
 from controller.assembly import OpenBench
 from controller.commands.output import say
 from controller.labfolder import Lab
-from controller.titrant_account import TitrantAccount, account_of, keep
+from controller.running.titrant_account import TitrantAccount, account_of, keep
 
 
 @contextmanager

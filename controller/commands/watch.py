@@ -20,8 +20,8 @@ def has_terminal() -> bool:
 
 def watch(given: argparse.Namespace) -> int:
     """Follow a run: on the screen, or as lines."""
-    from controller.commandclient import running
     from controller.commands.runs import record_path
+    from controller.running.commandclient import running
 
     lab = _lab(given.lab, needed=given.run is None)
     record = record_path(given.run, given) if given.run else None
@@ -60,7 +60,7 @@ def _lab(named: str | None, *, needed: bool) -> Lab | None:
 
 def _follow(record: Path) -> int:
     """Print what the run says until it is over or its process is gone."""
-    from controller.commandclient import SUFFIX
+    from controller.running.commandclient import SUFFIX
     from controller.ui.runview import RunView
     from controller.ui.tail import RecordTail
     from controller.ui.texts import clock_text

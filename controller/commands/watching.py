@@ -7,9 +7,9 @@ from collections.abc import Callable
 
 from controller.commands.lines import Lines
 from controller.commands.output import say
-from controller.departure import DepartureWatch
+from controller.foresight.departure import DepartureWatch
 from controller.journal import Journal
-from controller.progress import Progress
+from controller.running.progress import Progress
 from controller.titration.plan import RunPlan
 
 

@@ -10,14 +10,14 @@ from typing import TYPE_CHECKING, Any
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import load_bench, shipped_bench
-from controller.benchfit import FittedBench, fit_bench
 from controller.commands.output import decimals, print_json, say
 from controller.commands.progressbar import ProgressBar
 from controller.commands.settings import lab_of, method_of
-from controller.curvefile import CurveOptions, read_curve
-from controller.planning import SampleChoice, expected_account, make_plan
-from controller.record import Record, printable
-from controller.whatif import Compared, MethodOutcome, compare, fit_record, other_plan
+from controller.curves.curvefile import CurveOptions, read_curve
+from controller.foresight.benchfit import FittedBench, fit_bench
+from controller.foresight.whatif import Compared, MethodOutcome, compare, fit_record, other_plan
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.records.record import Record, printable
 
 if TYPE_CHECKING:
     from controller.evaluation.curve import Curve

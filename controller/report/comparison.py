@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+from controller.foresight.whatif import Compared, MethodOutcome
 from controller.report.plots import AMBER, BLUE, INK, _figure, _svg
-from controller.whatif import Compared, MethodOutcome
 
 
 def comparison_svg(found: Compared) -> str:

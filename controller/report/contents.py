@@ -11,10 +11,9 @@ from typing import Any
 from configs.errors import HalfdropError
 from configs.version import __version__
 from controller.commands.output import decimals
-from controller.evaluate_record import evaluate_points
-from controller.outcome import NOT_CONFIRMED
-from controller.record import Record, verify
-from controller.reevaluation import added_evaluations
+from controller.curves.evaluate_record import evaluate_points
+from controller.records.record import Record, verify
+from controller.records.reevaluation import added_evaluations
 from controller.report import tables
 from controller.report.budget import budget_table, coverage_factor
 from controller.report.calibration_part import calibration_part
@@ -26,6 +25,7 @@ from controller.report.points import identity_table, points_table
 from controller.report.series import Series, series_of
 from controller.report.series_of_runs import together
 from controller.report.wording import DASH, Facts, facts_of, local_time, number, span, with_uncertainty
+from controller.running.outcome import NOT_CONFIRMED
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -11,8 +11,8 @@ import io
 from collections.abc import Mapping
 from typing import Any
 
-from controller.record import Record, points
-from controller.reevaluation import added_evaluations
+from controller.records.record import Record, points
+from controller.records.reevaluation import added_evaluations
 
 #: file name: (title, columns as (name, Table Schema type, what it is))
 TABLES: dict[str, tuple[str, tuple[tuple[str, str, str], ...]]] = {

@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from controller.commands.output import chance_text
-from controller.record import Record, points
+from controller.records.record import Record, points
 from controller.report.tables import Table
 from controller.report.wording import DASH, clock, number
 

@@ -7,12 +7,12 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from controller.encoding import plan_from_json
-from controller.evaluate_record import curve_of
+from controller.curves.evaluate_record import curve_of
 from controller.evaluation.curve import Array, Curve, Mask
 from controller.evaluation.gran import GranLine, gran_before, gran_beyond, hydrogen_and_hydroxide, titrant_used
 from controller.evaluation.modelfit import ModelFit, fit_charge_balance
-from controller.record import Record, points
+from controller.records.encoding import plan_from_json
+from controller.records.record import Record, points
 
 #: volumes nearer than this make no slope between them, mL
 _SMALLEST_STEP_ML = 1e-4

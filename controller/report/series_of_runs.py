@@ -9,9 +9,9 @@ from pathlib import Path
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.amounts import amount_of_replicates
-from controller.encoding import plan_from_json
-from controller.record import Record, list_records, read_record
+from controller.planning.amounts import amount_of_replicates
+from controller.records.encoding import plan_from_json
+from controller.records.record import Record, list_records, read_record
 from controller.report.tables import Table, replicates
 
 #: a series is looked for among so many records before and after

@@ -98,7 +98,7 @@ class HalfdropApp(App[int]):
                 return ArchiveScreen(self.lab)
 
     def _run_screen(self) -> RunScreen | None:
-        from controller.commandclient import running
+        from controller.running.commandclient import running
 
         if isinstance(self.screen, RunScreen) and self.screen.live:
             return self.screen

@@ -7,8 +7,8 @@ from typing import Any
 
 from configs.benchfile import BenchSettings, CalibrationSettings
 from controller.assembly import is_simulated
-from controller.benchwork import SLOW_REPLY_S
-from controller.record import printable
+from controller.benchwork.work import SLOW_REPLY_S
+from controller.records.record import printable
 from controller.ui.texts import local_time_text
 from simulators.constants import ideal_slope_mv
 

@@ -12,12 +12,12 @@ from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from configs.settings import load_bench, load_method
-from controller.archive_index import ArchiveIndex
 from controller.assembly import is_simulated
 from controller.guard import check_start, start_warnings
 from controller.labfolder import Lab
-from controller.launch import record_of, start_run
-from controller.planning import SampleChoice, expected_account, make_plan
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.records.archive_index import ArchiveIndex
+from controller.running.launch import record_of, start_run
 from controller.titration.plan import RunPlan
 from drivers.clock import SystemClock
 

@@ -7,12 +7,12 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.record import printable
+from controller.records.record import printable
 from controller.ui.seen import CurvePoint, EndPoint, SeenReading, Sentence
 
 TYPE_CHECKING = False  # what a plan needs is imported with the first header, after the first paint
 if TYPE_CHECKING:
-    from controller.progress import Pace
+    from controller.running.progress import Pace
     from controller.titration.plan import RunPlan
 
 #: readings kept for the stability shown
@@ -104,8 +104,8 @@ class RunView:
     # --- the lines ---------------------------------------------------------------------------------------------------
 
     def _begin(self, header: dict[str, Any]) -> None:
-        from controller.encoding import plan_from_json
-        from controller.progress import Pace
+        from controller.records.encoding import plan_from_json
+        from controller.running.progress import Pace
 
         self.header = header
         if (header.get("plan") or {}).get("kind") not in (None, "equivalence"):

@@ -8,8 +8,8 @@ from typing import Any
 
 import pytest
 
+from controller.foresight.study_plan import MODEL_GUIDED, Strategy, nominal_plan
 from controller.study import StudyRun, StudyWorld, drive
-from controller.study_plan import MODEL_GUIDED, Strategy, nominal_plan
 from controller.titration.actions import Action, Dosed, Failed, Observation
 from controller.titration.plan import RunPlan, WeakAcid
 from simulators.bench import VirtualBench, WorldTruth

@@ -10,7 +10,7 @@ import pytest
 
 from configs.water import z_factor_ul_mg
 from controller.cli import main
-from controller.record import list_records
+from controller.records.record import list_records
 
 Run = Callable[..., tuple[int, str, str]]
 HCL_MOL_L = 0.1002  # the simulated bench's hydrochloric acid

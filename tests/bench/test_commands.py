@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 from controller.cli import main
-from controller.record import list_records, read_record, verify
+from controller.records.record import list_records, read_record, verify
 
 Run = Callable[..., tuple[int, str, str]]
 

@@ -43,8 +43,8 @@ def test_an_independent_error_of_each_stop_averages(dosing_bound, monkeypatch) -
 
 def test_the_benchmark_counts_false_and_missed_end_points(dosing_bound) -> None:
     dosing = load("dosing")
+    from controller.foresight.study_plan import MODEL_GUIDED
     from controller.study import nominal_run
-    from controller.study_plan import MODEL_GUIDED
 
     good = nominal_run("phosphoric", 1, MODEL_GUIDED)
     figures = dosing.figures([good, nominal_run("phosphoric", 2, MODEL_GUIDED)], [good, good])

@@ -6,7 +6,7 @@ from dataclasses import replace
 
 import pytest
 
-from controller.study_plan import BASELINE, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD
+from controller.foresight.study_plan import BASELINE, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD
 from controller.titration.plan import WeakAcid
 from simulators.solution_mixture import Mixture, StrongIon, WeakComponent
 

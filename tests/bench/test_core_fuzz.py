@@ -8,7 +8,7 @@ from dataclasses import replace
 
 import pytest
 
-from controller.study_plan import BASELINE, EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD
+from controller.foresight.study_plan import BASELINE, EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD
 from controller.titration.actions import (
     Answered,
     Ask,

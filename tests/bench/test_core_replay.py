@@ -7,7 +7,7 @@ from dataclasses import replace
 
 import pytest
 
-from controller.study_plan import BASELINE, MODEL_GUIDED, WITHOUT_RECORD
+from controller.foresight.study_plan import BASELINE, MODEL_GUIDED, WITHOUT_RECORD
 from controller.titration.actions import Dosed, Finish, from_entry, to_entry
 from controller.titration.core import titrate
 

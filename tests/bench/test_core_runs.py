@@ -7,8 +7,7 @@ from dataclasses import replace
 
 import pytest
 
-from controller.study import nominal_run
-from controller.study_plan import (
+from controller.foresight.study_plan import (
     BASELINE,
     EQUAL_VOLUMES,
     FIXED_WAIT,
@@ -17,6 +16,7 @@ from controller.study_plan import (
     WITHOUT_RECORD,
     Strategy,
 )
+from controller.study import nominal_run
 from controller.titration.plan import WeakAcid
 from simulators.solution_mixture import Mixture, StrongIon, WeakComponent
 

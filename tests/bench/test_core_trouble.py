@@ -6,7 +6,7 @@ from dataclasses import replace
 
 import pytest
 
-from controller.study_plan import WITHOUT_RECORD
+from controller.foresight.study_plan import WITHOUT_RECORD
 from controller.titration.actions import (
     Back,
     Command,

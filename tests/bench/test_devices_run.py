@@ -11,8 +11,8 @@ import pytest
 import yaml
 
 from controller.cli import main
-from controller.record import read_record
-from controller.trafficlog import TrafficFile
+from controller.records.record import read_record
+from controller.running.trafficlog import TrafficFile
 
 Run = Callable[..., tuple[int, str, str]]
 DIALECT = {"speaks": "dialect", "dialect": "orchard-lane-pump"}
@@ -243,7 +243,7 @@ def test_lines_are_logged_on_request_only(halfdrop: Run, lab: Callable[..., Path
 
 
 def test_the_traffic_log_turns_over_and_stays_bounded(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("controller.trafficlog.LARGEST_BYTES", 2000)
+    monkeypatch.setattr("controller.running.trafficlog.LARGEST_BYTES", 2000)
     file = TrafficFile(tmp_path)
     line = file.line("pump")
     for index in range(1000):

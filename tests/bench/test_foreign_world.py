@@ -15,8 +15,8 @@ from typing import Any
 import pytest
 
 from configs.settings import shipped_bench, shipped_method
-from controller.decide import decide
-from controller.planning import SampleChoice, expected_account, make_plan
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.running.decide import decide
 from controller.titration.core import titrate
 
 ACID_MMOL, POTASSIUM_MMOL, BASE_MOL_L, START_ML = 0.45, 0.20, 0.0997, 50.0

@@ -18,7 +18,7 @@ from pathlib import Path
 import pytest
 
 from controller.cli import main
-from controller.record import list_records, read_record, verify
+from controller.records.record import list_records, read_record, verify
 from controller.report.contents import report_contents
 from controller.report.export import data_package, tables
 from controller.report.page import render
@@ -248,8 +248,8 @@ def test_an_edited_record_ends_the_command_with_status_1(halfdrop: Run, runs: li
 
 def test_a_run_loads_neither_matplotlib_nor_jinja2(runs: list[Path]) -> None:
     modules = (
-        "controller.assembly", "controller.runner", "controller.commands.run", "controller.evaluate_record",
-        "controller.report.export", "controller.reevaluation", "controller.commands.evaluate",
+        "controller.assembly", "controller.runner", "controller.commands.run", "controller.curves.evaluate_record",
+        "controller.report.export", "controller.records.reevaluation", "controller.commands.evaluate",
         "controller.commands.runs",
     )  # fmt: skip
     code = f"import sys, {', '.join(modules)}; print(sorted({{'matplotlib', 'jinja2'}} & set(sys.modules)))"

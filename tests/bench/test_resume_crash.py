@@ -11,16 +11,23 @@ from typing import Any
 
 import pytest
 
-from controller.brokenrun import read_broken
-from controller.execution import Devices
+from controller.foresight.study_plan import (
+    BASELINE,
+    EQUAL_VOLUMES,
+    MODEL_GUIDED,
+    WITHOUT_RECORD,
+    Strategy,
+    nominal_plan,
+)
 from controller.journal import Journal
-from controller.outcome import RunFailedError, RunResult
-from controller.record import read_record, verify
+from controller.records.brokenrun import read_broken
+from controller.records.record import read_record, verify
 from controller.replay import replay
-from controller.resume import GO_ON, GoingOn, go_on
+from controller.resuming.resume import GO_ON, GoingOn, go_on
 from controller.runner import run
-from controller.stopping import StopSwitch
-from controller.study_plan import BASELINE, EQUAL_VOLUMES, MODEL_GUIDED, WITHOUT_RECORD, Strategy, nominal_plan
+from controller.running.execution import Devices
+from controller.running.outcome import RunFailedError, RunResult
+from controller.running.stopping import StopSwitch
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan
 from drivers.clock import ManualClock

@@ -11,15 +11,15 @@ from typing import Any
 
 import pytest
 
-from controller.encoding import plan_from_json
-from controller.execution import Devices
+from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
 from controller.journal import Journal
-from controller.outcome import RunResult
-from controller.record import points, read_record, verify
-from controller.recordfile import FileSink
+from controller.records.encoding import plan_from_json
+from controller.records.record import points, read_record, verify
+from controller.records.recordfile import FileSink
 from controller.runner import run
-from controller.stopping import StopSwitch
-from controller.study_plan import MODEL_GUIDED, nominal_plan
+from controller.running.execution import Devices
+from controller.running.outcome import RunResult
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import from_entry, to_entry
 from controller.titration.core import titrate
 from controller.titration.plan import Question, RunPlan

@@ -8,13 +8,13 @@ from typing import Any
 
 from configs.settings import shipped_bench, shipped_method
 from controller.assembly import Opening, open_bench
-from controller.execution import Devices
 from controller.journal import Journal
-from controller.outcome import RunResult
-from controller.planning import SampleChoice, make_plan, plan_sample
-from controller.recordfile import FileSink, MemorySink
+from controller.planning.runplan import SampleChoice, make_plan, plan_sample
+from controller.records.recordfile import FileSink, MemorySink
 from controller.runner import run
-from controller.stopping import StopSwitch
+from controller.running.execution import Devices
+from controller.running.outcome import RunResult
+from controller.running.stopping import StopSwitch
 from controller.titration.core import titrate
 from drivers.pump import Delivered
 

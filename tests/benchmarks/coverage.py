@@ -30,10 +30,10 @@ import numpy as np
 
 from configs.catalogue import substance
 from configs.water import buoyancy_factor
-from controller.amounts import determination_of, standardisation_of
 from controller.evaluation.carried import carry
+from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
+from controller.planning.amounts import determination_of, standardisation_of
 from controller.study import StudyWorld, drive
-from controller.study_plan import MODEL_GUIDED, nominal_plan
 from controller.titration.plan import ReportAs, RunPlan, Sample, Titrant, WeakAcid
 from controller.titration.traceability import BuretteInForce, Cause, LotInForce, Traceability, Weighing
 from simulators.bench import VirtualBench

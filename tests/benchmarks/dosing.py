@@ -24,8 +24,8 @@ sys.path.insert(0, str(Path(__file__).resolve().parent))
 
 from dosing_bound import bound_ul
 
+from controller.foresight.study_plan import BASELINE, LAX_BASELINE, MODEL_GUIDED, WITHOUT_RECORD, Strategy
 from controller.study import StudyOutcome, study
-from controller.study_plan import BASELINE, LAX_BASELINE, MODEL_GUIDED, WITHOUT_RECORD, Strategy
 from simulators.nominal import NOMINAL_CASES, NominalCase, nominal_bench
 
 STRATEGIES: tuple[Strategy, ...] = (MODEL_GUIDED, WITHOUT_RECORD, BASELINE, LAX_BASELINE)

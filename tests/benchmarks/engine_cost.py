@@ -11,7 +11,7 @@ import sys
 import time
 from dataclasses import replace
 
-from controller.study_plan import EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, Strategy, nominal_plan
+from controller.foresight.study_plan import EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, Strategy, nominal_plan
 from controller.titration.actions import (
     Answered,
     Ask,

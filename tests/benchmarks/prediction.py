@@ -7,9 +7,9 @@ from __future__ import annotations
 
 import sys
 
-from controller.prediction import predict_run
+from controller.foresight.prediction import predict_run
+from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
 from controller.study import nominal_run
-from controller.study_plan import MODEL_GUIDED, nominal_plan
 from simulators.nominal import NominalCase, nominal_bench
 
 

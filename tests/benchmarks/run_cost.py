@@ -22,10 +22,10 @@ sys.path.insert(0, str(Path(__file__).parents[2]))
 from configs.settings import shipped_bench, shipped_method
 from controller.assembly import Opening, Route, open_bench
 from controller.journal import Journal
-from controller.planning import SampleChoice, make_plan, plan_sample
-from controller.recordfile import MemorySink
+from controller.planning.runplan import SampleChoice, make_plan, plan_sample
+from controller.records.recordfile import MemorySink
 from controller.runner import run
-from controller.stopping import StopSwitch
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import Decisions, Read, Wait
 from controller.titration.core import titrate
 

@@ -27,10 +27,10 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
-from controller.archive_index import ArchiveIndex
-from controller.commandclient import send_command
 from controller.labfolder import Lab, find_lab, init_lab
-from controller.launch import record_of, start_run
+from controller.records.archive_index import ArchiveIndex
+from controller.running.commandclient import send_command
+from controller.running.launch import record_of, start_run
 from controller.ui.tail import all_entries
 from drivers.clock import SystemClock
 

@@ -9,14 +9,14 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from controller.header import header_of
+from controller.foresight.study_plan import BASELINE, MODEL_GUIDED, Strategy, nominal_plan
+from controller.foresight.whatif import compare, fit_record
 from controller.journal import Journal
-from controller.record import Record, read_record
-from controller.recordfile import FileSink
+from controller.records.header import header_of
+from controller.records.record import Record, read_record
+from controller.records.recordfile import FileSink
 from controller.study import StudyWorld, drive, nominal_run
-from controller.study_plan import BASELINE, MODEL_GUIDED, Strategy, nominal_plan
 from controller.titration.actions import Action, Finish, Observation
-from controller.whatif import compare, fit_record
 from drivers.clock import ManualClock
 from simulators.nominal import NominalCase, nominal_bench
 

@@ -27,14 +27,14 @@ if __name__ == "__main__":
 
 from configs.errors import HalfdropError
 from configs.faultfile import FaultSettings, FaultsSettings
-from controller.execution import Devices
+from controller.foresight.study_plan import MODEL_GUIDED, WITHOUT_RECORD, Strategy, nominal_plan
 from controller.guard import room_ml
 from controller.journal import Journal
-from controller.record import verify_bytes
-from controller.recordfile import MemorySink
+from controller.records.record import verify_bytes
+from controller.records.recordfile import MemorySink
 from controller.runner import run
-from controller.stopping import StopSwitch
-from controller.study_plan import MODEL_GUIDED, WITHOUT_RECORD, Strategy, nominal_plan
+from controller.running.execution import Devices
+from controller.running.stopping import StopSwitch
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan
 from drivers.clock import ManualClock

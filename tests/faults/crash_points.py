@@ -18,9 +18,9 @@ from collections import Counter
 from pathlib import Path
 from typing import Any
 
-from controller.record import read_record, verify
+from controller.foresight.study_plan import BASELINE, EQUAL_VOLUMES, LAX_BASELINE, MODEL_GUIDED, WITHOUT_RECORD
+from controller.records.record import read_record, verify
 from controller.replay import replay
-from controller.study_plan import BASELINE, EQUAL_VOLUMES, LAX_BASELINE, MODEL_GUIDED, WITHOUT_RECORD
 
 STRATEGIES = (MODEL_GUIDED, WITHOUT_RECORD, BASELINE, LAX_BASELINE, EQUAL_VOLUMES)
 CASES = ("acetic", "malic", "citric", "strong-acid", "dilute-acid")

@@ -29,10 +29,10 @@ from configs.loading import parse
 from configs.method import MethodSettings
 from configs.settings import BenchSettings, SolutionSettings, shipped_dialect
 from configs.shipped import shipped_bytes
-from controller.curvefile import CurveOptions, read_curve
+from controller.curves.curvefile import CurveOptions, read_curve
 from controller.journal import Journal
-from controller.record import read_record, verify_bytes
-from controller.recordfile import MemorySink
+from controller.records.record import read_record, verify_bytes
+from controller.records.recordfile import MemorySink
 from controller.titration.actions import Dose, Dosed, Read, Reading, from_entry
 from drivers import scpi_tree as tree
 from drivers.clock import ManualClock

@@ -17,7 +17,7 @@ import tempfile
 from pathlib import Path
 from typing import Any
 
-from controller.record import Record, read_record
+from controller.records.record import Record, read_record
 from controller.replay import dialogue, plan_of_record, replay
 from controller.titration.core import titrate
 

@@ -15,13 +15,13 @@ from configs.errors import HalfdropError, SettingsError
 from configs.faultfile import FaultsSettings
 from configs.loading import parse
 from configs.settings import BenchSettings
-from controller.execution import Execution
 from controller.guard import Guard, room_ml
 from controller.journal import Journal
-from controller.log import LabLog
-from controller.record import printable, verify_bytes
-from controller.recordfile import MemorySink, new_record
-from controller.stopping import StopSwitch
+from controller.records.record import printable, verify_bytes
+from controller.records.recordfile import MemorySink, new_record
+from controller.running.execution import Execution
+from controller.running.log import LabLog
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import Dose, Dosed, Prime, Read, Reading, Refill, Refused, Wait
 from drivers.clock import ManualClock
 

@@ -15,10 +15,10 @@ import pytest
 from configs.errors import SettingsError
 from configs.loading import parse
 from configs.notifying import NotifySettings
-from controller.attendance import attended
-from controller.awake import kept_awake
 from controller.cli import main
-from controller.notify import MOST_UNDER_WAY, Notifier
+from controller.running.attendance import attended
+from controller.running.awake import kept_awake
+from controller.running.notify import MOST_UNDER_WAY, Notifier
 from drivers.clock import ManualClock
 from drivers.operator import AnswersOperator
 
@@ -157,7 +157,7 @@ def test_a_run_leaves_its_lines_in_the_log(tmp_path: Path, capsys: pytest.Captur
 
 
 def test_staying_awake_costs_nothing_where_the_system_has_nothing_for_it(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("controller.awake.shutil.which", lambda name: None)
+    monkeypatch.setattr("controller.running.awake.shutil.which", lambda name: None)
     if sys.platform == "win32":
         pytest.skip("Windows is asked directly")
     with kept_awake("test") as done:
@@ -166,6 +166,8 @@ def test_staying_awake_costs_nothing_where_the_system_has_nothing_for_it(monkeyp
 
 @pytest.mark.skipif(sys.platform == "win32", reason="Windows is asked directly")
 def test_what_keeps_the_computer_awake_ends_with_the_block(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("controller.awake._command", lambda why: [sys.executable, "-c", "import sys; sys.stdin.read()"])
+    monkeypatch.setattr(
+        "controller.running.awake._command", lambda why: [sys.executable, "-c", "import sys; sys.stdin.read()"]
+    )
     with kept_awake("test") as done:
         assert done is True

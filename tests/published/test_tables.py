@@ -7,7 +7,7 @@ from typing import Any
 
 import pytest
 
-from controller.evaluate_file import EvaluateOptions, evaluate_file
+from controller.curves.evaluate_file import EvaluateOptions, evaluate_file
 
 TABLES = Path(__file__).resolve().parents[1] / "data" / "tables"
 

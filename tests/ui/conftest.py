@@ -17,13 +17,13 @@ from typing import Any
 import pytest
 
 from configs.settings import shipped_bench, shipped_method
-from controller.commandport import CommandPort, command_port
-from controller.encoding import plan_to_json
 from controller.journal import Journal
 from controller.labfolder import Lab, find_lab, init_lab
-from controller.planning import SampleChoice, expected_account, make_plan
-from controller.recordfile import FileSink
-from controller.stopping import StopSwitch
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.records.encoding import plan_to_json
+from controller.records.recordfile import FileSink
+from controller.running.commandport import CommandPort, command_port
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import (
     Action,
     Answered,

@@ -15,9 +15,9 @@ from collections.abc import Awaitable, Callable
 from pathlib import Path
 from typing import Any
 
-from controller.commandclient import send_command
 from controller.labfolder import Lab, find_lab, init_lab
-from controller.launch import record_of, start_run
+from controller.running.commandclient import send_command
+from controller.running.launch import record_of, start_run
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.calibration import CalibrationScreen
 from controller.ui.widgets.answerfield import AnswerField

@@ -9,7 +9,7 @@ import pytest
 
 from controller.calibration.store import in_force
 from controller.journal import Journal
-from controller.recordfile import FileSink
+from controller.records.recordfile import FileSink
 from controller.titration.actions import Ask, Read, Reading, Report
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.calibration import CalibrationScreen, CalibrationsScreen

@@ -16,11 +16,11 @@ from typing import Any
 
 import pytest
 
-from controller.benchwork import ask_bench
-from controller.commandclient import running, send_command
+from controller.benchwork.work import ask_bench
 from controller.labfolder import Lab
-from controller.launch import RunNotStartedError, record_of, start_run
-from controller.record import read_record, summarise, verify
+from controller.records.record import read_record, summarise, verify
+from controller.running.commandclient import running, send_command
+from controller.running.launch import RunNotStartedError, record_of, start_run
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.archive import ArchiveScreen
 from controller.ui.screens.run import RunScreen
@@ -198,7 +198,7 @@ def test_a_bench_in_use_is_not_disturbed(started: tuple[Lab, Path]) -> None:
 
 def test_signals_end_a_run_as_they_should(started: tuple[Lab, Path]) -> None:
     _, record = started
-    from controller.commandclient import read_announcement
+    from controller.running.commandclient import read_announcement
 
     told = read_announcement(record)
     assert told is not None

@@ -38,7 +38,9 @@ def test_a_finished_run_as_it_looks(stage: Any, size: tuple[int, int]) -> None:
 
 @pytest.mark.parametrize("size", SIZES)
 def test_a_run_that_goes_on_as_it_looks(stage: Any, monkeypatch: pytest.MonkeyPatch, size: tuple[int, int]) -> None:
-    monkeypatch.setattr("controller.progress.Pace.time_left_s", lambda *_: 95.0)  # its estimate is tested elsewhere
+    monkeypatch.setattr(
+        "controller.running.progress.Pace.time_left_s", lambda *_: 95.0
+    )  # its estimate is tested elsewhere
     script = stage.script(points=16)
     script.read(5.9, 3)
     app = HalfdropApp(lab=stage.lab, record=script.path)

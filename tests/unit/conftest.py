@@ -296,9 +296,9 @@ class FakeBench:
     """Clock, devices and record sink that share one log of calls."""
 
     def __init__(self) -> None:
-        from controller.execution import Devices
         from controller.journal import Journal
-        from controller.stopping import StopSwitch
+        from controller.running.execution import Devices
+        from controller.running.stopping import StopSwitch
 
         self.log: list[str] = []
         self.clock = ManualClock(start_s=100.0)

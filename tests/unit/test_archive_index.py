@@ -9,7 +9,7 @@ from pathlib import Path
 
 import pytest
 
-from controller.archive_index import FILE, ArchiveIndex
+from controller.records.archive_index import FILE, ArchiveIndex
 
 
 def _record(runs: Path, number: int, *, sample: str = "press", outcome: str | None = "completed") -> Path:

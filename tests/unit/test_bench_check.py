@@ -13,11 +13,11 @@ from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import shipped_bench, shipped_method
 from controller.assembly import Opening, reach_bench
-from controller.bench_check import BenchCheck
-from controller.bench_finding import Finding
-from controller.bench_shutdown import shut_down_steps
-from controller.planning import SampleChoice, plan_sample
-from controller.stopping import StopSwitch
+from controller.benchwork.bench_check import BenchCheck
+from controller.benchwork.bench_finding import Finding
+from controller.benchwork.bench_shutdown import shut_down_steps
+from controller.planning.runplan import SampleChoice, plan_sample
+from controller.running.stopping import StopSwitch
 from drivers.errors import DeviceSilentError, StoppedError
 
 METHOD = shipped_method("juice-acidity")
@@ -239,9 +239,9 @@ def test_the_trial_of_the_stop_leaves_the_switch_as_it_was(reach: Callable[..., 
 
 
 def test_a_port_that_another_program_holds_as_well_is_a_warning(monkeypatch: pytest.MonkeyPatch) -> None:
-    from controller.bench_check import _shared
+    from controller.benchwork.bench_check import _shared
 
-    monkeypatch.setattr("controller.bench_check.owner_of", lambda path: (4711, "terminal"))
+    monkeypatch.setattr("controller.benchwork.bench_check.owner_of", lambda path: (4711, "terminal"))
     (finding,) = _shared("probe", "/dev/ttyUSB0")
     assert (finding.verdict, finding.what) == ("warning", "terminal (process 4711) holds it open as well")
     for url in ("memory://probe", "socket://127.0.0.1:9", "/dev/pts/3"):

@@ -15,7 +15,7 @@ from controller.calibration.burette import BuretteCorrection
 from controller.calibration.burette_session import check_burette, correction_to_json
 from controller.calibration.planning_burette import WeighingConditions, plan_burette, read_weighings
 from controller.calibration.plans import BurettePlan
-from controller.planning import PumpAccount
+from controller.planning.runplan import PumpAccount
 from controller.titration.actions import (
     Action,
     Answered,

@@ -13,10 +13,16 @@ from typing import Any
 import pytest
 
 from configs.errors import HalfdropError
-from controller.commandclient import MOST_LINE_BYTES, RunNotListeningError, read_announcement, running, send_command
-from controller.commandport import MOST_CONNECTIONS, MOST_WAITING, CommandPort, command_port
 from controller.runner import run
-from controller.stopping import StopSwitch
+from controller.running.commandclient import (
+    MOST_LINE_BYTES,
+    RunNotListeningError,
+    read_announcement,
+    running,
+    send_command,
+)
+from controller.running.commandport import MOST_CONNECTIONS, MOST_WAITING, CommandPort, command_port
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import Ask, Command, Dose, Dosed, Finish, Wait, Waited
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan

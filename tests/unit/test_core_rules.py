@@ -10,7 +10,7 @@ import pytest
 
 from controller.evaluation.inverse import InverseSetting, fit_inverse
 from controller.evaluation.protons import ladders
-from controller.study_plan import MODEL_GUIDED, nominal_plan
+from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
 from controller.titration.composition import Composition
 from controller.titration.dosing import SlopeAdaptive, curvature_limit_ml, local_slope
 from controller.titration.endpoint import EndPointWatch

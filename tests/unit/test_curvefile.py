@@ -9,9 +9,9 @@ import numpy as np
 import pytest
 
 from configs.errors import HalfdropError
-from controller.curvefile import CurveFile, CurveOptions, read_curve
-from controller.evaluate_file import EvaluateOptions, evaluate_file
-from controller.tablefile import LARGEST_BYTES, TableError
+from controller.curves.curvefile import CurveFile, CurveOptions, read_curve
+from controller.curves.evaluate_file import EvaluateOptions, evaluate_file
+from controller.curves.tablefile import LARGEST_BYTES, TableError
 
 POINTS = [(0, 3.0), (2, 4.2), (4, 4.8), (6, 5.4), (8, 6.1), (9, 7.0), (10, 9.5), (11, 11.0), (12, 11.4)]
 Reader = Callable[..., CurveFile]

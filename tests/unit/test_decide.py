@@ -8,7 +8,7 @@ from typing import Any
 
 import pytest
 
-from controller.decide import decide
+from controller.running.decide import decide
 from controller.titration.actions import Ask, Dose, EntryError, Finish, Read, Report, Wait, to_entry
 
 DOSE = Dose(number=1, volume_ml=0.1, reason="first")

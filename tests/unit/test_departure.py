@@ -9,13 +9,13 @@ import pytest
 
 from configs.settings import shipped_bench, shipped_method
 from controller.cli import main
-from controller.departure import DepartureWatch
+from controller.foresight.departure import DepartureWatch
+from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
 from controller.labfolder import init_lab
-from controller.planning import SampleChoice, expected_account, make_plan
-from controller.record import read_record
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.records.record import read_record
 from controller.replay import replay
 from controller.study import StudyWorld, drive, nominal_run
-from controller.study_plan import MODEL_GUIDED, nominal_plan
 from controller.titration.actions import Report
 from controller.titration.plan import RunPlan
 from simulators.nominal import nominal_bench

@@ -11,7 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from configs.errors import SettingsError
-from controller.encoding import PlanVersionError, plan_from_json, plan_to_json
+from controller.records.encoding import PlanVersionError, plan_from_json, plan_to_json
 from controller.titration.plan import RunPlan
 
 MakePlan = Callable[..., RunPlan]

@@ -8,7 +8,7 @@ from typing import Any
 import pytest
 
 from controller.commands.lines import estimator_lines
-from controller.evaluate_file import EvaluateOptions, evaluate_file
+from controller.curves.evaluate_file import EvaluateOptions, evaluate_file
 
 
 def _one(name: str, volume_ml: float, remark: str | None = None, *, sound: bool = True) -> dict[str, Any]:

@@ -6,9 +6,9 @@ import numpy as np
 import pytest
 
 from configs.catalogue import substance, substances
+from controller.curves.identify import identity_of
 from controller.evaluation.curve import Curve
 from controller.evaluation.identity import Candidate, EquivalentMass, Identity, IdentityError, identify
-from controller.identify import identity_of
 from simulators.solution import Medium, Mixture, StrongIon, WeakComponent, titration_curve
 
 DEBYE_HUCKEL_A, PKW = 0.51, 13.995

@@ -13,21 +13,21 @@ import pytest
 from configs.benchfile import BenchSettings
 from configs.method import MethodSettings
 from configs.settings import shipped_bench, shipped_method
-from controller.amountinputs import burette_of, titrant_of
-from controller.amounts import add_ph_uncertainty
 from controller.calibration.findings import Finding, Verdict
 from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import common, no_pump, probe_of, vessel_of
 from controller.calibration.plans import BlankPlan, CalibrationPlan, TitrantPlan
 from controller.calibration.store import calibrations, in_force
-from controller.encoding import plan_from_json, plan_to_json
-from controller.execution import Devices
-from controller.inforce import NotInForceError, find_in_force
 from controller.journal import Journal
-from controller.planning import SampleChoice, expected_account, make_plan
-from controller.recordfile import new_record
+from controller.planning.amountinputs import burette_of, titrant_of
+from controller.planning.amounts import add_ph_uncertainty
+from controller.planning.inforce import NotInForceError, find_in_force
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.records.encoding import plan_from_json, plan_to_json
+from controller.records.recordfile import new_record
 from controller.runner import run
-from controller.stopping import StopSwitch
+from controller.running.execution import Devices
+from controller.running.stopping import StopSwitch
 from controller.titration.plan import ProbeCalibration
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
 from drivers.clock import ManualClock

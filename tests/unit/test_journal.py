@@ -13,8 +13,8 @@ import pytest
 
 from configs.errors import HalfdropError
 from controller.journal import DiskFullError, Journal, RecordError, encode, utc_text
-from controller.record import read_record, verify, verify_bytes
-from controller.recordfile import RESERVE_BYTES, FileSink, MemorySink, new_record
+from controller.records.record import read_record, verify, verify_bytes
+from controller.records.recordfile import RESERVE_BYTES, FileSink, MemorySink, new_record
 from controller.titration.actions import Dose, Read, Reading
 from drivers.clock import ManualClock
 

@@ -10,12 +10,12 @@ from pathlib import Path
 
 import pytest
 
-from controller.encoding import plan_from_json, plan_to_json
-from controller.evaluate_record import evaluate_record
-from controller.playback import play
-from controller.progress import Progress
-from controller.record import points, read_record, verify
+from controller.curves.evaluate_record import evaluate_record
+from controller.records.encoding import plan_from_json, plan_to_json
+from controller.records.playback import play
+from controller.records.record import points, read_record, verify
 from controller.replay import dialogue, plan_of_record, replay
+from controller.running.progress import Progress
 from drivers.clock import ManualClock
 
 KEPT = sorted((Path(__file__).resolve().parents[1] / "data" / "records").glob("run-record-*.jsonl"))

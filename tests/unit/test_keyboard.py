@@ -9,7 +9,7 @@ import pytest
 
 from controller.commands.keyboard import END, GO_ON, Keyboard
 from controller.commands.signals import pulling
-from controller.stopping import StopSwitch
+from controller.running.stopping import StopSwitch
 from controller.titration.actions import Command
 from drivers.operator import AnswerMissingError
 

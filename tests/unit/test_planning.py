@@ -6,7 +6,7 @@ import pytest
 
 from configs.errors import HalfdropError
 from configs.settings import shipped_bench, shipped_method
-from controller.planning import SampleChoice, expected_account, make_plan
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
 from controller.titration.plan import RunPlan
 
 BENCH = shipped_bench()

@@ -6,7 +6,7 @@ import pytest
 
 from configs.errors import HalfdropError
 from configs.settings import load_solution
-from controller.predict import curve_text, medium_of, predict_solution, read_volumes
+from controller.foresight.predict import curve_text, medium_of, predict_solution, read_volumes
 from simulators.solution import Medium, Mixture, StrongIon, WeakComponent, titration_curve
 
 ACETIC = """\

@@ -12,10 +12,10 @@ from configs.errors import HalfdropError
 from configs.settings import shipped_bench, shipped_method
 from controller.cli import main
 from controller.commands.predict import is_solution_file
-from controller.expectation import expected_world, vessel_of_plan
-from controller.expected_trouble import PlacedRefill, jump_mv, jump_warning, plan_problems
-from controller.planning import SampleChoice, expected_account, make_plan
-from controller.prediction import coverage_of, predict_run
+from controller.foresight.expectation import expected_world, vessel_of_plan
+from controller.foresight.expected_trouble import PlacedRefill, jump_mv, jump_warning, plan_problems
+from controller.foresight.prediction import coverage_of, predict_run
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
 from controller.titration.plan import RunPlan
 from simulators.equivalence import equivalence_volumes_ml
 from simulators.solution import titration_curve

@@ -8,9 +8,9 @@ from pathlib import Path
 
 import pytest
 
-from controller.playback import play
-from controller.progress import Pace, Progress
-from controller.record import Record, read_record
+from controller.records.playback import play
+from controller.records.record import Record, read_record
+from controller.running.progress import Pace, Progress
 from controller.titration.actions import Dose, Dosed, Report
 from controller.titration.plan import RunPlan
 from drivers.clock import ManualClock

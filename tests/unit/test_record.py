@@ -15,7 +15,7 @@ from hypothesis import strategies as st
 
 from configs.errors import HalfdropError
 from controller.journal import Journal
-from controller.record import (
+from controller.records.record import (
     NotARecordError,
     list_records,
     points,
@@ -25,10 +25,10 @@ from controller.record import (
     verify,
     verify_bytes,
 )
-from controller.recordfile import MemorySink
+from controller.records.recordfile import MemorySink
+from controller.records.unclosed import UnclosedRunError, close_record, refuse_unclosed, unclosed
 from controller.report.export import data_package, neutral, tables, whole
 from controller.titration.actions import Dose, Dosed, Reading, Report
-from controller.unclosed import UnclosedRunError, close_record, refuse_unclosed, unclosed
 from drivers.clock import ManualClock
 
 HEADER = {

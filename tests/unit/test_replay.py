@@ -14,14 +14,7 @@ import pytest
 from configs.version import __version__
 from controller.cli import main
 from controller.commands.lines import Lines
-from controller.header import header_of
-from controller.journal import Journal, encode
-from controller.playback import play
-from controller.record import Record, read_record
-from controller.recordfile import FileSink
-from controller.replay import ReplayError, dialogue, rebuild, replay
-from controller.study import StudyWorld, drive
-from controller.study_plan import (
+from controller.foresight.study_plan import (
     BASELINE,
     EQUAL_VOLUMES,
     FIXED_WAIT,
@@ -31,6 +24,13 @@ from controller.study_plan import (
     Strategy,
     nominal_plan,
 )
+from controller.journal import Journal, encode
+from controller.records.header import header_of
+from controller.records.playback import play
+from controller.records.record import Record, read_record
+from controller.records.recordfile import FileSink
+from controller.replay import ReplayError, dialogue, rebuild, replay
+from controller.study import StudyWorld, drive
 from controller.titration.actions import (
     Action,
     Back,

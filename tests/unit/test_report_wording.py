@@ -11,7 +11,7 @@ import pytest
 from configs.errors import HalfdropError
 from controller.commands.lines import result_lines
 from controller.commands.output import chance_text
-from controller.reevaluation import add_evaluation, added_evaluations
+from controller.records.reevaluation import add_evaluation, added_evaluations
 from controller.report.budget import budget_table
 from controller.report.cautions import cautions_of
 from controller.report.page import render

@@ -7,9 +7,9 @@ from dataclasses import replace
 import pytest
 
 from controller.calibration.response import Dosing, Hold, ResponseError, fit_response
-from controller.responsecheck import response_of
+from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
+from controller.planning.responsecheck import response_of
 from controller.study import StudyWorld, drive
-from controller.study_plan import MODEL_GUIDED, nominal_plan
 from controller.titration.actions import Dose, Dosed, Reading, to_entry
 from controller.titration.plan import ProbeResponse, ResponseCheck
 from simulators.lag import LagCascade, LagConstants

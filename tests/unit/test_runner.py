@@ -13,9 +13,9 @@ import pytest
 from configs.errors import HalfdropError
 from controller.guard import StartRefusedError
 from controller.journal import DiskFullError
-from controller.outcome import NOT_CONFIRMED, RunFailedError, RunResult
-from controller.record import verify_bytes
+from controller.records.record import verify_bytes
 from controller.runner import run
+from controller.running.outcome import NOT_CONFIRMED, RunFailedError, RunResult
 from controller.titration.actions import (
     Action,
     Answered,
@@ -420,7 +420,7 @@ def test_any_exception_stops_the_pump_closes_the_record_and_is_told(
 
     if where == "clock":
         monkeypatch.setattr(fake_bench.probe, "read", silent)
-        monkeypatch.setattr("controller.execution.Execution._wait", lambda *_: 1 / 0)
+        monkeypatch.setattr("controller.running.execution.Execution._wait", lambda *_: 1 / 0)
     with pytest.raises(RunFailedError, match="ZeroDivisionError"):
         go(fake_bench, plan, core, on_progress=progress)
     assert fake_bench.log.count("pump stop") == 1

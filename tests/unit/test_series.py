@@ -13,12 +13,12 @@ from configs.errors import HalfdropError, SettingsError
 from configs.settings import shipped_method, shipped_methods
 from controller.cli import main
 from controller.commands import seriesrun as command
+from controller.curves.tablefile import TableError
 from controller.labfolder import init_lab
-from controller.outcome import RunResult
-from controller.record import read_record, verify
-from controller.series import Series, read_series, titrations_of
-from controller.seriesrecord import read_state
-from controller.tablefile import TableError
+from controller.planning.series import Series, read_series, titrations_of
+from controller.records.record import read_record, verify
+from controller.records.seriesrecord import read_state
+from controller.running.outcome import RunResult
 
 
 def find(name: str) -> Any:

@@ -7,7 +7,7 @@ from dataclasses import replace
 import pytest
 
 from controller.evaluation.inverse import InverseFit
-from controller.study_plan import MODEL_GUIDED, nominal_plan
+from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
 from controller.titration import forecast as forecast_module
 from controller.titration.forecast import Forecast
 from controller.titration.points import PhScale, Point

@@ -8,8 +8,8 @@ from pathlib import Path
 import pytest
 
 from controller.journal import Journal
-from controller.recordfile import FileSink
-from controller.titrant_account import FILE_NAME, TitrantAccount, account_of, keep
+from controller.records.recordfile import FileSink
+from controller.running.titrant_account import FILE_NAME, TitrantAccount, account_of, keep
 from controller.titration.actions import Action, Dose, Dosed, Failed, Observation, Primed
 from drivers.clock import ManualClock
 

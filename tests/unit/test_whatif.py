@@ -10,19 +10,19 @@ import pytest
 
 from configs.errors import HalfdropError
 from configs.settings import shipped_bench, shipped_method
-from controller.benchfit import FitRefusedError, FittedBench, fit_bench
 from controller.cli import main
-from controller.header import header_of
+from controller.foresight.benchfit import FitRefusedError, FittedBench, fit_bench
+from controller.foresight.lagfit import FittedLag, Transients, fit_lag
+from controller.foresight.study_plan import BASELINE, MODEL_GUIDED, nominal_plan
+from controller.foresight.whatif import compare, fit_record, other_plan
 from controller.journal import Journal
-from controller.lagfit import FittedLag, Transients, fit_lag
-from controller.planning import SampleChoice, expected_account, make_plan
-from controller.record import Record, read_record
-from controller.recordfile import FileSink
+from controller.planning.runplan import SampleChoice, expected_account, make_plan
+from controller.records.header import header_of
+from controller.records.record import Record, read_record
+from controller.records.recordfile import FileSink
 from controller.study import StudyWorld, drive, nominal_run
-from controller.study_plan import BASELINE, MODEL_GUIDED, nominal_plan
 from controller.titration.actions import Action, Finish, Observation
 from controller.titration.plan import ProbeResponse
-from controller.whatif import compare, fit_record, other_plan
 from drivers.clock import ManualClock
 from simulators.lag import LagCascade, LagConstants
 from simulators.nominal import nominal_bench
@@ -124,7 +124,7 @@ def test_a_lag_is_found_from_its_transients():
 
 
 def test_without_readings_the_lag_stays_as_the_plan_has_it(fitted: FittedBench, record: Record):
-    from controller.evaluate_record import curve_of
+    from controller.curves.evaluate_record import curve_of
 
     bare = fit_bench(fitted.plan, curve_of(fitted.plan, record, where="test"))
     assert not bare.lag_fitted
@@ -134,7 +134,7 @@ def test_without_readings_the_lag_stays_as_the_plan_has_it(fitted: FittedBench, 
 
 
 def test_a_plan_without_a_substance_is_refused(fitted: FittedBench, record: Record):
-    from controller.evaluate_record import curve_of
+    from controller.curves.evaluate_record import curve_of
 
     plan = replace(fitted.plan, chemistry=replace(fitted.plan.chemistry, analyte=None))
     with pytest.raises(FitRefusedError, match="names no substance"):

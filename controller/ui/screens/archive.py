@@ -15,9 +15,9 @@ from textual.screen import Screen
 from textual.widgets import DataTable, Footer, Input
 
 from configs.errors import HalfdropError
-from controller.archive_index import ArchiveIndex, IndexedRun
 from controller.labfolder import Lab
-from controller.record import printable, read_record, verify
+from controller.records.archive_index import ArchiveIndex, IndexedRun
+from controller.records.record import printable, read_record, verify
 from controller.ui.screens.dialogs import Line, Text
 from controller.ui.screens.help import help_of
 from controller.ui.texts import clock_text, local_time_text

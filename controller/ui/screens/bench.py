@@ -14,9 +14,9 @@ from textual.widgets import Footer
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import load_bench
-from controller.benchwork import ask_bench
+from controller.benchwork.work import ask_bench
 from controller.labfolder import Lab
-from controller.record import printable
+from controller.records.record import printable
 from controller.ui.benchtext import calibration_lines, file_lines, probe_lines, pump_lines
 from controller.ui.screens.archive import printable_lines
 from controller.ui.screens.dialogs import Choice, Line

@@ -18,8 +18,8 @@ from controller.assembly import is_simulated
 from controller.calibration.store import Calibration, calibrations, in_force
 from controller.commands.calibrations import calibration_entry, followed
 from controller.labfolder import Lab
-from controller.launch import record_of, start_run
-from controller.record import printable
+from controller.records.record import printable
+from controller.running.launch import record_of, start_run
 from controller.ui.screens.archive import printable_lines, verify_for
 from controller.ui.screens.dialogs import Text
 from controller.ui.screens.help import help_of

@@ -67,7 +67,7 @@ class Commanding(Screen[None]):
         self.run_worker(partial(self._send, name, then, details), thread=True, group="commands")
 
     def _send(self, name: str, then: Callable[[], None] | None, details: dict[str, Any]) -> None:
-        from controller.commandclient import send_command
+        from controller.running.commandclient import send_command
 
         try:
             send_command(self.record, name, **details)
@@ -82,7 +82,7 @@ class Commanding(Screen[None]):
         self.run_worker(self._hello, thread=True, group="hello", exclusive=True)
 
     def _hello(self) -> None:
-        from controller.commandclient import send_command
+        from controller.running.commandclient import send_command
 
         try:
             send_command(self.record, "hello")

@@ -15,7 +15,7 @@ from textual.screen import Screen
 from textual.widgets import Footer
 
 from controller.commands.output import amount_text, volume_text
-from controller.record import printable
+from controller.records.record import printable
 from controller.ui.runview import RunView
 from controller.ui.screens.archive import printable_lines, verify_for
 from controller.ui.screens.dialogs import Text

@@ -15,7 +15,7 @@ from textual.widgets import Footer, Input, Select
 
 from configs.errors import HalfdropError
 from controller.labfolder import Lab
-from controller.record import printable
+from controller.records.record import printable
 from controller.ui.newrun import Prepared, Wanted, begin, expectation_text, methods_of, prepare, usual_method
 from controller.ui.screens.archive import printable_lines
 from controller.ui.screens.dialogs import Text

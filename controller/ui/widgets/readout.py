@@ -9,7 +9,7 @@ from textual.containers import Vertical
 from textual.widgets import Digits, Static
 
 from controller.commands.output import amount_text, volume_text
-from controller.record import printable
+from controller.records.record import printable
 from controller.ui.runview import RunView
 from controller.ui.seen import stability_mv_min
 from controller.ui.texts import clock_text, left_text

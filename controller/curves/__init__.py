@@ -1,0 +1,1 @@
+"""Curves from tables and records, evaluated for the command line."""

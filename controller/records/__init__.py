@@ -1,0 +1,1 @@
+"""Records: written, read, verified, watched again and looked up; whoever made them."""

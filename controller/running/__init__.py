@@ -1,0 +1,1 @@
+"""A run while it goes on: actions carried out, stopped, watched and told about."""
