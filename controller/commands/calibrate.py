@@ -238,7 +238,15 @@ def _settled(settled: SettledLot, opened: CalibrationBench, lab: Lab, given: arg
         warnings=settled.warnings,
     )
     with lock_lab(lab.path, {"command": "calibrate"}):
-        result = _carry_out(settled.plan, core, opened, lab, stop=StopSwitch(), operator_name=given.operator)
+        result = _carry_out(
+            settled.plan,
+            core,
+            opened,
+            lab,
+            stop=StopSwitch(),
+            operator_name=given.operator,
+            attended=given.attended,
+        )
     return _told(result, settled.plan, lab, as_json=given.json)
 
 

@@ -105,9 +105,22 @@ class HalfdropApp(App[int]):
         record = running(self.lab.runs) if self.lab is not None else None
         return None if record is None else RunScreen(record)
 
-    def open_run(self, record: Path, *, speed: float | None = None) -> None:
-        """Show a run in place of the present screen."""
-        self.switch_screen(RunScreen(record, speed=speed))
+    def open_run(
+        self, record: Path, *, speed: float | None = None, calibrations_before: frozenset[Path] | None = None
+    ) -> None:
+        """Show a run or a calibration in place of the present screen.
+
+        Args:
+            record: of the run.
+            speed: of its simulated bench, where it is known.
+            calibrations_before: those that were there before the calibration was started that this run belongs to.
+        """
+        if record.parent.name == "calibrations":
+            from controller.ui.screens.calibration import CalibrationScreen
+
+            self.switch_screen(CalibrationScreen(record, speed=speed))
+        else:
+            self.switch_screen(RunScreen(record, speed=speed, calibrations_before=calibrations_before))
 
     def use_lab(self, lab: Lab) -> None:
         """Take a lab folder that was just made or chosen."""

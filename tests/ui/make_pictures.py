@@ -8,6 +8,7 @@ Starts real runs in processes of their own and saves each screen as SVG (default
 from __future__ import annotations
 
 import asyncio
+import re
 import sys
 import tempfile
 import time
@@ -42,6 +43,12 @@ async def until(pilot: Any, holds: Callable[[], bool]) -> None:
         await pilot.pause(0.05)
 
 
+def self_contained(svg: str) -> str:
+    """Return a picture that asks nothing outside for its letters: installed ones do."""
+    faces = re.sub(r"@font-face \{[^}]*\}", "", svg)
+    return faces.replace("Fira Code,", "Fira Code, DejaVu Sans Mono, Menlo, Consolas,")
+
+
 def picture(app: HalfdropApp, size: tuple[int, int], steps: Callable[[Any], Awaitable[None]], path: Path) -> None:
     """Drive the application to a state and save what it shows."""
 
@@ -50,7 +57,7 @@ def picture(app: HalfdropApp, size: tuple[int, int], steps: Callable[[Any], Awai
             await pilot.pause()
             await steps(pilot)
             await pilot.pause(0.2)
-            path.write_text(app.export_screenshot(title="halfdrop"), encoding="utf-8")
+            path.write_text(self_contained(app.export_screenshot(title="halfdrop")), encoding="utf-8")
 
     asyncio.run(whole())
     print(f"wrote {path}")

@@ -101,6 +101,8 @@ class CalibrationsScreen(Screen[None]):
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("p", "start('probe')", "Probe"),
         Binding("u", "start('burette')", "Burette"),
+        Binding("t", "lot('titrant')", "Titrant"),
+        Binding("b", "lot('blank')", "Blank"),
         Binding("h", "history", "Trend"),
         Binding("enter", "open", "Open"),
         Binding("y", "copy", "Copy", show=False),
@@ -144,7 +146,8 @@ class CalibrationsScreen(Screen[None]):
         for row in rows:
             table.add_row(*(RichText(printable(str(row[name]))) for name, _ in _COLUMNS))
         if not rows:
-            self.query_one("#about", Plain).say("none yet: p calibrates the probe, u checks the burette")
+            text = "none yet: p calibrates the probe, u checks the burette, t settles a titrant, b a blank"
+            self.query_one("#about", Plain).say(text)
 
     def on_data_table_row_highlighted(self, event: DataTable.RowHighlighted) -> None:
         """Tell about the line."""
@@ -174,6 +177,12 @@ class CalibrationsScreen(Screen[None]):
             if one.accepted and (one.kind, one.subject) == (chosen.kind, chosen.subject)
         ]
         self.app.push_screen(Text(f"How the {chosen.kind} moved", history_text(accepted)))
+
+    def action_lot(self, kind: str) -> None:
+        """Fill in what a titrant's or a blank's calibration needs."""
+        from controller.ui.screens.lot import LotScreen
+
+        self.app.switch_screen(LotScreen(self._lab, kind))
 
     def action_start(self, kind: str) -> None:
         """Start a calibration in its own process."""

@@ -44,6 +44,7 @@ class Commanding(Screen[None]):
         super().__init__()
         self.record, self.view = record, RunView(name=record.stem)
         self.listens = True
+        self.pid: int | None = None  # of the process that runs it, once it has answered
         self._halted: Choice | None = None
         self._question: Choice | None = None
 
@@ -82,8 +83,11 @@ class Commanding(Screen[None]):
         self.run_worker(self._hello, thread=True, group="hello", exclusive=True)
 
     def _hello(self) -> None:
-        from controller.running.commandclient import send_command
+        from controller.running.commandclient import read_announcement, send_command
 
+        told = read_announcement(self.record)
+        if told is not None:
+            self.pid = told.pid
         try:
             send_command(self.record, "hello")
             listens = True

@@ -70,11 +70,13 @@ it says what to do, shows the reading and how steady it is, and judges against s
 
   p          calibrate the probe with the bench's buffers
   u          check the burette by weighing
+  t          standardise a titrant: replicates, portions of standard, or runs that are there
+  b          settle a blank: typed volumes, or runs without sample
   h          trend of slope and offset, or of the volumes
   Enter      open a record; in a calibration that goes on: answer its question
   s          end a calibration; nothing comes into force
 
-Titrants and blanks come from titrations: halfdrop calibrate titrant METHOD, halfdrop calibrate blank METHOD."""
+A titrant's portions are titrated one after the other, and the screen follows to the question at the end."""
 
 _TEXTS = {
     "run": ("A run", _RUN),

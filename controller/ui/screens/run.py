@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from functools import partial
 from pathlib import Path
-from typing import ClassVar
+from typing import Any, ClassVar
 
 from textual.app import ComposeResult
 from textual.binding import Binding, BindingType
@@ -26,6 +26,8 @@ FIRST_LOOK_S = 0.1
 SPEEDS = (1.0, 2.0, 5.0, 10.0, 20.0, 50.0, 100.0, 200.0, 500.0)
 #: between two hellos to the run, s
 HELLO_S = 5.0
+#: between two looks for the run that comes next, s
+FOLLOW_S = 1.0
 
 
 class RunScreen(Commanding):
@@ -35,6 +37,7 @@ class RunScreen(Commanding):
         record: its record.
         playback: plays the record again in place of following it.
         speed: of the simulated bench, where it is known.
+        calibrations_before: those there before a calibration began that this run is for; None: it is for none.
     """
 
     BINDINGS: ClassVar[list[BindingType]] = [
@@ -50,8 +53,16 @@ class RunScreen(Commanding):
         Binding("q,escape", "leave", "Leave", key_display="q"),
     ]
 
-    def __init__(self, record: Path, *, playback: Playback | None = None, speed: float | None = None) -> None:
+    def __init__(
+        self,
+        record: Path,
+        *,
+        playback: Playback | None = None,
+        speed: float | None = None,
+        calibrations_before: frozenset[Path] | None = None,
+    ) -> None:
         super().__init__(record)
+        self._calibrations_before = calibrations_before
         self._source: Source = playback if playback is not None else RecordTail(record)
         self._playback = playback
         self._speed = playback.speed if playback is not None else speed
@@ -75,6 +86,7 @@ class RunScreen(Commanding):
         if self._playback is None:
             self.set_timer(2 * FIRST_LOOK_S, self._greet)
             self.set_interval(HELLO_S, self._greet)
+            self.set_interval(FOLLOW_S, self._follow)
 
     # --- following ---------------------------------------------------------------------------------------------------
 
@@ -100,6 +112,18 @@ class RunScreen(Commanding):
     def _greet(self) -> None:
         if self.live:
             self.say_hello()
+
+    def _follow(self) -> None:
+        """Go to the next run of the same process, once it has begun."""
+        if self.live or not self.is_current or (self.pid is None and self._calibrations_before is None):
+            return
+        from controller.ui.following import next_record
+
+        found = next_record(self.record, self.pid, self._calibrations_before)
+        if found is not None:
+            self.notify("on to what comes next")
+            app: Any = self.app
+            app.open_run(found, speed=self._speed, calibrations_before=self._calibrations_before)
 
     def heard(self, listens: bool) -> None:
         """Somebody began or ceased to take commands."""

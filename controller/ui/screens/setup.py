@@ -55,17 +55,21 @@ class SetUpScreen(Screen[None]):
             choices = [(name, name) for name in methods]
             first = usual_method(self._lab)
             if first is None:
-                yield from _row("method", Select(choices, id="method", allow_blank=True, compact=True))
+                yield from form_row("method", Select(choices, id="method", allow_blank=True, compact=True))
             else:
-                yield from _row("method", Select(choices, id="method", value=first, allow_blank=False, compact=True))
-            yield from _row("", Plain("", id="method-title", classes="quiet"))
-            yield from _row("sample", Input(id="sample-id", placeholder="what the record calls it", compact=True))
-            yield from _row("amount", Input(id="amount", compact=True))
-            yield from _row("all liquid, mL", Input(id="initial", compact=True))
-            yield from _row("replicates", Input(value="1", id="replicates", compact=True))
-            yield from _row("or a series", Input(id="series", placeholder="a CSV file of samples", compact=True))
-            yield from _row("operator", Input(value=_user(), id="operator", compact=True))
-            yield from _row("simulated time", Select(_SCALES, id="scale", value="10", allow_blank=False, compact=True))
+                yield from form_row(
+                    "method", Select(choices, id="method", value=first, allow_blank=False, compact=True)
+                )
+            yield from form_row("", Plain("", id="method-title", classes="quiet"))
+            yield from form_row("sample", Input(id="sample-id", placeholder="what the record calls it", compact=True))
+            yield from form_row("amount", Input(id="amount", compact=True))
+            yield from form_row("all liquid, mL", Input(id="initial", compact=True))
+            yield from form_row("replicates", Input(value="1", id="replicates", compact=True))
+            yield from form_row("or a series", Input(id="series", placeholder="a CSV file of samples", compact=True))
+            yield from form_row("operator", Input(value=_user(), id="operator", compact=True))
+            yield from form_row(
+                "simulated time", Select(_SCALES, id="scale", value="10", allow_blank=False, compact=True)
+            )
             yield Plain("", id="problem", classes="problem")
             yield Vertical(id="questions")
         yield Footer(show_command_palette=False, compact=True)
@@ -222,7 +226,8 @@ class SetUpScreen(Screen[None]):
         self.app.push_screen(help_of("set-up"))
 
 
-def _row(label: str, field: Select[str] | Input | Plain) -> ComposeResult:
+def form_row(label: str, field: Select[str] | Input | Plain) -> ComposeResult:
+    """Return a line of a form: its label, its field."""
     with Horizontal(classes="row", id=f"row-{field.id}"):
         yield Plain(label, classes="label", id=f"label-{field.id}")
         yield field
