@@ -2,19 +2,20 @@
 
 from __future__ import annotations
 
+import math
 from datetime import UTC, datetime
 from typing import Any
 
 from configs.benchfile import BenchSettings, CalibrationSettings
 from controller.assembly import is_simulated
 from controller.benchwork.work import SLOW_REPLY_S
+from controller.calibration.acceptance import HOUSE_LIMITS
+from controller.calibration.store import Calibration
 from controller.records.record import printable
 from controller.ui.texts import local_time_text
 from simulators.constants import ideal_slope_mv
 
-#: limits of a usable probe and its age, common practice
-LOWEST_SLOPE_PERCENT, HIGHEST_SLOPE_PERCENT = 95.0, 102.0
-LARGEST_OFFSET_MV = 30.0
+#: a calibration typed into the bench file is old after this, common practice; one made here says when it is due
 OLDEST_CALIBRATION_DAYS = 7.0
 
 
@@ -46,14 +47,16 @@ def pump_lines(bench: BenchSettings, told: dict[str, Any]) -> list[str]:
     ]
 
 
-def probe_lines(bench: BenchSettings, told: dict[str, Any]) -> list[str]:
-    """Return what the probe answered."""
+def probe_lines(
+    bench: BenchSettings, told: dict[str, Any], calibration: CalibrationSettings | None = None
+) -> list[str]:
+    """Return what the probe answered; `calibration` turns its potential into pH."""
     port = f"on {printable(bench.probe.port)}"
     probe = told.get("probe")
     if not probe:
         return [f"probe       {port}: not asked yet"]
     temperature = "no temperature" if probe["temperature_c"] is None else f"{probe['temperature_c']:.1f} °C"
-    ph = _ph(bench.probe.calibration, probe["potential_mv"], probe["temperature_c"])
+    ph = _ph(calibration or bench.probe.calibration, probe["potential_mv"], probe["temperature_c"])
     return [
         f"probe       {printable(probe['identity'])} {port}",
         f"            {link_text(probe['reply_s'])}; status: {printable(probe['status'])}",
@@ -73,15 +76,43 @@ def calibration_lines(found: CalibrationSettings | None, now: datetime | None = 
     return [*lines, f"verdict     {verdict(found, now)}"]
 
 
+def in_force_lines(record: Calibration, now: datetime | None = None) -> list[str]:
+    """Return a calibration made here: when, what it found, its verdict, and when it is due."""
+    line, due_days = record.result["line"], record.plan.get("due_days")
+    age = _age_days(record.started_utc, now)
+    due = ""
+    if isinstance(due_days, int) and age is not None:
+        left = math.ceil(due_days - age)
+        due = f"; due in {left} days" if left > 0 else "; OVERDUE: calibrate before a result that counts"
+    return [
+        f"calibrated  {local_time_text(record.started_utc)}{_age_text(record.started_utc, now)} "
+        f"({printable(record.path.stem)})",
+        f"            slope {100.0 * line['slope_fraction']:.1f} % "
+        f"(u = {100.0 * line['slope_fraction_standard_uncertainty']:.2g} %), {line['isopotential_mv']:+.1f} mV at pH "
+        f"{line['isopotential_ph']:g} (u = {line['isopotential_standard_uncertainty_mv']:.2g} mV)",
+        f"verdict     {printable(str(record.result.get('verdict')))}{due}",
+    ]
+
+
+def settings_of(record: Calibration) -> CalibrationSettings:
+    """Return a calibration made here as the bench file would state it."""
+    line = record.result["line"]
+    return CalibrationSettings(
+        slope_percent=100.0 * line["slope_fraction"],
+        isopotential_ph=line["isopotential_ph"],
+        offset_mv=line["isopotential_mv"],
+        calibrated_utc=record.started_utc,
+    )
+
+
 def verdict(found: CalibrationSettings, now: datetime | None = None) -> str:
     """Return whether the probe is fit, and what to do where it is not."""
     age = _age_days(found.calibrated_utc, now)
-    if not LOWEST_SLOPE_PERCENT <= found.slope_percent <= HIGHEST_SLOPE_PERCENT:
-        return (
-            f"not fit: the slope is outside {LOWEST_SLOPE_PERCENT:g} to {HIGHEST_SLOPE_PERCENT:g} %; clean or replace"
-        )
-    if abs(found.offset_mv) > LARGEST_OFFSET_MV:
-        return f"not fit: the offset is beyond {LARGEST_OFFSET_MV:g} mV; look at the junction and the filling"
+    slopes, offsets = HOUSE_LIMITS.slope_percent, HOUSE_LIMITS.offset_mv
+    if slopes is not None and not slopes[0] <= found.slope_percent <= slopes[1]:
+        return f"not fit: the slope is outside {slopes[0]:g} to {slopes[1]:g} %; clean or replace"
+    if offsets is not None and not offsets[0] <= found.offset_mv <= offsets[1]:
+        return f"not fit: the offset is beyond {offsets[1]:g} mV; look at the junction and the filling"
     if age is None:
         return "the day is not known: calibrate before a result that counts"
     if age > OLDEST_CALIBRATION_DAYS:

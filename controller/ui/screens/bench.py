@@ -15,9 +15,17 @@ from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import load_bench
 from controller.benchwork.work import ask_bench
+from controller.calibration.store import Calibration, in_force
 from controller.labfolder import Lab
 from controller.records.record import printable
-from controller.ui.benchtext import calibration_lines, file_lines, probe_lines, pump_lines
+from controller.ui.benchtext import (
+    calibration_lines,
+    file_lines,
+    in_force_lines,
+    probe_lines,
+    pump_lines,
+    settings_of,
+)
 from controller.ui.screens.archive import printable_lines
 from controller.ui.screens.dialogs import Choice, Line
 from controller.ui.screens.help import help_of
@@ -82,9 +90,20 @@ class BenchScreen(Screen[None]):
             return
         self._say("bench-file", file_lines(self._bench))
         self._say("bench-pump", pump_lines(self._bench, self._told))
-        self._say("bench-probe", probe_lines(self._bench, self._told))
-        self._say("bench-calibration", calibration_lines(self._bench.probe.calibration))
+        record = self._in_force()
+        known = None if record is None else settings_of(record)
+        self._say("bench-probe", probe_lines(self._bench, self._told, known))
+        lines = calibration_lines(self._bench.probe.calibration) if record is None else in_force_lines(record)
+        self._say("bench-calibration", lines)
         self._say("bench-problem", self._problem_lines())
+
+    def _in_force(self) -> Calibration | None:
+        """The calibration of the probe that answered, if one was made here and accepted."""
+        probe = self._told.get("probe")
+        if not probe:
+            return None
+        record = in_force(self._lab.calibrations, "probe", probe["identity"])
+        return record if record is not None and "line" in record.result else None
 
     def _problem_lines(self) -> list[str]:
         if "error" not in self._told:
