@@ -1,4 +1,4 @@
-"""Settings of the course of a run: how it is dosed and settled, which end points it looks for, what ends it.
+"""Settings of how a run goes: how it is dosed and settled, which end points it looks for, what ends it.
 
 Words, units and groups are those of the run plan (controller/titration/plan.py).
 """
