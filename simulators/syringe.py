@@ -264,7 +264,7 @@ class Syringe:
     def _halt_push(self, motion: Motion, at_s: float) -> None:
         """It stands since its last whole step."""
         done = motion.done(at_s)
-        stopped_s = motion.reached_s(done)
+        stopped_s = min(at_s, motion.reached_s(done))  # the quotient may lie a last bit behind now
         pushed_ml = done * self.step_ml
         self._motion = self._last_push = replace(motion, steps=done, end_s=stopped_s, plunger_to_s=stopped_s)
         self._swallow_ml = max(0.0, motion.swallowed_ml - pushed_ml)

@@ -7,7 +7,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from simulators.delivery import DeliveryError, SyringeTruth
@@ -159,6 +159,7 @@ actions = st.lists(
 
 @settings(max_examples=120, deadline=None)
 @given(actions, st.integers(0, 50))
+@example([("dose", 500, 0.95)], 0)  # halted in the last bit before a step
 def test_steps_are_exact_whatever_happens(sequence, seed):
     truth = replace(REAL, syringe_ml=3.0, contents_ml=3.0, backlash_ml=0.004, backlash_taken_up=False)
     pump, jar = syringe(truth, seed)
