@@ -14,6 +14,7 @@ from controller.titration.dosing import DosingPolicy, EqualVolumes, PlannedDose,
 from controller.titration.endpoint import EndPointWatch, end_point_report
 from controller.titration.exchange import EndOfRunError, Exchange, Talk
 from controller.titration.forecast import Forecast
+from controller.titration.lag_learning import LearnedLag
 from controller.titration.limits import check_limits, largest_dose_ml
 from controller.titration.noise import READINGS, measure_noise
 from controller.titration.outcome import run_result
@@ -79,6 +80,16 @@ class _Run:
     def slowness(self) -> float | None:
         """How many times as slowly as its record says the probe answered; None where that is not known."""
         return self._settler.slowness if isinstance(self._settler, LagCorrected) else None
+
+    @property
+    def learned_lag(self) -> LearnedLag | None:
+        """The probe's fast lag as this run learned it; None where it learned nothing of it."""
+        return self._settler.learned if isinstance(self._settler, LagCorrected) else None
+
+    @property
+    def temperature_c(self) -> float:
+        """As measured where there is a sensor, else the plan's."""
+        return self._temperature_c
 
     # --- before the first dose ---
 

@@ -9,6 +9,7 @@ here: only share over time is seen, and curve error leaks into it.
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
@@ -28,6 +29,23 @@ _FEWEST_READINGS = 6
 _SMALLEST_MOVE_ML = 0.003
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LearnedLag:
+    """Bulk and film time as a run learned them, s, with standard uncertainties; the record counts a quarter in them.
+
+    The two times are hard to tell apart, their sum is not: `sum_standard_uncertainty_s` takes their covariance in.
+    `transients` is the number of points whose readings were taken.
+    """
+
+    bulk_s: float
+    bulk_standard_uncertainty_s: float
+    film_s: float
+    film_standard_uncertainty_s: float
+    sum_s: float
+    sum_standard_uncertainty_s: float
+    transients: int
+
+
 class LagLearner:
     """Holds the information gathered about (ln bulk, ln film) and updates the composition's constants."""
 
@@ -39,6 +57,25 @@ class LagLearner:
         self._start = np.array([math.log(composition.constants.bulk_s), math.log(composition.constants.film_s)])
         self._mean = self._start.copy()
         self._learned: npt.NDArray[np.float64] = np.zeros((2, 2))
+        self._transients = 0
+
+    @property
+    def learned(self) -> LearnedLag | None:
+        """What the run has learned; None before the first transient."""
+        if not self._transients:
+            return None
+        bulk_s, film_s = self._composition.constants.bulk_s, self._composition.constants.film_s
+        xx, xy, yy = self._composition.covariance
+        variance = bulk_s * bulk_s * xx + 2.0 * bulk_s * film_s * xy + film_s * film_s * yy
+        return LearnedLag(
+            bulk_s=bulk_s,
+            bulk_standard_uncertainty_s=round(bulk_s * math.sqrt(max(xx, 0.0)), 4),
+            film_s=film_s,
+            film_standard_uncertainty_s=round(film_s * math.sqrt(max(yy, 0.0)), 4),
+            sum_s=round(bulk_s + film_s, 4),
+            sum_standard_uncertainty_s=round(math.sqrt(max(variance, 0.0)), 4),
+            transients=self._transients,
+        )
 
     def learn(self, fit: InverseFit, readings: list[tuple[float, float]], noise_mv: float) -> None:
         """Take the transient of one point (time, mV), turned into volumes by `fit`."""
@@ -82,6 +119,7 @@ class LagLearner:
             step *= _LARGEST_STEP / largest
         self._mean = np.clip(self._mean + step, self._start - _LARGEST_CHANGE, self._start + _LARGEST_CHANGE)
         self._learned = (1.0 - FADE) * self._learned + information
+        self._transients += 1
         covariance = np.linalg.inv(self._learned + PRIOR_WEIGHT * self._prior)
         self._composition.retune(
             round(math.exp(float(self._mean[0])), 4),

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 import warnings
+from dataclasses import asdict
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -62,7 +63,22 @@ def run_result(run: RunState) -> dict[str, Any]:
         "duration_s": round(world.elapsed_s, 3),
         "titrant_ml": round(world.delivered_ml, DIGITS),
         "notes": [w for w in evaluation.warnings if w.startswith(ABOUT_PKA)] if evaluation is not None else [],
+        "probe_lag": _probe_lag(run),
         "warnings": remarks,
+    }
+
+
+def _probe_lag(run: RunState) -> dict[str, Any] | None:
+    """The probe's lag as learned from this run's transients, for the probe's own record; None: nothing learned."""
+    learned = run.learned_lag
+    if learned is None:
+        return None
+    slowness = run.slowness
+    return {
+        **asdict(learned),
+        "temperature_c": round(run.temperature_c, 2),
+        "slowness": None if slowness is None else round(slowness, 4),
+        "record_holds": True,
     }
 
 

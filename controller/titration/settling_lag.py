@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 
 from controller.titration.composition import Composition
-from controller.titration.lag_learning import LagLearner
+from controller.titration.lag_learning import LagLearner, LearnedLag
 from controller.titration.plan import Settling
 from controller.titration.points import PhScale
 from controller.titration.settling import Accepted, SettlingContext
@@ -41,6 +41,11 @@ class LagCorrected:
     def slowness(self) -> float:
         """The fast lag as learned, as a multiple of the record's."""
         return self._composition.slowness
+
+    @property
+    def learned(self) -> LearnedLag | None:
+        """The fast lag as learned; None where no transient was taken."""
+        return self._learner.learned
 
     def begin(self, context: SettlingContext) -> None:
         """See SettlingRule."""
