@@ -80,6 +80,9 @@ class ProbeRules(Settings):
     largest_temperature_difference_c: float = number(
         None, 50, "difference of sample and buffers that warns", default=5.0, above=0
     )
+    largest_ph_beyond_buffers: float = number(
+        0, 5, "how far outside the buffers a pH may lie before it is said", default=0.5
+    )
     lowest_buffer_temperature_c: float = number(0, 60, "buffers colder than this are refused", default=15.0)
     highest_buffer_temperature_c: float = number(0, 60, "buffers warmer than this are refused", default=35.0)
     largest_film_s: float = number(None, 600, "slowest film of a probe in order", default=10.0, above=0)

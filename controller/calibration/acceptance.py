@@ -43,8 +43,6 @@ HOUSE_LIMITS = ProbeLimits(
     check_ph=0.05,
     source="common practice, from memory: enter your laboratory's limits",
 )
-#: a sample farther than this from the buffers' temperature is warned about (common practice)
-TEMPERATURE_DIFFERENCE_C = 5.0
 #: buffers of one calibration farther apart than this are warned about (common practice)
 BUFFER_TEMPERATURE_SPREAD_C = 1.0
 
@@ -146,21 +144,28 @@ def calibration_warnings(points: Sequence[BufferPoint]) -> tuple[str, ...]:
     return (f"the buffers' temperatures differ by {spread:.1f} °C: let them stand together before calibrating",)
 
 
-def sample_warnings(
-    line: CalibrationLine,
-    *,
-    ph: float | None,
-    temperature_c: float,
-    largest_difference_c: float = TEMPERATURE_DIFFERENCE_C,
-) -> tuple[str, ...]:
-    """What a calibration does not cover in a sample of this pH (None: not known) and temperature, in words."""
-    warnings = []
-    difference = temperature_c - line.temperature_c
-    if abs(difference) > largest_difference_c:
-        warnings.append(
-            f"the sample is {abs(difference):.1f} °C {'warmer' if difference > 0 else 'colder'} than the buffers were, "
-            f"allowed: {largest_difference_c:g} °C"
-        )
-    if ph is not None and not line.offset_only and not line.lowest_ph <= ph <= line.highest_ph:
-        warnings.append(f"pH {ph:.2f} lies outside the buffers, pH {line.lowest_ph:.2f} to {line.highest_ph:.2f}")
-    return tuple(warnings)
+def temperature_warning(temperature_c: float, *, buffers_c: float, largest_difference_c: float) -> str | None:
+    """What is doubtful about a sample's temperature against that of the buffers, in words; None: nothing."""
+    difference = temperature_c - buffers_c
+    if abs(difference) <= largest_difference_c:
+        return None
+    return (
+        f"the sample is {abs(difference):.1f} °C {'warmer' if difference > 0 else 'colder'} than the buffers were, "
+        f"allowed: {largest_difference_c:g} °C"
+    )
+
+
+def ph_outside(ph: float, *, lowest_ph: float, highest_ph: float, largest_beyond: float) -> str | None:
+    """How far a pH lies outside the buffers of a calibration, in words; None where it is near enough.
+
+    Args:
+        ph: read with the calibration.
+        lowest_ph: of the buffers.
+        highest_ph: of the buffers.
+        largest_beyond: distance from the nearest buffer that needs no remark.
+    """
+    beyond = max(lowest_ph - ph, ph - highest_ph)
+    if beyond <= largest_beyond:
+        return None
+    span = f"pH {lowest_ph:.2f} to {highest_ph:.2f}" if highest_ph > lowest_ph else f"pH {lowest_ph:.2f} alone"
+    return f"pH {ph:.2f} lies {beyond:.2f} outside the buffers ({span})"

@@ -15,7 +15,7 @@ from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from configs.version import __version__
 from controller.planning.inforce import InForce
-from controller.planning.stated import stated
+from controller.planning.stated import stated, stated_response
 from controller.titration.plan import (
     PLAN_SCHEMA_VERSION,
     Chemistry,
@@ -24,7 +24,6 @@ from controller.titration.plan import (
     Limits,
     Probe,
     ProbeCalibration,
-    ProbeResponse,
     Pump,
     Question,
     ReportAs,
@@ -302,7 +301,7 @@ def _probe(method: MethodSettings, settings: ProbeSettings, identity: str, known
         identity=identity,
         signal=method.signal,
         calibration=planned,
-        response=known.response or _response(settings),
+        response=known.response or stated_response(settings),
         resolution_mv=settings.resolution_mv,
         reading_interval_s=settings.reading_interval_s,
     )
@@ -324,22 +323,6 @@ def _meters_own(method: MethodSettings, settings: ProbeSettings) -> ProbeCalibra
         slope_fraction_standard_uncertainty=0.0,
         offset_standard_uncertainty_mv=settings.ph_standard_uncertainty * ideal_slope_mv(method.temperature_c),
         source="meter",
-    )
-
-
-def _response(settings: ProbeSettings) -> ProbeResponse | None:
-    record = settings.response
-    if record is None:
-        return None
-    return ProbeResponse(
-        bulk_s=record.bulk_s,
-        film_s=record.film_s,
-        slow_s=record.slow_s,
-        slow_share=record.slow_share_percent / 100.0,
-        dead_time_s=record.dead_time_s,
-        time_relative_uncertainty=record.time_relative_uncertainty_percent / 100.0,
-        share_relative_uncertainty=record.share_relative_uncertainty_percent / 100.0,
-        measured_utc=record.measured_utc,
     )
 
 

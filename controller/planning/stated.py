@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from configs.benchfile import BenchSettings
+from configs.benchfile import BenchSettings, ProbeSettings
 from configs.catalogue import substance
 from configs.method import MethodSettings
+from controller.titration.plan import ProbeResponse
 from controller.titration.traceability import (
     BuretteInForce,
     Dilution,
@@ -63,4 +64,21 @@ def excess_of(method: MethodSettings) -> Excess | None:
         standard_uncertainty_ml=given.excess_volume_standard_uncertainty_ml,
         concentration_mol_l=given.excess_concentration_mol_l,
         concentration_standard_uncertainty_mol_l=given.excess_concentration_standard_uncertainty_mol_l,
+    )
+
+
+def stated_response(settings: ProbeSettings) -> ProbeResponse | None:
+    """Return the probe's lag as the bench file has it; None where it has none."""
+    record = settings.response
+    if record is None:
+        return None
+    return ProbeResponse(
+        bulk_s=record.bulk_s,
+        film_s=record.film_s,
+        slow_s=record.slow_s,
+        slow_share=record.slow_share_percent / 100.0,
+        dead_time_s=record.dead_time_s,
+        time_relative_uncertainty=record.time_relative_uncertainty_percent / 100.0,
+        share_relative_uncertainty=record.share_relative_uncertainty_percent / 100.0,
+        measured_utc=record.measured_utc,
     )

@@ -70,6 +70,17 @@ class Chemistry:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class CalibratedRange:
+    """What the buffers of a calibration covered, and how far from it a sample may be (pH, °C)."""
+
+    lowest_ph: float
+    highest_ph: float
+    temperature_c: float
+    largest_ph_beyond: float
+    largest_temperature_difference_c: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class ProbeCalibration:
     """pH = isopotential_ph - (E - isopotential_mv) / (slope_fraction x ideal slope at the sample's temperature)."""
 
@@ -82,6 +93,7 @@ class ProbeCalibration:
     record_sha256: str | None = None
     slope_offset_covariance_mv: float = 0.0
     source: Literal["buffers", "meter"] = "buffers"  # meter: a meter's own, seen through an ideal electrode
+    covered: CalibratedRange | None = None  # None: the buffers are not on record
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -89,7 +101,8 @@ class ProbeResponse:
     """Lag of the probe in its vessel, seen as titrant volume at the glass: bulk, film and slow layer in series.
 
     With v(t) delivered: x1' = (v(t - dead_time) - x1)/bulk_s, x2' = (x1 - x2)/film_s, x3' = (x2 - x3)/slow_s;
-    the glass sees (1 - slow_share) x2 + slow_share x3.
+    the glass sees (1 - slow_share) x2 + slow_share x3. `learned_from`: runs that bulk and film time come from, whose
+    lines in the probe's record have the SHA-256 `learned_sha256`; none: all was measured together.
     """
 
     bulk_s: float
@@ -100,6 +113,8 @@ class ProbeResponse:
     time_relative_uncertainty: float = 0.10
     share_relative_uncertainty: float = 0.20
     measured_utc: str | None = None
+    learned_from: tuple[str, ...] = ()
+    learned_sha256: str | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -162,11 +177,15 @@ class Settling:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class EndPoints:
-    """How many equivalence points are looked for, and whether the run ends at the last of them."""
+    """How many equivalence points are looked for, and whether the run ends at the last of them.
+
+    `at_ph`: instead of an equivalence point the volume at this pH is wanted, and the run ends there.
+    """
 
     expected: int
     smallest_rise_mv: float
     stop_at_last: bool
+    at_ph: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -240,7 +259,7 @@ class RunPlan:
 
     schema_version: int
     program_version: str
-    kind: Literal["equivalence"]
+    kind: Literal["equivalence", "end-point-ph"]
     method_name: str
     method_title: str
     sample: Sample

@@ -9,7 +9,8 @@ from controller.calibration.acceptance import (
     calibration_warnings,
     check_buffer,
     judge_probe,
-    sample_warnings,
+    ph_outside,
+    temperature_warning,
 )
 from controller.calibration.electrode import BufferPoint, CalibrationError, Isopotential, PriorSlope, fit_line, ph_from
 from controller.calibration.isopotential import fit_isopotential
@@ -236,11 +237,21 @@ def test_temperatures_and_range_are_warned_about():
     points = [reading(4.005, temperature_c=21.0), reading(9.18, temperature_c=25.0)]
     assert "differ by 4.0 °C" in calibration_warnings(points)[0]
     assert calibration_warnings([reading(4.005), reading(9.18)]) == ()
-    line = good_line()
-    assert sample_warnings(line, ph=6.0, temperature_c=26.0) == ()
-    warm, outside = sample_warnings(line, ph=11.0, temperature_c=35.0)
-    assert "10.0 °C warmer" in warm
-    assert "pH 11.00 lies outside" in outside
+    assert temperature_warning(26.0, buffers_c=25.0, largest_difference_c=5.0) is None
+    assert "10.0 °C warmer" in str(temperature_warning(35.0, buffers_c=25.0, largest_difference_c=5.0))
+    assert "8.0 °C colder" in str(temperature_warning(17.0, buffers_c=25.0, largest_difference_c=5.0))
+
+
+@pytest.mark.parametrize("ph", [3.5, 4.0, 8.3, 10.5])
+def test_a_ph_between_the_buffers_or_near_them_needs_no_remark(ph):
+    assert ph_outside(ph, lowest_ph=4.0, highest_ph=10.01, largest_beyond=0.5) is None
+
+
+def test_a_ph_outside_the_buffers_is_told_with_its_distance():
+    told = ph_outside(11.2, lowest_ph=4.0, highest_ph=10.0, largest_beyond=0.5)
+    assert told == "pH 11.20 lies 1.20 outside the buffers (pH 4.00 to 10.00)"
+    assert "1.50 outside" in str(ph_outside(2.5, lowest_ph=4.0, highest_ph=10.0, largest_beyond=0.5))
+    assert "(pH 7.00 alone)" in str(ph_outside(4.0, lowest_ph=7.0, highest_ph=7.0, largest_beyond=0.5))
 
 
 def test_isopotential_ph_from_two_temperatures():
