@@ -26,6 +26,7 @@ from controller.planning.amountinputs import (
     standard_of,
     titrant_of,
 )
+from controller.planning.ph_cover import add_ph_remarks
 from controller.titration.plan import ReportAs, RunPlan
 from controller.titration.traceability import Traceability
 from simulators.constants import ideal_slope_mv
@@ -45,6 +46,7 @@ def amount_of_plan(plan: RunPlan, result: dict[str, Any]) -> dict[str, Any] | No
         HalfdropError: the amount cannot be computed from these numbers.
     """
     add_ph_uncertainty(plan, result)
+    add_ph_remarks(plan, result)
     report = plan.report_as
     if report is None or len(result["end_points"]) < report.end_point:
         return None

@@ -16,6 +16,7 @@ from controller.calibration.probe_trend import fast_lag
 from controller.calibration.slowing import slowing_warnings
 from controller.calibration.store import in_force
 from controller.calibration.validity import Validity
+from controller.planning.ph_cover import target_warning
 from controller.planning.stated import stated_response
 from controller.planning.taking import Taking, day_of
 from controller.titration.plan import CalibratedRange, ProbeCalibration, ProbeResponse
@@ -45,6 +46,16 @@ def calibration_in_force(
     )
     if warm is not None:
         taking.warnings.append(f"probe calibration: {warm}; calibrate with buffers at the sample's temperature")
+    covered = CalibratedRange(
+        lowest_ph=line["lowest_ph"],
+        highest_ph=line["highest_ph"],
+        temperature_c=line["temperature_c"],
+        largest_ph_beyond=rules.largest_ph_beyond_buffers,
+        largest_temperature_difference_c=rules.largest_temperature_difference_c,
+    )
+    asked: float | None = getattr(method.end_points, "at_ph", None)
+    if asked is not None and (text := target_warning(asked, covered)) is not None:
+        taking.warnings.append(text)
     return ProbeCalibration(
         slope_fraction=line["slope_fraction"],
         isopotential_ph=line["isopotential_ph"],
@@ -54,13 +65,7 @@ def calibration_in_force(
         slope_offset_covariance_mv=line["slope_offset_covariance_mv"],
         calibrated_utc=record.started_utc,
         record_sha256=record.sha256,
-        covered=CalibratedRange(
-            lowest_ph=line["lowest_ph"],
-            highest_ph=line["highest_ph"],
-            temperature_c=line["temperature_c"],
-            largest_ph_beyond=rules.largest_ph_beyond_buffers,
-            largest_temperature_difference_c=rules.largest_temperature_difference_c,
-        ),
+        covered=covered,
     )
 
 
