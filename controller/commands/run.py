@@ -13,6 +13,7 @@ from controller.assembly import OpenBench, Opening, is_simulated, open_bench
 from controller.commands.lines import result_lines
 from controller.commands.output import print_json
 from controller.commands.present import at_the_bench
+from controller.commands.probekept import keep_in_probe_record
 from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
 from controller.commands.signals import pulling
 from controller.commands.titrant import titrant_counted
@@ -150,6 +151,7 @@ def _on_open_bench(
             amount_of=amount_of_plan,
         )
         present.watch.ended(result)
+        keep_in_probe_record(lab, sink.path)
         return result
 
 
