@@ -81,11 +81,20 @@ class SettlingSettings(Settings):
 
 
 class EndPointSettings(Settings):
-    """How many equivalence points are looked for."""
+    """How many equivalence points are looked for, or the pH at which the volume counts instead."""
 
     expected: int = number(1, 6, "equivalence points looked for", default=1)
     smallest_rise_mv: float = number(10, 1000, "smallest change of potential that makes an end point", default=60.0)
     stop_at_last: bool = Field(default=True, description="whether the run ends soon after the last end point")
+    at_ph: float | None = number(
+        1.5, 12.5, "pH at which the volume counts and the run ends; left out: equivalence points", default=None
+    )
+
+    def disagreements(self) -> list[Disagreement]:
+        """Return a set pH beside several equivalence points."""
+        if self.at_ph is not None and self.expected != 1:
+            return [Disagreement("expected", self.expected, "1 where at_ph is set: the run ends at that pH")]
+        return []
 
 
 class LimitSettings(Settings):

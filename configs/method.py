@@ -111,7 +111,9 @@ class MethodSettings(Settings):
     schema_version: int = number(1, 1, "version of this form of file", default=1)
     name: PlainName = Field(description="name of the method: small letters, digits, hyphens")
     title: str = words("what the method determines, for people")
-    kind: Literal["equivalence"] = Field(default="equivalence", description="titration to the equivalence point")
+    kind: Literal["equivalence", "end-point-ph"] = Field(
+        default="equivalence", description="titration to the equivalence point, or to the pH of end_points.at_ph"
+    )
     temperature_c: float = number(0, 60, "temperature of the sample", default=25.0)
     activity: Literal["davies", "none"] = Field(default="davies", description="activity correction of the model")
     signal: Literal["ph", "potential"] = Field(default="ph", description="whether the curve is followed in pH or in mV")
@@ -141,7 +143,24 @@ class MethodSettings(Settings):
 
     def disagreements(self) -> list[Disagreement]:
         """Return what does not fit together across the groups."""
-        return [*self._disagreeing_volumes(), *self._disagreeing_report(), *self._repeated_questions()]
+        found = [*self._disagreeing_volumes(), *self._disagreeing_report(), *self._repeated_questions()]
+        return [*found, *self._disagreeing_end_point()]
+
+    def _disagreeing_end_point(self) -> list[Disagreement]:
+        at_ph, limits = self.end_points.at_ph, self.limits
+        if self.kind == "equivalence":
+            allowed = "nothing where kind is equivalence; for a titration to a pH set kind: end-point-ph"
+            return [] if at_ph is None else [Disagreement("end_points.at_ph", at_ph, allowed)]
+        if at_ph is None:
+            return [Disagreement("end_points.at_ph", None, "the pH that ends the titration, as kind is end-point-ph")]
+        found = []
+        if self.signal != "ph":
+            found.append(Disagreement("signal", self.signal, "ph, as the end point is a pH"))
+        if limits.highest_ph is not None and limits.highest_ph <= at_ph:
+            found.append(Disagreement("limits.highest_ph", limits.highest_ph, f"above end_points.at_ph, {at_ph:g}"))
+        if limits.lowest_ph is not None and limits.lowest_ph >= at_ph:
+            found.append(Disagreement("limits.lowest_ph", limits.lowest_ph, f"below end_points.at_ph, {at_ph:g}"))
+        return found
 
     def _disagreeing_volumes(self) -> list[Disagreement]:
         found = []

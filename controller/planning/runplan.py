@@ -134,7 +134,7 @@ def make_plan(
         chemistry=_chemistry(method, sample),
         probe=_probe(method, bench.probe, probe_identity, known),
         pump=_pump(bench, pump),
-        dosing=Dosing(**method.dosing.model_dump()),
+        dosing=_dosing(method, bench),
         settling=Settling(**method.settling.model_dump()),
         end_points=EndPoints(**method.end_points.model_dump()),
         limits=Limits(**method.limits.model_dump()),
@@ -276,6 +276,14 @@ def expected_volume_ml(method: MethodSettings, sample: Sample) -> float | None:
     return amount_mmol * found.equivalents / per_ml
 
 
+def _dosing(method: MethodSettings, bench: BenchSettings) -> Dosing:
+    """How doses are chosen; towards a set pH they go down to the pump's step where the method names no smallest."""
+    planned = Dosing(**method.dosing.model_dump())
+    if method.end_points.at_ph is None or "smallest_ml" in method.dosing.model_fields_set:
+        return planned
+    return replace(planned, smallest_ml=min(planned.smallest_ml, bench.pump.step_ml))
+
+
 def _probe(method: MethodSettings, settings: ProbeSettings, identity: str, known: InForce) -> Probe:
     calibrated = known.probe
     calibration = settings.calibration
@@ -285,7 +293,8 @@ def _probe(method: MethodSettings, settings: ProbeSettings, identity: str, known
         raise HalfdropError(
             "the method follows pH, and the probe has no calibration",
             where="bench: probe.calibration",
-            remedy="Calibrate with 'halfdrop calibrate probe', or use signal: potential",
+            remedy="Calibrate with 'halfdrop calibrate probe'"
+            + (", or use signal: potential" if method.end_points.at_ph is None else ": the end point is a pH"),
         )
     planned = calibrated
     if planned is None and calibration is not None and method.signal == "ph":

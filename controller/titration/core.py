@@ -6,9 +6,9 @@ for end points, until a rule ends it; then the evaluation. It knows no clock, no
 
 from __future__ import annotations
 
-from statistics import median
 from typing import Any
 
+from controller.evaluation.inverse import InverseFit
 from controller.titration.actions import Decisions, Finish, Report
 from controller.titration.dosing import DosingPolicy, EqualVolumes, PlannedDose, local_slope
 from controller.titration.endpoint import EndPointWatch, end_point_report
@@ -25,12 +25,14 @@ from controller.titration.precision import near_ml, pump_precision_ml
 from controller.titration.probewatch import ProbeWatch
 from controller.titration.reasons import dose_reason
 from controller.titration.response_hold import ResponseHold
+from controller.titration.rest import rest_readings, sample_temperature_c
 from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule
 from controller.titration.settling_lag import LagCorrected
+from controller.titration.target_ph import TargetPh, target_of
+from controller.titration.target_ph_result import target_result
 
 #: change of temperature during a run that is warned about
 WARMED_C = 2.0
-LIQUID_C = (0.0, 100.0)
 #: successive fits that contradict the substance before it is said
 DOUBTS = 4
 
@@ -53,7 +55,7 @@ def titrate(plan: RunPlan) -> Decisions:
         yield from run.titrate()
     except EndOfRunError as end:
         run.outcome, run.reason = end.outcome, end.reason
-    result = run_result(run)
+    result = run_result(run) if plan.end_points.at_ph is None else target_result(run)
     yield Finish(result=result)
     return result
 
@@ -68,7 +70,8 @@ class _Run:
         self.points: list[Point] = []
         self.scale = PhScale(plan, plan.chemistry.temperature_c)
         self.probe = ProbeWatch(plan.probe.resolution_mv)
-        self.watch = EndPointWatch(plan)
+        self.watch: EndPointWatch | TargetPh = EndPointWatch(plan)
+        self.target: TargetPh | None = None  # where a pH is to be reached
         self.forecast = Forecast(plan, self.scale)
         self.hold = ResponseHold(plan)
         self._settler: SettlingRule = FixedWait(plan.settling)
@@ -101,23 +104,15 @@ class _Run:
                 raise EndOfRunError(
                     "stopped", f"{question.text} Answered {answer!r}, needed {question.must_be!r}; nothing was dosed"
                 )
-        potentials, temperatures = yield from self._rest_readings()
+        potentials, temperatures = yield from rest_readings(self.world, self.probe, self.plan)
         self.probe.noise = noise = measure_noise(potentials, self.plan.probe.resolution_mv)
-        temperature_c = self.plan.chemistry.temperature_c
-        calibration = self.plan.probe.calibration
-        if calibration is not None and calibration.source == "meter":
-            temperatures = []  # its own pH became a potential at the plan's temperature, and becomes pH again there
-        if temperatures and LIQUID_C[0] <= (measured_c := round(median(temperatures), 1)) <= LIQUID_C[1]:
-            temperature_c = measured_c
-        elif temperatures:
-            yield from self.world.warn(
-                f"the temperature sensor reads {measured_c:.1f} °C: {temperature_c:.1f} °C is taken"
-            )
-        self._temperature_c = temperature_c
+        self._temperature_c = temperature_c = yield from sample_temperature_c(self.world, self.plan, temperatures)
         self.scale = PhScale(self.plan, temperature_c)
         self.forecast = Forecast(self.plan, self.scale)
         self._settler = settling_rule(self.plan, self.world.log, self.scale)
         self._doser = dosing_policy(self.plan, self.scale)
+        if self.plan.end_points.at_ph is not None:
+            self._doser = self.watch = self.target = target_of(self.plan, self.scale)
         yield from self.world.say(
             Report(what="note", text=f"noise {noise.sd_mv:.2f} mV from {READINGS} readings at {temperature_c:.1f} °C")
         )
@@ -131,21 +126,8 @@ class _Run:
         level = sum(potentials[-3:]) / 3.0
         start_ml = self.world.delivered_ml  # 0 unless the operator dosed by hand
         yield from self._take(Accepted(volume_ml=start_ml, volume_sd_ml=0.0, potential_mv=level, settled=True), "start")
-
-    def _rest_readings(self) -> Talk[tuple[list[float], list[float]]]:
-        potentials: list[float] = []
-        temperatures: list[float] = []
-        while len(potentials) < READINGS:
-            reading = yield from self.world.read()
-            if self.world.disturbed:  # not at rest: a dose by hand, a gap
-                self.world.disturbed = False
-                potentials, temperatures = [], []
-            if self.probe.is_good(reading):
-                potentials.append(reading.potential_mv)
-                if reading.temperature_c is not None:
-                    temperatures.append(reading.temperature_c)
-            yield from self.world.wait(self.plan.probe.reading_interval_s)
-        return potentials, temperatures
+        if self.target is not None:
+            yield from self.target.begin(self.world, self.points)
 
     # --- dosing loop ---
 
@@ -154,23 +136,22 @@ class _Run:
         while True:
             check_limits(self.plan, self.world, self.points[-1], self.watch.found)
             planned = self._doser.next_dose(self.points, self.forecast.sound, self.world.delivered_ml)
-            volume_ml = largest_dose_ml(self.plan, self.world, planned.volume_ml)
-            before = self.world.delivered_ml
-            reason = dose_reason(
-                self.world.doses + 1,
-                volume_ml,
-                planned,
-                self.forecast.sound,
-                potential_rises=self._potential_rises(),
-            )
-            yield from self.world.dose(volume_ml, reason)
-            if self.world.delivered_ml == before:
-                continue
+            if planned.volume_ml > 0.0:
+                before = self.world.delivered_ml
+                yield from self._dose(planned)
+                if self.world.delivered_ml == before:
+                    continue
             accepted = yield from self._settle(planned)
             yield from self._take(accepted, accepted.text)
             sound = self.forecast.sound
             yield from self.hold.after_dose(self.world, None if sound is None else sound.equivalence_ml)
             yield from self._look()
+
+    def _dose(self, planned: PlannedDose) -> Talk[None]:
+        volume_ml = largest_dose_ml(self.plan, self.world, planned.volume_ml)
+        rises, number = self._potential_rises(), self.world.doses + 1
+        reason = dose_reason(number, volume_ml, planned, self.forecast.sound, potential_rises=rises)
+        yield from self.world.dose(volume_ml, reason)
 
     def _potential_rises(self) -> bool:
         """Does the potential rise with titrant: as the titrant has it, or as the points show where there is no pH?"""
@@ -181,7 +162,7 @@ class _Run:
     def _settle(self, planned: PlannedDose) -> Talk[Accepted]:
         """Read until the rule accepts a point."""
         world, interval_s = self.world, self.plan.probe.reading_interval_s
-        context = self._context(planned, self.world.log[-1][1])
+        context = self._context(planned, world.log[-1][1] if planned.volume_ml > 0.0 else world.now_s or 0.0)
         self._settler.begin(context)
         world.disturbed = False
         self._readings = 0
@@ -231,6 +212,7 @@ class _Run:
             end_point=len(self.watch.found) + 1,
             precision_ml=pump_precision_ml(self.plan),
             near_ml=near_ml(self.plan, sound),
+            about_ml=None if self.target is None else self.target.about_ml(self.points, sound),
         )
 
     def _take(self, accepted: Accepted, text: str) -> Talk[None]:
@@ -278,14 +260,7 @@ class _Run:
             )
         number = len(self.watch.found) + 1
         if sound is not None and len(self.watch.found) < self.plan.end_points.expected:
-            yield from self.world.say(
-                Report(
-                    what="forecast",
-                    volume_ml=round(sound.equivalence_ml, 6),
-                    standard_uncertainty_ml=round(sound.standard_uncertainty_ml, 6),
-                    end_point=number,
-                )
-            )
+            yield from self.world.say(self._forecast_report(sound, number))
         elif self.forecast.jumped:
             yield from self.world.say(
                 Report(what="note", text="the prediction jumped; dosing by the local slope until it holds")
@@ -302,6 +277,16 @@ class _Run:
                 raise EndOfRunError("completed", f"end point {found.number} of {self.plan.end_points.expected} found")
             return
         self.forecast.update(self.points)
+
+    def _forecast_report(self, sound: InverseFit, number: int) -> Report:
+        if self.target is not None:
+            return self.target.forecast_report(self.points, sound)
+        return Report(
+            what="forecast",
+            volume_ml=round(sound.equivalence_ml, 6),
+            standard_uncertainty_ml=round(sound.standard_uncertainty_ml, 6),
+            end_point=number,
+        )
 
 
 RunState = _Run

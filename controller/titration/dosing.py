@@ -24,11 +24,15 @@ CURVATURE_GROWTH = 3.0
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class PlannedDose:
-    """The next dose: volume, the change of potential it should bring (None: not known), and why in words."""
+    """The next dose: volume, the change of potential it should bring (None: not known), and why in words.
+
+    `goal`: what the dose works towards, in words; empty: the equivalence point that the model predicts.
+    """
 
     volume_ml: float
     expected_mv: float | None
     why: str
+    goal: str = ""
 
 
 class DosingPolicy(Protocol):

@@ -21,7 +21,9 @@ def check_limits(plan: RunPlan, world: Exchange, point: Point, found: Sequence[F
         return
     if len(found) >= plan.end_points.expected:
         raise EndOfRunError("completed", reached)
-    missing = "no end point found" if not found else f"{len(found)} of {plan.end_points.expected} end points found"
+    at_ph = plan.end_points.at_ph
+    unmet = "no end point found" if at_ph is None else f"pH {at_ph:.2f} was not reached"
+    missing = unmet if not found else f"{len(found)} of {plan.end_points.expected} end points found"
     raise EndOfRunError("stopped", f"{reached}; {missing}")
 
 

@@ -63,12 +63,12 @@ def run_result(run: RunState) -> dict[str, Any]:
         "duration_s": round(world.elapsed_s, 3),
         "titrant_ml": round(world.delivered_ml, DIGITS),
         "notes": [w for w in evaluation.warnings if w.startswith(ABOUT_PKA)] if evaluation is not None else [],
-        "probe_lag": _probe_lag(run),
+        "probe_lag": probe_lag(run),
         "warnings": remarks,
     }
 
 
-def _probe_lag(run: RunState) -> dict[str, Any] | None:
+def probe_lag(run: RunState) -> dict[str, Any] | None:
     """The probe's lag as learned from this run's transients, for the probe's own record; None: nothing learned."""
     learned = run.learned_lag
     if learned is None:
@@ -156,14 +156,14 @@ def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | Non
             break
     return {
         "volume_ml": round(volume_ml, DIGITS),
-        "standard_uncertainty_ml": round(math.hypot(sd_ml, _position_sd_ml(run), run.world.doubt_ml), DIGITS),
+        "standard_uncertainty_ml": round(math.hypot(sd_ml, position_sd_ml(run), run.world.doubt_ml), DIGITS),
         "ph": None if ph is None else round(ph, 4),
         "potential_mv": None if potential_mv is None else round(potential_mv, 2),
         "estimator": estimator,
     }
 
 
-def _position_sd_ml(run: RunState) -> float:
+def position_sd_ml(run: RunState) -> float:
     """Of a volume between two positions of the plunger; the full syringe is where positions are counted from."""
     pump = run.plan.pump
     begun_full = pump.contents_ml >= pump.syringe_ml - pump.step_ml

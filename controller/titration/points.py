@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
-from controller.titration.plan import RunPlan
+from controller.titration.plan import ProbeCalibration, RunPlan
 from simulators.constants import ideal_slope_mv
 
 
@@ -41,3 +42,13 @@ class PhScale:
     def potential_mv(self, ph: float) -> float:
         """Potential of a pH."""
         return self._iso_mv - (ph - self._iso_ph) * self.slope_mv
+
+
+def calibration_ph_sd(calibration: ProbeCalibration, ph: float, temperature_c: float) -> float:
+    """Standard uncertainty that a calibration gives a pH: of offset, slope and their covariance."""
+    per_mv = 1.0 / (calibration.slope_fraction * ideal_slope_mv(temperature_c))
+    per_slope = -(ph - calibration.isopotential_ph) / calibration.slope_fraction
+    variance = (per_mv * calibration.offset_standard_uncertainty_mv) ** 2
+    variance += (per_slope * calibration.slope_fraction_standard_uncertainty) ** 2
+    variance += 2.0 * per_mv * per_slope * calibration.slope_offset_covariance_mv
+    return math.sqrt(max(0.0, variance))

@@ -23,6 +23,8 @@ def dose_reason(
         share = volume_ml / planned.volume_ml if planned.volume_ml > 0.0 else 1.0
         text += f", expecting {'+' if potential_rises else '-'}{planned.expected_mv * share:.0f} mV"
     text += f" ({planned.why})"
+    if planned.goal:
+        return f"{text}; {planned.goal}"
     if sound is not None:
         veq, sd = sound.equivalence_ml, sound.standard_uncertainty_ml
         digits = 3 if sd >= 0.0095 else 4

@@ -28,6 +28,7 @@ class SettlingContext:
         end_point: number of the end point that comes next, from 1.
         precision_ml: the pump's precision.
         near_ml: distance from equivalence within which the last stretch begins.
+        about_ml: volume about which points must be good; None: the model's equivalence.
     """
 
     at_s: float
@@ -40,6 +41,14 @@ class SettlingContext:
     end_point: int
     precision_ml: float
     near_ml: float
+    about_ml: float | None = None
+
+    @property
+    def centre_ml(self) -> float | None:
+        """The volume about which points must be good; None: not known yet."""
+        if self.about_ml is not None:
+            return self.about_ml
+        return None if self.fit is None else self.fit.equivalence_ml
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

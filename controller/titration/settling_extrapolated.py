@@ -51,8 +51,8 @@ class Extrapolated:
         """See SettlingRule."""
         self._context = context
         self._readings = []
-        fit = context.fit
-        near = fit is not None and abs(fit.equivalence_ml - context.delivered_ml) < context.near_ml
+        centre_ml = context.centre_ml
+        near = centre_ml is not None and abs(centre_ml - context.delivered_ml) < context.near_ml
         self._hold = near and self._held_for != context.end_point
 
     def add(self, at_s: float, potential_mv: float) -> Accepted | None:

@@ -87,13 +87,13 @@ class LagCorrected:
 
     def _limits(self, context: SettlingContext, volume_ml: float) -> tuple[float, float]:
         """Largest standard deviation and largest lag left, mL."""
-        fit = context.fit
+        centre_ml = context.centre_ml
         smallest_sd_ml, smallest_lag_ml = (
             SD_OF_PRECISION * context.precision_ml,
             LAG_OF_PRECISION * context.precision_ml,
         )
-        if fit is not None:
-            distance = abs(volume_ml - fit.equivalence_ml)
+        if centre_ml is not None:
+            distance = abs(volume_ml - centre_ml)
             return max(smallest_sd_ml, SD_PER_DISTANCE * distance), max(smallest_lag_ml, LAG_PER_DISTANCE * distance)
         limit = NO_MODEL_SHARE * volume_ml + NO_MODEL_PRECISIONS * context.precision_ml
         if context.points >= 8 and context.local_slope_mv_ml > 0.0:

@@ -108,7 +108,7 @@ class RunView:
         from controller.running.progress import Pace
 
         self.header = header
-        if (header.get("plan") or {}).get("kind") not in (None, "equivalence"):
+        if (header.get("plan") or {}).get("kind") not in (None, "equivalence", "end-point-ph"):
             return  # a calibration: no curve, no account
         try:
             self.plan = plan_from_json(header["plan"], where=self.name)

@@ -23,21 +23,25 @@ from configs.shipped import shipped_bytes
 JUICE = "juice-acidity"
 STANDARDISE = "standardise-sodium-hydroxide"
 WASH_WATER = "wash-water-alkalinity"
+JUICE_TO_PH, WASH_WATER_TO_PH = "juice-acidity-to-ph", "wash-water-alkalinity-to-ph"
 
 
 def test_what_ships() -> None:
     assert shipped_methods() == (
         "carbonate-check",
         JUICE,
+        JUICE_TO_PH,
         "standardise-hydrochloric-acid-carbonate",
         "standardise-hydrochloric-acid-tris",
         STANDARDISE,
         WASH_WATER,
+        WASH_WATER_TO_PH,
+        f"{WASH_WATER_TO_PH}-mmol",
     )
     assert shipped_benches() == ("simulated",)
 
 
-@pytest.mark.parametrize("name", [JUICE, STANDARDISE, WASH_WATER])
+@pytest.mark.parametrize("name", [JUICE, JUICE_TO_PH, STANDARDISE, WASH_WATER, WASH_WATER_TO_PH])
 def test_shipped_method_reads_and_is_named_as_its_file(name: str) -> None:
     found = shipped_method(name)
     assert found.name == name
@@ -57,7 +61,7 @@ def shipped_titrants() -> dict[str, Any]:
     return dict(simulation.titrants)
 
 
-@pytest.mark.parametrize("name", [JUICE, STANDARDISE, WASH_WATER])
+@pytest.mark.parametrize("name", [JUICE, JUICE_TO_PH, STANDARDISE, WASH_WATER, WASH_WATER_TO_PH])
 def test_shipped_method_fits_the_shipped_bench(name: str) -> None:
     found, vessel = shipped_method(name), shipped_bench().vessel
     room_ml = vessel.capacity_ml - vessel.displaced_ml - vessel.margin_ml
@@ -80,7 +84,7 @@ def equivalents_mol(sample: Any, *, volume_l: float, mass_g: float) -> float:
 
 @pytest.mark.parametrize(
     ("name", "lowest_ml", "highest_ml"),
-    [(JUICE, 5.0, 9.0), (STANDARDISE, 5.0, 9.0), (WASH_WATER, 5.0, 9.0)],
+    [(JUICE, 5.0, 9.0), (STANDARDISE, 5.0, 9.0), (WASH_WATER, 5.0, 9.0), (WASH_WATER_TO_PH, 5.0, 9.0)],
 )
 def test_simulated_sample_needs_most_of_one_syringe(name: str, lowest_ml: float, highest_ml: float) -> None:
     found = shipped_method(name)
@@ -115,7 +119,7 @@ def test_nominal_bench_knows_its_probe_within_the_stated_uncertainty() -> None:
 
 @pytest.mark.parametrize(
     ("folder", "name", "model"),
-    [("methods", name, MethodSettings) for name in (JUICE, STANDARDISE, WASH_WATER)]
+    [("methods", name, MethodSettings) for name in (JUICE, JUICE_TO_PH, STANDARDISE, WASH_WATER)]
     + [("benches", "simulated", BenchSettings)],
 )
 def test_settings_written_out_are_read_back(folder: str, name: str, model: type[Settings]) -> None:

@@ -1,0 +1,135 @@
+"""The result of a titration to a set pH: the interpolated volume, what it rests on, and what speaks against it."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, Any
+
+from controller.evaluation.at_ph import VolumeAtPh, estimator_name, volume_at_ph
+from controller.evaluation.curve import CurveError
+from controller.titration.audit import LARGEST_SHARE, NOTABLE_SLOWNESS, SLOWNESS_COST
+from controller.titration.outcome import DIGITS, STRAIGHTNESS_MV, position_sd_ml, probe_lag, run_curve
+from controller.titration.plan import RunPlan
+from controller.titration.points import calibration_ph_sd
+from controller.titration.precision import pump_precision_ml
+from controller.titration.target_ph import ALLOWED_PASS_PH, ALREADY_BEYOND
+
+if TYPE_CHECKING:
+    from controller.titration.core import RunState
+
+#: drift of a good probe, which its calibration does not know of
+USUAL_DRIFT_MV_MIN = 0.1
+#: an uncertainty of fewer precisions of the pump is never too large a share
+_SMALL_PRECISIONS = 20.0
+#: steps of the pump below which passing the set pH is nobody's fault
+_FEW_STEPS = 4.0
+
+
+def target_result(run: RunState) -> dict[str, Any]:
+    """JSON of `halfdrop run` less run path and seed; without a determination no number."""
+    world = run.world
+    outcome, reason = run.outcome, run.reason or None
+    found = _determined(run) if run.watch.found else None
+    end_points, warnings = [], list(world.warnings)
+    if found is not None:
+        point = end_point_json(run.plan, found, beyond_ml=_beyond_ml(run), temperature_c=run.temperature_c)
+        told, withheld = judged(run.plan, found, point)
+        warnings += [*told, *_slow(run, point)]
+        if withheld is None:
+            end_points = [point]
+        elif outcome == "completed":
+            outcome, reason = "stopped", withheld
+    elif run.watch.found and outcome == "completed":
+        outcome, reason = "stopped", "the points do not lie on both sides of the end point pH"
+    return {
+        "outcome": outcome,
+        "reason": reason,
+        "end_points": end_points,
+        "half_equivalence": [],
+        "estimators": {point["estimator"]: [point["volume_ml"]] for point in end_points},
+        "result": None,
+        "doses": world.doses,
+        "duration_s": round(world.elapsed_s, 3),
+        "titrant_ml": round(world.delivered_ml, DIGITS),
+        "notes": [],
+        "probe_lag": probe_lag(run),
+        "warnings": warnings,
+        "beyond_at_start": run.reason == ALREADY_BEYOND,
+    }
+
+
+def end_point_json(plan: RunPlan, found: VolumeAtPh, *, beyond_ml: float, temperature_c: float) -> dict[str, Any]:
+    """An interpolated end point as it stands in results.
+
+    Args:
+        plan: of the run.
+        found: the interpolation.
+        beyond_ml: standard uncertainty by what the points do not tell: plunger, doses in doubt.
+        temperature_c: of the sample.
+    """
+    calibration = plan.probe.calibration
+    ph_sd = 0.0 if calibration is None else calibration_ph_sd(calibration, found.ph, temperature_c)
+    own_ml = math.hypot(found.standard_uncertainty_ml, beyond_ml)
+    return {
+        "volume_ml": round(found.volume_ml, DIGITS),
+        "standard_uncertainty_ml": round(math.hypot(own_ml, found.ml_per_ph * ph_sd), DIGITS),
+        "ph": found.ph,
+        "potential_mv": None,
+        "estimator": estimator_name(found.ph),
+        "own_standard_uncertainty_ml": round(own_ml, DIGITS),
+        "ml_per_ph": round(found.ml_per_ph, DIGITS),
+        "ph_standard_uncertainty": round(ph_sd, DIGITS),
+        "passed_by_ph": round(found.passed_by_ph, 4),
+    }
+
+
+def judged(plan: RunPlan, found: VolumeAtPh, point: dict[str, Any]) -> tuple[list[str], str | None]:
+    """Warnings about a determination, and why it is withheld (None: it is not)."""
+    warnings = []
+    if found.passed_by_ph > ALLOWED_PASS_PH:
+        passed = f"the first point beyond pH {found.ph:.2f} lies {found.passed_by_ph:.2f} beyond it"
+        if found.bracket_ml <= _FEW_STEPS * plan.pump.step_ml:
+            warnings.append(f"{passed}: this pump cannot dose more finely")
+        else:
+            warnings.append(
+                f"{passed} (allowed {ALLOWED_PASS_PH:.2f}): the volume is interpolated over {found.bracket_ml:.4f} mL"
+            )
+    u_ml = float(point["standard_uncertainty_ml"])
+    share = u_ml / max(found.volume_ml, 1e-9)
+    if share > LARGEST_SHARE and u_ml > _SMALL_PRECISIONS * pump_precision_ml(plan):
+        return warnings, (
+            f"the volume at pH {found.ph:.2f} would be known to {100.0 * share:.0f} % only (allowed "
+            f"{100.0 * LARGEST_SHARE:.0f} %), so no number is given"
+        )
+    return warnings, None
+
+
+def common_ph_sd(plan: RunPlan, duration_s: float, slope_mv: float) -> float:
+    """What shifts all readings near the end together without being known to the calibration, in pH."""
+    return math.hypot(STRAIGHTNESS_MV, USUAL_DRIFT_MV_MIN * duration_s / 60.0) / slope_mv
+
+
+def _determined(run: RunState) -> VolumeAtPh | None:
+    assert run.plan.end_points.at_ph is not None
+    try:
+        curve = run_curve(run)
+    except CurveError as error:
+        run.world.warnings.append(f"the points make no curve: {error}")
+        return None
+    common = common_ph_sd(run.plan, run.world.elapsed_s, run.scale.slope_mv)
+    return volume_at_ph(curve, run.plan.end_points.at_ph, common_ph_sd=common)
+
+
+def _beyond_ml(run: RunState) -> float:
+    return math.hypot(position_sd_ml(run), run.world.doubt_ml)
+
+
+def _slow(run: RunState, point: dict[str, Any]) -> list[str]:
+    """Widen by what a probe slower than its record may cost, and say so."""
+    slow = run.slowness
+    if slow is None or slow <= NOTABLE_SLOWNESS:
+        return []
+    cost_ml = SLOWNESS_COST * (slow - 1.0) * pump_precision_ml(run.plan)
+    for key in ("standard_uncertainty_ml", "own_standard_uncertainty_ml"):
+        point[key] = round(math.hypot(point[key], cost_ml), DIGITS)
+    return [f"the probe answers {slow:.1f} times as slowly as its record says: clean it, or repeat the response check"]
