@@ -17,7 +17,7 @@ from controller.guard import Guard, check_start, start_warnings
 from controller.journal import Journal, RecordError
 from controller.records.header import header_of
 from controller.resuming.resumption import Resumption, take_up
-from controller.running.aftercare import ask_about_probe
+from controller.running.aftercare import NOT_ASKED, ask_about_probe, probe_remark
 from controller.running.clockwatch import ClockWatch
 from controller.running.execution import Devices, Execution
 from controller.running.outcome import (
@@ -165,8 +165,12 @@ class _Run:
             result = self._complete(self._converse())
             self.journal.barrier()
             details: dict[str, Any] = {}
-            if ask_afterwards and not self.stop.event.is_set():
-                details = ask_about_probe(self.devices.operator, self.journal, self.execution)
+            if ask_afterwards:
+                details = dict(NOT_ASKED)
+                if not self.stop.event.is_set():
+                    details = ask_about_probe(self.devices.operator, self.journal, self.execution)
+                if (remark := probe_remark(details)) is not None and isinstance(self.plan, RunPlan):
+                    result["notes"] = [*result.get("notes", ()), remark]
             return self._close(result, details)
         except BaseException as error:
             self._close_failed(error)

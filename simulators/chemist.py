@@ -86,6 +86,7 @@ RULES: Mapping[str, Rule] = {
     "stirring-and-tip": Rule("yes", _start_stirrer),
     "tip-over-waste": Rule("yes"),
     "refill-by-hand": Rule("filled", _fill),
+    "rinse-and-store": Rule("yes"),
 }
 
 

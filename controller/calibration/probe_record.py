@@ -14,7 +14,7 @@ import re
 from collections.abc import Iterable, Sequence
 from dataclasses import asdict, dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, BinaryIO
 
 from configs.errors import HalfdropError
 from controller.lock import sync_folder, sync_to_disk
@@ -65,11 +65,7 @@ def learned_times(folder: Path, probe: str) -> list[LearnedTimes]:
         folder: the lab folder's calibrations.
         probe: its identity.
     """
-    try:
-        lines = file_of(folder, probe).read_text(encoding="utf-8").splitlines()
-    except (OSError, UnicodeDecodeError):
-        return []
-    found = {one.run: one for line in lines if (one := _read(line, probe)) is not None}
+    found = {one.run: one for told in _lines(folder, probe) if (one := _read(told)) is not None}
     return sorted(found.values(), key=lambda one: (one.utc, one.run))
 
 
@@ -89,11 +85,25 @@ def keep_learned(folder: Path, runs: Path, record: Path) -> LearnedTimes | None:
     probe, learned = probe_of_header(whole.header), learned_of(whole)
     if probe is None or learned is None:
         return None
-    missing = not file_of(folder, probe).exists()
     known = {one.run for one in learned_times(folder, probe)}
-    added = [*(_earlier(runs, probe, record.stem) if missing else ()), learned]
-    _append(folder, probe, [one for one in added if one.run not in known])
+    added = [*(() if known else _earlier(runs, probe, record.stem)), learned]
+    _append(folder, probe, [asdict(one) for one in added if one.run not in known])
     return None if learned.run in known else learned
+
+
+def keep_stored(folder: Path, probe: str, utc: str) -> None:
+    """Keep that somebody said the probe is rinsed and stored, at a time when no record was open.
+
+    Raises:
+        ProbeRecordError: the file cannot be written.
+    """
+    _append(folder, probe, [{"stored_utc": utc}])
+
+
+def stored_utc(folder: Path, probe: str) -> str | None:
+    """Return when somebody last said so; None: never."""
+    found = [told["stored_utc"] for told in _lines(folder, probe) if isinstance(told.get("stored_utc"), str)]
+    return max(found, default=None)
 
 
 def learned_of(record: Record) -> LearnedTimes | None:
@@ -160,14 +170,16 @@ def _earlier(runs: Path, probe: str, before: str) -> Iterable[LearnedTimes]:
                 yield learned
 
 
-def _append(folder: Path, probe: str, entries: Sequence[LearnedTimes]) -> None:
+def _append(folder: Path, probe: str, entries: Sequence[dict[str, Any]]) -> None:
     if not entries:
         return
     path = file_of(folder, probe)
-    text = "".join(json.dumps({"probe": probe, **asdict(one)}) + "\n" for one in entries)
+    text = "".join(json.dumps({"probe": probe, **one}) + "\n" for one in entries)
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
-        with path.open("ab") as file:
+        with path.open("ab+") as file:
+            if file.tell() and not _ends_whole(file):
+                text = f"\n{text}"  # the line before was torn by a crash
             file.write(text.encode())
             file.flush()
             sync_to_disk(file.fileno())
@@ -180,11 +192,27 @@ def _append(folder: Path, probe: str, entries: Sequence[LearnedTimes]) -> None:
         ) from error
 
 
-def _read(line: str, probe: str) -> LearnedTimes | None:
+def _ends_whole(file: BinaryIO) -> bool:
+    file.seek(-1, os.SEEK_END)
+    return file.read(1) == b"\n"
+
+
+def _lines(folder: Path, probe: str) -> list[dict[str, Any]]:
     try:
-        told = json.loads(line)
-        if told.pop("probe") != probe:
-            return None
+        lines = file_of(folder, probe).read_text(encoding="utf-8").splitlines()
+    except (OSError, UnicodeDecodeError):
+        return []
+    found = []
+    for line in lines:
+        with contextlib.suppress(ValueError):  # torn by a crash
+            told = json.loads(line)
+            if isinstance(told, dict) and told.get("probe") == probe:
+                found.append(told)
+    return found
+
+
+def _read(told: dict[str, Any]) -> LearnedTimes | None:
+    try:
         return LearnedTimes(**{key: told[key] for key in LearnedTimes.__dataclass_fields__ if key in told})
-    except (ValueError, TypeError, KeyError, AttributeError):
+    except TypeError:  # a line of another kind
         return None

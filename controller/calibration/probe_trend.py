@@ -21,9 +21,11 @@ FEWEST_RUNS, MOST_RUNS = 3, 8
 OUTLYING = 3.0
 #: relative standard deviation that a run's fast lag has at least
 _LEAST_SD = 0.03
-#: how many times as slow a probe may get before it is named; from 1.35 times on a result is given with a wider
-#: uncertainty, so that a person is told before
-SLOWING = 1.25
+#: a run counts so much against the one after it: a probe that changes is followed
+_RECENCY = 0.75
+#: how many times as slow a probe may get before it is named, over some runs and in one alone; from 1.35 times its
+#: record's on a run gives its result with a wider uncertainty, so that a person is told before
+SLOWING, SUDDENLY = 1.2, 1.35
 #: runs in the best state on record that the newest ones are held against, and how many of those there are
 _REFERENCE, _NEWEST = 5, 3
 #: a run can learn a lag up to this many times its record's
@@ -45,9 +47,13 @@ class FastLag:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Slowing:
-    """A probe that got slower: fast lag now and in its best state, s, and when a run could follow it no more."""
+    """A probe that got slower: fast lag now and in its best state, s, and when a run could follow it no more.
+
+    `suddenly`: the last run alone shows it.
+    """
 
     method: str
+    suddenly: bool
     now_s: float
     best_s: float
     best_from: str
@@ -64,8 +70,9 @@ class Slowing:
         """The warning in words, with what to do."""
         until = f"; at this pace no run can follow it after {self.followed_until}" if self.followed_until else ""
         when = self.best_from if self.best_from == self.best_to else f"{self.best_from} to {self.best_to}"
+        runs = "run" if self.suddenly else "runs"
         return (
-            f"the probe is slowing: in the last runs of {self.method} its fast lag was {self.now_s:.1f} s, "
+            f"the probe is slowing: in the last {runs} of {self.method} its fast lag was {self.now_s:.1f} s, "
             f"{self.ratio:.1f} times the {self.best_s:.1f} s of {when}{until}; clean it as its maker says, then repeat "
             "the response check; replace it where that does not help"
         )
@@ -74,7 +81,8 @@ class Slowing:
 def fast_lag(entries: Sequence[LearnedTimes], *, method: str, since_utc: str | None = None) -> FastLag | None:
     """Return the weighted mean of a method's newest runs; None where there are too few that nothing speaks against.
 
-    Weights are 1/(u^2 + s^2) in logarithms, s the scatter between the runs (DerSimonian and Laird 1986).
+    Weights are 1/(u^2 + s^2) in logarithms, s the scatter between the runs (DerSimonian and Laird 1986), times a factor
+    that falls with age.
 
     Args:
         entries: of the probe's record.
@@ -103,8 +111,9 @@ def fast_lag(entries: Sequence[LearnedTimes], *, method: str, since_utc: str | N
 def slowing(entries: Sequence[LearnedTimes]) -> Slowing | None:
     """Return the worst case of a probe that got slower, by method; None where none did.
 
-    The median of the newest three runs is held against the lowest median of five before them. Runs that were in doubt
-    count here: one value off does not move a median, and a probe that got slow all at once is to be named too.
+    The median of the newest three runs, and the newest by itself with a wider limit, is held against the lowest median
+    of five before them; a newest run that is as quick as ever speaks for a probe that was cleaned. Runs in doubt count
+    here: a probe that got slow all at once is to be named too.
     """
     usable = [one for one in entries if one.transients >= FEWEST_TRANSIENTS and one.sum_s > 0.0]
     found = [
@@ -122,12 +131,17 @@ def _slowing(entries: list[LearnedTimes]) -> Slowing | None:
         return None
     stretches = [before[at : at + _REFERENCE] for at in range(len(before) - _REFERENCE + 1)]
     best = min(stretches, key=lambda some: median(one.sum_s for one in some))
-    best_s, now_s = median(one.sum_s for one in best), median(one.sum_s for one in newest)
+    best_s = median(one.sum_s for one in best)
+    middle_s, last_s = median(one.sum_s for one in newest), newest[-1].sum_s
     scatter = max(_LEAST_SD, _robust_sd([math.log(one.sum_s) for one in best]))
-    if now_s < SLOWING * best_s or math.log(now_s / best_s) < OUTLYING * scatter * math.sqrt(1 / _NEWEST):
+    for_good = math.log(middle_s / best_s) > max(math.log(SLOWING), OUTLYING * scatter / math.sqrt(_NEWEST))
+    suddenly = math.log(last_s / best_s) > max(math.log(SUDDENLY), OUTLYING * scatter)
+    if last_s < SLOWING * best_s or not (for_good or suddenly):
         return None
+    now_s = middle_s if for_good else last_s
     return Slowing(
         method=newest[-1].method,
+        suddenly=not for_good,
         now_s=now_s,
         best_s=best_s,
         best_from=best[0].utc[:10],
@@ -184,7 +198,8 @@ def _mean(values_s: Sequence[float], uncertainties_s: Sequence[float]) -> tuple[
     mean = math.fsum(w * x for w, x in zip(weights, logs, strict=True)) / total
     excess = math.fsum(w * (x - mean) ** 2 for w, x in zip(weights, logs, strict=True)) - (len(logs) - 1)
     between = max(0.0, excess / (total - math.fsum(w * w for w in weights) / total))
-    weights = [1.0 / (variance + between) for variance in variances]
+    weights = [_RECENCY**age / (variance + between) for age, variance in enumerate(reversed(variances))][::-1]
     total = math.fsum(weights)
     mean = math.fsum(w * x for w, x in zip(weights, logs, strict=True)) / total
-    return math.exp(mean), math.exp(mean) / math.sqrt(total)
+    variance = math.fsum(w * w * (one + between) for w, one in zip(weights, variances, strict=True)) / total**2
+    return math.exp(mean), math.exp(mean) * math.sqrt(variance)

@@ -28,6 +28,7 @@ from controller.records.recordfile import new_record
 from controller.records.unclosed import refuse_unclosed
 from controller.runner import run as carry_out
 from controller.running.outcome import RunResult
+from controller.running.probe_left import probe_left
 from controller.running.stopping import StopSwitch
 from controller.titration.core import titrate
 from controller.titration.plan import ResponseCheck, RunPlan
@@ -116,6 +117,8 @@ def _planned(
         probe_identity=bench.probe_identity,
         today=utc_day(bench.clock.utc_s()),
         expected_volume_ml=expected_volume_ml(picked.method, plan_sample(picked.method, choice)),
+        left=probe_left(lab.runs, lab.calibrations, bench.probe_identity),
+        now_utc_s=bench.clock.utc_s(),
     )
     plan = make_plan(
         picked.method,

@@ -18,6 +18,7 @@ from controller.planning.lot_in_force import lot_in_force, whole_uncertainty_mol
 from controller.planning.probe_in_force import calibration_in_force, response_in_force
 from controller.planning.stated import stated
 from controller.planning.taking import NotInForceError, Taking, day_of
+from controller.running.probe_left import LONG_S, ProbeLeft
 from controller.titration.plan import ProbeCalibration, ProbeResponse
 from controller.titration.traceability import BlankInForce, BuretteInForce, Traceability
 
@@ -50,6 +51,8 @@ def find_in_force(
     probe_identity: str,
     today: dt.date,
     expected_volume_ml: float | None = None,
+    left: ProbeLeft | None = None,
+    now_utc_s: float | None = None,
 ) -> InForce:
     """Return what is in force for a run of a method on a bench.
 
@@ -61,11 +64,15 @@ def find_in_force(
         probe_identity: as the probe told it.
         today: UTC day of the run.
         expected_volume_ml: titrant expected, for the warning about the burette's range.
+        left: where the probe was left after its last run, where it was not stored.
+        now_utc_s: POSIX seconds of the run's start, for how long it stood there.
 
     Raises:
         NotInForceError: something is missing, past its date or failed, and the bench's rules refuse that.
     """
     taking = Taking(folder=folder, today=today, refuse=bench.calibration_rules.expired == "refuse")
+    if left is not None and now_utc_s is not None and left.stood_s(now_utc_s) > LONG_S:
+        taking.warnings.append(left.text(now_utc_s))
     search = _Search(method=method, bench=bench, taking=taking)
     return search.found(pump_identity, probe_identity, expected_volume_ml)
 

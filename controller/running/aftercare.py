@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 from configs.errors import HalfdropError
@@ -15,6 +16,7 @@ RINSE_AND_STORE = Ask(
     text="Has the probe been rinsed and put into its storage solution?",
     choices=("yes", "no"),
 )
+NOT_ASKED = {"probe_stored": "not asked", "probe_stood_s": None}
 
 
 def ask_about_probe(operator: Operator, journal: Journal, execution: Execution) -> dict[str, Any]:
@@ -36,3 +38,15 @@ def ask_about_probe(operator: Operator, journal: Journal, execution: Execution) 
     at_s = execution.at_s()
     journal.write(Answered(key=RINSE_AND_STORE.key, answer=answer, at_s=at_s), by="runner")
     return {"probe_stored": answer, "probe_stood_s": round(at_s - finished_s, 3)}
+
+
+def probe_remark(details: Mapping[str, Any]) -> str | None:
+    """Return what a result says of a probe that may stand in the titrated solution; None where it was stored."""
+    if details.get("probe_stored") == "yes":
+        return None
+    if details.get("probe_stored") == "no":
+        return "the probe was not rinsed and stored: it stands in the titrated solution from the run's end on"
+    return (
+        "nobody said that the probe was rinsed and stored: it may stand in the titrated solution from the run's end on "
+        "(answer rinse-and-store, or give it with --answers)"
+    )
