@@ -40,6 +40,7 @@ class LearnedTimes:
         utc: when the run began.
         method: bulk mixing belongs to vessel, volume and stirring, which are the method's.
         transients: points whose readings were taken.
+        holds: whether the readings after a dose came as the probe's record says, only faster or slower.
         doubt: why later runs must not start from these values; None: they may.
     """
 
@@ -55,6 +56,7 @@ class LearnedTimes:
     sum_standard_uncertainty_s: float
     transients: int
     temperature_c: float | None = None
+    holds: bool = True
     doubt: str | None = None
 
 
@@ -91,6 +93,15 @@ def keep_learned(folder: Path, runs: Path, record: Path) -> LearnedTimes | None:
     return None if learned.run in known else learned
 
 
+def probes_on_record(folder: Path) -> list[str]:
+    """Return the identities of the probes that have a record in the lab folder's calibrations."""
+    found = set()
+    for path in sorted((folder / FOLDER).glob("*.jsonl")):
+        with contextlib.suppress(OSError, UnicodeDecodeError, ValueError, AttributeError):
+            found.add(json.loads(path.read_text(encoding="utf-8").partition("\n")[0]).get("probe"))
+    return sorted(one for one in found if isinstance(one, str))
+
+
 def keep_stored(folder: Path, probe: str, utc: str) -> None:
     """Keep that somebody said the probe is rinsed and stored, at a time when no record was open.
 
@@ -122,6 +133,7 @@ def learned_of(record: Record) -> LearnedTimes | None:
             record_sha256=str(closing.get("last_sha256")),
             utc=str(record.header.get("started_utc")),
             method=str(plan.get("method_name")),
+            holds=found.get("record_holds") is not False,
             doubt=_doubt(record, plan, result, found),
         )
     except TypeError:  # a result of another version
@@ -152,6 +164,8 @@ def _doubt(record: Record, plan: dict[str, Any], result: dict[str, Any], found: 
         return "the run was not completed"
     if any(kind in _TROUBLE for kind in (one.get("observation") for one in record.entries)):
         return "the run had trouble with a device, or was broken off"
+    if found.get("record_holds") is False:
+        return "the readings did not come as the probe's record says"
     if found.get("transients", 0) < FEWEST_TRANSIENTS:
         return f"learned from {found.get('transients')} transients only"
     known = {*(record.header.get("warnings") or ()), *((plan.get("traceability") or {}).get("warnings") or ())}

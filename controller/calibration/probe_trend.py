@@ -73,8 +73,8 @@ class Slowing:
         runs = "run" if self.suddenly else "runs"
         return (
             f"the probe is slowing: in the last {runs} of {self.method} its fast lag was {self.now_s:.1f} s, "
-            f"{self.ratio:.1f} times the {self.best_s:.1f} s of {when}{until}; clean it as its maker says, then repeat "
-            "the response check; replace it where that does not help"
+            f"{self.ratio:.1f} times the {self.best_s:.1f} s of {when}{until}; clean it as its maker says and repeat "
+            "the response check, or replace it"
         )
 
 
@@ -115,7 +115,7 @@ def slowing(entries: Sequence[LearnedTimes]) -> Slowing | None:
     of five before them; a newest run that is as quick as ever speaks for a probe that was cleaned. Runs in doubt count
     here: a probe that got slow all at once is to be named too.
     """
-    usable = [one for one in entries if one.transients >= FEWEST_TRANSIENTS and one.sum_s > 0.0]
+    usable = [one for one in entries if one.holds and one.transients >= FEWEST_TRANSIENTS and one.sum_s > 0.0]
     found = [
         case
         for method in sorted({one.method for one in usable})

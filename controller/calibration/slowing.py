@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 from statistics import median
 
@@ -29,10 +29,9 @@ def slowing_warnings(folder: Path, probe: str) -> tuple[str, ...]:
 
 def slowing_texts(learned: Sequence[LearnedTimes], accepted: Sequence[Calibration]) -> tuple[str, ...]:
     """As `slowing_warnings`, of what was read already."""
-    found = slowing(learned)
-    texts = [] if found is None else [found.text]
     buffers = [_number(one, "response_s") for one in accepted if one.kind == "probe"]
     checks = [_fast_lag_s(one) for one in accepted if one.kind == "response"]
+    texts = list(_in_runs(learned, accepted))
     if told := _slower(buffers, SLOWER_IN_BUFFERS):
         texts.append(
             f"the probe is slowing: in buffers it answers within {told[0]:.0f} s, it was {told[1]:.0f} s in its first "
@@ -44,6 +43,21 @@ def slowing_texts(learned: Sequence[LearnedTimes], accepted: Sequence[Calibratio
             f"{told[1]:.1f} s in the first ones; clean it as its maker says, or replace it"
         )
     return tuple(texts)
+
+
+def _in_runs(learned: Sequence[LearnedTimes], accepted: Sequence[Calibration]) -> Iterator[str]:
+    """What the runs since the newest response check say."""
+    checked = max((one.started_utc for one in accepted if one.kind == "response"), default="")
+    if not learned or learned[-1].utc < checked:
+        return
+    if not learned[-1].holds:
+        yield (
+            f"the probe did not answer as its record says in its last run ({learned[-1].run}): look at it, clean it as "
+            "its maker says, then repeat the response check"
+        )
+    found = slowing(learned)
+    if found is not None:
+        yield found.text
 
 
 def _slower(series: Sequence[float | None], times: float) -> tuple[float, float] | None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 from argparse import Namespace
+from dataclasses import asdict
 from pathlib import Path
 from typing import Any
 
@@ -15,17 +16,24 @@ from controller.assembly import FAST, is_simulated, local_route, serve_bench
 from controller.commands.output import print_json, say
 from controller.commands.settings import chosen, sample_choice
 from controller.commands.signals import pulling
-from controller.labfolder import find_lab
+from controller.labfolder import Lab, find_lab
+from controller.planning.last_devices import last_devices
+from controller.planning.probe_state import ProbeState, probe_state
 from controller.planning.runplan import plan_sample
 from controller.records.record import printable
 from controller.running.stopping import StopSwitch
+from drivers.clock import SystemClock
 
 DONE = 0
 DEFAULT_METHOD = "juice-acidity"
 
 
 def show(given: argparse.Namespace) -> int:
-    """Print devices, limits and calibration of a bench file; asks no device."""
+    """Print devices, limits and calibration of a bench file, and what the lab folder knows of its probe.
+
+    Asks no device: the probe is the one that the lab folder last worked with.
+    """
+    lab = None
     if given.bench:
         path = Path(given.bench)
     else:
@@ -33,11 +41,31 @@ def show(given: argparse.Namespace) -> int:
         say(lab.says())
         path = lab.bench
     bench = load_bench(path)
+    state = None if lab is None else _probe_state(lab)
     if given.json:
-        print_json({"path": str(path), "bench": bench.model_dump(mode="json")})
+        probe = None if state is None else asdict(state)
+        print_json({"path": str(path), "bench": bench.model_dump(mode="json"), "probe_on_record": probe})
     else:
-        print("\n".join(printable(line) for line in _lines(bench)))
+        print("\n".join(printable(line) for line in [*_lines(bench), *_state_lines(state)]))
     return DONE
+
+
+def _probe_state(lab: Lab) -> ProbeState | None:
+    probe = last_devices(lab.runs, lab.calibrations).probe
+    if probe is None:
+        return None
+    return probe_state(lab.runs, lab.calibrations, probe, now_utc_s=SystemClock().utc_s())
+
+
+def _state_lines(state: ProbeState | None) -> list[str]:
+    """The probe by its records; `in force` is what a run takes in place of the bench file's."""
+    if state is None or not (state.facts or state.warnings):
+        return []
+    return [
+        f"on record of {state.probe}, last worked with here:",
+        *(f"  {text}" for text in state.facts),
+        *(f"  warning: {text}" for text in state.warnings),
+    ]
 
 
 def _lines(bench: BenchSettings) -> list[str]:

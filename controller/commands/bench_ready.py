@@ -11,20 +11,25 @@ from dataclasses import asdict
 from pathlib import Path
 
 from configs.benchfile import BenchSettings
+from configs.errors import HalfdropError
 from controller.assembly import Opening, ReachedBench, reach_bench
 from controller.benchwork.bench_check import BenchCheck
 from controller.benchwork.bench_finding import Finding, passed_over
 from controller.benchwork.bench_shutdown import shut_down_steps
+from controller.calibration.probe_record import keep_stored
 from controller.commands.bench import DEFAULT_METHOD
 from controller.commands.output import print_json, print_table, say
 from controller.commands.settings import Chosen, answers_of, chosen
 from controller.commands.signals import pulling
+from controller.journal import utc_text
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.planning.inforce import NotInForceError, find_in_force, utc_day
+from controller.planning.last_devices import last_devices
 from controller.planning.runplan import SampleChoice, plan_sample
 from controller.records.record import printable
 from controller.records.unclosed import unclosed
+from controller.running.probe_left import probe_left
 from controller.running.stopping import STOP_EXIT_STATUS, StopSwitch, halted
 from drivers.errors import StoppedError
 from drivers.ports import named_ports
@@ -44,6 +49,7 @@ def ready(given: argparse.Namespace) -> int:
         yield from bench.walk(moving=False)
         yield from _account(picked.bench, bench)
         yield from _calibrated(picked, bench)
+        yield from _left(picked, bench)
         if picked.lab is not None and bench.passed.pump_identity is not None:
             yield from _open_runs(picked.lab, bench.passed.pump_identity)
 
@@ -55,11 +61,24 @@ def shut_down(given: argparse.Namespace) -> int:
 
     def steps(bench: BenchCheck, picked: Chosen) -> Iterator[Finding]:
         yield from bench.pump()
-        yield from shut_down_steps(
+        for finding in shut_down_steps(
             bench.passed.pump, bench.passed.status, bench.operator, picked.bench, empty=given.empty
-        )
+        ):
+            yield finding
+            if finding.step == "probe" and finding.verdict == "ok" and picked.lab is not None:
+                _stored(picked.lab, bench)
 
     return _walked(given, steps, with_choice=True)
+
+
+def _stored(lab: Lab, bench: BenchCheck) -> None:
+    """Keep that the probe was stored: of the one that was used last, as nobody asks it here."""
+    probe = last_devices(lab.runs, lab.calibrations).probe
+    if probe is not None:
+        try:
+            keep_stored(lab.calibrations, probe, utc_text(bench.utc_s()))
+        except HalfdropError as error:
+            say(str(error))
 
 
 def ports(given: argparse.Namespace) -> int:
@@ -214,6 +233,17 @@ def _calibrated(picked: Chosen, bench: BenchCheck) -> Iterator[Finding]:
     if not found.traceability.warnings:
         named = ", ".join(sorted(found.hashes)) or "as the bench file says"
         yield Finding(step="calibrations", verdict="ok", what=f"in force for {picked.method.name}: {named}")
+
+
+def _left(picked: Chosen, bench: BenchCheck) -> Iterator[Finding]:
+    """Whether the probe was stored after its last run."""
+    probe = bench.passed.probe_identity
+    if picked.lab is None or probe is None:
+        return
+    left = probe_left(picked.lab.runs, picked.lab.calibrations, probe)
+    if left is not None:
+        what, _, remedy = left.text(bench.utc_s()).partition("; ")
+        yield Finding(step="probe stored", verdict="warning", what=what, remedy=remedy[0].upper() + remedy[1:])
 
 
 def _open_runs(lab: Lab, pump_identity: str) -> Iterator[Finding]:

@@ -4,16 +4,21 @@ from __future__ import annotations
 
 import argparse
 import datetime as dt
+from pathlib import Path
 from typing import Any
 
+from controller.calibration.probe_record import learned_times, probes_on_record
+from controller.calibration.slowing import slowing_warnings
 from controller.calibration.store import Calibration, calibrations, in_force
 from controller.commands.calibrationlines import FOLLOWED, due_day, figure_of
 from controller.commands.output import print_json, print_table, say
 from controller.labfolder import find_lab
 from controller.records.record import printable
 
-#: a probe that needs this many times the response of its first calibrations is named as slowing
-SLOWING = 2.0
+#: kinds whose subject is a probe
+OF_THE_PROBE = ("probe", "response")
+#: newest runs of a method whose lag is shown
+MOST_RUNS = 30
 
 
 def list_calibrations(given: argparse.Namespace) -> int:
@@ -44,6 +49,11 @@ def history(given: argparse.Namespace) -> int:
     found = [one for one in calibrations(lab.calibrations, kind=given.kind) if one.accepted]
     subjects = sorted({one.subject for one in found})
     told = {subject: followed([one for one in found if one.subject == subject]) for subject in subjects}
+    if given.kind in OF_THE_PROBE:  # runs may have learned of a probe that was never calibrated here
+        for probe in probes_on_record(lab.calibrations):
+            if probe not in told and (figures := learned_figures(lab.calibrations, probe)):
+                _with_warnings(figures, lab.calibrations, probe)
+                told[probe] = figures
     if given.json:
         print_json({"lab": str(lab.path), "kind": given.kind, "history": told})
         return 0
@@ -79,31 +89,56 @@ def calibration_entry(one: Calibration, kept: Calibration | None) -> dict[str, A
 
 
 def followed(entries: list[Calibration]) -> list[dict[str, Any]]:
-    """Return the followed figures of one subject's calibrations, oldest first, with their trend in words."""
-    told = []
+    """Return the followed figures of one subject's calibrations, oldest first, with their trend in words.
+
+    Of a probe they include what runs learned of its lag.
+    """
+    told: list[dict[str, Any]] = []
     for quantity, unit, path in FOLLOWED[entries[0].kind]:
         series = [(one.on, value) for one in entries if (value := figure_of(one, path)) is not None]
         if series:
-            told.append({"quantity": quantity, "unit": unit, "entries": series, "text": _trend_text(quantity, series)})
+            told.append({"quantity": quantity, "unit": unit, "entries": series, "text": _trend_text(series)})
+    if entries[0].kind in OF_THE_PROBE:
+        told += learned_figures(entries[0].path.parent, entries[0].subject)
+        _with_warnings(told, entries[0].path.parent, entries[0].subject)
     return told
 
 
-def _trend_text(quantity: str, series: list[tuple[str, float]]) -> str:
+def learned_figures(folder: Path, probe: str) -> list[dict[str, Any]]:
+    """Return the fast lag that runs learned of a probe, method by method, as `followed` does."""
+    entries = learned_times(folder, probe)
+    told = []
+    for method in sorted({one.method for one in entries}):
+        series = [(one.utc[:10], one.sum_s) for one in entries if one.method == method][-MOST_RUNS:]
+        told.append(
+            {
+                "quantity": f"fast lag in runs of {method}",
+                "unit": "s",
+                "entries": series,
+                "text": _trend_text(series),
+            }
+        )
+    return told
+
+
+def _with_warnings(figures: list[dict[str, Any]], folder: Path, probe: str) -> None:
+    """Put what names a slowing probe under its last figure."""
+    if figures:
+        texts = (figures[-1]["text"], *slowing_warnings(folder, probe))
+        figures[-1]["text"] = "; ".join(text for text in texts if text)
+
+
+def _trend_text(series: list[tuple[str, float]]) -> str:
     from controller.evaluation.control import trend
     from controller.evaluation.statistics import StatisticsError
 
     if len(series) < 3:
         return ""
     days = [float(dt.date.fromisoformat(on).toordinal()) for on, _ in series]
-    values = [value for _, value in series]
     try:
-        line = trend(days, values)
-    except StatisticsError:
+        line = trend(days, [value for _, value in series])
+    except (StatisticsError, ValueError):
         return ""
-    text = (
+    return (
         f"change {30.0 * line.change_per_day:+.3g} a month, {'significant' if line.significant else 'not significant'}"
     )
-    first = sum(values[:3]) / 3
-    if quantity in ("response time", "film time") and values[-1] > SLOWING * first > 0:
-        text += f"; the probe is slowing: {values[-1]:.0f} s, it was {first:.0f} s: clean or replace it"
-    return text
