@@ -1,6 +1,6 @@
 """Verdict on the carbonate in an alkaline titrant, from a titration of strong acid with it.
 
-The gap between the Gran lines of the acid and the base branch is the carbonate (`controller.evaluation.carbonate`). In
+The gap between the ends of the acid and the base branch is the carbonate (`controller.evaluation.carbonate`). In
 a run on a weak acid it leaves no sign that could be told from the acid's own.
 """
 
@@ -8,9 +8,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from configs.errors import HalfdropError
-from controller.evaluation.carbonate import carbonate_gap
-from controller.evaluation.estimate import Estimate
+from controller.evaluation.carbonate import CarbonateGap
 
 #: carbonate in percent of the titrant's strength that is still accepted (house limit, common practice)
 LARGEST_CARBONATE_PERCENT = 1.0
@@ -21,7 +19,7 @@ CURE = "prepare carbonate-free base, keep it under a guard tube, standardise it 
 class CarbonateJudgement:
     """Carbonate in percent of the titrant's whole alkalinity, and mol/L, with standard uncertainties.
 
-    `detected`: more than the uncertainties of the lines explain. `accepted`: not detected above the limit.
+    `detected`: more than its uncertainty explains. `accepted`: not detected above the limit.
     """
 
     gap_ml: float
@@ -35,40 +33,27 @@ class CarbonateJudgement:
 
 
 def judge_carbonate(
-    acid_branch: Estimate,
-    base_branch: Estimate,
-    *,
-    concentration_mol_l: float,
-    limit_percent: float = LARGEST_CARBONATE_PERCENT,
+    gap: CarbonateGap, *, concentration_mol_l: float, limit_percent: float = LARGEST_CARBONATE_PERCENT
 ) -> CarbonateJudgement:
-    """Judge the gap between the Gran intercepts of both branches of a strong-acid titration.
+    """Judge the gap between both branches of a strong-acid titration.
 
     Args:
-        acid_branch: intercept of the line before equivalence.
-        base_branch: intercept of the line after equivalence, from points above about pH 11.
+        gap: between acid and base branch.
         concentration_mol_l: whole alkalinity of the titrant (as standardised to an acidic end point).
         limit_percent: largest carbonate accepted.
-
-    Raises:
-        HalfdropError: intercepts not above 0.
     """
-    acid_ml, base_ml = acid_branch.volume_ml, base_branch.volume_ml
-    if not (acid_ml > 0.0 and base_ml > 0.0):
-        what = f"intercepts are {acid_ml} and {base_ml} mL, allowed: above 0 mL"
-        raise HalfdropError(what, where="carbonate check", remedy="Titrate strong acid well past equivalence")
-    gap = carbonate_gap(acid_branch, base_branch)
-    percent = 100.0 * gap.carbonate_share
-    # to first order in the gap
-    percent_u = 100.0 * gap.standard_uncertainty_ml / base_ml
+    percent, percent_u = 100.0 * gap.carbonate_share, 100.0 * gap.share_standard_uncertainty
+    water = min(percent, 100.0 * gap.water_share)
     detected = gap.significant
     accepted = not (detected and percent > limit_percent)
-    figure = f"carbonate {percent:.2f} +- {percent_u:.2f} % of the titrant's strength"
+    figure = f"carbonate {max(0.0, percent):.2f} % of the titrant's alkalinity, u = {percent_u:.2f} %"
     if not detected:
-        text = f"no carbonate found: {figure}"
-    elif accepted:
-        text = f"{figure}, allowed: {limit_percent:g} %"
+        text = f"no carbonate found ({figure})"
     else:
-        text = f"{figure}, allowed: {limit_percent:g} %; {CURE}"
+        text = (
+            f"{figure}, allowed: {limit_percent:g} %; unboiled water of the sample may make {water:.2f} % of it"
+        )
+        text += "" if accepted else f"; {CURE}"
     return CarbonateJudgement(
         gap_ml=gap.gap_ml,
         gap_standard_uncertainty_ml=gap.standard_uncertainty_ml,

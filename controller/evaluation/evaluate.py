@@ -82,7 +82,7 @@ def evaluate(
     warnings += curve_remarks(known, jumps, estimates, reported, fit)
     warnings += [h.remark for h in halves if h.remark is not None]
     if strong and not curve.acid_titrant:
-        warnings += carbonate_remarks(estimates[0])
+        warnings += carbonate_remarks(curve, reported[0].volume_ml)
     if end_points_expected is not None and len(jumps) < end_points_expected:
         warnings.append(f"{len(jumps)} of {end_points_expected} expected end points found")
     return Evaluation(

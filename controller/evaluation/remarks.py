@@ -18,6 +18,8 @@ from controller.evaluation.modelfit import ModelFit
 _FEW_OUTLIERS, _MOST_OUTLIERS = 0.25, 5
 #: an inflection further from equivalence than this share is remarked upon
 _NOTABLE_BIAS = 0.001
+#: less carbonate than this share of the alkalinity is not spoken of
+_NOTABLE_CARBONATE = 0.003
 
 
 def curve_remarks(
@@ -99,16 +101,15 @@ def extrapolation_remarks(curve: Curve) -> list[str]:
     ]
 
 
-def carbonate_remarks(estimates: list[Estimate]) -> list[str]:
-    """Say what the gap between both Gran lines of a strong acid tells of carbonate in the base."""
-    lines = {e.estimator: e for e in estimates if e.sound}
-    if GRAN_BEFORE not in lines or GRAN_BEYOND not in lines:
+def carbonate_remarks(curve: Curve, end_point_ml: float) -> list[str]:
+    """Say what the gap between both branches of a strong acid's curve tells of carbonate in the base."""
+    found = carbonate_gap(curve, end_point_ml=end_point_ml)
+    if found is None or not found.significant or found.carbonate_share < _NOTABLE_CARBONATE:
         return []
-    found = carbonate_gap(lines[GRAN_BEFORE], lines[GRAN_BEYOND])
-    if not found.significant:
-        return []
+    water = min(found.carbonate_share, found.water_share)
     return [
-        f"the Gran lines of this strong acid end {found.gap_ml:.4f} +/- {found.standard_uncertainty_ml:.4f} mL apart: "
-        f"about {100.0 * found.carbonate_share:.1f} % of the titrant's alkalinity is carbonate; use carbonate-free "
-        "base with a guard tube, and standardise at the same end point pH"
+        f"the branches of this strong acid end {found.gap_ml:.4f} +/- {found.standard_uncertainty_ml:.4f} mL apart: "
+        f"about {100.0 * found.carbonate_share:.1f} % of the titrant's alkalinity is carbonate (unboiled water of the "
+        f"sample may make {100.0 * water:.1f} % of it); use carbonate-free base with a guard tube, and standardise at "
+        "the same end point pH"
     ]

@@ -22,9 +22,9 @@ from controller.calibration.store import Calibration, calibrations
 from controller.calibration.titrant import Standardisation
 from controller.curves.evaluate_record import curve_of
 from controller.evaluation.budget_table import budget_to_json
+from controller.evaluation.carbonate import carbonate_gap
 from controller.evaluation.carried import carry
 from controller.evaluation.control import trend
-from controller.evaluation.estimate import GRAN_BEFORE, GRAN_BEYOND
 from controller.evaluation.evaluate import evaluate
 from controller.evaluation.statistics import StatisticsError
 from controller.planning.amounts import standardisation_of, statistics_to_json
@@ -126,10 +126,10 @@ def titrant_lot(
 
 
 def _carbonate(path: Path, lot_id: str, concentration_mol_l: float) -> CarbonateJudgement:
-    """Judge the carbonate by the Gran lines of both branches.
+    """Judge the carbonate by the gap between both branches.
 
     Raises:
-        HalfdropError: another lot, or no line on one of the sides.
+        HalfdropError: another lot, or a branch is not there.
     """
     record = read_record(path)
     plan = plan_from_json(record.header.get("plan"), where=str(path))
@@ -138,15 +138,16 @@ def _carbonate(path: Path, lot_id: str, concentration_mol_l: float) -> Carbonate
         raise HalfdropError(what, where=path.stem, remedy="Name a run with this lot")
     result = (record.closing or {}).get("result") or {}
     detected = [float(point["volume_ml"]) for point in result.get("end_points", [])]
-    found = evaluate(curve_of(plan, record, where=str(path)), end_points_expected=1, detected_ml=detected)
-    lines = {e.estimator: e for estimates in found.estimates for e in estimates}
-    if GRAN_BEFORE not in lines or GRAN_BEYOND not in lines:
+    curve = curve_of(plan, record, where=str(path))
+    found = evaluate(curve, end_points_expected=1, detected_ml=detected)
+    gap = carbonate_gap(curve, end_point_ml=found.end_points[0].volume_ml) if found.end_points else None
+    if gap is None:
         raise HalfdropError(
-            "no straight line on both sides of its end point",
+            "it is not the curve of a strong acid with 4 points or more below pH 4.5 and above pH 10",
             where=path.stem,
             remedy="Titrate strong acid, and go at least 2 mL past the end point",
         )
-    return judge_carbonate(lines[GRAN_BEFORE], lines[GRAN_BEYOND], concentration_mol_l=concentration_mol_l)
+    return judge_carbonate(gap, concentration_mol_l=concentration_mol_l)
 
 
 def drift_of(folder: Path, lot_id: str, today: dt.date, value: float) -> dict[str, Any]:

@@ -126,8 +126,12 @@ def test_carbonate_in_the_titrant_is_seen_with_strong_acid(halfdrop: Run, lab: P
     )  # fmt: skip
     assert status == 0, err
     result = json.loads(out)
-    assert result["calibration"]["carbonate"]["detected"]
-    assert not result["calibration"]["carbonate"]["accepted"]
+    carbonate = result["calibration"]["carbonate"]
+    assert carbonate["detected"]
+    assert not carbonate["accepted"]
+    # 0.001 mol/L carbonate takes two protons of the 0.1 mol/L that the bottle holds
+    assert carbonate["percent"] == pytest.approx(2.0, abs=3.0 * carbonate["standard_uncertainty_percent"])
+    assert carbonate["standard_uncertainty_percent"] < 0.1
     assert any("guard tube" in text for text in result["warnings"])
 
 

@@ -1,15 +1,16 @@
 import datetime as dt
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
-from configs.errors import HalfdropError
 from controller.calibration.carbonate import judge_carbonate
 from controller.calibration.titrant import Equipment, PrimaryStandard, Replicate, StandardisationError, standardise
 from controller.calibration.titrant_lot import TitrantLot
+from controller.evaluation.carbonate import carbonate_gap
 from controller.evaluation.carried import CarriedResult
-from controller.evaluation.estimate import GRAN_BEFORE, GRAN_BEYOND, Estimate
+from controller.evaluation.curve import Curve
 from controller.evaluation.montecarlo import compare, propagate
 from controller.evaluation.quantity import Quantity
 from controller.evaluation.uncertainty import budget
@@ -220,48 +221,56 @@ def test_a_lot_standardised_to_another_end_point_is_named():
     assert LOT.standard_uncertainty_mol_l == pytest.approx(0.0001)
 
 
-def branch_intercepts(carbonate_part):
-    """Gran intercepts of 50 mL 0.01 mol/L HCl by 0.1 mol/L alkali of which a part is carbonate; closed vessel."""
-    alkali = 0.1
-    carbonate = alkali * carbonate_part / 2
-    pkw = 13.995
+def strong_acid_curve(carbonate_part, *, sample=None, last_ml=8.0):
+    """50 mL 0.01 mol/L HCl by 0.1 mol/L alkali of which a part is carbonate; closed vessel, activity by Davies."""
+    medium = Medium(temperature_c=25.0, pkw=13.995, debye_huckel_a=0.51)
     titrant = Mixture(
-        weak=(WeakComponent(pka=(6.352, 10.329), charge=0, concentration_mol_l=carbonate),),
-        ions=(StrongIon(charge=1, concentration_mol_l=alkali),),
+        weak=(WeakComponent(pka=(6.352, 10.329), charge=0, concentration_mol_l=0.1 * carbonate_part / 2),),
+        ions=(StrongIon(charge=1, concentration_mol_l=0.1),),
     )
-    sample = Mixture(ions=(StrongIon(charge=-1, concentration_mol_l=0.01),))
-    medium = Medium(temperature_c=25.0, pkw=pkw, debye_huckel_a=None)
-    volumes = np.linspace(0.5, 20.0, 400)
-    ph = titration_curve(sample, titrant, 50.0, volumes, medium)
-    total = 50.0 + volumes
-
-    def zero_of(line, keep):
-        slope, offset = np.polyfit(volumes[keep], line[keep], 1)
-        return float(-offset / slope)
-
-    acid = zero_of(total * 10.0**-ph, ph < 3.5)
-    base = zero_of(total * 10.0 ** (ph - pkw), ph > 12.0)
-    return acid, base
+    sample = sample or Mixture(ions=(StrongIon(charge=-1, concentration_mol_l=0.01),))
+    volumes = np.linspace(0.5, last_ml, 60)
+    return Curve(
+        volume_ml=volumes,
+        ph=titration_curve(sample, titrant, 50.0, volumes, medium),
+        initial_volume_ml=50.0,
+        titrant_concentration_mol_l=0.1,
+        titrant_is_acid=False,
+        volume_sd_ml=0.0005,
+        signal_sd=0.002,
+        pkw=13.995,
+        debye_huckel_a=0.51,
+    )
 
 
 @pytest.mark.parametrize("percent", [0.0, 0.5, 2.0, 5.0, 20.0])
-def test_the_gap_of_the_gran_lines_is_the_carbonate(percent):
-    # against the charge balance of the simulated solution, which knows nothing of this rule
-    acid, base = branch_intercepts(percent / 100)
-    found = judge_carbonate(
-        Estimate(estimator=GRAN_BEFORE, volume_ml=acid, standard_uncertainty_ml=0.002),
-        Estimate(estimator=GRAN_BEYOND, volume_ml=base, standard_uncertainty_ml=0.003),
-        concentration_mol_l=0.1,
-    )
-    assert found.standard_uncertainty_percent == pytest.approx(100 * math.hypot(0.002, 0.003) / base)
-    assert found.percent == pytest.approx(percent, rel=0.05, abs=0.01)
-    assert found.carbonate_mol_l == pytest.approx(0.1 * percent / 200, rel=0.05, abs=1e-5)
+def test_the_gap_of_the_branches_is_the_carbonate(percent):
+    # against the charge balance of the simulated solution, 2 to 3 mL past the end point
+    gap = carbonate_gap(strong_acid_curve(percent / 100), end_point_ml=5.0)
+    found = judge_carbonate(gap, concentration_mol_l=0.1)
+    assert found.percent == pytest.approx(percent, rel=0.005, abs=0.01)
+    # the acid branch ends at n/(OH + 2 CO3), the base branch at n/OH
+    assert found.gap_ml == pytest.approx(5.0 / (1.0 - percent / 100) - 5.0, rel=0.01, abs=0.001)
+    assert 0.03 < found.standard_uncertainty_percent < 0.25
+    assert found.carbonate_mol_l == pytest.approx(0.1 * percent / 200, rel=0.005, abs=1e-5)
     assert found.detected is (percent > 0.0)
     assert found.accepted is (percent <= 1.0)
     assert ("carbonate-free" in found.text) is (percent > 1.0)
 
 
-def test_intercepts_that_are_none_are_refused():
-    nothing = Estimate(estimator=GRAN_BEFORE, volume_ml=0.0, standard_uncertainty_ml=0.1)
-    with pytest.raises(HalfdropError, match="carbonate check: intercepts are"):
-        judge_carbonate(nothing, nothing, concentration_mol_l=0.1)
+def test_carbon_dioxide_of_the_water_is_told_apart_in_words_only():
+    # 1.4e-5 mol/L (water in air) in 50 mL: 2 x 0.0007 mmol of 0.5 mmol
+    acid = StrongIon(charge=-1, concentration_mol_l=0.01)
+    dissolved = WeakComponent(pka=(6.352, 10.329), charge=0, concentration_mol_l=1.4e-5)
+    gap = carbonate_gap(strong_acid_curve(0.0, sample=Mixture(weak=(dissolved,), ions=(acid,))), end_point_ml=5.0)
+    assert gap.carbonate_share == pytest.approx(gap.water_share, rel=0.1)
+    assert gap.water_share == pytest.approx(0.0028, rel=0.01)
+    assert "unboiled water of the sample may make" in judge_carbonate(gap, concentration_mol_l=0.1).text
+
+
+def test_what_is_no_strong_acid_or_stops_too_early_tells_no_carbonate():
+    acetic = Mixture(weak=(WeakComponent(pka=(4.756,), charge=0, concentration_mol_l=0.01),))
+    assert carbonate_gap(strong_acid_curve(0.02, sample=acetic), end_point_ml=5.0) is None
+    assert carbonate_gap(strong_acid_curve(0.02, last_ml=5.0), end_point_ml=5.0) is None
+    acid_titrant = replace(strong_acid_curve(0.02), titrant_is_acid=True)
+    assert carbonate_gap(acid_titrant, end_point_ml=5.0) is None
