@@ -264,6 +264,7 @@ def _resume(made: Parser) -> None:
     made.add_argument("--operator", metavar="NAME", help="who resumes it (kept in the record)")
     made.add_argument("--headless", action="store_true", help="ask nothing on the terminal")
     made.add_argument("--answers", metavar="FILE", help="answers to the questions of a headless run (YAML)")
+    made.add_argument("--attended", action="store_true", help="questions wait for whoever watches it on a screen")
     made.add_argument("--time-scale", metavar="X", help="served simulated bench only: X times real time")
     _lab(made)
     _json(made)

@@ -29,14 +29,25 @@ class Present:
 
 
 @contextmanager
-def at_the_bench(bench: OpenBench, lab: Lab, record: Path, *, headless: bool) -> Iterator[Present]:
-    """Open the run's command port, and put keyboard, port or chemist in the operator's place."""
+def at_the_bench(
+    bench: OpenBench, lab: Lab, record: Path, *, headless: bool, attended_by_viewer: bool = False
+) -> Iterator[Present]:
+    """Open the run's command port, and put keyboard, port or chemist in the operator's place.
+
+    Args:
+        bench: open.
+        lab: the lab folder.
+        record: the run's.
+        headless: nobody is at the terminal.
+        attended_by_viewer: somebody watches on a screen: questions wait for them from the beginning.
+    """
     with ExitStack() as held:
         port = held.enter_context(command_port(bench.stop, record, set_time_scale=time_scale_of(bench.clock)))
         commands: Commands = port
         devices = bench.devices
         if headless and bench.world is None:
-            devices = replace(devices, operator=PortOperator(devices.operator, port, bench.clock, bench.stop))
+            operator = PortOperator(devices.operator, port, bench.clock, bench.stop, attended=attended_by_viewer)
+            devices = replace(devices, operator=operator)
         if not headless:
             keyboard = Keyboard(bench.stop, devices.operator, ConsoleOperator(), commands)
             held.enter_context(pulling(bench.stop, headless=False, interrupt=keyboard.interrupt))

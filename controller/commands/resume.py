@@ -54,11 +54,13 @@ def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun)
     simulated = is_simulated(bench)
     answers = answers_of(given)
     unattended = given.headless or not sys.stdin.isatty()
-    if unattended and answers is None and not simulated:
+    if given.attended:
+        answers = answers or {}
+    elif unattended and answers is None and not simulated:
         raise HalfdropError(
             "nobody is there to say whether the beaker was touched",
             where="resume",
-            remedy="Give the answers with --answers FILE, or resume at a terminal without --headless",
+            remedy="Give the answers with --answers FILE, or resume on the screen or at a terminal without --headless",
         )
     if simulated and given.time_scale not in (None, FAST):
         raise HalfdropError(
@@ -86,7 +88,9 @@ def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun)
         if simulated and not given.evaluate_only:
             bring_back(broken, opened.devices, opened.clock, stop)
             say(f"simulated bench brought back to {broken.last_run_s:.1f} s into the run")
-        present = held.enter_context(at_the_bench(opened, lab, path, headless=unattended))
+        present = held.enter_context(
+            at_the_bench(opened, lab, path, headless=unattended, attended_by_viewer=given.attended)
+        )
         how = GoingOn(
             devices=present.devices,
             clock=opened.clock,

@@ -46,7 +46,31 @@ def read_announcement(record: Path) -> Announcement | None:
         return None
 
 
-def send_command(record: Path, command: str, **details: Any) -> None:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Asked:
+    """What a run asks whoever watches it."""
+
+    key: str
+    text: str
+    choices: tuple[str, ...]
+
+
+def say_hello(record: Path) -> Asked | None:
+    """Let the run of this record know that somebody watches; return what it asks now, None where it asks nothing.
+
+    Raises:
+        RunNotListeningError: nobody listens (any more).
+        HalfdropError: the run refused it.
+    """
+    asks = send_command(record, "hello").get("asks")
+    if not isinstance(asks, dict):
+        return None
+    choices = asks.get("choices")
+    kept = tuple(str(one) for one in choices) if isinstance(choices, list) else ()
+    return Asked(key=str(asks.get("key")), text=str(asks.get("text")), choices=kept)
+
+
+def send_command(record: Path, command: str, **details: Any) -> dict[str, Any]:
     """Send one command to the run of this record and wait for its reply.
 
     Args:
@@ -54,6 +78,9 @@ def send_command(record: Path, command: str, **details: Any) -> None:
         command: "halt" (the pump stops at once, the run waits), "end", "pause", "go-on", "dose" (volume_ml), "note"
             (text), "answer" (key, text), "time-scale" (scale), "hello".
         details: as the command needs.
+
+    Returns:
+        The run's reply.
 
     Raises:
         RunNotListeningError: nobody listens (any more).
@@ -69,6 +96,7 @@ def send_command(record: Path, command: str, **details: Any) -> None:
             where=f"run {record.stem}",
             remedy="Look at the run, try again",
         )
+    return reply
 
 
 def _exchange(told: Announcement, line: Mapping[str, Any], record: Path) -> dict[str, Any]:

@@ -74,7 +74,7 @@ class CommandPort:
         self._selector.register(self._woken, selectors.EVENT_READ)
         self._over = False
         self._watched_s: float | None = None
-        self._asked: tuple[str, tuple[str, ...]] | None = None
+        self._asked: tuple[str, str, tuple[str, ...]] | None = None  # key, text, choices
         self.answer: str | None = None  # of a viewer, to what is asked
         self._thread = threading.Thread(target=self._serve, name="command port", daemon=True)
         self._thread.start()
@@ -94,9 +94,9 @@ class CommandPort:
         return seconds is None or time.monotonic() - self._watched_s <= seconds
 
     @contextmanager
-    def asking(self, key: str, choices: tuple[str, ...]) -> Iterator[None]:
-        """Take answers to this question while the block runs; `answer` is set when one came."""
-        self.answer, self._asked = None, (key, choices)
+    def asking(self, key: str, text: str, choices: tuple[str, ...]) -> Iterator[None]:
+        """Say what is asked, and take answers while the block runs; `answer` is set when one came."""
+        self.answer, self._asked = None, (key, text, choices)
         try:
             yield
         finally:
@@ -176,7 +176,11 @@ class CommandPort:
             self._obey(told)
         except CommandRefusedError as error:
             return {"done": False, "what": str(error)}, True
-        return {"done": True, "run": self._name}, True
+        return {"done": True, "run": self._name, **self._asks()}, True
+
+    def _asks(self) -> dict[str, Any]:
+        asked = self._asked
+        return {} if asked is None else {"asks": {"key": asked[0], "text": asked[1], "choices": list(asked[2])}}
 
     def _obey(self, told: dict[str, Any]) -> None:
         match told.get("command"):
@@ -203,9 +207,9 @@ class CommandPort:
         asked = self._asked
         if asked is None or told.get("key") != asked[0]:
             raise CommandRefusedError("this is not asked (any more)")
-        answer = fitting_choice(_whole_text(str(told.get("text", ""))), asked[1])
+        answer = fitting_choice(_whole_text(str(told.get("text", ""))), asked[2])
         if answer is None:
-            raise CommandRefusedError(f"allowed: {', '.join(asked[1]) or 'any text'}")
+            raise CommandRefusedError(f"allowed: {', '.join(asked[2]) or 'any text'}")
         self.answer = answer
 
 

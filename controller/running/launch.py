@@ -14,7 +14,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.labfolder import Lab
-from controller.records.record import list_records
+from controller.records.record import list_records, summarise
 from controller.running.commandclient import SUFFIX, read_announcement
 from drivers.clock import Clock
 
@@ -22,6 +22,8 @@ from drivers.clock import Clock
 LONGEST_START_S = 30.0
 _LOOK_S = 0.05
 _LOG_LINES = 6
+#: how an error begins on the command line
+_ERROR = "halfdrop: "
 #: processes that this one started and will not wait for; kept, so that none is given up while it runs
 _LEFT_RUNNING: list[subprocess.Popen[bytes]] = []
 
@@ -104,12 +106,37 @@ def record_of(started: Started, clock: Clock) -> Path:
     )
 
 
+def taken_up(started: Started, record: Path, clock: Clock) -> None:
+    """Wait until a started process has taken up an existing record: it takes commands for it, or has ended it.
+
+    Raises:
+        RunNotStartedError: it gave up before, or takes longer than `LONGEST_START_S`.
+    """
+    until_s = clock.now_s() + LONGEST_START_S
+    while clock.now_s() < until_s:
+        ended = started.process.poll() is not None
+        told = read_announcement(record)
+        if told is not None and told.pid == started.process.pid:
+            return
+        if ended:
+            if summarise(record).get("outcome") is not None:
+                return
+            raise RunNotStartedError(
+                f"it was not taken up: {_said(started.log)}", where=record.stem, remedy=f"See {started.log}"
+            )
+        clock.wait(_LOOK_S)
+    raise RunNotStartedError(
+        f"nothing was heard of it within {LONGEST_START_S:g} s", where=record.stem, remedy=f"See {started.log}"
+    )
+
+
 def _said(log: Path) -> str:
     try:
         lines = log.read_text(encoding="utf-8", errors="replace").strip().splitlines()
     except OSError:
         lines = []
-    return " / ".join(lines[-_LOG_LINES:]) or "it said nothing"
+    told = [line.removeprefix(_ERROR) for line in lines if line.startswith(_ERROR)]
+    return " / ".join(told or lines[-_LOG_LINES:]).rstrip(". ") or "it said nothing"
 
 
 def _detached() -> dict[str, Any]:

@@ -48,7 +48,7 @@ class PortOperator:
         except AnswerMissingError:
             if not (self._attended or self._port.watched_within(None)):
                 raise
-            with self._port.asking(key, choices):
+            with self._port.asking(key, text, choices):
                 while (answer := self._port.answer) is None:
                     if key == RINSE_AND_STORE.key and not self._port.watched_within(GONE_AFTER_S):
                         raise

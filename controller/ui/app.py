@@ -42,6 +42,7 @@ class HalfdropApp(App[int]):
     def __init__(self, *, lab: Lab | None = None, record: Path | None = None, speed: float | None = None) -> None:
         super().__init__()
         self.lab, self._record, self._speed = lab, record, speed
+        self._offered: set[Path] = set()  # runs left open that were asked about already
         # animations would draw more often than four times a second
         self.animation_level = "none"
         self.register_theme(NIGHT)
@@ -126,6 +127,20 @@ class HalfdropApp(App[int]):
         """Take a lab folder that was just made or chosen."""
         self.lab = lab
         self.switch_screen(self._place("archive") or Screen())
+
+    def offer_left_open(self, found: list[Path]) -> None:
+        """Ask once about the newest run that was left open."""
+        new = [path for path in found if path not in self._offered]
+        self._offered.update(found)
+        if new and self.lab is not None and not self.screen.is_modal:
+            self.see_to(new[0])
+
+    def see_to(self, record: Path) -> None:
+        """Ask what is to become of a run that was left open."""
+        from controller.ui.screens.leftopen import see_to
+
+        if self.lab is not None:
+            see_to(self, self.lab, record)
 
     # --- actions of every screen -------------------------------------------------------------------------------------
 

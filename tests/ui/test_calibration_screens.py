@@ -80,7 +80,7 @@ def test_a_step_is_asked_and_answered_on_the_screen(stage: Any, size: tuple[int,
     path, _ = _calibration(stage.lab, 2, closed=False)
     app = HalfdropApp(lab=stage.lab)
 
-    with stage.listening(path) as (port, stop), port.asking("buffer-2", ("ready", "stop")):
+    with stage.listening(path) as (port, stop), port.asking("buffer-2", PLACE, ("ready", "stop")):
 
         async def steps(pilot: Any) -> None:
             await app.switch_screen(CalibrationScreen(path))

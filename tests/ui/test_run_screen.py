@@ -250,7 +250,7 @@ def test_a_question_of_the_run_is_answered_on_the_screen(stage: Any) -> None:
     script.write(Ask(key="refill-by-hand", text="Syringe empty. Filled?", choices=("filled", "stop")))
     app = HalfdropApp(lab=stage.lab, record=script.path)
 
-    with stage.listening(script.path) as (port, _), port.asking("refill-by-hand", ("filled", "stop")):
+    with stage.listening(script.path) as (port, _), port.asking("refill-by-hand", "Filled?", ("filled", "stop")):
 
         async def steps(pilot: Any) -> None:
             await stage.until(pilot, lambda: app.screen.view.question is not None)

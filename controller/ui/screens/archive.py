@@ -18,7 +18,7 @@ from configs.errors import HalfdropError
 from controller.labfolder import Lab
 from controller.records.archive_index import ArchiveIndex, IndexedRun
 from controller.records.record import printable, read_record, verify
-from controller.ui.screens.dialogs import Line, Text
+from controller.ui.screens.dialogs import Line, Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.texts import clock_text, local_time_text
 from controller.ui.widgets.readout import Plain
@@ -77,6 +77,11 @@ class ArchiveScreen(Screen[None]):
     def _refresh(self) -> None:
         self._index.refresh(lambda done, of: self.app.call_from_thread(self._say_reading, done, of))
         self.app.call_from_thread(self.search)
+        from controller.ui.screens.leftopen import left_open
+
+        if found := left_open(self._lab):
+            app: Any = self.app
+            app.call_from_thread(app.offer_left_open, found)
 
     def _say_reading(self, done: int, of: int) -> None:
         self.query_one("#about", Plain).say(f"reading records: {done} of {of}")
@@ -219,11 +224,6 @@ def verify_for(screen: Screen[Any], record: Path) -> None:
         text = str(error)
     text += "\n\nIntact means: as the program wrote it. Whoever rewrites every hash makes a new record."
     screen.app.call_from_thread(screen.app.push_screen, Text("Is the record as it was written?", printable_lines(text)))
-
-
-def printable_lines(text: str) -> str:
-    """Return text of several lines, each fit for a terminal."""
-    return "\n".join(printable(line) for line in text.splitlines())
 
 
 def write_tables(record: Path, folder: Path) -> list[str]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from functools import partial
+from pathlib import Path
 from typing import Any, ClassVar
 
 from textual.app import ComposeResult
@@ -17,6 +18,7 @@ from configs.settings import load_bench
 from controller.benchwork.work import ask_bench
 from controller.calibration.store import Calibration, in_force
 from controller.labfolder import Lab
+from controller.records.archive_index import ArchiveIndex
 from controller.records.record import printable
 from controller.ui.benchtext import (
     calibration_lines,
@@ -26,9 +28,9 @@ from controller.ui.benchtext import (
     pump_lines,
     settings_of,
 )
-from controller.ui.screens.archive import printable_lines
-from controller.ui.screens.dialogs import Choice, Line
+from controller.ui.screens.dialogs import Choice, Line, printable_lines
 from controller.ui.screens.help import help_of
+from controller.ui.screens.leftopen import left_open
 from controller.ui.texts import number_of
 from controller.ui.widgets.readout import Plain
 from controller.ui.widgets.titlebar import TitleBar
@@ -49,6 +51,7 @@ class BenchScreen(Screen[None]):
         Binding("r", "look", "Read now"),
         Binding("f", "fill", "Fill"),
         Binding("o", "prime", "Prime"),
+        Binding("u", "see_to", "Go on or close"),
         Binding("y", "copy", "Copy"),
         Binding("question_mark", "help", "Help", key_display="?"),
         Binding("q,escape", "app.go('archive')", "Leave", key_display="q"),
@@ -59,6 +62,7 @@ class BenchScreen(Screen[None]):
         self._lab = lab
         self._bench: BenchSettings | None = None
         self._told: dict[str, Any] = {}
+        self._open: list[Path] = []  # runs that were left without an end
         self._doing: str | None = None
         self._waited_s = 0
 
@@ -70,6 +74,7 @@ class BenchScreen(Screen[None]):
             yield Plain("", id="bench-pump")
             yield Plain("", id="bench-probe")
             yield Plain("", id="bench-calibration")
+            yield Plain("", id="bench-open", classes="problem")
             yield Plain("", id="bench-problem", classes="problem")
         yield Plain("", id="doing")
         yield Footer(show_command_palette=False, compact=True)
@@ -96,6 +101,9 @@ class BenchScreen(Screen[None]):
         lines = calibration_lines(self._bench.probe.calibration) if record is None else in_force_lines(record)
         self._say("bench-calibration", lines)
         self._say("bench-problem", self._problem_lines())
+        self._say("bench-open", [f"left open   {path.stem}: u goes on with it, or closes it" for path in self._open])
+        self.query_one("#bench-open").display = bool(self._open)
+        self.refresh_bindings()
 
     def _in_force(self) -> Calibration | None:
         """The calibration of the probe that answered, if one was made here and accepted."""
@@ -135,9 +143,11 @@ class BenchScreen(Screen[None]):
 
     def _work(self, action: str, volume_ml: float | None) -> None:
         told = ask_bench(self._lab, action, volume_ml=volume_ml)
-        self.app.call_from_thread(self._done, told)
+        ArchiveIndex(self._lab.runs).refresh()
+        self.app.call_from_thread(self._done, told, left_open(self._lab))
 
-    def _done(self, told: dict[str, Any]) -> None:
+    def _done(self, told: dict[str, Any], found: list[Path]) -> None:
+        self._open = found
         done, self._doing = self._doing, None
         self._told = told if "error" not in told else {**self._told, **told}
         if "error" not in told:
@@ -150,6 +160,16 @@ class BenchScreen(Screen[None]):
         elif done == "fill" and "error" not in told:
             self.notify("the syringe is filled")
         self._show()
+
+    def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
+        """Show the keys that do something now."""
+        return bool(self._open) if action == "see_to" else True
+
+    def action_see_to(self) -> None:
+        """Ask what is to become of the newest run that was left open."""
+        app: Any = self.app
+        if self._open:
+            app.see_to(self._open[0])
 
     def action_look(self) -> None:
         """Ask the devices and read the probe."""

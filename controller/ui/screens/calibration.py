@@ -20,8 +20,8 @@ from controller.commands.calibrations import calibration_entry, followed
 from controller.labfolder import Lab
 from controller.records.record import printable
 from controller.running.launch import record_of, start_run
-from controller.ui.screens.archive import printable_lines, verify_for
-from controller.ui.screens.dialogs import Text
+from controller.ui.screens.archive import verify_for
+from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.screens.run import RunScreen
 from controller.ui.widgets.readout import Plain, Readout

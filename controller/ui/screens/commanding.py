@@ -16,9 +16,13 @@ from controller.ui.texts import number_of
 
 TYPE_CHECKING = False  # dialogs and commands are imported when they are used: the first paint must not wait for them
 if TYPE_CHECKING:
-    from controller.ui.screens.dialogs import Choice
+    from controller.running.commandclient import Asked
+    from controller.ui.screens.dialogs import Choice, Line
 
 _COMMANDS = {"stop", "pause", "go_on", "dose", "note"}
+ASKS = "An answer is needed"
+#: choices that are longer together stand one below the other
+_ONE_LINE = 52
 
 
 class Commanding(Screen[None]):
@@ -37,6 +41,7 @@ class Commanding(Screen[None]):
         Binding("d", "dose", "Dose"),
         Binding("n", "note", "Note"),
         Binding("enter", "answer", "Answer"),
+        Binding("u", "see_to", "Go on or close"),
         Binding("ctrl+c", "stop_or_copy", "Stop", show=False),
     ]
 
@@ -46,12 +51,28 @@ class Commanding(Screen[None]):
         self.listens = True
         self.pid: int | None = None  # of the process that runs it, once it has answered
         self._halted: Choice | None = None
-        self._question: Choice | None = None
+        self._question: Choice | Line | None = None
+        self._asked: Asked | None = None  # what the process asks that does not stand in the record
 
     @property
     def live(self) -> bool:
         """True where the run goes on and this is no playback."""
         return not self.view.over
+
+    @property
+    def left_open(self) -> bool:
+        """True where the record has no end and nobody runs it."""
+        return self.live and not self.listens and getattr(self.app, "lab", None) is not None
+
+    @property
+    def question(self) -> Asked | None:
+        """What is asked now: by the record, or by the process before and after it writes there."""
+        view = self.view
+        if view.question is not None:
+            from controller.running.commandclient import Asked
+
+            return Asked(key=view.question_key, text=view.question, choices=view.choices)
+        return self._asked
 
     # --- commands ----------------------------------------------------------------------------------------------------
 
@@ -60,7 +81,9 @@ class Commanding(Screen[None]):
         if action in _COMMANDS:
             return self.live and self.listens
         if action == "answer":
-            return self.live and self.listens and self.view.question is not None
+            return self.listens and self.question is not None
+        if action == "see_to":
+            return self.left_open
         return True
 
     def command(self, name: str, *, then: Callable[[], None] | None = None, **details: Any) -> None:
@@ -83,23 +106,25 @@ class Commanding(Screen[None]):
         self.run_worker(self._hello, thread=True, group="hello", exclusive=True)
 
     def _hello(self) -> None:
-        from controller.running.commandclient import read_announcement, send_command
+        from controller.running.commandclient import read_announcement, say_hello
 
         told = read_announcement(self.record)
         if told is not None:
             self.pid = told.pid
+        asked: Asked | None = None
         try:
-            send_command(self.record, "hello")
+            asked = say_hello(self.record)
             listens = True
         except HalfdropError:
             listens = False
-        if listens != self.listens:
-            self.app.call_from_thread(self.heard, listens)
+        if (listens, asked) != (self.listens, self._asked):
+            self.app.call_from_thread(self.heard, listens, asked)
 
-    def heard(self, listens: bool) -> None:
-        """Somebody began or ceased to take commands."""
-        self.listens = listens
+    def heard(self, listens: bool, asked: Asked | None) -> None:
+        """Somebody began or ceased to take commands, or to ask something."""
+        self.listens, self._asked = listens, asked
         self.refresh_bindings()
+        self.question_gone()
 
     def _not_done(self, text: str) -> None:
         if self._halted is not None:
@@ -157,24 +182,36 @@ class Commanding(Screen[None]):
 
     def action_answer(self) -> None:
         """Put the run's question to the person; its answer goes to the run."""
-        view = self.view
-        if view.question is None or self._question is not None:
+        asked = self.question
+        if asked is None or self._question is not None:
             return
-        from controller.ui.screens.dialogs import Choice
+        from controller.ui.screens.dialogs import Choice, Line, printable_lines
 
-        answers = [(str(number), one, f"{number}") for number, one in enumerate(view.choices, start=1)]
-        self._question = Choice("The run asks", view.question, answers)
-        self.app.push_screen(self._question, partial(self._answered, view.question_key, view.choices))
+        text = printable_lines(asked.text)
+        if asked.choices:
+            answers = [(str(number), printable_lines(one), f"{number}") for number, one in enumerate(asked.choices, 1)]
+            stacked = sum(len(one) + 5 for one in asked.choices) > _ONE_LINE
+            self._question = Choice(ASKS, text, answers, stacked=stacked)
+        else:
+            self._question = Line(ASKS, text)
+        self.app.push_screen(self._question, partial(self._answered, asked))
 
-    def _answered(self, key: str, choices: tuple[str, ...], answer: str | None) -> None:
+    def _answered(self, asked: Asked, answer: str | None) -> None:
         self._question = None
-        if answer is not None and answer.isdigit():
-            self.command("answer", key=key, text=choices[int(answer) - 1])
+        if not answer or not answer.strip():
+            return
+        text = asked.choices[int(answer) - 1] if asked.choices else answer.strip()
+        self.command("answer", key=asked.key, text=text, then=partial(self.heard, True, None))
 
     def question_gone(self) -> None:
         """Somebody else answered, or the run ended."""
-        if self._question is not None and self.view.question is None:
+        if self._question is not None and self.question is None:
             self._question.dismiss(None)
+
+    def action_see_to(self) -> None:
+        """Ask what is to become of a record without an end and without a process."""
+        app: Any = self.app
+        app.see_to(self.record)
 
     def action_dose(self) -> None:
         """Ask for a dose by hand."""

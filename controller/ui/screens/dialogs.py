@@ -11,7 +11,13 @@ from textual.containers import Horizontal, Vertical, VerticalScroll
 from textual.screen import ModalScreen
 from textual.widgets import Button, Input
 
+from controller.records.record import printable
 from controller.ui.widgets.readout import Plain
+
+
+def printable_lines(text: str) -> str:
+    """Return text of several lines, each fit for a terminal."""
+    return "\n".join(printable(line) for line in text.splitlines())
 
 
 class Choice(ModalScreen[str | None]):
@@ -22,26 +28,34 @@ class Choice(ModalScreen[str | None]):
         text: what to know for the answer.
         answers: (key on the keyboard, word, value) in order; the first has the focus.
         must_answer: Escape does not close it.
+        stacked: one answer below the other: their words are long.
     """
 
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("escape", "close", "Close", show=False),
-        Binding("left", "app.focus_previous", show=False),
-        Binding("right", "app.focus_next", show=False),
+        Binding("left,up", "app.focus_previous", show=False),
+        Binding("right,down", "app.focus_next", show=False),
     ]
 
     def __init__(
-        self, title: str, text: str, answers: Sequence[tuple[str, str, str]], *, must_answer: bool = False
+        self,
+        title: str,
+        text: str,
+        answers: Sequence[tuple[str, str, str]],
+        *,
+        must_answer: bool = False,
+        stacked: bool = False,
     ) -> None:
         super().__init__()
         self._title, self._text, self._answers, self._must_answer = title, text, list(answers), must_answer
+        self._stacked = stacked
 
     def compose(self) -> ComposeResult:
         """Question, text, a button for every answer."""
         with Vertical(classes="dialog"):
             yield Plain(self._title, classes="heading")
             yield Plain(self._text, id="text")
-            with Horizontal(classes="buttons"):
+            with Vertical(classes="buttons stacked") if self._stacked else Horizontal(classes="buttons"):
                 for key, word, value in self._answers:
                     yield Button(f"{key}  {word}", id=f"answer-{value}")
 

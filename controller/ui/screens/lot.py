@@ -20,8 +20,7 @@ from controller.labfolder import Lab
 from controller.records.record import list_records, printable
 from controller.running.launch import record_of, start_run
 from controller.ui.newrun import Prepared, Wanted, methods_of, prepare
-from controller.ui.screens.archive import printable_lines
-from controller.ui.screens.dialogs import Text
+from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.screens.setup import form_row
 from controller.ui.texts import number_of

@@ -17,8 +17,8 @@ from textual.widgets import Footer
 from controller.commands.output import amount_text, volume_text
 from controller.records.record import printable
 from controller.ui.runview import RunView
-from controller.ui.screens.archive import printable_lines, verify_for
-from controller.ui.screens.dialogs import Text
+from controller.ui.screens.archive import verify_for
+from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.screens.run import RunScreen
 from controller.ui.tail import Playback, all_entries

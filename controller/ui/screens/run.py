@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import time
 from functools import partial
 from pathlib import Path
 from typing import Any, ClassVar
@@ -11,6 +12,7 @@ from textual.binding import Binding, BindingType
 from textual.containers import Horizontal, Vertical
 from textual.widgets import Footer
 
+from controller.records.record import printable
 from controller.ui.screens.commanding import Commanding
 from controller.ui.tail import Playback, RecordTail, Source
 from controller.ui.widgets.curveplot import CurvePlot
@@ -19,13 +21,19 @@ from controller.ui.widgets.sentences import Sentences
 from controller.ui.widgets.titlebar import TitleBar
 from controller.ui.widgets.warningbar import WarningBar
 
+TYPE_CHECKING = False
+if TYPE_CHECKING:
+    from controller.running.commandclient import Asked
+
+#: ending of the file in which a run announces itself, as in controller/running/commandclient.py
+SUFFIX = ".port"
 #: time between two looks at the record, s: at most four drawings a second
 LOOK_S = 0.25
 #: the plot is painted before the whole screen is; the first look comes after that
 FIRST_LOOK_S = 0.1
 SPEEDS = (1.0, 2.0, 5.0, 10.0, 20.0, 50.0, 100.0, 200.0, 500.0)
-#: between two hellos to the run, s
-HELLO_S = 5.0
+#: between two hellos to the run, s; sooner where nothing is written: it may ask something
+HELLO_S, QUIET_HELLO_S = 5.0, 1.0
 #: between two looks for the run that comes next, s
 FOLLOW_S = 1.0
 
@@ -63,6 +71,7 @@ class RunScreen(Commanding):
     ) -> None:
         super().__init__(record)
         self._calibrations_before = calibrations_before
+        self._greeted_s, self._greeted_at_s = 0.0, -1.0
         self._source: Source = playback if playback is not None else RecordTail(record)
         self._playback = playback
         self._speed = playback.speed if playback is not None else speed
@@ -85,7 +94,7 @@ class RunScreen(Commanding):
         self.set_interval(LOOK_S, self.look)
         if self._playback is None:
             self.set_timer(2 * FIRST_LOOK_S, self._greet)
-            self.set_interval(HELLO_S, self._greet)
+            self.set_interval(QUIET_HELLO_S, self._greet_again)
             self.set_interval(FOLLOW_S, self._follow)
 
     # --- following ---------------------------------------------------------------------------------------------------
@@ -97,21 +106,31 @@ class RunScreen(Commanding):
 
     def look(self) -> None:
         """Take in what is new, and show it."""
-        over, question = self.view.over, self.view.question
+        over, question = self.view.over, self.question
         entries = self._source.poll()
         for entry in entries:
             self.view.feed(entry)
         if entries:
             self.show_view()
-        if (over, question) != (self.view.over, self.view.question):
+        if (over, question) != (self.view.over, self.question):
             self.refresh_bindings()
             self.question_gone()
         if isinstance(self._source, RecordTail) and self._source.more:
             self.call_after_refresh(self.look)
 
     def _greet(self) -> None:
-        if self.live:
-            self.say_hello()
+        self._greeted_s, self._greeted_at_s = time.monotonic(), self.view.at_s
+        self.say_hello()
+
+    def _greet_again(self) -> None:
+        if not (self.listens or self._may_be_heard()):
+            return
+        waited_s = time.monotonic() - self._greeted_s
+        if waited_s >= HELLO_S or (self.view.at_s == self._greeted_at_s and self._may_be_heard()):
+            self._greet()
+
+    def _may_be_heard(self) -> bool:
+        return self.live or self.record.with_suffix(SUFFIX).exists()
 
     def _follow(self) -> None:
         """Go to the next run of the same process, once it has begun."""
@@ -125,10 +144,11 @@ class RunScreen(Commanding):
             app: Any = self.app
             app.open_run(found, speed=self._speed, calibrations_before=self._calibrations_before)
 
-    def heard(self, listens: bool) -> None:
-        """Somebody began or ceased to take commands."""
-        super().heard(listens)
-        self.show_view()
+    def heard(self, listens: bool, asked: Asked | None) -> None:
+        """Somebody began or ceased to take commands, or to ask something."""
+        super().heard(listens, asked)
+        if self.query("#phase"):  # the screen may have been left meanwhile
+            self.show_view()
 
     def show_view(self) -> None:
         """Show the run as it is now."""
@@ -147,11 +167,11 @@ class RunScreen(Commanding):
             held = ", held" if self._playback.paused else ""
             phase = f"PLAYED AGAIN at {self._playback.speed:g} x{held}: {phase}"
         elif not view.over and not self.listens:
-            phase = "OPEN, but no process runs it: look at the bench, then close its record"
+            phase = "OPEN, and no process runs it: look at the bench, then press u"
         elif view.paused:
             phase = "PAUSED, press g to go on"
-        elif view.question is not None:
-            phase = f"ASKS, press Enter to answer: {view.question}"
+        elif self.question is not None:
+            phase = f"ASKS, press Enter to answer: {printable(self.question.text)}"
         return f"{phase} │ {view.sample_id} │ {view.method_title}"
 
     def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:

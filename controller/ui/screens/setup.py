@@ -17,8 +17,7 @@ from configs.errors import HalfdropError
 from controller.labfolder import Lab
 from controller.records.record import printable
 from controller.ui.newrun import Prepared, Wanted, begin, expectation_text, methods_of, prepare, usual_method
-from controller.ui.screens.archive import printable_lines
-from controller.ui.screens.dialogs import Text
+from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.texts import number_of
 from controller.ui.widgets.answerfield import AnswerField
