@@ -11,6 +11,8 @@ from controller.titration.actions import Command, Dose, Failed, Refill, Refused,
 
 #: a plain half-equivalence pH nearer to the pKa than this may stand for it
 LARGEST_PLAIN_BIAS = 0.02
+#: as an amount names its end point (controller/calibration/validity.py)
+EQUIVALENCE = "the equivalence point"
 _TOLD = {"note", "warning", "end-point"}
 
 
@@ -84,7 +86,8 @@ def result_lines(result: dict[str, Any]) -> list[str]:
         lines.append("no end point was found, so no amount is given")
     lines += [_half_line(half) for half in result["half_equivalence"] if half.get("pka") is not None]
     if result.get("result"):
-        lines.append(f"amount: {amount_text(result['result'])}")
+        to = " to the equivalence point" if result["result"].get("end_point") == EQUIVALENCE else ""
+        lines.append(f"amount{to}: {amount_text(result['result'])}")
     lines += _course(result)
     lines += [f"note: {note}" for note in result.get("notes") or []]
     lines += [f"warning: {warning}" for warning in result["warnings"]]

@@ -35,6 +35,8 @@ def amount_text(amount: dict[str, Any] | None) -> str:
     value, expanded, unit = amount["value"], amount.get("expanded_uncertainty"), amount["unit"]
     if amount.get("substance"):
         unit = f"{unit} {'' if amount.get('quantity') == 'titrant' else 'as '}{amount['substance']}"
+    if str(amount.get("end_point") or "").startswith("pH"):  # never to be taken for the amount to equivalence
+        unit = f"{unit}, to {amount['end_point']}"
     if not expanded:
         return f"{value:.6g} {unit}"
     places = decimals(expanded)

@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 
+from controller.curves.evaluate_set_ph import result_at_ph
 from controller.curves.identify import identity_of
 from controller.curves.pointregions import regions_of
 from controller.evaluation.curve import Array, Curve, CurveError
@@ -58,15 +59,17 @@ def evaluate_points(
     """As `evaluate_record`, for a record that is read already."""
     path = record.path
     plan = plan_from_json(record.header.get("plan"), where=str(path))
-    curve, detected = curve_of(plan, record, where=str(path)), _detected_ml(record)
+    curve = curve_of(plan, record, where=str(path))
     closing = record.closing or {}
-    evaluation = evaluate(
-        curve,
-        end_points_expected=end_points_expected or plan.end_points.expected,
-        detected_ml=detected,
-    )
-    result = evaluation.to_json()
-    _hold_against_run(result, evaluation, plan, record, curve)
+    result = _at_set_ph(plan, record, curve) if end_points_expected is None else None
+    if result is None:
+        evaluation = evaluate(
+            curve,
+            end_points_expected=end_points_expected or plan.end_points.expected,
+            detected_ml=_detected_ml(record),
+        )
+        result = evaluation.to_json()
+        _hold_against_run(result, evaluation, plan, record, curve)
     result["run"], result["seed"] = str(path), plan.seed
     result["run_outcome"] = closing.get("outcome", "open")
     result["result"] = amount_of_plan(plan, result)
@@ -78,6 +81,24 @@ def evaluate_points(
         )
     if record.closing is None:
         result["warnings"].append("the run has no closing line: what is evaluated is what was recorded")
+    return result
+
+
+def _at_set_ph(plan: RunPlan, record: Record, curve: Curve) -> dict[str, Any] | None:
+    """The volume at the plan's set pH; None where it has none."""
+    if plan.end_points.at_ph is None:
+        return None
+    used = _used(record)
+    result = result_at_ph(
+        plan,
+        curve,
+        plan.end_points.at_ph,
+        beyond_ml=_beyond_points_ml(plan, record),
+        duration_s=float(used[-1]["at_s"] or 0.0) - float(used[0]["at_s"] or 0.0),
+    )
+    own = (record.closing or {}).get("result") or {}
+    for point in result["end_points"]:
+        _keep_doubts(point, own.get("end_points") or [], result["warnings"])
     return result
 
 

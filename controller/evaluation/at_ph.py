@@ -8,12 +8,13 @@ prior for c. With points close together it does not count; with points far apart
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 
 import numpy as np
 
 from controller.evaluation.curve import Array, Curve
 from controller.evaluation.estimate import Estimate
+from controller.evaluation.result import EndPoint, Evaluation
 
 _LN10 = math.log(10.0)
 #: points so close to the set pH count, besides the two on both sides of it
@@ -55,6 +56,42 @@ class VolumeAtPh:
             standard_uncertainty_ml=self.standard_uncertainty_ml,
             points=self.points,
         )
+
+
+def evaluate_at_ph(curve: Curve, ph: float, *, common_ph_sd: float = 0.0) -> Evaluation:
+    """Evaluate a curve at a set pH instead of looking for equivalence points.
+
+    Args:
+        curve: points and what is known about them.
+        ph: where the volume counts.
+        common_ph_sd: see `volume_at_ph`.
+
+    Returns:
+        The evaluation; without points on both sides it says so in `reason` and gives no number.
+    """
+    last = float(curve.volume_ml[-1]) if len(curve.volume_ml) else 0.0
+    found = volume_at_ph(curve, ph, common_ph_sd=common_ph_sd)
+    if found is None:
+        reason = f"no end point: the points do not lie on both sides of pH {ph:.2f}"
+        return Evaluation(end_points=(), half_equivalence=(), estimates=(), warnings=(), titrant_ml=last, reason=reason)
+    potential = (
+        None if curve.potential_mv is None else float(np.interp(found.volume_ml, curve.volume_ml, curve.potential_mv))
+    )
+    point = EndPoint(
+        volume_ml=found.volume_ml,
+        standard_uncertainty_ml=found.standard_uncertainty_ml,
+        ph=ph,
+        potential_mv=potential,
+        estimator=estimator_name(ph),
+    )
+    return Evaluation(
+        end_points=(point,),
+        half_equivalence=(),
+        estimates=((found.estimate(),),),
+        warnings=(),
+        titrant_ml=last,
+        details={"at_ph": asdict(found)},
+    )
 
 
 def estimator_name(ph: float) -> str:

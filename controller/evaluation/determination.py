@@ -54,15 +54,15 @@ def _single(one: Titration, inputs: Inputs) -> _Found:
     quantities = (measured("end point volume", end_point, "mL"), *inputs.quantities(), portion)
 
     def model(v: Values) -> Array:
-        return _amount(inputs, v, "end point volume", "sample")
+        return _amount(inputs, v, "end point volume", "sample", one.ml_per_ph)
 
     return _Found(model=model, quantities=quantities, values=(_at(model, quantities),))
 
 
 def _mean(titrations: Sequence[Titration], inputs: Inputs) -> _Found:
-    names = [(f"end point volume {i}", f"sample {i}") for i in range(1, len(titrations) + 1)]
+    names = [(f"end point volume {i}", f"sample {i}", one.ml_per_ph) for i, one in enumerate(titrations, start=1)]
     quantities = inputs.quantities()
-    for (volume, portion), one in zip(names, titrations, strict=True):
+    for (volume, portion, _), one in zip(names, titrations, strict=True):
         quantities.append(constant(volume, one.volume_ml, "mL"))
         quantities.append(constant(portion, one.portion, _portion_unit(inputs)))
     exact = {q.name: q.value for q in quantities}
@@ -79,10 +79,10 @@ def _mean(titrations: Sequence[Titration], inputs: Inputs) -> _Found:
     return _Found(model=model, quantities=tuple(quantities), values=values)
 
 
-def _amount(inputs: Inputs, v: Values, volume: str, portion: str) -> Array:
+def _amount(inputs: Inputs, v: Values, volume: str, portion: str, ml_per_ph: float) -> Array:
     """Amount in the unit asked for, of one titration."""
     report, excess = inputs.report, inputs.excess
-    mmol = inputs.titrant.in_model(v) * _titrant_ml(inputs, v, volume)
+    mmol = inputs.titrant.in_model(v) * _titrant_ml(inputs, v, volume, ml_per_ph)
     if excess is not None and excess.concentration_mol_l is not None:
         mmol = v["excess volume"] * v["excess concentration"] - mmol
     millimoles = mmol * inputs.sample.factor(v) / report.equivalents
@@ -93,11 +93,14 @@ def _amount(inputs: Inputs, v: Values, volume: str, portion: str) -> Array:
     return by_volume(report.unit, millimoles / taken, v["molar mass"], float(report.equivalents))
 
 
-def _titrant_ml(inputs: Inputs, v: Values, volume: str) -> Array:
+def _titrant_ml(inputs: Inputs, v: Values, volume: str, ml_per_ph: float) -> Array:
     """Titrant used, or with the excess of a blank, titrant not used."""
-    delivered = inputs.burette.delivered_ml(v[volume], v)
+    end_ml = v[volume] if inputs.end_point_ph is None else v[volume] + ml_per_ph * v[inputs.end_point_ph.name]
+    delivered = inputs.burette.delivered_ml(end_ml, v)
     if inputs.blank is not None:
         delivered = delivered - v["blank"]
+    if inputs.blank_ph is not None:
+        delivered = delivered - inputs.blank_ml_per_ph * v[inputs.blank_ph.name]
     if inputs.excess is not None and inputs.excess.concentration_mol_l is None:
         return inputs.burette.delivered_ml(v["excess volume"], v) - delivered
     return delivered
@@ -115,7 +118,7 @@ def _at(model: Model, quantities: Sequence[Quantity]) -> float:
     return float(model(_points({q.name: q.value for q in quantities}, 1))[0])
 
 
-def _own(inputs: Inputs, exact: Mapping[str, float], one: Titration, name: tuple[str, str]) -> float:
+def _own(inputs: Inputs, exact: Mapping[str, float], one: Titration, name: tuple[str, str, float]) -> float:
     """Standard uncertainty that the end point of one titration gives its amount."""
     half = max(1e-6, one.standard_uncertainty_ml)
     values = _points(exact, 2)

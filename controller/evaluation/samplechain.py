@@ -21,11 +21,15 @@ WATER_EXPANSION_PER_K = 2.1e-4
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Titration:
-    """One titration: end point with its own standard uncertainty (without the burette's), and the sample taken."""
+    """One titration: end point with its own standard uncertainty (without the burette's), and the sample taken.
+
+    `ml_per_ph`: what an error of the probe's pH moves the end point by, mL; 0 for an equivalence point.
+    """
 
     volume_ml: float
     standard_uncertainty_ml: float
     portion: float
+    ml_per_ph: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -151,7 +155,11 @@ class ExcessAdded:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Inputs:
-    """Everything but the titrations themselves; `blank` is titrant used without sample, mL, named "blank"."""
+    """Everything but the titrations themselves; `blank` is titrant used without sample, mL, named "blank".
+
+    `end_point_ph` and `blank_ph`: errors (value 0) of the pH at which sample and blank end, named "end point pH" and
+    "blank end point pH", shared where one calibration of the probe gave both; `blank_ml_per_ph` as in Titration.
+    """
 
     titrant: CarriedResult
     burette: Burette
@@ -159,6 +167,9 @@ class Inputs:
     report: Reported
     blank: Quantity | None = None
     excess: ExcessAdded | None = None
+    end_point_ph: Quantity | None = None
+    blank_ph: Quantity | None = None
+    blank_ml_per_ph: float = 0.0
 
     def quantities(self) -> list[Quantity]:
         """Return the inputs of the budget that all titrations share."""
@@ -173,8 +184,7 @@ class Inputs:
                 shared_id=f"{self.report.substance} molar mass",
             )
         )
-        if self.blank is not None:
-            found.append(self.blank)
+        found += [one for one in (self.blank, self.end_point_ph, self.blank_ph) if one is not None]
         if self.excess is not None:
             found.append(measured("excess volume", self.excess.volume_ml, "mL"))
             if self.excess.concentration_mol_l is not None:

@@ -19,6 +19,7 @@ from simulators.solution import titration_curve
 _START_LIMIT_PH = 1.5
 #: between these shares of the predicted volume pH may be this far from the expected one
 _MIDDLE_FROM, _MIDDLE_TO, _MIDDLE_LIMIT_PH = 0.4, 0.6, 1.0
+_JUMP_SHARE = 0.1
 #: the predicted end point may lie between these shares of the expected volume
 _LEAST_SHARE, _MOST_SHARE = 0.5, 1.7
 #: after this share of the expected volume pH must have moved by this much, and in the titrant's direction
@@ -41,6 +42,7 @@ class DepartureWatch:
     expected_ml: float = field(init=False, default=0.0)
     _shares: np.ndarray[tuple[int], np.dtype[np.float64]] = field(init=False)
     _expected_ph: np.ndarray[tuple[int], np.dtype[np.float64]] = field(init=False)
+    _end_share: float = 1.0  # of the expected volume, at the end point
     _first_ph: float | None = None
     _predicted_ml: float | None = None
     _told: set[str] = field(default_factory=set)
@@ -63,6 +65,8 @@ class DepartureWatch:
         volumes = (self._shares * self.expected_ml).tolist()
         curve = titration_curve(vessel.sample, vessel.titrant, plan.sample.initial_volume_ml, volumes, vessel.medium)
         self._expected_ph = np.asarray(curve)
+        if plan.end_points.at_ph is not None:
+            self._end_share = _share_at(self._shares, self._expected_ph, plan.end_points.at_ph)
 
     def saw(self, item: Action | Observation) -> str | None:
         """Take in an entry; return a departure in words, None where there is none or it was told."""
@@ -125,10 +129,13 @@ class DepartureWatch:
     def _middle(self, volume_ml: float, ph: float) -> str | None:
         if self._predicted_ml is None or self._predicted_ml <= 0.0:
             return None
-        share = volume_ml / self._predicted_ml
+        share = volume_ml * self._end_share / self._predicted_ml
         if self._last() != 1 or not _MIDDLE_FROM <= share <= _MIDDLE_TO:
             return None
         expected = float(np.interp(share, self._shares, self._expected_ph))
+        if self.plan.end_points.at_ph is not None:  # an earlier jump may lie there, and its place is not known so well
+            near = np.interp([share - _JUMP_SHARE, share + _JUMP_SHARE], self._shares, self._expected_ph)
+            expected = float(np.clip(ph, near.min(), near.max()))
         if abs(ph - expected) <= _MIDDLE_LIMIT_PH:
             return None
         analyte = self.plan.chemistry.analyte
@@ -138,10 +145,22 @@ class DepartureWatch:
         )
 
     def _amount(self, predicted_ml: float) -> str | None:
-        share = predicted_ml / self.expected_ml
+        expected_ml = self.expected_ml * self._end_share
+        share = predicted_ml / expected_ml
         if _LEAST_SHARE <= share <= _MOST_SHARE:
             return None
         return (
-            f"the end point is predicted at {predicted_ml:.2f} mL, expected was about {self.expected_ml:.2f} mL: "
+            f"the end point is predicted at {predicted_ml:.2f} mL, expected was about {expected_ml:.2f} mL: "
             "another amount of sample, or a titrant of another strength"
         )
+
+
+def _share_at(
+    shares: np.ndarray[tuple[int], np.dtype[np.float64]], ph: np.ndarray[tuple[int], np.dtype[np.float64]], at_ph: float
+) -> float:
+    """The share of the expected volume at which the expected curve crosses a pH; 1 where it does not."""
+    rising = ph if ph[-1] > ph[0] else -ph
+    wanted = at_ph if ph[-1] > ph[0] else -at_ph
+    if not rising[0] < wanted < rising[-1]:
+        return 1.0
+    return float(np.interp(wanted, rising, shares))

@@ -11,25 +11,23 @@ from controller.calibration.titrant import Standardisation, standardise
 from controller.evaluation.amount import TITRANT_UNITS, AmountError
 from controller.evaluation.budget_table import budget_to_json
 from controller.evaluation.determination import Determination, determine
-from controller.evaluation.quantity import Quantity
-from controller.evaluation.samplechain import Inputs, Reported, Titration
+from controller.evaluation.samplechain import Inputs, Reported
 from controller.evaluation.statistics import grubbs, summarise
 from controller.planning.amountinputs import (
     burette_of,
     end_point_of,
     equipment_of,
     excess_of,
-    freedom_of,
     molar_mass_of,
-    portion_of,
     sample_of,
     standard_of,
     titrant_of,
 )
+from controller.planning.endpointinputs import blank_of_run, end_point_named, end_point_ph_of, titration_of
 from controller.planning.ph_cover import add_ph_remarks
 from controller.titration.plan import ReportAs, RunPlan
+from controller.titration.points import calibration_ph_sd
 from controller.titration.traceability import Traceability
-from simulators.constants import ideal_slope_mv
 
 _FEWEST_FOR_GRUBBS = 3
 
@@ -54,7 +52,7 @@ def amount_of_plan(plan: RunPlan, result: dict[str, Any]) -> dict[str, Any] | No
         return _titrant(plan, report, result) if plan.sample.mass_g is not None else None
     found, warnings = determination_of([plan], [result])
     result.setdefault("warnings", []).extend(w for w in warnings if w not in result.get("warnings", []))
-    what = {"quantity": report.quantity, "substance": report.substance}
+    what = {"quantity": report.quantity, "substance": report.substance, "end_point": end_point_named(plan)}
     return {**amount_to_json(found, seed=plan.seed or 1), **what}
 
 
@@ -66,15 +64,9 @@ def add_ph_uncertainty(plan: RunPlan, result: dict[str, Any]) -> None:
     calibration = plan.probe.calibration
     if calibration is None:
         return
-    per_mv = 1.0 / (calibration.slope_fraction * ideal_slope_mv(plan.chemistry.temperature_c))
     for point in result["end_points"]:
-        if point.get("ph") is None:
-            continue
-        per_slope = -(point["ph"] - calibration.isopotential_ph) / calibration.slope_fraction
-        variance = (per_mv * calibration.offset_standard_uncertainty_mv) ** 2
-        variance += (per_slope * calibration.slope_fraction_standard_uncertainty) ** 2
-        variance += 2.0 * per_mv * per_slope * calibration.slope_offset_covariance_mv
-        point["ph_standard_uncertainty"] = math.sqrt(max(0.0, variance))
+        if point.get("ph") is not None and "ph_standard_uncertainty" not in point:
+            point["ph_standard_uncertainty"] = calibration_ph_sd(calibration, point["ph"], plan.chemistry.temperature_c)
 
 
 def amount_of_replicates(plans: Sequence[RunPlan], results: Sequence[dict[str, Any]]) -> dict[str, Any]:
@@ -92,7 +84,12 @@ def amount_of_replicates(plans: Sequence[RunPlan], results: Sequence[dict[str, A
     amount = amount_to_json(found, seed=plans[0].seed or 1)
     return {
         "sample_id": plans[0].sample.sample_id,
-        "result": {**amount, "quantity": report.quantity, "substance": report.substance},
+        "result": {
+            **amount,
+            "quantity": report.quantity,
+            "substance": report.substance,
+            "end_point": end_point_named(plans[0]),
+        },
         **statistics_to_json(found.values),
         "warnings": list(warnings),
     }
@@ -149,23 +146,14 @@ def determination_of(
     report, trace = plan.report_as, plan.traceability or Traceability()
     if report is None:
         raise AmountError("the method reports no amount", where=plan.method_name, remedy="Set report_as")
-    points = [end_point_of(one, report.end_point) for one in results]
+    titrations = [titration_of(one, result, report.end_point) for one, result in zip(plans, results, strict=True)]
+    ph = end_point_ph_of(plan, results, report.end_point)
     blank = None
     if trace.blank is not None:
-        held = trace.blank
-        blank = Quantity(
-            name="blank",
-            value=held.volume_ml,
-            standard_uncertainty=held.standard_uncertainty_ml,
-            unit="mL",
-            degrees_of_freedom=freedom_of(held.degrees_of_freedom),
-        )
-    excess, warnings = excess_of(plan, trace, points)
+        blank = blank_of_run(trace.blank, plan, results, report.end_point, shares_ph=ph is not None)
+    excess, warnings = excess_of(plan, trace, [(one.volume_ml, one.standard_uncertainty_ml) for one in titrations])
     found = determine(
-        [
-            Titration(volume_ml=volume, standard_uncertainty_ml=u, portion=portion_of(one))
-            for (volume, u), one in zip(points, plans, strict=True)
-        ],
+        titrations,
         Inputs(
             titrant=titrant_of(plan),
             burette=burette_of(plan),
@@ -176,11 +164,14 @@ def determination_of(
                 equivalents=report.equivalents,
                 unit=report.unit,
             ),
-            blank=blank,
+            blank=None if blank is None else blank.volume,
             excess=excess,
+            end_point_ph=ph,
+            blank_ph=None if blank is None else blank.ph,
+            blank_ml_per_ph=0.0 if blank is None else blank.ml_per_ph,
         ),
     )
-    return found, warnings
+    return found, (*warnings, *(blank.warnings if blank is not None else ()))
 
 
 def standardisation_of(

@@ -153,7 +153,9 @@ def _headline(amount: dict[str, Any] | None) -> dict[str, str] | None:
         "value": number(amount.get("value"), places),
         "expanded": number(expanded, places) if expanded else "",
         "unit": str(amount.get("unit")),
-        "of": f"{word}{amount['substance']}" if amount.get("substance") else "",
+        "of": ", to ".join(filter(None, (f"{word}{amount['substance']}", str(amount.get("end_point") or ""))))
+        if amount.get("substance")
+        else "",
         "k": coverage_factor(amount),
     }
 

@@ -259,8 +259,9 @@ class _Run:
                 f"the points do not fit the constants of {analyte.name}: going on without them; check the substance"
             )
         number = len(self.watch.found) + 1
-        if sound is not None and len(self.watch.found) < self.plan.end_points.expected:
-            yield from self.world.say(self._forecast_report(sound, number))
+        report = self._forecast_report(sound, number)
+        if report is not None:
+            yield from self.world.say(report)
         elif self.forecast.jumped:
             yield from self.world.say(
                 Report(what="note", text="the prediction jumped; dosing by the local slope until it holds")
@@ -278,7 +279,9 @@ class _Run:
             return
         self.forecast.update(self.points)
 
-    def _forecast_report(self, sound: InverseFit, number: int) -> Report:
+    def _forecast_report(self, sound: InverseFit | None, number: int) -> Report | None:
+        if sound is None or number > self.plan.end_points.expected:
+            return None
         if self.target is not None:
             return self.target.forecast_report(self.points, sound)
         return Report(

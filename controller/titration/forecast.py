@@ -20,6 +20,8 @@ DOUBTFUL_CHI_SQUARE = 5.0
 BETTER_SHARE = 0.3
 FEWEST_UNKNOWN = 5
 JUMP_PRECISIONS = 20.0  # of the pump
+#: the model of one equivalence point holds so far beyond the middle of its jump
+BEYOND_JUMP_PH = 0.5
 _POINT_PRECISIONS = 0.7
 _USUAL_STRENGTH_MOL_L = 0.01
 
@@ -36,7 +38,7 @@ class Forecast:
             debye_huckel_a=plan.chemistry.debye_huckel_a,
             acid_titrant=plan.titrant.acid,
             slope_mv=scale.slope_mv,
-            ladder=self._ladder(0),
+            ladder=self._ladder(first_ladder(self._ladders, plan)),
             volume_sd_ml=max(_POINT_PRECISIONS * pump_precision_ml(plan), plan.pump.dose_sd_ml),
         )
         self._jump_ml = JUMP_PRECISIONS * pump_precision_ml(plan)
@@ -101,6 +103,19 @@ class Forecast:
         sd = np.array([p.volume_sd_ml for p in points])
         sd_e = np.array([p.potential_sd_mv for p in points])
         return fit_inverse(volume, ph, setting, volume_sd_ml=sd, signal_sd_mv=sd_e)
+
+
+def first_ladder(found: Sequence[ProtonLadder], plan: RunPlan) -> int:
+    """Index of the steps that the model begins with: the first, or those about the pH that is to be reached."""
+    at_ph = plan.end_points.at_ph
+    if at_ph is None:
+        return 0
+    rising_ph = plan.chemistry.pkw - at_ph if plan.titrant.acid else at_ph
+    for index, ladder in enumerate(found):
+        last = ladder.below[0] if ladder.below else 0.0
+        if ladder.above is None or rising_ph <= 0.5 * (last + ladder.above) + BEYOND_JUMP_PH:
+            return index
+    return max(len(found) - 1, 0)
 
 
 def plan_ladders(plan: RunPlan) -> tuple[ProtonLadder, ...]:

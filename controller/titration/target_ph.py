@@ -188,13 +188,14 @@ class TargetPh:
         digits = 3 if sd >= 0.0095 else 4
         return f"pH {self.ph:.2f} predicted at {ahead.predicted_ml:.{digits}f} +/- {sd:.{digits}f} mL"
 
-    def forecast_report(self, points: Sequence[Point], sound: InverseFit) -> Report:
-        """The report of where the set pH is predicted."""
+    def forecast_report(self, points: Sequence[Point], sound: InverseFit) -> Report | None:
+        """The report of where the set pH is predicted; None where the model has no volume there."""
         ahead = self.ahead(points, sound)
-        volume_ml = ahead.least_ml if ahead.predicted_ml is None else ahead.predicted_ml
+        if ahead.predicted_ml is None:
+            return None
         return Report(
             what="forecast",
-            volume_ml=round(volume_ml, 6),
+            volume_ml=round(ahead.predicted_ml, 6),
             standard_uncertainty_ml=round(ahead.predicted_sd_ml, 6),
             end_point=1,
         )

@@ -52,14 +52,32 @@ class BuretteInForce:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class BlankVolume:
+    """Titrant that a blank has taken up to a pH, mL."""
+
+    ph: float
+    volume_ml: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class BlankInForce:
-    """Titrant that the procedure uses without sample."""
+    """Titrant that the procedure uses without sample.
+
+    `end_point_ph`: the pH that it was titrated to (None: its equivalence point); `ml_per_ph` is dV/dpH there, with the
+    pH uncertain by `ph_standard_uncertainty` through the calibration `probe_calibration`, which is not in
+    `standard_uncertainty_ml`. `course`: its volumes at other pH, for samples that end there; empty: not known.
+    """
 
     lot_id: str
     volume_ml: float
     standard_uncertainty_ml: float
     degrees_of_freedom: float | None
     record_sha256: str
+    end_point_ph: float | None = None
+    ml_per_ph: float = 0.0
+    ph_standard_uncertainty: float = 0.0
+    probe_calibration: str | None = None
+    course: tuple[BlankVolume, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
