@@ -121,8 +121,8 @@ def _document(found: Compared) -> dict[str, Any]:
             }
             for one in fitted.parameters()
         ],
-        "fit_sound": fitted.model.sound,
-        "chi_square": fitted.model.chi_square,
+        "fit_sound": fitted.sound,
+        "chi_square": fitted.fit.chi_square,
         "own": found.own.to_json(),
         "other": found.other.to_json(),
     }
@@ -135,7 +135,7 @@ def _lines(found: Compared) -> list[str]:
         places = decimals(one.standard_uncertainty)
         value, uncertainty = f"{one.value:.{places}f}", f"{one.standard_uncertainty:.{places}f}"
         lines.append(f"  {one.name}: {value} ({uncertainty}) {one.unit}".rstrip())
-    if not fitted.model.sound:
+    if not fitted.sound:
         lines.append("warning: the fit does not describe the points well; take what follows with care")
     lines += [
         f"{found.own.runs} simulated runs of each method on this bench: median (range)",

@@ -1,40 +1,38 @@
 """A simulated bench fitted to a logged run: what is in the beaker, how the probe lags and reads, how noisy it is.
 
-The beaker comes from the charge-balance fit of the settled points, the lag from the readings between them, the noise
-from the readings at rest before the first dose. Every parameter has a standard uncertainty.
+Beaker, probe and lag come from one fit to every reading (or, of a table, to its points), the noise from the readings at
+rest before the first dose. Every parameter has a standard uncertainty.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from configs.errors import HalfdropError
 from controller.evaluation.curve import Curve
-from controller.evaluation.modelfit import ModelFit, fit_charge_balance
+from controller.evaluation.modelfit import fit_charge_balance
+from controller.foresight.beakerfit import LARGEST_SOUND_CHI_SQUARE, STRONG_SHARE, JointFit, fit_jointly
+from controller.foresight.beakermodel import BeakerModel, equivalents_of, titrant_of
 from controller.foresight.expectation import (
     USUAL_CALIBRATION,
     USUAL_NOISE_MV,
-    USUAL_RESPONSE,
     electrode_truth,
+    medium_of_plan,
     syringe_truth,
 )
-from controller.foresight.lagfit import FittedLag, Transients, fit_lag
+from controller.foresight.trace import Transients, trace_of_points, trace_of_readings
 from controller.titration.noise import READINGS, measure_noise
-from controller.titration.plan import ProbeCalibration, ProbeResponse, RunPlan
+from controller.titration.plan import ProbeCalibration, RunPlan
 from simulators.beaker import BeakerTruth
 from simulators.bench import VirtualBench, WorldTruth
-from simulators.constants import ideal_slope_mv
 from simulators.lag import LagConstants
-from simulators.solution import titration_curve
-from simulators.solution_mixture import Medium, Mixture, StrongIon, WeakComponent
 
-#: pH about which the fit turns the probe's slope
-_PIVOT_PH = 7.0
-_CURVE_POINTS = 1500
+#: a draw is taken no further out than this, in standard uncertainties
+_FURTHEST = 2.5
 
 
 class FitRefusedError(HalfdropError):
@@ -58,139 +56,147 @@ class FittedBench:
     """What a log says of beaker, probe and noise.
 
     Attributes:
-        model: the charge-balance fit; volumes mL, concentrations mol/L in the vessel at the start.
-        response: the lag, with what of it was fitted.
-        calibration: as the probe truly read in that run.
+        model: what was fitted.
+        fit: its parameters with their covariance.
         noise_mv: of one reading.
         lag_fitted: False where the log holds no readings (a table of points): the plan's, or a usual one.
         noise_fitted: as for the lag.
     """
 
-    model: ModelFit
-    plan: RunPlan
-    lag: FittedLag
-    calibration: ProbeCalibration
+    model: BeakerModel
+    fit: JointFit
     noise_mv: float
     lag_fitted: bool
     noise_fitted: bool
 
     @property
+    def plan(self) -> RunPlan:
+        """The plan of the logged run."""
+        return self.model.plan
+
+    @property
+    def sound(self) -> bool:
+        """Does the fit describe the log?"""
+        return self.fit.chi_square <= LARGEST_SOUND_CHI_SQUARE
+
+    @property
+    def pka(self) -> tuple[float, ...]:
+        """Every pKa as fitted."""
+        return tuple(float(one) for one in self.fit.values[self.fit.layout.pka])
+
+    @property
+    def amount_mol_l(self) -> float:
+        """Analyte in the vessel before the first dose; 0 where it is nothing but strong ions."""
+        return float(self.fit.values[0]) * self.model.scale_mol_l if self.fit.layout.weak else 0.0
+
+    @property
+    def lag(self) -> LagConstants:
+        """The lag as fitted."""
+        return self.model.lag(self.fit.values)
+
+    @property
+    def calibration(self) -> ProbeCalibration:
+        """The probe as it truly read in that run."""
+        known, place = self.plan.probe.calibration or USUAL_CALIBRATION, self.fit.layout.offset
+        return ProbeCalibration(
+            slope_fraction=float(self.fit.values[place + 1]),
+            isopotential_ph=known.isopotential_ph,
+            isopotential_mv=float(self.fit.values[place]),
+            slope_fraction_standard_uncertainty=self._sd(place + 1),
+            offset_standard_uncertainty_mv=self._sd(place),
+        )
+
+    @property
     def equivalence_ml(self) -> tuple[float, float]:
-        """Volume of the last expected equivalence point and its standard uncertainty, mL."""
-        volumes = [
-            pair for pair in zip(self.model.equivalence_ml, self.model.equivalence_sd_ml, strict=True) if pair[0] > 0
-        ]
-        return volumes[-1] if volumes else (math.nan, math.nan)
+        """Volume of the last equivalence point and its standard uncertainty, mL."""
+        analyte, titrant = self.plan.chemistry.analyte, self.plan.titrant
+        assert analyte is not None
+        per_scale = self.model.scale_mol_l * self.plan.sample.initial_volume_ml / titrant.concentration_mol_l
+        gradient = np.zeros(len(self.fit.values))
+        gradient[1] = per_scale if titrant.acid else -per_scale
+        if self.fit.layout.weak:
+            gradient[0] = per_scale * equivalents_of(self.plan)
+        volume_ml = float(gradient @ self.fit.values)
+        spread_ml = math.sqrt(float(gradient @ self.fit.covariance @ gradient))
+        return volume_ml, spread_ml
 
     def parameters(self) -> list[Parameter]:
         """Return every fitted number."""
-        model, lag = self.model, self.lag
+        layout, scale = self.fit.layout, 1000.0 * self.model.scale_mol_l
         volume_ml, sd_ml = self.equivalence_ml
         per_ml = 1000.0 * self.plan.titrant.concentration_mol_l / self.plan.sample.initial_volume_ml
-        # the balance is linear in the amount: it is the distance of no proton lost and all protons lost
-        none_sd, all_sd = model.equivalence_sd_ml[0], model.equivalence_sd_ml[-1]
         found = [
-            Parameter(name="last equivalence volume", value=volume_ml, standard_uncertainty=sd_ml, unit="mL"),
-            Parameter(
-                name="titratable, in the vessel",
-                value=volume_ml * per_ml,
-                standard_uncertainty=sd_ml * per_ml,
-                unit="mmol/L of charge",
-            ),
+            _parameter("last equivalence volume", volume_ml, sd_ml, "mL"),
+            _parameter("titratable, in the vessel", volume_ml * per_ml, sd_ml * per_ml, "mmol/L of charge"),
         ]
-        if model.pka:
+        if layout.weak:
             found.append(
-                Parameter(
-                    name="analyte, in the vessel",
-                    value=1000.0 * model.amount_mol_l,
-                    standard_uncertainty=math.hypot(none_sd, all_sd) * per_ml / len(model.pka),
-                    unit="mmol/L",
-                )
+                _parameter("analyte, in the vessel", 1000.0 * self.amount_mol_l, scale * self._sd(0), "mmol/L")
             )
+        places = range(layout.pka.start, layout.pka.stop)
         found += [
-            Parameter(name=f"pKa {place}", value=pka, standard_uncertainty=sd, unit="")
-            for place, (pka, sd) in enumerate(zip(model.pka, model.pka_sd, strict=True), start=1)
+            _parameter(f"pKa {number}", float(self.fit.values[place]), self._sd(place), "")
+            for number, place in enumerate(places, start=1)
         ]
-        calibration = self.calibration
+        name = "other strong ions" if layout.weak else "strong ions"
+        found.append(_parameter(name, scale * float(self.fit.values[1]), scale * self._sd(1), "mmol/L"))
+        probe = layout.offset
         found += [
-            Parameter(
-                name="free strong ions",
-                value=1000.0 * model.strong_ion_mol_l,
-                standard_uncertainty=none_sd * per_ml,
-                unit="mmol/L",
-            ),
-            Parameter(
-                name="probe slope",
-                value=100.0 * calibration.slope_fraction,
-                standard_uncertainty=100.0 * calibration.slope_fraction_standard_uncertainty,
-                unit="%",
-            ),
-            Parameter(
-                name="probe offset",
-                value=calibration.isopotential_mv,
-                standard_uncertainty=calibration.offset_standard_uncertainty_mv,
-                unit="mV",
-            ),
+            _parameter("probe slope", 100.0 * float(self.fit.values[probe + 1]), 100.0 * self._sd(probe + 1), "%"),
+            _parameter("probe offset", float(self.fit.values[probe]), self._sd(probe), "mV"),
         ]
         if self.lag_fitted:
-            found += [
-                Parameter(name="mixing", value=lag.bulk_s, standard_uncertainty=lag.bulk_s * lag.bulk_sd, unit="s"),
-                Parameter(name="film", value=lag.film_s, standard_uncertainty=lag.film_s * lag.film_sd, unit="s"),
-            ]
+            lag, place = self.lag, layout.lag.start
+            found.append(_parameter("probe drift", float(self.fit.values[probe + 2]), self._sd(probe + 2), "mV/min"))
+            found.append(_parameter("mixing", lag.bulk_s, lag.bulk_s * self._sd(place), "s"))
+            found.append(_parameter("film", lag.film_s, lag.film_s * self._sd(place + 1), "s"))
+            found.append(_parameter("slow layer", lag.slow_s, lag.slow_s * self._sd(place + 2), "s"))
+            share = 100.0 * lag.slow_share
+            found.append(_parameter("slow share", share, share * self._sd(place + 3), "%"))
         if self.noise_fitted:
             uncertainty = self.noise_mv / math.sqrt(2.0 * (READINGS - 1))
-            found.append(Parameter(name="noise", value=self.noise_mv, standard_uncertainty=uncertainty, unit="mV"))
+            found.append(_parameter("noise", self.noise_mv, uncertainty, "mV"))
         return found
 
     def draw(self, seed: int) -> VirtualBench:
-        """Return a bench as the fit has it, within the fit's uncertainties; one seed, one bench."""
+        """Return a bench as the fit has it, drawn within the fit's uncertainties; one seed, one bench."""
         draws = np.random.default_rng([seed, 21])
-        off = [float(np.clip(value, -2.5, 2.5)) for value in draws.normal(size=4 + len(self.model.pka))]
-        plan, lag = self.plan, self.lag
-        response = plan.probe.response or USUAL_RESPONSE
-        share = response.slow_share * math.exp(response.share_relative_uncertainty * off[2])
+        sizes, ways = np.linalg.eigh(self.fit.covariance)
+        off = np.clip(draws.normal(size=len(sizes)), -_FURTHEST, _FURTHEST)
+        values = self.model.within(self.fit.values + ways @ (np.sqrt(np.maximum(sizes, 0.0)) * off))
+        plan, probe = self.plan, self.fit.layout.offset
+        known = plan.probe.calibration or USUAL_CALIBRATION
+        calibration = ProbeCalibration(
+            slope_fraction=float(values[probe + 1]),
+            isopotential_ph=known.isopotential_ph,
+            isopotential_mv=float(values[probe]),
+            slope_fraction_standard_uncertainty=0.0,
+            offset_standard_uncertainty_mv=0.0,
+        )
         truth = WorldTruth(
             beaker=BeakerTruth(
                 initial_volume_ml=plan.sample.initial_volume_ml,
                 temperature_c=plan.chemistry.temperature_c,
-                lag=LagConstants(
-                    bulk_s=lag.bulk_s * math.exp(lag.bulk_sd * off[0]),
-                    film_s=lag.film_s * math.exp(lag.film_sd * off[1]),
-                    slow_s=response.slow_s,
-                    slow_share=min(share, 0.5),
-                    dead_time_s=response.dead_time_s,
-                ),
+                lag=self.model.lag(values),
             ),
-            electrode=electrode_truth(plan, self.calibration, noise_mv=self.noise_mv),
+            electrode=electrode_truth(plan, calibration, noise_mv=self.noise_mv),
             syringe=syringe_truth(plan, gain_error=0.0),
         )
-        sample = sample_of(self.model, self.plan)
         return VirtualBench(
-            truth, sample=sample, titrant=titrant_of(plan), seed=seed, medium=medium_of(plan), stirred=True
+            truth,
+            sample=self.model.sample(values),
+            titrant=titrant_of(plan),
+            seed=seed,
+            medium=medium_of_plan(plan),
+            stirred=True,
         )
 
-
-def sample_of(model: ModelFit, plan: RunPlan) -> Mixture:
-    """Return the fitted liquid in the vessel."""
-    analyte, strong = plan.chemistry.analyte, model.strong_ion_mol_l
-    ions = (StrongIon(charge=1 if strong > 0 else -1, concentration_mol_l=abs(strong)),) if strong else ()
-    if analyte is None or not model.pka:
-        return Mixture(ions=ions)
-    pka = tuple(sorted(model.pka))
-    weak = WeakComponent(pka=pka, charge=analyte.charge, concentration_mol_l=max(model.amount_mol_l, 0.0))
-    return Mixture(weak=(weak,), ions=ions)
+    def _sd(self, place: int) -> float:
+        return math.sqrt(float(self.fit.covariance[place, place]))
 
 
-def titrant_of(plan: RunPlan) -> Mixture:
-    """Return the titrant as its label says."""
-    charge = -1 if plan.titrant.acid else 1
-    return Mixture(ions=(StrongIon(charge=charge, concentration_mol_l=plan.titrant.concentration_mol_l),))
-
-
-def medium_of(plan: RunPlan) -> Medium:
-    """Return the plan's constants of the solution."""
-    chemistry = plan.chemistry
-    return Medium(temperature_c=chemistry.temperature_c, pkw=chemistry.pkw, debye_huckel_a=chemistry.debye_huckel_a)
+def _parameter(name: str, value: float, standard_uncertainty: float, unit: str) -> Parameter:
+    return Parameter(name=name, value=value, standard_uncertainty=standard_uncertainty, unit=unit)
 
 
 def fit_bench(
@@ -200,7 +206,7 @@ def fit_bench(
 
     Args:
         plan: of the logged run (or one that says the same of sample, titrant and probe).
-        curve: the settled points.
+        curve: the settled points; they tell where the fit starts, and are what is fitted where `transients` is None.
         rest_mv: readings before the first dose; empty: not known.
         transients: dose log and readings; None: not known.
 
@@ -213,57 +219,23 @@ def fit_bench(
             where=f"method {plan.method_name}: analyte",
             remedy="Use a record of a method with analyte.substance",
         )
-    model = fit_charge_balance(curve)
-    if model is None or (model.pka and model.amount_mol_l <= 0.0):
+    begun = fit_charge_balance(curve)
+    equivalence_ml = max(begun.equivalence_ml) if begun is not None else 0.0
+    known = transients is not None and bool(transients.readings) and bool(transients.doses)
+    noise_mv = measure_noise(rest_mv, plan.probe.resolution_mv).sd_mv if len(rest_mv) >= 4 else USUAL_NOISE_MV
+    fit = None
+    if begun is not None and equivalence_ml > 0.0 and not (begun.pka and begun.amount_mol_l <= 0.0):
+        model = BeakerModel.of(plan, equivalence_ml, strong_share=STRONG_SHARE)
+        if known and transients is not None:
+            trace = trace_of_readings(transients, plan.pump, noise_mv=noise_mv)
+        else:
+            calibration = plan.probe.calibration or USUAL_CALIBRATION
+            trace = trace_of_points(curve, calibration, temperature_c=plan.chemistry.temperature_c)
+        fit = fit_jointly(model, trace)
+    if fit is None:
         raise FitRefusedError(
             f"{len(curve.volume_ml)} points allow no fit of the beaker",
             where=f"method {plan.method_name}",
             remedy="Use a whole run of a calibrated probe, through its end point",
         )
-    calibration = _calibration(plan, model)
-    noise_mv = measure_noise(rest_mv, plan.probe.resolution_mv).sd_mv if len(rest_mv) >= 4 else USUAL_NOISE_MV
-    fitted = FittedBench(
-        model=model,
-        plan=plan,
-        lag=FittedLag.of(plan.probe.response or USUAL_RESPONSE),
-        calibration=calibration,
-        noise_mv=noise_mv,
-        lag_fitted=False,
-        noise_fitted=len(rest_mv) >= 4,
-    )
-    if transients is None or not transients.readings:
-        return fitted
-    response: ProbeResponse = plan.probe.response or USUAL_RESPONSE
-    volumes = np.linspace(0.0, 1.3 * max(float(curve.volume_ml[-1]), transients.delivered_ml), _CURVE_POINTS)
-    volumes = np.unique(np.concatenate([volumes, _dense(model, volumes[-1])]))
-    ph = titration_curve(
-        sample_of(model, plan), titrant_of(plan), plan.sample.initial_volume_ml, volumes.tolist(), medium_of(plan)
-    )
-    slope = calibration.slope_fraction * ideal_slope_mv(plan.chemistry.temperature_c)
-    potential = calibration.isopotential_mv - slope * (np.asarray(ph) - calibration.isopotential_ph)
-    lag = fit_lag(transients, response, volumes, potential, noise_mv=noise_mv)
-    return fitted if lag is None else replace(fitted, lag=lag, lag_fitted=True)
-
-
-def _dense(model: ModelFit, last_ml: float) -> np.ndarray[tuple[int], np.dtype[np.float64]]:
-    """Volumes close about every equivalence point, where the curve bends most."""
-    offsets = np.concatenate([-np.geomspace(1e-5, 0.05, 60)[::-1], [0.0], np.geomspace(1e-5, 0.05, 60)])
-    places = [volume * (1.0 + offsets) for volume in model.equivalence_ml if 0.0 < volume < last_ml]
-    return np.concatenate(places) if places else np.zeros(0)
-
-
-def _calibration(plan: RunPlan, model: ModelFit) -> ProbeCalibration:
-    """Return the calibration with which the fit's pH gives the measured potentials.
-
-    The fit found pH measured = pivot + (pH - pivot)(1 + slope error) + offset.
-    """
-    known = plan.probe.calibration or USUAL_CALIBRATION
-    slope_mv = known.slope_fraction * ideal_slope_mv(plan.chemistry.temperature_c)
-    at_iso = _PIVOT_PH + (known.isopotential_ph - _PIVOT_PH) * (1.0 + model.slope_error) + model.offset_ph
-    return ProbeCalibration(
-        slope_fraction=known.slope_fraction * (1.0 + model.slope_error),
-        isopotential_ph=known.isopotential_ph,
-        isopotential_mv=known.isopotential_mv - slope_mv * (at_iso - known.isopotential_ph),
-        slope_fraction_standard_uncertainty=known.slope_fraction_standard_uncertainty,
-        offset_standard_uncertainty_mv=known.offset_standard_uncertainty_mv,
-    )
+    return FittedBench(model=model, fit=fit, noise_mv=noise_mv, lag_fitted=known, noise_fitted=len(rest_mv) >= 4)

@@ -12,7 +12,7 @@ from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from controller.curves.evaluate_record import curve_of
 from controller.foresight.benchfit import FittedBench, fit_bench
-from controller.foresight.lagfit import Transients
+from controller.foresight.trace import Transients
 from controller.planning.runplan import PumpAccount, SampleChoice, make_plan
 from controller.records.record import Record
 from controller.replay import dialogue, plan_of_record

@@ -12,7 +12,6 @@ from configs.errors import HalfdropError
 from configs.settings import shipped_bench, shipped_method
 from controller.cli import main
 from controller.foresight.benchfit import FitRefusedError, FittedBench, fit_bench
-from controller.foresight.lagfit import FittedLag, Transients, fit_lag
 from controller.foresight.study_plan import BASELINE, MODEL_GUIDED, nominal_plan
 from controller.foresight.whatif import compare, fit_record, other_plan
 from controller.journal import Journal
@@ -22,19 +21,17 @@ from controller.records.record import Record, read_record
 from controller.records.recordfile import FileSink
 from controller.study import StudyWorld, drive, nominal_run
 from controller.titration.actions import Action, Finish, Observation
-from controller.titration.plan import ProbeResponse
+from controller.titration.plan import RunPlan
 from drivers.clock import ManualClock
-from simulators.lag import LagCascade, LagConstants
-from simulators.nominal import nominal_bench
+from simulators.bench import VirtualBench
+from simulators.nominal import NominalBench, nominal_bench
+from simulators.solution_mixture import Mixture, StrongIon
 
 SEED = 3
 
 
-@pytest.fixture(scope="module")
-def record(tmp_path_factory: pytest.TempPathFactory) -> Record:
-    nominal, clock = nominal_bench("acetic", SEED), ManualClock()
-    plan, world = nominal_plan(nominal, MODEL_GUIDED), StudyWorld(nominal.bench)
-    path = tmp_path_factory.mktemp("whatif") / "run.jsonl"
+def recorded(nominal: NominalBench, plan: RunPlan, path: Path, *, bench: VirtualBench | None = None) -> Record:
+    clock, world = ManualClock(), StudyWorld(bench or nominal.bench)
     journal = Journal(FileSink(path, durable=False), clock)
     journal.begin(header_of(plan, devices={}, operator_name=None, hashes=None, clock=clock))
 
@@ -53,6 +50,12 @@ def record(tmp_path_factory: pytest.TempPathFactory) -> Record:
 
 
 @pytest.fixture(scope="module")
+def record(tmp_path_factory: pytest.TempPathFactory) -> Record:
+    nominal = nominal_bench("acetic", SEED)
+    return recorded(nominal, nominal_plan(nominal, MODEL_GUIDED), tmp_path_factory.mktemp("whatif") / "run.jsonl")
+
+
+@pytest.fixture(scope="module")
 def fitted(record: Record) -> FittedBench:
     return fit_record(record)
 
@@ -62,11 +65,11 @@ def test_what_is_in_the_beaker_is_found(fitted: FittedBench):
     volume_ml, sd_ml = fitted.equivalence_ml
     assert abs(volume_ml - nominal.true_equivalence_ml[0]) < 5.0 * max(sd_ml, 0.0009)  # the pump's position error too
     assert volume_ml == pytest.approx(nominal.true_equivalence_ml[0], rel=0.002)
-    # the calibration's offset is known to 1 mV, 0.017 pH, and a pKa takes it over whole
-    assert fitted.model.pka[0] == pytest.approx(nominal.true_pka[0], abs=0.06)
+    assert fitted.pka[0] == pytest.approx(nominal.true_pka[0], abs=0.02)
+    assert fitted.amount_mol_l == pytest.approx(nominal.bench.sample.weak[0].concentration_mol_l, rel=0.002)
     truth = nominal.bench.truth.electrode
     assert fitted.noise_mv == pytest.approx(truth.noise_sd_mv, rel=0.5)
-    assert fitted.calibration.slope_fraction == pytest.approx(truth.slope_fraction, abs=0.015)
+    assert fitted.calibration.slope_fraction == pytest.approx(truth.slope_fraction, abs=0.006)
 
 
 def test_every_parameter_has_an_uncertainty(fitted: FittedBench):
@@ -96,31 +99,32 @@ def test_the_same_seeds_give_the_same_comparison(fitted: FittedBench):
     assert compare(fitted, fitted.plan, runs=2).own == compare(fitted, fitted.plan, runs=2).own
 
 
-RESPONSE = ProbeResponse(bulk_s=1.5, film_s=2.0, slow_s=30.0, slow_share=0.01, dead_time_s=0.5)
-
-
-def test_a_lag_is_found_from_its_transients():
-    true = LagConstants(bulk_s=2.1, film_s=1.7, slow_s=30.0, slow_share=0.01, dead_time_s=0.5)
-    cascade, doses = LagCascade(true, at_s=0.0), []
-    for number in range(20):
-        begun_s = 20.0 * number
-        cascade.ramp(begun_s, begun_s + 1.2, 0.1)
-        doses.append((begun_s, begun_s + 1.2, 0.1))
-    volumes = [0.001 * place for place in range(2200)]
-    readings = [(0.5 * place, -200.0 * cascade.seen_ml(0.5 * place)) for place in range(800)]
-    import numpy as np
-
-    found = fit_lag(
-        Transients(doses=doses, readings=readings),
-        RESPONSE,
-        np.array(volumes),
-        -200.0 * np.array(volumes),
-        noise_mv=0.05,
+def test_a_probe_slower_than_its_record_is_found_so(tmp_path: Path):
+    nominal = nominal_bench("acetic", SEED)
+    plan = nominal_plan(nominal, MODEL_GUIDED)
+    response = plan.probe.response
+    assert response is not None
+    wrong = replace(response, bulk_s=0.7 * 1.5, film_s=0.7 * 2.0, time_relative_uncertainty=0.3)
+    fitted = fit_record(
+        recorded(nominal, replace(plan, probe=replace(plan.probe, response=wrong)), tmp_path / "a.jsonl")
     )
-    assert found is not None
     # the two times in series can hardly be told apart, their sum can
-    assert found.bulk_s + found.film_s == pytest.approx(3.8, rel=0.02)
-    assert FittedLag.of(RESPONSE).bulk_s == 1.5
+    assert fitted.lag.bulk_s + fitted.lag.film_s == pytest.approx(3.5, rel=0.10)
+
+
+def test_strong_ions_that_no_plan_names_are_let_free_where_the_points_ask_for_it(tmp_path: Path):
+    nominal = nominal_bench("acetic", SEED)
+    weak = nominal.bench.sample.weak[0]
+    salty = Mixture(weak=(weak,), ions=(StrongIon(charge=1, concentration_mol_l=0.15 * weak.concentration_mol_l),))
+    bench = VirtualBench(nominal.bench.truth, sample=salty, titrant=nominal.bench.titrant, seed=SEED)
+    fitted = fit_record(recorded(nominal, nominal_plan(nominal, MODEL_GUIDED), tmp_path / "a.jsonl", bench=bench))
+    found = {one.name: one for one in fitted.parameters()}
+    assert fitted.fit.strong_ions_free
+    ions = found["other strong ions"]
+    assert ions.value == pytest.approx(150.0 * weak.concentration_mol_l, abs=3.0 * ions.standard_uncertainty)
+    analyte = found["analyte, in the vessel"]
+    assert abs(analyte.value - 1000.0 * weak.concentration_mol_l) < 3.0 * analyte.standard_uncertainty
+    assert analyte.standard_uncertainty < 0.02 * analyte.value
 
 
 def test_without_readings_the_lag_stays_as_the_plan_has_it(fitted: FittedBench, record: Record):
