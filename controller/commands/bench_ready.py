@@ -25,7 +25,6 @@ from controller.journal import utc_text
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.planning.inforce import NotInForceError, find_in_force, utc_day
-from controller.planning.last_devices import last_devices
 from controller.planning.runplan import SampleChoice, plan_sample
 from controller.records.record import printable
 from controller.records.unclosed import unclosed
@@ -73,10 +72,10 @@ def shut_down(given: argparse.Namespace) -> int:
 
 def _stored(lab: Lab, bench: BenchCheck) -> None:
     """Keep that the probe was stored: of the one that was used last, as nobody asks it here."""
-    probe = last_devices(lab.runs, lab.calibrations).probe
-    if probe is not None:
+    left = probe_left(lab.runs, lab.calibrations)
+    if left is not None:
         try:
-            keep_stored(lab.calibrations, probe, utc_text(bench.utc_s()))
+            keep_stored(lab.calibrations, left.probe, utc_text(max(bench.utc_s(), left.since_utc_s)))
         except HalfdropError as error:
             say(str(error))
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import sys
+from dataclasses import replace
 from pathlib import Path
 
 from configs.errors import HalfdropError
@@ -14,7 +15,11 @@ from controller.commands.progressbar import ProgressBar
 from controller.commands.settings import chosen, sample_choice
 from controller.foresight.predict import curve_text, predict_solution, read_volumes
 from controller.foresight.prediction import Band, Prediction, predict_run
-from controller.planning.runplan import expected_account, make_plan
+from controller.planning.expected_in_force import expected_in_force
+from controller.planning.inforce import utc_day
+from controller.planning.runplan import expected_account, expected_volume_ml, make_plan, plan_sample
+from controller.records.record import printable
+from drivers.clock import SystemClock
 
 #: keys at the top of a solution file, and of a method file
 _SOLUTION_KEYS, _METHOD_KEYS = {"volumes_ml", "pkw", "debye_huckel_a"}, {"name", "kind", "title", "end_points"}
@@ -78,9 +83,25 @@ def _method(given: argparse.Namespace) -> int:
     given.method = given.what
     picked = chosen(given, lab_needed=False)
     account = expected_account(picked.bench)
+    choice, lab = sample_choice(given), picked.lab
+    known = None if lab is None else expected_in_force(
+        picked.method,
+        picked.bench,
+        lab.runs,
+        lab.calibrations,
+        today=utc_day(SystemClock().utc_s()),
+        expected_volume_ml=expected_volume_ml(picked.method, plan_sample(picked.method, choice)),
+    )  # fmt: skip
     plan = make_plan(
-        picked.method, picked.bench, sample_choice(given), pump=account, probe_identity=account.identity, seed=None
+        picked.method,
+        picked.bench,
+        choice,
+        pump=account,
+        probe_identity=account.identity,
+        seed=None,
+        in_force=None if known is None else known.in_force,
     )
+    says = ["probe calibration: that of the shipped bench"] if known is None else list(known.says)
     percent = given.amount_uncertainty_percent
     with ProgressBar("simulated runs", total=given.runs) as bar:
         predicted = predict_run(
@@ -90,10 +111,12 @@ def _method(given: argparse.Namespace) -> int:
             amount_relative_sd=None if percent is None else percent / 100.0,
             on_run=bar.reach,
         )
+    if known is not None and known.refusal is not None:
+        predicted = replace(predicted, problems=(known.refusal, *predicted.problems))
     if given.json:
-        print_json({"method": plan.method_name, **predicted.to_json()})
+        print_json({"method": plan.method_name, "taken_from": says, **predicted.to_json()})
     else:
-        print("\n".join(prediction_lines(predicted)))
+        print("\n".join(printable(line) for line in [*says, *prediction_lines(predicted)]))
     return 1 if predicted.problems else 0
 
 

@@ -31,6 +31,7 @@ class ProbeLeft:
     """The last record of a probe of which nobody said that it was rinsed and stored.
 
     Attributes:
+        probe: its identity.
         run: name of the record.
         since_utc_s: POSIX seconds of its end.
         answered_no: whether somebody said that it was not; else nobody said anything.
@@ -38,6 +39,7 @@ class ProbeLeft:
         titration: whether it stands in a titrated solution; else in a buffer.
     """
 
+    probe: str
     run: str
     since_utc_s: float
     answered_no: bool
@@ -72,12 +74,13 @@ def probe_left(runs: Path, calibrations: Path, probe: str | None = None) -> Prob
     if newest is None or (newest.closing or {}).get("probe_stored") == STORED:
         return None
     ended = _utc_s(newest.entries[-1].get("utc") if newest.entries else newest.header.get("started_utc"))
-    used = probe_of_header(newest.header)
-    stored = None if used is None else _utc_s(stored_utc(calibrations, used))
+    used = probe_of_header(newest.header) or ""
+    stored = _utc_s(stored_utc(calibrations, used))
     if ended is None or (stored is not None and stored >= ended):
         return None
     plan = newest.header.get("plan") or {}
     return ProbeLeft(
+        probe=used,
         run=newest.path.stem,
         since_utc_s=ended,
         answered_no=(newest.closing or {}).get("probe_stored") == "no",
