@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import argparse
 import json
+import math
 import os
 import random
 import signal
@@ -45,13 +46,19 @@ _ROOT = Path(__file__).resolve().parents[2]
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Outcome:
-    """What one killed run came to; `problems` is empty where all is well."""
+    """What one killed run came to; `problems` is empty where all is well.
+
+    `off_in_u`: resumed less uninterrupted end point, in their combined standard uncertainty; `u_ratio`: the resumed
+    run's uncertainty over the uninterrupted one's.
+    """
 
     seed: int
     killed_s: float
     lines: int
     found: str
     problems: tuple[str, ...]
+    off_in_u: float | None = None
+    u_ratio: float | None = None
 
 
 def halfdrop(*arguments: str, place: Path, wait: bool = True) -> subprocess.Popen[bytes]:
@@ -130,14 +137,29 @@ def _killed(run: Killed, serve: subprocess.Popen[bytes]) -> Outcome:
         lines = kept.count(b"\n")
         return Outcome(seed=run.seed, killed_s=moment_s * scale, lines=lines, found="ended before", problems=())
     if not kept.count(b"\n"):
-        return Outcome(seed=run.seed, killed_s=moment_s * scale, lines=0, found="nothing was begun", problems=())
+        # killed before its header was whole: nothing to resume, but nothing may have moved, and the bench must be free
+        moved = _steps_in_truth(ports["pump"])
+        problems = [f"{moved} steps though no run was begun"] if moved else []
+        again = result_of(halfdrop("run", METHOD, *usual, place=lab.parent, wait=False))
+        if again["outcome"] != "completed":
+            problems.append(f"the next run ended as {again['outcome']}: {again['reason']}")
+        return Outcome(
+            seed=run.seed, killed_s=moment_s * scale, lines=0, found="nothing was begun", problems=tuple(problems)
+        )
     time.sleep(draws.choice((0.0, 0.3, 2.0)))
     resumed = result_of(halfdrop("resume", path.stem, *usual, place=lab.parent, wait=False))
     found, problems = _judged(run, path, kept, resumed, _steps_in_truth(ports["pump"]))
     if problems and run.keep is not None:
         (run.keep / f"seed-{run.seed}.jsonl").write_bytes(path.read_bytes())
+    off, ratio = _differences(run.calm, resumed)
     return Outcome(
-        seed=run.seed, killed_s=moment_s * scale, lines=kept.count(b"\n"), found=found, problems=tuple(problems)
+        seed=run.seed,
+        killed_s=moment_s * scale,
+        lines=kept.count(b"\n"),
+        found=found,
+        problems=tuple(problems),
+        off_in_u=off,
+        u_ratio=ratio,
     )
 
 
@@ -172,6 +194,16 @@ def _judged(run: Killed, path: Path, kept: bytes, resumed: dict[str, Any], truth
     return found, problems
 
 
+def _differences(calm: dict[str, Any], resumed: dict[str, Any]) -> tuple[float | None, float | None]:
+    if not calm["end_points"] or not resumed["end_points"]:
+        return None, None
+    one, other = calm["end_points"][0], resumed["end_points"][0]
+    both_ml = math.hypot(one["standard_uncertainty_ml"], other["standard_uncertainty_ml"])
+    return (other["volume_ml"] - one["volume_ml"]) / both_ml, other["standard_uncertainty_ml"] / one[
+        "standard_uncertainty_ml"
+    ]
+
+
 def _compared(calm: dict[str, Any], resumed: dict[str, Any]) -> list[str]:
     problems = []
     off_ml = resumed["volume_ml"] - calm["volume_ml"]
@@ -203,15 +235,23 @@ def main() -> int:
     asked.add_argument("--keep", type=Path, help="folder for the records of runs with problems")
     given = asked.parse_args()
     seeds = range(given.first_seed, given.first_seed + given.runs)
-    bad, kinds = 0, dict[str, int]()
+    bad, kinds, offs, ratios = 0, dict[str, int](), list[float](), list[float]()
     with ThreadPoolExecutor(max_workers=given.jobs) as pool:
         for outcome in pool.map(lambda seed: _safely(seed, given.scale, given.keep), seeds):
             kinds[outcome.found] = kinds.get(outcome.found, 0) + 1
             bad += bool(outcome.problems)
+            offs += [] if outcome.off_in_u is None else [outcome.off_in_u]
+            ratios += [] if outcome.u_ratio is None else [outcome.u_ratio]
             told = "; ".join(outcome.problems) or "sound"
+            if outcome.off_in_u is not None and outcome.u_ratio is not None:
+                told += f", off {outcome.off_in_u:+.2f} combined u, u ratio {outcome.u_ratio:.2f}"
             print(f"seed {outcome.seed}: killed at {outcome.killed_s:.1f} s after {outcome.lines} lines, "
                   f"{outcome.found}: {told}", flush=True)  # fmt: skip
     print(f"{given.runs} runs, {bad} with problems; " + ", ".join(f"{count} {name}" for name, count in kinds.items()))
+    if offs:
+        print(f"end point off the uninterrupted one: rms {math.sqrt(math.fsum(x * x for x in offs) / len(offs)):.2f}, "
+              f"largest {max(map(abs, offs)):.2f} combined u; u ratio: median {sorted(ratios)[len(ratios) // 2]:.2f}, "
+              f"largest {max(ratios):.2f}")  # fmt: skip
     return 1 if bad else 0
 
 
