@@ -22,6 +22,7 @@ from controller.calibration.burette import (
     evaluate_series,
     judge_burette,
 )
+from controller.calibration.obeying import obeying
 from controller.calibration.plans import BurettePlan
 from controller.titration.actions import (
     Action,
@@ -54,6 +55,10 @@ class _StopError(Exception):
 
 def check_burette(plan: BurettePlan) -> Decisions:
     """Return the core that carries out a plan."""
+    return obeying(_checked(plan))
+
+
+def _checked(plan: BurettePlan) -> Decisions:
     try:
         result = yield from _Session(plan).whole()
     except _StopError as end:
@@ -133,7 +138,7 @@ class _Session:
             )
             if not isinstance(done, Dosed):
                 raise _StopError(f"delivery {number} of {set_ml:g} mL: {_why(done)}")
-            left_ml -= volume_ml
+            left_ml -= done.volume_ml  # less where it was halted: the rest follows
             self.contents_ml -= done.volume_ml
             self.vessel_ml += done.volume_ml
         return (yield from self._reading(place, number, set_ml))

@@ -37,6 +37,7 @@ from controller.calibration.electrode import (
     fit_line,
 )
 from controller.calibration.isopotential import LEAST_TEMPERATURE_SPAN_C, fit_isopotential
+from controller.calibration.obeying import obeying
 from controller.calibration.plans import PlannedBuffer, PlannedLimits, ProbePlan
 from controller.calibration.stability import NotStable, Stable, read_until_stable
 from controller.titration.actions import Action, Answered, Ask, Decisions, Observation, Report
@@ -80,6 +81,10 @@ class _Measured:
 
 def calibrate_probe(plan: ProbePlan) -> Decisions:
     """Return the core that carries out a plan."""
+    return obeying(_calibrated(plan))
+
+
+def _calibrated(plan: ProbePlan) -> Decisions:
     session = _Session(plan)
     try:
         result = yield from session.whole()

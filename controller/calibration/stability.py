@@ -19,6 +19,8 @@ from controller.titration.actions import Action, Command, Failed, Observation, R
 _MEAN_OF_LAST_S = 10.0
 #: within this of the settled potential the probe has answered, mV (0.02 pH)
 ANSWERED_MV = 1.2
+#: readings further apart than this have a pause between them, s
+LONGEST_GAP_S = 30.0
 #: failed readings in a row after which the buffer is given up
 MOST_FAILED = 10
 
@@ -65,6 +67,8 @@ def read_until_stable(
         good = isinstance(seen, Reading) and seen.status == "ok" and math.isfinite(seen.potential_mv)
         if good and isinstance(seen, Reading):
             failed, began_s = 0, seen.at_s if began_s is None else began_s
+            if readings and seen.at_s - readings[-1].at_s > LONGEST_GAP_S:
+                readings.clear()  # a pause: what was read before says nothing of the drift now
             readings.append(seen)
             found = _judged(readings, rule, resolution_mv)
             if found is not None:

@@ -10,7 +10,7 @@ import pytest
 from controller.calibration.store import in_force
 from controller.journal import Journal
 from controller.records.recordfile import FileSink
-from controller.titration.actions import Ask, Read, Reading, Report
+from controller.titration.actions import Ask, Command, Read, Reading, Report
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.calibration import CalibrationScreen, CalibrationsScreen
 from controller.ui.screens.dialogs import Choice, Text
@@ -92,6 +92,13 @@ def test_a_step_is_asked_and_answered_on_the_screen(stage: Any, size: tuple[int,
             await pilot.press("1")
             await stage.until(pilot, lambda: port.answer == "ready")
             await pilot.press("s")
+            await stage.until(pilot, lambda: isinstance(app.screen, Choice) and stop.held)
+            await pilot.press("g")
+            await stage.until(pilot, port.waiting)
+            assert port.take() == Command(name="go-on")
+            await pilot.press("s")
+            await stage.until(pilot, lambda: isinstance(app.screen, Choice))
+            await pilot.press("e")
             await stage.until(pilot, lambda: stop.request is not None)
 
         stage.drive(app, steps, size)

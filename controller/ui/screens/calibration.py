@@ -38,7 +38,6 @@ class CalibrationScreen(RunScreen):
     """A calibration step by step: what it asks, the reading and how steady it is, what it found."""
 
     BINDINGS: ClassVar[list[BindingType]] = [
-        Binding("s", "stop", "Stop"),
         Binding("v", "verify", "Verify"),
     ]
 
@@ -63,23 +62,23 @@ class CalibrationScreen(RunScreen):
         view = self.view
         self.query_one("#phase", Plain).say(self.phase_text())
         asked = self.query_one("#asked", Plain)
-        asked.say("" if view.question is None else f"{view.question}\n\nEnter: answer ({' / '.join(view.choices)})")
-        asked.display = view.question is not None
+        question = None if self.view.over else self.question
+        if question is not None:
+            how = f" ({' / '.join(question.choices)})" if question.choices else ""
+            asked.say(printable_lines(f"{question.text}\n\nEnter: answer{how}"))
+        asked.display = question is not None
         self.query_one(Readout).show(view)
         self.query_one(Sentences).show(view.sentences)
         self.query_one(WarningBar).show(view.warnings)
+        self.say_halted()
 
     def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
         """No doses and no plot here."""
-        if action in ("dose", "near", "cursor", "pause", "go_on"):
+        if action in ("dose", "near", "cursor"):
             return False
         if action == "verify":
             return not self.live
         return super().check_action(action, parameters)
-
-    def action_stop(self) -> None:
-        """End it: whatever moves is stopped at once, and nothing comes into force."""
-        self.command("end")
 
     def action_verify(self) -> None:
         """Verify the record."""

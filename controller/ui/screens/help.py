@@ -74,7 +74,7 @@ it says what to do, shows the reading and how steady it is, and judges against s
   b          settle a blank: typed volumes, or runs without sample
   h          trend of slope and offset, or of the volumes
   Enter      open a record; in a calibration that goes on: answer its question
-  s          end a calibration; nothing comes into force
+  s  p  g    stop at once and then say how to go on; pause; go on. An ended one comes to nothing
 
 A titrant's portions are titrated one after the other, and the screen follows to the question at the end."""
 
