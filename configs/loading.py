@@ -11,7 +11,7 @@ from pydantic import ValidationError
 from configs.allowed import Location, allowed_at, field_at, keys_at, kind_of
 from configs.errors import SettingsError
 from configs.fields import Disagreement, Settings
-from configs.marked import LARGEST_FILE_BYTES, Marked, Trap, UnreadableYamlError, read_marked, shown
+from configs.marked import LARGEST_FILE_BYTES, MOST_PROBLEMS, Marked, Trap, UnreadableYamlError, read_marked, shown
 from configs.nearest import did_you_mean
 
 Model = TypeVar("Model", bound=Settings)
@@ -58,9 +58,11 @@ def parse(data: bytes, model: type[Model], *, where: str) -> Model:
 
 
 def settings_error(problems: list[Problem], *, where: str) -> SettingsError:
-    """Return the error of these problems, in the order of the file, one line each."""
+    """Return the error of these problems, in the order of the file, one line each; of very many the first ones."""
     ordered = sorted(dict.fromkeys(problems), key=lambda problem: problem[:2])
-    lines = [f"{where}:{line}:{column}: {key}: {text}" for line, column, key, text in ordered]
+    lines = [f"{where}:{line}:{column}: {key}: {text}" for line, column, key, text in ordered[:MOST_PROBLEMS]]
+    if len(ordered) > MOST_PROBLEMS:
+        lines.append(f"{where}: and more; mend these first")
     return SettingsError([_printable(line) for line in lines], where=where)
 
 
@@ -132,7 +134,7 @@ def _near_file(path: Path) -> str:
 
 def _problems_of(error: ValidationError, model: type[Settings], document: Marked) -> list[Problem]:
     found: list[Problem] = []
-    for item in error.errors(include_url=False):
+    for item in error.errors(include_url=False)[: MOST_PROBLEMS + 1]:
         location: Location = item["loc"]
         kind, got, context = item["type"], item["input"], item.get("ctx", {})
         if kind == "disagreement":

@@ -20,11 +20,14 @@ _Loader: Any = getattr(yaml, "CSafeLoader", yaml.SafeLoader)
 LARGEST_FILE_BYTES = 1_000_000
 DEEPEST_NESTING = 20
 LONGEST_SHOWN = 60
+#: problems of one file that are told
+MOST_PROBLEMS = 50
 
-_NUMBER = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([eE][-+]?\d+)?")
+_NUMBER = re.compile(r"[-+]?(\d+(\.\d*)?|\.\d+)([eE][-+]?\d+)?")
 _INTEGER = re.compile(r"[-+]?(0|[1-9]\d*)")
 _TRUE_FALSE = {"true": True, "True": True, "TRUE": True, "false": False, "False": False, "FALSE": False}
 _NULLS = ("", "~", "null", "Null", "NULL")
+# Each pattern can match in one way only: a long scalar is judged in time proportional to its length.
 #: what YAML 1.1 would silently turn into something else, with the name of it and what to write instead
 _TRAPS = (
     (re.compile(r"y|n|yes|no|on|off", re.IGNORECASE), "a yes-or-no word to YAML", "true or false, or"),
@@ -36,7 +39,7 @@ _TRAPS = (
         "a hexadecimal, octal or binary number to YAML",
         "a decimal number, or",
     ),
-    (re.compile(r"[-+]?\d[\d_]*_[\d_]*\.?[\d_]*"), "a number with underscores", "a number without them, or"),
+    (re.compile(r"[-+]?\d+_[\d_]*(\.[\d_]*)?"), "a number with underscores", "a number without them, or"),
     (re.compile(r"[-+]?\.?(inf|nan)", re.IGNORECASE), "no finite number", "a finite number, or"),
 )
 
@@ -205,7 +208,8 @@ class _Reader:
         return text
 
     def _refuse(self, line: int, column: int, key: str, text: str, *, got: str | None = None) -> None:
-        self.traps.append(Trap(line, column, key, text if got is None else f"{got}, {text}", got))
+        if len(self.traps) <= MOST_PROBLEMS:  # a file made of them must not unfold into a message of megabytes
+            self.traps.append(Trap(line, column, key, text if got is None else f"{got}, {text}", got))
 
 
 def shown(value: object) -> str:

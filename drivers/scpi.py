@@ -49,8 +49,8 @@ ERROR_TEXTS = {
     -400: "Query error",
 }
 
-_NUMBER = re.compile(rb"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3})?")
-_NUMBER_WITH_SUFFIX = re.compile(rb"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3})?\s*[A-Za-z%][A-Za-z/%]*")
+_NUMBER = re.compile(rb"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d{1,3})?")
+_NUMBER_WITH_SUFFIX = re.compile(rb"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d{1,3})?\s*[A-Za-z%][A-Za-z/%]*")
 _HEADER = re.compile(rb"\*[A-Za-z]{1,12}\??|:?[A-Za-z][A-Za-z0-9_]*(?::[A-Za-z][A-Za-z0-9_]*)*\??")
 _NODE = re.compile(r"\[:([A-Za-z]+)\]|:?([A-Za-z]+)")
 

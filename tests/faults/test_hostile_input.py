@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 from configs.errors import HalfdropError, SettingsError
 from configs.faultfile import FaultsSettings
 from configs.loading import parse
-from configs.settings import BenchSettings
+from configs.settings import BenchSettings, SolutionSettings
 from controller.guard import Guard, room_ml
 from controller.journal import Journal
 from controller.records.record import printable, verify_bytes
@@ -84,6 +84,25 @@ def test_readers_survive_hostile_bytes(fuzzer: Any) -> None:
 def test_a_bomb_of_references_is_refused_at_once(fuzzer: Any, model: Any) -> None:
     with pytest.raises(SettingsError):
         parse(fuzzer.BOMB, model, where="bomb.yaml")
+
+
+@pytest.mark.parametrize(
+    "scalar", ["9" * 300_000 + "x", "1_0" * 100_000 + "x", "1:1" * 100_000 + "x", "0" * 300_000 + "x"]
+)
+def test_a_long_scalar_is_judged_in_one_go(scalar: str) -> None:
+    """A pattern that can match in several ways would take days here."""
+    with pytest.raises(SettingsError):
+        parse(b"name: " + scalar.encode(), BenchSettings, where="bench.yaml")
+
+
+@pytest.mark.parametrize(
+    "body", [b"volumes_ml: [" + b"no," * 20_000 + b"]", b"".join(b"k%d: 1\n" % n for n in range(9000))]
+)
+def test_a_file_of_nothing_but_problems_gets_a_short_answer(body: bytes) -> None:
+    with pytest.raises(SettingsError) as refusal:
+        parse(body, SolutionSettings, where="solution.yaml")
+    assert 50 <= len(refusal.value.problems) <= 51
+    assert refusal.value.problems[-1] == "solution.yaml: and more; mend these first"
 
 
 @given(st.text(max_size=80))

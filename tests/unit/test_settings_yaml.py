@@ -9,7 +9,7 @@ import yaml
 from hypothesis import given
 from hypothesis import strategies as st
 
-from configs.marked import LONGEST_SHOWN, Marked, Trap, UnreadableYamlError, read_marked, shown
+from configs.marked import LONGEST_SHOWN, MOST_PROBLEMS, Marked, Trap, UnreadableYamlError, read_marked, shown
 
 
 def mapping(text: str) -> tuple[Marked, list[Trap]]:
@@ -110,7 +110,8 @@ def test_aliases_that_would_unfold_are_never_followed() -> None:
     lines = ["a0: &a0 [x, x, x, x, x, x, x, x, x, x]"]
     lines += [f"a{n}: &a{n} [{', '.join([f'*a{n - 1}'] * 10)}]" for n in range(1, 10)]  # 10 to the 10th entries
     _, traps = mapping("\n".join(lines))
-    assert sum("alias" in trap.text for trap in traps) == 90
+    assert sum("alias" in trap.text for trap in traps) >= 40  # of 90; a file of nothing but problems is told in part
+    assert len(traps) == MOST_PROBLEMS + 1
     assert sum("anchor" in trap.text for trap in traps) == 10
 
 
