@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from controller.evaluation.montecarlo import compare, propagate
+from controller.evaluation.montecarlo import compare, meaningful_digits, propagate
 from controller.evaluation.quantity import Quantity
 from controller.evaluation.uncertainty import Array, Budget, BudgetRow, Model, Values
 
@@ -16,6 +16,8 @@ from controller.evaluation.uncertainty import Array, Budget, BudgetRow, Model, V
 LARGEST_TRIALS = 500_000
 #: density of the normal distribution at the ends of its 95 % interval, per standard deviation
 _DENSITY_AT_END = 0.0584
+#: Student's t has no variance with so few degrees of freedom
+_NO_VARIANCE = 2.0
 
 
 def budget_to_json(budget: Budget, *, model: Model, quantities: Sequence[Quantity], seed: int = 1) -> dict[str, Any]:
@@ -79,17 +81,26 @@ def _monte_carlo(budget: Budget, model: Model, quantities: Sequence[Quantity], s
         seed=seed,
         largest_trials=LARGEST_TRIALS,
     )
-    checked = compare(budget, found)
+    digits = meaningful_digits(budget.degrees_of_freedom)
+    checked = compare(budget, found, significant_digits=digits)
     # the ends of the interval are known to within the noise of so many trials
     noise = budget.standard_uncertainty * math.sqrt(0.025 * 0.975 / found.trials) / _DENSITY_AT_END
     worst = max(checked.difference_low, checked.difference_high)
+    low, high = found.symmetric_interval
+    given = (budget.value - budget.expanded_uncertainty, budget.value + budget.expanded_uncertainty)
+    few = min((row.degrees_of_freedom for row in budget.rows if abs(row.share) > 0.0), default=math.inf)
     return {
         "value": found.value,
-        "standard_uncertainty": found.standard_uncertainty,
+        # Student's t with 2 degrees of freedom or fewer has no standard deviation
+        "standard_uncertainty": found.standard_uncertainty if few > _NO_VARIANCE else None,
         "coverage_probability": found.coverage_probability,
-        "interval": list(found.symmetric_interval),
+        "interval": [low, high],
+        "given_interval": list(given),
+        "width_ratio": (high - low) / (2.0 * budget.expanded_uncertainty),
+        "fewest_degrees_of_freedom": _finite(few),
         "trials": found.trials,
         "seed": seed,
+        "significant_digits": digits,
         "tolerance": checked.tolerance,
         "noise": noise,
         "agrees": worst <= checked.tolerance + 3.0 * noise,

@@ -20,6 +20,8 @@ from controller.evaluation.uncertainty import Budget, Model, evaluate_model
 Array = npt.NDArray[np.float64]
 #: batches before the spread of their results is believed; two, as in the text of 7.9.4, stop too early by chance
 _FEWEST_BATCHES = 10
+#: fewer degrees of freedom leave a standard uncertainty known to 10 % or worse
+_FREEDOM_FOR_TWO_DIGITS = 50.0
 IntervalKind = Literal["shortest", "symmetric"]
 
 
@@ -104,14 +106,18 @@ def propagate(
     batch = max(math.ceil(100.0 / (1.0 - coverage_probability)), 10_000)
     results: list[Array] = []
     summaries: list[tuple[float, float, float, float]] = []
+    variances: list[float] = []
     tolerance, converged = 0.0, False
     while not converged and (len(results) < 2 or batch * (len(results) + 1) <= largest_trials):
         values = evaluate_model(model, sampler.draw(batch))
         results.append(values)
-        summaries.append(_summary(values, coverage_probability))
+        variances.append(float(np.var(values, ddof=1)))
+        summaries.append(
+            (float(values.mean()), math.sqrt(variances[-1]), *_symmetric_ends(values, coverage_probability))
+        )
         if len(results) < _FEWEST_BATCHES:
             continue
-        spread = float(np.sqrt(np.mean(np.var(np.array(results), axis=1, ddof=1))))
+        spread = math.sqrt(math.fsum(variances) / len(variances))
         if spread <= 0.0:
             converged = True
             continue
@@ -128,15 +134,10 @@ def propagate(
     )
 
 
-def _summary(values: Array, probability: float) -> tuple[float, float, float, float]:
-    low, high = symmetric_interval(np.sort(values), probability)
-    return float(values.mean()), float(values.std(ddof=1)), low, high
-
-
 def _result(
     values: Array, *, unit: str, probability: float, tolerance: float, converged: bool, seed: int
 ) -> MonteCarlo:
-    ordered = np.sort(values)
+    ordered = _tails_sorted(values, values.size - _held(values.size, probability))
     return MonteCarlo(
         value=float(values.mean()),
         standard_uncertainty=float(values.std(ddof=1)),
@@ -151,34 +152,62 @@ def _result(
     )
 
 
+def _tails_sorted(values: Array, tail: int) -> Array:
+    """Return the values with the `tail` lowest and highest in order: the ends of either interval are among them."""
+    if 2 * tail >= values.size:
+        return np.sort(values)
+    ordered = np.partition(values, (tail - 1, values.size - tail))
+    ordered[:tail].sort()
+    ordered[-tail:].sort()
+    return ordered
+
+
+def _symmetric_ends(values: Array, probability: float) -> tuple[float, float]:
+    """Return the symmetric interval of values in any order; see `symmetric_interval`."""
+    held = _held(values.size, probability)
+    low = (values.size - held) // 2
+    placed = np.partition(values, (low, low + held))
+    return float(placed[low]), float(placed[low + held])
+
+
 def symmetric_interval(ordered: Array, probability: float) -> tuple[float, float]:
-    """Return the probabilistically symmetric coverage interval of sorted values, shape (n,).
+    """Return the probabilistically symmetric coverage interval of values with sorted tails, shape (n,).
 
     Source: JCGM 101:2008 7.7.2.
     """
-    held = _held(ordered, probability)
+    held = _held(ordered.size, probability)
     low = (ordered.size - held) // 2
     return float(ordered[low]), float(ordered[low + held])
 
 
 def shortest_interval(ordered: Array, probability: float) -> tuple[float, float]:
-    """Return the shortest coverage interval of sorted values, shape (n,).
+    """Return the shortest coverage interval of values with sorted tails, shape (n,).
 
     Source: JCGM 101:2008 7.7.3.
     """
-    held = _held(ordered, probability)
+    held = _held(ordered.size, probability)
     low = int(np.argmin(ordered[held:] - ordered[: ordered.size - held]))
     return float(ordered[low]), float(ordered[low + held])
 
 
-def _held(ordered: Array, probability: float) -> int:
-    return min(ordered.size - 1, math.floor(probability * ordered.size + 0.5))
+def _held(count: int, probability: float) -> int:
+    return min(count - 1, math.floor(probability * count + 0.5))
+
+
+def meaningful_digits(degrees_of_freedom: float) -> int:
+    """Return how many digits of a standard uncertainty mean something: 2, or 1 where it is known to 10 % or worse.
+
+    From n observations it is known to 1/sqrt(2 (n - 1)) of itself: 50 % with 2 degrees of freedom, 10 % with 50.
+
+    Source: GUM E.4.3 and table E.1; what counts as meaningful is left to the user by JCGM 101:2008 7.9.2.
+    """
+    return 2 if degrees_of_freedom >= _FREEDOM_FOR_TWO_DIGITS else 1
 
 
 def compare(
     gum: Budget, monte_carlo: MonteCarlo, *, interval: IntervalKind = "symmetric", significant_digits: int = 2
 ) -> Comparison:
-    """Compare the GUM's interval with Monte Carlo's.
+    """Compare the GUM's interval, value +- t(effective degrees of freedom) u, with Monte Carlo's, end by end.
 
     The symmetric interval is the sound one of the two: the shortest one of a nearly symmetric result may lie anywhere
     along a flat minimum and needs ten times the trials for the same numerical tolerance.
@@ -234,13 +263,12 @@ class _Sampler:
         """Deviates in units of the standard uncertainty."""
         draw = self._generator
         match group.members[0].distribution:
-            case "normal":
-                return draw.standard_normal(count)
             case "rectangular":
                 return draw.uniform(-math.sqrt(3.0), math.sqrt(3.0), count)
             case "triangular":
                 return draw.triangular(-math.sqrt(6.0), 0.0, math.sqrt(6.0), count)
-            case "student-t":
+            case "normal" | "student-t":
+                # a normal error of which the size is known from few observations (6.4.9.2 and 6.4.9.7)
                 freedom = group.degrees_of_freedom
                 return draw.standard_t(freedom, count) if math.isfinite(freedom) else draw.standard_normal(count)
 

@@ -5,14 +5,13 @@ from __future__ import annotations
 import math
 from typing import Any
 
+from controller.commands.budgetlines import comparison_words, difference_words
 from controller.commands.output import decimals
 from controller.report.tables import Table
 from controller.report.wording import DASH, number, with_uncertainty
 
 #: more degrees of freedom than this are as good as infinitely many
 _MANY_DEGREES = 1000.0
-#: Student's t has no variance with so few degrees of freedom
-_NO_VARIANCE = 2.0
 
 
 def budget_table(amount: dict[str, Any] | None) -> Table | None:
@@ -46,7 +45,7 @@ def _whole(whole: dict[str, Any], rows: list[dict[str, Any]], amount: dict[str, 
     total = number(amount.get("standard_uncertainty"), _places(amount))
     made.append(("combined standard uncertainty", "", "", unit, "", "", "", total, "100 %"))
     heads = ("Quantity", "Value", "u", "Unit", "Distribution", "ν", "Sensitivity", f"Contribution / {unit}", "Share")
-    parts = (_coverage(amount, whole), _monte_carlo(whole, rows, amount), _shared(rows), _taken_as_exact(rows))
+    parts = (_coverage(amount, whole), _monte_carlo(whole, amount), _shared(rows), _taken_as_exact(rows))
     note = " ".join(filter(None, parts))
     return Table(caption="Uncertainty budget", heads=heads, rows=tuple(made), numeric=(1, 2, 5, 6, 7, 8), note=note)
 
@@ -94,27 +93,27 @@ def _coverage(amount: dict[str, Any], whole: dict[str, Any]) -> str:
     )
 
 
-def _monte_carlo(whole: dict[str, Any], rows: list[dict[str, Any]], amount: dict[str, Any]) -> str:
+def _monte_carlo(whole: dict[str, Any], amount: dict[str, Any]) -> str:
     """Monte Carlo (GUM Supplement 1) beside the law of propagation, in a sentence."""
     found = whole.get("monte_carlo")
     if not isinstance(found, dict):
         return ""
     places = _places(amount)
-    value, u = number(found.get("value"), places), number(found.get("standard_uncertainty"), places)
-    word = {True: "both agree", False: "they DIFFER by more than the numerical tolerance", None: "not compared"}
-    few = [row for row in rows if (row.get("degrees_of_freedom") or math.inf) <= _NO_VARIANCE]
-    why = ""
-    if few and found.get("agrees") is False:
-        freedom = number(few[0]["degrees_of_freedom"])
-        why = (
-            f" The quantity {few[0].get('quantity')} has {freedom} degrees of freedom, too few for Student's t to have "
-            "a variance: compare the intervals."
-        )
+    value, u = number(found.get("value"), places), found.get("standard_uncertainty")
     low, high = [number(end, places) for end in found.get("interval") or (None, None)]
-    return (
-        f"Monte Carlo (GUM Supplement 1, {found.get('trials')} trials): {value}, u = {u}, interval {low} to {high}; "
-        f"{word.get(found.get('agrees'), 'not compared')}.{why}"
+    given = [number(end, places) for end in found.get("given_interval") or ()]
+    probability = found.get("coverage_probability")
+    covers = "" if probability is None else f"{100.0 * float(probability):.3g} % "
+    head = (
+        f"Monte Carlo (GUM Supplement 1, {found.get('trials')} trials): {value}"
+        + ("" if u is None else f", u = {number(u, places)}")
+        + f", {covers}interval {low} to {high}"
     )
+    if found.get("agrees") is None:
+        return head + "; not compared."
+    beside = f" ({given[0]} to {given[1]})" if given else ""
+    words = [f"{head}; {comparison_words(found)}{beside}.", *difference_words(found)]
+    return " ".join(words)
 
 
 def _exact(row: dict[str, Any]) -> bool:

@@ -98,12 +98,24 @@ def test_the_whole_budget_is_shown_with_its_monte_carlo() -> None:
         "degrees_of_freedom": None, "sensitivity": 4.893, "contribution": -0.004893, "share": 0.36,
         "shared_id": "burette 7 gain",
     }  # fmt: skip
-    check = {"value": 4.89, "standard_uncertainty": 0.0081, "interval": [4.87, 4.91], "trials": 1000, "agrees": False}
+    check = {
+        "value": 4.89,
+        "standard_uncertainty": 0.0081,
+        "interval": [4.87, 4.91],
+        "trials": 1000,
+        "agrees": False,
+        "given_interval": [4.8723, 4.9077],
+        "width_ratio": 1.13,
+        "fewest_degrees_of_freedom": 3.0,
+        "coverage_probability": 0.95,
+    }
     whole = {"rows": [row], "monte_carlo": check, "coverage_probability": 0.95, "degrees_of_freedom": 12.0}
     table = budget_table({"unit": "g/L", "standard_uncertainty": 0.0081, "coverage_factor": 2.18, "budget": whole})
     assert table is not None
     assert table.rows[0] == ("burette gain", "1.0000", "0.0010", "1", "normal", "∞", "4.89", "0.00489", "36.0 %")
-    assert "DIFFER" in table.note
+    assert "95 % interval 4.87000 to 4.91000; 13 % wider than the given one (4.87230 to 4.90770)." in table.note
+    assert "only 3 degrees of freedom" in table.note
+    assert "make more replicates" in table.note
     assert "burette gain (burette 7 gain)" in table.note
     assert "12 effective degrees of freedom" in table.note
 
