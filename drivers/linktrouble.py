@@ -34,4 +34,11 @@ def failed(where: str, failure: Exception) -> DeviceError:
     """The port failed while it was open."""
     if takes_no_bytes(failure):
         return DeviceSilentError(f"takes no bytes within {WRITE_DEADLINE_S:g} s", where=where, remedy=_SILENT_REMEDY)
+    if "socket://" in where:
+        return gone(
+            where,
+            f"the other end hung up ({told_of(failure)})",
+            "Check the cable, that it is served, and that no other program is connected (a line behind TCP has one "
+            "user), then go on",
+        )
     return gone(where, f"the port failed ({told_of(failure)})", "Check the cable and the supply, then go on")

@@ -32,24 +32,45 @@ def told_of(failure: Exception) -> str:
 
 
 def why_not_opened(url: str, failure: Exception) -> tuple[str, str]:
-    """Return what is wrong with a port that cannot be opened, and the remedy, as far as this computer tells."""
+    """Return what is wrong with a port that cannot be opened, and the remedy, as far as this computer tells.
+
+    Another program is named only where the system says that the port is in use: one may well hold a port open that
+    fails for another reason.
+    """
     number = _error_number(failure)
-    if "://" in url or number is None:
+    if "://" in url:
+        return _address_failure(url, failure, number)
+    if number is None:
         return f"cannot be opened ({told_of(failure)})", GENERAL
     said = os.strerror(number).lower()
-    what = f"cannot be opened ({said})"
     if number in (errno.EACCES, errno.EPERM) and sys.platform == "win32":
-        return what, "Another program has it open, most likely: close it there"
+        return f"cannot be opened ({said})", "Another program has it open, most likely: close it there"
     if number in (errno.EACCES, errno.EPERM):
         return f"this account may not use it ({said})", _permission_remedy(url)
-    if number == errno.ENOENT:
-        return what, _absent_remedy(url)
-    owner = owner_of(url)
-    if owner is not None or number in (errno.EBUSY, errno.EAGAIN):
+    if number in (errno.ENOENT, errno.ENXIO, errno.ENODEV):
+        return f"cannot be opened ({said})", _absent_remedy(url)
+    if number in (errno.ENOTTY, errno.EISDIR, errno.ENOTDIR):
+        return f"is no serial port ({said})", "Name one from `halfdrop bench ports` in the bench file"
+    if number in (errno.EBUSY, errno.EAGAIN):
+        owner = owner_of(url)
         holder = f"{owner[1]} (process {owner[0]})" if owner else "another program, perhaps of another account"
         remedy = _UDEV_RULE if owner and owner[1].startswith(_MODEM_MANAGER) else "Close it there"
         return f"cannot be opened: in use by {holder}", remedy
-    return what, GENERAL
+    return f"cannot be opened ({said})", GENERAL
+
+
+def _address_failure(url: str, failure: Exception, number: int | None) -> tuple[str, str]:
+    scheme, _, place = url.partition("://")
+    if scheme == "socket" and not place.rpartition(":")[2].split("?")[0].split("/")[0].isdigit():
+        return "the address has no port number", "Write it as socket://HOST:NUMBER"
+    if number == errno.ECONNREFUSED:
+        return (
+            "nobody listens there (connection refused)",
+            "Switch on or start what serves it (`halfdrop bench serve` for a simulated one); check host and number",
+        )
+    if isinstance(failure, ValueError):
+        return f"is no address that can be opened ({told_of(failure)})", "Write it as socket://HOST:NUMBER, or a path"
+    return f"cannot be opened ({told_of(failure)})", GENERAL
 
 
 def owner_of(path: str) -> tuple[int, str] | None:
@@ -92,6 +113,8 @@ def _error_number(failure: Exception) -> int | None:
         number = getattr(seen, "errno", None)
         if isinstance(number, int):
             return number
+        if type(seen).__module__ == "termios" and seen.args and isinstance(seen.args[0], int):
+            return seen.args[0]
         if isinstance(seen, PermissionError) or "Access is denied" in str(seen):
             return errno.EACCES
         if isinstance(seen, FileNotFoundError):

@@ -9,9 +9,13 @@ import sys
 import pytest
 
 from drivers import portfailure
+from drivers.clock import SystemClock
+from drivers.errors import DeviceGoneError
+from drivers.link import open_link
 from drivers.portfailure import is_port_failure, owner_of, why_not_opened
 from drivers.ports import PortFinder, is_address, named_ports
 from drivers.serialport import SerialPort
+from simulators.port import VirtualPorts
 
 
 def port(path, serial=None):
@@ -121,6 +125,65 @@ def test_a_missing_port_points_at_the_list():
     what, remedy = why_not_opened("/dev/ttyUSB0", wrapped(errno.ENOENT))
     assert what == "cannot be opened (no such file or directory)"
     assert "halfdrop bench ports" in remedy
+
+
+def test_another_program_is_named_only_where_the_port_is_in_use(monkeypatch):
+    monkeypatch.setattr(portfailure, "owner_of", lambda path: (4711, "terminal"))
+    for number in (errno.ENOENT, errno.ENXIO, errno.ENOTTY, errno.EIO, errno.EACCES):
+        told = " ".join(why_not_opened("/dev/null", wrapped(number)))
+        assert "terminal" not in told, number
+    assert "terminal" in why_not_opened("/dev/null", wrapped(errno.EAGAIN))[0]
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="paths of devices")
+@pytest.mark.parametrize("what", ["/dev/null", "file", "folder"])
+def test_what_is_no_serial_port_is_called_so(tmp_path, what):
+    path = tmp_path if what == "folder" else tmp_path / "file" if what == "file" else what
+    if what == "file":
+        path.touch()
+    with pytest.raises(DeviceGoneError, match=r"is no serial port.*bench ports"):
+        open_link(str(path), clock=SystemClock(), device="pump")
+
+
+@pytest.mark.parametrize(
+    ("url", "words"),
+    [
+        ("socket://127.0.0.1", "no port number.*socket://HOST:NUMBER"),
+        ("socket://127.0.0.1:1", "nobody listens there.*bench serve"),
+        ("apple://x", "no address that can be opened"),
+    ],
+)
+def test_an_address_that_cannot_be_opened_says_what_to_write(url, words):
+    with pytest.raises(DeviceGoneError, match=words):
+        open_link(url, clock=SystemClock(), device="pump")
+
+
+def test_the_second_user_of_a_served_port_is_told_of_the_first():
+    with VirtualPorts(SystemClock()) as ports:
+        port = ports.add("one-user", Answers(), "tcp")
+        first = open_link(port.url, clock=SystemClock(), device="pump")
+        first.send(b"hello\n")
+        assert first.receive(first.line_s() + 2.0) == b"yes"
+        second = open_link(port.url, clock=SystemClock(), device="pump")
+        with pytest.raises(DeviceGoneError, match=r"hung up.*has one user"):
+            second.receive(second.line_s() + 2.0)
+        first.send(b"hello\n")
+        assert first.receive(first.line_s() + 2.0) == b"yes"
+        first.close()
+        second.close()
+
+
+class Answers:
+    """Says yes to whatever comes."""
+
+    def feed(self, data, at_s):
+        return b"yes\n"
+
+    def advance(self, at_s):
+        return b""
+
+    def next_event_s(self):
+        return float("inf")
 
 
 def test_a_url_is_told_as_it_failed():

@@ -112,7 +112,7 @@ def test_aliases_that_would_unfold_are_never_followed() -> None:
     _, traps = mapping("\n".join(lines))
     assert sum("alias" in trap.text for trap in traps) >= 40  # of 90; a file of nothing but problems is told in part
     assert len(traps) == MOST_PROBLEMS + 1
-    assert sum("anchor" in trap.text for trap in traps) == 10
+    assert sum("anchor" in trap.text for trap in traps) >= 5
 
 
 def test_every_trap_is_found_in_one_reading() -> None:
