@@ -15,8 +15,8 @@ from controller.calibration.burette import DELIVERIES, FRACTIONS, default_limits
 from controller.calibration.planning import common, probe_of, vessel_of
 from controller.calibration.plans import BurettePlan, WeighingSeries
 from controller.calibration.store import Calibration
-from controller.planning.runplan import PumpAccount
-from controller.titration.plan import Pump, Question
+from controller.planning.pumpplan import PumpAccount, planned_pump
+from controller.titration.plan import Question
 from drivers.absent import ABSENT
 
 BURETTE_QUESTIONS = (
@@ -84,7 +84,7 @@ def plan_burette(
         method_title="Gravimetric check of the burette (ISO 8655-6)",
         due_days=rules.days,
         probe=probe_of(bench, ABSENT.key),
-        pump=_pump(bench, pump),
+        pump=planned_pump(bench, pump),
         vessel=vessel_of(bench, capacity_ml=bench.vessel.capacity_ml),
         questions=BURETTE_QUESTIONS if readings_g is None else (),
         seed=seed,
@@ -103,25 +103,6 @@ def plan_burette(
         random_limit_ul=rules.random_ul or (usual.random_ul if usual else math.inf),
         limits_source="bench file" if usual is None else usual.source,
         correct=rules.correct,
-    )
-
-
-def _pump(bench: BenchSettings, account: PumpAccount) -> Pump:
-    settings = bench.pump
-    return Pump(
-        identity=account.identity,
-        start_count=account.start_count,
-        last_dose_number=account.last_dose_number,
-        step_ml=settings.step_ml,
-        rate_ml_min=settings.rate_ml_min,
-        syringe_ml=settings.syringe_ml,
-        contents_ml=account.contents_ml,
-        reservoir_ml=account.reservoir_ml,
-        refill=settings.refill,
-        position_sd_ml=settings.position_sd_ml,
-        position_correlation_ml=settings.position_correlation_ml,
-        dose_sd_ml=settings.dose_sd_ml,
-        gain_standard_uncertainty=settings.gain_standard_uncertainty,
     )
 
 
