@@ -41,6 +41,7 @@ class BufferLotSettings(Settings):
         0, 0.5, "its standard uncertainty (expanded uncertainty / coverage factor)", default=None
     )
     certificate_temperature_c: float = number(0, 60, "temperature of the certificate", default=25.0)
+    certificate: str | None = words("number of its certificate", default=None)
     expires: Day | None = Field(default=None, description="last day of use, unopened")
     opened: Day | None = Field(default=None, description="day of opening")
     days_after_opening: int | None = number(
@@ -76,6 +77,9 @@ class ProbeRules(Settings):
     compendial: bool = Field(default=True, description="whether the limits of USP <791> are held against it as well")
     stability_window_s: float = number(5, 600, "time over which a buffer reading must be stable", default=30.0)
     stability_limit_mv_min: float = number(None, 60, "largest drift of a stable reading", default=1.0, above=0)
+    stability_scatter_mv: float = number(
+        None, 60, "largest standard deviation of the readings in a buffer", default=2.0, above=0
+    )
     longest_wait_s: float = number(10, 3600, "time after which an unstable reading is refused", default=180.0)
     largest_temperature_difference_c: float = number(
         None, 50, "difference of sample and buffers that warns", default=5.0, above=0

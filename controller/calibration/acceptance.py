@@ -115,7 +115,7 @@ def _findings(line: CalibrationLine, rule: ProbeLimits, check: CheckResult | Non
     if check is not None and rule.check_ph is not None:
         name = f"error in check buffer {check.buffer}"
         found.append(_within(rule, name, check.error_ph, rule.check_ph, check.standard_uncertainty_ph))
-    if check is not None and rule.check_between:
+    if check is not None and rule.check_between and not line.offset_only:
         found.append(
             Finding(
                 limits=rule.name,
@@ -124,6 +124,7 @@ def _findings(line: CalibrationLine, rule: ProbeLimits, check: CheckResult | Non
                 low=line.lowest_ph,
                 high=line.highest_ph,
                 unit="",
+                condition=True,
             )
         )
     return found

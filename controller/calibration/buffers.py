@@ -139,6 +139,12 @@ def recognise(
     return Recognition(lot_id=nearest.lot_id, candidates=(nearest.lot_id,), reason=reason)
 
 
+def _leads(one: BufferLot, other: BufferLot, reading: DeclaredReading) -> str:
+    """Reversed leads turn the sign of every potential: they mimic a swap of buffers on both sides of pH 7 only."""
+    middle = (one.ph_at(reading.temperature_c) + other.ph_at(reading.temperature_c)) / 2.0
+    return ", or the probe's leads are" if abs(middle - 7.0) < LEAST_DISTANCE_PH / 4.0 else ""
+
+
 def misplaced(readings: Sequence[DeclaredReading], lots: Sequence[BufferLot]) -> tuple[Swap, ...]:
     """Return readings that fit another buffer of the set than declared; two that fit each other's are one swap.
 
@@ -159,7 +165,7 @@ def misplaced(readings: Sequence[DeclaredReading], lots: Sequence[BufferLot]) ->
         names = known[declared].buffer.name, known[found].buffer.name
         if fits.get(found) == declared:
             if declared < found:
-                text = f"{names[0]} and {names[1]} are swapped, or the probe's leads are"
+                text = f"{names[0]} and {names[1]} are swapped{_leads(known[declared], known[found], readings[0])}"
                 swaps.append(Swap(lot_ids=(declared, found), pair=True, text=text))
         else:
             text = f"declared as {names[0]}, the reading is that of {names[1]}"

@@ -8,7 +8,10 @@ from dataclasses import dataclass
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Finding:
-    """One figure against one limit; `low` (None: only an upper limit) and `high` are inclusive, in `unit`."""
+    """One figure against one limit; `low` (None: only an upper limit) and `high` are inclusive, in `unit`.
+
+    `condition`: it is met or not, and how near to its limit it lies means nothing (a check buffer between the others).
+    """
 
     limits: str
     quantity: str
@@ -17,6 +20,7 @@ class Finding:
     high: float
     unit: str
     standard_uncertainty: float | None = None
+    condition: bool = False
 
     @property
     def passed(self) -> bool:
@@ -26,6 +30,8 @@ class Finding:
     @property
     def margin(self) -> float:
         """Distance to the limit as a part of the room there is: 1 at the best place, 0 at a limit, negative beyond."""
+        if self.condition and self.passed:
+            return 1.0
         if self.low is None:
             room, distance = abs(self.high), self.high - self.value
         else:

@@ -146,6 +146,7 @@ def plan_probe(
             window_s=probe.stability_window_s,
             limit_mv_min=probe.stability_limit_mv_min,
             longest_s=probe.longest_wait_s,
+            largest_scatter_mv=probe.stability_scatter_mv,
             lowest_temperature_c=probe.lowest_buffer_temperature_c,
             highest_temperature_c=probe.highest_buffer_temperature_c,
         ),
@@ -203,6 +204,10 @@ def _planned(one: BufferLotSettings, today: dt.date, *, refuse: bool) -> Planned
         standard_uncertainty_ph=lot.standard_uncertainty_ph,
         certificate_temperature_c=one.certificate_temperature_c,
         warnings=tuple(problems),
+        certificate=one.certificate,
+        expires=one.expires,
+        opened=one.opened,
+        days_after_opening=days if one.opened else None,
     )
 
 

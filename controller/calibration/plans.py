@@ -48,6 +48,10 @@ class PlannedBuffer:
     standard_uncertainty_ph: float
     certificate_temperature_c: float
     warnings: tuple[str, ...] = ()
+    certificate: str | None = None
+    expires: str | None = None
+    opened: str | None = None
+    days_after_opening: int | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -57,6 +61,7 @@ class Stability:
     window_s: float
     limit_mv_min: float
     longest_s: float
+    largest_scatter_mv: float
     lowest_temperature_c: float
     highest_temperature_c: float
 

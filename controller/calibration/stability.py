@@ -1,7 +1,7 @@
 """A reading in a buffer: stable, with its mean and uncertainty, or not within the time allowed.
 
 Stable: over the window the straight line through the readings drifts less than the limit, and so it does between the
-means of both halves.
+means of both halves; and the readings scatter less than their limit.
 """
 
 from __future__ import annotations
@@ -74,11 +74,7 @@ def read_until_stable(
             if found is not None:
                 return found
             if seen.at_s - readings[0].at_s >= rule.longest_s:
-                drift = _drift_mv_min(_window(readings, rule.window_s))
-                return NotStable(
-                    reason=f"after {rule.longest_s:g} s the reading still drifts by {drift:+.1f} mV/min, allowed: "
-                    f"{rule.limit_mv_min:g} mV/min"
-                )
+                return NotStable(reason=_why_not(_window(readings, rule.window_s), rule))
         elif not isinstance(seen, Command):
             failed += 1
             if failed >= MOST_FAILED:
@@ -91,6 +87,19 @@ def read_until_stable(
             return NotStable(reason=waited.what, stopped=True)
 
 
+def _why_not(window: Sequence[Reading], rule: Stability) -> str:
+    scatter = _scatter_mv(window)
+    if scatter > rule.largest_scatter_mv:
+        return (
+            f"after {rule.longest_s:g} s the reading still scatters by {scatter:.1f} mV, allowed: "
+            f"{rule.largest_scatter_mv:g} mV; look at plug, cable and screen"
+        )
+    return (
+        f"after {rule.longest_s:g} s the reading still drifts by {_drift_mv_min(window):+.1f} mV/min, allowed: "
+        f"{rule.limit_mv_min:g} mV/min"
+    )
+
+
 def _window(readings: Sequence[Reading], window_s: float) -> list[Reading]:
     last_s = readings[-1].at_s
     return [one for one in readings if last_s - one.at_s <= window_s]
@@ -101,6 +110,8 @@ def _judged(readings: Sequence[Reading], rule: Stability, resolution_mv: float) 
         return None
     window = _window(readings, rule.window_s)
     if len(window) < 6:
+        return None
+    if _scatter_mv(window) > rule.largest_scatter_mv:
         return None
     drift = _drift_mv_min(window)
     values = np.array([one.potential_mv for one in window])
@@ -130,3 +141,9 @@ def _drift_mv_min(window: Sequence[Reading]) -> float:
     values = np.array([one.potential_mv for one in window])
     times = times - times.mean()
     return 60.0 * float(times @ (values - values.mean())) / float(times @ times)
+
+
+def _scatter_mv(window: Sequence[Reading]) -> float:
+    """Standard deviation of a reading, from successive differences: drift is no scatter."""
+    values = np.array([one.potential_mv for one in window])
+    return float(np.sqrt(np.mean(np.diff(values) ** 2) / 2.0)) if len(values) > 1 else 0.0

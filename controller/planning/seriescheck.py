@@ -10,9 +10,9 @@ from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from controller.assembly import Opening
 from controller.benchwork.calibrationbench import open_probe
+from controller.calibration.buffer_reading import lot_of
 from controller.calibration.planning import plan_probe
 from controller.calibration.plans import ProbePlan
-from controller.calibration.probe_session import lot_of
 from controller.calibration.stability import NotStable, Stable, read_until_stable
 from controller.guard import Guard
 from controller.journal import Journal

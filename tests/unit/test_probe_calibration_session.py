@@ -12,9 +12,10 @@ from configs.benchfile import BenchSettings
 from configs.calibrating import BufferLotSettings
 from configs.errors import HalfdropError
 from configs.settings import shipped_bench
+from controller.calibration.buffer_reading import lot_of
 from controller.calibration.planning import PROBE_QUESTIONS, plan_probe
 from controller.calibration.plans import ProbePlan
-from controller.calibration.probe_session import calibrate_probe, lot_of
+from controller.calibration.probe_session import calibrate_probe
 from controller.titration.actions import (
     Action,
     Answered,
@@ -149,10 +150,10 @@ def test_a_broken_membrane_is_no_calibration() -> None:
     table = Table(plan(lots=("B7-204",)), truth=dead)
     one = table.calibrate()["calibration"]
     assert (one["passed"], one["accepted"]) == (False, False)  # one buffer cannot tell, and is never a pass
-    table = Table(plan(), truth=dead, answers={f"buffer-{n}-is{a}": "B4-118" for n in (1, 2, 3) for a in ("",)})
-    result = table.calibrate()
+    result = Table(plan(), truth=dead).calibrate()
     assert not result["calibration"]["accepted"]
-    assert "measured already" in result["reason"] or "fits no buffer" in result["reason"]
+    assert "was measured already" in result["reason"]
+    assert "the probe does not answer to pH (membrane broken, plug loose, cap still on)" in result["reason"]
 
 
 def test_a_low_slope_names_the_limit_that_decided() -> None:
@@ -175,6 +176,49 @@ def test_one_buffer_adjusts_the_offset_and_is_never_a_pass() -> None:
     assert found["line"]["offset_mv"] == pytest.approx(3.0, abs=0.5)
     assert not found["passed"]
     assert "one buffer adjusts the offset only" in found["verdict"]
+    checked = Table(plan(lots=("B7-204",))).calibrate()["calibration"]  # the check buffer cannot lie between one
+    assert checked["verdict"] == "not a pass: one buffer adjusts the offset only; measure two or more to calibrate"
+
+
+def test_the_figure_nearest_to_its_limit_is_named_not_a_condition_that_is_met() -> None:
+    found = Table(plan(), truth=ElectrodeTruth(slope_fraction=0.955, noise_sd_mv=0.2)).calibrate()["calibration"]
+    assert found["passed"]
+    assert found["verdict"].startswith("passed; nearest to its limit: slope 95.")
+    assert "house limits" in found["verdict"]
+
+
+def test_reversed_leads_are_thought_of_where_they_could_be_it() -> None:
+    around_seven = Table(plan(), answers={"buffer-1": "B10-077", "buffer-3": "B4-118"}).calibrate()
+    assert any("swapped, or the probe's leads are" in text for text in around_seven["warnings"])
+    below = Table(plan(), answers={"buffer-1": "B7-204", "buffer-2": "B4-118"}).calibrate()
+    assert not any("leads" in text for text in below["warnings"])
+
+
+def test_a_reading_that_scatters_is_not_taken_however_little_it_drifts() -> None:
+    result = Table(plan(), truth=ElectrodeTruth(slope_fraction=0.99, noise_sd_mv=20.0)).calibrate()
+    assert not result["calibration"]["accepted"]
+    assert "still scatters by" in result["reason"]
+    assert "allowed: 2 mV; look at plug, cable and screen" in result["reason"]
+
+
+def test_the_record_holds_certificate_and_dates_of_each_bottle() -> None:
+    made = shipped_bench()
+    bottles = tuple(
+        one.model_copy(update={"certificate": "CH-2026-41"}) if one.lot_id == "B7-204" else one for one in made.buffers
+    )
+    found = Table(plan(bench=made.model_copy(update={"buffers": bottles}))).calibrate()["calibration"]
+    seven = next(one for one in found["buffers"] if one["lot_id"] == "B7-204")
+    assert (seven["certificate"], seven["opened"], seven["expires"]) == ("CH-2026-41", "2026-11-20", "2028-06-30")
+
+
+def test_a_buffer_outside_its_table_is_refused_by_name() -> None:
+    hot = plan(rules={"probe": shipped_bench().calibration_rules.probe.model_copy(
+        update={"highest_buffer_temperature_c": 60.0})})  # fmt: skip
+    table = Table(hot)
+    table.shelf.temperature_c = 55.0
+    result = table.calibrate()
+    assert not result["calibration"]["accepted"]
+    assert "55 °C, allowed: 0 to 50 °C" in result["reason"]
 
 
 def test_a_check_buffer_left_out_is_no_pass() -> None:
