@@ -61,7 +61,7 @@ class Stability:
     window_s: float
     limit_mv_min: float
     longest_s: float
-    largest_scatter_mv: float
+    largest_scatter_mv: float = 2.0
     lowest_temperature_c: float
     highest_temperature_c: float
 
