@@ -57,6 +57,7 @@ def blank_of(
     detection_limit_ml: float,
     end_point_ph: float | None,
     validity: Validity | None = None,
+    own_standard_uncertainty_ml: float = 0.0,
 ) -> Blank:
     """Return the blank of replicates; None stands for "not detectable" and counts as 0.
 
@@ -69,6 +70,7 @@ def blank_of(
         detection_limit_ml: smallest volume that would have been seen, above 0.
         end_point_ph: that it was titrated to; None: equivalence point.
         validity: its dates.
+        own_standard_uncertainty_ml: what the volume of one blank is known to by its own curve.
 
     Raises:
         BlankError: no blank, a negative one, or a detection limit not above 0.
@@ -89,6 +91,7 @@ def blank_of(
     scatter = deviation / math.sqrt(count) if deviation is not None else 0.0
     unseen = any(volume is None for volume in volumes_ml) or count == 1
     stated = detection_limit_ml / math.sqrt(3.0) if unseen else 0.0
+    stated = max(stated, own_standard_uncertainty_ml / math.sqrt(count))
     return Blank(
         lot_id=lot_id,
         mean_ml=mean_of(values),

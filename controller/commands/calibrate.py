@@ -1,4 +1,4 @@
-"""halfdrop calibrate: probe, burette, titrant and blank, each into a record of its own, and what is in force."""
+"""halfdrop calibrate: probe, burette and titrant, each into a record of its own; what all calibrations share."""
 
 from __future__ import annotations
 
@@ -32,7 +32,7 @@ from controller.labfolder import Lab, find_lab
 from controller.lock import lock_device, lock_lab
 from controller.planning.inforce import utc_day
 from controller.planning.lots import Preparation, SettledLot, titrant_lot
-from controller.planning.settled_blanks import blank_lot, response_record
+from controller.planning.settled_blanks import response_record
 from controller.records.record import read_record
 from controller.records.recordfile import new_record
 from controller.runner import run as carry_out
@@ -49,7 +49,7 @@ DONE, NOT_TRUSTED = 0, 1
 def probe(given: argparse.Namespace) -> int:
     """Calibrate the probe with the bench's buffers."""
     lab, bench = _lab_and_bench(given)
-    opening, headless = _opening(given, lab, bench)
+    opening, headless = opening_of(given, lab, bench)
     lots = tuple(word.strip() for word in given.lots.split(",")) if given.lots else ()
     stop = StopSwitch()
     with ExitStack() as held:
@@ -81,7 +81,7 @@ def probe(given: argparse.Namespace) -> int:
 def burette(given: argparse.Namespace) -> int:
     """Check the burette by weighing, or from balance readings in a CSV file."""
     lab, bench = _lab_and_bench(given)
-    opening, headless = _opening(given, lab, bench)
+    opening, headless = opening_of(given, lab, bench)
     readings = read_weighings(Path(given.weighings)) if given.weighings else None
     water_c = given.water_temperature_c
     if water_c is None:
@@ -127,7 +127,7 @@ def titrant(given: argparse.Namespace) -> int:
     picked = chosen(given, lab_needed=True)
     assert picked.lab is not None
     lab, method, bench = picked.lab.writable(), picked.method, picked.bench
-    opening, headless = _opening(given, lab, bench)
+    opening, headless = opening_of(given, lab, bench)
     lot_id = given.lot_id or method.titrant.lot_id
     if lot_id is None:
         raise HalfdropError("the lot has no name", where="titrant", remedy="Give --lot-id, or lot_id in the method")
@@ -151,33 +151,7 @@ def titrant(given: argparse.Namespace) -> int:
             carbonate_run=record_path(given.carbonate_run, given) if given.carbonate_run else None,
             preparation=Preparation(text=given.preparation or "", prepared_on=given.prepared_on, expires=given.expires),
         )
-        return _settled(settled, opened, lab, given)
-
-
-def blank(given: argparse.Namespace) -> int:
-    """Settle a blank from runs without sample, or from volumes typed in."""
-    picked = chosen(given, lab_needed=True)
-    assert picked.lab is not None
-    lab, method, bench = picked.lab.writable(), picked.method, picked.bench
-    opening, _ = _opening(given, lab, bench)
-    lot_id = given.lot_id or method.blank_lot_id
-    if lot_id is None:
-        raise HalfdropError("the blank has no name", where="blank", remedy="Give --lot-id, or blank_lot_id there")
-    if bool(given.runs_from) == bool(given.volumes_ml):
-        raise HalfdropError(
-            "either runs or volumes are needed", where="calibrate blank", remedy="Give --from RUN ..., or --volumes-ml"
-        )
-    with open_desk(bench, opening=opening) as opened:
-        settled = blank_lot(
-            method,
-            bench,
-            records=[record_path(name, given) for name in given.runs_from or ()],
-            volumes_ml=_volumes(given.volumes_ml) if given.volumes_ml else (),
-            lot_id=lot_id,
-            today=utc_day(opened.clock.utc_s()),
-            last=in_force(lab.calibrations, "blank", lot_id),
-        )
-        return _settled(settled, opened, lab, given)
+        return settle(settled, opened, lab, given)
 
 
 def _titrated(given: argparse.Namespace, picked: Chosen, lab: Lab, *, opening: Opening, headless: bool) -> list[Path]:
@@ -196,6 +170,7 @@ def _titrated(given: argparse.Namespace, picked: Chosen, lab: Lab, *, opening: O
         headless=headless,
         operator_name=given.operator,
         response_check=ResponseCheck() if given.response_check else None,
+        attended=given.attended,
     )
     for result in results:
         if result.outcome != "completed" or not result.result["end_points"]:
@@ -229,7 +204,8 @@ def _response(bench: BenchSettings, path: Path, opened: CalibrationBench, lab: L
     say("\n".join(calibration_lines(result.result)))
 
 
-def _settled(settled: SettledLot, opened: CalibrationBench, lab: Lab, given: argparse.Namespace) -> int:
+def settle(settled: SettledLot, opened: CalibrationBench, lab: Lab, given: argparse.Namespace) -> int:
+    """Take a lot or blank into its record, tell it, and return the exit status."""
     core = settle_lot(
         settled.plan,
         verdict=settled.verdict,
@@ -302,7 +278,12 @@ def _lab_and_bench(given: argparse.Namespace) -> tuple[Lab, BenchSettings]:
     return lab, load_bench(Path(given.bench) if given.bench else lab.bench)
 
 
-def _opening(given: argparse.Namespace, lab: Lab, bench: BenchSettings) -> tuple[Opening, bool]:
+def opening_of(given: argparse.Namespace, lab: Lab, bench: BenchSettings) -> tuple[Opening, bool]:
+    """Return how the bench is opened, and whether nobody is at the terminal.
+
+    Raises:
+        HalfdropError: nobody is there to answer its questions.
+    """
     answers = answers_of(given)
     unattended = given.headless or not sys.stdin.isatty()
     if getattr(given, "attended", False):
@@ -321,17 +302,3 @@ def _opening(given: argparse.Namespace, lab: Lab, bench: BenchSettings) -> tuple
         place=lab.path,
     )
     return opening, unattended
-
-
-def _volumes(text: str) -> list[float | None]:
-    volumes: list[float | None] = []
-    for word in (part.strip().casefold() for part in text.split(",")):
-        try:
-            volumes.append(None if word == "none" else float(word))
-        except ValueError:
-            raise HalfdropError(
-                f"got {word!r}, allowed: numbers in mL, or none where no end point was found",
-                where="--volumes-ml",
-                remedy="Write it as 0.012,none,0.009",
-            ) from None
-    return volumes

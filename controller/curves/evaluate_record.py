@@ -88,18 +88,27 @@ def _at_set_ph(plan: RunPlan, record: Record, curve: Curve) -> dict[str, Any] | 
     """The volume at the plan's set pH; None where it has none."""
     if plan.end_points.at_ph is None:
         return None
-    used = _used(record)
-    result = result_at_ph(
-        plan,
-        curve,
-        plan.end_points.at_ph,
-        beyond_ml=_beyond_points_ml(plan, record),
-        duration_s=float(used[-1]["at_s"] or 0.0) - float(used[0]["at_s"] or 0.0),
-    )
+    result = _result_at_ph(plan, record, curve, plan.end_points.at_ph)
     own = (record.closing or {}).get("result") or {}
     for point in result["end_points"]:
         _keep_doubts(point, own.get("end_points") or [], result["warnings"])
     return result
+
+
+def evaluate_points_at_ph(plan: RunPlan, record: Record, ph: float) -> tuple[Curve, dict[str, Any]]:
+    """Return a record's curve, and the JSON of `evaluate` for the volume at a pH of it, whatever its plan looked for.
+
+    Raises:
+        CurveError: there are too few points, or they make no curve.
+    """
+    curve = curve_of(plan, record, where=str(record.path))
+    return curve, _result_at_ph(plan, record, curve, ph)
+
+
+def _result_at_ph(plan: RunPlan, record: Record, curve: Curve, ph: float) -> dict[str, Any]:
+    used = _used(record)
+    lasted_s = float(used[-1]["at_s"] or 0.0) - float(used[0]["at_s"] or 0.0)
+    return result_at_ph(plan, curve, ph, beyond_ml=_beyond_points_ml(plan, record), duration_s=lasted_s)
 
 
 def _hold_against_run(

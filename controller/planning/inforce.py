@@ -13,14 +13,14 @@ from pathlib import Path
 from configs.benchfile import BenchSettings
 from configs.method import MethodSettings
 from controller.calibration.burette import titrant_volume_warning
-from controller.calibration.validity import Validity
+from controller.calibration.validity import SAME_END_POINT_PH, Validity, end_point_words
 from controller.planning.lot_in_force import lot_in_force, whole_uncertainty_mol_l
 from controller.planning.probe_in_force import calibration_in_force, response_in_force
 from controller.planning.stated import stated
 from controller.planning.taking import NotInForceError, Taking, day_of
 from controller.running.probe_left import LONG_S, ProbeLeft
 from controller.titration.plan import ProbeCalibration, ProbeResponse
-from controller.titration.traceability import BlankInForce, BuretteInForce, Traceability
+from controller.titration.traceability import BlankInForce, BlankVolume, BuretteInForce, Traceability
 
 __all__ = ["InForce", "NotInForceError", "find_in_force", "utc_day"]
 
@@ -132,8 +132,9 @@ class _Search:
                 remedy="Measure it with 'halfdrop calibrate blank', or leave blank_lot_id out of the method",
             )
         found = record.result
-        if found.get("end_point_ph") is not None:
-            problem = f"it was taken at pH {found['end_point_ph']:.2f}, the sample goes to the equivalence point"
+        at_ph, taken_at = self.method.end_points.at_ph, found.get("end_point_ph")
+        if at_ph is not None and (taken_at is None or abs(at_ph - taken_at) > SAME_END_POINT_PH):
+            problem = f"it was taken at {end_point_words(taken_at)}, the sample goes to pH {at_ph:.2f}"
             self.taking.doubt(where, [problem], "Repeat 'halfdrop calibrate blank'")
         return BlankInForce(
             lot_id=lot_id,
@@ -141,6 +142,11 @@ class _Search:
             standard_uncertainty_ml=found["standard_uncertainty_ml"],
             degrees_of_freedom=found["degrees_of_freedom"],
             record_sha256=record.sha256,
+            end_point_ph=taken_at,
+            ml_per_ph=found.get("ml_per_ph") or 0.0,
+            ph_standard_uncertainty=found.get("ph_standard_uncertainty") or 0.0,
+            probe_calibration=found.get("probe_calibration"),
+            course=tuple(BlankVolume(**one) for one in found.get("course") or ()),
         )
 
     def _standard(self) -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import datetime as dt
 import math
 from collections.abc import Sequence
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -16,6 +17,8 @@ from controller.calibration.findings import Finding, Verdict
 from controller.calibration.planning import common, no_pump, probe_of, vessel_of
 from controller.calibration.plans import BlankPlan, ResponsePlan
 from controller.calibration.store import Calibration
+from controller.calibration.validity import end_point_words
+from controller.planning.blank_runs import SeenBlank, mean_course, seen_at_ph
 from controller.planning.lots import SettledLot, closed_run, sources_of
 from controller.planning.responsecheck import response_of
 from controller.records.encoding import plan_from_json
@@ -36,22 +39,39 @@ def blank_lot(
     lot_id: str,
     today: dt.date,
     last: Calibration | None,
+    at_ph: float | None = None,
+    expires: str | None = None,
 ) -> SettledLot:
-    """Return a blank from runs without sample, or from volumes typed in; what found no end point is not detectable.
+    """Return a blank from runs without sample, or from volumes typed in.
+
+    Args:
+        method: of the samples that it is for.
+        bench: its rules.
+        records: runs without sample.
+        volumes_ml: typed in; None: not detectable.
+        lot_id: name of the blank.
+        today: of the settling.
+        last: the blank in force so far.
+        at_ph: where the sample's titration ends; None: nothing tells, an end point of the blank's own run counts.
+        expires: last day of use.
 
     Raises:
-        HalfdropError: no blank, or a negative one.
+        HalfdropError: no blank, a negative one, or a run that did not come to that pH.
     """
     rules = bench.calibration_rules.blank
-    volumes: list[float | None] = list(volumes_ml)
-    for path in records:
-        _, result = closed_run(path)
-        points = result["end_points"]
-        if not points and "no end point" not in str(result.get("reason")):
-            what = f"it ended before it could find one ({result.get('reason')})"
-            raise HalfdropError(what, where=path.stem, remedy="Leave it out, or titrate the blank again")
-        volumes.append(float(points[0]["volume_ml"]) if points else None)
-    found = blank_of(volumes, lot_id=lot_id, detection_limit_ml=rules.detection_limit_ml, end_point_ph=None)
+    seen = [_seen(path, at_ph, coarse_ml=rules.detection_limit_ml) for path in records]
+    volumes: list[float | None] = [*volumes_ml, *(one.volume_ml for one in seen)]
+    limits_ml = [one.detection_limit_ml for one in seen if one.detection_limit_ml is not None]
+    limit_ml = max(limits_ml) if limits_ml and not volumes_ml else rules.detection_limit_ml
+    told = any(one.probe_calibration for one in seen)  # by the course of their pH
+    end_point_ph = at_ph if told or method.end_points.at_ph is not None else None
+    found = blank_of(
+        volumes,
+        lot_id=lot_id,
+        detection_limit_ml=limit_ml,
+        end_point_ph=end_point_ph,
+        own_standard_uncertainty_ml=max((one.own_standard_uncertainty_ml for one in seen), default=0.0),
+    )
     plan = BlankPlan(
         **common("blank", lot_id, bench=bench, today=today, replaces=last),
         method_title=f"Blank of {method.title}",
@@ -64,18 +84,60 @@ def blank_lot(
         volumes_ml=tuple(volumes),
         method=method.name,
         titrant_lot_id=method.titrant.lot_id,
-        detection_limit_ml=rules.detection_limit_ml,
+        detection_limit_ml=limit_ml,
+        end_point_ph=end_point_ph,
+        expires=expires,
     )
     enough = Finding(limits="at least one", quantity="number of blanks", value=found.count, low=1, high=1e3, unit="")
     word = "not detectable: 0 mL" if not found.detectable else f"{found.mean_ml:.4f} mL"
-    text = f"blank {lot_id}: {word}, u = {found.standard_uncertainty_ml:.4f} mL, n = {found.count}"
+    spread = "" if found.standard_deviation_ml is None else f", s = {found.standard_deviation_ml:.4f} mL"
+    text = (
+        f"blank {lot_id} at {end_point_words(end_point_ph)}: {word}, u = {found.standard_uncertainty_ml:.4f} mL, "
+        f"n = {found.count}{spread}"
+    )
     return SettledLot(
         plan=plan,
         verdict=Verdict(findings=(enough,)),
         notes=(text,),
         warnings=("one blank alone: its uncertainty is that of the detection limit",) if found.count == 1 else (),
-        details=blank_to_json(found),
+        details={**blank_to_json(found), **_scale_to_json(seen)},
     )
+
+
+def _seen(path: Path, at_ph: float | None, *, coarse_ml: float) -> SeenBlank:
+    """What a run says at a pH; one that looked for equivalence in doses too coarse for that, by its end points."""
+    plan, result = closed_run(path)
+    if at_ph is not None and plan.end_points.at_ph is not None:
+        return seen_at_ph(path, at_ph)
+    if at_ph is not None:
+        with suppress(HalfdropError):  # its doses were too far apart, or it did not come there
+            found = seen_at_ph(path, at_ph)
+            if found.own_standard_uncertainty_ml <= coarse_ml:
+                return found
+    points = result["end_points"]
+    if not points and "no end point" not in str(result.get("reason")):
+        what = f"it ended before it could find one ({result.get('reason')})"
+        raise HalfdropError(what, where=path.stem, remedy="Leave it out, or titrate the blank again")
+    return SeenBlank(
+        volume_ml=float(points[0]["volume_ml"]) if points else None,
+        own_standard_uncertainty_ml=float(points[0]["standard_uncertainty_ml"]) if points else 0.0,
+        ml_per_ph=0.0,
+        ph_standard_uncertainty=0.0,
+        probe_calibration="",
+        course=(),
+        detection_limit_ml=None,
+    )
+
+
+def _scale_to_json(seen: Sequence[SeenBlank]) -> dict[str, Any]:
+    """What the blank's volume owes to the pH scale, and its volumes at other pH."""
+    one_scale = len({one.probe_calibration for one in seen}) == 1 and seen[0].probe_calibration
+    return {
+        "ml_per_ph": sum(one.ml_per_ph for one in seen) / len(seen) if seen else 0.0,
+        "ph_standard_uncertainty": max((one.ph_standard_uncertainty for one in seen), default=0.0),
+        "probe_calibration": seen[0].probe_calibration if one_scale else None,
+        "course": mean_course([one.course for one in seen]),
+    }
 
 
 def response_record(
