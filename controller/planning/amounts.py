@@ -24,7 +24,7 @@ from controller.planning.amountinputs import (
     titrant_of,
 )
 from controller.planning.endpointinputs import blank_of_run, end_point_named, end_point_ph_of, titration_of
-from controller.planning.ph_cover import add_ph_remarks
+from controller.planning.ph_cover import add_ph_remarks, sample_temperature_c
 from controller.titration.plan import ReportAs, RunPlan
 from controller.titration.points import calibration_ph_sd
 from controller.titration.traceability import Traceability
@@ -59,14 +59,16 @@ def amount_of_plan(plan: RunPlan, result: dict[str, Any]) -> dict[str, Any] | No
 def add_ph_uncertainty(plan: RunPlan, result: dict[str, Any]) -> None:
     """Add to each end point the standard uncertainty that the probe's calibration gives its pH.
 
-    pH = pH_iso - (E - E_iso) / (s k): of offset, slope and their covariance, at the temperature of the plan.
+    pH = pH_iso - (E - E_iso) / (s k): of offset, slope, their covariance and pH_iso, at the sample's
+    temperature.
     """
     calibration = plan.probe.calibration
     if calibration is None:
         return
+    temperature_c = sample_temperature_c(plan, result)
     for point in result["end_points"]:
         if point.get("ph") is not None and "ph_standard_uncertainty" not in point:
-            point["ph_standard_uncertainty"] = calibration_ph_sd(calibration, point["ph"], plan.chemistry.temperature_c)
+            point["ph_standard_uncertainty"] = calibration_ph_sd(calibration, point["ph"], temperature_c)
 
 
 def amount_of_replicates(plans: Sequence[RunPlan], results: Sequence[dict[str, Any]]) -> dict[str, Any]:

@@ -7,6 +7,9 @@ from typing import Any
 from controller.calibration.acceptance import ph_outside, temperature_warning
 from controller.titration.plan import CalibratedRange, RunPlan
 
+#: a temperature this near to the plan's was warned about before the run, where it had to be
+_TOLD_BEFORE_C = 0.5
+
 
 def add_ph_remarks(plan: RunPlan, result: dict[str, Any]) -> None:
     """Add to a result's warnings and notes what the calibration of the probe did not cover.
@@ -27,16 +30,22 @@ def add_ph_remarks(plan: RunPlan, result: dict[str, Any]) -> None:
         known = plan.traceability.warnings if plan.traceability is not None else ()
         if far not in known:  # else it was said before the run
             _add(result, "warnings", far)
-    lag = result.get("probe_lag")
-    measured_c = lag.get("temperature_c") if isinstance(lag, dict) else None
-    if isinstance(measured_c, float) and abs(measured_c - plan.chemistry.temperature_c) > 0.5:
+    sample_c = sample_temperature_c(plan, result)
+    if abs(sample_c - plan.chemistry.temperature_c) > _TOLD_BEFORE_C:
         warm = temperature_warning(
-            measured_c,
+            sample_c,
             buffers_c=covered.temperature_c,
             largest_difference_c=covered.largest_temperature_difference_c,
         )
         if warm is not None:
             _add(result, "warnings", f"probe calibration: {warm}")
+
+
+def sample_temperature_c(plan: RunPlan, result: dict[str, Any]) -> float:
+    """Return the temperature at which the sample's pH was computed: as measured, else the plan's."""
+    lag = result.get("probe_lag")
+    measured_c = lag.get("temperature_c") if isinstance(lag, dict) else None
+    return float(measured_c) if isinstance(measured_c, int | float) else plan.chemistry.temperature_c
 
 
 def target_warning(ph: float, covered: CalibratedRange) -> str | None:

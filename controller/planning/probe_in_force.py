@@ -52,8 +52,9 @@ def calibration_in_force(
         temperature_c=line["temperature_c"],
         largest_ph_beyond=rules.largest_ph_beyond_buffers,
         largest_temperature_difference_c=rules.largest_temperature_difference_c,
+        isopotential_ph_standard_uncertainty=line["isopotential_ph_standard_uncertainty"],
     )
-    asked: float | None = getattr(method.end_points, "at_ph", None)
+    asked = method.end_points.at_ph
     if asked is not None and (text := target_warning(asked, covered)) is not None:
         taking.warnings.append(text)
     return ProbeCalibration(

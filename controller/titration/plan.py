@@ -71,13 +71,17 @@ class Chemistry:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class CalibratedRange:
-    """What the buffers of a calibration covered, and how far from it a sample may be (pH, °C)."""
+    """What the buffers of a calibration covered, and how far from it a sample may be (pH, °C).
+
+    A sample at another temperature than the buffers' owes the more to the isopotential pH.
+    """
 
     lowest_ph: float
     highest_ph: float
     temperature_c: float
     largest_ph_beyond: float
     largest_temperature_difference_c: float
+    isopotential_ph_standard_uncertainty: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -45,10 +45,17 @@ class PhScale:
 
 
 def calibration_ph_sd(calibration: ProbeCalibration, ph: float, temperature_c: float) -> float:
-    """Standard uncertainty that a calibration gives a pH: of offset, slope and their covariance."""
+    """Standard uncertainty that a calibration gives a pH: of offset, slope and their covariance, and of temperature.
+
+    A line through buffers at another temperature turns about the isopotential pH: an error of it leaves 1 - T buffers /
+    T sample (absolute) of itself in the pH.
+    """
     per_mv = 1.0 / (calibration.slope_fraction * ideal_slope_mv(temperature_c))
     per_slope = -(ph - calibration.isopotential_ph) / calibration.slope_fraction
     variance = (per_mv * calibration.offset_standard_uncertainty_mv) ** 2
     variance += (per_slope * calibration.slope_fraction_standard_uncertainty) ** 2
     variance += 2.0 * per_mv * per_slope * calibration.slope_offset_covariance_mv
+    if calibration.covered is not None:
+        turned = 1.0 - ideal_slope_mv(calibration.covered.temperature_c) / ideal_slope_mv(temperature_c)
+        variance += (turned * calibration.covered.isopotential_ph_standard_uncertainty) ** 2
     return math.sqrt(max(0.0, variance))

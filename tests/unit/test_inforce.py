@@ -28,7 +28,7 @@ from controller.records.recordfile import new_record
 from controller.runner import run
 from controller.running.execution import Devices
 from controller.running.stopping import StopSwitch
-from controller.titration.plan import ProbeCalibration
+from controller.titration.plan import CalibratedRange, ProbeCalibration
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
 from drivers.clock import ManualClock
 from drivers.operator import AnswersOperator
@@ -229,7 +229,8 @@ def test_an_expired_standard_is_named(tmp_path: Path) -> None:
     )
 
 
-def test_the_ph_of_an_end_point_has_the_uncertainty_of_the_line(tmp_path: Path) -> None:
+@pytest.mark.parametrize("sample_c", [25.0, 35.0, 12.0])
+def test_the_ph_of_an_end_point_has_the_uncertainty_of_the_line(tmp_path: Path, sample_c: float) -> None:
     from controller.calibration.electrode import BufferPoint, fit_line, ph_from
     from simulators.constants import ideal_slope_mv
 
@@ -247,13 +248,21 @@ def test_the_ph_of_an_end_point_has_the_uncertainty_of_the_line(tmp_path: Path) 
         slope_fraction_standard_uncertainty=line.covariance[1][1] ** 0.5,
         offset_standard_uncertainty_mv=line.covariance[0][0] ** 0.5,
         slope_offset_covariance_mv=line.covariance[0][1],
-    )
+        covered=CalibratedRange(
+            lowest_ph=4.0, highest_ph=10.01, temperature_c=25.0, largest_ph_beyond=0.5,
+            largest_temperature_difference_c=5.0,
+            isopotential_ph_standard_uncertainty=line.isopotential.standard_uncertainty,
+        ),
+    )  # fmt: skip
     plan = make_plan(
-        method(), bench(), SampleChoice(), pump=expected_account(bench()), probe_identity="p",
+        method(temperature_c=sample_c), bench(), SampleChoice(), pump=expected_account(bench()), probe_identity="p",
         in_force=replace(found(tmp_path), probe=calibration),
     )  # fmt: skip
     result: dict[str, Any] = {"end_points": [{"ph": 8.3}, {"ph": None}]}
     add_ph_uncertainty(plan, result)
-    read = ph_from(line, -slope_mv * 1.3 * line.slope_fraction + line.isopotential_mv, 25.0)
-    assert result["end_points"][0]["ph_standard_uncertainty"] == pytest.approx(read.from_line, rel=1e-6)
+    read = ph_from(line, -ideal_slope_mv(sample_c) * 1.3 * line.slope_fraction + line.isopotential_mv, sample_c)
+    assert read.ph == pytest.approx(8.3)
+    # all of it: reading and temperature are taken as exact here; 10 degrees off, the isopotential pH costs 0.017
+    assert result["end_points"][0]["ph_standard_uncertainty"] == pytest.approx(read.standard_uncertainty, rel=1e-6)
+    assert (read.from_isopotential > 0.01) == (sample_c != 25.0)
     assert "ph_standard_uncertainty" not in result["end_points"][1]
