@@ -11,6 +11,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.assembly import Opening, is_simulated
+from controller.commands.nextsample import END, NEXT_SAMPLE, READY, Between
 from controller.commands.output import amount_text, print_json, say
 from controller.commands.run import tell, titrate_once
 from controller.commands.settings import Chosen, sample_choice
@@ -20,6 +21,7 @@ from controller.planning.runplan import SampleChoice
 from controller.records.encoding import plan_from_json
 from controller.records.record import printable, read_record
 from controller.running.outcome import RunResult
+from controller.titration.actions import Ask
 from controller.titration.plan import ResponseCheck, RunPlan
 from controller.titration.traceability import Replicate
 
@@ -35,7 +37,14 @@ def run_replicates(
     """
     portions = portions_of(given.portions, given.replicates)
     results = titrate_replicates(
-        picked, lab, sample_choice(given), portions, opening=opening, headless=headless, operator_name=given.operator
+        picked,
+        lab,
+        sample_choice(given),
+        portions,
+        opening=opening,
+        headless=headless,
+        operator_name=given.operator,
+        attended=given.attended,
     )
     status = max(result.exit_status for result in results)
     summary, why = _together(results)
@@ -59,22 +68,27 @@ def titrate_replicates(
     headless: bool,
     operator_name: str | None,
     response_check: ResponseCheck | None = None,
+    attended: bool = False,
 ) -> list[RunResult]:
     """Run one titration for each portion (None: as the method takes it); a stopped or failed run ends the series.
 
-    The last one holds for a response check, where one is asked for.
+    Before each but the first somebody says that the next beaker is in place; `attended`: on a screen. The last one
+    holds for a response check, where one is asked for.
     """
+    between = Between(simulated=is_simulated(picked.bench), opening=opening, headless=headless, attended=attended)
     by_mass = picked.method.sample.taken_by == "mass"
     simulation = picked.bench.simulation if is_simulated(picked.bench) else None
     results: list[RunResult] = []
     for number, portion in enumerate(portions, start=1):
         if portion is not None:
             choice = replace(choice, mass_g=portion) if by_mass else replace(choice, volume_ml=portion)
-        own = opening
+        own = opening if number == 1 else between.opening_after_the_first()
         if simulation is not None:  # each beaker of a simulated bench has its own noise
             first = simulation.seed if opening.seed is None else opening.seed
             own = replace(opening, seed=first + number - 1)
         say(f"replicate {number} of {len(portions)}")
+        if results and between.ask(_next(number, len(portions)), beside=Path(results[-1].record)) != READY:
+            break
         result = titrate_once(
             picked,
             lab,
@@ -84,11 +98,17 @@ def titrate_replicates(
             operator_name=operator_name,
             replicate=Replicate(number=number, count=len(portions)),
             response_check=response_check if number == len(portions) else None,
+            attended=attended,
         )
         results.append(result)
         if result.outcome != "completed":
             break
     return results
+
+
+def _next(number: int, count: int) -> Ask:
+    text = f"Rinse probe and tip, then put in place: a fresh beaker for replicate {number} of {count}. Ready?"
+    return Ask(key=NEXT_SAMPLE, text=text, choices=(READY, END))
 
 
 def portions_of(text: str | None, count: int | None) -> list[float | None]:

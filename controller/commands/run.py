@@ -42,7 +42,9 @@ def run(given: argparse.Namespace) -> int:
     lab, simulated = picked.lab.writable(), is_simulated(picked.bench)
     answers = answers_of(given, picked.method)
     unattended = given.headless or not sys.stdin.isatty()
-    if unattended and answers is None and not simulated:
+    if given.attended:
+        answers = answers or {}
+    elif unattended and answers is None and not simulated:
         raise HalfdropError(
             "nobody is there to answer the questions before the first dose",
             where="run",
@@ -67,7 +69,13 @@ def run(given: argparse.Namespace) -> int:
 
         return run_replicates(picked, lab, given, opening=opening, headless=unattended)
     result = titrate_once(
-        picked, lab, sample_choice(given), opening=opening, headless=unattended, operator_name=given.operator
+        picked,
+        lab,
+        sample_choice(given),
+        opening=opening,
+        headless=unattended,
+        operator_name=given.operator,
+        attended=given.attended,
     )
     tell(result, as_json=given.json)
     return result.exit_status
@@ -83,6 +91,7 @@ def titrate_once(
     operator_name: str | None = None,
     replicate: Replicate | None = None,
     response_check: ResponseCheck | None = None,
+    attended: bool = False,
 ) -> RunResult:
     """Run one titration on a lab folder's bench; the record is closed when this returns or raises.
 
@@ -102,7 +111,9 @@ def titrate_once(
         plan, hashes = _planned(picked, lab, choice, bench, replicate)
         if response_check is not None:
             plan = replace(plan, response_check=response_check)
-        return _on_open_bench(plan, hashes, lab, bench, operator_name=operator_name, headless=headless)
+        return _on_open_bench(
+            plan, hashes, lab, bench, operator_name=operator_name, headless=headless, attended=attended
+        )
 
 
 def _planned(
@@ -134,12 +145,19 @@ def _planned(
 
 
 def _on_open_bench(
-    plan: RunPlan, hashes: dict[str, str], lab: Lab, bench: OpenBench, *, operator_name: str | None, headless: bool
+    plan: RunPlan,
+    hashes: dict[str, str],
+    lab: Lab,
+    bench: OpenBench,
+    *,
+    operator_name: str | None,
+    headless: bool,
+    attended: bool,
 ) -> RunResult:
     sink = new_record(lab.runs, utc_s=bench.clock.utc_s(), label=plan.method_name)
     disk = sink if bench.faults is None else bench.faults.disk(sink)
     journal = Journal(disk, bench.clock, name=str(sink.path))
-    with at_the_bench(bench, lab, sink.path, headless=headless) as present:
+    with at_the_bench(bench, lab, sink.path, headless=headless, attended_by_viewer=attended) as present:
         result = carry_out(
             plan,
             titrate(plan),

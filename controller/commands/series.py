@@ -68,7 +68,7 @@ def run_series(picked: Chosen, lab: Lab, given: argparse.Namespace, *, opening: 
     going = SeriesRun(
         picked=picked, lab=lab, items=series.items, methods=series.methods, journal=journal, opening=opening,
         headless=headless, operator_name=given.operator, on_failure=given.on_failure,
-        initial_volume_ml=given.initial_volume_ml, check_every=given.check_buffer_every,
+        initial_volume_ml=given.initial_volume_ml, check_every=given.check_buffer_every, attended=given.attended,
     )  # fmt: skip
     return going.whole(as_json=given.json)
 
@@ -107,7 +107,8 @@ def resume_series(path: Path, lab: Lab, given: argparse.Namespace) -> int:
         opening=opening, headless=given.headless or not sys.stdin.isatty(),
         operator_name=given.operator or header["operator"], on_failure=header["on_failure"],
         initial_volume_ml=header["initial_volume_ml"], ended=dict(state.ended),
-        check_every=header.get("check_buffer_every"),
+        check_every=header.get("check_buffer_every"), attended=given.attended,
+        last_record=None if broken_off is None else Path(broken_off.record),
     )  # fmt: skip
     if broken_off is not None and state.under_way is not None:
         going.note_end(going.titration(state.under_way), broken_off)

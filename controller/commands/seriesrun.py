@@ -10,6 +10,7 @@ from typing import Any, Literal
 from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from controller.assembly import Opening, is_simulated
+from controller.commands.nextsample import END, NEXT_SAMPLE, READY, SKIP, Between
 from controller.commands.output import print_json, say
 from controller.commands.run import titrate_once
 from controller.commands.seriestable import print_series, summed_up
@@ -24,12 +25,10 @@ from controller.running.outcome import RunResult
 from controller.running.stopping import StopSwitch
 from controller.titration.actions import Answered, Ask
 from controller.titration.traceability import Replicate
-from drivers.operator import AnswersOperator, ConsoleOperator, Operator
 
 OnFailure = Literal["stop", "skip", "repeat-once"]
 DONE, NOT_ALL, STOPPED, INTERRUPTED, TERMINATED = 0, 1, 3, 130, 143
-NEXT_SAMPLE = "next-sample"
-_CHOICES = ("ready", "skip", "end")
+_CHOICES = (READY, SKIP, END)
 
 
 @dataclass(slots=True, kw_only=True)
@@ -47,9 +46,11 @@ class SeriesRun:
     on_failure: OnFailure
     initial_volume_ml: float | None
     check_every: int | None = None
+    attended: bool = False
     ended: dict[tuple[str, int], tuple[str, str | None]] = field(default_factory=dict)
     durations_s: list[float] = field(default_factory=list)
     status: int = DONE
+    last_record: Path | None = None  # of the titration before, in this process
 
     def whole(self, *, as_json: bool) -> int:
         """Titrate what is left, close the record, print the table; an interrupted series stays open."""
@@ -59,9 +60,7 @@ class SeriesRun:
                 continue
             say(self._progress(place, len(every), titration))
             answer = self._ask(titration)
-            goes_on = answer != "end" and (
-                self._skip(titration) if answer == "skip" else self._titrate(titration, place)
-            )
+            goes_on = answer != END and (self._skip(titration) if answer == SKIP else self._titrate(titration, place))
             if not goes_on or not self._still_reads_right(titration):
                 self.status = self.status or STOPPED
                 say(f"the series is left open; go on with: halfdrop resume {Path(self.journal.name).stem}")
@@ -110,7 +109,7 @@ class SeriesRun:
         if self.on_failure == "repeat-once":
             say("it failed; it is repeated once, as the rule says")
             again = replace(titration, attempt=2)
-            if self._ask(again) == "end":
+            if self._ask(again) == END:
                 return False
             self._once(again, place)
             return not self.status
@@ -131,12 +130,14 @@ class SeriesRun:
                 headless=self.headless,
                 operator_name=self.operator_name,
                 replicate=Replicate(number=titration.replicate, count=item.replicates),
+                attended=self.attended,
             )
         except HalfdropError as error:
             say(f"not titrated: {error}")
             self.note_end(titration, None, str(error))
             return None
         self.note_end(titration, result)
+        self.last_record = Path(result.record)
         if result.exit_status in (INTERRUPTED, TERMINATED) or result.stop_confirmed is False:
             self.status = result.exit_status
         return result
@@ -144,7 +145,7 @@ class SeriesRun:
     def _opening(self, place: int) -> Opening:
         simulation = self.picked.bench.simulation if is_simulated(self.picked.bench) else None
         if simulation is None:
-            return self.opening
+            return self.opening if self.last_record is None else self._between().opening_after_the_first()
         first = simulation.seed if self.opening.seed is None else self.opening.seed
         return replace(self.opening, seed=first + place - 1)  # each beaker has its own noise
 
@@ -198,17 +199,17 @@ class SeriesRun:
         )
         self.journal.write(question, by="series")
         self.journal.barrier()
-        answer = self._operator().ask(question.key, question.text, question.choices)
+        answer = self._between().ask(question, beside=self.last_record)
         self.journal.write(Answered(key=question.key, answer=answer), by="series")
         return answer
 
-    def _operator(self) -> Operator:
-        answers = self.opening.answers
-        if is_simulated(self.picked.bench):
-            return AnswersOperator({NEXT_SAMPLE: "ready", **(answers or {})}, where=self.opening.answers_from)
-        if self.headless and answers is not None:
-            return AnswersOperator(answers, where=self.opening.answers_from)
-        return ConsoleOperator()
+    def _between(self) -> Between:
+        return Between(
+            simulated=is_simulated(self.picked.bench),
+            opening=self.opening,
+            headless=self.headless,
+            attended=self.attended,
+        )
 
     def _progress(self, place: int, count: int, titration: Titration) -> str:
         item = titration.item

@@ -31,6 +31,7 @@ ASKED_KEYS = (
     "refill-by-hand",
     "tip-over-waste",
     "rinse-and-store",
+    "next-sample",
 )
 
 

@@ -119,16 +119,23 @@ def _exchange(told: Announcement, line: Mapping[str, Any], record: Path) -> dict
 
 
 def running(runs: Path) -> Path | None:
-    """Return the record of the lab folder's run that goes on and listens, None where there is none."""
+    """Return the record of the lab folder's run that goes on and listens, None where there is none.
+
+    Between two titrations of a series it is that of the one before: there the next sample is asked for.
+    """
+    between: Path | None = None
     for announced in sorted(runs.glob(f"*{SUFFIX}"), reverse=True):
         record = announced.with_suffix(".jsonl")
-        if record.is_file() and summarise(record).get("outcome") is None:
-            try:
-                send_command(record, "hello")
-            except HalfdropError:
-                continue
+        if not record.is_file():
+            continue
+        try:
+            send_command(record, "hello")
+        except HalfdropError:
+            continue
+        if summarise(record).get("outcome") is None:
             return record
-    return None
+        between = between or record
+    return between
 
 
 def _not_listening(record: Path, what: str) -> RunNotListeningError:

@@ -117,8 +117,10 @@ def begin(lab: Lab, wanted: Wanted, answers: Mapping[str, str]) -> Path:
         arguments.append(f"--replicates={wanted.replicates}")
     if wanted.operator:
         arguments.append(f"--operator={wanted.operator}")
-    if wanted.time_scale:
+    if wanted.time_scale:  # a simulated bench, whose chemist answers for itself
         arguments.append(f"--time-scale={wanted.time_scale}")
+    else:
+        arguments.append("--attended")
     return record_of(start_run(lab, arguments, answers=answers), SystemClock())
 
 
