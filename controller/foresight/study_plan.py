@@ -185,3 +185,13 @@ def _pump(nominal: NominalBench) -> Pump:
         dose_sd_ml=syringe.stop_sd_ml,
         gain_standard_uncertainty=0.0,
     )
+
+
+def to_set_ph(plan: RunPlan, ph: float) -> RunPlan:
+    """The plan as a titration to a set pH, in doses down to the pump's step."""
+    return replace(
+        plan,
+        kind="end-point-ph",
+        end_points=replace(plan.end_points, expected=1, at_ph=ph),
+        dosing=replace(plan.dosing, smallest_ml=min(plan.dosing.smallest_ml, plan.pump.step_ml)),
+    )
