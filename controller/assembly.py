@@ -224,7 +224,8 @@ class _Opener:
         if is_simulated(bench):
             served = self.served(method, sample)
             urls, clock = served.urls, served.clock
-            answers = {"tip-over-waste": "yes", "probe-stored": "yes", **(opening.answers or {})}
+            usual = {"tip-over-waste": "yes", "probe-stored": "yes", "refill-by-hand": "stop"}
+            answers = usual | dict(opening.answers or {})
             operator: Operator = AnswersOperator(answers, where=opening.answers_from, sink=opening.talk or sys.stderr)
         else:
             urls = (bench.pump.port, bench.probe.port)

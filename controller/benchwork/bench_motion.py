@@ -15,6 +15,7 @@ from drivers.pump import Pump, PumpStatus
 from drivers.silence import FallsSilent
 
 TIP_OVER_WASTE = "tip-over-waste"
+REFILL_BY_HAND = "refill-by-hand"
 STEPS = ("dry dose", "totals", "stop", "watchdog")
 DRY_DOSE_ML = 0.1
 #: the stop is told so long after a dose began that would last `STOPPED_DOSE_S`
@@ -45,6 +46,9 @@ class MotionCheck:
             yield from passed_over(STEPS, "the tip is not over the waste", "Put it there, and check again")
             return
         if status.contents_ml < needed_ml:
+            if not self._may_fill():
+                yield from passed_over(STEPS, "there is too little in the syringe", "Fill it, and check again")
+                return
             filled = yield from step("fill", pump.fill, lambda after: f"the syringe holds {after.contents_ml:.3f} mL")
             if filled is None:
                 yield from passed_over(STEPS, "there is too little in the syringe", "Fill it")
@@ -64,6 +68,14 @@ class MotionCheck:
             "hands protected?",
             ("yes", "no"),
         )
+
+    def _may_fill(self) -> bool:
+        """Whether the pump can fill itself, or was filled by hand now."""
+        refill = self._pump.refill
+        if refill != "by-hand":
+            return refill == "valve"
+        text = "There is too little in the syringe, by its account. Filled with titrant, up to its mark?"
+        return self._reached.operator.ask(REFILL_BY_HAND, text, ("filled", "stop")) == "filled"
 
     def _dry_dose(self, pump: Pump, number: int) -> str:
         done = pump.dose(number, DRY_DOSE_ML)

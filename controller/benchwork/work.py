@@ -13,10 +13,13 @@ import subprocess
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from configs.errors import HalfdropError
 from controller.labfolder import Lab
+
+if TYPE_CHECKING:
+    from controller.assembly import OpenBench
 
 ACTIONS = ("look", "read", "fill", "prime")
 #: a device that answers slower than this has a poor line, s
@@ -53,7 +56,7 @@ def do(lab: Lab, action: str, volume_ml: float | None = None) -> dict[str, Any]:
         if action == "fill":
             pump.fill()
         elif action == "prime":
-            told["primed_ml"] = pump.prime(_checked(volume_ml, bench_waste_ml(lab)))
+            told["primed_ml"] = _primed(lab, bench, _checked(volume_ml, bench_waste_ml(lab)))
         begun_s = clock.now_s()
         status = pump.status()
         replied_s = clock.now_s()
@@ -80,8 +83,22 @@ def do(lab: Lab, action: str, volume_ml: float | None = None) -> dict[str, Any]:
         return told
 
 
+def _primed(lab: Lab, bench: OpenBench, volume_ml: float) -> float:
+    """Push so much into the waste; it counts in the titrant that is left, whole where the push ended in doubt."""
+    from configs.settings import load_bench
+    from controller.running.titrant_account import book_outside_runs
+
+    pushed_ml = volume_ml
+    try:
+        pushed_ml = bench.devices.pump.prime(volume_ml)
+    finally:
+        if not bench.reservoir_told:
+            book_outside_runs(lab.path, lab.runs, load_bench(lab.bench).pump, bench.account.identity, pushed_ml)
+    return pushed_ml
+
+
 @contextmanager
-def _opened(lab: Lab) -> Iterator[Any]:
+def _opened(lab: Lab) -> Iterator[OpenBench]:
     from configs.settings import load_bench, load_method
     from controller.assembly import Opening, is_simulated, open_bench
     from controller.lock import lock_device, lock_lab

@@ -30,6 +30,7 @@ from controller.records.record import printable
 from controller.records.unclosed import unclosed
 from controller.running.probe_left import probe_left
 from controller.running.stopping import STOP_EXIT_STATUS, StopSwitch, halted
+from controller.running.titrant_account import book_outside_runs
 from drivers.errors import StoppedError
 from drivers.ports import named_ports
 
@@ -161,7 +162,24 @@ def _bench(given: argparse.Namespace, picked: Chosen) -> Iterator[BenchCheck]:
         def locked(identity: str) -> None:
             held.enter_context(lock_device(identity, {"command": "bench"}))
 
-        yield BenchCheck(picked.bench, reached, stop, locked)
+        bench = BenchCheck(picked.bench, reached, stop, locked)
+        try:
+            yield bench
+        finally:
+            if lab is not None:
+                _book(lab, picked.bench, bench)
+
+
+def _book(lab: Lab, settings: BenchSettings, bench: BenchCheck) -> None:
+    """Count what was pushed in the titrant that is left, where the pump does not tell its reservoir."""
+    pump, status, identity = bench.passed.pump, bench.passed.status, bench.passed.pump_identity
+    if pump is None or status is None or identity is None or status.reservoir_ml is not None:
+        return
+    try:
+        moved_ml = pump.delivered_ml() - status.delivered_ml
+        book_outside_runs(lab.path, lab.runs, settings.pump, identity, moved_ml)
+    except HalfdropError as error:
+        say(f"halfdrop: what was pushed is not counted in the titrant left: {error}")
 
 
 def _lines(finding: Finding) -> list[str]:

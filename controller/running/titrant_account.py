@@ -1,7 +1,8 @@
 """How much titrant is left in a reservoir whose pump does not know: a running account by pump, in the lab folder.
 
 What was there when the bottle was changed, less what went through the tip since. The account is written whole or not at
-all; where its file is missing or unreadable, the records say the same. A dose in doubt counts whole.
+all; where its file is missing or unreadable, the records say the same, but for what was pushed outside runs (a check of
+the bench, priming by hand, emptying), which stands in the account alone. A dose in doubt counts whole.
 """
 
 from __future__ import annotations
@@ -12,11 +13,14 @@ import os
 from collections.abc import Iterable
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from configs.errors import HalfdropError
 from controller.lock import sync_folder, sync_to_disk
 from controller.records.record import list_records, read_record
+
+if TYPE_CHECKING:
+    from configs.benchfile import PumpSettings
 
 FILE_NAME = "titrant-left.json"
 #: records whose titrant is counted, by name, so that none is counted twice
@@ -109,6 +113,25 @@ def keep(lab: Path, account: TitrantAccount) -> None:
             where=str(lab / FILE_NAME),
             remedy="Make room or the folder writable; the records hold the same",
         ) from error
+
+
+def book_outside_runs(lab: Path, runs: Path, bench: PumpSettings, pump: str, moved_ml: float) -> None:
+    """Count what was pushed through the tip without a record; nothing where there is no reservoir to count.
+
+    Args:
+        lab: the lab folder.
+        runs: its records.
+        bench: what the bench file says of the pump, which does not tell its reservoir.
+        pump: identity.
+        moved_ml: what went through the tip.
+
+    Raises:
+        HalfdropError: it cannot be written.
+    """
+    if bench.refill == "none" or not moved_ml > 0.0:
+        return
+    account = account_of(lab, runs, pump=pump, filled_ml=bench.reservoir_ml, changed_utc=bench.reservoir_changed_utc)
+    keep(lab, replace(account, used_ml=round(account.used_ml + moved_ml, 9)))
 
 
 def _read(lab: Path) -> dict[str, TitrantAccount]:

@@ -208,6 +208,27 @@ def test_a_check_that_fails_has_exit_status_1(halfdrop: Run, lab: Callable[..., 
     assert "NOT CONFIRMED STOPPED" in out
 
 
+def test_what_is_pushed_outside_runs_counts_in_the_titrant_left(halfdrop: Run, lab: Callable[..., Path]) -> None:
+    """The pump of the dialect does not tell its reservoir."""
+    folder = lab(pump=DIALECT)
+
+    def used_ml() -> float:
+        [account] = json.loads((folder / "titrant-left.json").read_text(encoding="utf-8"))
+        return float(account["used_ml"])
+
+    assert halfdrop("bench", "check", "--lab", str(folder))[0] == 0
+    assert used_ml() == pytest.approx(0.1 + 0.083 + 0.4165, abs=0.002)  # as the check says, see test_bench_check.py
+    assert halfdrop("bench", "check", "--no-motion", "--lab", str(folder))[0] == 0
+    assert used_ml() == pytest.approx(0.5995, abs=0.002)
+    assert halfdrop("bench", "shut-down", "--lab", str(folder), "--empty")[0] == 0
+    assert used_ml() == pytest.approx(10.5995, abs=0.01)
+    status, out, err = halfdrop("run", "juice-acidity", "--lab", str(folder), "--json")
+    assert status == 0, err
+    assert used_ml() == pytest.approx(10.5995 + json.loads(out)["titrant_ml"], abs=0.01)
+    record = read_record(Path(json.loads(out)["run"]))
+    assert record.header["plan"]["pump"]["reservoir_ml"] < 250.0
+
+
 def test_ports_are_listed_and_nothing_is_opened(halfdrop: Run, monkeypatch: pytest.MonkeyPatch) -> None:
     from drivers.serialport import SerialPort
 

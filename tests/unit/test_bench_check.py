@@ -5,7 +5,8 @@ from __future__ import annotations
 import io
 from collections.abc import Callable, Iterator
 from contextlib import ExitStack
-from typing import Any
+from dataclasses import replace
+from typing import Any, cast
 
 import pytest
 
@@ -19,6 +20,7 @@ from controller.benchwork.bench_shutdown import shut_down_steps
 from controller.planning.runplan import SampleChoice, plan_sample
 from controller.running.stopping import StopSwitch
 from drivers.errors import DeviceSilentError, StoppedError
+from drivers.pump import Pump, PumpStatus
 
 METHOD = shipped_method("juice-acidity")
 Walk = Callable[..., dict[str, Finding]]
@@ -246,3 +248,35 @@ def test_a_port_that_another_program_holds_as_well_is_a_warning(monkeypatch: pyt
     assert (finding.verdict, finding.what) == ("warning", "terminal (process 4711) holds it open as well")
     for url in ("memory://probe", "socket://127.0.0.1:9", "/dev/pts/3"):
         assert list(_shared("probe", url)) == []
+
+
+@pytest.mark.parametrize(("answer", "verdict"), [("filled", "ok"), ("stop", "passed over")])
+def test_a_syringe_filled_by_hand_is_asked_for_not_assumed(
+    reach: Callable[..., BenchCheck], answer: str, verdict: str
+) -> None:
+    check = reach(bench_with(), answers={"refill-by-hand": answer})
+    list(check.pump())
+    pump, status = check.passed.pump, check.passed.status
+    assert pump is not None
+    assert status is not None
+    empty = Empty(pump, status)
+    check.passed.pump, check.passed.status = cast("Pump", empty), replace(status, contents_ml=0.0)
+    found = {finding.step: finding for finding in check.walk_motion()}
+    assert found["dry dose"].verdict == verdict
+    assert empty.filled == (answer == "filled")
+
+
+class Empty:
+    """A pump that cannot fill itself."""
+
+    refill = "by-hand"
+
+    def __init__(self, pump: Pump, full: PumpStatus) -> None:
+        self._pump, self._full, self.filled = pump, full, 0
+
+    def __getattr__(self, name: str) -> Any:
+        return getattr(self._pump, name)
+
+    def fill(self) -> PumpStatus:
+        self.filled += 1
+        return self._full
