@@ -14,6 +14,7 @@ from controller.assembly import FAST, Opening, is_simulated, open_bench
 from controller.commands.lines import Lines
 from controller.commands.output import say
 from controller.commands.present import at_the_bench
+from controller.commands.probekept import keep_in_probe_record
 from controller.commands.run import tell
 from controller.commands.runs import record_path
 from controller.commands.settings import answers_of, method_of
@@ -104,6 +105,7 @@ def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun)
         )
         result = go_on(broken, how)
         present.watch.ended(result)
+        keep_in_probe_record(lab, path)
         return result
 
 

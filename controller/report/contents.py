@@ -10,7 +10,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from configs.version import __version__
-from controller.commands.output import decimals
+from controller.commands.output import NAMES_ITS_SUBSTANCE, decimals
 from controller.curves.evaluate_record import evaluate_points
 from controller.records.record import Record, verify
 from controller.records.reevaluation import added_evaluations
@@ -22,6 +22,7 @@ from controller.report.cautions import cautions_of
 from controller.report.instruments import instruments
 from controller.report.plots import Mark, curve_figure, gran_figure, residual_figure
 from controller.report.points import identity_table, points_table
+from controller.report.probe import probe_in_this_run
 from controller.report.series import Series, series_of
 from controller.report.series_of_runs import together
 from controller.report.wording import DASH, Facts, facts_of, local_time, number, span, with_uncertainty
@@ -68,7 +69,7 @@ def report_contents(record: Record, *, written_utc: str, replicates: Sequence[Re
         **_amounts(record, result, replicates),
         **_evaluated(record, result, again, offset),
         "calibrations": calibrations_in_force(_dict(header.get("hashes")), record.path.parent.parent / FOLDER, offset),
-        "instruments": instruments(header),
+        "instruments": [*instruments(header), *probe_in_this_run(closing)],
         "sample": _sample(_dict(plan.get("sample")), offset) if plan.get("titrant") else [],
         **_course(record, plan, again, offset),
         "record": _record_facts(record),
@@ -148,16 +149,25 @@ def _headline(amount: dict[str, Any] | None) -> dict[str, str] | None:
         return None
     expanded = amount.get("expanded_uncertainty")
     places = decimals(expanded) if expanded else None
-    word = "" if amount.get("quantity") == "titrant" else "as "
     return {
         "value": number(amount.get("value"), places),
         "expanded": number(expanded, places) if expanded else "",
         "unit": str(amount.get("unit")),
-        "of": ", to ".join(filter(None, (f"{word}{amount['substance']}", str(amount.get("end_point") or ""))))
-        if amount.get("substance")
-        else "",
+        "of": _reported_as(amount),
         "k": coverage_factor(amount),
     }
+
+
+def _reported_as(amount: dict[str, Any]) -> str:
+    """Say as which substance, and to which end point."""
+    substance, end_point = amount.get("substance"), str(amount.get("end_point") or "")
+    if not substance:
+        return ""
+    to = f"to {end_point}" if end_point else ""
+    if amount.get("unit") == NAMES_ITS_SUBSTANCE:
+        return to
+    named = f"{'' if amount.get('quantity') == 'titrant' else 'as '}{substance}"
+    return ", ".join(filter(None, (named, to)))
 
 
 def _outcome(record: Record, closing: dict[str, Any]) -> str:

@@ -7,6 +7,7 @@ from datetime import datetime
 from typing import Any
 
 from controller.report.calibrations import traceability
+from controller.report.probe import learned_from
 from controller.report.wording import Facts, facts_of, local_time, number, with_uncertainty
 
 _CALIBRATION_KEYS = (
@@ -17,6 +18,7 @@ _CALIBRATION_KEYS = (
     "offset_standard_uncertainty_mv",
     "slope_offset_covariance_mv",
     "calibrated_utc",
+    "covered",
 )
 _TITRANT_KEYS = ("name", "concentration_mol_l", "standard_uncertainty_mol_l", "acid", "lot_id")
 _SECONDS_A_DAY = 86400.0
@@ -85,6 +87,10 @@ def _calibration(found: dict[str, Any], offset: Any, started: Any) -> Facts:
     when = found.get("calibrated_utc")
     if when:
         facts.append(("calibrated", f"{local_time(when, offset)}{_age(when, started)}"))
+    covered = found.get("covered")
+    if isinstance(covered, dict):
+        span = f"pH {number(covered.get('lowest_ph'), 2)} to {number(covered.get('highest_ph'), 2)}"
+        facts.append(("buffers", f"{span}, at {number(covered.get('temperature_c'), 1)} °C"))
     return facts + facts_of(found, offset, leave_out=_CALIBRATION_KEYS)
 
 
@@ -107,6 +113,7 @@ def _response(found: dict[str, Any], offset: Any) -> Facts:
             f"{number(found.get('bulk_s'))} s, {film} s; dead time {number(found.get('dead_time_s'))} s",
         ),
         ("slow layer", f"{slow} s, {number(share)} % of the signal"),
+        *learned_from(found),
     ]
     if found.get("measured_utc"):
         facts.append(("measured", local_time(found["measured_utc"], offset)))
