@@ -106,9 +106,8 @@ def evaluate_points_at_ph(plan: RunPlan, record: Record, ph: float) -> tuple[Cur
 
 
 def _result_at_ph(plan: RunPlan, record: Record, curve: Curve, ph: float) -> dict[str, Any]:
-    used = _used(record)
-    lasted_s = float(used[-1]["at_s"] or 0.0) - float(used[0]["at_s"] or 0.0)
-    return result_at_ph(plan, curve, ph, beyond_ml=_beyond_points_ml(plan, record), duration_s=lasted_s)
+    at_s = [float(one["at_s"] or 0.0) for one in _used(record)]
+    return result_at_ph(plan, curve, ph, beyond_ml=_beyond_points_ml(plan, record), at_s=at_s)
 
 
 def _hold_against_run(

@@ -78,12 +78,9 @@ def audited(
     slow = slowness if slowness is not None and slowness > NOTABLE_SLOWNESS else None
     if fit is not None:
         # before a slow probe was known for one, its points were taken too early
-        shown = believed(curve, fit, allowed=1.0 if slowness is None else math.pow(max(1.0, slowness), SLOW_POINTS))
+        shown = believed(curve, fit, allowed=spread_allowed(slowness))
         if shown is None:
-            audit.withheld = (
-                f"the points contradict one another (misfit {misfit(fit):.1f}, allowed {LARGEST_OF_STATED:g}): "
-                "something happened to sample, titrant or probe while they were taken, so no number is given"
-            )
+            audit.withheld = contradiction(fit)
             audit.end_points = []
             return audit
         mishap = find_mishap(curve, fit, np.asarray(at_s, dtype=np.float64))
@@ -103,10 +100,23 @@ def audited(
     return audit
 
 
+def spread_allowed(slowness: float | None) -> float:
+    """How much more the points may leave over where the probe turned out slow only while they were taken."""
+    return 1.0 if slowness is None else math.pow(max(1.0, slowness), SLOW_POINTS)
+
+
+def contradiction(fit: ModelFit) -> str:
+    """Return why no number is given where no acid or base could give the points."""
+    return (
+        f"the points contradict one another (misfit {misfit(fit):.1f}, allowed {LARGEST_OF_STATED:g}): "
+        "something happened to sample, titrant or probe while they were taken, so no number is given"
+    )
+
+
 def _widen_by_mishap(
     audit: Audit, mishap: Mishap, curve: Curve, at_s: Sequence[float], estimates: Sequence[Sequence[Estimate]]
 ) -> None:
-    audit.warnings.append(_told(mishap))
+    audit.warnings.append(mishap_told(mishap))
     for number, point in enumerate(audit.end_points):
         volume_ml = float(point["volume_ml"])
         if mishap.kind == "drift":
@@ -120,7 +130,8 @@ def _widen_by_mishap(
             audit.widen(number, by_ml)
 
 
-def _told(mishap: Mishap) -> str:
+def mishap_told(mishap: Mishap) -> str:
+    """Return a mishap in words."""
     place = f"after {mishap.after_ml:.3f} mL"
     match mishap.kind:
         case "step":

@@ -3,11 +3,24 @@
 from __future__ import annotations
 
 import math
+import warnings
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 from controller.evaluation.at_ph import VolumeAtPh, estimator_name, volume_at_ph
-from controller.evaluation.curve import CurveError
-from controller.titration.audit import LARGEST_SHARE, NOTABLE_SLOWNESS, SLOWNESS_COST
+from controller.evaluation.curve import Curve, CurveError
+from controller.evaluation.mishaps import believed, find_mishap
+from controller.evaluation.modelfit import fit_charge_balance
+from controller.titration.audit import (
+    LARGEST_SHARE,
+    NOTABLE_SLOWNESS,
+    SLOWNESS_COST,
+    contradiction,
+    mishap_told,
+    spread_allowed,
+)
 from controller.titration.outcome import DIGITS, STRAIGHTNESS_MV, position_sd_ml, probe_lag, run_curve
 from controller.titration.plan import RunPlan
 from controller.titration.points import calibration_ph_sd
@@ -29,18 +42,14 @@ def target_result(run: RunState) -> dict[str, Any]:
     """JSON of `halfdrop run` less run path and seed; without a determination no number."""
     world = run.world
     outcome, reason = run.outcome, run.reason or None
-    found = _determined(run) if run.watch.found else None
-    end_points, warnings = [], list(world.warnings)
-    if found is not None:
-        point = end_point_json(run.plan, found, beyond_ml=_beyond_ml(run), temperature_c=run.temperature_c)
-        told, withheld = judged(run.plan, found, point)
-        warnings += [*told, *_slow(run, point)]
-        if withheld is None:
+    end_points, remarks = [], list(world.warnings)
+    if run.watch.found:
+        point, told, withheld = _determination(run)
+        remarks += told
+        if point is not None and withheld is None:
             end_points = [point]
         elif outcome == "completed":
             outcome, reason = "stopped", withheld
-    elif run.watch.found and outcome == "completed":
-        outcome, reason = "stopped", "the points do not lie on both sides of the end point pH"
     return {
         "outcome": outcome,
         "reason": reason,
@@ -53,7 +62,7 @@ def target_result(run: RunState) -> dict[str, Any]:
         "titrant_ml": round(world.delivered_ml, DIGITS),
         "notes": [],
         "probe_lag": probe_lag(run),
-        "warnings": warnings,
+        "warnings": remarks,
         "beyond_at_start": run.reason == ALREADY_BEYOND,
     }
 
@@ -85,23 +94,23 @@ def end_point_json(plan: RunPlan, found: VolumeAtPh, *, beyond_ml: float, temper
 
 def judged(plan: RunPlan, found: VolumeAtPh, point: dict[str, Any]) -> tuple[list[str], str | None]:
     """Warnings about a determination, and why it is withheld (None: it is not)."""
-    warnings = []
+    remarks = []
     if found.passed_by_ph > ALLOWED_PASS_PH:
         passed = f"the first point beyond pH {found.ph:.2f} lies {found.passed_by_ph:.2f} beyond it"
         if found.bracket_ml <= _FEW_STEPS * plan.pump.step_ml:
-            warnings.append(f"{passed}: this pump cannot dose more finely")
+            remarks.append(f"{passed}: this pump cannot dose more finely")
         else:
-            warnings.append(
+            remarks.append(
                 f"{passed} (allowed {ALLOWED_PASS_PH:.2f}): the volume is interpolated over {found.bracket_ml:.4f} mL"
             )
     u_ml = float(point["standard_uncertainty_ml"])
     share = u_ml / max(found.volume_ml, 1e-9)
     if share > LARGEST_SHARE and u_ml > _SMALL_PRECISIONS * pump_precision_ml(plan):
-        return warnings, (
+        return remarks, (
             f"the volume at pH {found.ph:.2f} would be known to {100.0 * share:.0f} % only (allowed "
             f"{100.0 * LARGEST_SHARE:.0f} %), so no number is given"
         )
-    return warnings, None
+    return remarks, None
 
 
 def common_ph_sd(plan: RunPlan, duration_s: float, slope_mv: float) -> float:
@@ -109,15 +118,61 @@ def common_ph_sd(plan: RunPlan, duration_s: float, slope_mv: float) -> float:
     return math.hypot(STRAIGHTNESS_MV, USUAL_DRIFT_MV_MIN * duration_s / 60.0) / slope_mv
 
 
-def _determined(run: RunState) -> VolumeAtPh | None:
-    assert run.plan.end_points.at_ph is not None
+def _determination(run: RunState) -> tuple[dict[str, Any] | None, list[str], str | None]:
+    """The end point, warnings about it, and why it is withheld (None: it is not)."""
+    at_ph = run.plan.end_points.at_ph
+    assert at_ph is not None
     try:
         curve = run_curve(run)
     except CurveError as error:
-        run.world.warnings.append(f"the points make no curve: {error}")
-        return None
+        return None, [], f"the points make no curve: {error}"
     common = common_ph_sd(run.plan, run.world.elapsed_s, run.scale.slope_mv)
-    return volume_at_ph(curve, run.plan.end_points.at_ph, common_ph_sd=common)
+    found = volume_at_ph(curve, at_ph, common_ph_sd=common)
+    if found is None:
+        return None, [], "the points do not lie on both sides of the end point pH"
+    point = end_point_json(run.plan, found, beyond_ml=_beyond_ml(run), temperature_c=run.temperature_c)
+    told, contradicting = last_look(curve, [one.at_s for one in run.points], point, slowness=run.slowness)
+    told += _slow(run, point)
+    more, withheld = judged(run.plan, found, point)
+    return point, [*more, *told], contradicting or withheld
+
+
+def last_look(
+    curve: Curve, at_s: Sequence[float], point: dict[str, Any], *, slowness: float | None
+) -> tuple[list[str], str | None]:
+    """Do the points hang together? What no acid or base could give is withheld.
+
+    Args:
+        curve: the points.
+        at_s: when each was taken.
+        point: the end point; widened by a mishap that the points show.
+        slowness: learned lag over the record's, None where not known.
+
+    Returns:
+        Warnings, and why the number is withheld (None: it is not).
+    """
+    with np.errstate(all="ignore"), warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)  # numbers that no formula likes end as "not sound"
+        fit = fit_charge_balance(curve)
+        if fit is None:
+            return [], None
+        if believed(curve, fit, allowed=spread_allowed(slowness)) is None:
+            return [], contradiction(fit)
+        mishap = find_mishap(curve, fit, np.asarray(at_s, dtype=np.float64))
+    if mishap is None:
+        return [], None
+    by_ml, since_min = abs(mishap.amount), max(0.0, at_s[-1] - mishap.after_s) / 60.0
+    if mishap.kind == "drift":
+        by_ml *= since_min * abs(point["ml_per_ph"])
+    elif mishap.kind == "leak":
+        by_ml *= since_min
+    _widen(point, by_ml if mishap.kind == "drift" or point["volume_ml"] >= mishap.after_ml else 0.0)
+    return [mishap_told(mishap)], None
+
+
+def _widen(point: dict[str, Any], by_ml: float) -> None:
+    for key in ("standard_uncertainty_ml", "own_standard_uncertainty_ml"):
+        point[key] = round(math.hypot(point[key], by_ml), DIGITS)
 
 
 def _beyond_ml(run: RunState) -> float:
@@ -130,6 +185,5 @@ def _slow(run: RunState, point: dict[str, Any]) -> list[str]:
     if slow is None or slow <= NOTABLE_SLOWNESS:
         return []
     cost_ml = SLOWNESS_COST * (slow - 1.0) * pump_precision_ml(run.plan)
-    for key in ("standard_uncertainty_ml", "own_standard_uncertainty_ml"):
-        point[key] = round(math.hypot(point[key], cost_ml), DIGITS)
+    _widen(point, cost_ml)
     return [f"the probe answers {slow:.1f} times as slowly as its record says: clean it, or repeat the response check"]
