@@ -188,7 +188,8 @@ class MethodSettings(Settings):
                 allowed = "mass, where the titrant is standardised against a standard weighed in"
                 found.append(Disagreement("sample.taken_by", self.sample.taken_by, allowed))
         elif (report.unit in UNITS_BY_MASS) != (self.sample.taken_by == "mass") and not self._density_known():
-            allowed = f"a unit per {self.sample.taken_by}, as the sample is taken by {self.sample.taken_by}"
+            taken = self.sample.taken_by
+            allowed = f"a unit per {taken}, as the sample is taken by {taken}, or preparation.density_g_ml beside it"
             found.append(Disagreement("report_as.unit", report.unit, allowed))
         return found
 

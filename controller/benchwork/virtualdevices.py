@@ -10,6 +10,7 @@ from configs.benchfile import BenchSettings, PortSettings
 from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from configs.simulation import ContainedSettings, SampleBottleSettings, SimulationSettings
+from controller.planning.sampleplan import aliquot_share
 from controller.titration.plan import Sample
 from drivers.identity import Identity
 from simulators.ascii_devices import OrchardLaneMeter, OrchardLanePump
@@ -38,12 +39,13 @@ def simulated_world(
 ) -> VirtualBench:
     """Return the world around the sample that the method names (or that it expects)."""
     bottle = sample_bottle(simulation, method.simulated_sample) or _expected_bottle(method)
+    share = aliquot_share(method)
     return virtual_bench(
         bench,
         sample=sample_in_vessel(
             bottle,
-            volume_ml=sample.volume_ml,
-            mass_g=None if sample.mass_g is None else true_mass_g(bottle, sample.mass_g),
+            volume_ml=None if sample.volume_ml is None else share * sample.volume_ml,
+            mass_g=None if sample.mass_g is None else share * true_mass_g(bottle, sample.mass_g),
             initial_volume_ml=sample.initial_volume_ml,
             temperature_c=simulation.temperature_c,
         ),

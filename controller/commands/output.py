@@ -28,12 +28,16 @@ def print_table(heads: Sequence[str], rows: Sequence[Sequence[str]]) -> None:
         print("  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip())
 
 
+#: the unit says already as what the amount is reported
+NAMES_ITS_SUBSTANCE = "mg/L CaCO3"
+
+
 def amount_text(amount: dict[str, Any] | None) -> str:
     """Return an amount with its expanded uncertainty, both to the digits that the uncertainty allows."""
     if not amount:
         return "no amount"
     value, expanded, unit = amount["value"], amount.get("expanded_uncertainty"), amount["unit"]
-    if amount.get("substance"):
+    if amount.get("substance") and unit != NAMES_ITS_SUBSTANCE:
         unit = f"{unit} {'' if amount.get('quantity') == 'titrant' else 'as '}{amount['substance']}"
     if str(amount.get("end_point") or "").startswith("pH"):  # never to be taken for the amount to equivalence
         unit = f"{unit}, to {amount['end_point']}"

@@ -108,6 +108,10 @@ def expected_volume_ml(method: MethodSettings, sample: Sample) -> float | None:
         amount_mmol = settings.expected_concentration_mol_l * sample.volume_ml
     else:
         return None
-    for step in method.preparation.dilutions if method.preparation is not None else ():
-        amount_mmol *= step.aliquot_ml / step.made_up_to_ml
-    return amount_mmol * found.equivalents / per_ml
+    return amount_mmol * aliquot_share(method) * found.equivalents / per_ml
+
+
+def aliquot_share(method: MethodSettings) -> float:
+    """Return the part of the sample as taken that is in the vessel after the method's dilutions; 1 without any."""
+    steps = method.preparation.dilutions if method.preparation is not None else ()
+    return math.prod(step.aliquot_ml / step.made_up_to_ml for step in steps)

@@ -10,15 +10,15 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from configs.version import __version__
-from controller.commands.output import NAMES_ITS_SUBSTANCE, decimals
 from controller.curves.evaluate_record import evaluate_points
 from controller.records.record import Record, verify
 from controller.records.reevaluation import added_evaluations
 from controller.report import tables
-from controller.report.budget import budget_table, coverage_factor
+from controller.report.budget import budget_table
 from controller.report.calibration_part import calibration_part
 from controller.report.calibrations import FOLDER, calibrations_in_force
 from controller.report.cautions import cautions_of
+from controller.report.headline import headline
 from controller.report.instruments import instruments
 from controller.report.plots import Mark, curve_figure, gran_figure, residual_figure
 from controller.report.points import identity_table, points_table
@@ -85,7 +85,7 @@ def _amounts(record: Record, result: dict[str, Any], replicates: Sequence[Record
     mean = repeated.amount if repeated is not None else None
     amount = mean or result.get("result")
     return {
-        "amount": _headline(amount),
+        "amount": headline(amount),
         "mean_of": repeated.count if repeated is not None and mean else 0,
         "budget": budget_table(amount),
         "replicates": repeated,
@@ -141,33 +141,6 @@ def _warnings(header: dict[str, Any], plan: dict[str, Any], result: dict[str, An
     """Every warning once: of the start, of what is in force, of the result."""
     parts = header.get("warnings"), _dict(plan.get("traceability")).get("warnings"), result.get("warnings")
     return list(dict.fromkeys(str(one) for part in parts for one in part or []))
-
-
-def _headline(amount: dict[str, Any] | None) -> dict[str, str] | None:
-    """The amount in parts: value, expanded uncertainty, unit, substance, coverage factor."""
-    if not amount:
-        return None
-    expanded = amount.get("expanded_uncertainty")
-    places = decimals(expanded) if expanded else None
-    return {
-        "value": number(amount.get("value"), places),
-        "expanded": number(expanded, places) if expanded else "",
-        "unit": str(amount.get("unit")),
-        "of": _reported_as(amount),
-        "k": coverage_factor(amount),
-    }
-
-
-def _reported_as(amount: dict[str, Any]) -> str:
-    """Say as which substance, and to which end point."""
-    substance, end_point = amount.get("substance"), str(amount.get("end_point") or "")
-    if not substance:
-        return ""
-    to = f"to {end_point}" if end_point else ""
-    if amount.get("unit") == NAMES_ITS_SUBSTANCE:
-        return to
-    named = f"{'' if amount.get('quantity') == 'titrant' else 'as '}{substance}"
-    return ", ".join(filter(None, (named, to)))
 
 
 def _outcome(record: Record, closing: dict[str, Any]) -> str:

@@ -91,6 +91,7 @@ def add_amount(result: dict[str, Any], plan: AnyPlan, amount_of: AmountOf | None
         result["result"] = amount_of(plan, result)
     except (HalfdropError, ArithmeticError, ValueError) as error:
         result["warnings"].append(f"the amount could not be computed: {error}")
+        result["trusted"] = False
 
 
 def account_of(pump: Pump, before_ml: float, execution: Execution) -> tuple[dict[str, float] | None, str | None]:

@@ -70,7 +70,8 @@ def problems(text: str, model: type[Settings] = MethodSettings) -> list[str]:
         ),
         (
             "report_as: {substance: malic acid, unit: '% m/m'}",
-            "m.yaml:7:42: report_as.unit: got % m/m, allowed: a unit per volume, as the sample is taken by volume",
+            "m.yaml:7:42: report_as.unit: got % m/m, allowed: a unit per volume, as the sample is taken by volume, "
+            "or preparation.density_g_ml beside it",
         ),
         (
             "report_as: {quantity: titrant, substance: KHP, unit: mol/L}",
