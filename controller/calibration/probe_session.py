@@ -17,7 +17,7 @@ from controller.calibration.acceptance import (
     check_buffer,
     judge_probe,
 )
-from controller.calibration.acceptance_dialogue import ask_questions, finish, stopped
+from controller.calibration.acceptance_dialogue import ACCEPT, ACCEPT_FAILED, ask_questions, finish, stopped
 from controller.calibration.buffer_reading import BufferReader, Measured, StopError
 from controller.calibration.buffers import (
     EXPECTED_SLOPE_FRACTION,
@@ -39,6 +39,15 @@ from controller.titration.actions import Action, Decisions, Observation, Report
 
 #: standard uncertainty of a slope taken over from the calibration before (common practice)
 _PRIOR_SLOPE_UNCERTAINTY = 0.02
+
+
+def probe_keys(plan: ProbePlan) -> list[str]:
+    """Return the keys of the questions that a plan's calibration may ask, for a file of answers."""
+    keys = [question.key for question in plan.questions]
+    for role, name in (("calibration", "buffer"), ("check", "check")):
+        count = sum(one.role == role for one in plan.buffers)
+        keys += [f"{name}-{n}{end}" for n in range(1, count + 1) for end in ("", "-again", "-is")]
+    return [*keys, ACCEPT, ACCEPT_FAILED]
 
 
 def calibrate_probe(plan: ProbePlan) -> Decisions:

@@ -1,54 +1,48 @@
-"""halfdrop calibrate: probe, burette and titrant, each into a record of its own; what all calibrations share."""
+"""halfdrop calibrate: probe, burette and titrant, each into a record of its own."""
 
 from __future__ import annotations
 
 import argparse
-import sys
 from contextlib import ExitStack
 from dataclasses import replace
 from pathlib import Path
 
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
-from configs.settings import load_bench
-from controller.assembly import Opening, is_simulated, time_scale_of
+from controller.assembly import Opening, is_simulated
 from controller.benchwork.calibrationbench import CalibrationBench, open_burette, open_desk, open_probe
 from controller.calibration.burette_session import check_burette
 from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import plan_probe
 from controller.calibration.planning_burette import WeighingConditions, plan_burette, read_weighings
-from controller.calibration.plans import CalibrationPlan
-from controller.calibration.probe_session import calibrate_probe
+from controller.calibration.probe_session import calibrate_probe, probe_keys
 from controller.calibration.store import in_force
 from controller.commands.calibrationlines import calibration_lines
-from controller.commands.lines import Lines
-from controller.commands.output import print_json, say
+from controller.commands.calibrationrun import carry_out_calibration, lab_and_bench, opening_of, settle, told
+from controller.commands.output import say
 from controller.commands.replicates import portions_of, titrate_replicates
 from controller.commands.runs import record_path
-from controller.commands.settings import Chosen, answers_of, chosen, sample_choice
+from controller.commands.settings import Chosen, chosen, sample_choice, say_unasked
 from controller.commands.signals import pulling
-from controller.journal import Journal
-from controller.labfolder import Lab, find_lab
+from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.planning.inforce import utc_day
-from controller.planning.lots import Preparation, SettledLot, titrant_lot
+from controller.planning.last_devices import last_devices
+from controller.planning.lots import Preparation, titrant_lot
 from controller.planning.settled_blanks import response_record
 from controller.records.record import read_record
-from controller.records.recordfile import new_record
-from controller.runner import run as carry_out
-from controller.running.commandport import command_port
-from controller.running.outcome import RunResult
-from controller.running.portoperator import PortOperator
+from controller.running.aftercare import RINSE_AND_STORE
 from controller.running.stopping import StopSwitch
-from controller.titration.actions import Decisions
 from controller.titration.plan import ResponseCheck
+from drivers.operator import ConsoleOperator
 
-DONE, NOT_TRUSTED = 0, 1
+#: a question that offers the response check with a standardisation
+RESPONSE_CHECK = "response-check"
 
 
 def probe(given: argparse.Namespace) -> int:
     """Calibrate the probe with the bench's buffers."""
-    lab, bench = _lab_and_bench(given)
+    lab, bench = lab_and_bench(given)
     opening, headless = opening_of(given, lab, bench)
     lots = tuple(word.strip() for word in given.lots.split(",")) if given.lots else ()
     stop = StopSwitch()
@@ -66,7 +60,8 @@ def probe(given: argparse.Namespace) -> int:
             check=not given.no_check,
             seed=opened.seed,
         )
-        result = _carry_out(
+        say_unasked(given.answers, opening.answers, [*probe_keys(plan), RINSE_AND_STORE.key])
+        result = carry_out_calibration(
             plan,
             calibrate_probe(plan),
             opened,
@@ -75,12 +70,12 @@ def probe(given: argparse.Namespace) -> int:
             operator_name=given.operator,
             attended=given.attended,
         )
-    return _told(result, plan, lab, as_json=given.json)
+    return told(result, plan, lab, as_json=given.json)
 
 
 def burette(given: argparse.Namespace) -> int:
     """Check the burette by weighing, or from balance readings in a CSV file."""
-    lab, bench = _lab_and_bench(given)
+    lab, bench = lab_and_bench(given)
     opening, headless = opening_of(given, lab, bench)
     readings = read_weighings(Path(given.weighings)) if given.weighings else None
     water_c = given.water_temperature_c
@@ -110,7 +105,7 @@ def burette(given: argparse.Namespace) -> int:
             deliveries=given.deliveries,
             seed=opened.seed,
         )
-        result = _carry_out(
+        result = carry_out_calibration(
             plan,
             check_burette(plan),
             opened,
@@ -119,7 +114,7 @@ def burette(given: argparse.Namespace) -> int:
             operator_name=given.operator,
             attended=given.attended,
         )
-    return _told(result, plan, lab, as_json=given.json)
+    return told(result, plan, lab, as_json=given.json)
 
 
 def titrant(given: argparse.Namespace) -> int:
@@ -136,6 +131,7 @@ def titrant(given: argparse.Namespace) -> int:
     if given.runs_from:
         records = [record_path(name, given) for name in given.runs_from]
     else:
+        given.response_check = given.response_check or _check_wanted(lab, opening, headless=headless)
         records = _titrated(given, replace(picked, method=method), lab, opening=opening, headless=headless)
     with open_desk(bench, opening=opening) as opened:
         if given.response_check and not given.runs_from:
@@ -152,6 +148,20 @@ def titrant(given: argparse.Namespace) -> int:
             preparation=Preparation(text=given.preparation or "", prepared_on=given.prepared_on, expires=given.expires),
         )
         return settle(settled, opened, lab, given)
+
+
+def _check_wanted(lab: Lab, opening: Opening, *, headless: bool) -> bool:
+    """Offer the response check with a standardisation: asked at a terminal, else said, and answered by the answers."""
+    device = last_devices(lab.runs, lab.calibrations).probe
+    record = None if device is None else in_force(lab.calibrations, "response", device)
+    last = "has never been measured here" if record is None else f"was last measured on {record.on}"
+    text = f"The probe's slow layer {last}: hold two minutes after each of two doses of the last portion to measure it"
+    if not headless:
+        return ConsoleOperator().ask(RESPONSE_CHECK, f"{text}?", ("yes", "no")) == "yes"
+    answer = (opening.answers or {}).get(RESPONSE_CHECK)
+    if answer is None:
+        say(f"{text} with --response-check")
+    return answer == "yes"
 
 
 def _titrated(given: argparse.Namespace, picked: Chosen, lab: Lab, *, opening: Opening, headless: bool) -> list[Path]:
@@ -200,105 +210,5 @@ def _response(bench: BenchSettings, path: Path, opened: CalibrationBench, lab: L
         core = settle_lot(
             settled.plan, verdict=settled.verdict, notes=settled.notes, details=settled.details, warnings=()
         )
-        result = _carry_out(settled.plan, core, opened, lab, stop=StopSwitch(), operator_name=given.operator)
+        result = carry_out_calibration(settled.plan, core, opened, lab, stop=StopSwitch(), operator_name=given.operator)
     say("\n".join(calibration_lines(result.result)))
-
-
-def settle(settled: SettledLot, opened: CalibrationBench, lab: Lab, given: argparse.Namespace) -> int:
-    """Take a lot or blank into its record, tell it, and return the exit status."""
-    core = settle_lot(
-        settled.plan,
-        verdict=settled.verdict,
-        notes=settled.notes,
-        details=settled.details,
-        warnings=settled.warnings,
-    )
-    with lock_lab(lab.path, {"command": "calibrate"}):
-        result = _carry_out(
-            settled.plan,
-            core,
-            opened,
-            lab,
-            stop=StopSwitch(),
-            operator_name=given.operator,
-            attended=given.attended,
-        )
-    return _told(result, settled.plan, lab, as_json=given.json)
-
-
-def _carry_out(
-    plan: CalibrationPlan,
-    core: Decisions,
-    opened: CalibrationBench,
-    lab: Lab,
-    *,
-    stop: StopSwitch,
-    operator_name: str | None,
-    attended: bool = False,
-) -> RunResult:
-    lab.calibrations.mkdir(exist_ok=True)
-    sink = new_record(lab.calibrations, utc_s=opened.clock.utc_s(), label=plan.method_name)
-    with command_port(stop, sink.path, set_time_scale=time_scale_of(opened.clock)) as port:
-        devices = opened.devices
-        if attended:
-            operator = PortOperator(devices.operator, port, opened.clock, stop, attended=True)
-            devices = replace(devices, operator=operator)
-        return carry_out(
-            plan,
-            core,
-            devices,
-            Journal(sink, opened.clock, name=str(sink.path)),
-            clock=opened.clock,
-            stop=stop,
-            commands=port,
-            operator_name=operator_name,
-            on_progress=Lines(sys.stderr),
-            ask_afterwards=plan.kind == "probe",
-        )
-
-
-def _told(result: RunResult, plan: CalibrationPlan, lab: Lab, *, as_json: bool) -> int:
-    found = result.result.get("calibration") or {}
-    if as_json:
-        print_json(result.result)
-    else:
-        print("\n".join(calibration_lines(result.result)))
-        kept = in_force(lab.calibrations, plan.kind, plan.subject)
-        if not found.get("accepted"):
-            what = f"in force stays the one of {kept.on} ({kept.path.stem})" if kept else "none is in force"
-            print(f"not taken into force; {what}")
-    if result.outcome != "completed" and result.exit_status != DONE:
-        return result.exit_status
-    return DONE if found.get("passed") and found.get("accepted") else NOT_TRUSTED
-
-
-def _lab_and_bench(given: argparse.Namespace) -> tuple[Lab, BenchSettings]:
-    lab = find_lab(given.lab).writable()
-    say(lab.says())
-    return lab, load_bench(Path(given.bench) if given.bench else lab.bench)
-
-
-def opening_of(given: argparse.Namespace, lab: Lab, bench: BenchSettings) -> tuple[Opening, bool]:
-    """Return how the bench is opened, and whether nobody is at the terminal.
-
-    Raises:
-        HalfdropError: nobody is there to answer its questions.
-    """
-    answers = answers_of(given)
-    unattended = given.headless or not sys.stdin.isatty()
-    if getattr(given, "attended", False):
-        answers = answers or {}
-    elif unattended and answers is None and not is_simulated(bench):
-        raise HalfdropError(
-            "nobody is there to answer its questions",
-            where="calibrate",
-            remedy="Give the answers with --answers FILE, or start it at a terminal without --headless",
-        )
-    opening = Opening(
-        seed=given.seed,
-        time_scale=given.time_scale,
-        answers=answers,
-        answers_from=given.answers or "answers",
-        place=lab.path,
-    )
-    return opening, unattended

@@ -11,7 +11,7 @@ from configs.errors import HalfdropError
 from controller.assembly import Opening
 from controller.benchwork.calibrationbench import open_desk
 from controller.calibration.store import in_force
-from controller.commands.calibrate import opening_of, settle
+from controller.commands.calibrationrun import opening_of, settle
 from controller.commands.output import say
 from controller.commands.replicates import MOST_REPLICATES, titrate_replicates
 from controller.commands.runs import record_path

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import hashlib
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -108,11 +109,15 @@ def answers_of(given: argparse.Namespace, method: MethodSettings | None = None) 
         return None
     found = load_answers(given.answers)
     if method is not None:
-        known = [*ASKED_KEYS, *(question.key for question in method.questions)]
-        for key in found:
-            if key not in known:
-                say(f"{given.answers}: nobody asks {key!r}{did_you_mean(key, known)}")
+        say_unasked(given.answers, found, [*ASKED_KEYS, *(question.key for question in method.questions)])
     return found
+
+
+def say_unasked(file: str | None, answers: Mapping[str, str] | None, known: Sequence[str]) -> None:
+    """Say which keys of a file of answers nobody asks for."""
+    for key in answers or ():
+        if key not in known:
+            say(f"{file}: nobody asks {key!r}{did_you_mean(key, known)}")
 
 
 def lab_of(given: argparse.Namespace, *, needed: bool = False) -> Lab | None:

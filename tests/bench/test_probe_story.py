@@ -124,3 +124,28 @@ def test_predict_takes_the_calibration_in_force_and_says_so(halfdrop: Run, lab: 
     says = json.loads(halfdrop(*predict)[1])["taken_from"]
     assert says[0].startswith("probe calibration: in force, made ")
     assert "that of the bench file" not in says[0]
+
+
+def test_an_answer_that_nobody_asks_for_is_said(halfdrop: Run, tmp_path: Path) -> None:
+    answers = tmp_path / "answers.yaml"
+    answers.write_text('bufer-2: "B7-204"\nrinse-and-store: "yes"\n', encoding="utf-8")
+    status, _, err = halfdrop("calibrate", "probe", "--answers", str(answers))
+    assert status == 0
+    assert "nobody asks 'bufer-2' (did you mean buffer-2" in err
+    assert "'rinse-and-store'" not in err
+
+
+def test_a_standardisation_offers_the_response_check(halfdrop: Run, lab: Path, tmp_path: Path) -> None:
+    standard = ("calibrate", "titrant", "standardise-sodium-hydroxide", "--portions", "0.1512")
+    _, _, err = halfdrop(*standard)
+    assert "The probe's slow layer has never been measured here" in err
+    assert "with --response-check" in err
+    answers = tmp_path / "answers.yaml"
+    answers.write_text('response-check: "yes"\n', encoding="utf-8")
+    halfdrop(*standard, "--seed", "6", "--answers", str(answers))
+    (plan,) = [
+        plan for path in list_records(lab / "calibrations") if (plan := header_of(path)["plan"])["kind"] == "response"
+    ]
+    assert plan["kind"] == "response"
+    assert "response check of " in halfdrop("bench", "show")[1]
+    assert "was last measured on " in halfdrop(*standard, "--seed", "7")[2]
