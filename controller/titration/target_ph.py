@@ -50,6 +50,7 @@ class Ahead:
     least_ml: float  # the set pH is not reached before
     predicted_ml: float | None  # by the model; None: it is not sound
     predicted_sd_ml: float
+    model_sd_ml: float  # of that, what the model may be off by
     slope_ml: float  # dV/dpH there, positive
 
 
@@ -88,11 +89,14 @@ class TargetPh:
         if predicted is None:
             slope = max(now_ml * math.pow(10.0, -max(short, 0.0)), self._water_slope_ml(last))
         between = 0.0 if predicted is None else abs(predicted - last.volume_ml)
-        model_sd = 0.0 if sound is None else min(sound.standard_uncertainty_ml, between)
+        model_sd = _MODEL_SHARE * between
+        if sound is not None:
+            model_sd = math.hypot(model_sd, min(sound.standard_uncertainty_ml, between))
         return Ahead(
             least_ml=round(least_ml, 7),
             predicted_ml=None if predicted is None else round(predicted, 7),
-            predicted_sd_ml=round(math.hypot(model_sd, _MODEL_SHARE * between, self._precision_ml), 7),
+            predicted_sd_ml=round(math.hypot(model_sd, self._precision_ml), 7),
+            model_sd_ml=round(model_sd, 7),
             slope_ml=round(slope, 7),
         )
 
@@ -165,10 +169,13 @@ class TargetPh:
             self._looks += 1
             return PlannedDose(volume_ml=0.0, expected_mv=None, why="look again", goal="")
         self._looks = 0
-        volume_ml = min(SHARE * remaining_ml, d.largest_ml)
+        half_ml = SHARE * remaining_ml
+        if ahead.predicted_ml is not None:
+            half_ml = SHARE * (remaining_ml - ahead.model_sd_ml)
+        volume_ml = min(half_ml, d.largest_ml)
         if ahead.predicted_ml is not None:
             volume_ml = min(volume_ml, ahead.least_ml - delivered_ml)
-        why = "half of what remains" if volume_ml >= SHARE * remaining_ml else "what cannot pass it"
+        why = "half of what remains" if volume_ml >= half_ml else "what cannot pass it"
         if volume_ml >= d.largest_ml:
             why = "the largest dose"
         if volume_ml <= smallest_ml:
