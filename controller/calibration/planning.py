@@ -21,6 +21,7 @@ from controller.calibration.plans import (
     ProbePlan,
     Stability,
 )
+from controller.calibration.slowing import first_response_s
 from controller.calibration.store import Calibration
 from controller.calibration.validity import Validity
 from controller.titration.plan import Probe, Pump, Question, Sample, Vessel
@@ -112,6 +113,8 @@ def plan_probe(
     lots: Sequence[str] = (),
     check: bool = True,
     seed: int | None = None,
+    earlier: Sequence[Calibration] = (),
+    warnings: Sequence[str] = (),
 ) -> ProbePlan:
     """Return the plan of a probe calibration.
 
@@ -123,6 +126,8 @@ def plan_probe(
         lots: bottles to use, in this order; none: all calibration buffers of the bench.
         check: whether the check buffers are measured afterwards.
         seed: of a simulated bench.
+        earlier: accepted calibrations of this probe, oldest first.
+        warnings: what is known of the probe beforehand, in words.
 
     Raises:
         HalfdropError: no buffers, a lot that the bench does not keep, or one past its date where the rules refuse it.
@@ -155,6 +160,8 @@ def plan_probe(
         isopotential_standard_uncertainty=probe.isopotential_standard_uncertainty,
         last_slope_fraction=line.get("slope_fraction"),
         last_offset_mv=line.get("offset_mv"),
+        first_response_s=first_response_s(earlier),
+        warnings=tuple(warnings),
     )
 
 

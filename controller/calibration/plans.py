@@ -82,7 +82,10 @@ class PlannedLimits:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ProbePlan(CalibrationPlan):
-    """Calibration of the probe with buffers. `last_*`: of the calibration in force, None where there is none."""
+    """Calibration of the probe with buffers. `last_*`: of the calibration in force, None where there is none.
+
+    `first_response_s`: how long the probe took in buffers in its first calibrations; `warnings`: known beforehand.
+    """
 
     buffers: tuple[PlannedBuffer, ...]
     stability: Stability
@@ -91,6 +94,8 @@ class ProbePlan(CalibrationPlan):
     isopotential_standard_uncertainty: float
     last_slope_fraction: float | None = None
     last_offset_mv: float | None = None
+    first_response_s: float | None = None
+    warnings: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -35,6 +35,7 @@ from controller.calibration.isopotential import fit_isopotential
 from controller.calibration.obeying import obeying
 from controller.calibration.plans import ProbePlan
 from controller.calibration.probe_result import buffer_to_json, limits_of, line_to_json
+from controller.calibration.slowing import SLOWER_IN_BUFFERS, slow_in_buffers_text
 from controller.titration.actions import Action, Decisions, Observation, Report
 
 #: standard uncertainty of a slope taken over from the calibration before (common practice)
@@ -80,6 +81,7 @@ class _Session:
 
     def whole(self) -> Generator[Action, Observation | None, dict[str, Any]]:
         plan = self.plan
+        self.warnings += plan.warnings
         refused = yield from ask_questions(plan)
         if refused is not None:
             raise StopError(refused)
@@ -104,7 +106,9 @@ class _Session:
             "buffer": check.buffer, "ph": check.ph, "error_ph": check.error_ph,
             "standard_uncertainty_ph": check.standard_uncertainty_ph,
         }  # fmt: skip
-        details["response_s"] = max(one.stable.response_s for one in self.measured)
+        details["response_s"] = response_s = max(one.stable.response_s for one in self.measured)
+        if plan.first_response_s is not None and response_s > SLOWER_IN_BUFFERS * plan.first_response_s:
+            self.warnings.append(slow_in_buffers_text(response_s, plan.first_response_s))
         return (yield from finish(plan, verdict, details, self.warnings))
 
     def _isopotential(self) -> Isopotential:

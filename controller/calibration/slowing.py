@@ -33,16 +33,27 @@ def slowing_texts(learned: Sequence[LearnedTimes], accepted: Sequence[Calibratio
     checks = [_fast_lag_s(one) for one in accepted if one.kind == "response"]
     texts = list(_in_runs(learned, accepted))
     if told := _slower(buffers, SLOWER_IN_BUFFERS):
-        texts.append(
-            f"the probe is slowing: in buffers it answers within {told[0]:.0f} s, it was {told[1]:.0f} s in its first "
-            "calibrations; clean it as its maker says, or replace it"
-        )
+        texts.append(slow_in_buffers_text(*told))
     if told := _slower(checks, SLOWER_IN_CHECKS):
         texts.append(
             f"the probe is slowing: its fast lag is {told[0]:.1f} s by the newest response check, it was "
             f"{told[1]:.1f} s in the first ones; clean it as its maker says, or replace it"
         )
     return tuple(texts)
+
+
+def first_response_s(accepted: Sequence[Calibration]) -> float | None:
+    """Return the median time that a probe took in buffers in its first calibrations; None where there are none."""
+    known = [value for one in accepted if one.kind == "probe" and (value := _number(one, "response_s")) is not None]
+    return median(known[:_FIRST]) if known else None
+
+
+def slow_in_buffers_text(now_s: float, first_s: float) -> str:
+    """Return the warning about a probe that takes long in buffers."""
+    return (
+        f"the probe is slowing: in buffers it answers within {now_s:.0f} s, it was {first_s:.0f} s in its first "
+        "calibrations; clean it as its maker says, or replace it"
+    )
 
 
 def _in_runs(learned: Sequence[LearnedTimes], accepted: Sequence[Calibration]) -> Iterator[str]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import datetime as dt
 from collections.abc import Callable, Mapping
+from pathlib import Path
 from typing import Any
 
 import pytest
@@ -16,6 +17,7 @@ from controller.calibration.buffer_reading import lot_of
 from controller.calibration.planning import PROBE_QUESTIONS, plan_probe
 from controller.calibration.plans import ProbePlan
 from controller.calibration.probe_session import calibrate_probe
+from controller.calibration.store import Calibration
 from controller.titration.actions import (
     Action,
     Answered,
@@ -219,6 +221,19 @@ def test_a_buffer_outside_its_table_is_refused_by_name() -> None:
     result = table.calibrate()
     assert not result["calibration"]["accepted"]
     assert "55 °C, allowed: 0 to 50 °C" in result["reason"]
+
+
+def test_a_probe_slower_than_in_its_first_calibrations_is_named() -> None:
+    first = [
+        Calibration(path=Path("c"), sha256="", kind="probe", subject="p", on="2026-01-05", started_utc="", plan={},
+                    result={"accepted": True, "response_s": seconds}, intact=True)
+        for seconds in (5.0, 4.0, 6.0)
+    ]  # fmt: skip
+    known = "the probe is slowing: known before"
+    result = Table(plan(earlier=first, warnings=[known])).calibrate()
+    assert result["warnings"][0] == known
+    assert any("it was 5 s in its first calibrations" in text for text in result["warnings"])
+    assert Table(plan(earlier=[])).calibrate()["warnings"] == []
 
 
 def test_a_check_buffer_left_out_is_no_pass() -> None:
