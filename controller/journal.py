@@ -161,12 +161,21 @@ class Journal:
             if self._held_back is not None:
                 line, self._held_back = self._held_back, None
                 self._put(line)
+            self._barrier_before_closing()
             closing = {"outcome": outcome, "reason": reason, "lines": self.lines, "last_sha256": self._previous}
             self._append_closing(encode({**closing, **details}))
             self.barrier()
         finally:
             self.closed = True
             self._sink.close()
+
+    def _barrier_before_closing(self) -> None:
+        """Bring every line to the medium; where it does not take them, the closing line is tried all the same."""
+        unsynced_s = self._synced_s
+        try:
+            self.barrier()
+        except RecordError:
+            self._synced_s = unsynced_s
 
     def _stamp(self) -> str:
         run_s = round(self._clock.now_s() - self.started_s, 6)

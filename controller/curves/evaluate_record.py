@@ -19,6 +19,7 @@ from controller.planning.amounts import amount_of_plan
 from controller.records.encoding import plan_from_json
 from controller.records.record import Record, points, read_record, verify
 from controller.titration.audit import audited
+from controller.titration.gaps import drift_over_gaps_mv
 from controller.titration.outcome import STRAIGHTNESS_MV
 from controller.titration.plan import RunPlan
 from controller.titration.precision import pump_precision_ml
@@ -180,7 +181,7 @@ def curve_of(plan: RunPlan, record: Record, *, where: str) -> Curve:
         raise CurveError("no points in it", where=where, remedy="Nothing can be evaluated")
     chemistry, analyte = plan.chemistry, plan.chemistry.analyte
     known = all(one["ph"] is not None for one in found)
-    volume_sd, signal_sd = _spreads(plan, found, known=known)
+    volume_sd, signal_sd = _spreads(plan, found, _gaps(record), known=known)
     curve = Curve(
         volume_ml=np.array([one["volume_ml"] for one in found], dtype=np.float64),
         ph=np.array([one["ph"] for one in found], dtype=np.float64) if known else None,
@@ -199,7 +200,15 @@ def curve_of(plan: RunPlan, record: Record, *, where: str) -> Curve:
     return replace(curve, pka=analyte.pka, charge=analyte.charge, counter_ion_charge=analyte.counter_ion_charge)
 
 
-def _spreads(plan: RunPlan, found: list[dict[str, Any]], *, known: bool) -> tuple[float | Array, float | Array | None]:
+def _gaps(record: Record) -> list[tuple[float, float]]:
+    """When the run went on after a gap (run time), and how long it had stood, s."""
+    told = [one for one in record.of("resumed") if "observation" in one]
+    return [(float(one["at_s"]), float(one["gap_s"])) for one in told]
+
+
+def _spreads(
+    plan: RunPlan, found: list[dict[str, Any]], gaps: list[tuple[float, float]], *, known: bool
+) -> tuple[float | Array, float | Array | None]:
     """Return standard deviations of volume and signal: the run's own where the points hold them."""
     calibration = plan.probe.calibration
     if any(one.get("volume_sd_ml") is None or one.get("potential_sd_mv") is None for one in found):
@@ -208,7 +217,11 @@ def _spreads(plan: RunPlan, found: list[dict[str, Any]], *, known: bool) -> tupl
     if known and calibration is not None:
         per_unit = calibration.slope_fraction * ideal_slope_mv(plan.chemistry.temperature_c)
     volume = [math.hypot(one["volume_sd_ml"], plan.pump.dose_sd_ml, 0.0005) for one in found]
-    signal = [math.hypot(one["potential_sd_mv"], STRAIGHTNESS_MV) / per_unit for one in found]
+    signal = [
+        math.hypot(one["potential_sd_mv"], STRAIGHTNESS_MV, drift_over_gaps_mv(float(one["at_s"] or 0.0), gaps))
+        / per_unit
+        for one in found
+    ]
     return np.array(volume, dtype=np.float64), np.array(signal, dtype=np.float64)
 
 

@@ -72,6 +72,7 @@ class Exchange:
         self.doubt_ml = 0.0  # standard uncertainty of everything delivered after a dose in doubt
         self.log: list[tuple[float, float, float]] = []  # begun, ended, volume
         self.disturbed = False  # something changed in the vessel or in time while a point was settling
+        self.gaps: list[tuple[float, float]] = []  # when the run went on, and how long it had stood
         self.warnings: list[str] = []
         self._paused = False
         self._pump_failures = 0
@@ -264,6 +265,7 @@ class Exchange:
                 yield from self.say(Report(what="note", text=f"{answer.device} answers again"))
                 self.disturbed = True
             case Resumed():
+                self.gaps.append((answer.at_s, answer.gap_s))
                 yield from self.say(Report(what="note", text=f"resumed after a gap of {answer.gap_s:.0f} s"))
                 self.disturbed = True
             case _:

@@ -20,6 +20,7 @@ from controller.evaluation.inverse import LARGEST_PH
 from controller.evaluation.result import Evaluation
 from controller.titration.audit import Audit, audited
 from controller.titration.endpoint import FoundEndPoint
+from controller.titration.gaps import drift_over_gaps_mv
 from controller.titration.precision import pump_precision_ml
 
 if TYPE_CHECKING:
@@ -99,7 +100,10 @@ def run_curve(run: RunState) -> Curve:
         titrant_concentration_mol_l=plan.titrant.concentration_mol_l,
         titrant_is_acid=plan.titrant.acid,
         volume_sd_ml=np.array([math.hypot(p.volume_sd_ml, plan.pump.dose_sd_ml, 0.0005) for p in points]),
-        signal_sd=np.array([math.hypot(p.potential_sd_mv, STRAIGHTNESS_MV) for p in points]) / per_unit,
+        signal_sd=np.array(
+            [math.hypot(p.potential_sd_mv, STRAIGHTNESS_MV, drift_over_gaps_mv(p.at_s, run.world.gaps)) for p in points]
+        )
+        / per_unit,
         pka=None if analyte is None else analyte.pka,
         charge=0 if analyte is None else analyte.charge,
         counter_ion_charge=0 if analyte is None else analyte.counter_ion_charge,
