@@ -50,9 +50,7 @@ def judge_carbonate(
     if not detected:
         text = f"no carbonate found ({figure})"
     else:
-        text = (
-            f"{figure}, allowed: {limit_percent:g} %; unboiled water of the sample may make {water:.2f} % of it"
-        )
+        text = f"{figure}, allowed: {limit_percent:g} %; unboiled water of the sample may make {water:.2f} % of it"
         text += "" if accepted else f"; {CURE}"
     return CarbonateJudgement(
         gap_ml=gap.gap_ml,

@@ -279,6 +279,11 @@ def _warnings(
             f"replicate {outlier.index + 1} ({outlier.value:.5f} mol/L) is an outlier by Grubbs' test, "
             f"{outlier.statistic:.3f} against {outlier.critical:.3f} at {100 * outlier.significance:g} %; it was kept"
         )
+    if standard.purity_fraction == 1.0 and standard.purity_standard_uncertainty == 0.0:
+        warnings.append(
+            f"no purity of {standard.name} is stated: it is taken as 1 and exact; give sample.purity_fraction and "
+            "sample.purity_standard_uncertainty as its certificate has them"
+        )
     if standard.density_kg_m3 is None and equipment.air_density_kg_m3 is not None:
         warnings.append(f"no density of {standard.name}: its mass is not corrected for air buoyancy")
     return tuple(warnings)

@@ -29,12 +29,13 @@ from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.planning.inforce import utc_day
 from controller.planning.last_devices import last_devices
-from controller.planning.lots import Preparation, titrant_lot
+from controller.planning.lots import Preparation, check_preparation, titrant_lot
 from controller.planning.settled_blanks import response_record
 from controller.records.record import read_record
 from controller.running.aftercare import RINSE_AND_STORE
 from controller.running.stopping import StopSwitch
 from controller.titration.plan import ResponseCheck
+from drivers.clock import SystemClock
 from drivers.operator import ConsoleOperator
 
 #: a question that offers the response check with a standardisation
@@ -132,6 +133,8 @@ def titrant(given: argparse.Namespace) -> int:
         raise HalfdropError("the lot has no name", where="titrant", remedy="Give --lot-id, or lot_id in the method")
     if lot_id != method.titrant.lot_id:
         method = method.model_copy(update={"titrant": method.titrant.model_copy(update={"lot_id": lot_id})})
+    preparation = Preparation(text=given.preparation or "", prepared_on=given.prepared_on, expires=given.expires)
+    check_preparation(preparation, today=utc_day(SystemClock().utc_s()))
     if given.runs_from:
         records = [record_path(name, given) for name in given.runs_from]
     else:
@@ -149,7 +152,7 @@ def titrant(given: argparse.Namespace) -> int:
             today=utc_day(opened.clock.utc_s()),
             last=in_force(lab.calibrations, "titrant", lot_id),
             carbonate_run=record_path(given.carbonate_run, given) if given.carbonate_run else None,
-            preparation=Preparation(text=given.preparation or "", prepared_on=given.prepared_on, expires=given.expires),
+            preparation=preparation,
         )
         return settle(settled, opened, lab, given)
 

@@ -35,9 +35,11 @@ def calibration_lines(result: dict[str, Any]) -> list[str]:
 
 
 def due_day(found: dict[str, Any]) -> str:
-    """Return the day on which a calibration is due again."""
+    """Return the day on which a calibration is due again; a lot that expires before is due then."""
     try:
-        return (dt.date.fromisoformat(found["on"]) + dt.timedelta(days=int(found["due_days"]))).isoformat()
+        due = dt.date.fromisoformat(found["on"]) + dt.timedelta(days=int(found["due_days"]))
+        expires = found.get("expires")
+        return min(due, dt.date.fromisoformat(expires) if expires else due).isoformat()
     except (KeyError, TypeError, ValueError):
         return "not known"
 

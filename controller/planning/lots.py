@@ -28,6 +28,7 @@ from controller.evaluation.control import trend
 from controller.evaluation.evaluate import evaluate
 from controller.evaluation.statistics import StatisticsError
 from controller.planning.amounts import standardisation_of, statistics_to_json
+from controller.planning.taking import day_of
 from controller.records.encoding import plan_from_json
 from controller.records.record import read_record
 from controller.titration.plan import RunPlan
@@ -71,9 +72,10 @@ def titrant_lot(
     `carbonate_run` is a titration of strong acid with it, well past the end point.
 
     Raises:
-        HalfdropError: a run that cannot be used, or figures from which no concentration follows.
+        HalfdropError: a run that cannot be used, days that cannot be, or figures from which no concentration follows.
     """
     rules = bench.calibration_rules.titrant
+    check_preparation(preparation, today=today)
     pairs = [_completed(path) for path in records]
     titrant, nominal = substance(method.titrant.substance), method.titrant.concentration_mol_l
     for path, (run_plan, _) in zip(records, pairs, strict=True):
@@ -111,6 +113,8 @@ def titrant_lot(
     drift = drift_of(folder, lot_id, today, found.concentration_mol_l)
     carbonate = None if carbonate_run is None else _carbonate(carbonate_run, lot_id, found.concentration_mol_l)
     doubts = [] if carbonate is None or carbonate.accepted else [carbonate.text]
+    trace = first.traceability
+    doubts += [text for text in (trace.warnings if trace is not None else ()) if text.startswith("standard ")]
     return SettledLot(
         plan=plan,
         verdict=found.verdict,
@@ -120,9 +124,29 @@ def titrant_lot(
             "lot": _lot_to_json(found),
             "replicates": _statistics(found),
             "drift": drift or None,
+            "expires": preparation.expires,
             "carbonate": None if carbonate is None else asdict(carbonate),
         },
     )
+
+
+def check_preparation(preparation: Preparation, *, today: dt.date) -> None:
+    """Refuse days that are none, a titrant that was prepared in time to come, and one that is past its date.
+
+    Raises:
+        HalfdropError: with the option to correct.
+    """
+    named = {"--prepared-on": preparation.prepared_on, "--expires": preparation.expires}
+    for option, text in named.items():
+        if text is not None and day_of(text) is None:
+            raise HalfdropError(f"got {text!r}, allowed: a day as 2027-06-30", where=option, remedy="Correct it")
+    prepared, expires = day_of(preparation.prepared_on), day_of(preparation.expires)
+    if prepared is not None and prepared > today:
+        what = f"{prepared.isoformat()} is still to come (today is {today.isoformat()})"
+        raise HalfdropError(what, where="--prepared-on", remedy="Correct it")
+    if expires is not None and expires < today:
+        what = f"the lot expired on {expires.isoformat()} (today is {today.isoformat()})"
+        raise HalfdropError(what, where="--expires", remedy="Prepare a new lot, or correct the day")
 
 
 def _carbonate(path: Path, lot_id: str, concentration_mol_l: float) -> CarbonateJudgement:

@@ -10,7 +10,18 @@ from controller.report.budget import budget_table
 from controller.report.tables import Table
 from controller.report.wording import DASH, Facts, cell, facts_of, number, with_uncertainty, words_of
 
-_SHOWN_APART = ("kind", "subject", "on", "due_days", "passed", "accepted", "verdict", "findings", "replaces_sha256")
+_SHOWN_APART = (
+    "kind",
+    "subject",
+    "on",
+    "due_days",
+    "passed",
+    "accepted",
+    "verdict",
+    "findings",
+    "replaces_sha256",
+    "expires",
+)
 #: parts of a calibration's plan that say how it was made
 _PLAN_LEFT_OUT = ("sample", "probe", "pump", "vessel", "questions", "kind", "schema_version", "program_version",
                   "method_name", "method_title", "seed")  # fmt: skip
@@ -57,8 +68,9 @@ def calibration_part(plan: Mapping[str, Any], result: Mapping[str, Any], offset:
 def _meaning(found: Mapping[str, Any]) -> str:
     if not found.get("accepted"):
         return "not accepted: what was in force before stays in force"
-    due = found.get("due_days")
-    return f"in force from {found.get('on')}" + ("" if due is None else f", due again after {due} days")
+    due, expires = found.get("due_days"), found.get("expires")
+    days = "" if due is None else f", due again after {due} days"
+    return f"in force from {found.get('on')}{days}" + (f", expires on {expires}" if expires else "")
 
 
 def _findings(found: Mapping[str, Any]) -> Table:

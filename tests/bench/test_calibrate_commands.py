@@ -135,6 +135,17 @@ def test_carbonate_in_the_titrant_is_seen_with_strong_acid(halfdrop: Run, lab: P
     assert any("guard tube" in text for text in result["warnings"])
 
 
+def test_a_standard_past_its_date_is_named_with_the_lot(halfdrop: Run, lab: Path) -> None:
+    path = lab / "methods" / "standardise-sodium-hydroxide.yaml"
+    text = path.read_text(encoding="utf-8")
+    path.write_text(text.replace("standard:\n", 'standard:\n  expires: "2020-01-31"\n'), encoding="utf-8")
+    status, out, err = halfdrop(
+        "calibrate", "titrant", "standardise-sodium-hydroxide", "--portions", "0.1512,0.1490,0.1533", "--json"
+    )
+    assert status == 0, err
+    assert any("expired on 2020-01-31" in text for text in json.loads(out)["warnings"])
+
+
 def test_a_burette_is_checked_from_readings_in_a_file(halfdrop: Run, tmp_path: Path) -> None:
     path = tmp_path / "weighings.csv"
     z = z_factor_ul_mg(21.5)

@@ -5,15 +5,18 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
+from configs.errors import HalfdropError
 from controller.calibration.carbonate import judge_carbonate
 from controller.calibration.titrant import Equipment, PrimaryStandard, Replicate, StandardisationError, standardise
 from controller.calibration.titrant_lot import TitrantLot
+from controller.commands.calibrationlines import due_day
 from controller.evaluation.carbonate import carbonate_gap
 from controller.evaluation.carried import CarriedResult
 from controller.evaluation.curve import Curve
 from controller.evaluation.montecarlo import compare, propagate
 from controller.evaluation.quantity import Quantity
 from controller.evaluation.uncertainty import budget
+from controller.planning.lots import Preparation, check_preparation
 from simulators.solution import Medium, Mixture, StrongIon, WeakComponent, titration_curve
 
 KHP = PrimaryStandard(
@@ -274,3 +277,32 @@ def test_what_is_no_strong_acid_or_stops_too_early_tells_no_carbonate():
     assert carbonate_gap(strong_acid_curve(0.02, last_ml=5.0), end_point_ml=5.0) is None
     acid_titrant = replace(strong_acid_curve(0.02), titrant_is_acid=True)
     assert carbonate_gap(acid_titrant, end_point_ml=5.0) is None
+
+
+def test_a_standard_of_no_stated_purity_is_named():
+    stated = standardise(KHP, replicates([0.1, 0.1001, 0.0999]), PLAIN)
+    assert not any("purity" in text for text in stated.warnings)
+    bare = replace(KHP, purity_fraction=1.0, purity_standard_uncertainty=0.0)
+    found = standardise(bare, replicates([0.1, 0.1001, 0.0999]), PLAIN)
+    assert any("no purity of potassium hydrogen phthalate is stated" in text for text in found.warnings)
+
+
+@pytest.mark.parametrize(
+    ("days", "says"),
+    [
+        ({"prepared_on": "31.12.2025"}, "--prepared-on: got '31.12.2025', allowed: a day as 2027-06-30"),
+        ({"prepared_on": "2026-12-02"}, "2026-12-02 is still to come"),
+        ({"expires": "2026-11-30"}, "the lot expired on 2026-11-30"),
+    ],
+)
+def test_days_of_a_lot_that_cannot_be_are_refused(days, says):
+    today = dt.date(2026, 12, 1)
+    with pytest.raises(HalfdropError, match=says):
+        check_preparation(Preparation(**days), today=today)
+    check_preparation(Preparation(prepared_on="2026-12-01", expires="2026-12-01"), today=today)
+
+
+def test_a_lot_is_due_when_it_expires_at_the_latest():
+    assert due_day({"on": "2026-12-01", "due_days": 14}) == "2026-12-15"
+    assert due_day({"on": "2026-12-01", "due_days": 14, "expires": "2026-12-05"}) == "2026-12-05"
+    assert due_day({"on": "2026-12-01", "due_days": 14, "expires": "2027-12-05"}) == "2026-12-15"
