@@ -73,8 +73,8 @@ class Slowing:
         runs = "run" if self.suddenly else "runs"
         return (
             f"the probe is slowing: in the last {runs} of {self.method} its fast lag was {self.now_s:.1f} s, "
-            f"{self.ratio:.1f} times the {self.best_s:.1f} s of {when}{until}; clean it as its maker says and repeat "
-            "the response check, or replace it"
+            f"{self.ratio:.1f} times the {self.best_s:.1f} s of {when}{until}; check the stirring; clean the probe as "
+            "its maker says and repeat the response check, or replace it"
         )
 
 
