@@ -1,4 +1,4 @@
-"""Whole runs to a set pH on worlds in memory: the volume against the charge balance, and the promise never to rush it."""
+"""Whole runs to a set pH on worlds in memory: the volume against the charge balance, and never rushed."""
 
 from __future__ import annotations
 
