@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 
+from configs.errors import HalfdropError
 from controller.curves.evaluate_set_ph import result_at_ph
 from controller.curves.identify import identity_of
 from controller.curves.pointregions import regions_of
@@ -20,7 +21,7 @@ from controller.records.encoding import plan_from_json
 from controller.records.record import Record, points, read_record, verify
 from controller.titration.audit import audited
 from controller.titration.gaps import drift_over_gaps_mv
-from controller.titration.outcome import STRAIGHTNESS_MV
+from controller.titration.outcome import ABOUT_PKA, STRAIGHTNESS_MV
 from controller.titration.plan import RunPlan
 from controller.titration.precision import pump_precision_ml
 from simulators.constants import ideal_slope_mv
@@ -70,10 +71,12 @@ def evaluate_points(
             detected_ml=_detected_ml(record),
         )
         result = evaluation.to_json()
+        result["notes"] = [one for one in result["warnings"] if one.startswith(ABOUT_PKA)]
+        result["warnings"] = [one for one in result["warnings"] if one not in result["notes"]]
         _hold_against_run(result, evaluation, plan, record, curve)
     result["run"], result["seed"] = str(path), plan.seed
     result["run_outcome"] = closing.get("outcome", "open")
-    result["result"] = amount_of_plan(plan, result)
+    result["result"] = _amount(plan, result)
     result["regions"] = regions_of(curve, result)
     if identify:
         u_mol_l = plan.titrant.standard_uncertainty_mol_l
@@ -109,6 +112,15 @@ def evaluate_points_at_ph(plan: RunPlan, record: Record, ph: float) -> tuple[Cur
 def _result_at_ph(plan: RunPlan, record: Record, curve: Curve, ph: float) -> dict[str, Any]:
     at_s = [float(one["at_s"] or 0.0) for one in _used(record)]
     return result_at_ph(plan, curve, ph, beyond_ml=_beyond_points_ml(plan, record), at_s=at_s)
+
+
+def _amount(plan: RunPlan, result: dict[str, Any]) -> dict[str, Any] | None:
+    """Return the amount; where it is refused the end points stand and the reason is told."""
+    try:
+        return amount_of_plan(plan, result)
+    except HalfdropError as error:
+        result["warnings"].append(f"the amount could not be computed: {error}")
+        return None
 
 
 def _hold_against_run(

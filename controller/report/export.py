@@ -52,6 +52,36 @@ TABLES: dict[str, tuple[str, tuple[tuple[str, str, str], ...]]] = {
             ("potential_mv", "number", "potential there, mV"),
         ),
     ),
+    "results.csv": (
+        "Amounts with their uncertainty",
+        (
+            ("evaluation", "string", "with the run, or the number of an added one"),
+            ("sample_id", "string", "the sample"),
+            ("value", "number", "the amount, in the unit beside it"),
+            ("unit", "string", "its unit"),
+            ("substance", "string", "substance as which it is reported"),
+            ("end_point", "string", "end point that it counts to"),
+            ("standard_uncertainty", "number", "standard uncertainty, in the same unit"),
+            ("expanded_uncertainty", "number", "expanded uncertainty, in the same unit"),
+            ("coverage_factor", "number", "expanded over standard uncertainty"),
+        ),
+    ),
+    "budget.csv": (
+        "Uncertainty budget of each amount",
+        (
+            ("evaluation", "string", "with the run, or the number of an added one"),
+            ("quantity", "string", "input quantity"),
+            ("value", "number", "its value, in its unit"),
+            ("unit", "string", "its unit"),
+            ("standard_uncertainty", "number", "its standard uncertainty, in its unit"),
+            ("distribution", "string", "what is assumed of its error"),
+            ("degrees_of_freedom", "number", "of its standard uncertainty; empty: infinite"),
+            ("sensitivity", "number", "change of the amount per unit of the quantity"),
+            ("contribution", "number", "sensitivity times standard uncertainty, in the amount's unit"),
+            ("share", "number", "part of the variance of the amount"),
+            ("shared_id", "string", "cause that enters once, where it is shared"),
+        ),
+    ),
     "readings.csv": (
         "Every reading of the probe",
         (
@@ -72,6 +102,8 @@ def tables(record: Record) -> dict[str, str]:
         "readings.csv": _table("readings.csv", _readings(record)),
         "doses.csv": _table("doses.csv", _doses(record)),
         "end_points.csv": _table("end_points.csv", _end_points(record)),
+        "results.csv": _table("results.csv", _results(record)),
+        "budget.csv": _table("budget.csv", _budgets(record)),
     }
 
 
@@ -127,12 +159,28 @@ def _doses(record: Record) -> list[dict[str, Any]]:
     return [{key: row.get(key) for key in keys} for row in rows]
 
 
-def _end_points(record: Record) -> list[dict[str, Any]]:
+def _evaluations(record: Record) -> list[tuple[str, dict[str, Any]]]:
+    """The result of the run, then those added beside it."""
     own = (record.closing or {}).get("result") or {}
     added = [(f"added {one.number}", one.content["result"]) for one in added_evaluations(record.path)
              if one.state == "intact"]  # fmt: skip
+    return [("with the run", own), *added]
+
+
+def _results(record: Record) -> list[dict[str, Any]]:
+    sample = ((record.header.get("plan") or {}).get("sample") or {}).get("sample_id")
+    found = [(evaluation, result.get("result")) for evaluation, result in _evaluations(record)]
+    return [{**amount, "evaluation": evaluation, "sample_id": sample} for evaluation, amount in found if amount]
+
+
+def _budgets(record: Record) -> list[dict[str, Any]]:
+    budgets = [(name, (result.get("result") or {}).get("budget") or {}) for name, result in _evaluations(record)]
+    return [{**row, "evaluation": name} for name, budget in budgets for row in budget.get("rows") or []]
+
+
+def _end_points(record: Record) -> list[dict[str, Any]]:
     rows = []
-    for evaluation, result in [("with the run", own), *added]:
+    for evaluation, result in _evaluations(record):
         for index, point in enumerate(result.get("end_points") or []):
             shared = {"evaluation": evaluation, "end_point": index + 1}
             rows.append({**shared, **point, "reported": True})

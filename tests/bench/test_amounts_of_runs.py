@@ -95,6 +95,10 @@ def test_a_back_titration(
     assert (says in warned) if says else not warned
     if mmol is None:
         assert result["result"] is None
+        again = json.loads(halfdrop("evaluate", result["run"], "--json")[1])
+        assert again["end_points"]
+        assert again["result"] is None
+        assert says in " ".join(again["warnings"])
     else:
         # two protons a mole of calcium carbonate, 10 mL of sample
         assert result["result"]["value"] == pytest.approx(mmol / 20.0, abs=result["result"]["expanded_uncertainty"])

@@ -316,6 +316,8 @@ def test_every_exported_cell_is_of_the_type_that_the_package_states(runs: list[P
         "readings.csv",
         "doses.csv",
         "end_points.csv",
+        "results.csv",
+        "budget.csv",
     }
     for resource in package["resources"]:
         text = files[resource["path"]]
@@ -331,6 +333,11 @@ def test_every_exported_cell_is_of_the_type_that_the_package_states(runs: list[P
     assert float(doses[-1]["delivered_ml"]) == pytest.approx(record.closing["result"]["titrant_ml"])
     reported = [one for one in csv.DictReader(io.StringIO(files["end_points.csv"])) if one["reported"] == "true"]
     assert [one["end_point"] for one in reported] == ["1", "2"]
+    (amount,) = csv.DictReader(io.StringIO(files["results.csv"]))
+    assert float(amount["value"]) == record.closing["result"]["result"]["value"]
+    assert amount["unit"] == record.closing["result"]["result"]["unit"]
+    shares = [float(row["share"]) for row in csv.DictReader(io.StringIO(files["budget.csv"]))]
+    assert sum(shares) == pytest.approx(1.0)
     assert not any(cell[:1] in ("=", "+", "-", "@") for one in doses for cell in (one["reason"],))
 
 
