@@ -8,12 +8,12 @@ from statistics import median
 
 from controller.calibration.probe_record import LearnedTimes, learned_times
 from controller.calibration.probe_trend import slowing
-from controller.calibration.store import Calibration, calibrations
+from controller.calibration.store import Calibration, first_and_last
 
 #: a probe that needs this many times as long in buffers, or in response checks, as in its first ones is named
 SLOWER_IN_BUFFERS, SLOWER_IN_CHECKS = 2.0, 1.5
 #: the first calibrations, whose median the newest is held against
-_FIRST = 3
+FIRST = 3
 
 
 def slowing_warnings(folder: Path, probe: str) -> tuple[str, ...]:
@@ -23,7 +23,7 @@ def slowing_warnings(folder: Path, probe: str) -> tuple[str, ...]:
         folder: the lab folder's calibrations.
         probe: its identity.
     """
-    accepted = [one for one in calibrations(folder, subject=probe) if one.accepted]
+    accepted = [one for kind in ("probe", "response") for one in first_and_last(folder, kind, probe, first=FIRST)]
     return slowing_texts(learned_times(folder, probe), accepted)
 
 
@@ -45,7 +45,7 @@ def slowing_texts(learned: Sequence[LearnedTimes], accepted: Sequence[Calibratio
 def first_response_s(accepted: Sequence[Calibration]) -> float | None:
     """Return the median time that a probe took in buffers in its first calibrations; None where there are none."""
     known = [value for one in accepted if one.kind == "probe" and (value := _number(one, "response_s")) is not None]
-    return median(known[:_FIRST]) if known else None
+    return median(known[:FIRST]) if known else None
 
 
 def slow_in_buffers_text(now_s: float, first_s: float) -> str:
@@ -76,7 +76,7 @@ def _slower(series: Sequence[float | None], times: float) -> tuple[float, float]
     known = [value for value in series if value is not None]
     if len(known) < 2:
         return None
-    first = median(known[: min(_FIRST, len(known) - 1)])
+    first = median(known[: min(FIRST, len(known) - 1)])
     return (known[-1], first) if known[-1] > times * first > 0.0 else None
 
 

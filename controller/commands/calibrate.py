@@ -16,8 +16,8 @@ from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import plan_probe
 from controller.calibration.planning_burette import WeighingConditions, plan_burette, read_weighings
 from controller.calibration.probe_session import calibrate_probe, probe_keys
-from controller.calibration.slowing import slowing_warnings
-from controller.calibration.store import calibrations, in_force
+from controller.calibration.slowing import FIRST, slowing_warnings
+from controller.calibration.store import first_and_last, in_force
 from controller.commands.calibrationlines import calibration_lines
 from controller.commands.calibrationrun import carry_out_calibration, lab_and_bench, opening_of, settle, told
 from controller.commands.output import say
@@ -59,7 +59,7 @@ def probe(given: argparse.Namespace) -> int:
             probe_identity=identity,
             today=utc_day(opened.clock.utc_s()),
             last=in_force(lab.calibrations, "probe", identity),
-            earlier=[one for one in calibrations(lab.calibrations, kind="probe", subject=identity) if one.accepted],
+            earlier=first_and_last(lab.calibrations, "probe", identity, first=FIRST),
             warnings=slowing_warnings(lab.calibrations, identity),
             lots=lots,
             check=not given.no_check,

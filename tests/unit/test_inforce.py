@@ -17,7 +17,7 @@ from controller.calibration.findings import Finding, Verdict
 from controller.calibration.lot_session import settle_lot
 from controller.calibration.planning import common, no_pump, probe_of, vessel_of
 from controller.calibration.plans import BlankPlan, CalibrationPlan, TitrantPlan
-from controller.calibration.store import calibrations, in_force
+from controller.calibration.store import calibrations, first_and_last, in_force
 from controller.journal import Journal
 from controller.planning.amountinputs import burette_of, titrant_of
 from controller.planning.amounts import add_ph_uncertainty
@@ -210,6 +210,22 @@ def test_a_volume_outside_the_burettes_range_is_warned_about(tmp_path: Path) -> 
         method(), bench(), tmp_path, pump_identity="b", probe_identity="p", today=TODAY, expected_volume_ml=2.0
     )
     assert any("20 % of the 10 mL syringe" in text for text in known.traceability.warnings)  # USP <541>
+
+
+def test_first_and_last_are_those_of_all(tmp_path: Path) -> None:
+    for value in (0.1, 0.2, 0.3, 0.4, 0.5):
+        answer = "no" if value == 0.2 else "yes"
+        keep(tmp_path, titrant_plan(), {"lot": {**LOT, "concentration_mol_l": value}}, answer=answer)
+    keep(tmp_path, titrant_plan(lot_id="another"), {"lot": LOT})
+
+    def values(first: int) -> list[float]:
+        some = first_and_last(tmp_path, "titrant", "NaOH-2026-11", first=first)
+        return [one.result["lot"]["concentration_mol_l"] for one in some]
+
+    assert values(2) == [0.1, 0.3, 0.5]
+    assert values(9) == [0.1, 0.3, 0.4, 0.5]
+    assert [one.subject for one in calibrations(tmp_path, subject="another")] == ["another"]
+    assert len(calibrations(tmp_path)) == 6
 
 
 def test_an_edited_record_is_never_in_force(tmp_path: Path) -> None:
