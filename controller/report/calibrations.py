@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from controller.calibration.store import Calibration, calibrations
+from controller.calibration.store import Calibration, by_sha256
 from controller.report.wording import Facts, facts_of, local_time, number, with_uncertainty
 
 FOLDER = "calibrations"
@@ -25,7 +25,7 @@ def calibrations_in_force(hashes: Mapping[str, Any], folder: Path, offset: Any) 
     wanted = {name.removeprefix(_PREFIX): str(sha) for name, sha in hashes.items() if name.startswith(_PREFIX)}
     if not wanted:
         return []
-    known = {one.sha256: one for one in calibrations(folder)}
+    known = by_sha256(folder, set(wanted.values()))
     return [(kind, f"{_told(known.get(sha), offset)}; SHA-256 {sha}") for kind, sha in sorted(wanted.items())]
 
 
