@@ -61,7 +61,8 @@ def _lot(lot: dict[str, Any], offset: Any) -> Facts:
     value, u = with_uncertainty(lot.get("concentration_mol_l"), lot.get("own_standard_uncertainty_mol_l"))
     facts.insert(1, ("concentration", f"{value} mol/L (own u = {u} mol/L)"))
     for cause in lot.get("causes") or []:
-        facts.append((f"shared with {cause.get('shared_id')}", f"{number(cause.get('contribution_mol_l'))} mol/L"))
+        part = number(float(f"{cause.get('contribution_mol_l') or 0.0:.3g}"))
+        facts.append((f"shared with {cause.get('shared_id')}", f"{part} mol/L"))
     return facts
 
 

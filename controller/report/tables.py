@@ -26,6 +26,13 @@ class Table:
     note: str = ""
 
 
+#: why a reported end point's uncertainty is larger than its estimator's own
+_BEYOND_ESTIMATORS = (
+    "The uncertainty of an end point also holds what no estimator sees: the plunger's position, doses in doubt, and "
+    "what the last look at the points left open."
+)
+
+
 def end_points(result: dict[str, Any]) -> Table:
     """Every end point with its uncertainty and estimator."""
     rows = []
@@ -34,8 +41,9 @@ def end_points(result: dict[str, Any]) -> Table:
         signals = number(point.get("ph"), 2), number(point.get("potential_mv"), 1)
         rows.append((str(index), volume, u, *signals, str(point.get("estimator") or DASH)))
     heads = ("No.", "Volume / mL", "u / mL", "pH", "Potential / mV", "Reported by")
-    note = str(result.get("estimator_rule") or "")
-    return Table(caption="End points", heads=heads, rows=tuple(rows), numeric=(0, 1, 2, 3, 4), note=_sentence(note))
+    rule = _sentence(str(result.get("estimator_rule") or ""))
+    note = f"{rule} {_BEYOND_ESTIMATORS}".strip() if rows else rule
+    return Table(caption="End points", heads=heads, rows=tuple(rows), numeric=(0, 1, 2, 3, 4), note=note)
 
 
 def estimators(result: dict[str, Any], again: dict[str, Any]) -> Table:

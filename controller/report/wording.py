@@ -9,7 +9,14 @@ from typing import Any
 from controller.commands.output import decimals
 
 MINUS, DASH = "\N{MINUS SIGN}", "\N{EN DASH}"
-_NAMES = {"pkw": "pKw", "pka": "pKa", "debye_huckel_a": "Debye–Hückel A"}
+_NAMES = {
+    "pkw": ("pKw", ""),
+    "pka": ("pKa", ""),
+    "debye_huckel_a": ("Debye–Hückel A", ""),
+    "largest_ph_beyond": ("a sample may lie beyond by, pH", ""),
+    "largest_temperature_difference_c": ("a sample may be warmer or colder by", "°C"),
+    "pivot_ml": ("gain and offset are independent at", "mL"),
+}
 _SUFFIXES = {
     "relative_uncertainty": ("relative uncertainty", ""),
     "mol_l": ("", "mol/L"),
@@ -107,7 +114,7 @@ def clock(seconds: float | None) -> str:
 def words_of(key: str) -> tuple[str, str]:
     """Return a settings key as words, and the unit that its suffix names ("smallest_ml": "smallest", "mL")."""
     if key in _NAMES:
-        return _NAMES[key], ""
+        return _NAMES[key]
     for suffix, (word, unit) in _SUFFIXES.items():
         if key == suffix or key.endswith(f"_{suffix}"):
             stem = key.removesuffix(suffix).rstrip("_").replace("_", " ")
@@ -145,6 +152,8 @@ def cell(key: str, value: Any, offset: Any) -> str:
 def _value(key: str, value: Any, unit: str, offset: Any) -> str:
     if isinstance(value, bool):
         return "yes" if value else "no"
+    if isinstance(value, float) and "uncertainty" in key:
+        value = float(f"{value:.3g}")
     if isinstance(value, int | float):
         return f"{number(value)} {unit}".rstrip()
     if isinstance(value, list | tuple):
