@@ -79,6 +79,8 @@ def _times(mixture: Mixture, factor: float) -> Mixture:
 
 def jump_warning(plan: RunPlan, expected_ml: float) -> str | None:
     """Return a warning where the jump is smaller than the method looks for, and whether dilution is to blame."""
+    if plan.end_points.at_ph is not None:
+        return None  # no jump is looked for
     step_mv = jump_mv(plan, expected_ml=expected_ml)
     needed_mv = plan.end_points.smallest_rise_mv
     if step_mv >= needed_mv:

@@ -7,6 +7,8 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
+import numpy as np
+
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.method import MethodSettings
@@ -19,7 +21,12 @@ from controller.replay import dialogue, plan_of_record
 from controller.study import StudyWorld, drive
 from controller.titration.actions import Dosed, Failed, Reading
 from controller.titration.plan import RunPlan
+from simulators.bench import VirtualBench
 from simulators.equivalence import equivalence_volumes_ml
+from simulators.solution import titration_curve
+
+#: where the truth at a set pH is looked for
+_TRUTH_POINTS = 4001
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -129,6 +136,7 @@ def other_plan(plan: RunPlan, method: MethodSettings, bench: BenchSettings) -> R
         rule = replace(rule, rule="extrapolated")
     return replace(
         plan,
+        kind=wanted.kind,
         method_name=wanted.method_name,
         method_title=wanted.method_title,
         dosing=wanted.dosing,
@@ -179,9 +187,8 @@ def _outcome(fitted: FittedBench, plan: RunPlan, seeds: range, count: Callable[[
         results.append(run.result)
         points = run.result["end_points"]
         if len(points) >= plan.end_points.expected:
-            truth = equivalence_volumes_ml(bench.sample, bench.titrant, plan.sample.initial_volume_ml, bench.medium)
-            nearest = min(truth, key=lambda volume: abs(volume - points[-1]["volume_ml"]))
-            errors.append(1000.0 * (points[-1]["volume_ml"] - nearest))
+            found_ml = float(points[-1]["volume_ml"])
+            errors.append(1000.0 * (found_ml - _truth_ml(plan, bench, found_ml)))
             uncertainties.append(1000.0 * points[-1]["standard_uncertainty_ml"])
         curve = curve or tuple(
             (one.volume_ml, one.potential_mv)
@@ -201,6 +208,18 @@ def _outcome(fitted: FittedBench, plan: RunPlan, seeds: range, count: Callable[[
         uncertainty_ul=round(statistics.median(uncertainties), 3) if uncertainties else None,
         curve=curve,
     )
+
+
+def _truth_ml(plan: RunPlan, bench: VirtualBench, found_ml: float) -> float:
+    """The bench's true volume of what the plan looks for: at its set pH, else the nearest equivalence point."""
+    initial_ml, at_ph = plan.sample.initial_volume_ml, plan.end_points.at_ph
+    if at_ph is None:
+        truth = equivalence_volumes_ml(bench.sample, bench.titrant, initial_ml, bench.medium)
+        return min(truth, key=lambda volume: abs(volume - found_ml))
+    volumes = np.linspace(max(0.0, 0.9 * found_ml - 0.1), 1.1 * found_ml + 0.1, _TRUTH_POINTS)
+    curve = titration_curve(bench.sample, bench.titrant, initial_ml, volumes, bench.medium)
+    order = slice(None, None, -1 if plan.titrant.acid else 1)
+    return float(np.interp(at_ph, curve[order], volumes[order]))
 
 
 def _range(values: Sequence[float]) -> tuple[float, float, float]:
