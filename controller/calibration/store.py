@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Iterator
+from collections.abc import Collection, Iterator
 from dataclasses import dataclass
 from functools import lru_cache
 from itertools import islice
@@ -58,6 +58,15 @@ def first_and_last(folder: Path, kind: str, subject: str, *, first: int) -> list
     oldest = list(islice(accepted, first))
     newest = in_force(folder, kind, subject)
     return oldest if newest is None or any(one.path == newest.path for one in oldest) else [*oldest, newest]
+
+
+def by_sha256(folder: Path, wanted: Collection[str]) -> dict[str, Calibration]:
+    """Return the calibrations whose files have one of these hashes; the others are not read as records."""
+    found = {}
+    for path in list_records(folder) if folder.is_dir() else []:
+        if hashlib.sha256(path.read_bytes()).hexdigest() in wanted and (one := _read(path)) is not None:
+            found[one.sha256] = one
+    return found
 
 
 def _found(folder: Path, kind: str | None, subject: str | None, *, newest_first: bool = True) -> Iterator[Calibration]:
