@@ -230,13 +230,17 @@ def points(record: Record) -> list[dict[str, Any]]:
 
     Keys: `volume_ml` (titrant volume seen by the probe), `delivered_ml`, `potential_mv`, `ph`, `settled`, `at_s`, and
     the standard deviations that the run gave the point, `volume_sd_ml` and `potential_sd_mv` (None in early records).
+    A point that the run later took for another composition has that one.
     """
     keys = ("volume_ml", "delivered_ml", "potential_mv", "ph", "settled", "volume_sd_ml", "potential_sd_mv")
-    return [
-        {**{key: entry.get(key) for key in keys}, "at_s": entry.get("run_s")}
-        for entry in record.of("report")
-        if entry.get("what") == "point"
-    ]
+    found: list[dict[str, Any]] = []
+    for entry in record.of("report"):
+        number = entry.get("point")
+        if entry.get("what") == "point":
+            found.append({**{key: entry.get(key) for key in keys}, "at_s": entry.get("run_s")})
+        elif entry.get("what") == "point-again" and isinstance(number, int) and 0 <= number < len(found):
+            found[number] |= {key: entry.get(key) for key in ("volume_ml", "volume_sd_ml")}
+    return found
 
 
 def printable(text: str) -> str:

@@ -85,7 +85,8 @@ class Report:
 
     `what` says which fields are set: "note" (text), "point" (volume_ml: composition at the glass, delivered_ml,
     potential_mv, ph, settled, text; what the evaluation takes its volume and potential to be worth: volume_sd_ml,
-    potential_sd_mv), "forecast" (volume_ml: predicted equivalence volume, standard_uncertainty_ml,
+    potential_sd_mv), "point-again" (point: number of an earlier point, from 0, that has another composition; volume_ml,
+    volume_sd_ml), "forecast" (volume_ml: predicted equivalence volume, standard_uncertainty_ml,
     end_point), "end-point" (volume_ml, standard_uncertainty_ml, ph, potential_mv, estimator, end_point), "warning"
     (text).
     """
@@ -103,6 +104,7 @@ class Report:
     estimator: str | None = None
     volume_sd_ml: float | None = None
     potential_sd_mv: float | None = None
+    point: int | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

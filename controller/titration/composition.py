@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from copy import copy
 from dataclasses import replace
 
 from controller.titration.plan import ProbeResponse
@@ -36,6 +37,13 @@ class Composition:
     def slowness(self) -> float:
         """Bulk and film time as they are now, as a multiple of the record's."""
         return (self.constants.bulk_s + self.constants.film_s) / self._recorded_s
+
+    def slow_layer_slowed(self, times: float) -> Composition:
+        """The same log and fast lag with a slow layer so many times as slow."""
+        other = copy(self)
+        other.constants = replace(self.constants, slow_s=self.constants.slow_s * times)
+        other._cascade = None
+        return other
 
     def cascade(self) -> LagCascade:
         """The cascade with every dose of the log in it."""

@@ -19,7 +19,7 @@ from controller.titration.limits import check_limits, largest_dose_ml
 from controller.titration.noise import READINGS, measure_noise
 from controller.titration.outcome import run_result
 from controller.titration.plan import RunPlan
-from controller.titration.points import PhScale, Point
+from controller.titration.points import PhScale, Point, again_report, points_again
 from controller.titration.policies import dosing_policy, settling_rule
 from controller.titration.precision import near_ml, pump_precision_ml
 from controller.titration.probewatch import ProbeWatch
@@ -82,12 +82,22 @@ class _Run:
     @property
     def slowness(self) -> float | None:
         """How many times as slowly as its record says the probe answered; None where that is not known."""
-        return self._settler.slowness if isinstance(self._settler, LagCorrected) else None
+        return self._settler.slowness if isinstance(self._settler, LagCorrected) and self.record_holds else None
 
     @property
     def learned_lag(self) -> LearnedLag | None:
         """The probe's fast lag as this run learned it; None where it learned nothing of it."""
         return self._settler.learned if isinstance(self._settler, LagCorrected) else None
+
+    @property
+    def record_holds(self) -> bool:
+        """The points were corrected for the probe's lag to the end (or never)."""
+        return not isinstance(self._settler, LagCorrected) or self._settler.record_holds
+
+    @property
+    def lag_left_ml(self) -> float:
+        """What the last points may still lag behind; 0 where they are corrected for it."""
+        return self._settler.lag_left_ml if isinstance(self._settler, LagCorrected) else 0.0
 
     @property
     def temperature_c(self) -> float:
@@ -143,6 +153,7 @@ class _Run:
                     continue
             accepted = yield from self._settle(planned)
             yield from self._take(accepted, accepted.text)
+            yield from self._see_again()
             sound = self.forecast.sound
             yield from self.hold.after_dose(self.world, None if sound is None else sound.equivalence_ml)
             yield from self._look()
@@ -186,6 +197,16 @@ class _Run:
                 self._settler.learn(context, accepted)
                 return accepted
 
+    def _see_again(self) -> Talk[None]:
+        """The probe's lag record was left: say so, and see the points taken with it again."""
+        left = self._settler.news() if isinstance(self._settler, LagCorrected) else None
+        if left is None:
+            return
+        yield from self.world.warn(left.text)
+        for number, point in points_again(self.points, left.again):
+            self.points[number] = point
+            yield from self.world.say(again_report(number, point))
+
     def _warmed(self, temperature_c: float) -> Talk[None]:
         yield from self.world.warn(
             f"the sample went from {self._temperature_c:.1f} to {temperature_c:.1f} °C: pH is computed for the first"
@@ -212,6 +233,7 @@ class _Run:
             end_point=len(self.watch.found) + 1,
             precision_ml=pump_precision_ml(self.plan),
             near_ml=near_ml(self.plan, sound),
+            rest=(self.points[-1].at_s, self.points[-1].potential_mv),
             about_ml=None if self.target is None else self.target.about_ml(self.points, sound),
         )
 

@@ -73,13 +73,13 @@ def probe_lag(run: RunState) -> dict[str, Any] | None:
     """The probe's lag as learned from this run's transients, for the probe's own record; None: nothing learned."""
     learned = run.learned_lag
     if learned is None:
-        return None
+        return None if run.record_holds else {"transients": 0, "record_holds": False}
     slowness = run.slowness
     return {
         **asdict(learned),
         "temperature_c": round(run.temperature_c, 2),
         "slowness": None if slowness is None else round(slowness, 4),
-        "record_holds": True,
+        "record_holds": run.record_holds,
     }
 
 
@@ -160,7 +160,9 @@ def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | Non
             break
     return {
         "volume_ml": round(volume_ml, DIGITS),
-        "standard_uncertainty_ml": round(math.hypot(sd_ml, position_sd_ml(run), run.world.doubt_ml), DIGITS),
+        "standard_uncertainty_ml": round(
+            math.hypot(sd_ml, position_sd_ml(run), run.world.doubt_ml, run.lag_left_ml), DIGITS
+        ),
         "ph": None if ph is None else round(ph, 4),
         "potential_mv": None if potential_mv is None else round(potential_mv, 2),
         "estimator": estimator,

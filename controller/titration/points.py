@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
+from controller.titration.actions import Report
 from controller.titration.plan import ProbeCalibration, RunPlan
 from simulators.constants import ideal_slope_mv
 
@@ -59,3 +61,29 @@ def calibration_ph_sd(calibration: ProbeCalibration, ph: float, temperature_c: f
         turned = 1.0 - ideal_slope_mv(calibration.covered.temperature_c) / ideal_slope_mv(temperature_c)
         variance += (turned * calibration.covered.isopotential_ph_standard_uncertainty) ** 2
     return math.sqrt(max(0.0, variance))
+
+
+def points_again(points: Sequence[Point], again: Sequence[tuple[float, float]]) -> list[tuple[int, Point]]:
+    """The first points after the start with the composition that they are now taken for, and their numbers.
+
+    Args:
+        points: of the run, the start first.
+        again: composition and its standard deviation, mL, of the first points after the start.
+    """
+    changed = []
+    least_ml = points[0].volume_ml
+    for number, (seen_ml, sd_ml) in enumerate(again[: len(points) - 1], start=1):
+        least_ml = max(seen_ml, least_ml)  # a lag must not run backwards
+        changed.append((number, replace(points[number], volume_ml=least_ml, volume_sd_ml=sd_ml)))
+    return changed
+
+
+def again_report(number: int, point: Point) -> Report:
+    """A point with the composition that it is now taken for."""
+    return Report(
+        what="point-again",
+        point=number,
+        volume_ml=point.volume_ml,
+        volume_sd_ml=point.volume_sd_ml,
+        text=f"point {number}: the composition at the glass was {point.volume_ml:.4f} mL",
+    )

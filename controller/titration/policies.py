@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from controller.titration.composition import Composition, Stretch
 from controller.titration.dosing import DosingPolicy, EqualVolumes, ModelGuided, SlopeAdaptive
+from controller.titration.lag_watch import LagWatch
 from controller.titration.plan import RunPlan
 from controller.titration.points import PhScale
 from controller.titration.settling import FixedWait, SettlingRule, StabilityLimit
@@ -21,7 +22,8 @@ def settling_rule(plan: RunPlan, log: list[Stretch], scale: PhScale) -> Settling
     """
     settling, response = plan.settling, plan.probe.response
     if settling.rule == "lag-corrected" and response is not None:
-        return LagCorrected(settling, Composition(response, log), scale)
+        composition = Composition(response, log)
+        return LagCorrected(settling, composition, scale, LagWatch(response, log, composition, scale))
     if settling.rule in {"lag-corrected", "extrapolated"}:
         return Extrapolated(settling)
     return StabilityLimit(settling) if settling.rule == "stability-limit" else FixedWait(settling)

@@ -29,6 +29,7 @@ class SettlingContext:
         precision_ml: the pump's precision.
         near_ml: distance from equivalence within which the last stretch begins.
         about_ml: volume about which points must be good; None: the model's equivalence.
+        rest: time and potential of the point before; None: there is none.
     """
 
     at_s: float
@@ -42,6 +43,7 @@ class SettlingContext:
     precision_ml: float
     near_ml: float
     about_ml: float | None = None
+    rest: tuple[float, float] | None = None
 
     @property
     def centre_ml(self) -> float | None:

@@ -28,6 +28,7 @@ REACH_LIMITS = 4.0  # how far a level may be extrapolated: a drift fits a long t
 REACH_SHARE = 0.15
 LONGEST_S = 90.0
 HOLD_S = 60.0
+LONGEST_TAUS, HOLD_TAUS = 8.0, 6.0  # of a probe so slow that these are longer
 DRIFT_AFTER_S = 20.0
 OUTLIER_WINDOW = 15  # a burst of 6 bad readings stays a minority
 _MOST_READINGS = 60
@@ -36,16 +37,16 @@ _MOST_READINGS = 60
 class Extrapolated:
     """See the module. Times s, potentials mV."""
 
-    def __init__(self, settling: Settling) -> None:
+    def __init__(self, settling: Settling, *, tau_s: float = FIRST_TAU_S, shortest_taus: float = SHORTEST_TAUS) -> None:
         self._settling = settling
-        self._longest_s = max(settling.longest_s, LONGEST_S)
-        self._ln_tau = math.log(FIRST_TAU_S)
+        self._shortest_taus = shortest_taus
+        self._ln_tau = math.log(tau_s)
         self._seen = 0
         self._held_for = 0  # the end point before which it was held last
         self._hold = False
         self._context: SettlingContext | None = None
         self._readings: list[tuple[float, float]] = []
-        self._last_tau_s = FIRST_TAU_S
+        self._last_tau_s = tau_s
 
     def begin(self, context: SettlingContext) -> None:
         """See SettlingRule."""
@@ -63,10 +64,11 @@ class Extrapolated:
         if waited_s >= SKIP_S:
             self._readings.append((waited_s, potential_mv))
             del self._readings[:-_MOST_READINGS]
-        late = waited_s >= self._longest_s
-        if self._hold and waited_s < HOLD_S:
+        tau_s = math.exp(round(self._ln_tau, 6))
+        late = waited_s >= max(self._settling.longest_s, LONGEST_S, LONGEST_TAUS * tau_s)
+        if self._hold and waited_s < max(HOLD_S, HOLD_TAUS * tau_s):
             return None
-        shortest_s = self._settling.shortest_s + SHORTEST_TAUS * math.exp(self._ln_tau)
+        shortest_s = self._settling.shortest_s + self._shortest_taus * tau_s
         if waited_s < shortest_s or len(self._readings) < 5:
             return None
         if self._hold:  # after the hold the last readings speak for themselves

@@ -176,7 +176,7 @@ def _widen(point: dict[str, Any], by_ml: float) -> None:
 
 
 def _beyond_ml(run: RunState) -> float:
-    return math.hypot(position_sd_ml(run), run.world.doubt_ml)
+    return math.hypot(position_sd_ml(run), run.world.doubt_ml, run.lag_left_ml)
 
 
 def _slow(run: RunState, point: dict[str, Any]) -> list[str]:
