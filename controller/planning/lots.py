@@ -110,7 +110,7 @@ def titrant_lot(
         prepared_on=preparation.prepared_on,
         expires=preparation.expires,
     )
-    drift = drift_of(folder, lot_id, today, found.concentration_mol_l)
+    drift = drift_of(folder, lot_id, today, found.concentration_mol_l, found.budget.expanded_uncertainty)
     carbonate = None if carbonate_run is None else _carbonate(carbonate_run, lot_id, found.concentration_mol_l)
     doubts = [] if carbonate is None or carbonate.accepted else [carbonate.text]
     trace = first.traceability
@@ -174,18 +174,25 @@ def _carbonate(path: Path, lot_id: str, concentration_mol_l: float) -> Carbonate
     return judge_carbonate(gap, concentration_mol_l=concentration_mol_l)
 
 
-def drift_of(folder: Path, lot_id: str, today: dt.date, value: float) -> dict[str, Any]:
+def drift_of(folder: Path, lot_id: str, today: dt.date, value: float, expanded_uncertainty: float) -> dict[str, Any]:
     """Return the lot's accepted concentrations with this one, and their trend from three on; empty for the first."""
     before = [one for one in calibrations(folder, kind="titrant", subject=lot_id) if one.accepted]
-    entries = [(one.on, float(one.result["lot"]["concentration_mol_l"])) for one in before] + [
-        (today.isoformat(), value)
+    told = [(one.on, one.result["lot"]) for one in before]
+    entries = [
+        *((on, float(lot["concentration_mol_l"]), lot.get("expanded_uncertainty_mol_l")) for on, lot in told),
+        (today.isoformat(), value, expanded_uncertainty),
     ]
     if len(entries) < 2:
         return {}
-    chart: dict[str, Any] = {"entries": [{"on": on, "concentration_mol_l": c} for on, c in entries], "warnings": []}
-    days = [float(dt.date.fromisoformat(on).toordinal()) for on, _ in entries]
+    chart: dict[str, Any] = {
+        "entries": [
+            {"on": on, "concentration_mol_l": c, "expanded_uncertainty_mol_l": u} for on, c, u in entries
+        ],
+        "warnings": [],
+    }  # fmt: skip
+    days = [float(dt.date.fromisoformat(on).toordinal()) for on, _, _ in entries]
     try:
-        line = trend(days, [c for _, c in entries])
+        line = trend(days, [c for _, c, _ in entries])
     except StatisticsError:
         return chart
     chart["change_percent_per_month"] = 100.0 * line.change_per_day * 30.0 / value

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
+from controller.commands.output import decimals
 from controller.report.budget import budget_table
 from controller.report.tables import Table
 from controller.report.wording import DASH, Facts, cell, facts_of, number, with_uncertainty, words_of
@@ -57,12 +58,22 @@ def calibration_part(plan: Mapping[str, Any], result: Mapping[str, Any], offset:
     planned: list[Table] = []
     _gather({key: plan[key] for key in plan if key not in _PLAN_LEFT_OUT}, "plan", facts, planned, offset)
     return CalibrationPart(
-        headline="passed" if found.get("passed") else "did not pass",
+        headline=_headline(found),
         meaning=_meaning(found),
         findings=_findings(found),
         facts=tuple(facts),
         tables=(*tables, *planned),
     )
+
+
+def _headline(found: Mapping[str, Any]) -> str:
+    """Return the verdict, after the concentration where a titrant was standardised."""
+    verdict, lot = "passed" if found.get("passed") else "did not pass", found.get("lot")
+    if not isinstance(lot, dict):
+        return verdict
+    places = decimals(lot["expanded_uncertainty_mol_l"])
+    value, expanded = number(lot["concentration_mol_l"], places), number(lot["expanded_uncertainty_mol_l"], places)
+    return f"{value} ± {expanded} mol/L, {verdict}"
 
 
 def _meaning(found: Mapping[str, Any]) -> str:

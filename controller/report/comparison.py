@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from controller.foresight.whatif import Compared, MethodOutcome
-from controller.report.plots import AMBER, BLUE, INK, _figure, _svg
+from controller.report.plots import AMBER, BLUE, INK, as_svg, drawing
 
 
 def comparison_svg(found: Compared) -> str:
     """Return both methods' first runs as curves, and doses and duration over all seeds, as SVG."""
-    with _figure(7.2, 3.2) as figure:
+    with drawing(7.2, 3.2) as figure:
         curve, doses, time = figure.subplots(1, 3, width_ratios=(3, 1, 1))
         sides = ((found.own, BLUE, "o", "-"), (found.other, AMBER, "^", "--"))
         for outcome, colour, marker, line in sides:
@@ -19,7 +19,7 @@ def comparison_svg(found: Compared) -> str:
         curve.legend()
         _bars(doses, [(one, one.doses) for one, _, _, _ in sides], "doses")
         _bars(time, [(one, tuple(value / 60.0 for value in one.duration_s)) for one, _, _, _ in sides], "minutes")
-        return _svg(figure)
+        return as_svg(figure)
 
 
 def _bars(axes: object, values: list[tuple[MethodOutcome, tuple[float, ...]]], title: str) -> None:

@@ -18,6 +18,7 @@ from controller.report.budget import budget_table
 from controller.report.calibration_part import calibration_part
 from controller.report.calibrations import FOLDER, calibrations_in_force
 from controller.report.cautions import cautions_of
+from controller.report.drift import drift_chart
 from controller.report.headline import headline
 from controller.report.instruments import instruments
 from controller.report.plots import Mark, curve_figure, gran_figure, residual_figure
@@ -191,6 +192,10 @@ def _alerts(record: Record, plan: dict[str, Any], closing: dict[str, Any]) -> li
 
 
 def _figures(record: Record, result: dict[str, Any]) -> tuple[list[Figure], list[str]]:
+    calibration = result.get("calibration")
+    if isinstance(calibration, dict):
+        chart = drift_chart(calibration)
+        return ([Figure(address=_address(chart[0]), alternative=chart[1], caption=chart[2])] if chart else []), []
     marks = [
         Mark(volume_ml=float(one["volume_ml"]), standard_uncertainty_ml=one.get("standard_uncertainty_ml"))
         for one in result.get("end_points") or []

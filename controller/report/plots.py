@@ -58,7 +58,8 @@ class Mark:
 
 
 @contextmanager
-def _figure(width_in: float, height_in: float) -> Iterator[Any]:
+def drawing(width_in: float, height_in: float) -> Iterator[Any]:
+    """Yield an empty figure in the style of the reports."""
     import matplotlib as mpl
     from matplotlib.figure import Figure
 
@@ -69,7 +70,8 @@ def _figure(width_in: float, height_in: float) -> Iterator[Any]:
         yield Figure(figsize=(width_in, height_in), layout="constrained")
 
 
-def _svg(figure: Any) -> str:
+def as_svg(figure: Any) -> str:
+    """Return a figure as SVG, the same bytes from the same numbers."""
     out = io.StringIO()
     figure.savefig(out, format="svg", transparent=True, metadata={"Date": None, "Creator": None})
     return out.getvalue()
@@ -83,7 +85,7 @@ def curve_figure(series: Series, marks: Sequence[Mark], *, window_on: int = -1) 
         marks: reported end points.
         window_on: index of the end point that the right half shows.
     """
-    with _figure(7.3, 4.7) as figure:
+    with drawing(7.3, 4.7) as figure:
         columns = 2 if marks else 1
         grid = figure.subplots(
             3, columns, sharex="col", squeeze=False, height_ratios=(5.0, 0.45, 2.2), width_ratios=(2.1, 1.0)[:columns]
@@ -92,7 +94,7 @@ def curve_figure(series: Series, marks: Sequence[Mark], *, window_on: int = -1) 
         grid[0, 0].set_title("Whole run")
         if marks:
             _near(series, marks, grid, marks[window_on])
-        return _svg(figure)
+        return as_svg(figure)
 
 
 def _near(series: Series, marks: Sequence[Mark], grid: Any, mark: Mark) -> None:
@@ -172,7 +174,7 @@ def gran_figure(series: Series) -> str | None:
     """Return the Gran plot, both functions scaled to mL of titrant; None where there is no line."""
     if not series.gran:
         return None
-    with _figure(3.6, 2.9) as figure:
+    with drawing(3.6, 2.9) as figure:
         axis = figure.subplots()
         for index, line in enumerate(series.gran):
             _gran_line(axis, line, first=index == 0)
@@ -182,7 +184,7 @@ def gran_figure(series: Series) -> str | None:
         axis.set_ylim(bottom=0.0)
         axis.margins(x=0.03)
         axis.legend(loc="best")
-        return _svg(figure)
+        return as_svg(figure)
 
 
 def _gran_line(axis: Any, line: GranSeries, *, first: bool) -> None:
@@ -217,7 +219,7 @@ def residual_figure(series: Series) -> str | None:
     residual, spread = np.array(fit.residual_ml) * 1000.0, np.array(fit.residual_sd_ml) * 1000.0
     volume, settled = series.curve.volume_ml, series.settled
     scaled = residual / spread
-    with _figure(3.6, 2.9) as figure:
+    with drawing(3.6, 2.9) as figure:
         axis = figure.subplots()
         axis.axhspan(-2.0, 2.0, color=GREEN, alpha=0.12, lw=0)
         axis.axhline(0.0, color=QUIET, linewidth=0.7)
@@ -229,4 +231,4 @@ def residual_figure(series: Series) -> str | None:
         axis.set_xlabel("titrant volume / mL")
         axis.set_ylabel("volume less fit, in its own SDs")
         axis.annotate("band: ± 2 SD", (0.99, 0.02), xycoords="axes fraction", ha="right", color=QUIET, fontsize=7)
-        return _svg(figure)
+        return as_svg(figure)
