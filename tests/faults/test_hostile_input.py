@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import random
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -15,15 +16,16 @@ from configs.errors import HalfdropError, SettingsError
 from configs.faultfile import FaultsSettings
 from configs.loading import parse
 from configs.settings import BenchSettings, SolutionSettings
-from controller.guard import Guard, room_ml
+from controller.guard import room_ml
 from controller.journal import Journal
 from controller.records.record import printable, verify_bytes
 from controller.records.recordfile import MemorySink, new_record
-from controller.running.execution import Execution
+from controller.runner import run
 from controller.running.log import LabLog
-from controller.running.stopping import StopSwitch
-from controller.titration.actions import Dose, Dosed, Prime, Read, Reading, Refill, Refused, Wait
+from controller.titration.actions import Ask, Decisions, Dose, Prime, Read, Reading, Refill, Wait
+from controller.titration.plan import Question
 from drivers.clock import ManualClock
+from drivers.operator import AnswersOperator
 
 
 def _record(lines: int = 4) -> bytes:
@@ -145,41 +147,78 @@ def test_a_log_that_cannot_be_written_stops_nothing(tmp_path: Path) -> None:
 # --- a hostile core -----------------------------------------------------------------------------------------------
 
 volumes = st.one_of(st.floats(allow_nan=True, allow_infinity=True), st.floats(0.0005, 3.0), st.sampled_from([0.5, 2.0]))
+TIP = Ask(key="tip-over-waste", text="", choices=("yes",))
+GOGGLES = Ask(key="goggles", text="", choices=("yes", "no"))
+#: a number is the volume of the next dose, rightly numbered
 asked = st.one_of(
     st.builds(Dose, number=st.integers(-2, 40), volume_ml=volumes, reason=st.just("")),
+    st.sampled_from([0.5, 0.55, 0.61, 3.0]),
+    st.sampled_from([0.5, 0.55, 0.61, 3.0]),
     st.builds(Prime, volume_ml=volumes),
+    st.builds(Prime, volume_ml=st.sampled_from([0.5, 2.0])),
     st.builds(Wait, seconds=st.floats(-5, 4000)),
     st.just(Refill()),
     st.just(Read()),
+    st.just(TIP),
+    st.just(GOGGLES),
 )
+beginnings = st.sampled_from([[], [GOGGLES], [GOGGLES, TIP], [TIP, Prime(volume_ml=2.0), GOGGLES]])
 
 
-@settings(max_examples=40, deadline=None)
-@given(st.lists(asked, max_size=80), st.floats(40.0, 84.0))
-def test_no_core_can_pass_a_limit_of_vessel_syringe_or_numbers(
-    campaign: Any, actions: list[Any], initial_ml: float
+def _asks_for(wanted: list[Any]) -> Decisions:
+    """A core that asks for all of this, whatever it is answered, and calls itself satisfied."""
+    number = 0
+    for action in wanted:
+        if isinstance(action, float):
+            number += 1
+            yield Dose(number=number, volume_ml=action, reason="")
+        else:
+            number = max(number, action.number if isinstance(action, Dose) else 0)
+            yield action
+    return {"outcome": "completed", "reason": None, "end_points": [], "warnings": []}
+
+
+@settings(max_examples=80, deadline=None)
+@given(beginnings, st.lists(asked, min_size=8, max_size=80), st.sampled_from([1.0, 2.0, 7.0, 40.0]))
+def test_no_core_can_pass_a_limit_of_vessel_waste_syringe_time_or_numbers(
+    campaign: Any, beginning: list[Any], wanted: list[Any], room_left_ml: float
 ) -> None:
-    """Whatever is asked goes through execution, drivers, wire and device; the world is then measured."""
-    from dataclasses import replace
-
-    bench = campaign.build("acetic", 3, campaign.settings_of([], 3))
-    plan = replace(bench.plan, sample=replace(bench.plan.sample, initial_volume_ml=initial_ml))
-    guard, journal = Guard(plan), Journal(MemorySink(), bench.clock)
-    journal.begin({})
-    execution = Execution(plan, bench.devices, journal, guard, clock=bench.clock, stop=StopSwitch())
-    seen: set[int] = set()
-    for action in actions:
-        answer = execution.carry_out(action)
-        if isinstance(answer, Dosed):
-            assert answer.number not in seen, "a number was used twice"
-            seen.add(answer.number)
-            assert isinstance(action, Dose)
-            assert answer.volume_ml <= plan.vessel.largest_dose_ml + 1e-6
-        if isinstance(action, Prime):
-            assert isinstance(answer, Refused), "nobody said that the tip is over the waste"
-        assert initial_ml + bench.world.true_delivered_ml(bench.clock.now_s()) < room_ml(plan)
-    assert execution.steps == bench.world.mechanism.tip_steps_total(bench.clock.now_s())
-    assert execution.at_s() <= plan.vessel.longest_run_s + 1e-6
+    """Whatever is asked goes through runner, drivers, wire and device; the world is then measured."""
+    bench = campaign.build("acetic", 3, campaign.settings_of([], 3), contents_ml=4.0)
+    initial_ml = room_ml(bench.plan) - room_left_ml
+    plan = replace(
+        bench.plan,
+        sample=replace(bench.plan.sample, initial_volume_ml=initial_ml),
+        vessel=replace(bench.plan.vessel, largest_dose_ml=0.6, waste_ml=3.0, longest_run_s=900.0),
+        pump=replace(bench.plan.pump, reservoir_ml=6.0),
+        dosing=replace(bench.plan.dosing, largest_ml=0.5),
+        limits=replace(bench.plan.limits, run_time_s=900.0, titrant_ml=0.5),
+        questions=(Question(key="goggles", text="", choices=("yes", "no"), must_be="yes"),),
+        chemistry=replace(bench.plan.chemistry, expected_equivalence_volume_ml=None),
+    )
+    operator = AnswersOperator({"tip-over-waste": "yes", "goggles": "yes", "rinse-and-store": "yes"})
+    sink = MemorySink()
+    run(
+        plan, _asks_for(beginning + wanted), replace(bench.devices, operator=operator), Journal(sink, bench.clock),
+        clock=bench.clock, stop=bench.stop,
+    )  # fmt: skip
+    entries = [json.loads(line) for line in sink.data.splitlines()]
+    doses = [entry for entry in entries if entry.get("observation") == "dosed"]
+    primed_steps = sum(
+        round(entry["volume_ml"] / plan.pump.step_ml) for entry in entries if entry.get("observation") == "primed"
+    )
+    world, now_s = bench.world, bench.clock.now_s()
+    through_tip = world.mechanism.tip_steps_total(now_s)
+    assert sum(entry["steps"] for entry in doses) + primed_steps == through_tip
+    assert initial_ml + world.true_delivered_ml(now_s) < room_ml(plan)
+    assert primed_steps * plan.pump.step_ml <= 3.0 + 1e-6
+    assert through_tip * plan.pump.step_ml <= 4.0 + 6.0 + 1e-6, "more than syringe and reservoir held"
+    assert all(entry["volume_ml"] <= 0.6 + 1e-6 for entry in doses)
+    assert len({entry["number"] for entry in doses}) == len(doses), "a number was used twice"
+    assert all(entry["at_s"] <= 900.0 + 1e-6 for entry in doses)
+    if doses:
+        answered = [entry for entry in entries if entry.get("observation") == "answered" and entry["key"] == "goggles"]
+        assert entries.index(answered[0]) < entries.index(doses[0]), "dosed before the question was answered"
     bench.ports.close()
 
 

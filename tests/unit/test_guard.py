@@ -96,6 +96,23 @@ def test_a_dose_up_to_just_below_the_room_is_let_through(make_plan: MakePlan) ->
     assert "79.5 mL in the vessel and a dose of 0.5 mL reach its limit of 80 mL (100 mL less 10" in refusal
 
 
+def test_a_dose_larger_than_the_bench_allows_is_refused(make_plan: MakePlan) -> None:
+    guard = Guard(make_plan(questions=(), vessel={"largest_dose_ml": 0.6}))
+    assert guard.refusal(Dose(number=1, volume_ml=0.6, reason=""), 0.0) is None
+    refusal = guard.refusal(Dose(number=1, volume_ml=0.601, reason=""), 0.0)
+    assert refusal == "dose of 0.601 mL; this bench allows up to 0.6 mL"
+
+
+def test_a_refill_draws_no_more_than_the_reservoir_holds(make_plan: MakePlan) -> None:
+    """Whatever the pump tells of itself: the rest of the syringe is air."""
+    guard = Guard(make_plan(questions=(), pump={"contents_ml": 0.0, "reservoir_ml": 1.5}))
+    guard.filled(10.0, None)
+    assert (guard.account.contents_ml, guard.account.reservoir_ml) == (1.5, 0.0)
+    assert guard.refusal(Dose(number=1, volume_ml=0.9, reason=""), 0.0) is None
+    guard.intend(Dose(number=1, volume_ml=0.9, reason=""))
+    assert guard.refusal(Dose(number=2, volume_ml=0.7, reason=""), 0.0) is not None
+
+
 def test_an_account_passed_after_the_fact_is_a_breach(make_plan: MakePlan) -> None:
     guard = Guard(make_plan(sample={"initial_volume_ml": 79.5}, questions=()))
     dose = Dose(number=1, volume_ml=0.1, reason="")
