@@ -10,7 +10,7 @@ from typing import Any
 
 from controller.evaluation.inverse import InverseFit
 from controller.titration.actions import Decisions, Finish, Report
-from controller.titration.dosing import DosingPolicy, EqualVolumes, PlannedDose, local_slope
+from controller.titration.dosing import DosingPolicy, EqualVolumes, PlannedDose
 from controller.titration.endpoint import EndPointWatch, end_point_report
 from controller.titration.exchange import EndOfRunError, Exchange, Talk
 from controller.titration.forecast import Forecast
@@ -21,12 +21,12 @@ from controller.titration.outcome import run_result
 from controller.titration.plan import RunPlan
 from controller.titration.points import PhScale, Point, again_report, points_again
 from controller.titration.policies import dosing_policy, settling_rule
-from controller.titration.precision import near_ml, pump_precision_ml
 from controller.titration.probewatch import ProbeWatch
 from controller.titration.reasons import dose_reason
 from controller.titration.response_hold import ResponseHold
 from controller.titration.rest import rest_readings, sample_temperature_c
-from controller.titration.settling import Accepted, FixedWait, SettlingContext, SettlingRule
+from controller.titration.settling import Accepted, FixedWait, SettlingRule
+from controller.titration.settling_context import settling_context
 from controller.titration.settling_lag import LagCorrected
 from controller.titration.target_ph import TargetPh, target_of
 from controller.titration.target_ph_result import target_result
@@ -173,7 +173,7 @@ class _Run:
     def _settle(self, planned: PlannedDose) -> Talk[Accepted]:
         """Read until the rule accepts a point."""
         world, interval_s = self.world, self.plan.probe.reading_interval_s
-        context = self._context(planned, world.log[-1][1] if planned.volume_ml > 0.0 else world.now_s or 0.0)
+        context = settling_context(self, planned, world.log[-1][1] if planned.volume_ml > 0.0 else world.now_s or 0.0)
         self._settler.begin(context)
         world.disturbed = False
         self._readings = 0
@@ -182,7 +182,7 @@ class _Run:
             reading = yield from world.read()
             if world.disturbed:  # by hand, a gap, a failure: the wait starts over
                 world.disturbed = False
-                context = self._context(planned, reading.at_s - interval_s)
+                context = settling_context(self, planned, reading.at_s - interval_s)
                 self._settler.begin(context)
                 self._readings = 0
             if world.elapsed_s > self.plan.limits.run_time_s:
@@ -212,30 +212,6 @@ class _Run:
             f"the sample went from {self._temperature_c:.1f} to {temperature_c:.1f} °C: pH is computed for the first"
         )
         self._temperature_c = temperature_c
-
-    def _context(self, planned: PlannedDose, begun_s: float) -> SettlingContext:
-        sound = self.forecast.sound
-        slope = local_slope(self.points)
-        if sound is not None:
-            try:
-                ph = sound.ph_at(self.world.delivered_ml)
-                slope = max(slope * 0.2, 1.0 / max(abs(sound.volume_and_slope(ph)[1]), 1e-9))
-            except (ZeroDivisionError, OverflowError):
-                pass
-        return SettlingContext(
-            at_s=begun_s,
-            delivered_ml=self.world.delivered_ml,
-            noise_mv=self.probe.noise.sd_mv,
-            points=len(self.points),
-            local_slope_mv_ml=round(slope, 3),
-            step_mv=round(planned.expected_mv or 0.0, 3),
-            fit=sound,
-            end_point=len(self.watch.found) + 1,
-            precision_ml=pump_precision_ml(self.plan),
-            near_ml=near_ml(self.plan, sound),
-            rest=(self.points[-1].at_s, self.points[-1].potential_mv),
-            about_ml=None if self.target is None else self.target.about_ml(self.points, sound),
-        )
 
     def _take(self, accepted: Accepted, text: str) -> Talk[None]:
         """Keep a point, report it, and hold the rules for a probe that does not settle or sticks."""
