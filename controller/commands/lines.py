@@ -11,6 +11,8 @@ from controller.titration.actions import Command, Dose, Failed, Refill, Refused,
 
 #: a plain half-equivalence pH nearer to the pKa than this may stand for it
 LARGEST_PLAIN_BIAS = 0.02
+#: of a pKa that is not brought to infinite dilution
+NOT_CORRECTED = "activities not corrected: the substance's charge is not known, or the method takes none"
 #: as an amount names its end point (controller/calibration/validity.py)
 EQUIVALENCE = "the equivalence point"
 _TOLD = {"note", "warning", "end-point"}
@@ -65,7 +67,8 @@ def _course(result: dict[str, Any]) -> list[str]:
 
 def _half_line(half: dict[str, Any]) -> str:
     """PKa with the plain pH half-way beside it, and its bias where that is known."""
-    line = f"pKa about {half['pka']:.2f} from the half-equivalence at {half['volume_ml']:.3f} mL"
+    here = f" at this ionic strength ({NOT_CORRECTED})" if half.get("conditional_pka") == half["pka"] else ""
+    line = f"pKa about {half['pka']:.2f}{here} from the half-equivalence at {half['volume_ml']:.3f} mL"
     bias = half.get("plain_bias")
     if bias is None or half.get("ph") is None:
         return line

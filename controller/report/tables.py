@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from controller.commands.lines import LARGEST_PLAIN_BIAS
+from controller.commands.lines import LARGEST_PLAIN_BIAS, NOT_CORRECTED
 from controller.commands.output import decimals
 from controller.evaluation.statistics import StatisticsError, grubbs, summarise
 from controller.report.wording import DASH, clock, facts_of, local_time, number, with_uncertainty
@@ -93,6 +93,8 @@ def half_equivalence(result: dict[str, Any]) -> Table:
         shown = with_uncertainty(pka, u) if u else (number(pka, 3), DASH)
         bias = half.get("plain_bias")
         remark = str(half.get("remark") or "")
+        if not remark and pka is not None and half.get("conditional_pka") == pka:
+            remark = f"at this ionic strength; {NOT_CORRECTED}"
         if not remark and bias is not None and abs(bias) > LARGEST_PLAIN_BIAS:
             remark = "the plain pH half-way is no pKa here: its bias exceeds 0.02"
         rows.append((number(half.get("volume_ml"), 3), number(half.get("ph"), 2), number(bias, 3), *shown, remark))

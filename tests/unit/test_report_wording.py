@@ -264,3 +264,11 @@ def test_lines_for_people_show_the_plain_ph_beside_the_pka() -> None:
         one for one in result_lines({**result, "half_equivalence": [{**half, "plain_bias": 0.01}]}) if "pKa" in one
     ]
     assert line.endswith("+0.01 from it)")
+
+
+def test_a_pka_that_is_not_brought_to_infinite_dilution_says_so() -> None:
+    half = {"volume_ml": 2.5, "ph": 5.21, "pka": 5.2156, "conditional_pka": 5.2156, "plain_bias": -0.002}
+    (row,) = half_equivalence({"half_equivalence": [{**half, "pka_standard_uncertainty": 0.007}]}).rows
+    assert row[-1].startswith("at this ionic strength; activities not corrected")
+    (row,) = half_equivalence({"half_equivalence": [{**half, "pka": 5.41}]}).rows
+    assert "ionic strength" not in row[-1]
