@@ -47,6 +47,7 @@ class RunView:
     contents_ml: float | None = None
     reservoir_ml: float | None = None
     dosed_at_s: float = 0.0
+    observed_s: float = 0.0  # when something was last read or delivered
     closing: dict[str, Any] | None = None
     _pace: Pace | None = None
 
@@ -59,6 +60,17 @@ class RunView:
     def result(self) -> dict[str, Any]:
         """The closing line's result; empty where there is none."""
         return (self.closing or {}).get("result") or {}
+
+    @property
+    def took_s(self) -> float:
+        """How long it was observed, s: without the evaluation and the question after it."""
+        told = self.result.get("duration_s")
+        return float(told) if isinstance(told, int | float) else self.observed_s or self.at_s
+
+    @property
+    def target_ph(self) -> float | None:
+        """The pH that the run goes to, None where it looks for equivalence points."""
+        return None if self.plan is None else self.plan.end_points.at_ph
 
     @property
     def sample_id(self) -> str:
@@ -177,6 +189,8 @@ class RunView:
         self._pace_saw("point")
 
     def _observation(self, kind: str, entry: dict[str, Any]) -> None:
+        if kind in ("reading", "dosed"):
+            self.observed_s = self.at_s
         match kind:
             case "reading":
                 self._reading(entry)

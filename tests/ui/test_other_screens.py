@@ -309,7 +309,7 @@ def test_a_device_that_does_not_answer_blocks_no_key(stage: Any, monkeypatch: py
         assert not answered.is_set()
         answered.set()
         await stage.until(pilot, lambda: "probe on /dev/ttyUSB1: no reply" in stage.text(app))
-        assert "to do: Check the cable" in stage.text(app)
+        assert "to do       Check the cable" in stage.text(app)
 
     stage.drive(app, steps)
 
@@ -361,7 +361,8 @@ def test_day_colours_and_no_colours_show_the_same_text(stage: Any, monkeypatch: 
         async def steps(pilot: Any, app: Any = app) -> None:
             await stage.until(pilot, lambda: app.screen.view.over)
             await pilot.press("f2")
-            await pilot.pause()
+            await stage.until(pilot, lambda: stage.text(app).splitlines()[-2].strip().startswith("3:20  completed"))
+            await pilot.pause(0.3)
             texts.append((app.no_color, app.theme, stage.text(app)))
 
         stage.drive(app, steps)

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from functools import partial
 from pathlib import Path
 from typing import Any, ClassVar
 
 from rich.text import Text as RichText
+from textual import events
 from textual.app import ComposeResult
 from textual.binding import Binding, BindingType
 from textual.containers import Horizontal, Vertical
@@ -26,7 +28,9 @@ from controller.ui.widgets.titlebar import TitleBar
 
 PAGE = 200
 OUTCOMES = (None, "completed", "stopped", "failed", "abandoned", "open", "unreadable")
-_COLUMNS = (("started", 16), ("sample", 18), ("outcome", 9), ("amount", 22), ("end points", 16), ("method", 28))
+#: columns with their least widths; what room there is more goes to those that are named
+_COLUMNS = (("started", 16), ("sample", 18), ("outcome", 9), ("amount", 24), ("end points", 20), ("method", 34))
+_GROWING = ("sample", "end points", "method")
 
 
 class ArchiveScreen(Screen[None]):
@@ -69,7 +73,7 @@ class ArchiveScreen(Screen[None]):
     def on_mount(self) -> None:
         """Show what the index knows at once, then bring it up to date."""
         table = self.query_one(DataTable)
-        for name, width in _COLUMNS:
+        for name, width in widths_for(self.app.size.width, _COLUMNS, _GROWING):
             table.add_column(name, width=width, key=name)
         table.focus()
         self.run_worker(self._refresh, thread=True, exclusive=True, group="index")
@@ -85,6 +89,10 @@ class ArchiveScreen(Screen[None]):
 
     def _say_reading(self, done: int, of: int) -> None:
         self.query_one("#about", Plain).say(f"reading records: {done} of {of}")
+
+    def on_resize(self, event: events.Resize) -> None:
+        """Give the columns the room there is."""
+        set_widths(self.query_one(DataTable), widths_for(event.size.width, _COLUMNS, _GROWING))
 
     # --- the list ----------------------------------------------------------------------------------------------------
 
@@ -206,6 +214,19 @@ class ArchiveScreen(Screen[None]):
     def action_help(self) -> None:
         """Help for this screen."""
         self.app.push_screen(help_of("archive"))
+
+
+def widths_for(room: int, columns: Sequence[tuple[str, int]], growing: Sequence[str]) -> list[tuple[str, int]]:
+    """Return the columns with their widths on a screen of `room` cells."""
+    more = max(0, room - 6 - sum(width + 2 for _, width in columns)) // len(growing)
+    return [(name, width + (min(more, width) if name in growing else 0)) for name, width in columns]
+
+
+def set_widths(table: DataTable[Any], widths: Sequence[tuple[str, int]]) -> None:
+    """Change the widths of a table's columns."""
+    for (_, width), column in zip(widths, table.ordered_columns, strict=False):
+        column.width = width
+    table.refresh(layout=True)
 
 
 def _cells(one: IndexedRun) -> tuple[str, ...]:

@@ -32,6 +32,7 @@ from controller.ui.screens.dialogs import Choice, Line, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.screens.leftopen import left_open
 from controller.ui.texts import number_of
+from controller.ui.widgets.facts import Facts
 from controller.ui.widgets.readout import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
@@ -70,12 +71,10 @@ class BenchScreen(Screen[None]):
         """One page of facts, and one line for what goes on."""
         yield TitleBar("bench")
         with VerticalScroll(classes="page", id="facts"):
-            yield Plain("", id="bench-file")
-            yield Plain("", id="bench-pump")
-            yield Plain("", id="bench-probe")
-            yield Plain("", id="bench-calibration")
-            yield Plain("", id="bench-open", classes="problem")
-            yield Plain("", id="bench-problem", classes="problem")
+            for part in ("file", "pump", "probe", "calibration"):
+                yield Facts(id=f"bench-{part}")
+            yield Facts(id="bench-open", classes="problem")
+            yield Facts(id="bench-problem", classes="problem")
         yield Plain("", id="doing")
         yield Footer(show_command_palette=False, compact=True)
 
@@ -85,7 +84,7 @@ class BenchScreen(Screen[None]):
         try:
             self._bench = load_bench(self._lab.bench)
         except HalfdropError as error:
-            self.query_one("#bench-problem", Plain).say(printable_lines(str(error)))
+            self._say("bench-problem", printable_lines(str(error)).splitlines())
             return
         self._show()
         self.action_look()
@@ -117,14 +116,14 @@ class BenchScreen(Screen[None]):
         if "error" not in self._told:
             return []
         if "remedy" not in self._told:
-            return [printable(str(self._told["error"]))]
+            return [f"trouble     {printable(str(self._told['error']))}"]
         return [
-            f"{printable(self._told['where'])}: {printable(self._told['what'])}",
-            f"to do: {printable(self._told['remedy'])}; then press r",
+            f"trouble     {printable(self._told['where'])}: {printable(self._told['what'])}",
+            f"to do       {printable(self._told['remedy'])}; then press r",
         ]
 
     def _say(self, name: str, lines: list[str]) -> None:
-        self.query_one(f"#{name}", Plain).say("\n".join(lines))
+        self.query_one(f"#{name}", Facts).tell(lines)
 
     def _tick(self) -> None:
         self._waited_s += 1

@@ -6,6 +6,7 @@ from functools import partial
 from typing import Any, ClassVar
 
 from rich.text import Text as RichText
+from textual import events
 from textual.app import ComposeResult
 from textual.binding import Binding, BindingType
 from textual.containers import Horizontal, Vertical
@@ -20,7 +21,7 @@ from controller.commands.calibrations import calibration_entry, followed
 from controller.labfolder import Lab
 from controller.records.record import printable
 from controller.running.launch import record_of, start_run
-from controller.ui.screens.archive import verify_for
+from controller.ui.screens.archive import set_widths, verify_for
 from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.screens.run import RunScreen
@@ -30,7 +31,7 @@ from controller.ui.widgets.titlebar import TitleBar
 from controller.ui.widgets.warningbar import WarningBar
 from drivers.clock import SystemClock
 
-_COLUMNS = (("on", 10), ("kind", 8), ("state", 14), ("due", 10), ("verdict", 60))
+_COLUMNS = (("on", 10), ("kind", 8), ("state", 14), ("due", 10), ("verdict", 24))
 _TIME_SCALE = 10.0
 
 
@@ -128,10 +129,14 @@ class CalibrationsScreen(Screen[None]):
     def on_mount(self) -> None:
         """Read the records, away from the keys."""
         table = self.query_one(DataTable)
-        for name, width in _COLUMNS:
+        for name, width in _widths(self.app.size.width):
             table.add_column(name, width=width, key=name)
         table.focus()
         self.run_worker(self._read, thread=True, exclusive=True)
+
+    def on_resize(self, event: events.Resize) -> None:
+        """Give the verdict the room there is."""
+        set_widths(self.query_one(DataTable), _widths(event.size.width))
 
     def _read(self) -> None:
         found = calibrations(self._lab.calibrations)[::-1]
@@ -215,6 +220,11 @@ class CalibrationsScreen(Screen[None]):
     def action_help(self) -> None:
         """Help."""
         self.app.push_screen(help_of("calibrations"))
+
+
+def _widths(room: int) -> list[tuple[str, int]]:
+    *others, (last, least) = _COLUMNS
+    return [*others, (last, max(least, room - 8 - sum(width + 2 for _, width in others)))]
 
 
 def history_text(accepted: list[Calibration], *, width: int = 30) -> str:

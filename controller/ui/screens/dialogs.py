@@ -126,10 +126,10 @@ class Text(ModalScreen[None]):
 
     def compose(self) -> ComposeResult:
         """Title and text."""
-        with VerticalScroll(classes="dialog", id="help"):
+        with VerticalScroll(classes="dialog", id="help") as page:
+            page.border_subtitle = "Escape: close   y: copy"
             yield Plain(self._title, classes="heading")
             yield Plain(self._text)
-            yield Plain("\nEscape: close   y: copy", classes="quiet")
 
     def action_copy(self) -> None:
         """Put the text into the clipboard."""

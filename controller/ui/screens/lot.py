@@ -19,10 +19,10 @@ from configs.settings import load_method
 from controller.labfolder import Lab
 from controller.records.record import list_records, printable
 from controller.running.launch import record_of, start_run
-from controller.ui.newrun import Prepared, Wanted, methods_of, prepare
+from controller.ui.newrun import Prepared, Wanted, methods_of, prepare, usual_method
 from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
-from controller.ui.screens.setup import form_row
+from controller.ui.screens.setup import WIDE, form_row
 from controller.ui.texts import number_of
 from controller.ui.widgets.answerfield import AnswerField
 from controller.ui.widgets.readout import Plain
@@ -44,6 +44,7 @@ class LotScreen(Screen[None]):
     """
 
     HELP = "calibrations"
+    HORIZONTAL_BREAKPOINTS: list[tuple[int, str]] | None = [(0, "-narrow"), (WIDE, "-wide")]  # noqa: RUF012  (as Textual has it)
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("f9", "start", "Start"),
         Binding("f1", "help", "Help"),
@@ -62,27 +63,32 @@ class LotScreen(Screen[None]):
         names = methods_of(self._lab)
         yield TitleBar("calibrations")
         with VerticalScroll(classes="page", id="form"):
-            yield Plain(_HEADINGS[self._kind], classes="heading")
-            first = self._usual(names)
-            choices = [(name, name) for name in names]
-            if first is None:
-                yield from form_row("method", Select(choices, id="method", allow_blank=True, compact=True))
-            else:
-                chosen = Select(choices, id="method", value=first, allow_blank=False, compact=True)
-                yield from form_row("method", chosen)
-            yield from form_row("lot", Input(id="lot", placeholder="as on the bottle", compact=True))
-            if self._kind == "titrant":
-                yield from form_row("replicates", Input(value="3", id="replicates", compact=True))
-                yield from form_row("or portions, g", Input(id="figures", placeholder=_PORTIONS, compact=True))
-            else:
-                yield from form_row("volumes, mL", Input(id="figures", placeholder=_VOLUMES, compact=True))
-            there = "names of finished runs, in place of the above"
-            yield from form_row("or from runs", Input(id="runs-from", placeholder=there, compact=True))
-            name = os.environ.get("USER") or os.environ.get("USERNAME") or ""
-            yield from form_row("operator", Input(value=name, id="operator", compact=True))
-            yield Plain("", id="problem", classes="problem")
-            yield Vertical(id="questions")
+            with Vertical(id="fields"):
+                yield Plain(_HEADINGS[self._kind], classes="heading")
+                yield from self._fields(names)
+            with Vertical(id="beside"):
+                yield Plain("", id="problem", classes="problem")
+                yield Vertical(id="questions")
         yield Footer(show_command_palette=False, compact=True)
+
+    def _fields(self, names: list[str]) -> ComposeResult:
+        first = self._usual(names)
+        choices = [(name, name) for name in names]
+        if first is None:
+            yield from form_row("method", Select(choices, id="method", allow_blank=True, compact=True))
+        else:
+            chosen = Select(choices, id="method", value=first, allow_blank=False, compact=True)
+            yield from form_row("method", chosen)
+        yield from form_row("lot", Input(id="lot", placeholder="as on the bottle", compact=True))
+        if self._kind == "titrant":
+            yield from form_row("replicates", Input(value="3", id="replicates", compact=True))
+            yield from form_row("or portions, g", Input(id="figures", placeholder=_PORTIONS, compact=True))
+        else:
+            yield from form_row("volumes, mL", Input(id="figures", placeholder=_VOLUMES, compact=True))
+        there = "names of finished runs, in place of the above"
+        yield from form_row("or from runs", Input(id="runs-from", placeholder=there, compact=True))
+        name = os.environ.get("USER") or os.environ.get("USERNAME") or ""
+        yield from form_row("operator", Input(value=name, id="operator", compact=True))
 
     def _usual(self, names: list[str]) -> str | None:
         """The first method of this purpose, else the first."""
@@ -93,7 +99,7 @@ class LotScreen(Screen[None]):
                 continue
             if report is not None and report.quantity == "titrant":
                 return name
-        return names[0] if names else None
+        return usual_method(self._lab)
 
     def on_mount(self) -> None:
         """Begin at the lot."""

@@ -163,10 +163,14 @@ def compared_text(first: RunView, second: RunView, *, widest: int = 200) -> str:
         widest: longer cells are cut.
     """
     rows = [("", "A", "B"), *zip(_names(), _facts(first), _facts(second), strict=True)]
-    rows = [(name, one[:widest], other[:widest]) for name, one, other in rows]
+    rows = [(name, _cut(one, widest), _cut(other, widest)) for name, one, other in rows]
     widths = [max(len(row[column]) for row in rows) for column in range(3)]
     lines = ["  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows]
     return "\n".join([*lines, difference_text(first, second)])
+
+
+def _cut(text: str, widest: int) -> str:
+    return text if len(text) <= widest else f"{text[: widest - 1]}…"
 
 
 def _names() -> tuple[str, ...]:
@@ -183,7 +187,7 @@ def _facts(view: RunView) -> tuple[str, ...]:
         "none" if end is None else volume_text(end.volume_ml, end.standard_uncertainty_ml),
         printable(amount_text(view.result.get("result"))),
         str(len(view.doses)),
-        clock_text(view.at_s),
+        clock_text(view.took_s),
     )
 
 

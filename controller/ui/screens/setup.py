@@ -25,6 +25,8 @@ from controller.ui.widgets.readout import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
 MOST_REPLICATES = 20
+#: from this width on the questions stand beside the form, cells
+WIDE = 140
 _SCALES = (("real time", "1"), ("10 times real time", "10"), ("50 times real time", "50"), ("at once", "fast"))
 
 
@@ -32,6 +34,7 @@ class SetUpScreen(Screen[None]):
     """Collects what a run needs, and starts it when every question is answered."""
 
     HELP = "set-up"
+    HORIZONTAL_BREAKPOINTS: list[tuple[int, str]] | None = [(0, "-narrow"), (WIDE, "-wide")]  # noqa: RUF012  (as Textual has it)
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("f9", "start", "Start the run"),
         Binding("f5", "expect", "What to expect"),
@@ -51,27 +54,29 @@ class SetUpScreen(Screen[None]):
         methods = methods_of(self._lab)
         yield TitleBar("set-up")
         with VerticalScroll(classes="page", id="form"):
-            choices = [(name, name) for name in methods]
-            first = usual_method(self._lab)
-            if first is None:
-                yield from form_row("method", Select(choices, id="method", allow_blank=True, compact=True))
-            else:
-                yield from form_row(
-                    "method", Select(choices, id="method", value=first, allow_blank=False, compact=True)
-                )
-            yield from form_row("", Plain("", id="method-title", classes="quiet"))
-            yield from form_row("sample", Input(id="sample-id", placeholder="what the record calls it", compact=True))
-            yield from form_row("amount", Input(id="amount", compact=True))
-            yield from form_row("all liquid, mL", Input(id="initial", compact=True))
-            yield from form_row("replicates", Input(value="1", id="replicates", compact=True))
-            yield from form_row("or a series", Input(id="series", placeholder="a CSV file of samples", compact=True))
-            yield from form_row("operator", Input(value=_user(), id="operator", compact=True))
-            yield from form_row(
-                "simulated time", Select(_SCALES, id="scale", value="10", allow_blank=False, compact=True)
-            )
-            yield Plain("", id="problem", classes="problem")
-            yield Vertical(id="questions")
+            with Vertical(id="fields"):
+                yield from self._fields(methods)
+            with Vertical(id="beside"):
+                yield Plain("", id="problem", classes="problem")
+                yield Vertical(id="questions")
         yield Footer(show_command_palette=False, compact=True)
+
+    def _fields(self, methods: list[str]) -> ComposeResult:
+        choices = [(name, name) for name in methods]
+        first = usual_method(self._lab)
+        if first is None:
+            yield from form_row("method", Select(choices, id="method", allow_blank=True, compact=True))
+        else:
+            yield from form_row("method", Select(choices, id="method", value=first, allow_blank=False, compact=True))
+        yield from form_row("", Plain("", id="method-title", classes="quiet"))
+        yield from form_row("sample", Input(id="sample-id", placeholder="what the record calls it", compact=True))
+        yield from form_row("amount", Input(id="amount", compact=True))
+        yield from form_row("all liquid, mL", Input(id="initial", compact=True))
+        yield from form_row("replicates", Input(value="1", id="replicates", compact=True))
+        yield from form_row("or a series", Input(id="series", placeholder="a CSV file of samples", compact=True))
+        yield from form_row("operator", Input(value=_user(), id="operator", compact=True))
+        scale = Select(_SCALES, id="scale", value="10", allow_blank=False, compact=True)
+        yield from form_row("simulated time", scale)
 
     def on_mount(self) -> None:
         """Look at the first method."""

@@ -155,7 +155,11 @@ def picture_of(view: RunView, second: RunView | None, *, near: bool, cursor: int
         for volume_ml, value in zip(one.volumes_ml, one.values, strict=True)
         if volume.lowest <= volume_ml <= volume.highest
     ]
-    band = view.forecast
+    band, level = view.forecast, None
+    if view.target_ph is not None and signal == "pH" and second is None:
+        level = (view.target_ph, f"to pH {view.target_ph:.2f}")
+        if not near:
+            seen.append(view.target_ph)
     slopes = derivative(points, signal)
     return Picture(
         signal=signal,
@@ -171,6 +175,7 @@ def picture_of(view: RunView, second: RunView | None, *, near: bool, cursor: int
         ],
         doses_ml=[volume_ml for volume_ml, _ in view.doses],
         now=_now(view, signal),
+        level=level,
         cursor_ml=None if cursor is None or cursor >= len(points) else points[cursor].volume_ml,
         ruler=second is None,
     )

@@ -14,7 +14,7 @@ from controller.ui.widgets.braille import Dots
 COLUMNS = " ▁▂▃▄▅▆▇█"
 #: share of the height that the highest derivative takes
 _DERIVATIVE_SHARE = 0.62
-BAND, MARK, CURSOR, NOW = "░", "┊", "│", "◆"
+BAND, MARK, CURSOR, NOW, LEVEL = "░", "┊", "│", "◆", "╌"
 #: marks of the ruler by how many doses fall into a cell
 _DOSE_MARKS = ((1, "╷"), (2, "│"), (4, "┃"), (10_000, "█"))
 
@@ -45,6 +45,7 @@ class Picture:
         doses_ml: where doses ended.
         now: (volume, value) of the last reading.
         cursor_ml: where a cursor stands.
+        level: (value, text) that the curve is to reach.
     """
 
     signal: str
@@ -58,6 +59,7 @@ class Picture:
     doses_ml: list[float] = field(default_factory=list)
     now: tuple[float, float] | None = None
     cursor_ml: float | None = None
+    level: tuple[float, str] | None = None
     ruler: bool = True
 
 
@@ -80,12 +82,14 @@ class _Drawing:
 
     def rows(self) -> list[Row]:
         self._band()
+        self._level()
         self._marks()
         self._derivative()
         self._cursor()
         self._lines()
         self._now()
         self._mark_texts()
+        self._level_text()
         body = [self._framed(index) for index in range(self.rows_of_plot)]
         feet = [self._axis(), *([self._ruler()] if self.picture.ruler else []), self._axis_labels()]
         return body + feet
@@ -110,6 +114,14 @@ class _Drawing:
         for column in range(max(0, lowest), min(self.columns - 1, highest) + 1):
             for row in self.cells:
                 row[column] = (BAND, "band")
+
+    def _level(self) -> None:
+        if self.picture.level is not None and 0 <= (row := self._row(self.picture.level[0])) < self.rows_of_plot:
+            self.cells[row] = [(LEVEL, "mark")] * self.columns
+
+    def _level_text(self) -> None:
+        if self.picture.level is not None and 0 <= (row := self._row(self.picture.level[0])) < self.rows_of_plot:
+            self._text(row, 1, f" {self.picture.level[1]} ", "mark")
 
     def _derivative(self) -> None:
         heights = [0.0] * self.columns

@@ -78,18 +78,21 @@ class Readout(Vertical):
             self._say("reading", "no amount" if view.end_points else "no end point found,\nso no amount is given")
         self._say("trace", "")
         self._say("account", "\n".join(result_lines(view)))
-        self._say("progress", f"took {clock_text(view.at_s)}"[:width])
+        self._say("progress", f"took {clock_text(view.took_s)}"[:width])
 
     def _show_calibration(self, found: dict[str, Any]) -> None:
         self._say("quantity", "passed" if found.get("passed") else "not passed")
         self._digits("")
         self._say("reading", "in force from now on" if found.get("accepted") else "not taken into force")
         self._say("trace", "")
-        self._say("account", "\n".join(printable(str(one["text"])) for one in found.get("findings", ())))
-        self._say("progress", printable(str(found.get("verdict", ""))))
+        findings = [printable(str(one["text"])) for one in found.get("findings", ())]
+        self._say("account", "\n\n".join([printable(str(found.get("verdict", ""))), *findings]))
+        self._say("progress", "")
 
     def _say(self, name: str, text: str) -> None:
-        self.query_one(f"#{name}", Plain).say(text)
+        part = self.query_one(f"#{name}", Plain)
+        part.say(text)
+        part.display = bool(text)
 
     def _digits(self, text: str) -> None:
         digits = self.query_one("#digits", Digits)
@@ -122,6 +125,8 @@ def stability_text(view: RunView) -> str:
     """Return how steady the reading is: a word and the drift."""
     if view.paused:
         return "paused: nothing is read"
+    if view.question is not None:
+        return "waits for an answer"
     drift = stability_mv_min(view.readings, dosed_at_s=view.dosed_at_s)
     if drift is None:
         return "just dosed"
