@@ -86,9 +86,11 @@ class Verdict:
             return f"failed: {decisive.text}"
         if self.incomplete is not None:
             return f"not a pass: {self.incomplete}"
-        return (
-            f"passed; nearest to its limit: {decisive.text}" if decisive is not None else "not a pass: nothing measured"
-        )
+        if decisive is None:
+            return "not a pass: nothing measured"
+        if decisive.condition:
+            return "passed"
+        return f"passed; nearest to its limit: {decisive.text.removesuffix(': passed')}"
 
 
 def verdict(findings: Sequence[Finding], incomplete: str | None = None) -> Verdict:

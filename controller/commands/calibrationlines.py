@@ -27,6 +27,9 @@ def calibration_lines(result: dict[str, Any]) -> list[str]:
             f"concentration {lot['concentration_mol_l']:.6f} +- {lot['expanded_uncertainty_mol_l']:.2g} mol/L "
             f"(k = {lot['coverage_factor']:.3g})"
         )
+    if found.get("mean_ml") is not None:
+        word = f"{found['mean_ml']:.4f} mL" if found.get("detectable", True) else "not detectable: 0 mL"
+        lines.append(f"blank {word}, u = {found['standard_uncertainty_ml']:.4f} mL, n = {found.get('count')}")
     if found.get("accepted"):
         lines.append(f"in force from {found['on']}, due again {due_day(found)}")
     lines += [f"warning: {text}" for text in result.get("warnings", [])]

@@ -88,7 +88,9 @@ def blank_lot(
         end_point_ph=end_point_ph,
         expires=expires,
     )
-    enough = Finding(limits="at least one", quantity="number of blanks", value=found.count, low=1, high=1e3, unit="")
+    enough = Finding(
+        limits="at least one", quantity="number of blanks", value=found.count, low=1, high=1e3, unit="", condition=True
+    )
     word = "not detectable: 0 mL" if not found.detectable else f"{found.mean_ml:.4f} mL"
     spread = "" if found.standard_deviation_ml is None else f", s = {found.standard_deviation_ml:.4f} mL"
     text = (
