@@ -39,6 +39,8 @@ ALLOWED_PASS_PH = 0.2
 _SLOPE_PRECISIONS, _SLOPE_PH = 6.0, 0.02
 #: why a run ended before its first dose
 ALREADY_BEYOND = "the sample lay beyond the end point pH already"
+#: a point that lies so far behind one of the last ones is taken again before anything is dosed
+_BACK_PH, _BACK_POINTS = 0.1, 4
 #: how well the model knows the volume between two points
 _MODEL_SHARE = 0.03
 
@@ -183,10 +185,14 @@ class TargetPh:
         return PlannedDose(volume_ml=volume_ml, expected_mv=None, why=why, goal=self._goal(ahead))
 
     def _enough(self, points: Sequence[Point], remaining_ml: float) -> bool:
-        """Should a point be taken without a dose: beyond already, or what is on its way should do."""
-        last_ph = points[-1].ph
-        beyond = last_ph is not None and self.beyond_by(last_ph) >= 0.0
-        return self._looks < MOST_LOOKS and (beyond or remaining_ml <= 0.0)
+        """Should a point be taken without a dose: beyond already, what is on its way should do, or it went back."""
+        if self._looks >= MOST_LOOKS:
+            return False
+        way = [self.beyond_by(p.ph) for p in points[-_BACK_POINTS:] if p.ph is not None]
+        if not way:
+            return False
+        went_back = way[-1] < max(way) - _BACK_PH  # no titrant does that: a bubble, a knock
+        return went_back or way[-1] >= 0.0 or remaining_ml <= 0.0
 
     def _goal(self, ahead: Ahead) -> str:
         if ahead.predicted_ml is None:

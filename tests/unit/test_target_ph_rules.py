@@ -17,7 +17,7 @@ from controller.titration.exchange import EndOfRunError
 from controller.titration.forecast import first_ladder, plan_ladders
 from controller.titration.plan import WeakAcid
 from controller.titration.points import PhScale, Point
-from controller.titration.target_ph import SHARE, TargetPh, target_of
+from controller.titration.target_ph import MOST_LOOKS, SHARE, TargetPh, target_of
 from simulators.nominal import nominal_bench
 from simulators.solution import Medium, Mixture, StrongIon, WeakComponent, titration_curve
 
@@ -102,6 +102,17 @@ def test_the_end_is_seen_by_two_points_beyond() -> None:
     # one bad reading beyond is no end
     spike = dataclasses.replace(some[2], number=3, ph=9.0)
     assert TargetPh(PLAN, SCALE).look([*some[:3], spike, dataclasses.replace(some[3], number=4)], None) is None
+
+
+def test_a_point_that_went_back_is_taken_again_before_anything_is_dosed() -> None:
+    volumes = np.array([0.0, 2.0, 4.0, 4.9, 4.95])
+    true = points(volumes, curve(volumes))
+    bubble = dataclasses.replace(true[-1], ph=(true[-1].ph or 0.0) - 1.0)
+    target = TargetPh(PLAN, SCALE)
+    assert target.next_dose(true, None, 4.95).volume_ml > 0.0
+    for _ in range(MOST_LOOKS):
+        assert target.next_dose([*true[:-1], bubble], None, 4.95).volume_ml == 0.0
+    assert target.next_dose([*true[:-1], bubble], None, 4.95).volume_ml > 0.0  # it is no bubble then
 
 
 def test_without_a_calibration_the_run_is_refused_with_the_reason() -> None:
