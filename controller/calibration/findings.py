@@ -49,7 +49,7 @@ class Finding:
     def text(self) -> str:
         """The finding in words."""
         word = "passed" if self.passed else "failed"
-        unsure = f" +- {self.standard_uncertainty:.2g}" if self.standard_uncertainty is not None else ""
+        unsure = f" +/- {self.standard_uncertainty:.2g}" if self.standard_uncertainty is not None else ""
         near = "; the limit lies within its uncertainty" if self.close else ""
         span = f"up to {self.high:g}" if self.low is None else f"{self.low:g} to {self.high:g}"
         allowed = f"{span} {self.unit}".rstrip()

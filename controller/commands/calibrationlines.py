@@ -6,6 +6,7 @@ import datetime as dt
 from typing import Any
 
 from controller.calibration.store import Calibration
+from controller.commands.output import decimals
 from controller.records.record import printable
 
 
@@ -17,14 +18,16 @@ def calibration_lines(result: dict[str, Any]) -> list[str]:
     line = found.get("line")
     if line is not None:
         lines.append(
-            f"slope {line['slope_percent']:.2f} +- {line['slope_percent_standard_uncertainty']:.2f} % of the ideal, "
+            f"slope {line['slope_percent']:.2f} +/- {line['slope_percent_standard_uncertainty']:.2f} % of the ideal, "
             f"offset {line['offset_mv']:+.2f} +- {line['offset_standard_uncertainty_mv']:.2f} mV at pH 7, "
             f"{line['temperature_c']:.1f} °C"
         )
     lot = found.get("lot")
     if lot is not None:
+        expanded = lot["expanded_uncertainty_mol_l"]
+        places = decimals(expanded)
         lines.append(
-            f"concentration {lot['concentration_mol_l']:.6f} +- {lot['expanded_uncertainty_mol_l']:.2g} mol/L "
+            f"concentration {lot['concentration_mol_l']:.{places}f} +/- {expanded:.{places}f} mol/L "
             f"(k = {lot['coverage_factor']:.3g})"
         )
     if found.get("mean_ml") is not None:

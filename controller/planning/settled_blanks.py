@@ -180,8 +180,8 @@ def response_record(
         found.slow_standard_uncertainty_s / lag.slow_s,
     )
     note = (
-        f"bulk {lag.bulk_s:.2f} s, film {lag.film_s:.2f} s, slow layer {lag.slow_s:.0f} +- "
-        f"{found.slow_standard_uncertainty_s:.0f} s with a share of {100 * lag.slow_share:.2f} +- "
+        f"bulk {lag.bulk_s:.2f} s, film {lag.film_s:.2f} s, slow layer {lag.slow_s:.0f} +/- "
+        f"{found.slow_standard_uncertainty_s:.0f} s with a share of {100 * lag.slow_share:.2f} +/- "
         f"{100 * found.share_standard_uncertainty:.2f} % (chi-square {found.chi_square:.2f}, {found.readings} readings)"
     )
     return SettledLot(

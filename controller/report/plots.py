@@ -230,5 +230,5 @@ def residual_figure(series: Series) -> str | None:
         axis.set_ylim(-1.1 * max(3.0, float(np.max(np.abs(scaled)))), 1.1 * max(3.0, float(np.max(np.abs(scaled)))))
         axis.set_xlabel("titrant volume / mL")
         axis.set_ylabel("volume less fit, in its own SDs")
-        axis.annotate("band: ± 2 SD", (0.99, 0.02), xycoords="axes fraction", ha="right", color=QUIET, fontsize=7)
+        axis.annotate("band: ± 2 SD", (0.01, 0.95), xycoords="axes fraction", color=QUIET, fontsize=7)
         return as_svg(figure)
