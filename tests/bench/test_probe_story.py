@@ -148,4 +148,3 @@ def test_a_standardisation_offers_the_response_check(halfdrop: Run, lab: Path, t
     ]
     assert plan["kind"] == "response"
     assert "response check of " in halfdrop("bench", "show")[1]
-    assert "was last measured on " in halfdrop(*standard, "--seed", "7")[2]

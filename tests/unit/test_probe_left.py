@@ -8,11 +8,13 @@ from typing import Any
 
 import pytest
 
+from configs.benchfile import BenchSettings
 from configs.settings import shipped_bench, shipped_method
 from controller.calibration.probe_record import LearnedTimes, keep_stored
 from controller.calibration.slowing import slowing_texts
 from controller.calibration.store import Calibration
 from controller.journal import Journal, utc_text
+from controller.planning.expected_in_force import Expected, expected_in_force
 from controller.planning.inforce import find_in_force
 from controller.planning.last_devices import LastDevices, last_devices
 from controller.planning.probe_state import probe_state
@@ -111,6 +113,29 @@ def test_the_devices_of_the_newest_run_are_the_last_ones(tmp_path: Path) -> None
     record(tmp_path / "runs")
     record(tmp_path / "runs", after_s=900.0, probe="another")
     assert last_devices(tmp_path / "runs", tmp_path / "calibrations") == LastDevices(pump="pump 1", probe="another")
+
+
+def test_what_would_be_in_force_is_said_beforehand_and_a_refusal_too(tmp_path: Path) -> None:
+    method, bench = shipped_method("juice-acidity"), shipped_bench()
+
+    def expected(made: BenchSettings) -> Expected:
+        return expected_in_force(method, made, tmp_path / "runs", tmp_path / "calibrations", today=dt.date(2026, 12, 1))
+
+    told = expected(bench)
+    assert told.refusal is None
+    assert told.says[0].endswith("that of the bench file, slope 99.1 %, +3.4 mV at pH 7")
+    assert told.says[1] == "probe's lag: of the bench file, 1.50 s mixing and 2.00 s film"
+    assert bench.probe.calibration is not None
+    old = bench.probe.calibration.model_copy(update={"calibrated_utc": "2026-10-01T08:00:00Z"})
+    strict = bench.model_copy(
+        update={
+            "probe": bench.probe.model_copy(update={"calibration": old}),
+            "calibration_rules": bench.calibration_rules.model_copy(update={"expired": "refuse"}),
+        }
+    )
+    refused = expected(strict)
+    assert refused.in_force is None
+    assert "made 61 days ago, allowed: 7 days" in str(refused.refusal)
 
 
 # --- slowing, from everything on record -------------------------------------------------------------------------------
