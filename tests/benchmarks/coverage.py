@@ -18,7 +18,6 @@ from __future__ import annotations
 import argparse
 import math
 import sys
-from collections.abc import Sequence
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -27,6 +26,7 @@ from typing import Any
 sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
 import numpy as np
+from coverage_table import Outcome, table
 
 from configs.catalogue import substance
 from configs.water import buoyancy_factor
@@ -52,35 +52,9 @@ CONCENTRATIONS = (0.03, 0.05, 0.07)
 INITIAL_ML, SAMPLE_ML, NOMINAL_MOL_L = 50.0, 10.0, 0.1
 AIR, WATER_EXPANSION = 1.2, 2.1e-4
 #: standard uncertainties that the laboratory states
-GAIN_U, BALANCE_U_G, PURITY, PURITY_U, PIPETTE_U_ML, TITRANT_U_C, PKA_U = (
-    0.001,
-    0.00013,
-    0.9997,
-    0.0003,
-    0.008,
-    0.5,
-    0.05,
-)
+GAIN_U, BALANCE_U_G, PURITY, PURITY_U = 0.001, 0.00013, 0.9997, 0.0003
+PIPETTE_U_ML, TITRANT_U_C, PKA_U = 0.008, 0.5, 0.05
 KHP = "potassium hydrogen phthalate"
-
-
-@dataclass(frozen=True, slots=True)
-class Outcome:
-    """One laboratory: result against truth."""
-
-    seed: int
-    acid: str
-    concentration: float
-    one_burette: bool
-    value: float
-    true_value: float
-    expanded: float
-    problem: str | None = None
-
-    @property
-    def covered(self) -> bool:
-        """Does the interval hold the truth?"""
-        return abs(self.value - self.true_value) <= self.expanded
 
 
 @dataclass(frozen=True, slots=True)
@@ -294,49 +268,6 @@ def _report(quantity: Any, name: str, equivalents: int, unit: str) -> ReportAs:
     )
 
 
-def interval(covered: int, count: int) -> tuple[float, float]:
-    """95 % interval of a share (Clopper and Pearson), percent."""
-    from scipy.stats import beta
-
-    low = beta.ppf(0.025, covered, count - covered + 1) if covered else 0.0
-    high = beta.ppf(0.975, covered + 1, count - covered) if covered < count else 1.0
-    return 100.0 * float(low), 100.0 * float(high)
-
-
-def table(outcomes: Sequence[Outcome]) -> tuple[list[str], bool]:
-    """The figures as lines of a table, and whether the bars hold."""
-    good = [one for one in outcomes if one.problem is None]
-    lines = [
-        "| laboratories | n | covered | 95 % interval | mean error / U | median U / value |",
-        "|---|---|---|---|---|---|",
-    ]
-    rows: list[tuple[str, list[Outcome], float, float]] = [("all", good, 93.0, 97.0)]
-    rows += [(f"{'one burette' if one else 'two burettes'}", [o for o in good if o.one_burette == one], 0.0, 100.0)
-             for one in (True, False)]  # fmt: skip
-    rows += [
-        (f"{acid}, {c:g} mol/L H", [o for o in good if (o.acid, o.concentration) == (acid, c)], 90.0, 99.0)
-        for acid, _, _ in ACIDS
-        for c in CONCENTRATIONS
-    ]
-    kept = len(good) == len(outcomes)
-    for name, group, low, high in rows:
-        if not group:
-            continue
-        covered = sum(one.covered for one in group)
-        share = 100.0 * covered / len(group)
-        kept = kept and low <= share <= high
-        ends = interval(covered, len(group))
-        error = float(np.mean([(one.value - one.true_value) / one.expanded for one in group]))
-        width = float(np.median([one.expanded / one.value for one in group]))
-        mark = "" if low <= share <= high else f" (bar: {low:g} to {high:g} %)"
-        lines.append(
-            f"| {name} | {len(group)} | {share:.1f} %{mark} | {ends[0]:.1f} to {ends[1]:.1f} % | {error:+.3f} | "
-            f"{100 * width:.2f} % |"
-        )
-    lines += [f"no result: seed {one.seed}, {one.acid}: {one.problem}" for one in outcomes if one.problem]
-    return lines, kept
-
-
 def main() -> int:
     """Run the laboratories and print the table; exit status 1 where a bar is missed."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else "")
@@ -351,7 +282,7 @@ def main() -> int:
             outcomes = list(pool.map(laboratory, seeds, chunksize=8))
     else:
         outcomes = [laboratory(seed) for seed in seeds]
-    lines, kept = table(outcomes)
+    lines, kept = table(outcomes, [(acid, c) for acid, _, _ in ACIDS for c in CONCENTRATIONS])
     text = (
         "\n".join([f"seeds {seeds[0]} to {seeds[-1]}", "", *lines, "", f"bars {'kept' if kept else 'MISSED'}"]) + "\n"
     )

@@ -22,6 +22,7 @@ sys.path.insert(0, str(Path(__file__).resolve().parent))
 
 import coverage as laboratories
 import numpy as np
+from coverage_table import Outcome, interval
 
 from configs.catalogue import substance
 from controller.foresight.study_plan import to_set_ph
@@ -41,7 +42,7 @@ CASES: tuple[tuple[str, NominalCase, int, float], ...] = (
 )
 
 
-def laboratory(seed: int) -> laboratories.Outcome:
+def laboratory(seed: int) -> Outcome:
     """Standardise, titrate the unknown to its pH, and compare with the truth."""
     rng = np.random.default_rng([seed, 20261202])
     acid, case, protons, at_ph = CASES[seed % len(CASES)]
@@ -97,8 +98,8 @@ def laboratory(seed: int) -> laboratories.Outcome:
         found = determination_of([plan], [result])[0].budget
     except Exception as error:  # a laboratory without a result is counted, not hidden
         told = f"{type(error).__name__}: {error}"
-        return laboratories.Outcome(seed, name, at_ph, one_burette, math.nan, truth, 0.0, told)
-    return laboratories.Outcome(seed, name, at_ph, one_burette, found.value, truth, found.expanded_uncertainty)
+        return Outcome(seed, name, at_ph, one_burette, math.nan, truth, 0.0, told)
+    return Outcome(seed, name, at_ph, one_burette, found.value, truth, found.expanded_uncertainty)
 
 
 def main() -> int:
@@ -125,7 +126,7 @@ def main() -> int:
     for name in names:
         group = [one for one in good if name in ("all", one.acid)]
         covered = sum(one.covered for one in group)
-        low, high = laboratories.interval(covered, len(group))
+        low, high = interval(covered, len(group))
         share = 100.0 * covered / max(1, len(group))
         whole = share if name == "all" else whole
         error = float(np.mean([(one.value - one.true_value) / one.expanded for one in group]))
