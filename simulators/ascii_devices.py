@@ -186,7 +186,7 @@ class OrchardLanePump:
         if word == "HALT":
             if self._going:
                 self.mechanism.halt(at_s)
-            self._going, self._next_steps = False, None
+            self._going, self._next_steps, self._trouble = False, None, ""
             return "YES"
         if self._going:
             return "NO it is going"

@@ -205,6 +205,7 @@ class PumpDevice(Instrument):
     def _stop(self, parameters: tuple[bytes, ...], at_s: float) -> None:
         self._armed = None
         self._halt(at_s)
+        self._fault = None  # whoever stops it knows of the halt before
 
     def _set_watchdog(self, parameters: tuple[bytes, ...], at_s: float) -> None:
         seconds = read_number(one_of(parameters))

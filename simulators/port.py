@@ -7,6 +7,7 @@ thread, or by the caller of `run`. Latency of replies is counted in real seconds
 
 from __future__ import annotations
 
+import contextlib
 import errno
 import math
 import os
@@ -40,6 +41,7 @@ class PtyRoute:
 
     def take(self, wait_s: float = 0.0) -> bytes:
         """Return what the link has written."""
+        self._leave_something_to_set()
         try:
             return os.read(self._master, MOST_BYTES)
         except OSError as failure:
@@ -48,6 +50,20 @@ class PtyRoute:
         if wait_s <= 0.0 or not select.select([self._master], [], [], wait_s)[0]:
             return b""
         return os.read(self._master, MOST_BYTES)
+
+    def _leave_something_to_set(self) -> None:
+        """Put back a speed that nobody uses.
+
+        A pseudo-terminal knows no parity, and setting one succeeds as long as something else is set with it: without
+        this a link with parity could be opened once only.
+        """
+        import termios
+
+        with contextlib.suppress(termios.error):
+            settings = termios.tcgetattr(self._slave)
+            if settings[4] != termios.B50:
+                settings[4] = settings[5] = termios.B50
+                termios.tcsetattr(self._slave, termios.TCSANOW, settings)
 
     def give(self, data: bytes) -> int:
         """Send to whoever holds the slave end."""

@@ -101,8 +101,7 @@ class BenchCheck:
             yield from self._weak_points()
         passed.status = yield from step("pump: account", lambda: self._account(pump), self._account_text)
         if passed.status is not None and passed.status.fault:
-            yield Finding(step="pump: account", verdict="failed", what=passed.status.fault, remedy="See to the pump")
-            passed.status = None
+            passed.status = yield from self._acknowledged(pump, passed.status.fault)
         passed.pump = pump
 
     def probe(self) -> Iterator[Finding]:
@@ -192,6 +191,22 @@ class BenchCheck:
                 what="a volume garbled on the line would be seen only while it is delivered",
                 remedy="Add target and read_target, echo or checksum to the dialect, if the device has them",
             )
+
+    @staticmethod
+    def _acknowledged(pump: Pump, fault: str) -> Generator[Finding, None, PumpStatus | None]:
+        """Tell the pump to stop, which acknowledges a halt of before (its watchdog's, say); a defect stays."""
+        again = yield from step("pump: stop", lambda: (pump.stop(), pump.status())[1], lambda _: "told to stop")
+        if again is None or again.fault:
+            what = fault if again is None else again.fault
+            yield Finding(step="pump: account", verdict="failed", what=str(what), remedy="See to the pump")
+            return None
+        yield Finding(
+            step="pump: account",
+            verdict="warning",
+            what=f"said {fault!r}, and stands now; something halted it since it was last used",
+            remedy="If no program was ended while it moved, find out what",
+        )
+        return again
 
     def _account(self, pump: Pump) -> PumpStatus:
         check_capabilities(self._bench.pump, pump)

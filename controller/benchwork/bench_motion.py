@@ -140,8 +140,8 @@ class MotionCheck:
 
     def _fall_silent(self, pump: FallsSilent, number: int, volume_ml: float, silence_s: float) -> str:
         last = pump.dose_and_fall_silent(number, volume_ml, silence_s + SILENT_LONGER_S)
+        self._pump.stop()  # also where it stands: the halt of this trial is acknowledged
         if last.state == "moving":
-            self._pump.stop()
             raise wrong(
                 f"still moves {silence_s + SILENT_LONGER_S:g} s after the last message", "Do not leave it alone"
             )

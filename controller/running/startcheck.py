@@ -31,6 +31,8 @@ def check_devices(plan: AnyPlan, devices: Devices) -> tuple[dict[str, dict[str, 
             raise HalfdropError(
                 f"{told!r} answers, the plan was made for {planned!r}", where=role, remedy="Correct the bench file"
             )
+    if status.fault and not status.moving and devices.pump.stop():  # a halt of before is acknowledged; a defect stays
+        status = devices.pump.status()
     if status.fault or status.moving:
         raise DeviceError(
             f"it is not ready: {status.fault or 'it is moving'}", where=f"pump {pump.key}", remedy="Look at the pump"
