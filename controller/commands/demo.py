@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import argparse
-import tempfile
 from argparse import Namespace
 from pathlib import Path
 
-from controller.assembly import FAST, Opening, local_route
+from controller.assembly import Opening, local_route
+from controller.commands.demolab import METHOD, SAMPLE_ID, new_folder, start_watched
 from controller.commands.output import say
 from controller.commands.run import tell, titrate_once
 from controller.commands.settings import chosen
@@ -15,14 +15,10 @@ from controller.commands.watch import has_terminal, show
 from controller.labfolder import Lab, find_lab, init_lab
 from controller.planning.runplan import SampleChoice
 
-METHOD, SAMPLE_ID = "juice-acidity", "press 3, Tuesday"
-#: how many times real time a run on the screen passes, unless told otherwise; + and - change it there
-WATCHED_TIME_SCALE = "10"
-
 
 def demo(given: argparse.Namespace) -> int:
     """Titrate pressed juice on the simulated bench of a cider house."""
-    folder = Path(given.dir) if given.dir else _new_folder()
+    folder = Path(given.dir) if given.dir else new_folder()
     init_lab(folder)
     if has_terminal() and not (given.headless or given.json):
         return _watched(find_lab(str(folder)), given)
@@ -46,28 +42,3 @@ def _watched(lab: Lab, given: argparse.Namespace) -> int:
     status = show(lab, record, speed=speed)
     say(f"the records are in {lab.runs}; open them again with: halfdrop --lab {lab.path}")
     return status
-
-
-def start_watched(
-    lab: Lab | None = None, *, seed: int = 1, time_scale: str | None = None
-) -> tuple[Lab, Path, float | None]:
-    """Start the demo's run in its own process, as any run on the screen.
-
-    Returns:
-        The lab folder (a new one where none is given), the run's record, and how many times real time passes.
-    """
-    from controller.running.launch import record_of, start_run
-    from drivers.clock import SystemClock
-
-    if lab is None:
-        folder = _new_folder()
-        init_lab(folder)
-        lab = find_lab(str(folder))
-    scale = time_scale or WATCHED_TIME_SCALE
-    arguments = [METHOD, "--sample-id", SAMPLE_ID, "--seed", str(seed), "--operator", "virtual chemist"]
-    started = start_run(lab, [*arguments, "--time-scale", scale])
-    return lab, record_of(started, SystemClock()), None if scale == FAST else float(scale)
-
-
-def _new_folder() -> Path:
-    return Path(tempfile.mkdtemp(prefix="halfdrop-demo-")) / "cider-lab"

@@ -46,7 +46,13 @@ def show(lab: Lab | None, record: Path | None, *, speed: float | None = None) ->
     """Show the UI until it is left."""
     from controller.ui.app import HalfdropApp
 
-    return HalfdropApp(lab=lab, record=record, speed=speed).run() or DONE
+    return HalfdropApp(lab=lab, record=record, speed=speed, start_demo=_start_demo).run() or DONE
+
+
+def _start_demo() -> tuple[Lab, Path, float | None]:
+    from controller.commands.demolab import start_watched
+
+    return start_watched()
 
 
 def _lab(named: str | None, *, needed: bool) -> Lab | None:

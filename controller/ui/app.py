@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any, ClassVar
 
@@ -23,6 +24,7 @@ class HalfdropApp(App[int]):
         lab: the lab folder, None where there is none yet.
         record: a run to open first.
         speed: of its simulated bench, where it is known.
+        start_demo: starts the demo's run; returns its lab folder, its record, and how many times real time passes.
     """
 
     CSS_PATH = "halfdrop.tcss"
@@ -39,8 +41,16 @@ class HalfdropApp(App[int]):
         Binding("ctrl+q", "quit", "Quit", show=False, priority=True),
     ]
 
-    def __init__(self, *, lab: Lab | None = None, record: Path | None = None, speed: float | None = None) -> None:
+    def __init__(
+        self,
+        *,
+        lab: Lab | None = None,
+        record: Path | None = None,
+        speed: float | None = None,
+        start_demo: Callable[[], tuple[Lab, Path, float | None]] | None = None,
+    ) -> None:
         super().__init__()
+        self.start_demo = start_demo
         self.lab, self._record, self._speed = lab, record, speed
         self._offered: set[Path] = set()  # runs left open that were asked about already
         # animations would draw more often than four times a second

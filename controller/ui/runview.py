@@ -169,6 +169,7 @@ class RunView:
             case "note":
                 if text == "paused":
                     self.paused, self.phase = True, "paused"
+                    self.question = None  # it is asked again when one goes on
                 elif text == "going on":
                     self.paused, self.phase = False, "going on"
                 self._say(text, "note")

@@ -60,8 +60,9 @@ class WelcomeScreen(Screen[None]):
 
     def action_demo(self) -> None:
         """Make a lab folder for the demo and start its run."""
-        self.run_worker(self._demo, thread=True, exclusive=True)
-        self.notify("making a lab folder and starting a simulated run")
+        if getattr(self.app, "start_demo", None) is not None:
+            self.run_worker(self._demo, thread=True, exclusive=True)
+            self.notify("making a lab folder and starting a simulated run")
 
     def _make(self, named: str | None) -> None:
         if named and named.strip():
@@ -81,11 +82,9 @@ class WelcomeScreen(Screen[None]):
                 self.notify(str(error), severity="error", timeout=12, markup=False)
 
     def _demo(self) -> None:
-        from controller.commands.demo import start_watched
-
         app: Any = self.app
         try:
-            lab, record, speed = start_watched()
+            lab, record, speed = app.start_demo()
         except HalfdropError as error:
             app.call_from_thread(self.notify, str(error), severity="error", timeout=12, markup=False)
         else:

@@ -151,12 +151,18 @@ def account_lines(view: RunView) -> list[str]:
     """Return what was dosed and what is left."""
     if view.plan is None and not view.doses:
         return []
-    lines = [f"{len(view.doses)} doses, {view.delivered_ml:.4f} mL"]
+    lines = [doses_text(view)]
     if view.contents_ml is not None and view.plan is not None:
         lines.append(f"syringe {max(0.0, view.contents_ml):.2f} of {view.plan.pump.syringe_ml:g} mL")
     if view.reservoir_ml is not None and view.plan is not None and view.plan.pump.refill != "none":
         lines.append(f"reservoir {view.reservoir_ml:.0f} mL")
     return lines
+
+
+def doses_text(view: RunView) -> str:
+    """Return how many doses there were, and what they delivered."""
+    count = len(view.doses)
+    return f"{count} dose{'' if count == 1 else 's'}, {view.delivered_ml:.4f} mL"
 
 
 def progress_text(view: RunView, width: int) -> str:
@@ -182,7 +188,7 @@ def result_lines(view: RunView) -> list[str]:
             lines.append(f"  pH {one.ph:.2f}")
         if one.estimator:
             lines.append(f"  by {one.estimator}")
-    return [*lines, f"{len(view.doses)} doses, {view.delivered_ml:.4f} mL"]
+    return [*lines, doses_text(view)]
 
 
 def _reported(view: RunView) -> str:

@@ -12,6 +12,8 @@ from controller.ui.texts import clock_text
 
 _PREFIX = {"warning": "warning: ", "trouble": "TROUBLE: ", "question": "asks: ", "end-point": "◆ ", "person": "» "}
 _TIME_WIDTH = 7
+#: a place this near to the end, in lines, follows what is written: a bar may have taken a line
+_NEAR_LINES = 3
 
 
 class Sentences(Log):
@@ -35,7 +37,7 @@ class Sentences(Log):
         width = self._room()
         if width <= 0 or self._written == len(self._said):
             return
-        at_end = self.is_vertical_scroll_end
+        at_end = self._near_end()
         lines = [line for one in self._said[self._written :] for line in sentence_lines(one, width)]
         self._written, self._wrapped_at = len(self._said), width
         self.write("".join(f"{line}\n" for line in lines), scroll_end=at_end)
@@ -44,12 +46,17 @@ class Sentences(Log):
         return self.size.width - self.styles.gutter.width - 2 if self.size.width else 0
 
     def on_resize(self, _event: events.Resize) -> None:
-        """Wrap anew."""
-        if self._room() != self._wrapped_at:
+        """Wrap anew where the width changed; the end stays in sight where it was."""
+        wrapped = self._room() != self._wrapped_at
+        if wrapped:
             self.clear()
             self._written = 0
             self._write_new()
+        if wrapped or self._near_end():
             self.call_after_refresh(self.scroll_end, animate=False)
+
+    def _near_end(self) -> bool:
+        return self.scroll_y >= self.max_scroll_y - _NEAR_LINES
 
     def text(self) -> str:
         """Return everything as plain text, a sentence a line."""
