@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 from controller.titration.plan import (
+    PLAN_SCHEMA_VERSION,
     Chemistry,
     Dosing,
     EndPoints,
@@ -94,7 +95,7 @@ def nominal_plan(nominal: NominalBench, strategy: Strategy) -> RunPlan:
     """The plan of a nominal bench with what its user knows of it."""
     known, medium = nominal.known, nominal.bench.medium
     return RunPlan(
-        schema_version=1,
+        schema_version=PLAN_SCHEMA_VERSION,
         program_version="study",
         kind="equivalence",
         method_name=f"nominal-{nominal.case}",

@@ -12,6 +12,7 @@ from typing import Any, get_args, get_type_hints
 
 from configs.errors import HalfdropError, SettingsError
 from controller.calibration.plans import AnyPlan
+from controller.records.migrations import migrated
 from controller.titration.plan import PLAN_SCHEMA_VERSION, RunPlan
 
 
@@ -44,6 +45,7 @@ def plan_from_json(data: Any, *, where: str = "plan") -> RunPlan:
             where=where,
             remedy="Use a newer halfdrop for this plan",
         )
+    data = migrated(data)
     problems = [f"{where}: {key}: unknown key{near}" for key, near in _unknown_keys(data, RunPlan, "")]
     try:
         text = json.dumps(data, allow_nan=False)

@@ -11,7 +11,7 @@ from typing import Literal
 
 from controller.titration.traceability import Traceability
 
-PLAN_SCHEMA_VERSION = 1
+PLAN_SCHEMA_VERSION = 2
 
 DosingPolicy = Literal["model-guided", "slope-adaptive", "equal-volumes"]
 SettlingRule = Literal["lag-corrected", "extrapolated", "stability-limit", "fixed-wait"]

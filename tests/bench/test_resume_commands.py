@@ -131,7 +131,7 @@ def test_what_cannot_be_resumed_is_refused_and_left_alone(
 
 def test_a_newer_plan_is_refused(lab: Path, whole: bytes, capsys: pytest.CaptureFixture[str]):
     first, _, _ = whole.partition(b"\n")
-    newer = first.replace(b'"plan":{"schema_version":1', b'"plan":{"schema_version":7')
+    newer = first.replace(b'"plan":{"schema_version":2', b'"plan":{"schema_version":7')
     assert newer != first
     path = broken(lab, newer + b"\n")
     assert main(["resume", path.stem, "--lab", str(lab), "--headless"]) == 2

@@ -10,6 +10,7 @@ from typing import Any
 import pytest
 
 from controller.titration.plan import (
+    PLAN_SCHEMA_VERSION,
     Chemistry,
     Dosing,
     EndPoints,
@@ -40,7 +41,7 @@ STEP_ML = 0.0005
 
 def _plan() -> RunPlan:
     return RunPlan(
-        schema_version=1,
+        schema_version=PLAN_SCHEMA_VERSION,
         program_version="0.1.0",
         kind="equivalence",
         method_name="juice-acidity",

@@ -75,8 +75,8 @@ def test_all_problems_come_at_once(plan: RunPlan) -> None:
 
 
 def test_a_newer_plan_is_refused_clearly(plan: RunPlan) -> None:
-    with pytest.raises(PlanVersionError, match="schema_version is 2; this program knows up to 1"):
-        plan_from_json(changed(plan, "schema_version", 2))
+    with pytest.raises(PlanVersionError, match="schema_version is 3; this program knows up to 2"):
+        plan_from_json(changed(plan, "schema_version", 3))
 
 
 @pytest.mark.parametrize("data", [None, [], "plan", 3])

@@ -12,10 +12,12 @@ import pytest
 
 from controller.curves.evaluate_record import evaluate_record
 from controller.records.encoding import plan_from_json, plan_to_json
+from controller.records.migrations import migrated
 from controller.records.playback import play
 from controller.records.record import points, read_record, verify
 from controller.replay import dialogue, plan_of_record, replay
 from controller.running.progress import Progress
+from controller.titration.plan import PLAN_SCHEMA_VERSION
 from drivers.clock import ManualClock
 
 KEPT = sorted((Path(__file__).resolve().parents[1] / "data" / "records").glob("run-record-*.jsonl"))
@@ -39,7 +41,8 @@ def test_it_is_read_whole(kept: Path):
     assert len(points(record)) >= 10
     assert sum(1 for _ in dialogue(record)) > 100
     # what the plan has learned to hold since then does not change what it held
-    held, now = record.header["plan"], plan_to_json(plan)
+    held, now = dict(record.header["plan"]), plan_to_json(plan)
+    del held["schema_version"]
     assert all(json.loads(json.dumps(now[key])) == value for key, value in held.items() if not isinstance(value, dict))
 
 
@@ -68,3 +71,27 @@ def test_a_plan_from_before_a_field_was_known_is_read(kept: Path, key: str):
     held = dict(read_record(kept).header["plan"])
     held.pop(key, None)
     assert plan_from_json(held).sample == plan_of_record(read_record(kept)).sample
+
+
+def test_a_plan_of_an_earlier_version_is_brought_to_the_present_one(kept: Path):
+    held = read_record(kept).header["plan"]
+    before = json.dumps(held)
+    plan = plan_of_record(read_record(kept))
+    assert plan.schema_version == PLAN_SCHEMA_VERSION
+    assert json.dumps(held) == before  # the record itself is left as it is
+    now = migrated(held)
+    # by hand, what version 2 brought: no end point at a set pH, no range of buffers, no lag learned from runs
+    assert now["end_points"]["at_ph"] is None
+    assert now["probe"]["response"]["learned_from"] == []
+    assert set(now) == set(plan_to_json(plan)) - {"traceability", "response_check"} | set(held)
+
+
+def test_the_kept_records_are_of_every_version():
+    versions = {read_record(path).header["plan"]["schema_version"] for path in KEPT}
+    assert versions == set(range(1, PLAN_SCHEMA_VERSION + 1))
+
+
+@pytest.mark.parametrize("version", [0, -1, True, "1", None, 1.0])
+def test_a_version_that_never_was_is_not_brought_anywhere(version: object):
+    plan = {"schema_version": version, "end_points": {}}
+    assert migrated(plan) is plan
