@@ -63,7 +63,9 @@ def show(given: argparse.Namespace) -> int:
         f"started: {summary.get('started_utc')} (UTC), operator: {record.header.get('operator') or 'not named'}",
     ]
     print("\n".join(printable(line) for line in lines))
-    if result:
+    if isinstance(result.get("calibration"), dict):
+        _show_calibration(result)
+    elif result:
         print("\n".join(result_lines(result)))
         _show_budget((result.get("result") or {}).get("budget"))
     elif record.closing is not None:
@@ -74,6 +76,13 @@ def show(given: argparse.Namespace) -> int:
         print(printable(line))
     print(f"verified: {found.state} ({printable(found.what)})")
     return status
+
+
+def _show_calibration(result: dict[str, Any]) -> None:
+    from controller.commands.calibrationlines import calibration_lines
+
+    print("\n".join(calibration_lines(result)))
+    _show_budget((result["calibration"].get("lot") or {}).get("budget"))
 
 
 def _show_budget(budget: dict[str, Any] | None) -> None:

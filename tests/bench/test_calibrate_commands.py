@@ -126,6 +126,11 @@ def test_carbonate_in_the_titrant_is_seen_with_strong_acid(halfdrop: Run, lab: P
     )  # fmt: skip
     assert status == 0, err
     result = json.loads(out)
+    status, out, _ = halfdrop("runs", "show", Path(result["run"]).stem)
+    assert status == 0
+    assert "concentration 0.09" in out
+    assert "uncertainty budget (contributions in mol/L)" in out
+    assert "no end point" not in out
     carbonate = result["calibration"]["carbonate"]
     assert carbonate["detected"]
     assert not carbonate["accepted"]
