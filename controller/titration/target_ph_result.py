@@ -34,8 +34,8 @@ if TYPE_CHECKING:
 USUAL_DRIFT_MV_MIN = 0.1
 #: an uncertainty of fewer precisions of the pump is never too large a share
 _SMALL_PRECISIONS = 20.0
-#: steps of the pump below which passing the set pH is nobody's fault
-_FEW_STEPS = 4.0
+#: smallest doses below which passing the set pH is nobody's fault
+_FEW_DOSES = 4.0
 
 
 def target_result(run: RunState) -> dict[str, Any]:
@@ -97,12 +97,12 @@ def judged(plan: RunPlan, found: VolumeAtPh, point: dict[str, Any]) -> tuple[lis
     remarks = []
     if found.passed_by_ph > ALLOWED_PASS_PH:
         passed = f"the first point beyond pH {found.ph:.2f} lies {found.passed_by_ph:.2f} beyond it"
-        if found.bracket_ml <= _FEW_STEPS * plan.pump.step_ml:
-            remarks.append(f"{passed}: this pump cannot dose more finely")
-        else:
-            remarks.append(
-                f"{passed} (allowed {ALLOWED_PASS_PH:.2f}): the volume is interpolated over {found.bracket_ml:.4f} mL"
+        if found.bracket_ml > _FEW_DOSES * max(plan.pump.step_ml, plan.dosing.smallest_ml):
+            return remarks, (
+                f"{passed} (allowed {ALLOWED_PASS_PH:.2f}), {found.bracket_ml:.4f} mL after the last point before it, "
+                "though doses were small: a dose by hand, a leak, a bubble? No number is given"
             )
+        remarks.append(f"{passed}: this pump, or its smallest dose, is no finer")
     u_ml = float(point["standard_uncertainty_ml"])
     share = u_ml / max(found.volume_ml, 1e-9)
     if share > LARGEST_SHARE and u_ml > _SMALL_PRECISIONS * pump_precision_ml(plan):
