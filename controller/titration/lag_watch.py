@@ -21,7 +21,7 @@ from controller.titration.plan import ProbeResponse
 from controller.titration.points import PhScale
 
 #: lags far from the record's: one layer of so many times its bulk and film time; all its stages so many times as slow
-SINGLE_LAYERS = (0.01, 0.3, 1.4, 2.0, 2.9, 4.3, 6.5)
+SINGLE_LAYERS = (0.01, 0.3, 0.6, 1.4, 2.0, 2.9, 4.3, 6.5)
 STAGES = (0.5, 1.6, 2.2, 3.0, 4.2)
 #: chi-square of the lag in use above the best other one's, all transients together: look longer; leave the record
 SUSPICIOUS, DECISIVE = 6.0, 30.0
@@ -44,6 +44,7 @@ _CURVE_SD_ML = 0.0005
 _CURVE_SHARE = 0.002
 #: without a model: of the change of potential, by which the curve may not be a parabola; from before the dose on
 _UNKNOWN_CURVE_SHARE, _UNKNOWN_STEP_SHARE = 0.01, 0.1
+_PARABOLA_MV = 20.0  # a larger change is a parabola the less
 
 Reading = tuple[float, float]
 _Array = npt.NDArray[np.float64]
@@ -144,9 +145,10 @@ class LagWatch:
         told = self._as_volumes(used, noise_mv, fit) if fit is not None else None
         if told is None:
             value = np.array([e for _, e in used])
-            share = np.full(len(used), _UNKNOWN_CURVE_SHARE)
+            step_mv = float(np.ptp(value))
+            share = np.full(len(used), _UNKNOWN_CURVE_SHARE * max(1.0, step_mv / _PARABOLA_MV))
             share[: len(before)] = _UNKNOWN_STEP_SHARE
-            sd = np.hypot(noise_mv, share * float(np.ptp(value)))
+            sd = np.hypot(noise_mv, share * step_mv)
         else:
             value, sd = told
         compositions = [self._in_use, *self.others]
