@@ -13,8 +13,9 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.calibration.plans import AnyPlan
-from controller.guard import Guard, check_start, start_warnings
+from controller.guard import Guard
 from controller.journal import Journal, RecordError
+from controller.planning.plancheck import check_start, start_warnings
 from controller.records.header import header_of
 from controller.resuming.resumption import Resumption, take_up
 from controller.running.aftercare import NOT_ASKED, ask_about_probe, probe_remark

@@ -14,8 +14,8 @@ from controller.assembly import Opening
 from controller.commands.output import say
 from controller.commands.seriesrun import SeriesRun
 from controller.commands.settings import Chosen, answers_of, chosen, method_of
-from controller.guard import check_start
 from controller.labfolder import Lab
+from controller.planning.plancheck import check_start
 from controller.planning.runplan import SampleChoice, expected_account, make_plan
 from controller.planning.series import MOST_TITRATIONS, Series, read_series
 from controller.planning.seriescheck import require_check_buffer

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 from controller.foresight.expectation import USUAL_CALIBRATION, Vessel, vessel_of_plan
-from controller.guard import StartRefusedError, check_start
+from controller.planning.plancheck import StartRefusedError, check_start
 from controller.titration.plan import RunPlan
 from simulators.constants import ideal_slope_mv
 from simulators.solution import titration_curve

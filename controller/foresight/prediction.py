@@ -15,7 +15,7 @@ import numpy as np
 
 from controller.foresight.expectation import ExpectedWorld, expected_volume_ml, expected_world, vessel_of_plan
 from controller.foresight.expected_trouble import PlacedRefill, plan_problems, run_warnings
-from controller.guard import start_warnings
+from controller.planning.plancheck import start_warnings
 from controller.study import StudyRun, StudyWorld, drive
 from controller.titration.actions import Action, Observation, Refill
 from controller.titration.plan import RunPlan

@@ -13,8 +13,8 @@ from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from configs.settings import load_bench, load_method
 from controller.assembly import is_simulated
-from controller.guard import check_start, start_warnings
 from controller.labfolder import Lab
+from controller.planning.plancheck import check_start, start_warnings
 from controller.planning.runplan import SampleChoice, expected_account, make_plan
 from controller.records.archive_index import ArchiveIndex
 from controller.running.launch import record_of, start_run

@@ -9,7 +9,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from controller.guard import Guard, StartRefusedError, check_start, room_ml, start_warnings, titrant_at_hand_ml
+from controller.guard import Guard, room_ml
+from controller.planning.plancheck import StartRefusedError, check_start, start_warnings, titrant_at_hand_ml
 from controller.titration.actions import Action, Dose, Prime, Read, Refill, Wait
 from controller.titration.plan import RunPlan
 

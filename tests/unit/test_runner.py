@@ -11,8 +11,8 @@ from typing import Any
 import pytest
 
 from configs.errors import HalfdropError
-from controller.guard import StartRefusedError
 from controller.journal import DiskFullError
+from controller.planning.plancheck import StartRefusedError
 from controller.records.record import verify_bytes
 from controller.runner import run
 from controller.running.outcome import NOT_CONFIRMED, RunFailedError, RunResult
