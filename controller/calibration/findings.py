@@ -83,14 +83,14 @@ class Verdict:
         """The verdict in words, with the limit that decided it."""
         decisive = self.decided_by
         if decisive is not None and not decisive.passed:
-            return f"failed: {decisive.text}"
+            return f"failed: {decisive.text.replace('): failed', ')')}"
         if self.incomplete is not None:
             return f"not a pass: {self.incomplete}"
         if decisive is None:
             return "not a pass: nothing measured"
         if decisive.condition:
             return "passed"
-        return f"passed; nearest to its limit: {decisive.text.removesuffix(': passed')}"
+        return f"passed; nearest to its limit: {decisive.text.replace('): passed', ')')}"
 
 
 def verdict(findings: Sequence[Finding], incomplete: str | None = None) -> Verdict:

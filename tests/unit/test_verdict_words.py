@@ -11,6 +11,8 @@ def test_the_verdict_is_said_once():
     text = Verdict(findings=(SLOPE,)).text
     assert text == "passed; nearest to its limit: slope 98.9 %, allowed 95 to 102 % (house limits)"
     assert Verdict(findings=(ENOUGH, SLOPE)).text == text
+    low = Finding(limits="house limits", quantity="slope", value=94.0, low=95.0, high=102.0, unit="%")
+    assert Verdict(findings=(low,)).text == "failed: slope 94 %, allowed 95 to 102 % (house limits)"
 
 
 def test_conditions_that_are_met_have_no_nearest_limit():
