@@ -8,12 +8,11 @@ from __future__ import annotations
 
 import os
 import sys
-import time
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Literal, TextIO
+from typing import TextIO
 
 from configs.benchfile import SIMULATED_PORT, BenchSettings
 from configs.errors import HalfdropError
@@ -21,13 +20,16 @@ from configs.faultfile import FaultsSettings
 from configs.method import MethodSettings
 from configs.notifying import NotifySettings
 from controller.benchwork.connection import Connecting, check_capabilities
+from controller.benchwork.pace import FAST, clock_of
+from controller.benchwork.reached import ReachedBench
+from controller.benchwork.serving import Route
 from controller.benchwork.virtualdevices import MAKER, simulated_world, spoken_devices
 from controller.planning.runplan import PumpAccount
 from controller.running.execution import Devices
 from controller.running.stopping import StopSwitch
-from controller.running.trafficlog import TrafficFile
+from controller.running.trafficlog import traffic_of
 from controller.titration.plan import Sample
-from drivers.clock import Clock, ManualClock, ScaledClock, SystemClock
+from drivers.clock import Clock, SystemClock
 from drivers.operator import AnswersOperator, ConsoleOperator, Operator
 from drivers.transport import TrafficLog
 from simulators.bench import VirtualBench
@@ -36,8 +38,6 @@ from simulators.device_end import Device
 from simulators.faults import FaultScript
 from simulators.port import VirtualPorts
 
-Route = Literal["memory", "pty", "tcp"]
-FAST = "fast"
 #: what says where pump and probe are after a drop-out; None: looked for by the name in the bench file
 Finders = tuple[Callable[[], str] | None, Callable[[], str] | None]
 
@@ -108,23 +108,6 @@ def is_simulated(bench: BenchSettings) -> bool:
             remedy="Set both to simulated, or both to real ports",
         )
     return simulated[0]
-
-
-def local_route() -> Route:
-    """Return what carries bytes here as a serial line does: a pseudo-terminal, or TCP where there is none."""
-    return "pty" if os.name == "posix" else "tcp"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class ReachedBench:
-    """A bench whose devices can be opened one by one; none of them is. `temperature_c` is the method's."""
-
-    clock: Clock
-    operator: Operator
-    urls: tuple[str, str]
-    traffic: Mapping[str, TrafficLog]
-    temperature_c: float
-    connecting: Connecting
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -235,7 +218,7 @@ class _Opener:
             clock=clock,
             operator=operator,
             urls=urls,
-            traffic=self._traffic(),
+            traffic=self._traffic,
             temperature_c=self.temperature_c,
             connecting=self._connecting(clock),
         )
@@ -254,6 +237,12 @@ class _Opener:
         if not all(told.startswith(MAKER) for told in (opened.account.identity, opened.probe_identity)):
             raise self._not_simulated("--time-scale")  # only a served simulated bench lives at another pace
         return opened
+
+    @property
+    def _traffic(self) -> dict[str, TrafficLog]:
+        opening = self.opening
+        wanted = opening.traffic_log or self.bench.traffic_log
+        return traffic_of(opening.place if wanted else None, self.held)
 
     def _operator(self) -> Operator:
         opening = self.opening
@@ -281,7 +270,7 @@ class _Opener:
         self, urls: tuple[str, str], clock: Clock, operator: Operator, find: Finders = (None, None)
     ) -> OpenBench:
         bench = self.bench
-        traffic = self._traffic()
+        traffic = self._traffic
         connecting = self._connecting(clock)
         pump = connecting.pump(bench.pump, url=urls[0], traffic=traffic["pump"], find=find[0])
         probe = connecting.probe(
@@ -304,76 +293,3 @@ class _Opener:
             stop=self.stop,
             traffic=traffic,
         )
-
-    def _traffic(self) -> dict[str, TrafficLog]:
-        opening = self.opening
-        if not (opening.traffic_log or self.bench.traffic_log) or opening.place is None:
-            return {"pump": TrafficLog(), "probe": TrafficLog()}
-        try:
-            file = TrafficFile(opening.place / "logs")
-        except OSError as failure:
-            raise HalfdropError(
-                f"the traffic log cannot be written ({failure})",
-                where=str(opening.place / "logs"),
-                remedy="See to the folder, or leave --traffic-log and traffic_log out",
-            ) from failure
-        self.held.callback(file.close)
-        return {"pump": file.line("pump"), "probe": file.line("probe")}
-
-
-@contextmanager
-def serve_bench(
-    bench: BenchSettings,
-    method: MethodSettings,
-    sample: Sample,
-    *,
-    seed: int | None,
-    time_scale: str,
-    route: Route,
-    place: Path | None,
-) -> Iterator[dict[str, str]]:
-    """Serve the devices of a simulated bench to any program, in real or scaled time, while the block runs.
-
-    Yields:
-        The addresses of the ports by role.
-    """
-    simulation = bench.simulation
-    assert simulation is not None  # the bench file was checked
-    clock = clock_of(time_scale)
-    world = simulated_world(
-        bench, simulation, method, sample, seed=simulation.seed if seed is None else seed, start_s=clock.now_s()
-    )
-    world.stir(True, clock.now_s())  # nobody is asked here
-    pump, probe = spoken_devices(bench, world, place=place)
-    with VirtualPorts(clock) as ports:
-        yield {"pump": ports.add("pump", pump, route).url, "probe": ports.add("probe", probe, route).url}
-
-
-def clock_of(time_scale: str | None, *, start_utc_s: float | None = None) -> Clock:
-    """Return the clock of a simulated bench.
-
-    Args:
-        time_scale: None or "fast": as fast as the computer can; else how many times real time.
-        start_utc_s: POSIX time at which manual time begins; None: now.
-
-    Raises:
-        HalfdropError: neither "fast" nor a number above 0.
-    """
-    if time_scale is None or time_scale == FAST:
-        return ManualClock(start_utc_s=time.time() if start_utc_s is None else start_utc_s)
-    try:
-        scale = float(time_scale)
-        if not 0 < scale <= 1000:
-            raise ValueError
-    except ValueError:
-        raise HalfdropError(
-            f"got {time_scale!r}, allowed: {FAST}, or a number above 0, at most 1000",
-            where="--time-scale",
-            remedy="Use 1 for real time, 20 to watch",
-        ) from None
-    return SystemClock() if scale == 1 else ScaledClock(scale)
-
-
-def time_scale_of(clock: Clock) -> Callable[[float], None] | None:
-    """Return what changes how fast a simulated bench's time passes; None where time is real, or passes by itself."""
-    return clock.change_scale if isinstance(clock, ScaledClock) else None

@@ -12,10 +12,10 @@ from dataclasses import dataclass
 from statistics import median
 
 from configs.benchfile import BenchSettings
-from controller.assembly import ReachedBench
 from controller.benchwork.bench_finding import Finding, Verdict, passed_over, step, wrong
 from controller.benchwork.bench_motion import STEPS, MotionCheck
 from controller.benchwork.connection import check_capabilities, dialect_of
+from controller.benchwork.reached import ReachedBench
 from controller.running.stopping import StopSwitch
 from drivers.clock import Clock, real_seconds_scale
 from drivers.portfailure import owner_of

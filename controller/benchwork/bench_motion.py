@@ -6,8 +6,8 @@ import threading
 from collections.abc import Callable, Iterator
 
 from configs.benchfile import BenchSettings
-from controller.assembly import ReachedBench
 from controller.benchwork.bench_finding import Finding, passed_over, step, wrong
+from controller.benchwork.reached import ReachedBench
 from controller.running.stopping import StopSwitch
 from drivers.clock import ManualClock, real_seconds_scale
 from drivers.errors import StoppedError

@@ -15,8 +15,10 @@ from configs.benchfile import BenchSettings
 from configs.buffers import buffer
 from configs.calibrating import BufferLotSettings
 from configs.errors import HalfdropError
-from controller.assembly import Opening, Route, clock_of, is_simulated
+from controller.assembly import Opening, is_simulated
 from controller.benchwork.connection import Connecting
+from controller.benchwork.pace import clock_of
+from controller.benchwork.serving import Route
 from controller.benchwork.virtualdevices import simulated_identities, spoken_devices, virtual_probe
 from controller.calibration.buffers import BufferLot
 from controller.calibration.planning import PROBE_QUESTIONS

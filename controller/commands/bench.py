@@ -12,7 +12,9 @@ from typing import Any
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import load_bench
-from controller.assembly import FAST, is_simulated, local_route, serve_bench
+from controller.assembly import is_simulated
+from controller.benchwork.pace import FAST
+from controller.benchwork.serving import local_route, serve_bench
 from controller.commands.output import print_json, say
 from controller.commands.settings import chosen, sample_choice
 from controller.commands.signals import pulling

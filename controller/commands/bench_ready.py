@@ -12,10 +12,11 @@ from pathlib import Path
 
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
-from controller.assembly import Opening, ReachedBench, reach_bench
+from controller.assembly import Opening, reach_bench
 from controller.benchwork.bench_check import BenchCheck
 from controller.benchwork.bench_finding import Finding, passed_over
 from controller.benchwork.bench_shutdown import shut_down_steps
+from controller.benchwork.reached import ReachedBench
 from controller.calibration.probe_record import keep_stored
 from controller.commands.bench import DEFAULT_METHOD
 from controller.commands.output import print_json, print_table, say

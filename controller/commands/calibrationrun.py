@@ -10,8 +10,9 @@ from pathlib import Path
 from configs.benchfile import BenchSettings
 from configs.errors import HalfdropError
 from configs.settings import load_bench
-from controller.assembly import Opening, is_simulated, time_scale_of
+from controller.assembly import Opening, is_simulated
 from controller.benchwork.calibrationbench import CalibrationBench
+from controller.benchwork.pace import time_scale_of
 from controller.calibration.lot_session import settle_lot
 from controller.calibration.plans import CalibrationPlan
 from controller.calibration.store import in_force

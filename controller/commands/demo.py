@@ -6,7 +6,8 @@ import argparse
 from argparse import Namespace
 from pathlib import Path
 
-from controller.assembly import Opening, local_route
+from controller.assembly import Opening
+from controller.benchwork.serving import local_route
 from controller.commands.demolab import METHOD, SAMPLE_ID, new_folder, start_watched
 from controller.commands.output import say
 from controller.commands.run import tell, titrate_once

@@ -5,7 +5,7 @@ from __future__ import annotations
 import tempfile
 from pathlib import Path
 
-from controller.assembly import FAST
+from controller.benchwork.pace import FAST
 from controller.labfolder import Lab, find_lab, init_lab
 
 METHOD, SAMPLE_ID = "juice-acidity", "press 3, Tuesday"

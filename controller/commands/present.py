@@ -7,7 +7,8 @@ from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, replace
 from pathlib import Path
 
-from controller.assembly import OpenBench, time_scale_of
+from controller.assembly import OpenBench
+from controller.benchwork.pace import time_scale_of
 from controller.commands.keyboard import Keyboard
 from controller.commands.signals import pulling
 from controller.labfolder import Lab

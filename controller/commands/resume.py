@@ -10,7 +10,8 @@ from pathlib import Path
 
 from configs.errors import HalfdropError
 from configs.settings import load_bench
-from controller.assembly import FAST, Opening, is_simulated, open_bench
+from controller.assembly import Opening, is_simulated, open_bench
+from controller.benchwork.pace import FAST
 from controller.commands.lines import Lines
 from controller.commands.output import say
 from controller.commands.present import at_the_bench

@@ -5,8 +5,10 @@ from __future__ import annotations
 import logging
 import logging.handlers
 import time
+from contextlib import ExitStack
 from pathlib import Path
 
+from configs.errors import HalfdropError
 from drivers.transport import TrafficLog
 
 #: size at which the file turns over, bytes, and how many older ones are kept
@@ -69,3 +71,27 @@ class KeptTraffic(TrafficLog):
         """Note what came in."""
         super().received(at_s, data)
         self._file.write(self._device, "<", at_s, data)
+
+
+def traffic_of(place: Path | None, held: ExitStack) -> dict[str, TrafficLog]:
+    """Return what keeps the last messages of each line, and all of them in logs/ of the lab folder `place`.
+
+    Args:
+        place: None: no file is kept.
+        held: closes the file.
+
+    Raises:
+        HalfdropError: the file cannot be made.
+    """
+    if place is None:
+        return {"pump": TrafficLog(), "probe": TrafficLog()}
+    try:
+        file = TrafficFile(place / "logs")
+    except OSError as failure:
+        raise HalfdropError(
+            f"the traffic log cannot be written ({failure})",
+            where=str(place / "logs"),
+            remedy="See to the folder, or leave --traffic-log and traffic_log out",
+        ) from failure
+    held.callback(file.close)
+    return {"pump": file.line("pump"), "probe": file.line("probe")}

@@ -20,7 +20,8 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 sys.path.insert(0, str(Path(__file__).parents[2]))
 
 from configs.settings import shipped_bench, shipped_method
-from controller.assembly import Opening, Route, open_bench
+from controller.assembly import Opening, open_bench
+from controller.benchwork.serving import Route
 from controller.journal import Journal
 from controller.planning.runplan import SampleChoice, make_plan, plan_sample
 from controller.records.recordfile import MemorySink
