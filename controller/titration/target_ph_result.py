@@ -34,6 +34,8 @@ if TYPE_CHECKING:
 USUAL_DRIFT_MV_MIN = 0.1
 #: an uncertainty of fewer precisions of the pump is never too large a share
 _SMALL_PRECISIONS = 20.0
+#: what may come without a dose: precisions of the pump, and share of what the lag explains
+_STILL_PRECISIONS, _STILL_SHARE = 2.0, 0.5
 #: smallest doses below which passing the set pH is nobody's fault
 _FEW_DOSES = 4.0
 
@@ -94,7 +96,7 @@ def end_point_json(plan: RunPlan, found: VolumeAtPh, *, beyond_ml: float, temper
 
 def judged(plan: RunPlan, found: VolumeAtPh, point: dict[str, Any]) -> tuple[list[str], str | None]:
     """Warnings about a determination, and why it is withheld (None: it is not)."""
-    remarks = []
+    remarks: list[str] = []
     if found.passed_by_ph > ALLOWED_PASS_PH:
         passed = f"the first point beyond pH {found.ph:.2f} lies {found.passed_by_ph:.2f} beyond it"
         if found.bracket_ml > _FEW_DOSES * max(plan.pump.step_ml, plan.dosing.smallest_ml):
@@ -132,7 +134,7 @@ def _determination(run: RunState) -> tuple[dict[str, Any] | None, list[str], str
         return None, [], "the points do not lie on both sides of the end point pH"
     point = end_point_json(run.plan, found, beyond_ml=_beyond_ml(run), temperature_c=run.temperature_c)
     told, contradicting = last_look(curve, [one.at_s for one in run.points], point, slowness=run.slowness)
-    told += _slow(run, point)
+    told += [*_slow(run, point), *_by_itself(run, point)]
     more, withheld = judged(run.plan, found, point)
     return point, [*more, *told], contradicting or withheld
 
@@ -177,6 +179,24 @@ def _widen(point: dict[str, Any], by_ml: float) -> None:
 
 def _beyond_ml(run: RunState) -> float:
     return math.hypot(position_sd_ml(run), run.world.doubt_ml, run.lag_left_ml)
+
+
+def _by_itself(run: RunState, point: dict[str, Any]) -> list[str]:
+    """Widen by what may have come uncounted where pH went on at the end without a dose, more than the lag explains."""
+    standing = [one for one in run.points if one.delivered_ml == run.points[-1].delivered_ml and one.ph is not None]
+    first, last = standing[0], standing[-1]
+    lasted_s = last.at_s - first.at_s
+    if first.ph is None or last.ph is None or lasted_s <= 0.0:
+        return []
+    explained_ml = last.volume_ml - first.volume_ml
+    more_ml = point["ml_per_ph"] * (last.ph - first.ph) - explained_ml
+    if more_ml <= _STILL_PRECISIONS * pump_precision_ml(run.plan) + _STILL_SHARE * explained_ml:
+        return []
+    _widen(point, more_ml / lasted_s * run.world.elapsed_s)
+    return [
+        f"at the end pH went on by {last.ph - first.ph:+.2f} in {lasted_s:.0f} s without a dose (a leak, a reaction, a "
+        "probe slower than its record?); the uncertainty is widened by what may have come so in the whole run"
+    ]
 
 
 def _slow(run: RunState, point: dict[str, Any]) -> list[str]:
