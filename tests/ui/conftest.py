@@ -53,20 +53,20 @@ METHODS = ("juice-acidity", "standardise-sodium-hydroxide", "wash-water-alkalini
 SAMPLE = "press 3, [bold]Tuesday[/bold]"
 
 
-def fixed_plan() -> RunPlan:
+def fixed_plan(method: str = "juice-acidity") -> RunPlan:
     bench = shipped_bench()
     account = expected_account(bench)
     return make_plan(
-        shipped_method("juice-acidity"), bench, SampleChoice(sample_id=SAMPLE), pump=account, probe_identity="probe"
+        shipped_method(method), bench, SampleChoice(sample_id=SAMPLE), pump=account, probe_identity="probe"
     )
 
 
 class Script:
     """Writes a record step by step, as a run would."""
 
-    def __init__(self, path: Path) -> None:
+    def __init__(self, path: Path, method: str = "juice-acidity") -> None:
         self.clock = ManualClock()
-        self.path, self.plan = path, fixed_plan()
+        self.path, self.plan = path, fixed_plan(method)
         self.journal = Journal(FileSink(path, durable=False), self.clock, name=path.name)
         self.delivered_ml, self.doses = 0.0, 0
 
@@ -147,9 +147,11 @@ class Stage:
     def __init__(self, lab: Lab) -> None:
         self.lab = lab
 
-    def script(self, name: str = "2026-01-01T000000Z-juice-acidity", *, points: int = 0) -> Script:
+    def script(
+        self, name: str = "2026-01-01T000000Z-juice-acidity", *, points: int = 0, method: str = "juice-acidity"
+    ) -> Script:
         """Begin a record."""
-        script = Script(self.lab.runs / f"{name}.jsonl")
+        script = Script(self.lab.runs / f"{name}.jsonl", method)
         script.begin()
         script.points(upto=points)
         return script

@@ -76,6 +76,23 @@ def test_the_list_tells_what_is_in_force_and_how_it_moved(stage: Any) -> None:
 
 
 @pytest.mark.parametrize("size", [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")])
+def test_the_list_and_a_finished_calibration_as_they_look(stage: Any, size: tuple[int, int]) -> None:
+    for day, slope in ((2, 98.9), (9, 98.2)):
+        _calibration(stage.lab, day, slope=slope)
+    app = HalfdropApp(lab=stage.lab)
+
+    async def steps(pilot: Any) -> None:
+        await pilot.press("5")
+        await stage.until(pilot, lambda: isinstance(app.screen, CalibrationsScreen) and len(app.screen._shown) == 2)
+        await stage.check_snapshot(pilot, f"calibrations-{size[0]}x{size[1]}")
+        await pilot.press("enter")
+        await stage.until(pilot, lambda: isinstance(app.screen, CalibrationScreen) and app.screen.view.over)
+        await stage.check_snapshot(pilot, f"calibration-done-{size[0]}x{size[1]}")
+
+    stage.drive(app, steps, size)
+
+
+@pytest.mark.parametrize("size", [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")])
 def test_a_step_is_asked_and_answered_on_the_screen(stage: Any, size: tuple[int, int]) -> None:
     path, _ = _calibration(stage.lab, 2, closed=False)
     app = HalfdropApp(lab=stage.lab)

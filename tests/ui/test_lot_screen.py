@@ -22,6 +22,22 @@ def test_figures_take_a_decimal_comma_and_refuse_what_can_mean_two_things() -> N
             figures_of(typed, what="portions")
 
 
+@pytest.mark.parametrize("size", [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")])
+@pytest.mark.parametrize(("key", "kind"), [("t", "titrant"), ("b", "blank")])
+def test_the_form_as_it_looks(stage: Any, key: str, kind: str, size: tuple[int, int]) -> None:
+    app = HalfdropApp(lab=stage.lab)
+
+    async def steps(pilot: Any) -> None:
+        await pilot.press("5")
+        await stage.until(pilot, lambda: isinstance(app.screen, CalibrationsScreen))
+        await pilot.press(key)
+        await stage.until(pilot, lambda: isinstance(app.screen, LotScreen) and app.screen._prepared is not None)
+        await stage.until(pilot, lambda: kind == "blank" or len(app.screen.query(AnswerField)) > 0)
+        await stage.check_snapshot(pilot, f"lot-{kind}-{size[0]}x{size[1]}")
+
+    stage.drive(app, steps, size)
+
+
 def test_a_blank_is_settled_from_typed_volumes(stage: Any) -> None:
     app = HalfdropApp(lab=stage.lab)
 

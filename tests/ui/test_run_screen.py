@@ -54,6 +54,40 @@ def test_a_run_that_goes_on_as_it_looks(stage: Any, monkeypatch: pytest.MonkeyPa
         stage.drive(app, steps, size)
 
 
+@pytest.mark.parametrize("size", SIZES)
+def test_a_run_to_a_set_ph_shows_where_it_goes(
+    stage: Any, monkeypatch: pytest.MonkeyPatch, size: tuple[int, int]
+) -> None:
+    monkeypatch.setattr("controller.running.progress.Pace.time_left_s", lambda *_: 95.0)
+    script = stage.script(points=20, method="juice-acidity-to-ph")
+    app = HalfdropApp(lab=stage.lab, record=script.path)
+
+    async def steps(pilot: Any) -> None:
+        await stage.until(pilot, lambda: len(app.screen.view.points) == 20)
+        await pilot.pause()
+        assert "╌ to pH 8.10 ╌" in stage.text(app)
+        await stage.check_snapshot(pilot, f"run-to-ph-{_size_name(size)}")
+
+    with stage.listening(script.path):
+        stage.drive(app, steps, size)
+
+
+def test_the_time_that_a_run_took_is_without_evaluation_and_the_last_question(stage: Any) -> None:
+    script = stage.script(points=28)
+    read_s = script.clock.now_s()
+    script.clock.wait(500.0)  # a scaled clock races on while the curve is evaluated and the probe is put away
+    script.journal.close("stopped", reason="x", stop_confirmed=True, steps=0, result={"end_points": [], "warnings": []})
+    app = HalfdropApp(lab=stage.lab, record=script.path)
+
+    async def steps(pilot: Any) -> None:
+        await stage.until(pilot, lambda: app.screen.view.over)
+        await pilot.pause()
+        assert app.screen.view.took_s == pytest.approx(read_s)
+        assert "took 3:20" in stage.text(app)
+
+    stage.drive(app, steps)
+
+
 def test_it_follows_the_record_and_a_torn_line_waits(stage: Any) -> None:
     script = stage.script(points=5)
     app = HalfdropApp(lab=stage.lab, record=script.path)

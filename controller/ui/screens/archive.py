@@ -114,7 +114,7 @@ class ArchiveScreen(Screen[None]):
         found = self._index.find(words, outcome=self._outcome, most=PAGE, after=len(self._shown))
         table = self.query_one(DataTable)
         for one in found:
-            table.add_row(*(RichText(printable(cell)) for cell in _cells(one)), key=one.run)
+            table.add_row(*(cell_of(cell) for cell in _cells(one)), key=one.run)
         self._shown += found
 
     def on_data_table_row_highlighted(self, event: DataTable.RowHighlighted) -> None:
@@ -220,6 +220,11 @@ def widths_for(room: int, columns: Sequence[tuple[str, int]], growing: Sequence[
     """Return the columns with their widths on a screen of `room` cells."""
     more = max(0, room - 6 - sum(width + 2 for _, width in columns)) // len(growing)
     return [(name, width + (min(more, width) if name in growing else 0)) for name, width in columns]
+
+
+def cell_of(text: str) -> RichText:
+    """Return a cell's text, never markup, with a sign where it is cut."""
+    return RichText(printable(text), no_wrap=True, overflow="ellipsis")
 
 
 def set_widths(table: DataTable[Any], widths: Sequence[tuple[str, int]]) -> None:

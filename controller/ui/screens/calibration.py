@@ -5,7 +5,6 @@ from __future__ import annotations
 from functools import partial
 from typing import Any, ClassVar
 
-from rich.text import Text as RichText
 from textual import events
 from textual.app import ComposeResult
 from textual.binding import Binding, BindingType
@@ -21,7 +20,7 @@ from controller.commands.calibrations import calibration_entry, followed
 from controller.labfolder import Lab
 from controller.records.record import printable
 from controller.running.launch import record_of, start_run
-from controller.ui.screens.archive import set_widths, verify_for
+from controller.ui.screens.archive import cell_of, set_widths, verify_for
 from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.screens.run import RunScreen
@@ -148,7 +147,7 @@ class CalibrationsScreen(Screen[None]):
         table = self.query_one(DataTable)
         table.clear()
         for row in rows:
-            table.add_row(*(RichText(printable(str(row[name]))) for name, _ in _COLUMNS))
+            table.add_row(*(cell_of(str(row[name])) for name, _ in _COLUMNS))
         if not rows:
             text = "none yet: p calibrates the probe, u checks the burette, t settles a titrant, b a blank"
             self.query_one("#about", Plain).say(text)

@@ -19,11 +19,13 @@ On the right: the reading, how steady it is, titrant, and about how long it take
 
   s          stop: the pump halts at once; then you say whether to go on or to end the run
   p  g       pause after the dose under way; go on
+  Enter      answer what is asked
   d  n       a dose by hand; a note into the record
   w          read the warnings (they stay until then)
   z          look closely at the equivalence point, or at the whole
   ← →        walk from point to point
   + -        faster, slower (simulated bench and playback)
+  u          a run that broke off: go on with it, or end it
   q          leave; a run that goes on can be left running"""
 
 _SET_UP = """\
@@ -34,8 +36,8 @@ Numbers may have a decimal point or a decimal comma. What the run is expected to
   F5         expect: how long, how much titrant, what to heed
   F9         start the run
 
-More than one replicate, or a series from a table (CSV: id, amount, method, replicates), runs one after the other;
-1 goes to the run that goes on now."""
+More than one replicate, or a series from a table (CSV: id, amount, method, replicates), runs one after the other; on a
+real bench the screen asks for each beaker before anything moves. 1 goes to the run that goes on now."""
 
 _BENCH = """\
 Pump and probe as they answer, the account of titrant, the calibration and its age, and what to do where something is
@@ -43,7 +45,8 @@ wrong. Devices are asked by a process of their own: the screen never waits for o
 
   r          ask again; read the probe now
   f          fill the syringe from the reservoir
-  o          prime: push titrant through the tip into the waste"""
+  o          prime: push titrant through the tip into the waste
+  u          a run that was left open: go on with it, or end it; before that this bench starts nothing"""
 
 _ARCHIVE = """\
 Every run of this lab folder, the newest first. Type to search in sample, method, operator and outcome.
@@ -52,6 +55,7 @@ Every run of this lab folder, the newest first. Type to search in sample, method
   Enter      open a run
   v          verify its record: intact, edited, torn or cut
   c          choose it for comparison; choose a second one to see both in one plot
+  f          one outcome after the other, or all
   e          write its tables (CSV with units)"""
 
 _RECORD = """\

@@ -132,7 +132,7 @@ def stability_text(view: RunView) -> str:
         return "just dosed"
     limit = view.plan.settling.stability_limit_mv_min if view.plan is not None else 3.0
     word = "steady" if abs(drift) <= limit else "moving"
-    return f"{word}, {drift:+.1f} mV/min"
+    return f"{word}, {round(drift, 1) + 0.0:+.1f} mV/min"  # never -0.0
 
 
 def trace(values: list[float], width: int) -> str:
