@@ -593,7 +593,7 @@ def test_the_amount_that_fails_is_a_warning(fake_bench: Any, plan: RunPlan) -> N
     ended = go(fake_bench, plan, Script(DONE), amount_of=lambda plan, result: {"value": 1 / 0})
     assert ended.result["result"] is None
     assert any("amount could not be computed" in warning for warning in ended.result["warnings"])
-    assert ended.exit_status == 0
+    assert ended.exit_status == 1  # a run whose amount is missing is not to be trusted
 
 
 def test_progress_hears_every_entry(fake_bench: Any, plan: RunPlan) -> None:
