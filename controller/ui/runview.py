@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import deque
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 from configs.errors import HalfdropError
@@ -157,6 +157,8 @@ class RunView:
         match what:
             case "point":
                 self._point(entry)
+            case "point-again":
+                self._point_again(entry)
             case "forecast":
                 self.forecast = (float(entry["volume_ml"]), float(entry["standard_uncertainty_ml"]))
                 self._pace_saw("forecast", self.forecast[0], entry.get("end_point"))
@@ -188,6 +190,12 @@ class RunView:
             )
         )
         self._pace_saw("point")
+
+    def _point_again(self, entry: dict[str, Any]) -> None:
+        """The run takes an earlier point for another composition."""
+        number = entry.get("point")
+        if isinstance(number, int) and 0 <= number < len(self.points):
+            self.points[number] = replace(self.points[number], volume_ml=float(entry["volume_ml"]))
 
     def _observation(self, kind: str, entry: dict[str, Any]) -> None:
         if kind in ("reading", "dosed"):

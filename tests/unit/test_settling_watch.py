@@ -7,6 +7,7 @@ import random
 import pytest
 
 from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
+from controller.records.record import points
 from controller.study import nominal_run
 from controller.titration.composition import Composition
 from controller.titration.lag_watch import DECISIVE, SUSPICIOUS, LagWatch
@@ -88,6 +89,25 @@ def test_points_seen_again_never_run_backwards() -> None:
     assert points_again(points[:2], [(0.25, 0.05), (0.2, 0.06)]) == again[:1]
     report = again_report(*again[0])
     assert (report.what, report.point, report.volume_ml) == ("point-again", 1, 0.25)
+
+
+def test_a_record_tells_each_point_as_it_was_taken_for_last() -> None:
+    class Reports:
+        """A record's reports, in their order."""
+
+        def of(self, kind: str) -> list[dict[str, object]]:
+            told = [
+                {"what": "point", "volume_ml": 0.0, "potential_mv": 150.0, "run_s": 5.0},
+                {"what": "point", "volume_ml": 0.3, "volume_sd_ml": 0.001, "potential_mv": 140.0, "run_s": 12.0},
+                {"what": "point-again", "point": 1, "volume_ml": 0.21, "volume_sd_ml": 0.04},
+                {"what": "point-again", "point": 9, "volume_ml": 0.5, "volume_sd_ml": 0.04},
+            ]
+            return told if kind == "report" else []
+
+    start, seen_again = points(Reports())
+    assert start["volume_ml"] == 0.0
+    assert (seen_again["volume_ml"], seen_again["volume_sd_ml"]) == (0.21, 0.04)
+    assert (seen_again["potential_mv"], seen_again["at_s"]) == (140.0, 12.0)
 
 
 def test_a_nominal_run_keeps_its_record_and_reports_what_it_learned() -> None:
