@@ -23,7 +23,7 @@ from controller.titration.audit import audited
 from controller.titration.gaps import drift_over_gaps_mv
 from controller.titration.outcome import ABOUT_PKA, STRAIGHTNESS_MV
 from controller.titration.plan import RunPlan
-from controller.titration.precision import pump_precision_ml
+from controller.titration.precision import offset_sd_ph, pump_precision_ml
 from simulators.constants import ideal_slope_mv
 
 #: no probe and no calibration is straight to better than this over a few pH
@@ -137,6 +137,7 @@ def _hold_against_run(
         evaluation.estimates,
         slowness=None,  # learned while it ran; what it cost is in the run's own uncertainty, below
         precision_ml=pump_precision_ml(plan),
+        offset_sd_ph=offset_sd_ph(plan),
     )
     result["end_points"] = audit.end_points
     result["warnings"] += audit.warnings

@@ -36,6 +36,8 @@ _LARGEST_DISTANCE = 0.05
 _SLOWER = 1.15
 #: ... or faster: the pH scale (or the concentration) is off
 _FASTER = 0.87
+#: ... beyond what so many standard deviations of the line's slope allow
+_SURE = 3.0
 
 
 def inflection_bias_sd(inflection: Inflection, previous_ml: float) -> float:
@@ -83,7 +85,8 @@ def from_gran(line: GranLine | None, curve: Curve, inflection: Inflection, *, be
         return replace(estimate, sound=False, remark=NEIGHBOUR)
     if beyond and c is not None and curve.ph is not None:
         ratio = line.slope * c
-        if ratio > _SLOWER:
+        by_chance = 1.0 + _SURE * _slope_spread(line)
+        if ratio > _SLOWER * by_chance:
             return replace(
                 estimate,
                 sound=False,
@@ -92,7 +95,7 @@ def from_gran(line: GranLine | None, curve: Curve, inflection: Inflection, *, be
                     f"takes it up ({_TAKES_ACID if curve.acid_titrant else _TAKES_BASE}"
                 ),
             )
-        if ratio < _FASTER:
+        if ratio < _FASTER / by_chance:
             return replace(
                 estimate,
                 remark=(
@@ -102,6 +105,11 @@ def from_gran(line: GranLine | None, curve: Curve, inflection: Inflection, *, be
                 ),
             )
     return estimate
+
+
+def _slope_spread(line: GranLine) -> float:
+    """Relative standard deviation of a fitted line's slope, from its correlation: sqrt((1/r^2 - 1)/(n - 2))."""
+    return math.sqrt(max(0.0, 1.0 / line.correlation**2 - 1.0) / max(1, (line.estimate.points or 3) - 2))
 
 
 def from_fit(fit: ModelFit | None, inflection: Inflection) -> Estimate | None:

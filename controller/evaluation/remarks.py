@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from controller.evaluation.agreement import disagreements
+from controller.evaluation.agreement import COVERAGE_FACTOR, disagreements
 from controller.evaluation.branches import branch_remarks
 from controller.evaluation.carbonate import carbonate_gap
 from controller.evaluation.curve import Curve
@@ -77,7 +77,7 @@ def _shape_warnings(number: int, jump: Inflection, found: list[Estimate], chosen
             f"equivalence may lie {100.0 * share:.1f} % or more from it (in the uncertainty)"
         ]
     off = (jump.volume_ml - chosen.volume_ml) / chosen.volume_ml
-    if abs(off) <= _NOTABLE_BIAS or abs(jump.volume_ml - chosen.volume_ml) < 2.0 * math.hypot(
+    if abs(off) <= _NOTABLE_BIAS or abs(jump.volume_ml - chosen.volume_ml) < COVERAGE_FACTOR * math.hypot(
         jump.standard_uncertainty_ml, chosen.standard_uncertainty_ml
     ):
         return []

@@ -11,16 +11,17 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
-import numpy as np
-
 from controller.evaluation.agreement import COVERAGE_FACTOR
+from controller.evaluation.contradiction import LARGEST_OF_STATED, believed, misfit
 from controller.evaluation.curve import Curve
-from controller.evaluation.estimate import SECOND_DERIVATIVE, Estimate
-from controller.evaluation.mishaps import LARGEST_OF_STATED, Mishap, believed, find_mishap, misfit
-from controller.evaluation.modelfit import ModelFit, fit_charge_balance
+from controller.evaluation.estimate import Estimate
+from controller.evaluation.mishaps import MOST_MISHAPS, Explained, Mishap, explain
+from controller.evaluation.modelfit import ModelFit, Priors, fit_charge_balance
 
 #: relative standard uncertainty above which a number is remarked upon, and above which none is given
 NOTABLE_SHARE, LARGEST_SHARE = 0.005, 0.1
+#: what a calibration's offset is worth in another liquid: the junction, units of pH (common practice)
+JUNCTION_SD_PH = 0.02
 #: pKa so far apart show a jump between them
 JUMP_PKA = 2.5
 #: reduced chi-square from which on the uncertainty grows with it, without a jump; the nominal bench leaves 0.1 to 0.8
@@ -60,6 +61,7 @@ def audited(
     *,
     slowness: float | None,
     precision_ml: float,
+    offset_sd_ph: float | None = None,
 ) -> Audit:
     """Look at every end point once more.
 
@@ -70,24 +72,31 @@ def audited(
         estimates: by end point of the evaluation, the reported one first.
         slowness: learned lag over the record's, where there is a record.
         precision_ml: of the pump.
+        offset_sd_ph: standard uncertainty of the calibration's offset, units of pH, where it is known.
     """
     audit = Audit(list(end_points))
     if not audit.end_points:
         return audit
-    fit = fit_charge_balance(curve)
+    priors = known_beforehand(curve, offset_sd_ph)
+    fit = fit_charge_balance(curve, priors=priors)
     slow = slowness if slowness is not None and slowness > NOTABLE_SLOWNESS else None
     if fit is not None:
+        explained = explain(curve, fit, at_s, priors=priors)
         # before a slow probe was known for one, its points were taken too early
-        shown = believed(curve, fit, allowed=spread_allowed(slowness))
-        if shown is None:
-            audit.withheld = contradiction(fit)
+        shown = believed(explained.curve, explained.fit, allowed=spread_allowed(slowness))
+        if shown is None or not explained.holds:
+            audit.withheld = contradiction(fit, explained)
             audit.end_points = []
             return audit
-        mishap = find_mishap(curve, fit, np.asarray(at_s, dtype=np.float64))
-        if mishap is not None:
-            _widen_by_mishap(audit, mishap, curve, at_s, estimates)
-        _hold_against_fit(audit, shown, acid_titrant=bool(curve.acid_titrant))
-        if shown is not fit:  # where the stated substance does not describe the points, no estimator has its word alone
+        if explained.mishaps:
+            audit.warnings += [mishap_told(mishap) for mishap in explained.mishaps]
+            _widen_by(audit, explained.mishaps, explained.fit, curve, at_s)
+        else:
+            if explained.possible is not None:
+                mishap, with_it = explained.possible
+                _widen_by(audit, (mishap,), with_it, curve, at_s)
+            _hold_against_fit(audit, shown, acid_titrant=bool(curve.acid_titrant))
+        if shown is not explained.fit:  # no estimator has its word alone where the stated substance does not hold
             for number, point in enumerate(audit.end_points):
                 audit.widen(number, _disagreement_ml(float(point["volume_ml"]), estimates))
     if slow is not None:
@@ -105,29 +114,41 @@ def spread_allowed(slowness: float | None) -> float:
     return 1.0 if slowness is None else math.pow(max(1.0, slowness), SLOW_POINTS)
 
 
-def contradiction(fit: ModelFit) -> str:
-    """Return why no number is given where no acid or base could give the points."""
+def contradiction(fit: ModelFit, explained: Explained) -> str:
+    """Return why no number is given where no acid or base could give the points, or too much happened to them."""
+    left = f"misfit {misfit(fit):.1f}, allowed {LARGEST_OF_STATED:g}"
+    if not explained.holds:
+        left = f"{len(explained.mishaps)} mishaps do not explain them, allowed {MOST_MISHAPS}"
     return (
-        f"the points contradict one another (misfit {misfit(fit):.1f}, allowed {LARGEST_OF_STATED:g}): "
-        "something happened to sample, titrant or probe while they were taken, so no number is given"
+        f"the points contradict one another ({left}): something happened to sample, titrant or probe while they were "
+        "taken, so no number is given"
     )
 
 
-def _widen_by_mishap(
-    audit: Audit, mishap: Mishap, curve: Curve, at_s: Sequence[float], estimates: Sequence[Sequence[Estimate]]
-) -> None:
-    audit.warnings.append(mishap_told(mishap))
+def known_beforehand(curve: Curve, offset_sd_ph: float | None) -> Priors:
+    """What is known beforehand; thermodynamic constants may be 0.15 off as conditional ones."""
+    pka_sd = 0.05 if curve.debye_huckel_a is not None else 0.15
+    if offset_sd_ph is None:
+        return Priors(pka_sd=pka_sd)
+    return Priors(pka_sd=pka_sd, offset_sd_ph=math.hypot(offset_sd_ph, JUNCTION_SD_PH))
+
+
+def _widen_by(audit: Audit, mishaps: Sequence[Mishap], fit: ModelFit, curve: Curve, at_s: Sequence[float]) -> None:
+    """By how far the number goes when they are taken out (`fit`), or by the titrant not accounted for before it."""
+    acid = bool(curve.acid_titrant)
     for number, point in enumerate(audit.end_points):
         volume_ml = float(point["volume_ml"])
-        if mishap.kind == "drift":
-            if shape := _shape_near(volume_ml, estimates):
-                audit.widen(number, abs(shape.volume_ml - volume_ml))
-        elif volume_ml >= mishap.after_ml:
-            by_ml = abs(mishap.amount)
-            if mishap.kind == "leak":
-                passed = min(int(np.searchsorted(curve.volume_ml, volume_ml)), len(at_s) - 1)
-                by_ml *= max(0.0, at_s[passed] - mishap.after_s) / 60.0
-            audit.widen(number, by_ml)
+        right_ml, sd_ml = min(_shown(fit, acid), key=lambda pair: abs(pair[0] - volume_ml))
+        lost_ml = 0.0
+        for mishap in mishaps:
+            if volume_ml < mishap.after_ml:
+                continue
+            if mishap.kind == "step":
+                lost_ml += abs(mishap.amount)
+            elif mishap.kind == "leak":
+                passed_s = next((t for v, t in zip(curve.volume_ml, at_s, strict=True) if v >= volume_ml), at_s[-1])
+                lost_ml += abs(mishap.amount) * max(0.0, passed_s - mishap.after_s) / 60.0
+        audit.widen(number, math.hypot(max(abs(right_ml - volume_ml), lost_ml), sd_ml))
 
 
 def mishap_told(mishap: Mishap) -> str:
@@ -141,7 +162,9 @@ def mishap_told(mishap: Mishap) -> str:
             said = (
                 f"{place} the volume runs away by {-mishap.amount:+.3f} mL/min (a leaking valve, or a slow reaction?)"
             )
-        case "drift":
+        case "shift":
+            said = f"{place} the potential is another by {mishap.amount:+.2f} pH (the reference, or the temperature?)"
+        case _:
             said = (
                 f"{place} the potential runs away by {mishap.amount:+.2f} pH/min (the reference, or the temperature?)"
             )
@@ -188,11 +211,6 @@ def _shown(fit: ModelFit, acid_titrant: bool) -> list[tuple[float, float]]:
         for lost in range(len(fit.pka) + 1)
         if lost == last or (0 < lost < len(fit.pka) and fit.pka[lost] - fit.pka[lost - 1] >= JUMP_PKA)
     ]
-
-
-def _shape_near(volume_ml: float, estimates: Sequence[Sequence[Estimate]]) -> Estimate | None:
-    shapes = [e for found in estimates for e in found if e.estimator == SECOND_DERIVATIVE]
-    return min(shapes, key=lambda e: abs(e.volume_ml - volume_ml), default=None)
 
 
 def _judge_uncertainty(audit: Audit) -> None:

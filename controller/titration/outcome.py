@@ -21,7 +21,7 @@ from controller.evaluation.result import Evaluation
 from controller.titration.audit import Audit, audited
 from controller.titration.endpoint import FoundEndPoint
 from controller.titration.gaps import drift_over_gaps_mv
-from controller.titration.precision import pump_precision_ml
+from controller.titration.precision import offset_sd_ph, pump_precision_ml
 
 if TYPE_CHECKING:
     from controller.titration.core import RunState
@@ -144,6 +144,7 @@ def _audited(run: RunState, evaluation: Evaluation | None) -> Audit:
         evaluation.estimates,
         slowness=run.slowness,
         precision_ml=pump_precision_ml(run.plan),
+        offset_sd_ph=offset_sd_ph(run.plan),
     )
 
 

@@ -10,14 +10,16 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from controller.evaluation.at_ph import VolumeAtPh, estimator_name, volume_at_ph
+from controller.evaluation.contradiction import believed
 from controller.evaluation.curve import Curve, CurveError
-from controller.evaluation.mishaps import believed, find_mishap
+from controller.evaluation.mishaps import explain
 from controller.evaluation.modelfit import fit_charge_balance
 from controller.titration.audit import (
     LARGEST_SHARE,
     NOTABLE_SLOWNESS,
     SLOWNESS_COST,
     contradiction,
+    known_beforehand,
     mishap_told,
     spread_allowed,
 )
@@ -155,21 +157,22 @@ def last_look(
     """
     with np.errstate(all="ignore"), warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)  # numbers that no formula likes end as "not sound"
-        fit = fit_charge_balance(curve)
+        priors = known_beforehand(curve, None)
+        fit = fit_charge_balance(curve, priors=priors)
         if fit is None:
             return [], None
-        if believed(curve, fit, allowed=spread_allowed(slowness)) is None:
-            return [], contradiction(fit)
-        mishap = find_mishap(curve, fit, np.asarray(at_s, dtype=np.float64))
-    if mishap is None:
-        return [], None
-    by_ml, since_min = abs(mishap.amount), max(0.0, at_s[-1] - mishap.after_s) / 60.0
-    if mishap.kind == "drift":
-        by_ml *= since_min * abs(point["ml_per_ph"])
-    elif mishap.kind == "leak":
-        by_ml *= since_min
-    _widen(point, by_ml if mishap.kind == "drift" or point["volume_ml"] >= mishap.after_ml else 0.0)
-    return [mishap_told(mishap)], None
+        explained = explain(curve, fit, at_s, priors=priors)
+        if not explained.holds or believed(explained.curve, explained.fit, allowed=spread_allowed(slowness)) is None:
+            return [], contradiction(fit, explained)
+    for mishap in explained.mishaps:
+        by_ml, since_min = abs(mishap.amount), max(0.0, at_s[-1] - mishap.after_s) / 60.0
+        of_signal = mishap.kind in {"shift", "drift"}
+        if of_signal:
+            by_ml *= abs(point["ml_per_ph"])
+        if mishap.kind in {"leak", "drift"}:
+            by_ml *= since_min
+        _widen(point, by_ml if of_signal or point["volume_ml"] >= mishap.after_ml else 0.0)
+    return [mishap_told(mishap) for mishap in explained.mishaps], None
 
 
 def _widen(point: dict[str, Any], by_ml: float) -> None:

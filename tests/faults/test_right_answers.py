@@ -40,7 +40,7 @@ STOPPED = [
     pytest.param({"what": "unplugged", "device": "probe", "at_dose": 6}, "probe", id="unplugged for good"),
     pytest.param({"what": "cracked-probe", "at_dose": 4}, "", id="cracked-probe"),
     pytest.param({"what": "stirrer-stopped", "at_dose": 3}, "", id="stirrer-stopped"),
-    pytest.param({"what": "leaking-valve", "at_dose": 2, "rate_ml_min": 0.8}, "contradict", id="leaking-valve"),
+    pytest.param({"what": "leaking-valve", "at_dose": 2, "rate_ml_min": 0.8}, "no number is given", id="leaking-valve"),
     pytest.param({"what": "disk-full", "at_dose": 5}, "disk is full", id="disk-full"),
     pytest.param({"what": "read-only-disk", "at_dose": 5}, "cannot be written", id="read-only-disk"),
 ]
