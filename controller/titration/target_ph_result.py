@@ -34,10 +34,10 @@ if TYPE_CHECKING:
 
 #: drift of a good probe, which its calibration does not know of
 USUAL_DRIFT_MV_MIN = 0.1
-#: an uncertainty of fewer precisions of the pump is never too large a share
+#: what may come without a dose: precisions of the pump, share of what the lag explains, standard deviations of readings
 _SMALL_PRECISIONS = 20.0
-#: what may come without a dose: precisions of the pump, and share of what the lag explains
-_STILL_PRECISIONS, _STILL_SHARE = 2.0, 0.5
+#: what may come without a dose: precisions of the pump, share of what the lag explains, standard deviations of a reading
+_STILL_PRECISIONS, _STILL_SHARE, _STILL_SDS = 2.0, 0.5, 4.0
 #: smallest doses below which passing the set pH is nobody's fault
 _FEW_DOSES = 4.0
 
@@ -193,7 +193,9 @@ def _by_itself(run: RunState, point: dict[str, Any]) -> list[str]:
         return []
     explained_ml = last.volume_ml - first.volume_ml
     more_ml = point["ml_per_ph"] * (last.ph - first.ph) - explained_ml
-    if more_ml <= _STILL_PRECISIONS * pump_precision_ml(run.plan) + _STILL_SHARE * explained_ml:
+    noise_ph = math.hypot(first.potential_sd_mv, last.potential_sd_mv, STRAIGHTNESS_MV) / run.scale.slope_mv
+    still_ml = _STILL_PRECISIONS * pump_precision_ml(run.plan) + _STILL_SHARE * explained_ml
+    if more_ml <= still_ml + _STILL_SDS * noise_ph * abs(point["ml_per_ph"]):
         return []
     _widen(point, more_ml / lasted_s * run.world.elapsed_s)
     return [
