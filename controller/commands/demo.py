@@ -10,8 +10,8 @@ from controller.assembly import Opening
 from controller.benchwork.serving import local_route
 from controller.commands.demolab import METHOD, SAMPLE_ID, new_folder, start_watched
 from controller.commands.output import say
-from controller.commands.run import tell, titrate_once
 from controller.commands.settings import chosen
+from controller.commands.titration import tell, titrate_once
 from controller.commands.watch import has_terminal, show
 from controller.labfolder import Lab, find_lab, init_lab
 from controller.planning.runplan import SampleChoice

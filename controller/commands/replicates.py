@@ -12,17 +12,16 @@ from typing import Any
 from configs.errors import HalfdropError
 from controller.assembly import Opening, is_simulated
 from controller.commands.nextsample import END, NEXT_SAMPLE, READY, Between
-from controller.commands.output import amount_text, print_json, say
-from controller.commands.run import tell, titrate_once
+from controller.commands.output import print_json, say
 from controller.commands.settings import Chosen, sample_choice
+from controller.commands.summary import summary_lines, summary_of_records
+from controller.commands.titration import tell, titrate_once
 from controller.labfolder import Lab
-from controller.planning.amounts import amount_of_replicates
 from controller.planning.runplan import SampleChoice
-from controller.records.encoding import plan_from_json
-from controller.records.record import printable, read_record
+from controller.records.record import printable
 from controller.running.outcome import RunResult
 from controller.titration.actions import Ask
-from controller.titration.plan import ResponseCheck, RunPlan
+from controller.titration.plan import ResponseCheck
 from controller.titration.traceability import Replicate
 
 MOST_REPLICATES = 20
@@ -134,54 +133,6 @@ def portions_of(text: str | None, count: int | None) -> list[float | None]:
             f"{len(portions)} portions for {count} replicates", where="--portions", remedy="Give one for each"
         )
     return list(portions)
-
-
-def plan_and_result(path: Path) -> tuple[RunPlan, dict[str, Any]]:
-    """Return plan and result of a closed record.
-
-    Raises:
-        HalfdropError: no record, no closing line, or it was not completed.
-    """
-    record = read_record(path)
-    result = (record.closing or {}).get("result")
-    if not isinstance(result, dict) or result.get("outcome") != "completed":
-        raise HalfdropError("its run was not completed", where=path.stem, remedy="Leave it out, or titrate again")
-    return plan_from_json(record.header.get("plan"), where=str(path)), {**result, "run": path.stem}
-
-
-def summary_of_records(paths: Sequence[Path]) -> dict[str, Any]:
-    """Return what the records of replicates say together.
-
-    Raises:
-        HalfdropError: a record that cannot be used, or runs of several methods.
-    """
-    pairs = [plan_and_result(path) for path in paths]
-    return {
-        **amount_of_replicates([plan for plan, _ in pairs], [result for _, result in pairs]),
-        "runs": [path.stem for path in paths],
-    }
-
-
-def summary_lines(summary: dict[str, Any]) -> list[str]:
-    """Return the mean of replicates for people."""
-    amount = summary["result"]
-    lines = [f"sample {summary['sample_id']}: {summary['count']} replicates", f"mean: {amount_text(amount)}"]
-    if summary["standard_deviation"] is not None:
-        low, high = summary["confidence_interval"]
-        lines.append(
-            f"s = {summary['standard_deviation']:.3g} {amount['unit']}, RSD = {summary['rsd_percent']:.3g} %, "
-            f"95 % confidence interval of the mean {low:.5g} to {high:.5g} {amount['unit']} (scatter alone)"
-        )
-    test = summary["grubbs"]
-    if test is not None:
-        word = "an outlier" if test["outlier"] else "no outlier"
-        lines.append(
-            f"Grubbs' test: replicate {test['replicate']} ({test['value']:.5g}) is {word} "
-            f"({test['statistic']:.3f} against {test['critical']:.3f} at {100 * test['significance']:g} %); "
-            "nothing was dropped"
-        )
-    lines += [f"warning: {text}" for text in summary["warnings"]]
-    return [printable(line) for line in lines]
 
 
 def _together(results: Sequence[RunResult]) -> tuple[dict[str, Any] | None, str | None]:

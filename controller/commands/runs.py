@@ -165,7 +165,7 @@ def close(given: argparse.Namespace) -> int:
 
 def mean(given: argparse.Namespace) -> int:
     """Give mean, scatter, Grubbs' test and budget of runs on one sample, named or by its id."""
-    from controller.commands.replicates import summary_lines, summary_of_records
+    from controller.commands.summary import summary_lines, summary_of_records
 
     paths = _of_sample(given.run[0], given) if len(given.run) == 1 else []
     summary = summary_of_records(paths or [record_path(name, given) for name in given.run])

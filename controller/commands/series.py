@@ -12,6 +12,7 @@ from configs.errors import HalfdropError
 from configs.method import MethodSettings
 from controller.assembly import Opening
 from controller.commands.output import say
+from controller.commands.resumerun import resume_run
 from controller.commands.seriesrun import SeriesRun
 from controller.commands.settings import Chosen, answers_of, chosen, method_of
 from controller.labfolder import Lab
@@ -116,8 +117,6 @@ def resume_series(path: Path, lab: Lab, given: argparse.Namespace) -> int:
 
 
 def _finish_open_run(state: SeriesState, lab: Lab, given: argparse.Namespace) -> RunResult | None:
-    from controller.commands.resume import resume_run
-
     if state.under_way is None:
         return None
     for path in reversed(unclosed(lab.runs)):

@@ -12,9 +12,9 @@ from configs.method import MethodSettings
 from controller.assembly import Opening, is_simulated
 from controller.commands.nextsample import END, NEXT_SAMPLE, READY, SKIP, Between
 from controller.commands.output import print_json, say
-from controller.commands.run import titrate_once
 from controller.commands.seriestable import print_series, summed_up
 from controller.commands.settings import Chosen
+from controller.commands.titration import titrate_once
 from controller.journal import Journal
 from controller.labfolder import Lab
 from controller.planning.series import SeriesItem, Titration, titrations_of

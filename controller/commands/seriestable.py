@@ -8,7 +8,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.commands.output import amount_text, print_table
-from controller.commands.replicates import summary_of_records
+from controller.commands.summary import summary_of_records
 from controller.planning.series import SeriesItem
 from controller.records.record import printable
 
