@@ -120,6 +120,7 @@ def _titrated(
         opening=opening,
         headless=headless,
         operator_name=given.operator,
+        attended=given.attended,
     )
     for result in results:
         if result.outcome != "completed" or not (result.result["end_points"] or result.result.get("beyond_at_start")):

@@ -34,9 +34,9 @@ if TYPE_CHECKING:
 
 #: drift of a good probe, which its calibration does not know of
 USUAL_DRIFT_MV_MIN = 0.1
-#: what may come without a dose: precisions of the pump, share of what the lag explains, standard deviations of readings
+#: an uncertainty of fewer precisions of the pump is never too large a share
 _SMALL_PRECISIONS = 20.0
-#: what may come without a dose: precisions of the pump, share of what the lag explains, standard deviations of a reading
+#: what may come without a dose: precisions of the pump, share of what the lag explains, standard deviations of pH
 _STILL_PRECISIONS, _STILL_SHARE, _STILL_SDS = 2.0, 0.5, 4.0
 #: smallest doses below which passing the set pH is nobody's fault
 _FEW_DOSES = 4.0
