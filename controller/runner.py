@@ -11,25 +11,21 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 from typing import Any
 
-from configs.errors import HalfdropError
 from controller.calibration.plans import AnyPlan
 from controller.guard import Guard
-from controller.journal import Journal, RecordError
+from controller.journal import Journal
 from controller.planning.plancheck import check_start, start_warnings
 from controller.records.header import header_of
 from controller.resuming.resumption import Resumption, take_up
 from controller.running.aftercare import NOT_ASKED, ask_about_probe, probe_remark
 from controller.running.clockwatch import ClockWatch
+from controller.running.closing import close_failed, close_record
 from controller.running.execution import Devices, Execution
 from controller.running.outcome import (
-    NOT_CONFIRMED,
     AmountOf,
-    RunFailedError,
     RunResult,
     account_of,
     add_amount,
-    came_from,
-    exit_status,
     whole_result,
 )
 from controller.running.progress import Pace, Progress
@@ -47,7 +43,6 @@ from controller.titration.actions import (
 )
 from controller.titration.plan import RunPlan
 from drivers.clock import Clock
-from drivers.errors import StoppedError
 
 #: answers in a row that a core may get without anything being done, before the runner ends the run itself
 MOST_UNDONE = 50
@@ -172,9 +167,16 @@ class _Run:
                     details = ask_about_probe(self.devices.operator, self.journal, self.execution)
                 if (remark := probe_remark(details)) is not None and isinstance(self.plan, RunPlan):
                     result["notes"] = [*result.get("notes", ()), remark]
-            return self._close(result, details)
+            return close_record(
+                result,
+                details,
+                journal=self.journal,
+                execution=self.execution,
+                stop=self.stop,
+                safety=self.safety is not None or self.guard.refused_answer is not None,
+            )
         except BaseException as error:
-            self._close_failed(error)
+            close_failed(error, journal=self.journal, execution=self.execution)
             raise
         finally:
             with contextlib.suppress(Exception):  # a core in trouble may object to being ended
@@ -282,67 +284,3 @@ class _Run:
                 result["warnings"].append(warning)
         add_amount(result, self.plan, self.amount_of)
         return result
-
-    def _close(self, result: dict[str, Any], details: Mapping[str, Any]) -> RunResult:
-        confirmed = self.execution.stop_confirmed
-        reason = result["reason"]
-        if confirmed is False:
-            result["warnings"].append(NOT_CONFIRMED)
-            result["reason"] = reason = f"{reason}. {NOT_CONFIRMED}" if reason else NOT_CONFIRMED
-        # a record does not say where it lies: it may be moved, and two equal runs give equal bytes
-        kept = {key: value for key, value in result.items() if key != "run"}
-        self.journal.close(
-            result["outcome"],
-            reason=reason,
-            stop_confirmed=confirmed,
-            steps=self.execution.steps,
-            result=kept,
-            **details,
-        )
-        return RunResult(
-            outcome=result["outcome"],
-            reason=reason,
-            result=result,
-            exit_status=exit_status(
-                result,
-                stop=self.stop,
-                stop_confirmed=confirmed,
-                safety=self.safety is not None or self.guard.refused_answer is not None,
-            ),
-            record=self.journal.name,
-            steps=self.execution.steps,
-            stop_confirmed=confirmed,
-        )
-
-    def _close_failed(self, error: BaseException) -> None:
-        """Stop the pump, then close the record with what went wrong.
-
-        Raises:
-            RunFailedError: in place of `error` where that is none of ours, or the pump did not confirm its stop.
-        """
-        if self.journal.closed:
-            return
-        confirmed = False
-        with contextlib.suppress(RecordError):  # the pump was stopped before its line failed
-            self.execution.halt(f"{type(error).__name__}: {error}")
-        confirmed = self.execution.stop_confirmed is True
-        by_hand = isinstance(error, KeyboardInterrupt | StoppedError)
-        told = error.what if isinstance(error, HalfdropError) else f"{type(error).__name__}: {error}"
-        reason = "interrupted" if by_hand else told
-        try:
-            self.journal.close(
-                "stopped" if by_hand else "failed",
-                reason=reason if confirmed else f"{reason}. {NOT_CONFIRMED}",
-                stop_confirmed=confirmed,
-                steps=self.execution.steps,
-                came_from=came_from(error),
-            )
-        except RecordError as second:
-            reason = f"{reason}; its closing line could not be written either: {second}"
-        if confirmed and isinstance(error, HalfdropError | KeyboardInterrupt | SystemExit | GeneratorExit):
-            return
-        raise RunFailedError(
-            f"the run ended by an error ({reason})",
-            where=self.journal.name,
-            remedy="The record up to there is kept; evaluate it, and report the error" if confirmed else NOT_CONFIRMED,
-        ) from error
