@@ -97,6 +97,7 @@ def test_every_setting_has_a_description_and_every_number_a_unit_or_a_plain_mean
         "mass_fraction", "pkw", "debye_huckel_a", "certificate_ph", "certificate_standard_uncertainty_ph", "ph_error",
         "largest_residual_ph", "largest_check_error_ph", "isopotential_standard_uncertainty", "moisture_fraction",
         "moisture_standard_uncertainty", "ph_standard_uncertainty", "factor", "chance", "at_ph",
+        "largest_ph_beyond_buffers",
     }  # fmt: skip
     assert without_unit <= pure_numbers
 
