@@ -9,7 +9,7 @@ from typing import Protocol, runtime_checkable
 
 from configs.errors import HalfdropError
 from drivers.clock import Clock, Line, ManualClock, real_seconds_scale
-from drivers.link import ARRIVAL_LIMIT_S
+from drivers.virtualline import ARRIVAL_LIMIT_S
 from simulators.routes import Route
 
 #: what a fault does to a message's bytes on their way; b"" loses them

@@ -236,7 +236,7 @@ def test_ports_are_listed_and_nothing_is_opened(halfdrop: Run, monkeypatch: pyte
         SerialPort(path="/dev/ttyUSB0", description="adapter \x1b[2J", usb_serial="OL-7", usb_vendor_product=None)
     ]
     monkeypatch.setattr("drivers.ports.serial_ports", lambda: listed)
-    monkeypatch.setattr("drivers.serialport.open_port", lambda *given: pytest.fail("a port was opened"))
+    monkeypatch.setattr("drivers.heldport.open_port", lambda *given: pytest.fail("a port was opened"))
     status, out, _ = halfdrop("bench", "ports")
     assert status == 0
     assert out.splitlines()[1].startswith("OL-7")

@@ -312,7 +312,7 @@ def test_bytes_that_never_arrive_end_the_run_instead_of_moving_time(bench, monke
 
 
 def test_a_reply_that_never_arrives_ends_the_run_instead_of_moving_time(bench, monkeypatch):
-    monkeypatch.setattr("drivers.link.ARRIVAL_LIMIT_S", 0.001)
+    monkeypatch.setattr("drivers.virtualline.ARRIVAL_LIMIT_S", 0.001)
     monkeypatch.setattr(bench.probe_port.route, "give", len)
     with pytest.raises(DeviceGoneError, match="did not arrive"):
         bench.probe.read()
