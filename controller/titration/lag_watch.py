@@ -79,6 +79,8 @@ class LagWatch:
         self._excess = np.zeros(len(self.others))  # by which the lag in use is worse, by other lag
         self._each: list[_Array] = []  # the same, of every point's own transient
         self._undescribed = 0
+        self._judged: tuple[float, int] | None = None  # last reading and number of readings
+        self._found: _Array | None = None
 
     def excess(
         self,
@@ -101,7 +103,10 @@ class LagWatch:
             keep: the point was taken, and its transient counts from now on.
         """
         total = self._excess
-        chi_square = self._chi_squares(readings, before, noise_mv, fit)
+        judged = (readings[-1][0], len(readings)) if readings else None
+        if judged is None or judged != self._judged:  # a point that is taken was judged with the same readings before
+            self._judged, self._found = judged, self._chi_squares(readings, before, noise_mv, fit)
+        chi_square = self._found
         if chi_square is not None:
             told = float(chi_square.min()) < DESCRIBES * (len(readings) + len(before))
             own = chi_square[0] - chi_square[1:] if told else np.zeros(len(self.others))
@@ -148,7 +153,8 @@ class LagWatch:
             step_mv = float(np.ptp(value))
             share = np.full(len(used), _UNKNOWN_CURVE_SHARE * max(1.0, step_mv / _PARABOLA_MV))
             share[: len(before)] = _UNKNOWN_STEP_SHARE
-            sd = np.hypot(noise_mv, share * step_mv)
+            with np.errstate(over="ignore"):  # readings beyond any pH
+                sd = np.hypot(noise_mv, share * step_mv)
         else:
             value, sd = told
         compositions = [self._in_use, *self.others]
