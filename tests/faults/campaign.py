@@ -1,10 +1,11 @@
 """Many virtual runs under random faults, each held against the virtual truth.
 
-    python tests/faults/campaign.py [--runs 2000] [--fault-free 500] [--seed 1] [--jobs 1] [--only FAULT]
+    python tests/faults/campaign.py --runs 2000 --fault-free 500 --seed 1 --log runs.log [--piece 500] [--jobs 2]
+    python tests/faults/campaign.py --show runs.log
 
 Every run has a seed of its own, (campaign seed) x 1,000,000 + number, from which bench, method and faults are drawn,
-so any of them can be run again alone (`--first N --runs 1`). In memory, on manual time, through runner, guard, journal,
-drivers and wire grammar.
+so any of them can be run again alone (`--first N --runs 1 --fault-free 0`). In memory, on manual time, through runner,
+guard, journal, drivers and wire grammar. What stands in the log is not run again: a campaign can be made in pieces.
 """
 
 from __future__ import annotations
@@ -14,6 +15,7 @@ import itertools
 import json
 import math
 import random
+import re
 import sys
 import time
 from collections import Counter
@@ -50,7 +52,11 @@ from simulators.faults import FaultScript
 from simulators.nominal import NominalBench, nominal_bench
 from simulators.port import VirtualPorts
 
+#: number, campaign seed, kinds of fault to draw from
+Job = tuple[int, int, tuple[str, ...] | None]
 NAMES = itertools.count()
+#: numbers of runs without a fault
+FREE = 900_000
 LONGEST_VIRTUAL_S = 14_400.0 + 600.0
 LONGEST_REAL_S = 60.0
 #: smaller air, 3 % of the volume of these runs, does not show in every curve (see DEVELOPERS.md, "Faults")
@@ -132,6 +138,7 @@ class Ended:
     happened: tuple[str, ...] = ()
     recoverable: bool = False
     given: tuple[dict[str, Any], ...] = ()
+    seed: int = 0
 
 
 def settings_of(faults: list[dict[str, Any]], seed: int) -> FaultsSettings:
@@ -361,12 +368,12 @@ def draw(
     return bench, faults
 
 
-def one(job: tuple[int, int, tuple[str, ...] | None]) -> Ended:
+def one(job: Job) -> Ended:
     number, campaign_seed, kinds = job
     bench, faults = draw(number, campaign_seed, kinds=kinds)
     ended = carry_out(bench, number, tuple(sorted({fault["what"] for fault in faults})))
     recoverable = bool(faults) and all(gets_over(fault) for fault in faults)
-    return replace(ended, recoverable=recoverable, given=faults)
+    return replace(ended, recoverable=recoverable, given=faults, seed=campaign_seed)
 
 
 def table(ended: list[Ended]) -> str:
@@ -400,7 +407,7 @@ def table(ended: list[Ended]) -> str:
     return "\n".join(lines)
 
 
-def campaign(jobs: list[tuple[int, int, tuple[str, ...] | None]], workers: int, log: Path | None = None) -> list[Ended]:
+def campaign(jobs: list[Job], workers: int, log: Path | None = None) -> list[Ended]:
     """Run them all; `log` gets a JSON line for each as it ends, so that a long campaign can be looked at."""
     ended: list[Ended] = []
     with ExitStack() as held:
@@ -432,7 +439,8 @@ def main() -> int:
     options.add_argument("--seed", type=int, default=1)
     options.add_argument("--jobs", type=int, default=1)
     options.add_argument("--only", nargs="*")
-    options.add_argument("--log", type=Path, help="a JSON line a run, as they end")
+    options.add_argument("--log", type=Path, help="a JSON line a run, as they end; what stands there is not run again")
+    options.add_argument("--piece", type=int, help="run at most so many now")
     options.add_argument("--show", type=Path, help="run nothing: the table of such a log")
     options.add_argument("--recoverable", action="store_true")
     options.add_argument("--verbose", action="store_true")
@@ -441,14 +449,19 @@ def main() -> int:
     if given.show is not None:
         everything = read_log(given.show)
         return report([r for r in everything if not r.faults], [r for r in everything if r.faults], given.verbose)
-    free = campaign([(900_000 + n, given.seed, None) for n in range(given.fault_free)], given.jobs, given.log)
     kinds = tuple(given.only) if given.only else RECOVERABLE if given.recoverable else None
-    jobs: list[tuple[int, int, tuple[str, ...] | None]] = []
-    for n in range(given.first, given.first + given.runs):
-        mix = kinds or (RECOVERABLE if n % 2 else RECOVERABLE + GRAVE)
-        jobs.append((n, given.seed, mix))
-    status = report(free, campaign(jobs, given.jobs, given.log), given.verbose)
-    print(f"seed {given.seed}; {time.monotonic() - began_s:.0f} s")
+    wanted: list[Job] = [(FREE + n, given.seed, None) for n in range(given.fault_free)]
+    wanted += [
+        (n, given.seed, kinds or (RECOVERABLE if n % 2 else RECOVERABLE + GRAVE))
+        for n in range(given.first, given.first + given.runs)
+    ]
+    known = read_log(given.log) if given.log is not None and given.log.exists() else []
+    done = {(r.number, r.seed) for r in known}
+    todo = [job for job in wanted if job[:2] not in done][: given.piece]
+    ended = [r for r in known if r.seed == given.seed] + campaign(todo, given.jobs, given.log)
+    status = report([r for r in ended if not r.faults], [r for r in ended if r.faults], given.verbose)
+    left = len(wanted) - len(done & {job[:2] for job in wanted}) - len(todo)
+    print(f"seed {given.seed}; {len(todo)} runs in {time.monotonic() - began_s:.0f} s, {left} still to be made")
     return status
 
 
@@ -468,7 +481,8 @@ def report(free: list[Ended], ended: list[Ended], verbose: bool) -> int:
         warned = sum(bool(r.warnings) for r in free)
         no_result = sum(not r.end_points for r in free)
         print(f"fault-free: {warned} of {len(free)} with a warning, {no_result} without a result")
-        print(Counter(w[:60] for r in free for w in r.warnings))
+        for said, count in Counter(re.sub(r"[\d.+-]+", "#", w)[:90] for r in free for w in r.warnings).most_common():
+            print(f"    {count} x {said}")
     recoverable = [r for r in ended if r.recoverable]
     if recoverable:
         with_result = sum(r.outcome == "completed" and r.end_points > 0 for r in recoverable)
