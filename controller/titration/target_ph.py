@@ -15,7 +15,7 @@ import numpy as np
 
 from controller.evaluation.at_ph import estimator_name, volume_at_ph
 from controller.evaluation.curve import Curve
-from controller.evaluation.inverse import InverseFit
+from controller.evaluation.inverse import LARGEST_PH, InverseFit
 from controller.titration.actions import Report
 from controller.titration.dosing import PlannedDose
 from controller.titration.endpoint import FoundEndPoint
@@ -140,6 +140,7 @@ class TargetPh:
         return _LN10 * self._volume_ml(last) * free / self._plan.titrant.concentration_mol_l
 
     def _base_mol_l(self, ph: float) -> float:
+        ph = min(max(ph, -LARGEST_PH), LARGEST_PH)
         return math.pow(10.0, ph - self._plan.chemistry.pkw) - math.pow(10.0, -ph)
 
     def _volume_ml(self, last: Point) -> float:

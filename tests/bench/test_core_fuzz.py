@@ -8,7 +8,7 @@ from dataclasses import replace
 
 import pytest
 
-from controller.foresight.study_plan import BASELINE, EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD
+from controller.foresight.study_plan import BASELINE, EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD, to_set_ph
 from controller.titration.actions import (
     Answered,
     Ask,
@@ -96,6 +96,15 @@ class Hostile:
 
 @pytest.mark.parametrize("seed", range(60))
 def test_a_hostile_world_ends_in_a_result(core_case, seed) -> None:
+    _ends_in_a_result(core_case, seed, to_ph=False)
+
+
+@pytest.mark.parametrize("seed", range(100, 140))
+def test_a_hostile_world_ends_a_titration_to_a_ph_in_a_result(core_case, seed) -> None:
+    _ends_in_a_result(core_case, seed, to_ph=True)
+
+
+def _ends_in_a_result(core_case, seed: int, *, to_ph: bool) -> None:
     draw = random.Random(1000 + seed)
     case = core_case(strategy=STRATEGIES[seed % 5], seed=seed % 4, end_points=draw.choice([1, 2]))
     plan = replace(
@@ -109,6 +118,8 @@ def test_a_hostile_world_ends_in_a_result(core_case, seed) -> None:
         plan = replace(plan, chemistry=replace(plan.chemistry, analyte=analyte))
     if draw.random() < 0.2:
         plan = replace(plan, probe=replace(plan.probe, calibration=None))
+    if to_ph:
+        plan = to_set_ph(plan, draw.uniform(3.0, 11.0))
     world = Hostile(seed)
     decisions = titrate(plan)
     action, asked_ml = next(decisions), 0.0
