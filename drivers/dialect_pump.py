@@ -8,20 +8,15 @@ from typing import TYPE_CHECKING
 
 from drivers.clock import Clock, real_seconds_scale
 from drivers.dialect_account import DialectAccount, Tally
+from drivers.dialect_lastpush import LastPush, told_of_last
 from drivers.dialect_ledger import DialectLedger
 from drivers.dialect_manners import WATCHDOG_S, PumpManners
 from drivers.dialect_push import POLL_S, DialectPush
 from drivers.dialect_talk import ATTEMPTS, DialectTalk
-from drivers.errors import (
-    DeviceError,
-    DeviceGarbledError,
-    DeviceRefusedError,
-    DeviceSilentError,
-    StoppedError,
-)
+from drivers.errors import DeviceError, DeviceGarbledError, DeviceRefusedError, DeviceSilentError, StoppedError
 from drivers.identity import Identity
 from drivers.link import Link
-from drivers.pump import Delivered, DoseState, LastDose, PumpStatus, Refill
+from drivers.pump import Delivered, LastDose, PumpStatus, Refill
 
 if TYPE_CHECKING:
     from configs.dialectfile import DialectSettings
@@ -57,7 +52,7 @@ class DialectPump:
         self.step_ml, self.syringe_ml, self.refill = step_ml, syringe_ml, refill
         self._rate_ml_min = rate_ml_min
         self._ledger = DialectLedger(self._account, link.where, step_ml=step_ml, session=int(clock.utc_s()))
-        self._last: tuple[int, DialectPush, float | None] | None = None  # number, push, its volume where known
+        self._last: LastPush | None = None
 
     def identify(self) -> Identity:
         """Ask who the device is. Raises: DeviceError."""
@@ -71,7 +66,7 @@ class DialectPump:
         self._ledger.note(tally)
         return PumpStatus(
             start_count=self._ledger.start_count(tally),
-            last_dose_number=self._last[0] if self._last else 0,
+            last_dose_number=self._last.number if self._last else 0,
             delivered_ml=self._ledger.delivered_ml(tally),
             contents_ml=self._ledger.contents_ml(),
             reservoir_ml=None,
@@ -86,23 +81,8 @@ class DialectPump:
     def last_dose(self) -> LastDose:
         """Ask what became of the last dose of this session. Raises: DeviceError."""
         tally = self._account.standing()
-        if self._last is None:
-            number, moved, state = 0, 0.0, "none"
-        else:
-            number, push, known_ml = self._last
-            told_ml = known_ml if known_ml is not None else push.moved_ml(tally)
-            if told_ml is None:
-                raise push.unknown("it does not tell what it delivered")
-            moved = told_ml
-            state = "moving" if tally.moving else "done" if moved == push.volume_ml else "stopped"
-        return LastDose(
-            number=number,
-            volume_ml=moved,
-            steps=round(moved / self.step_ml),
-            state=_as_state(state),
-            start_count=self._ledger.start_count(tally),
-            remaining_s=(tally.remaining_s or POLL_S) if tally.moving else 0.0,
-        )
+        start_count = self._ledger.start_count(tally)
+        return told_of_last(self._last, tally, step_ml=self.step_ml, start_count=start_count)
 
     def dose(self, number: int, volume_ml: float) -> Delivered:
         """Deliver `volume_ml` (rounded to whole steps) as dose `number`, and wait until it is done.
@@ -116,12 +96,12 @@ class DialectPump:
         """
         what = f"dose {number}"
         self._may_begin(what)
-        if self._last is not None and number <= self._last[0]:
-            raise self._refused(f"dose {self._last[0]} was started before, asked {number}", "Count on from there")
+        if self._last is not None and number <= self._last.number:
+            raise self._refused(f"dose {self._last.number} was started before, asked {number}", "Count on from there")
         push = self._push(what, volume_ml)
-        self._last = (number, push, None)
+        self._last = LastPush(number=number, push=push)
         moved_ml = self._delivered(push, number)
-        self._last = (number, push, moved_ml)
+        self._last = LastPush(number=number, push=push, volume_ml=moved_ml)
         return Delivered(
             number=number,
             volume_ml=moved_ml,
@@ -151,7 +131,7 @@ class DialectPump:
             DeviceError, StoppedError: as `dose`.
         """
         push = self._push(f"dose {number}", volume_ml)
-        self._last = (number, push, None)
+        self._last = LastPush(number=number, push=push)
         push.begin()
         if self._clock.wait(silence_s * real_seconds_scale(self._clock), self._stop):
             raise self._halted(push, number)
@@ -252,7 +232,7 @@ class DialectPump:
     def _book(self, push: DialectPush, moved_ml: float, number: int | None) -> None:
         self._ledger.book(push.before, moved_ml)
         if number is not None:
-            self._last = (number, push, moved_ml)
+            self._last = LastPush(number=number, push=push, volume_ml=moved_ml)
 
     def _halted(self, push: DialectPush, number: int | None) -> StoppedError:
         confirmed = self.stop()
@@ -316,8 +296,3 @@ class DialectPump:
 
     def _refused(self, what: str, remedy: str) -> DeviceRefusedError:
         return DeviceRefusedError(what, where=self._talk.where, remedy=remedy, lowest_ml=0.0, highest_ml=0.0)
-
-
-def _as_state(word: str) -> DoseState:
-    states: dict[str, DoseState] = {"none": "none", "moving": "moving", "done": "done", "stopped": "stopped"}
-    return states[word]
