@@ -105,7 +105,8 @@ class LagWatch:
         total = self._excess
         judged = (readings[-1][0], len(readings)) if readings else None
         if judged is None or judged != self._judged:  # a point that is taken was judged with the same readings before
-            self._judged, self._found = judged, self._chi_squares(readings, before, noise_mv, fit)
+            with np.errstate(all="ignore"):  # numbers that are no potentials end as not finite, and tell nothing
+                self._judged, self._found = judged, self._chi_squares(readings, before, noise_mv, fit)
         chi_square = self._found
         if chi_square is not None:
             told = float(chi_square.min()) < DESCRIBES * (len(readings) + len(before))
@@ -153,16 +154,14 @@ class LagWatch:
             step_mv = float(np.ptp(value))
             share = np.full(len(used), _UNKNOWN_CURVE_SHARE * max(1.0, step_mv / _PARABOLA_MV))
             share[: len(before)] = _UNKNOWN_STEP_SHARE
-            with np.errstate(over="ignore"):  # readings beyond any pH
-                sd = np.hypot(noise_mv, share * step_mv)
+            sd = np.hypot(noise_mv, share * step_mv)
         else:
             value, sd = told
         compositions = [self._in_use, *self.others]
         found = np.empty(len(compositions))
         for k, composition in enumerate(compositions):
             seen = np.array([composition.seen_ml(t) for t, _ in used])
-            with np.errstate(all="ignore"):
-                found[k] = _chi_square(seen, value, sd, volumes=told is not None)
+            found[k] = _chi_square(seen, value, sd, volumes=told is not None)
         return np.minimum(found, _LARGEST) if bool(np.isfinite(found).all()) else None
 
     def _as_volumes(self, used: Sequence[Reading], noise_mv: float, fit: InverseFit) -> tuple[_Array, _Array] | None:
