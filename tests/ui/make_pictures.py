@@ -17,10 +17,12 @@ from pathlib import Path
 from typing import Any
 
 from controller.labfolder import Lab, find_lab, init_lab
+from controller.records.record import summarise
 from controller.running.commandclient import send_command
 from controller.running.launch import record_of, start_run
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.calibration import CalibrationScreen
+from controller.ui.screens.dialogs import Choice
 from controller.ui.widgets.answerfield import AnswerField
 from drivers.clock import SystemClock
 
@@ -103,6 +105,43 @@ def run_going(lab: Lab, folder: Path) -> None:
     picture(ended, (120, 40), closely, folder / "end-point.svg")
 
 
+def run_to_ph(lab: Lab, folder: Path) -> None:
+    """A run to a set pH, shortly before it."""
+    run = ["juice-acidity-to-ph", "--sample-id=press 3, Tuesday", "--seed=2", "--operator=Ada", "--time-scale=30"]
+    record = record_of(start_run(lab, run), CLOCK)
+    app = HalfdropApp(lab=lab, record=record, speed=30.0)
+
+    async def near_the_end(pilot: Any) -> None:
+        await until(pilot, lambda: len(app.screen.view.doses) >= 17)
+        send_command(record, "time-scale", scale=1)
+        await pilot.pause(1.0)
+
+    picture(app, (120, 40), near_the_end, folder / "run-to-ph.svg")
+    send_command(record, "time-scale", scale=200)
+    while summarise(record).get("outcome") is None:
+        CLOCK.wait(0.2)
+
+
+def left_open(folder: Path) -> None:
+    """What is offered where a run was left open: one whose process was killed."""
+    made = Path(tempfile.mkdtemp(prefix="halfdrop-pictures-")) / "cider-lab"
+    init_lab(made)
+    lab = find_lab(str(made))
+    run = ["juice-acidity", "--sample-id=press 2, Wednesday", "--seed=5", "--operator=Ada", "--time-scale=100"]
+    started = start_run(lab, run)
+    record = record_of(started, CLOCK)
+    while record.read_bytes().count(b'"observation":"dosed"') < 9:
+        CLOCK.wait(0.05)
+    started.process.kill()
+    started.process.wait()
+    app = HalfdropApp(lab=lab)
+
+    async def offered(pilot: Any) -> None:
+        await until(pilot, lambda: isinstance(app.screen, Choice))
+
+    picture(app, (100, 30), offered, folder / "left-open.svg")
+
+
 def other_places(lab: Lab, folder: Path) -> None:
     """Set-up, bench, archive and comparison."""
 
@@ -162,6 +201,8 @@ def main() -> None:
     folder.mkdir(parents=True, exist_ok=True)
     lab = made_lab()
     run_going(lab, folder)
+    run_to_ph(lab, folder)
+    left_open(folder)
     other_places(lab, folder)
     calibration(lab, folder)
 

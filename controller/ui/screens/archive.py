@@ -29,7 +29,7 @@ from controller.ui.widgets.titlebar import TitleBar
 PAGE = 200
 OUTCOMES = (None, "completed", "stopped", "failed", "abandoned", "open", "unreadable")
 #: columns with their least widths; what room there is more goes to those that are named
-_COLUMNS = (("started", 16), ("sample", 18), ("outcome", 9), ("amount", 24), ("end points", 20), ("method", 34))
+_COLUMNS = (("started", 16), ("sample", 18), ("outcome", 9), ("amount", 24), ("end points", 20), ("method", 14))
 _GROWING = ("sample", "end points", "method")
 
 
@@ -219,7 +219,7 @@ class ArchiveScreen(Screen[None]):
 def widths_for(room: int, columns: Sequence[tuple[str, int]], growing: Sequence[str]) -> list[tuple[str, int]]:
     """Return the columns with their widths on a screen of `room` cells."""
     more = max(0, room - 6 - sum(width + 2 for _, width in columns)) // len(growing)
-    return [(name, width + (min(more, width) if name in growing else 0)) for name, width in columns]
+    return [(name, width + (min(more, 20) if name in growing else 0)) for name, width in columns]
 
 
 def cell_of(text: str) -> RichText:
