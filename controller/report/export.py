@@ -11,7 +11,7 @@ import io
 from collections.abc import Mapping
 from typing import Any
 
-from controller.records.record import Record, points
+from controller.records.record import Record, points, printable
 from controller.records.reevaluation import added_evaluations
 
 #: file name: (title, columns as (name, Table Schema type, what it is))
@@ -132,8 +132,12 @@ def whole(record: Record) -> dict[str, Any]:
 
 
 def neutral(text: str) -> str:
-    """Return text that no spreadsheet takes for a formula: a leading = + - @, tab or return gets an apostrophe."""
-    return f"'{text}" if text[:1] in ("=", "+", "-", "@", "\t", "\r") else text
+    """Return text that no spreadsheet takes for a formula, and no terminal for a command.
+
+    A leading = + - @, tab or return gets an apostrophe; control characters become a replacement mark.
+    """
+    guarded = f"'{text}" if text[:1] in ("=", "+", "-", "@", "\t", "\r") else text
+    return printable(guarded)
 
 
 def _readings(record: Record) -> list[dict[str, Any]]:

@@ -243,7 +243,16 @@ def test_points_and_tables(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize(
     ("text", "cell"),
-    [("=1+1", "'=1+1"), ("+1", "'+1"), ("-1", "'-1"), ("@a", "'@a"), ("\tx", "'\tx"), ("press 3", "press 3"), ("", "")],
+    [
+        ("=1+1", "'=1+1"),
+        ("+1", "'+1"),
+        ("-1", "'-1"),
+        ("@a", "'@a"),
+        ("\tx", "'\ufffdx"),
+        ("press 3", "press 3"),
+        ("", ""),
+        ("a\x1b[2Jb", "a\ufffd[2Jb"),
+    ],
 )
 def test_text_never_becomes_a_formula(text: str, cell: str) -> None:
     assert neutral(text) == cell
