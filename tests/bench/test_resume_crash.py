@@ -27,7 +27,7 @@ from controller.resuming.resume import GO_ON, GoingOn, go_on
 from controller.runner import run
 from controller.running.execution import Devices
 from controller.running.outcome import RunFailedError, RunResult
-from controller.running.stopping import StopSwitch
+from controller.running.stopping import Commands, StopSwitch
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan
 from drivers.clock import ManualClock
@@ -144,13 +144,21 @@ class Survivor:
                 return True
         return False
 
-    def resume(self, path: Path, *, gap_s: float = 0.0, evaluate_only: bool = False) -> RunResult:
+    def resume(
+        self, path: Path, *, gap_s: float = 0.0, evaluate_only: bool = False, commands: Commands | None = None
+    ) -> RunResult:
         self.clock.wait(gap_s)
         stop = StopSwitch()
         with self.devices(stop) as devices:
             broken = read_broken(path)
             how = GoingOn(
-                devices=devices, clock=self.clock, stop=stop, gap_s=gap_s, evaluate_only=evaluate_only, durable=False
+                devices=devices,
+                clock=self.clock,
+                stop=stop,
+                gap_s=gap_s,
+                evaluate_only=evaluate_only,
+                commands=commands,
+                durable=False,
             )
             return go_on(broken, how)
 
@@ -160,10 +168,15 @@ class Survivor:
 
 @contextmanager
 def surviving(
-    name: str, *, seed: int = 11, case: NominalCase = "acetic", strategy: Strategy = MODEL_GUIDED
+    name: str,
+    *,
+    seed: int = 11,
+    case: NominalCase = "acetic",
+    strategy: Strategy = MODEL_GUIDED,
+    nominal: NominalBench | None = None,
 ) -> Iterator[Survivor]:
     clock = ManualClock()
-    nominal = nominal_bench(case, seed)
+    nominal = nominal or nominal_bench(case, seed)
     with VirtualPorts(clock) as ports:
         pump_device = PumpDevice(
             nominal.bench.mechanism, Identity(maker="Orchard", model="Bench", serial="1", firmware="1")
