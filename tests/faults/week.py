@@ -19,6 +19,7 @@ import gc
 import importlib.util
 import io
 import json
+import math
 import os
 import random
 import sys
@@ -38,7 +39,7 @@ from controller.cli import main as halfdrop
 
 LARGEST_GROWTH_MB = 2.0
 #: rinsing, the next sample, and the time until somebody is there for it
-CHANGE_S = 300.0
+CHANGE_S = 1200.0
 METHODS = ("juice-acidity", "wash-water-alkalinity", "standardise-sodium-hydroxide", "juice-acidity")
 ROUTES = ("memory", "memory", "pty" if os.name == "posix" else "tcp", "memory", "memory", "tcp")
 #: a run may end with a result, with one not to be trusted, or stopped for safety; never refused
@@ -126,23 +127,40 @@ class Lab:
         return status, duration_s, printed
 
 
-def week(hours: float, seed: int, *, settled_h: float = 1.0, traced: bool = False) -> Week:
-    """Run for so many virtual hours; growth is counted from `settled_h` hours on."""
+def week(
+    hours: float,
+    seed: int,
+    *,
+    settled_h: float = 1.0,
+    change_s: float = CHANGE_S,
+    traced: bool = False,
+    log_every_h: float = math.inf,
+) -> Week:
+    """Run for so many virtual hours; growth is counted from `settled_h` hours on.
+
+    Args:
+        change_s: time between two runs.
+        log_every_h: print so often what is held.
+    """
     done, passed_s = Week(), 0.0
     after_first: tuple[float, int] | None = None
+    next_log_h = log_every_h
     if traced:
         tracemalloc.start()
     with tempfile.TemporaryDirectory(prefix="halfdrop-week-") as folder:
         lab = Lab(Path(folder))
         while passed_s < hours * 3600.0:
             status, duration_s, printed = lab.run(done.runs, seed)
-            passed_s += duration_s + CHANGE_S
+            passed_s += duration_s + change_s
             done.runs += 1
             done.statuses[status] += 1
             if status not in SOUND_STATUSES:
                 done.said.append(f"run {done.runs}: exit status {status}: {printed[-500:]}")
             if after_first is None and passed_s >= 3600.0 * settled_h:
                 after_first = (held_mb(), handles())
+            if passed_s >= 3600.0 * next_log_h:
+                next_log_h += log_every_h
+                print(f"{passed_s / 3600.0:6.1f} h, {done.runs} runs: {_held()}", flush=True)
         if after_first is not None:
             done.grown_mb, done.grown_handles = held_mb() - after_first[0], handles() - after_first[1]
     if traced:
@@ -151,13 +169,18 @@ def week(hours: float, seed: int, *, settled_h: float = 1.0, traced: bool = Fals
     return done
 
 
+def _held() -> str:
+    return f"{held_mb():.2f} MB, {handles()} handles, {len(sys.modules)} modules"
+
+
 def main() -> int:
     options = argparse.ArgumentParser(description=__doc__)
     options.add_argument("--hours", type=float, default=168.0)
     options.add_argument("--seed", type=int, default=1)
     options.add_argument("--traced", action="store_true", help="what Python's objects hold, instead of the process")
+    options.add_argument("--log-every-h", type=float, default=12.0, help="print so often what is held")
     given = options.parse_args()
-    done = week(given.hours, given.seed, traced=given.traced)
+    done = week(given.hours, given.seed, traced=given.traced, log_every_h=given.log_every_h)
     print(
         f"{done.hours:.1f} virtual hours, {done.runs} runs (seed {given.seed}), exit statuses "
         f"{dict(sorted(done.statuses.items()))}: memory {done.grown_mb:+.2f} MB since hour 1 "
