@@ -8,6 +8,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -16,6 +17,7 @@ from configs.errors import HalfdropError, SettingsError
 from configs.faultfile import FaultsSettings
 from configs.loading import parse
 from configs.settings import BenchSettings, SolutionSettings
+from controller.curves.curvefile import CurveOptions, read_curve
 from controller.guard import room_ml
 from controller.journal import Journal
 from controller.records.record import printable, verify_bytes
@@ -105,6 +107,31 @@ def test_a_file_of_nothing_but_problems_gets_a_short_answer(body: bytes) -> None
         parse(body, SolutionSettings, where="solution.yaml")
     assert 50 <= len(refusal.value.problems) <= 51
     assert refusal.value.problems[-1] == "solution.yaml: and more; mend these first"
+
+
+cells = st.one_of(
+    st.floats(allow_nan=True, allow_infinity=True).map(str),
+    st.sampled_from(["", "1,5", "1.234,5", "=A1", "1e999", "-", "volume_ml", "ph", "E_mV", "\x00", '"', "1 000"]),
+    st.text(max_size=6),
+)
+
+
+@given(st.lists(st.lists(cells, min_size=1, max_size=4), max_size=12), st.sampled_from([",", ";", "\t"]), st.booleans())
+@settings(max_examples=150, deadline=None)
+def test_a_table_of_anything_is_read_or_refused(
+    tmp_path_factory: pytest.TempPathFactory, rows: list[list[str]], mark: str, named: bool
+) -> None:
+    path = tmp_path_factory.mktemp("tables") / "curve.csv"
+    lines = ([f"volume_ml{mark}ph"] if named else []) + [mark.join(row) for row in rows]
+    path.write_bytes("\n".join(lines).encode("utf-8", "surrogatepass"))
+    try:
+        curve = read_curve(path, CurveOptions()).curve
+    except HalfdropError as refusal:
+        told = str(refusal)
+    else:
+        told = ""
+        assert np.all(np.isfinite(curve.volume_ml))
+    assert len(told) < 5000
 
 
 @given(st.text(max_size=80))
