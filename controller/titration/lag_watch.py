@@ -132,9 +132,9 @@ class LagWatch:
         stages = range(len(SINGLE_LAYERS), len(self.others))
         return min(stages, key=lambda i: abs(math.log(self.slowness[i] / slowness)))
 
-    def stages_like(self, number: int) -> Composition:
-        """The record's stages, slow layer and all, about as slow as an other lag."""
-        return self.others[self.nearest(self.slowness[number])]
+    def stages_about(self, slowness: float) -> Composition:
+        """The record's stages, slow layer and all, about so many times as slow."""
+        return self.others[self.nearest(slowness)]
 
     @property
     def undescribed(self) -> bool:

@@ -21,6 +21,7 @@ from controller.evaluation.result import Evaluation
 from controller.titration.audit import Audit, audited
 from controller.titration.endpoint import FoundEndPoint
 from controller.titration.gaps import drift_over_gaps_mv
+from controller.titration.points import Point
 from controller.titration.precision import offset_sd_ph, pump_precision_ml
 
 if TYPE_CHECKING:
@@ -28,6 +29,8 @@ if TYPE_CHECKING:
 
 FEWEST_POINTS = 6
 SAME_POINT_SHARE = 0.02
+#: a point seen again is doubtful from so many precisions of the pump on; left out where so many others are left
+DOUBTFUL_PRECISIONS, FEWEST_SURE = 10.0, 10
 #: an evaluation this many times less certain than the run's own sound model does not take its place
 COARSER = 4.0
 #: no probe and no calibration is straight to better than this over a few pH, mV
@@ -71,16 +74,27 @@ def run_result(run: RunState) -> dict[str, Any]:
 
 def probe_lag(run: RunState) -> dict[str, Any] | None:
     """The probe's lag as learned from this run's transients, for the probe's own record; None: nothing learned."""
-    learned = run.learned_lag
-    if learned is None:
-        return None if run.record_holds else {"transients": 0, "record_holds": False}
-    slowness = run.slowness
+    learned, record = run.learned_lag, run.plan.probe.response
+    if learned is None or record is None:
+        return None
     return {
         **asdict(learned),
         "temperature_c": round(run.temperature_c, 2),
-        "slowness": None if slowness is None else round(slowness, 4),
+        "slowness": round(learned.sum_s / (record.bulk_s + record.film_s), 4),
         "record_holds": run.record_holds,
     }
+
+
+def sure_points(run: RunState) -> list[Point]:
+    """The points that are evaluated: where the lag record was left, without those it made doubtful, if enough are left.
+
+    They lie off together, all to one side, which no uncertainty of each alone says.
+    """
+    if run.record_holds:
+        return run.points
+    largest_sd_ml = DOUBTFUL_PRECISIONS * pump_precision_ml(run.plan)
+    sure = [p for p in run.points if p.volume_ml >= p.delivered_ml or p.volume_sd_ml <= largest_sd_ml]
+    return sure if len(sure) >= FEWEST_SURE else run.points
 
 
 def run_curve(run: RunState) -> Curve:
@@ -89,7 +103,7 @@ def run_curve(run: RunState) -> Curve:
     Raises:
         CurveError: they make no curve.
     """
-    plan, points = run.plan, run.points
+    plan, points = run.plan, sure_points(run)
     analyte, chemistry = plan.chemistry.analyte, plan.chemistry
     per_unit = run.scale.slope_mv if run.scale.known else 1.0
     return Curve(
@@ -140,7 +154,7 @@ def _audited(run: RunState, evaluation: Evaluation | None) -> Audit:
     return audited(
         found,
         run_curve(run),
-        [point.at_s for point in run.points],
+        [point.at_s for point in sure_points(run)],
         evaluation.estimates,
         slowness=run.slowness,
         precision_ml=pump_precision_ml(run.plan),

@@ -48,6 +48,11 @@ class Extrapolated:
         self._readings: list[tuple[float, float]] = []
         self._last_tau_s = tau_s
 
+    @property
+    def tau_s(self) -> float:
+        """As this run has shown it."""
+        return math.exp(round(self._ln_tau, 6))
+
     def begin(self, context: SettlingContext) -> None:
         """See SettlingRule."""
         self._context = context
@@ -64,7 +69,7 @@ class Extrapolated:
         if waited_s >= SKIP_S:
             self._readings.append((waited_s, potential_mv))
             del self._readings[:-_MOST_READINGS]
-        tau_s = math.exp(round(self._ln_tau, 6))
+        tau_s = self.tau_s
         late = waited_s >= max(self._settling.longest_s, LONGEST_S, LONGEST_TAUS * tau_s)
         if self._hold and waited_s < max(HOLD_S, HOLD_TAUS * tau_s):
             return None

@@ -40,7 +40,7 @@ NOTABLE_SLOWNESS, LARGEST_SLOWNESS = 1.1, 1.4
 #: of the difference between two lags' compositions, when points are seen again
 AGAIN_SHARE = 0.3
 #: without the record: of the lag left, by which a point's extrapolation may be off
-EXTRAPOLATION_SHARE = 0.15
+EXTRAPOLATION_SHARE = 0.25
 #: tau of a transient as a multiple of the slowest fast stage's time; waited for at least so many of it
 SLOWEST_STAGE, SHORTEST_TAUS = 1.1, 2.0
 _NEWEST = 5
@@ -67,8 +67,8 @@ class LagCorrected:
         self._scale = scale
         self._watch = watch
         self._plain: Extrapolated | None = None
-        # since the record was left: the lag that describes the probe best, and the record's stages about as slow
-        self._describes = self._stages = composition
+        self._describes, self._slowness = composition, 1.0  # since the record was left: what describes the probe best
+        self._recorded_tau_s = SLOWEST_STAGE * max(composition.constants.bulk_s, composition.constants.film_s)
         self._taken: list[tuple[float, float, float]] = []  # points: mean time of the readings, volume, its sd
         self._left_ml: list[float] = []  # lag left at the points after the record was left
         self._news: RecordLeft | None = None
@@ -84,8 +84,20 @@ class LagCorrected:
 
     @property
     def learned(self) -> LearnedLag | None:
-        """The fast lag as learned; None where no transient was taken."""
-        return self._learner.learned
+        """The fast lag as learned, or that of the lag found instead of the record's; None: no transient was taken."""
+        if self._plain is None:
+            return self._learner.learned
+        lag = self._describes.constants
+        sum_s = lag.bulk_s + lag.film_s
+        return LearnedLag(
+            bulk_s=round(lag.bulk_s, 4),
+            bulk_standard_uncertainty_s=round(AGAIN_SHARE * lag.bulk_s, 4),
+            film_s=round(lag.film_s, 4),
+            film_standard_uncertainty_s=round(AGAIN_SHARE * lag.film_s, 4),
+            sum_s=round(sum_s, 4),
+            sum_standard_uncertainty_s=round(AGAIN_SHARE * sum_s, 4),
+            transients=len(self._taken) + 1,
+        )
 
     @property
     def record_holds(self) -> bool:
@@ -147,8 +159,14 @@ class LagCorrected:
         """A point without the record, with what its extrapolation may be off by."""
         if accepted is None:
             return None
-        lag_ml = abs(accepted.volume_ml - self._describes.seen_ml(self._readings[-1][0]))
+        at_s = self._readings[-1][0]
+        lag_ml = max(abs(accepted.volume_ml - lag.seen_ml(at_s)) for lag in (self._describes, self._stages()))
         return replace(accepted, volume_sd_ml=round(EXTRAPOLATION_SHARE * lag_ml, 7))
+
+    def _stages(self) -> Composition:
+        """The record's stages as slow as the probe has shown itself since the record was left."""
+        by_tau = self._slowness if self._plain is None else self._plain.tau_s / self._recorded_tau_s
+        return self._watch.stages_about(math.sqrt(self._slowness * max(self._slowness, by_tau)))
 
     def _let_go(self, best: int) -> None:
         other, slowness = self._watch.others[best], self._watch.slowness[best]
@@ -165,7 +183,7 @@ class LagCorrected:
             text=f"the probe answers {how} its lag record says: from here on every reading is waited for until it "
             "stands, and the record is not used; clean the probe, or repeat the response check",
         )
-        self._describes, self._stages = other, self._watch.stages_like(best)
+        self._describes, self._slowness = other, slowness
         slowest_s = max(other.constants.bulk_s, other.constants.film_s)
         self._plain = Extrapolated(
             self._settling, tau_s=max(TAUS_S[0], SLOWEST_STAGE * slowest_s), shortest_taus=SHORTEST_TAUS
@@ -237,7 +255,7 @@ class LagCorrected:
         """See SettlingRule."""
         if self._plain is not None:
             self._plain.learn(context, accepted)
-            self._left_ml.append(abs(context.delivered_ml - self._stages.seen_ml(self._readings[-1][0])))
+            self._left_ml.append(abs(context.delivered_ml - self._stages().seen_ml(self._readings[-1][0])))
             return
         last = self._readings[-3:]
         at_s = sum(t for t, _ in last) / len(last)

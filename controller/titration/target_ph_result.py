@@ -23,7 +23,7 @@ from controller.titration.audit import (
     mishap_told,
     spread_allowed,
 )
-from controller.titration.outcome import DIGITS, STRAIGHTNESS_MV, position_sd_ml, probe_lag, run_curve
+from controller.titration.outcome import DIGITS, STRAIGHTNESS_MV, position_sd_ml, probe_lag, run_curve, sure_points
 from controller.titration.plan import RunPlan
 from controller.titration.points import calibration_ph_sd
 from controller.titration.precision import pump_precision_ml
@@ -135,7 +135,7 @@ def _determination(run: RunState) -> tuple[dict[str, Any] | None, list[str], str
     if found is None:
         return None, [], "the points do not lie on both sides of the end point pH"
     point = end_point_json(run.plan, found, beyond_ml=_beyond_ml(run), temperature_c=run.temperature_c)
-    told, contradicting = last_look(curve, [one.at_s for one in run.points], point, slowness=run.slowness)
+    told, contradicting = last_look(curve, [one.at_s for one in sure_points(run)], point, slowness=run.slowness)
     told += [*_slow(run, point), *_by_itself(run, point)]
     more, withheld = judged(run.plan, found, point)
     return point, [*more, *told], contradicting or withheld
