@@ -8,7 +8,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.records.record import printable
-from controller.ui.seen import CurvePoint, EndPoint, SeenReading, Sentence
+from controller.ui.seen import CurvePoint, EndPoint, SeenReading, Sentence, end_point_of, ph_by
 
 TYPE_CHECKING = False  # what a plan needs is imported with the first header, after the first paint
 if TYPE_CHECKING:
@@ -163,7 +163,7 @@ class RunView:
                 self.forecast = (float(entry["volume_ml"]), float(entry["standard_uncertainty_ml"]))
                 self._pace_saw("forecast", self.forecast[0], entry.get("end_point"))
             case "end-point":
-                self.end_points.append(_end_point(entry))
+                self.end_points.append(end_point_of(entry))
                 self.forecast = None
                 self._say(text, "end-point")
             case "warning":
@@ -232,7 +232,7 @@ class RunView:
             SeenReading(
                 at_s=self.at_s,
                 potential_mv=potential_mv,
-                ph=self._ph(potential_mv, temperature_c),
+                ph=ph_by(self.plan, potential_mv, temperature_c),
                 temperature_c=temperature_c,
                 status=printable(str(entry.get("status", "ok"))),
             )
@@ -244,18 +244,6 @@ class RunView:
         if self.plan is None:
             return "reading until it is steady"
         return "settling" if self.doses else "measuring the noise"
-
-    def _ph(self, potential_mv: float, temperature_c: float | None) -> float | None:
-        plan = self.plan
-        if plan is None or plan.probe.calibration is None:
-            return None
-        from simulators.constants import ideal_slope_mv
-
-        found = plan.probe.calibration
-        slope_mv = found.slope_fraction * ideal_slope_mv(
-            plan.chemistry.temperature_c if temperature_c is None else float(temperature_c)
-        )
-        return found.isopotential_ph - (potential_mv - found.isopotential_mv) / slope_mv
 
     def _delivered(self, volume_ml: float) -> None:
         self.delivered_ml += volume_ml
@@ -288,7 +276,7 @@ class RunView:
         self.phase = outcome
         self._say(outcome + (f": {reason}" if reason else ""), "note" if outcome == "completed" else "trouble")
         if self.result.get("end_points"):
-            self.end_points = [_end_point(one) for one in self.result["end_points"]]
+            self.end_points = [end_point_of(one) for one in self.result["end_points"]]
         for text in self.result.get("warnings", []):
             self._warn(str(text))
 
@@ -311,12 +299,3 @@ class RunView:
         else:
             item = Report(what=what, volume_ml=volume_ml, end_point=end_point)
         self._pace.saw(item, self.at_s, self.delivered_ml)
-
-
-def _end_point(entry: dict[str, Any]) -> EndPoint:
-    return EndPoint(
-        volume_ml=float(entry["volume_ml"]),
-        standard_uncertainty_ml=entry.get("standard_uncertainty_ml"),
-        ph=entry.get("ph"),
-        estimator=printable(str(entry.get("estimator") or "")),
-    )

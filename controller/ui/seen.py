@@ -4,6 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
+
+from controller.records.record import printable
+
+TYPE_CHECKING = False
+if TYPE_CHECKING:
+    from controller.titration.plan import RunPlan
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -69,3 +76,26 @@ def stability_mv_min(readings: Sequence[SeenReading], *, dosed_at_s: float, over
     if spread <= 0:
         return None
     return 60.0 * sum((at_s - mean_s) * (mv - mean_mv) for at_s, mv in recent) / spread
+
+
+def ph_by(plan: RunPlan | None, potential_mv: float, temperature_c: float | None) -> float | None:
+    """Return a reading's pH by the plan's calibration, None without one."""
+    if plan is None or plan.probe.calibration is None:
+        return None
+    from simulators.constants import ideal_slope_mv
+
+    found = plan.probe.calibration
+    slope_mv = found.slope_fraction * ideal_slope_mv(
+        plan.chemistry.temperature_c if temperature_c is None else float(temperature_c)
+    )
+    return found.isopotential_ph - (potential_mv - found.isopotential_mv) / slope_mv
+
+
+def end_point_of(entry: dict[str, Any]) -> EndPoint:
+    """Return an end point as a line of the record or a result tells it."""
+    return EndPoint(
+        volume_ml=float(entry["volume_ml"]),
+        standard_uncertainty_ml=entry.get("standard_uncertainty_ml"),
+        ph=entry.get("ph"),
+        estimator=printable(str(entry.get("estimator") or "")),
+    )

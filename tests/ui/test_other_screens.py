@@ -13,10 +13,7 @@ from controller.ui.screens.archive import ArchiveScreen
 from controller.ui.screens.bench import BenchScreen
 from controller.ui.screens.dialogs import Choice, Line, Text
 from controller.ui.screens.record import CompareScreen, RecordScreen
-from controller.ui.screens.setup import SetUpScreen
 from controller.ui.screens.welcome import WelcomeScreen
-from controller.ui.widgets.answerfield import AnswerField
-from controller.ui.widgets.readout import Plain
 
 SIZES = [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")]
 
@@ -138,94 +135,6 @@ def test_tables_are_written_where_one_says(stage: Any, tmp_path: Path) -> None:
     stage.drive(app, steps)
     assert (tmp_path / "tables" / "points.csv").read_text(encoding="utf-8").count("\n") == 29
     assert json.loads((tmp_path / "tables" / "datapackage.json").read_text(encoding="utf-8"))["resources"]
-
-
-# --- set-up ----------------------------------------------------------------------------------------------------------
-
-
-@pytest.mark.parametrize("size", SIZES)
-def test_the_set_up_as_it_looks(stage: Any, size: tuple[int, int]) -> None:
-    app = HalfdropApp(lab=stage.lab)
-
-    async def steps(pilot: Any) -> None:
-        await pilot.press("2")
-        await stage.until(pilot, lambda: len(app.screen.query(AnswerField)) == 3)
-        await pilot.pause()
-        await stage.check_snapshot(pilot, _name("set-up", size))
-
-    stage.drive(app, steps, size)
-
-
-def test_nothing_starts_before_everything_is_filled_in_and_answered(
-    stage: Any, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    started: list[Any] = []
-    monkeypatch.setattr(
-        "controller.ui.screens.setup.begin", lambda lab, wanted, answers: started.append((wanted, answers)) or stage.now
-    )
-    stage.now = stage.finished()
-    app = HalfdropApp(lab=stage.lab)
-
-    def said(text: str) -> bool:
-        return any(text in one.message for one in app._notifications)
-
-    async def steps(pilot: Any) -> None:
-        await pilot.press("2")
-        await stage.until(pilot, lambda: len(app.screen.query(AnswerField)) == 3)
-        screen = app.screen
-        await pilot.press("f9")
-        await stage.until(pilot, lambda: said("what the record should call the sample"))
-        screen.query_one("#sample-id").value = "press 4"
-        screen.query_one("#amount").value = "1.000,5"
-        await pilot.press("f9")
-        await stage.until(pilot, lambda: said("decimal point or comma"))
-        screen.query_one("#amount").value = "10,5"
-        await pilot.press("f9")
-        await stage.until(pilot, lambda: said("this must be answered first"))
-        for field, key in zip(screen.query(AnswerField), ("y", "n", "y"), strict=True):
-            field.focus()
-            await pilot.press(key)
-        assert "with this answer the run does not begin" in stage.text(app)
-        await pilot.press("f9")
-        assert not started
-        list(screen.query(AnswerField))[1].focus()
-        await pilot.press("y", "f9")
-        await stage.until(pilot, lambda: bool(started))
-
-    stage.drive(app, steps)
-    wanted, answers = started[0]
-    assert (wanted.sample_id, wanted.volume_ml, wanted.initial_volume_ml) == ("press 4", 10.5, 50.0)
-    assert answers == {"protection": "yes", "stirring-and-tip": "yes", "degassed": "yes"}
-
-
-def test_answers_by_arrow_and_mouse(stage: Any) -> None:
-    app = HalfdropApp(lab=stage.lab)
-
-    async def steps(pilot: Any) -> None:
-        await pilot.press("2")
-        await stage.until(pilot, lambda: len(app.screen.query(AnswerField)) == 3)
-        first = app.screen.query(AnswerField).first()
-        first.focus()
-        await pilot.press("left")
-        assert first.answer == "no"
-        await pilot.press("right")
-        assert first.answer == "yes"
-        await pilot.click(first, offset=(14, 2))
-        assert first.answer == "no"
-
-    stage.drive(app, steps)
-
-
-def test_a_method_with_a_mistake_is_said_and_not_started(stage: Any) -> None:
-    (stage.lab.methods / "a-wrong-one.yaml").write_text("name: [\n", encoding="utf-8")
-    app = HalfdropApp(lab=stage.lab)
-
-    async def steps(pilot: Any) -> None:
-        await pilot.press("2")
-        await stage.until(pilot, lambda: "a-wrong-one.yaml:" in app.screen.query_one("#problem", Plain).text)
-        assert isinstance(app.screen, SetUpScreen)
-
-    stage.drive(app, steps)
 
 
 # --- bench -----------------------------------------------------------------------------------------------------------
