@@ -107,18 +107,22 @@ class SeriesRun:
         if self.status:
             return False
         if self.on_failure == "repeat-once":
-            say("it failed; it is repeated once, as the rule says")
+            why = (result.reason or result.outcome) if result is not None else "it could not be begun"
+            sample = printable(titration.item.sample_id)
+            say(f"sample {sample} failed ({printable(why)}); it is repeated once, as the rule says")
             again = replace(titration, attempt=2)
             if self._ask(again) == END:
                 return False
-            self._once(again, place)
+            self._once(again, place, repeats=why)
             return not self.status
         return self.on_failure == "skip"
 
-    def _once(self, titration: Titration, place: int) -> RunResult | None:
+    def _once(self, titration: Titration, place: int, *, repeats: str | None = None) -> RunResult | None:
+        """Run it; `repeats` is why it is done again."""
         item, method = titration.item, self.methods[titration.item.method]
+        why = {} if repeats is None else {"repeats": repeats}
         self.journal.event(
-            "titration-begun", sample_id=item.sample_id, replicate=titration.replicate, attempt=titration.attempt
+            "titration-begun", sample_id=item.sample_id, replicate=titration.replicate, attempt=titration.attempt, **why
         )
         self.journal.barrier()
         try:

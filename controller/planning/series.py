@@ -88,7 +88,12 @@ def read_series(path: Path, *, usual_method: str, find: Callable[[str], MethodSe
         TableError: it is no table.
         SettingsError: with every problem and its line; nothing of the series can be run.
     """
-    table = read_table(path)
+    try:
+        table = read_table(path)
+    except TableError as error:
+        if "no points" not in error.what:
+            raise
+        raise TableError("a header but no samples", where=error.where, remedy="Add a line for each sample") from None
     if not table.header:
         raise TableError(
             "no header line", where=f"{path}:1", remedy="Begin with a line such as: id,amount,method,replicates"
