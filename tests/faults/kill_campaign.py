@@ -97,12 +97,14 @@ class Killed:
     keep: Path | None
 
 
-def one(seed: int, scale: float, keep: Path | None) -> Outcome:
-    """Kill one run and resume it."""
+def one(seed: int, scale: float, keep: Path | None, *, foreign_acid: bool = False) -> Outcome:
+    """Kill one run and resume it; `foreign_acid` leaves an acid in the juice that the method does not know."""
     with tempfile.TemporaryDirectory(prefix="halfdrop-kill-") as folder:
         place = Path(folder)
         halfdrop("init", "lab", place=place).communicate()
         lab = place / "lab"
+        if not foreign_acid:
+            as_stated(lab / "bench.yaml")
         calm = result_of(halfdrop("run", METHOD, "--lab", "lab", "--headless", "--json", f"--seed={seed}", place=place,
                                   wait=False))  # fmt: skip
         serve = halfdrop("bench", "serve", "--lab", "lab", f"--seed={seed}", f"--time-scale={scale}", place=place,
@@ -112,6 +114,18 @@ def one(seed: int, scale: float, keep: Path | None) -> Outcome:
         finally:
             serve.send_signal(signal.SIGINT)
             serve.communicate()
+
+
+def as_stated(bench: Path) -> None:
+    """Take the little citric acid out of the simulated juice.
+
+    The method states malic acid alone, and what is not as stated widens the uncertainty of some runs by itself: that
+    would be taken for the cost of the break.
+    """
+    lines = bench.read_text().splitlines(keepends=True)
+    kept = [line for line in lines if "name: citric acid" not in line]
+    assert len(kept) == len(lines) - 1
+    bench.write_text("".join(kept))
 
 
 def _killed(run: Killed, serve: subprocess.Popen[bytes]) -> Outcome:
@@ -232,12 +246,13 @@ def main() -> int:
     asked.add_argument("--jobs", type=int, default=6)
     asked.add_argument("--scale", type=float, default=10.0)
     asked.add_argument("--first-seed", type=int, default=1)
+    asked.add_argument("--foreign-acid", action="store_true", help="leave an acid in the juice that no method states")
     asked.add_argument("--keep", type=Path, help="folder for the records of runs with problems")
     given = asked.parse_args()
     seeds = range(given.first_seed, given.first_seed + given.runs)
     bad, kinds, offs, ratios = 0, dict[str, int](), list[float](), list[float]()
     with ThreadPoolExecutor(max_workers=given.jobs) as pool:
-        for outcome in pool.map(lambda seed: _safely(seed, given.scale, given.keep), seeds):
+        for outcome in pool.map(lambda seed: _safely(seed, given.scale, given.keep, given.foreign_acid), seeds):
             kinds[outcome.found] = kinds.get(outcome.found, 0) + 1
             bad += bool(outcome.problems)
             offs += [] if outcome.off_in_u is None else [outcome.off_in_u]
@@ -255,9 +270,9 @@ def main() -> int:
     return 1 if bad else 0
 
 
-def _safely(seed: int, scale: float, keep: Path | None) -> Outcome:
+def _safely(seed: int, scale: float, keep: Path | None, foreign_acid: bool) -> Outcome:
     try:
-        return one(seed, scale, keep)
+        return one(seed, scale, keep, foreign_acid=foreign_acid)
     except Exception as error:  # a campaign reports and goes on
         return Outcome(seed=seed, killed_s=0.0, lines=0, found="error", problems=(f"{type(error).__name__}: {error}",))
 
