@@ -148,7 +148,8 @@ def _widen_by(audit: Audit, mishaps: Sequence[Mishap], fit: ModelFit, curve: Cur
             elif mishap.kind == "leak":
                 passed_s = next((t for v, t in zip(curve.volume_ml, at_s, strict=True) if v >= volume_ml), at_s[-1])
                 lost_ml += abs(mishap.amount) * max(0.0, passed_s - mishap.after_s) / 60.0
-        audit.widen(number, math.hypot(max(abs(right_ml - volume_ml), lost_ml), sd_ml))
+        # where several happened, one may have been taken for another
+        audit.widen(number, len(mishaps) * math.hypot(max(abs(right_ml - volume_ml), lost_ml), sd_ml))
 
 
 def mishap_told(mishap: Mishap) -> str:
