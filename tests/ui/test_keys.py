@@ -9,6 +9,7 @@ import pytest
 from textual.widgets import DataTable, Footer
 from textual.widgets._footer import FooterKey
 
+from controller.titration.actions import Command
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.archive import ArchiveScreen
 from controller.ui.screens.bench import BenchScreen
@@ -163,73 +164,69 @@ def two_runs(stage: Any, monkeypatch: pytest.MonkeyPatch) -> Any:
     return stage
 
 
-@pytest.mark.parametrize(("place", "key"), [(place, key) for place, (_, _, keys) in PLACES.items() for key in keys])
-def test_a_key_does_what_the_footer_says(two_runs: Any, place: str, key: str) -> None:
-    app = HalfdropApp(lab=two_runs.lab)
+def _shown(app: HalfdropApp) -> set[str]:
+    return {one.key for one in app.screen.query(FooterKey)}
+
+
+async def _back(app: HalfdropApp) -> None:
+    while app.screen.is_modal or isinstance(app.screen, RecordScreen | CompareScreen):
+        await app.pop_screen()
+    app.clear_notifications()
+    await app.switch_screen(ArchiveScreen(app.lab))
+
+
+@pytest.mark.parametrize("place", PLACES)
+def test_every_key_of_a_footer_does_what_it_says(two_runs: Any, place: str) -> None:
+    app, keys = HalfdropApp(lab=two_runs.lab), PLACES[place][2]
 
     async def steps(pilot: Any) -> None:
-        await _to(two_runs, pilot, place)
-        await pilot.press(key)
-        await two_runs.until(pilot, lambda: PLACES[place][2][key](app))
+        for key, holds in keys.items():
+            await _to(two_runs, pilot, place)
+            await two_runs.until(pilot, lambda: _shown(app) - {"enter"} == set(keys) - {"enter"})  # Enter is a list's
+            await pilot.press(key)
+            await two_runs.until(pilot, lambda holds=holds: holds(app))
+            if app.return_value is None:
+                await _back(app)
 
     two_runs.drive(app, steps)
 
 
-@pytest.mark.parametrize("key", WELCOME)
-def test_a_key_of_the_welcome_does_what_the_footer_says(two_runs: Any, key: str) -> None:
+def test_every_key_of_the_welcome_does_what_it_says(two_runs: Any) -> None:
     app = HalfdropApp(start_demo=lambda: pytest.fail("the real demo began"))
 
     async def steps(pilot: Any) -> None:
-        await pilot.press(key)
-        await two_runs.until(pilot, lambda: WELCOME[key](app))
+        await two_runs.until(pilot, lambda: _shown(app) == set(WELCOME))
+        for key, holds in WELCOME.items():
+            await pilot.press(key)
+            await two_runs.until(pilot, lambda holds=holds: holds(app))
+            if app.screen.is_modal:
+                await pilot.press("escape")
 
     two_runs.drive(app, steps)
 
 
-@pytest.mark.parametrize("key", RUN)
-def test_a_key_of_a_run_does_what_the_footer_says(stage: Any, key: str) -> None:
+def test_every_key_of_a_run_does_what_it_says(stage: Any) -> None:
     script = stage.script(points=16)
     app = HalfdropApp(lab=stage.lab, record=script.path)
 
     with stage.listening(script.path) as (port, _):
 
         async def steps(pilot: Any) -> None:
-            await stage.until(pilot, lambda: len(app.screen.view.points) == 16)
-            await pilot.press(key)
-            await stage.until(pilot, lambda: RUN[key](app))
-            if key == "g":
-                await stage.until(pilot, port.waiting)
+            await stage.until(pilot, lambda: len(app.screen.view.points) == 16 and _shown(app) == set(RUN))
+            for key, holds in RUN.items():
+                await pilot.press(key)
+                await stage.until(pilot, lambda holds=holds: holds(app))
+                if key in ("p", "g"):
+                    await stage.until(pilot, port.waiting)
+                    assert port.take() == Command(name={"p": "pause", "g": "go-on"}[key])
+                if key == "s":
+                    await pilot.press("g")
+                    await stage.until(pilot, port.waiting)
+                    assert port.take() == Command(name="go-on")
+                elif app.screen.is_modal:
+                    await pilot.press("escape")
 
         stage.drive(app, steps)
-
-
-def _shown(app: HalfdropApp) -> set[str]:
-    return {one.key for one in app.screen.query(FooterKey)}
-
-
-@pytest.mark.parametrize("place", PLACES)
-def test_no_footer_shows_a_key_that_is_not_tried_here(two_runs: Any, place: str) -> None:
-    app = HalfdropApp(lab=two_runs.lab)
-
-    async def steps(pilot: Any) -> None:
-        await _to(two_runs, pilot, place)
-        await two_runs.until(pilot, lambda: _shown(app) != set())
-        # Enter is the list's own where a list has the focus
-        assert _shown(app) <= set(PLACES[place][2]) | {"enter"}
-        assert set(PLACES[place][2]) - {"enter"} <= _shown(app)
-
-    two_runs.drive(app, steps)
-
-
-def test_no_footer_of_a_run_or_of_the_welcome_shows_a_key_that_is_not_tried_here(stage: Any) -> None:
-    script = stage.script(points=5)
-    for app, keys in ((HalfdropApp(lab=stage.lab, record=script.path), RUN), (HalfdropApp(), WELCOME)):
-
-        async def steps(pilot: Any, app: Any = app, keys: Any = keys) -> None:
-            await stage.until(pilot, lambda: _shown(app) == set(keys))
-
-        with stage.listening(script.path):
-            stage.drive(app, steps)
 
 
 def test_places_and_rows_by_mouse(two_runs: Any) -> None:
