@@ -12,12 +12,12 @@ from configs.errors import HalfdropError
 from configs.settings import load_bench
 from controller.assembly import Opening, is_simulated, open_bench
 from controller.benchwork.pace import FAST
-from controller.commands.lines import Lines
 from controller.commands.output import say
 from controller.commands.present import at_the_bench
 from controller.commands.probekept import keep_in_probe_record
 from controller.commands.settings import answers_of, method_of
 from controller.commands.signals import pulling
+from controller.commands.watching import watching
 from controller.labfolder import Lab
 from controller.lock import lock_device, lock_lab
 from controller.planning.amounts import amount_of_plan
@@ -87,7 +87,7 @@ def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun)
             evaluate_only=given.evaluate_only,
             operator_name=given.operator,
             commands=present.commands,
-            on_progress=present.watch.looking_on(Lines(sys.stderr)),
+            on_progress=lambda journal: present.watch.looking_on(watching(broken.plan, journal, before=broken.record)),
             amount_of=amount_of_plan,
         )
         result = go_on(broken, how)

@@ -9,6 +9,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
+from controller.journal import Journal
 from controller.records.brokenrun import BrokenRun
 from controller.records.header import check_operator, versions
 from controller.records.reopening import ReopenedJournal, ReopenedSink
@@ -66,6 +67,7 @@ class GoingOn:
         gap_s: time since the record's last line, s.
         evaluate_only: end it and evaluate what is there; nothing moves.
         operator_name: as typed.
+        on_progress: called with every entry; a function of the record that is written on.
         durable: False for tests: nothing is fsynced.
     """
 
@@ -76,7 +78,7 @@ class GoingOn:
     evaluate_only: bool = False
     operator_name: str | None = None
     commands: Commands | None = None
-    on_progress: Callable[[Progress], None] | None = None
+    on_progress: Callable[[Journal], Callable[[Progress], None]] | None = None
     amount_of: AmountOf | None = None
     durable: bool = True
 
@@ -119,7 +121,7 @@ def go_on(broken: BrokenRun, how: GoingOn) -> RunResult:
         stop=how.stop,
         commands=how.commands,
         operator_name=how.operator_name,
-        on_progress=how.on_progress,
+        on_progress=None if how.on_progress is None else how.on_progress(journal),
         amount_of=how.amount_of,
         resumption=_resumption(broken, pump, settled, Resumed(at_s=run_s.now(), gap_s=how.gap_s)),
     )

@@ -274,7 +274,10 @@ def test_a_run_may_break_off_more_than_once(tmp_path: Path):
         with bench.devices(stop) as devices:
             broken = read_broken(path)
 
-            def break_off(_: Any) -> None:
+            def break_off(_: Any) -> Callable[[Any], None]:
+                return breaks_off
+
+            def breaks_off(_: Any) -> None:
                 if len(path.read_bytes()) > 60_000:
                     raise Died
 

@@ -98,3 +98,24 @@ def test_a_run_of_another_sample_says_so_and_records_it(tmp_path: Path, capsys: 
     [entry] = record.of("departure")
     assert "another amount of sample" in entry["what"]
     assert replay(record).identical
+
+
+@pytest.mark.parametrize("after", [False, True], ids=["before it was told", "after it was told"])
+def test_a_resumed_run_tells_a_departure_once(after: bool, tmp_path: Path, capsys: pytest.CaptureFixture[str]):
+    lab = tmp_path / "lab"
+    init_lab(lab)
+    method = lab / "methods" / "juice-acidity.yaml"
+    method.write_text(
+        method.read_text().replace("expected_concentration_mol_l: 0.04", "expected_concentration_mol_l: 0.015")
+    )
+    main(["run", "juice-acidity", "--lab", str(lab), "--headless", "--json"])
+    [path] = (lab / "runs").glob("*.jsonl")
+    lines = path.read_bytes().splitlines(keepends=True)
+    [told] = [number for number, line in enumerate(lines) if b'"event":"departure"' in line]
+    path.write_bytes(b"".join(lines[: told + 30 if after else told - 30]))
+    capsys.readouterr()
+    assert main(["resume", path.stem, "--lab", str(lab), "--headless", "--json"]) in (0, 1)
+    assert ("warning: the end point is predicted at" in capsys.readouterr().err) is not after
+    [entry] = read_record(path).of("departure")
+    assert "another amount of sample" in entry["what"]
+    assert replay(read_record(path)).identical
