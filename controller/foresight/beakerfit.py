@@ -20,6 +20,7 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
+from controller.evaluation.modelfit import ModelFit
 from controller.foresight.beakermodel import BeakerModel, Layout
 from controller.foresight.trace import Trace
 
@@ -30,6 +31,8 @@ STRONG_SHARE = 0.0005
 _CHI_SQUARE_GAIN = 9.0
 #: reduced chi-square of the readings above which the fit does not describe the log
 LARGEST_SOUND_CHI_SQUARE = 4.0
+#: and anything known beforehand that had to move by more standard uncertainties
+LARGEST_MOVE_SDS = 4.0
 _HUBER_SDS = 3.0
 #: the fit, linearised about its solution, is somewhat too sure of itself (measured: tests/benchmarks/what_if.py)
 _WIDENED = 1.3
@@ -52,14 +55,23 @@ class JointFit:
     strong_ions_free: bool = field(default=False)
 
 
-def fit_jointly(model: BeakerModel, trace: Trace) -> JointFit | None:
-    """Fit the model; None where the numbers allow no fit."""
+def fit_jointly(model: BeakerModel, trace: Trace, *, begun: ModelFit | None = None) -> JointFit | None:
+    """Fit the model; None where the numbers allow no fit.
+
+    Args:
+        model: what is known.
+        trace: what was read.
+        begun: a fit of the points alone, from which the search for free strong ions begins too.
+    """
     held = _minimised(model, trace, model.start())
-    if not model.layout.weak or held is None:
+    if not model.layout.weak:
         return held
     free_model = model.with_free_strong_ions()
-    free = _minimised(free_model, trace, held.values)
-    if free is not None and held.cost - free.cost > _CHI_SQUARE_GAIN:
+    starts = [] if held is None else [held.values]
+    starts += [] if begun is None else [model.start_of(begun)]
+    found = [fit for start in starts if (fit := _minimised(free_model, trace, start)) is not None]
+    free = min(found, key=lambda fit: fit.cost, default=None)
+    if free is not None and (held is None or held.cost - free.cost > _CHI_SQUARE_GAIN):
         return JointFit(
             layout=free.layout,
             values=free.values,

@@ -8,7 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import numpy.typing as npt
 
-from controller.evaluation.modelfit import Priors
+from controller.evaluation.modelfit import ModelFit, Priors
 from controller.foresight.expectation import (
     USUAL_CALIBRATION,
     USUAL_DRIFT_MV_MIN,
@@ -112,6 +112,20 @@ class BeakerModel:
         else:
             values[1] = 1.0 if self.plan.titrant.acid else -1.0
         return values
+
+    def start_of(self, begun: ModelFit) -> Array:
+        """Return what is known, with amount, strong ions and pKa of a fit of the points alone."""
+        values, analyte = self.start(), self.plan.chemistry.analyte
+        assert analyte is not None
+        values[0] = begun.amount_mol_l / self.scale_mol_l
+        values[1] = (begun.strong_ion_mol_l - analyte.counter_ion_charge * begun.amount_mol_l) / self.scale_mol_l
+        values[self.layout.pka] = begun.pka
+        return self.within(values)
+
+    def furthest_move_sds(self, values: Array) -> float:
+        """How far the pKa, the probe and the lag had to move from what was known, in standard uncertainties."""
+        moved = (values - self.known) * np.sqrt(np.diag(self.precision))
+        return float(np.abs(moved[2:]).max())
 
     def equivalents(self) -> int:
         """Return how many protons a molecule of the analyte exchanges up to the last end point looked for."""

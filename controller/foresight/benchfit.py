@@ -15,7 +15,13 @@ import numpy as np
 from configs.errors import HalfdropError
 from controller.evaluation.curve import Curve
 from controller.evaluation.modelfit import fit_charge_balance
-from controller.foresight.beakerfit import LARGEST_SOUND_CHI_SQUARE, STRONG_SHARE, JointFit, fit_jointly
+from controller.foresight.beakerfit import (
+    LARGEST_MOVE_SDS,
+    LARGEST_SOUND_CHI_SQUARE,
+    STRONG_SHARE,
+    JointFit,
+    fit_jointly,
+)
 from controller.foresight.beakermodel import BeakerModel, equivalents_of, titrant_of
 from controller.foresight.expectation import (
     USUAL_CALIBRATION,
@@ -76,8 +82,9 @@ class FittedBench:
 
     @property
     def sound(self) -> bool:
-        """Does the fit describe the log?"""
-        return self.fit.chi_square <= LARGEST_SOUND_CHI_SQUARE
+        """Does the fit describe the log, and agree with what was known?"""
+        moved_sds = self.model.furthest_move_sds(self.fit.values)
+        return self.fit.chi_square <= LARGEST_SOUND_CHI_SQUARE and moved_sds <= LARGEST_MOVE_SDS
 
     @property
     def pka(self) -> tuple[float, ...]:
@@ -231,7 +238,7 @@ def fit_bench(
         else:
             calibration = plan.probe.calibration or USUAL_CALIBRATION
             trace = trace_of_points(curve, calibration, temperature_c=plan.chemistry.temperature_c)
-        fit = fit_jointly(model, trace)
+        fit = fit_jointly(model, trace, begun=begun)
     if fit is None:
         raise FitRefusedError(
             f"{len(curve.volume_ml)} points allow no fit of the beaker",
