@@ -6,8 +6,10 @@ Every run is the whole command, `halfdrop run`, in one lab folder: locks, ports 
 turns), record, log, command port, accounts, with the methods of the cider house by turns. Every second run meets faults
 that it should get over. Between runs lies the time that changing the sample takes. On manual time throughout.
 
-Memory is what the process holds of the computer's (resident, after what the C library keeps for later is given back;
-Linux), or with --traced what Python's objects hold (tracemalloc, everywhere; three times as slow).
+Memory is what is allocated and not given back, Python's objects and C's alike: the C library's own account, with
+its allocator in place of Python's (PYTHONMALLOC=malloc; glibc). With --traced it is what Python's objects hold
+(tracemalloc, everywhere; three times as slow). What the process takes from the computer is printed beside it: a long run leaves holes
+of some megabytes, which the next ones fill.
 """
 
 from __future__ import annotations
@@ -38,6 +40,7 @@ import yaml
 from controller.cli import main as halfdrop
 
 LARGEST_GROWTH_MB = 2.0
+ALLOCATOR = "PYTHONMALLOC"
 #: rinsing, the next sample, and the time until somebody is there for it
 CHANGE_S = 1200.0
 METHODS = ("juice-acidity", "wash-water-alkalinity", "standardise-sodium-hydroxide", "juice-acidity")
@@ -70,14 +73,34 @@ def campaign_module() -> ModuleType:
     return sys.modules[name]
 
 
+class _MallocAccount(ctypes.Structure):
+    """glibc's `struct mallinfo2`: bytes mapped, and bytes in use, among others."""
+
+    _fields_ = [
+        (name, ctypes.c_size_t)
+        for name in (
+            "arena", "ordblks", "smblks", "hblks", "hblkhd", "usmblks", "fsmblks", "uordblks", "fordblks", "keepcost",
+        )
+    ]  # fmt: skip
+
+
 def held_mb() -> float:
-    """Memory held now, MB: by Python's objects where they are traced, else by the process."""
+    """Memory allocated now, MB: by Python's objects where they are traced, else by everything in the process."""
     gc.collect()
     if tracemalloc.is_tracing():
         return tracemalloc.get_traced_memory()[0] / 1e6
-    with contextlib.suppress(AttributeError):  # glibc only; without it the figure jumps by 3 MB either way
-        ctypes.CDLL(None).malloc_trim(0)
-    pages = int(Path("/proc/self/statm").read_text(encoding="ascii").split()[1])
+    account = ctypes.CDLL(None).mallinfo2
+    account.restype = _MallocAccount
+    now = account()
+    return (now.uordblks + now.hblkhd) / 1e6
+
+
+def resident_mb() -> float:
+    """What the process takes from the computer, MB; 0 where the system does not tell."""
+    try:
+        pages = int(Path("/proc/self/statm").read_text(encoding="ascii").split()[1])
+    except OSError:
+        return 0.0
     return pages * os.sysconf("SC_PAGE_SIZE") / 1e6
 
 
@@ -170,7 +193,7 @@ def week(
 
 
 def _held() -> str:
-    return f"{held_mb():.2f} MB, {handles()} handles, {len(sys.modules)} modules"
+    return f"{held_mb():.2f} MB ({resident_mb():.1f} resident), {handles()} handles, {len(sys.modules)} modules"
 
 
 def main() -> int:
@@ -180,6 +203,8 @@ def main() -> int:
     options.add_argument("--traced", action="store_true", help="what Python's objects hold, instead of the process")
     options.add_argument("--log-every-h", type=float, default=12.0, help="print so often what is held")
     given = options.parse_args()
+    if not given.traced and ALLOCATOR not in os.environ:
+        os.execve(sys.executable, [sys.executable, *sys.argv], {**os.environ, ALLOCATOR: "malloc"})
     done = week(given.hours, given.seed, traced=given.traced, log_every_h=given.log_every_h)
     print(
         f"{done.hours:.1f} virtual hours, {done.runs} runs (seed {given.seed}), exit statuses "
