@@ -12,9 +12,11 @@ from textual.binding import Binding, BindingType
 from textual.screen import Screen
 
 from controller.labfolder import Lab
-from controller.ui.screens.commanding import leave_question
-from controller.ui.screens.run import RunScreen
 from controller.ui.theme import DAY, NIGHT
+
+TYPE_CHECKING = False  # screens are imported when they are opened: the first paint waits for one of them only
+if TYPE_CHECKING:
+    from controller.ui.screens.run import RunScreen
 
 
 class HalfdropApp(App[int]):
@@ -66,6 +68,8 @@ class HalfdropApp(App[int]):
     def on_mount(self) -> None:
         """Open the first screen."""
         if self._record is not None:
+            from controller.ui.screens.run import RunScreen
+
             self.push_screen(RunScreen(self._record, speed=self._speed))
         elif self.lab is None:
             from controller.ui.screens.welcome import WelcomeScreen
@@ -111,9 +115,13 @@ class HalfdropApp(App[int]):
     def _run_screen(self) -> RunScreen | None:
         from controller.running.commandclient import running
 
+        record = running(self.lab.runs) if self.lab is not None else None
+        if record is None and not getattr(self.screen, "live", False):
+            return None
+        from controller.ui.screens.run import RunScreen
+
         if isinstance(self.screen, RunScreen) and self.screen.live:
             return self.screen
-        record = running(self.lab.runs) if self.lab is not None else None
         return None if record is None else RunScreen(record)
 
     def open_run(
@@ -131,6 +139,8 @@ class HalfdropApp(App[int]):
 
             self.switch_screen(CalibrationScreen(record, speed=speed))
         else:
+            from controller.ui.screens.run import RunScreen
+
             self.switch_screen(RunScreen(record, speed=speed, calibrations_before=calibrations_before))
 
     def use_lab(self, lab: Lab) -> None:
@@ -174,8 +184,9 @@ class HalfdropApp(App[int]):
 
     async def action_quit(self) -> None:
         """Leave the program; a run that goes on is asked about."""
-        screen = self.screen
-        if isinstance(screen, RunScreen) and screen.live and screen.listens:
+        if getattr(self.screen, "live", False) and getattr(self.screen, "listens", False):
+            from controller.ui.screens.commanding import leave_question
+
             self.push_screen(leave_question(), self._quit)
         else:
             self.exit(0)
@@ -183,5 +194,6 @@ class HalfdropApp(App[int]):
     def _quit(self, answer: str | None) -> None:
         if answer == "leave":
             self.exit(0)
-        elif answer == "stop" and isinstance(self.screen, RunScreen):
-            self.screen.action_stop()
+        elif answer == "stop":
+            screen: Any = self.screen
+            screen.action_stop()

@@ -22,7 +22,7 @@ from controller.ui.screens.setup import SetUpScreen
 from controller.ui.screens.welcome import WelcomeScreen
 from controller.ui.widgets.answerfield import AnswerField
 from controller.ui.widgets.curveplot import CurvePlot
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 
 LOOKED = {
     "pump": {

@@ -11,7 +11,7 @@ from controller.ui.app import HalfdropApp
 from controller.ui.screens.dialogs import Choice, Line, Text
 from controller.ui.screens.run import RunScreen
 from controller.ui.widgets.curveplot import CurvePlot
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.warningbar import WarningBar
 
 SIZES = [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")]

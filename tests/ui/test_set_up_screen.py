@@ -9,7 +9,7 @@ import pytest
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.setup import SetUpScreen
 from controller.ui.widgets.answerfield import AnswerField
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 
 SIZES = [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")]
 

@@ -23,7 +23,7 @@ from controller.records.record import printable, read_record, verify
 from controller.ui.screens.dialogs import Line, Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.texts import clock_text, local_time_text
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
 PAGE = 200

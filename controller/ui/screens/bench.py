@@ -33,7 +33,7 @@ from controller.ui.screens.help import help_of
 from controller.ui.screens.leftopen import left_open
 from controller.ui.texts import number_of
 from controller.ui.widgets.facts import Facts
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
 _DOING = {

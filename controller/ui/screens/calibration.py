@@ -24,7 +24,8 @@ from controller.ui.screens.archive import cell_of, set_widths, verify_for
 from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.screens.run import RunScreen
-from controller.ui.widgets.readout import Plain, Readout
+from controller.ui.widgets.plain import Plain
+from controller.ui.widgets.readout import Readout
 from controller.ui.widgets.sentences import Sentences
 from controller.ui.widgets.titlebar import TitleBar
 from controller.ui.widgets.warningbar import WarningBar

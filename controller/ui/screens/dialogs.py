@@ -12,7 +12,7 @@ from textual.screen import ModalScreen
 from textual.widgets import Button, Input
 
 from controller.records.record import printable
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 
 
 def printable_lines(text: str) -> str:

@@ -25,7 +25,7 @@ from controller.ui.screens.help import help_of
 from controller.ui.screens.setup import WIDE, form_row
 from controller.ui.texts import number_of
 from controller.ui.widgets.answerfield import AnswerField
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.titlebar import TitleBar
 from drivers.clock import SystemClock
 

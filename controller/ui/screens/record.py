@@ -24,7 +24,7 @@ from controller.ui.screens.run import RunScreen
 from controller.ui.tail import Playback, all_entries
 from controller.ui.texts import clock_text, local_time_text
 from controller.ui.widgets.curveplot import CurvePlot
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
 PLAYED_AT = 20.0

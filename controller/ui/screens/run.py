@@ -16,7 +16,8 @@ from controller.records.record import printable
 from controller.ui.screens.commanding import Commanding
 from controller.ui.tail import Playback, RecordTail, Source
 from controller.ui.widgets.curveplot import CurvePlot
-from controller.ui.widgets.readout import Plain, Readout, result_lines
+from controller.ui.widgets.plain import Plain
+from controller.ui.widgets.readout import Readout, result_lines
 from controller.ui.widgets.sentences import Sentences
 from controller.ui.widgets.titlebar import TitleBar
 from controller.ui.widgets.warningbar import WarningBar

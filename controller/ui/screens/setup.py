@@ -21,7 +21,7 @@ from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.texts import number_of
 from controller.ui.widgets.answerfield import AnswerField
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
 MOST_REPLICATES = 20

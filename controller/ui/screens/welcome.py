@@ -14,7 +14,7 @@ from textual.widgets import Button, Footer
 from configs.errors import HalfdropError
 from controller.labfolder import find_lab, init_lab
 from controller.ui.screens.dialogs import Line
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 
 _TEXT = (
     "halfdrop titrates while nobody watches, and can defend the number afterwards.\n\n"

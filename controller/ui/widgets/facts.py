@@ -6,7 +6,7 @@ from textwrap import wrap
 
 from textual import events
 
-from controller.ui.widgets.readout import Plain
+from controller.ui.widgets.plain import Plain
 
 #: where the second column begins, cells
 COLUMN = 12

@@ -6,34 +6,16 @@ from typing import Any
 
 from textual.app import ComposeResult
 from textual.containers import Vertical
-from textual.widgets import Digits, Static
+from textual.widgets import Digits
 
 from controller.commands.output import amount_text, volume_text
 from controller.records.record import printable
 from controller.ui.runview import RunView
 from controller.ui.seen import stability_mv_min
 from controller.ui.texts import clock_text, left_text
+from controller.ui.widgets.plain import Plain
 
 _LEVELS = "▁▂▃▄▅▆▇█"
-
-
-class Plain(Static):
-    """A text that is never markup and is drawn anew only when it changed."""
-
-    def __init__(self, text: str = "", *, id: str | None = None, classes: str | None = None) -> None:  # noqa: A002
-        super().__init__(text, id=id, classes=classes, markup=False)
-        self._text = text
-
-    def say(self, text: str) -> None:
-        """Show a text."""
-        if text != self._text:
-            self._text = text
-            self.update(text)
-
-    @property
-    def text(self) -> str:
-        """What is shown."""
-        return self._text
 
 
 class Readout(Vertical):
