@@ -27,8 +27,8 @@ def test_a_run_of_the_campaign_comes_out_the_same_again(campaign: Any) -> None:
 
 
 def test_memory_and_handles_do_not_grow(week: Any) -> None:
-    done = week.week(1.0, seed=44, settled_h=0.4, change_s=300.0, traced=True)
+    done = week.week(1.0, seed=44, settled_h=0.4, change_s=500.0, traced=True)
     assert done.said == []
-    assert done.runs >= 5
+    assert done.runs >= 4
     assert done.grown_mb < week.LARGEST_GROWTH_MB
     assert done.grown_handles <= 0

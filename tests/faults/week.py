@@ -8,8 +8,8 @@ that it should get over. Between runs lies the time that changing the sample tak
 
 Memory is what is allocated and not given back, Python's objects and C's alike: the C library's own account, with
 its allocator in place of Python's (PYTHONMALLOC=malloc; glibc). With --traced it is what Python's objects hold
-(tracemalloc, everywhere; three times as slow). What the process takes from the computer is printed beside it: a long run leaves holes
-of some megabytes, which the next ones fill.
+(tracemalloc, everywhere; three times as slow). What the process takes from the computer is printed beside it: a
+long run leaves holes of some megabytes, which the next ones fill.
 """
 
 from __future__ import annotations
