@@ -49,6 +49,8 @@ _SHARED_SD_PH, _LEAST_SD_PH = 0.0034, 0.0015
 _SMOOTH_SD_PH, _SMOOTH_SHARE, _SMOOTH_PH = 0.0045, 0.01, 1.0
 #: what settling may miss, as a share of the last dose; the first point is taken without any
 _GAP_SHARE, _FIRST_SD_PH = 0.02, 0.0085
+#: a point that claims to be known worse (a lag that is not trusted) is let speak: the spread tells how bad it is
+_MOST_CLAIMED_SHARE = 0.006
 #: most points that visits may take, as a share; the longest of them
 _VISITED_SHARE, _LONGEST_VISIT_SHARE = 0.25, 0.15
 #: true points before and after a visit, at least: else what changed may have changed for good
@@ -57,6 +59,8 @@ _EVERY = 2  # gaps between points that a leak or drift is tried to begin at
 _MOST_PASSES = 10
 #: more mishaps than this are none any more
 MOST_MISHAPS = 3
+#: no reference and no temperature shifts a probe by more (pH) or faster (pH/min): then the points are something else
+LARGEST_OF_PROBE: dict[Kind, float] = {"shift": 0.5, "drift": 0.5}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -89,7 +93,8 @@ class Explained:
     @property
     def holds(self) -> bool:
         """What was found is little enough to be believed, and leaves nothing over."""
-        return self.settled and len(self.mishaps) <= MOST_MISHAPS
+        wild = any(abs(one.amount) > LARGEST_OF_PROBE.get(one.kind, math.inf) for one in self.mishaps)
+        return self.settled and len(self.mishaps) <= MOST_MISHAPS and not wild
 
 
 @dataclass(slots=True)
@@ -303,7 +308,8 @@ class _Search:
         own_ph = np.sqrt(np.maximum(signal_noise(curve) ** 2 - _SHARED_SD_PH**2, _LEAST_SD_PH**2))
         own_ph[0] = math.hypot(float(own_ph[0]), _FIRST_SD_PH)
         gaps = _GAP_SHARE * np.diff(curve.volume_ml, prepend=curve.volume_ml[0])
-        own = (curve.volume_sd**2 + gaps**2)[kept] + (slope * own_ph[kept]) ** 2
+        claimed = np.minimum(curve.volume_sd, _MOST_CLAIMED_SHARE * float(curve.volume_ml[-1]))
+        own = (claimed**2 + gaps**2)[kept] + (slope * own_ph[kept]) ** 2
         apart = (curve.ph[:, None] - curve.ph[None, :])[np.ix_(kept, kept)]
         near: Array = np.exp(-0.5 * (apart / _SMOOTH_PH) ** 2)
         share_ml = _SMOOTH_SHARE * float(curve.volume_ml[-1])

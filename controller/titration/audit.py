@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Any
 
 from controller.evaluation.agreement import COVERAGE_FACTOR
@@ -22,6 +23,8 @@ from controller.evaluation.modelfit import ModelFit, Priors, fit_charge_balance
 NOTABLE_SHARE, LARGEST_SHARE = 0.005, 0.1
 #: what a calibration's offset is worth in another liquid: the junction, units of pH (common practice)
 JUNCTION_SD_PH = 0.02
+#: end points closer than this share are one
+LEAST_APART = 0.02
 #: pKa so far apart show a jump between them
 JUMP_PKA = 2.5
 #: reduced chi-square from which on the uncertainty grows with it, without a jump; the nominal bench leaves 0.1 to 0.8
@@ -215,6 +218,11 @@ def _shown(fit: ModelFit, acid_titrant: bool) -> list[tuple[float, float]]:
 
 
 def _judge_uncertainty(audit: Audit) -> None:
+    for number, (one, next_one) in enumerate(pairwise(audit.end_points), start=1):
+        if next_one["volume_ml"] <= (1.0 + LEAST_APART) * one["volume_ml"]:
+            audit.withheld = f"end points {number} and {number + 1} fall together, so no number is given"
+            audit.end_points = []
+            return
     for number, point in enumerate(audit.end_points):
         share = point["standard_uncertainty_ml"] / max(abs(point["volume_ml"]), 1e-9)
         if share > LARGEST_SHARE:
