@@ -18,6 +18,7 @@ from controller.evaluation.curve import Curve
 from controller.evaluation.estimate import Estimate
 from controller.evaluation.mishaps import MOST_MISHAPS, Explained, Mishap, explain
 from controller.evaluation.modelfit import ModelFit, Priors, fit_charge_balance
+from controller.titration.left_out import told
 
 #: relative standard uncertainty above which a number is remarked upon, and above which none is given
 NOTABLE_SHARE, LARGEST_SHARE = 0.005, 0.1
@@ -65,6 +66,7 @@ def audited(
     slowness: float | None,
     precision_ml: float,
     offset_sd_ph: float | None = None,
+    lost_ml: float = 0.0,
 ) -> Audit:
     """Look at every end point once more.
 
@@ -76,6 +78,7 @@ def audited(
         slowness: learned lag over the record's, where there is a record.
         precision_ml: of the pump.
         offset_sd_ph: standard uncertainty of the calibration's offset, units of pH, where it is known.
+        lost_ml: titrant that points not in the curve do not account for.
     """
     audit = Audit(list(end_points))
     if not audit.end_points:
@@ -108,6 +111,10 @@ def audited(
         )
         for number in range(len(audit.end_points)):
             audit.widen(number, SLOWNESS_COST * (slow - 1.0) * precision_ml)
+    if lost_ml > 0.0:
+        audit.warnings.append(told(lost_ml))
+        for number in range(len(audit.end_points)):
+            audit.widen(number, lost_ml)
     _judge_uncertainty(audit)
     return audit
 

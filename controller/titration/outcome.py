@@ -21,6 +21,7 @@ from controller.evaluation.result import Evaluation
 from controller.titration.audit import Audit, audited
 from controller.titration.endpoint import FoundEndPoint
 from controller.titration.gaps import drift_over_gaps_mv
+from controller.titration.left_out import lost_ml
 from controller.titration.points import Point
 from controller.titration.precision import offset_sd_ph, pump_precision_ml
 
@@ -103,7 +104,25 @@ def run_curve(run: RunState) -> Curve:
     Raises:
         CurveError: they make no curve.
     """
-    plan, points = run.plan, sure_points(run)
+    return _curve_of(run, sure_points(run))
+
+
+def lost_among_left_out_ml(run: RunState) -> float:
+    """Titrant that the points not evaluated do not account for, mL."""
+    sure = {id(point) for point in sure_points(run)}
+    left_out = [id(point) not in sure for point in run.points]
+    if not any(left_out):
+        return 0.0
+    try:
+        with np.errstate(all="ignore"), warnings.catch_warnings():
+            warnings.simplefilter("ignore", RuntimeWarning)
+            return lost_ml(_curve_of(run, run.points), left_out)
+    except (HalfdropError, ArithmeticError, ValueError):  # no curve can be made of them all
+        return 0.0
+
+
+def _curve_of(run: RunState, points: list[Point]) -> Curve:
+    plan = run.plan
     analyte, chemistry = plan.chemistry.analyte, plan.chemistry
     per_unit = run.scale.slope_mv if run.scale.known else 1.0
     return Curve(
@@ -159,6 +178,7 @@ def _audited(run: RunState, evaluation: Evaluation | None) -> Audit:
         slowness=run.slowness,
         precision_ml=pump_precision_ml(run.plan),
         offset_sd_ph=offset_sd_ph(run.plan),
+        lost_ml=lost_among_left_out_ml(run),
     )
 
 

@@ -14,6 +14,7 @@ from controller.evaluation.contradiction import believed
 from controller.evaluation.curve import Curve, CurveError
 from controller.evaluation.mishaps import explain
 from controller.evaluation.modelfit import fit_charge_balance
+from controller.titration import left_out
 from controller.titration.audit import (
     LARGEST_SHARE,
     NOTABLE_SLOWNESS,
@@ -23,7 +24,15 @@ from controller.titration.audit import (
     mishap_told,
     spread_allowed,
 )
-from controller.titration.outcome import DIGITS, STRAIGHTNESS_MV, position_sd_ml, probe_lag, run_curve, sure_points
+from controller.titration.outcome import (
+    DIGITS,
+    STRAIGHTNESS_MV,
+    lost_among_left_out_ml,
+    position_sd_ml,
+    probe_lag,
+    run_curve,
+    sure_points,
+)
 from controller.titration.plan import RunPlan
 from controller.titration.points import calibration_ph_sd
 from controller.titration.precision import pump_precision_ml
@@ -136,9 +145,17 @@ def _determination(run: RunState) -> tuple[dict[str, Any] | None, list[str], str
         return None, [], "the points do not lie on both sides of the end point pH"
     point = end_point_json(run.plan, found, beyond_ml=_beyond_ml(run), temperature_c=run.temperature_c)
     told, contradicting = last_look(curve, [one.at_s for one in sure_points(run)], point, slowness=run.slowness)
-    told += [*_slow(run, point), *_by_itself(run, point)]
+    told += [*_slow(run, point), *_by_itself(run, point), *_lost(run, point)]
     more, withheld = judged(run.plan, found, point)
     return point, [*more, *told], contradicting or withheld
+
+
+def _lost(run: RunState, point: dict[str, Any]) -> list[str]:
+    """Widen by titrant that went missing among points which are not evaluated."""
+    lost = lost_among_left_out_ml(run)
+    if lost > 0.0:
+        _widen(point, lost)
+    return [left_out.told(lost)] if lost > 0.0 else []
 
 
 def last_look(
