@@ -20,7 +20,7 @@ import pytest
 from controller.cli import main
 from controller.records import recordfile
 from controller.records.record import list_records
-from drivers import link, operator
+from drivers import heldport, operator
 from simulators import balance, buffer_beaker, chemist
 
 #: a message that asks: every command in it ends with a question mark, a number may follow
@@ -68,7 +68,7 @@ def watch(monkeypatch: pytest.MonkeyPatch) -> Watch:
     """Put the log between program and file, ports, operator and standard output."""
     found = Watch()
     own_write, own_close, own_sync = recordfile.FileSink.write, recordfile.FileSink.close, recordfile.sync_to_disk
-    own_open = link.open_port
+    own_open = heldport.open_port
 
     def write(self: Any, line: bytes) -> None:
         found.wrote(self._descriptor, line)
@@ -101,8 +101,8 @@ def watch(monkeypatch: pytest.MonkeyPatch) -> Watch:
     monkeypatch.setattr(recordfile.FileSink, "write", write)
     monkeypatch.setattr(recordfile.FileSink, "close", close)
     monkeypatch.setattr(recordfile, "sync_to_disk", sync)
-    monkeypatch.setattr(link, "open_port", lambda *given: Wire(own_open(*given)))
-    monkeypatch.setattr(link, "close_port", lambda port: own_close_port(getattr(port, "_port", port)))
+    monkeypatch.setattr(heldport, "open_port", lambda *given: Wire(own_open(*given)))
+    monkeypatch.setattr(heldport, "close_port", lambda port: own_close_port(getattr(port, "_port", port)))
     for module in (operator, chemist, buffer_beaker, balance):
         for one in vars(module).values():
             if isinstance(one, type) and "ask" in vars(one) and one.__module__ == module.__name__:
@@ -110,7 +110,7 @@ def watch(monkeypatch: pytest.MonkeyPatch) -> Watch:
     return found
 
 
-own_close_port = link.close_port
+own_close_port = heldport.close_port
 
 
 def _noted(ask: Callable[..., str], watch: Watch) -> Callable[..., str]:
