@@ -20,6 +20,7 @@ from __future__ import annotations
 import argparse
 import gc
 import importlib.util
+import json
 import os
 import random
 import sys
@@ -141,6 +142,7 @@ class Tried:
     bench: Any
     folder: Path
     every: int
+    without_number: bool = False  # the uninterrupted run gives no number either
     found: Counter[str] = field(default_factory=Counter)
     sink: Any = None
     child: tuple[str, int, float] | None = None  # what died, bytes on the disk, gap
@@ -262,8 +264,8 @@ class Tried:
     def _judged_result(self, result: dict[str, Any]) -> str:
         points = result["end_points"]
         stopped = any(name == "stop" for _, name, _ in self.wanted.commands)
-        if not points and (stopped or "equal" in self.wanted.strategy.name):
-            return "sound"  # ended before it, or coarse steps that need not show it
+        if not points and (stopped or self.without_number or "equal" in self.wanted.strategy.name):
+            return "sound"  # ended before it, or what the break has no part in
         if not points:
             return f"no end point: {result['reason']}"
         if self.wanted.at_ph is None:
@@ -375,10 +377,12 @@ def one(number: int, every: int = 1) -> tuple[int, int, int, Counter[str]]:
     ):  # everything lazy is loaded here once
         first = Tried(crash=crash, wanted=wanted, bench=bench, folder=Path(folder), every=sys.maxsize)
         path = Path(folder) / "run.jsonl"
-        path.write_bytes(first.carry_out()[:-1000])
+        whole = first.carry_out()
+        path.write_bytes(whole[:-1000])
         read_broken(path)
     with tempfile.TemporaryDirectory() as folder, bench_of(crash, wanted) as bench:
         tried = Tried(crash=crash, wanted=wanted, bench=bench, folder=Path(folder), every=every)
+        tried.without_number = not json.loads(whole.splitlines()[-1])["closing"]["result"]["end_points"]
         data = tried.carry_out()
         cuts = parsed_at_every_byte(data, Path(folder) / "run.jsonl")
     return number, data.count(b"\n"), cuts, tried.found
