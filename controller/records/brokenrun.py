@@ -50,12 +50,19 @@ class BrokenRun:
         pending = self.built.pending
         return pending if isinstance(pending, Dose) and self.built.recorded else None
 
-    def last_number(self) -> int:
-        """Number of the last dose whose fate the record holds."""
-        return max(
-            (answer.number for _, answer in self.carried_out if isinstance(answer, Dosed | Failed) and answer.number),
-            default=self.plan.pump.last_dose_number,
-        )
+    def last_numbers(self) -> range:
+        """Numbers that the pump may know its last dose by: the last of which something may have come, or one after it.
+
+        A dose of which nothing came may never have begun: then the pump does not know its number.
+        """
+        first = last = self.plan.pump.last_dose_number
+        for _, answer in self.carried_out:
+            if isinstance(answer, Dosed | Failed) and answer.number:
+                last = max(last, answer.number)
+                most_ml = answer.volume_ml if isinstance(answer, Dosed) else answer.highest_ml
+                if most_ml is None or most_ml > 0.0:
+                    first = last
+        return range(first, last + 1)
 
     def start_count(self) -> int:
         """The pump's start count as last recorded."""

@@ -59,12 +59,12 @@ def ask_pump(pump: Pump, clock: Clock, *, known_start_count: int) -> PumpNow:
     )
 
 
-def check_unused(now: PumpNow, *, last_number: int, pending: Dose | None, where: str) -> None:
+def check_unused(now: PumpNow, *, last_numbers: range, pending: Dose | None, where: str) -> None:
     """Refuse a pump that delivered for somebody else since.
 
     Args:
         now: what the pump says.
-        last_number: of the last dose whose fate the record holds.
+        last_numbers: by which the pump may know the last dose whose fate the record holds.
         pending: the dose in doubt, if there is one.
         where: the record.
 
@@ -74,11 +74,11 @@ def check_unused(now: PumpNow, *, last_number: int, pending: Dose | None, where:
     if now.restarted:
         fits = now.last.state == "none"  # it knows of no dose since
     else:
-        allowed = {last_number} if pending is None else {last_number, pending.number}
-        fits = now.last.number in allowed or now.last.state == "armed"
+        pending_now = pending is not None and now.last.number == pending.number
+        fits = now.last.number in last_numbers or pending_now or now.last.state == "armed"
     if not fits:
         raise PumpUsedError(
-            f"the pump's last dose is number {now.last.number}, this run's is {last_number}: it was used since",
+            f"the pump's last dose is number {now.last.number}, this run's is {last_numbers[-1]}: it was used since",
             where=where,
             remedy="What is there can be evaluated: halfdrop resume RUN --evaluate-only",
         )

@@ -102,7 +102,7 @@ def go_on(broken: BrokenRun, how: GoingOn) -> RunResult:
         settled = settle_dose(dose, pump, plan, asked_at_s=_asked_at_s(broken), now_at_s=run_s.now())
     asked, why = ([], "ended by the operator after it broke off") if how.evaluate_only else _ask(broken, how, pump)
     if not how.evaluate_only:
-        check_unused(pump, last_number=broken.last_number(), pending=dose, where=where)
+        check_unused(pump, last_numbers=broken.last_numbers(), pending=dose, where=where)
     journal = ReopenedJournal(
         ReopenedSink(broken.path, durable=how.durable), how.clock, data=broken.data, run_s=run_s.now(), name=where
     )

@@ -240,7 +240,7 @@ class Execution:
         self._guard.settle(action, volume_ml)
         self.delivered_ml += volume_ml
         self.steps += steps
-        self.doses += 1
+        self.doses += volume_ml > 0
         return Dosed(
             at_s=self.at_s(ended_at_s),
             number=action.number,
@@ -276,6 +276,8 @@ class Execution:
         except (DeviceError, StoppedError):
             return self._in_bounds(action, what, *bounds_ml)
         if self._stop.event.is_set() and (last.number < action.number or (last.steps, last.state) == (0, "stopped")):
+            if self._stop.held:  # the run may go on: the core counts nothing and takes the next number
+                return self._dosed(action, 0.0, 0, None, self._clock.now_s())
             self._guard.settle(action, 0.0)  # stopped before it began
             return self.stopped()
         if last.start_count != self._plan.pump.start_count:

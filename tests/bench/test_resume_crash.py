@@ -28,12 +28,14 @@ from controller.runner import run
 from controller.running.execution import Devices
 from controller.running.outcome import RunFailedError, RunResult
 from controller.running.stopping import Commands, StopSwitch
+from controller.titration.actions import Command
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan
 from drivers.clock import ManualClock
 from drivers.identity import Identity
 from drivers.link import LinkSettings, open_link
 from drivers.operator import AnswersOperator
+from drivers.scpi_dose import ScpiDose
 from drivers.scpi_probe import ScpiProbe
 from drivers.scpi_pump import ScpiPump
 from simulators.devices import ProbeDevice, PumpDevice
@@ -94,6 +96,19 @@ class Cable:
         return getattr(self._device, name)
 
 
+class Once:
+    """A person who gives one command."""
+
+    def __init__(self, command: Command) -> None:
+        self._commands = [command]
+
+    def waiting(self) -> bool:
+        return bool(self._commands)
+
+    def take(self) -> Command | None:
+        return self._commands.pop() if self._commands else None
+
+
 @dataclass
 class Survivor:
     """A bench that outlives the program."""
@@ -130,9 +145,9 @@ class Survivor:
             ),
         )
 
-    def die(self, sink: DyingSink) -> bool:
+    def die(self, sink: DyingSink, *, stop: StopSwitch | None = None) -> bool:
         """Run until the program dies; False where it came to its end before."""
-        stop = StopSwitch()
+        stop = stop or StopSwitch()
         with self.devices(stop) as devices:
             plan = self.plan(devices)
             cabled = Devices(
@@ -240,6 +255,27 @@ def test_a_run_that_dies_in_a_dose_settles_it_by_asking(number: int, share: floa
         [line] = [entry for entry in read_record(path).of("resumed") if "event" in entry]
         assert line["dose_in_doubt"]["number"] == number
         assert line["dose_in_doubt"]["found"] in {"done", "partly done", "not done"}
+
+
+def test_a_run_that_dies_halted_with_a_dose_that_never_began_goes_on(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    with surviving("halted") as bench:
+        stop, sink = StopSwitch(), DyingSink()
+        sink.dies = lambda written: b'"observation":"command"' in bytes(sink.data[-300:])
+        arm = ScpiDose.arm
+
+        def armed(dose: ScpiDose) -> None:
+            arm(dose)
+            if dose.number == 4:
+                stop.hold()
+
+        monkeypatch.setattr(ScpiDose, "arm", armed)
+        assert bench.die(sink, stop=stop)
+        path = tmp_path / "run.jsonl"
+        path.write_bytes(sink.data)
+        [halted] = [entry for entry in read_record(path).of("dosed") if entry["number"] == 4]
+        assert (halted["volume_ml"], halted["steps"]) == (0.0, 0)
+        going_on = Once(Command(name="go-on"))
+        check(bench, bench.resume(path, gap_s=20.0, commands=going_on), path, before=bytes(sink.data))
 
 
 @pytest.mark.parametrize("seed", range(4))
