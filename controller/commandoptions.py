@@ -255,7 +255,7 @@ def _at_bench(made: Parser) -> None:
 
 def _bench(group: Parser) -> None:
     actions = group.add_subparsers(dest="action", metavar="ACTION", parser_class=Parser, required=True)
-    made = added(actions, "show", "controller.commands.bench:show", "devices, limits, accounts, calibration")
+    made = added(actions, "show", "controller.commands.bench:show", "devices, limits, calibration, state of the probe")
     _lab(made)
     made.add_argument("--bench", metavar="FILE")
     _json(made)
@@ -292,5 +292,5 @@ COMMANDS: dict[str, tuple[str, Callable[[Parser], None]]] = {
     "replay": ("decide a record again, or see what another method would do", _replay),
     "schema": ("JSON Schema of a settings file", _schema),
     "runs": ("list, show, verify and export records", _runs),
-    "bench": ("show or serve a bench", _bench),
+    "bench": ("show, check, shut down or serve a bench", _bench),
 }

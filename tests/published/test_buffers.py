@@ -53,7 +53,8 @@ def test_lime_water_at_25_c() -> None:
     assert buffer("calcium hydroxide").ph_at(25.0) == pytest.approx(12.45, abs=0.005)
 
 
-# European Pharmacopoeia 2.2.3, table of reference buffers, two decimals (from memory; half the last digit)
+# European Pharmacopoeia 2.2.3 (11th edition, table read), two decimals, half the last digit; phthalate at 30 °C is left
+# out: 4.02 is printed there, 4.011 in the sets of three decimals
 TWO_DECIMALS = {
     "potassium tetroxalate": {15: 1.67, 20: 1.68, 25: 1.68, 30: 1.68, 35: 1.69},
     "potassium hydrogen tartrate": {25: 3.56, 30: 3.55, 35: 3.55},

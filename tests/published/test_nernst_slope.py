@@ -8,7 +8,7 @@ from scipy import constants
 from controller.calibration.electrode import BufferPoint, fit_line
 from simulators.constants import ideal_slope_mv
 
-#: R T ln 10 / F, mV
+#: R T ln 10 / F, mV, computed beside this project with the CODATA constants
 CODATA_MV = {
     0: 54.1988,
     5: 55.1909,
@@ -20,7 +20,7 @@ CODATA_MV = {
     37: 61.5404,
     40: 62.1357,
 }
-#: USP <791> (USP 41), V per pH
+#: USP <791> (USP 41, text read), V per pH
 USP_V = {15: 0.05718, 20: 0.05817, 25: 0.05916, 30: 0.06016, 35: 0.06115}
 
 

@@ -35,7 +35,7 @@ def test_between_two_nominal_volumes_the_next_larger_one_holds():
 
 @pytest.mark.parametrize(("temperature_c", "z"), [(20.0, 1.0029), (22.0, 1.0033), (25.0, 1.0040)])
 def test_one_gram_is_z_millilitres(temperature_c, z):
-    # ISO 8655-6 Z at 101.3 kPa; expansion of the barrel left out
+    # Z by the formula of ISO 8655-6 (from memory) at 101.3 kPa; expansion of the barrel left out
     rigid = Conditions(water_temperature_c=temperature_c, barrel_expansion_per_k=0.0)
     assert delivered_volume_ml(1.0, rigid) == pytest.approx(z, abs=5.5e-5)
 

@@ -25,7 +25,8 @@ def test_density_table(temperature_c, density):
     [(10, 999.7026), (15, 999.1026), (20, 998.2071), (22, 997.7735), (25, 997.0479), (30, 995.6502)],
 )
 def test_an_independent_older_table_agrees_within_its_scale(temperature_c, density):
-    # table of the 1990s printed in an open chemistry text: older temperature scale, up to 0.0014 kg/m3 apart at 30 C
+    # table of the 1990s as printed in an open chemistry text (table read): older temperature scale, up to 0.0014 kg/m3
+    # apart at 30 C
     assert water_density_kg_m3(temperature_c) == pytest.approx(density, abs=0.002)
 
 
@@ -48,7 +49,7 @@ Z = {
     27.0: (1.0043, 1.0044, 1.0044, 1.0045, 1.0045, 1.0045, 1.0046),
     30.0: (1.0052, 1.0052, 1.0053, 1.0053, 1.0054, 1.0054, 1.0054),
 }
-#: the same table as printed in an open-source program's data: independent of our formula
+#: ISO 8655-6's table of Z as copied into a public data file (that file was read, the standard was not): not our formula
 Z_SEEN = {
     15.0: (1.0017, 1.0018, 1.0019, 1.0019, 1.0020, 1.0020, 1.0020),
     15.5: (1.0018, 1.0019, 1.0019, 1.0020, 1.0020, 1.0020, 1.0021),
