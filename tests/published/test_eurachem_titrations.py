@@ -171,7 +171,7 @@ def a3_with_errors(v):
 
 @pytest.mark.parametrize(("second_ml", "left"), [(18.64, 0.0), (14.89, 0.2)])
 def test_the_same_burette_at_equal_volumes_leaves_no_systematic_contribution(second_ml, left):
-    # issue: the burette enters once; equal volumes cancel exactly, unequal ones leave the difference
+    # the burette enters once: equal volumes cancel exactly, unequal ones leave the difference
     quantities = [
         normal("rep", 1.0, 0.001),
         constant("m", 0.3888, "g"),
