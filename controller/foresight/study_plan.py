@@ -53,7 +53,7 @@ _SETTLING = Settling(
     stability_readings=10,
     fixed_wait_s=15.0,
 )
-#: slope-adaptive as it is commonly set: 8 mV a step, 5 to 250 uL, growing at most twofold
+#: slope-adaptive, the baseline that the others are held against: 8 mV a step, 5 to 250 uL, growing at most twofold
 _SLOPE = replace(_DOSING, policy="slope-adaptive", largest_ml=0.25, growth_limit=2.0, first_dose_ml=0.1)
 
 MODEL_GUIDED = Strategy(name="model-guided, lag-corrected", dosing=_DOSING, settling=_SETTLING)
@@ -70,7 +70,7 @@ BASELINE = Strategy(
     settling=replace(_SETTLING, rule="stability-limit"),
     with_record=False,
 )
-#: 20 mV/min, 5 to 30 s (common practice)
+#: a laxer baseline: 20 mV/min, 5 to 30 s
 LAX_BASELINE = Strategy(
     name="slope-adaptive, 20 mV/min",
     dosing=_SLOPE,
