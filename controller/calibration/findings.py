@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -46,15 +47,22 @@ class Finding:
         return self.standard_uncertainty is not None and nearest < 2.0 * self.standard_uncertainty
 
     @property
+    def _value_text(self) -> str:
+        """The value with the digits of its standard uncertainty, which is never written after +/- (GUM 7.2.2)."""
+        u = self.standard_uncertainty
+        if u is None or not (math.isfinite(u) and u > 0.0):
+            return f"{self.value:.4g} {self.unit}".rstrip()
+        places = max(0, 1 - math.floor(math.log10(u)))
+        return f"{self.value:.{places}f} {self.unit}".rstrip() + f" (u = {u:.{places}f})"
+
+    @property
     def text(self) -> str:
         """The finding in words."""
         word = "passed" if self.passed else "failed"
-        unsure = f" +/- {self.standard_uncertainty:.2g}" if self.standard_uncertainty is not None else ""
         near = "; the limit lies within its uncertainty" if self.close else ""
         span = f"up to {self.high:g}" if self.low is None else f"{self.low:g} to {self.high:g}"
         allowed = f"{span} {self.unit}".rstrip()
-        value = f"{self.value:.4g}{unsure} {self.unit}".rstrip()
-        return f"{self.quantity} {value}, allowed {allowed} ({self.limits}): {word}{near}"
+        return f"{self.quantity} {self._value_text}, allowed {allowed} ({self.limits}): {word}{near}"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

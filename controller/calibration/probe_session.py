@@ -123,7 +123,7 @@ class _Session:
         if found.standard_uncertainty >= iso.standard_uncertainty:
             return iso
         self.warnings.append(
-            f"isopotential pH {found.ph:.2f} +/- {found.standard_uncertainty:.2f} from buffers at two temperatures"
+            f"isopotential pH {found.ph:.2f} (u = {found.standard_uncertainty:.2f}) from buffers at two temperatures"
         )
         return found
 

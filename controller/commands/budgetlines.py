@@ -20,7 +20,7 @@ def budget_rows(budget: dict[str, Any]) -> list[tuple[str, ...]]:
             str(row["quantity"]),
             _figure(row["value"], 7),
             _figure(row["standard_uncertainty"], 3),
-            str(row["unit"]),
+            "" if row["sensitivity"] is None else str(row["unit"]),  # one cause of several quantities has no unit
             _distribution(row),
             _figure(row["sensitivity"], 4),
             _figure(row["contribution"] + 0.0, 3),

@@ -18,9 +18,9 @@ def calibration_lines(result: dict[str, Any]) -> list[str]:
     line = found.get("line")
     if line is not None:
         lines.append(
-            f"slope {line['slope_percent']:.2f} +/- {line['slope_percent_standard_uncertainty']:.2f} % of the ideal, "
-            f"offset {line['offset_mv']:+.2f} +/- {line['offset_standard_uncertainty_mv']:.2f} mV at pH 7, "
-            f"{line['temperature_c']:.1f} °C"
+            f"slope {line['slope_percent']:.2f} % of the ideal "
+            f"(u = {line['slope_percent_standard_uncertainty']:.2f} %), offset {line['offset_mv']:+.2f} mV at pH 7 "
+            f"(u = {line['offset_standard_uncertainty_mv']:.2f} mV), {line['temperature_c']:.1f} °C"
         )
     lot = found.get("lot")
     if lot is not None:

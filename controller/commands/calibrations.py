@@ -20,6 +20,10 @@ OF_THE_PROBE = ("probe", "response")
 #: newest runs of a method whose lag is shown
 MOST_RUNS = 30
 
+#: decimal places of a figure in the history, by its unit; others have `_PLACES_OF_OTHERS`
+_PLACES = {"%": 2, "mV": 2, "s": 2, "mL": 4, "mol/L": 6}
+_PLACES_OF_OTHERS = 5
+
 
 def list_calibrations(given: argparse.Namespace) -> int:
     """List every calibration: in force, accepted before, not accepted, broken off."""
@@ -60,7 +64,8 @@ def history(given: argparse.Namespace) -> int:
     for subject, figures in told.items():
         print(printable(subject))
         for figure in figures:
-            print(f"  {figure['quantity']}: " + ", ".join(f"{on} {value:.6g}" for on, value in figure["entries"]))
+            head = f"  {figure['quantity']}" + (f" ({figure['unit']}): " if figure["unit"] else ": ")
+            print(head + ", ".join(f"{on} {_rounded(value, figure['unit'])}" for on, value in figure["entries"]))
             if figure["text"]:
                 print(f"    {figure['text']}")
     if not told:
@@ -97,7 +102,7 @@ def followed(entries: list[Calibration]) -> list[dict[str, Any]]:
     for quantity, unit, path in FOLLOWED[entries[0].kind]:
         series = [(one.on, value) for one in entries if (value := figure_of(one, path)) is not None]
         if series:
-            told.append({"quantity": quantity, "unit": unit, "entries": series, "text": _trend_text(series)})
+            told.append({"quantity": quantity, "unit": unit, "entries": series, "text": _trend_text(series, unit)})
     if entries[0].kind in OF_THE_PROBE:
         told += learned_figures(entries[0].path.parent, entries[0].subject)
         _with_warnings(told, entries[0].path.parent, entries[0].subject)
@@ -115,7 +120,7 @@ def learned_figures(folder: Path, probe: str) -> list[dict[str, Any]]:
                 "quantity": f"fast lag in runs of {method}",
                 "unit": "s",
                 "entries": series,
-                "text": _trend_text(series),
+                "text": _trend_text(series, "s"),
             }
         )
     return told
@@ -128,7 +133,12 @@ def _with_warnings(figures: list[dict[str, Any]], folder: Path, probe: str) -> N
         figures[-1]["text"] = "; ".join(text for text in texts if text)
 
 
-def _trend_text(series: list[tuple[str, float]]) -> str:
+def _rounded(value: float, unit: str) -> str:
+    """A figure with no more places than it can mean anything in."""
+    return f"{round(value, _PLACES.get(unit, _PLACES_OF_OTHERS)):.7g}"
+
+
+def _trend_text(series: list[tuple[str, float]], unit: str) -> str:
     from controller.evaluation.control import trend
     from controller.evaluation.statistics import StatisticsError
 
@@ -139,6 +149,8 @@ def _trend_text(series: list[tuple[str, float]]) -> str:
         line = trend(days, [value for _, value in series])
     except (StatisticsError, ValueError):
         return ""
+    of_unit = f" {unit}" if unit else ""
     return (
-        f"change {30.0 * line.change_per_day:+.3g} a month, {'significant' if line.significant else 'not significant'}"
+        f"change {30.0 * line.change_per_day:+.3g}{of_unit} a month, "
+        f"{'significant' if line.significant else 'not significant'}"
     )

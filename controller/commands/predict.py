@@ -143,6 +143,8 @@ def prediction_lines(predicted: Prediction) -> list[str]:
         lines.append(f"end point {number}: {_range(volume, 3)} mL, standard uncertainty {_small(uncertainty)} mL")
     if not predicted.volume_ml:
         lines.append("no end point was found in any of them")
+    elif predicted.assumption is not None:
+        lines.append(predicted.assumption)
     lines += [
         f"doses: {_range(predicted.doses, 0)}",
         f"duration: {_range(_minutes(predicted.duration_s), 1)} min",

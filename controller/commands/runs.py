@@ -167,8 +167,13 @@ def mean(given: argparse.Namespace) -> int:
     """Give mean, scatter, Grubbs' test and budget of runs on one sample, named or by its id."""
     from controller.commands.summary import summary_lines, summary_of_records
 
-    paths = _of_sample(given.run[0], given) if len(given.run) == 1 else []
+    paths, left_out = _of_sample(given.run[0], given) if len(given.run) == 1 else ([], [])
     summary = summary_of_records(paths or [record_path(name, given) for name in given.run])
+    if left_out:
+        say(
+            f"taken: the runs of {summarise(paths[-1])['method']}, the method used last on this sample; left out, as "
+            f"methods are not mixed: {', '.join(path.stem for path in left_out)} (name the runs to take others)"
+        )
     if given.json:
         print_json(summary)
         return DONE
@@ -177,15 +182,16 @@ def mean(given: argparse.Namespace) -> int:
     return DONE
 
 
-def _of_sample(sample_id: str, given: argparse.Namespace) -> list[Path]:
-    """Return the completed runs on a sample by the method that was used last."""
+def _of_sample(sample_id: str, given: argparse.Namespace) -> tuple[list[Path], list[Path]]:
+    """Return the completed runs on a sample by the method that was used last, and those by other methods."""
     found = [(path, summarise(path)) for path in list_records(_lab(given).runs)]
     mine = [
         (path, one)
         for path, one in found
         if one["readable"] and one["sample_id"] == sample_id and one["outcome"] == "completed" and one["result"]
     ]
-    return [path for path, one in mine if one["method"] == mine[-1][1]["method"]]
+    last = mine[-1][1]["method"] if mine else ""
+    return [path for path, one in mine if one["method"] == last], [path for path, one in mine if one["method"] != last]
 
 
 def record_path(named: str, given: argparse.Namespace) -> Path:

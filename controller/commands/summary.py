@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import Any
 
 from configs.errors import HalfdropError
-from controller.commands.output import amount_text
+from controller.commands.output import amount_text, decimals
 from controller.planning.amounts import amount_of_replicates
 from controller.records.encoding import plan_from_json
 from controller.records.record import printable, read_record
@@ -43,12 +43,15 @@ def summary_of_records(paths: Sequence[Path]) -> dict[str, Any]:
 def summary_lines(summary: dict[str, Any]) -> list[str]:
     """Return the mean of replicates for people."""
     amount = summary["result"]
-    lines = [f"sample {summary['sample_id']}: {summary['count']} replicates", f"mean: {amount_text(amount)}"]
+    count = summary["count"]
+    said = "1 run, no scatter" if count == 1 else f"{count} replicates"
+    lines = [f"sample {summary['sample_id']}: {said}", f"mean: {amount_text(amount)}"]
     if summary["standard_deviation"] is not None:
-        low, high = summary["confidence_interval"]
+        places = decimals(summary["standard_deviation"])
+        low, high = (f"{end:.{places}f}" for end in summary["confidence_interval"])
         lines.append(
             f"s = {summary['standard_deviation']:.3g} {amount['unit']}, RSD = {summary['rsd_percent']:.3g} %, "
-            f"95 % confidence interval of the mean {low:.5g} to {high:.5g} {amount['unit']} (scatter alone)"
+            f"95 % confidence interval of the mean {low} to {high} {amount['unit']} (scatter alone)"
         )
     test = summary["grubbs"]
     if test is not None:

@@ -58,6 +58,7 @@ class Prediction:
         found: share of the runs that found every expected end point.
         problems: reasons for which the run would be refused at its start.
         warnings: what else a person should know.
+        assumption: what the stated uncertainties rest on; None: nothing that is not in the plan.
     """
 
     runs: int
@@ -72,6 +73,7 @@ class Prediction:
     curve: tuple[CurvePoint, ...]
     problems: tuple[str, ...]
     warnings: tuple[str, ...]
+    assumption: str | None = None
 
     def to_json(self) -> dict[str, Any]:
         """Return the prediction as plain data."""
@@ -90,6 +92,7 @@ class Prediction:
             "curve": [{"volume_ml": one.volume_ml, "ph": one.ph.to_json()} for one in self.curve],
             "problems": list(self.problems),
             "warnings": list(self.warnings),
+            "assumption": self.assumption,
         }
 
 
@@ -189,6 +192,21 @@ def _predicted(
         curve=curve,
         problems=problems,
         warnings=(*start_warnings(plan), *told),
+        assumption=_assumption(plan),
+    )
+
+
+def _assumption(plan: RunPlan) -> str | None:
+    """Say that the worlds hold the analyte alone; a standard that was weighed in does, a sample seldom.
+
+    The volume at a set pH is interpolated, whatever is in the sample: nothing to be said there.
+    """
+    analyte, report = plan.chemistry.analyte, plan.report_as
+    if analyte is None or plan.end_points.at_ph is not None or (report is not None and report.quantity == "titrant"):
+        return None
+    return (
+        f"the sample is taken to hold no acid or base but {analyte.name}; others, even a few per cent, widen the "
+        "uncertainty: what the run states counts"
     )
 
 

@@ -93,6 +93,8 @@ def blank_lot(
     )
     word = "not detectable: 0 mL" if not found.detectable else f"{found.mean_ml:.4f} mL"
     spread = "" if found.standard_deviation_ml is None else f", s = {found.standard_deviation_ml:.4f} mL"
+    if not found.detectable:  # what lies below the detection limit counts as 0: a scatter of zeros says nothing
+        spread = f", each below {limit_ml:.4f} mL"
     text = (
         f"blank {lot_id} at {end_point_words(end_point_ph)}: {word}, u = {found.standard_uncertainty_ml:.4f} mL, "
         f"n = {found.count}{spread}"
@@ -180,9 +182,10 @@ def response_record(
         found.slow_standard_uncertainty_s / lag.slow_s,
     )
     note = (
-        f"bulk {lag.bulk_s:.2f} s, film {lag.film_s:.2f} s, slow layer {lag.slow_s:.0f} +/- "
-        f"{found.slow_standard_uncertainty_s:.0f} s with a share of {100 * lag.slow_share:.2f} +/- "
-        f"{100 * found.share_standard_uncertainty:.2f} % (chi-square {found.chi_square:.2f}, {found.readings} readings)"
+        f"bulk {lag.bulk_s:.2f} s, film {lag.film_s:.2f} s, slow layer {lag.slow_s:.0f} s "
+        f"(u = {found.slow_standard_uncertainty_s:.0f} s) with a share of {100 * lag.slow_share:.2f} % "
+        f"(u = {100 * found.share_standard_uncertainty:.2f} %; chi-square {found.chi_square:.2f}, "
+        f"{found.readings} readings)"
     )
     return SettledLot(
         plan=plan,

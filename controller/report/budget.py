@@ -57,7 +57,7 @@ def _row(row: dict[str, Any], amount: dict[str, Any]) -> tuple[str, ...]:
         str(row.get("quantity") or row.get("name")),
         value,
         u,
-        str(row.get("unit") or ""),
+        DASH if sensitivity is None else str(row.get("unit") or ""),  # one cause of several quantities has no unit
         str(row.get("distribution") or DASH),
         "∞" if freedom is None or freedom >= _MANY_DEGREES else f"{freedom:.3g}",
         DASH if sensitivity is None else number(float(f"{sensitivity:.3g}")),

@@ -11,7 +11,7 @@ import pytest
 from configs.errors import HalfdropError
 from configs.settings import shipped_bench, shipped_method
 from controller.cli import main
-from controller.commands.predict import is_solution_file
+from controller.commands.predict import is_solution_file, prediction_lines
 from controller.foresight.expectation import expected_world, vessel_of_plan
 from controller.foresight.expected_trouble import PlacedRefill, jump_mv, jump_warning, plan_problems
 from controller.foresight.prediction import coverage_of, predict_run
@@ -52,6 +52,16 @@ def test_prediction_brackets_what_is_expected():
     assert 10 < predicted.doses.lowest <= predicted.doses.median <= predicted.doses.highest < 60
     assert predicted.titrant_ml.lowest > volume.lowest
     assert predicted.problems == ()
+
+
+def test_a_prediction_says_what_the_sample_is_taken_to_hold():
+    # the drawn worlds hold the analyte alone; the simulated juice's citric acid doubles the uncertainty that runs state
+    [told] = [line for line in prediction_lines(predict_run(plan_of(), runs=2)) if "taken to hold" in line]
+    assert "no acid or base but malic acid" in told
+    assert "uncertainty" in told
+    standard = plan_of("standardise-sodium-hydroxide", mass_g=0.15)  # weighed in: it is what it says
+    assert predict_run(standard, runs=2).assumption is None
+    assert predict_run(plan_of("juice-acidity-to-ph"), runs=2).assumption is None  # interpolated, whatever is in it
 
 
 def test_prediction_is_a_function_of_plan_and_seed():

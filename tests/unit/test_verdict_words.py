@@ -31,3 +31,20 @@ def test_a_blank_tells_its_volume():
         "not detectable: 0 mL" in line
         for line in calibration_lines({"calibration": {**found, "detectable": False}, "reason": None})
     )
+
+
+def test_a_standard_uncertainty_is_never_written_after_plus_minus():
+    # GUM (JCGM 100:2008) 7.2.2, note: +/- reads as an interval of high confidence; the value has its uncertainty's digits
+    made = Finding(
+        limits="house limits", quantity="error", value=0.01063, low=-0.05, high=0.05, unit="pH",
+        standard_uncertainty=0.0084,
+    )  # fmt: skip
+    assert made.text == "error 0.0106 pH (u = 0.0084), allowed -0.05 to 0.05 pH (house limits): passed"
+    small = Finding(
+        limits="house limits", quantity="error", value=0.01373, low=-30, high=30, unit="µL", standard_uncertainty=0.54
+    )
+    assert small.text.startswith("error 0.01 µL (u = 0.54), allowed")
+    wide = Finding(
+        limits="house limits", quantity="error", value=123.4, low=-30, high=30, unit="µL", standard_uncertainty=21.0
+    )
+    assert wide.text.startswith("error 123 µL (u = 21), allowed")
