@@ -27,110 +27,43 @@ import sys
 import tempfile
 import traceback
 from collections import Counter
-from collections.abc import Callable
 from concurrent.futures import ProcessPoolExecutor
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from controller.foresight.study_plan import BASELINE, EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD, Strategy
 from controller.journal import Journal
 from controller.records.brokenrun import read_broken
 from controller.records.record import read_record, record_of, verify, verify_bytes
 from controller.records.reopening import whole_lines
 from controller.replay import replay
 from controller.runner import run
-from controller.running.execution import Devices
 from controller.running.stopping import StopSwitch
-from controller.titration.actions import Command
 from controller.titration.core import titrate
-from controller.titration.plan import RunPlan
 from drivers.link import Link
-from simulators.bench import VirtualBench
-from simulators.nominal import NominalBench, NominalCase, nominal_bench
-from simulators.solution_mixture import Mixture
 
-STRATEGIES = (MODEL_GUIDED, WITHOUT_RECORD, FIXED_WAIT, BASELINE, EQUAL_VOLUMES)
-CASES: tuple[NominalCase, ...] = ("acetic", "malic", "strong-acid", "phosphoric", "dilute-acid")
 #: actions with which something leaves to the pump
 MOVING = (b'"action":"dose"', b'"action":"refill"', b'"action":"prime"')
 MESSAGES = 6
 #: gone on with; the command was over before the message; the closing line was whole
 FINE = {"sound", "ended before", "closed"}
-#: short runs: little sample, few readings a point
-SAMPLE_SHARE = 0.15
-READING_INTERVAL_S, LONGEST_S, FIXED_WAIT_S = 3.0, 12.0, 9.0
 #: so many crash points of a run besides the first are decided again from the first line to the last; each is rebuilt
 REPLAYED_EVERY = 10
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Setting:
-    """One run of the campaign."""
-
-    number: int
-    case: NominalCase
-    strategy: Strategy
-    syringe_ml: float | None = None
-    at_ph: float | None = None
-    commands: tuple[tuple[float, str, float | None], ...] = ()  # run time, name, volume mL
-
-
-def setting(number: int) -> Setting:
-    """Return a run: cases, policies and settling rules in turn, every third with refills, some with commands."""
-    at_ph = 7.0 if number % 5 == 4 else None
-    case = CASES[number % len(CASES)] if at_ph is None else ("acetic", "malic")[number % 2]
-    commands: tuple[tuple[float, str, float | None], ...] = ()
-    if number % 4 == 1:
-        commands = ((30.0, "pause", None), (50.0, "go-on", None))
-    if number % 4 == 2:
-        commands = ((40.0, "dose", 0.2), (60.0, "note", None))
-    if number % 7 == 6:
-        commands = ((70.0, "stop", None),)
-    return Setting(
-        number=number,
-        case=case,
-        strategy=STRATEGIES[(number // len(CASES) + number) % len(STRATEGIES)],
-        syringe_ml=0.4 if number % 3 == 0 else None,
-        at_ph=at_ph,
-        commands=commands,
-    )
-
-
-def bench_module() -> Any:
-    """Return the test module with the bench that survives its program."""
-    path = Path(__file__).resolve().parents[1] / "bench" / "test_resume_crash.py"
-    spec = importlib.util.spec_from_file_location("resume_crash", path)
+def loaded(name: str, *folders_and_file: str) -> Any:
+    """Return a module of the tests, which are no package."""
+    path = Path(__file__).resolve().parents[1].joinpath(*folders_and_file)
+    spec = importlib.util.spec_from_file_location(name, path)
     assert spec is not None
     assert spec.loader is not None
     module = importlib.util.module_from_spec(spec)
-    sys.modules["resume_crash"] = module
+    sys.modules[name] = module
     spec.loader.exec_module(module)
     return module
 
 
-class Commands:
-    """The operator's commands of a run, at their times."""
-
-    def __init__(self, wanted: tuple[tuple[float, str, float | None], ...], now_s: Callable[[], float]) -> None:
-        self._left, self._now_s, self._began_s = list(wanted), now_s, now_s()
-
-    def waiting(self) -> bool:
-        """True if the next command's time has come."""
-        return bool(self._left) and self._now_s() - self._began_s >= self._left[0][0]
-
-    def take(self) -> Command | None:
-        """Return the next command."""
-        if not self.waiting():
-            return None
-        _, name, volume_ml = self._left.pop(0)
-        text = "by hand" if name == "note" else None
-        return Command(
-            name=name,
-            at_s=round(self._now_s() - self._began_s, 6),
-            text=text,
-            volume_ml=volume_ml,
-        )
+RUNS = loaded("crash_runs", "faults", "crash_runs.py")
 
 
 @dataclass
@@ -138,7 +71,7 @@ class Tried:
     """A run that is carried out once and dies at every moment in a child of its own."""
 
     crash: Any
-    wanted: Setting
+    wanted: Any
     bench: Any
     folder: Path
     every: int
@@ -166,8 +99,8 @@ class Tried:
         Link.send = watched  # type: ignore[method-assign,assignment]
         try:
             with self.bench.devices(stop) as devices:
-                plan = plan_of(self.wanted, self.bench, devices)
-                commands = Commands(self.wanted.commands, self.bench.clock.now_s)
+                plan = RUNS.plan_of(self.wanted, self.bench, devices)
+                commands = RUNS.Commands(self.wanted.commands, self.bench.clock.now_s)
                 journal = Journal(self.sink, self.bench.clock)
                 run(plan, titrate(plan), devices, journal, clock=self.bench.clock, stop=stop, commands=commands)
         except self.crash.Died:
@@ -247,7 +180,7 @@ class Tried:
         if verify(path).state == "intact":
             return "closed"
         goes_on = tuple(one for one in self.wanted.commands if one[1] == "go-on")  # a pause outlives the program
-        commands = Commands(goes_on, self.bench.clock.now_s)
+        commands = RUNS.Commands(goes_on, self.bench.clock.now_s)
         ended = self.bench.resume(path, gap_s=gap_s, commands=commands)
         steps = (ended.steps, self.crash.dose_steps(path), self.bench.steps_in_truth())
         state = verify(path)
@@ -287,57 +220,6 @@ def _last_before_barrier(line: bytes) -> bool:
     return any(kind in line for kind in (*MOVING, b'"action":"ask"', b'"action":"finish"'))
 
 
-def plan_of(wanted: Setting, bench: Any, devices: Devices) -> RunPlan:
-    """Return the plan of a setting."""
-    plan: RunPlan = bench.plan(devices)
-    expected_ml = SAMPLE_SHARE * (plan.chemistry.expected_equivalence_volume_ml or 0.0)
-    plan = replace(
-        plan,
-        probe=replace(plan.probe, reading_interval_s=READING_INTERVAL_S),
-        settling=replace(
-            plan.settling,
-            longest_s=LONGEST_S,
-            fixed_wait_s=FIXED_WAIT_S,
-            stability_readings=3,
-            stability_limit_mv_min=20.0,
-        ),
-        dosing=replace(plan.dosing, largest_ml=0.25, equal_volume_ml=0.1, first_dose_ml=0.1),
-        chemistry=replace(plan.chemistry, expected_equivalence_volume_ml=expected_ml),
-        limits=replace(plan.limits, overrun_ml=0.3),
-    )
-    if wanted.at_ph is not None:
-        points = replace(plan.end_points, at_ph=wanted.at_ph, expected=1)
-        plan = replace(plan, kind="end-point-ph", end_points=points)
-    return plan
-
-
-def bench_of(crash: Any, wanted: Setting) -> Any:
-    """Return the context of the bench of a setting."""
-    nominal = little_sample(nominal_bench(wanted.case, wanted.number), wanted.syringe_ml)
-    return crash.surviving(f"crash-{wanted.number}", strategy=wanted.strategy, nominal=nominal)
-
-
-def little_sample(nominal: NominalBench, syringe_ml: float | None) -> NominalBench:
-    """Return the bench with less in its beaker and, where asked for, a small syringe and a reservoir."""
-    truth, bench = nominal.bench.truth, nominal.bench
-    syringe = truth.syringe
-    if syringe_ml is not None:
-        syringe = replace(syringe, syringe_ml=syringe_ml, contents_ml=syringe_ml, reservoir_ml=100.0)
-    sample = Mixture(
-        weak=tuple(
-            replace(one, concentration_mol_l=SAMPLE_SHARE * one.concentration_mol_l) for one in bench.sample.weak
-        ),
-        ions=tuple(
-            replace(one, concentration_mol_l=SAMPLE_SHARE * one.concentration_mol_l) for one in bench.sample.ions
-        ),
-    )
-    return replace(
-        nominal,
-        bench=VirtualBench(replace(truth, syringe=syringe), sample=sample, titrant=bench.titrant, seed=nominal.seed),
-        true_equivalence_ml=tuple(SAMPLE_SHARE * one for one in nominal.true_equivalence_ml),
-    )
-
-
 def parsed_at_every_byte(data: bytes, path: Path) -> int:
     """Cut the record at every byte behind its header: exactly the whole lines before the cut may count.
 
@@ -369,18 +251,18 @@ def parsed_at_every_byte(data: bytes, path: Path) -> int:
 
 def one(number: int, every: int = 1) -> tuple[int, int, int, Counter[str]]:
     """Carry out one run; return its number, lines, bytes cut, and what came of its crash points."""
-    crash = bench_module()
-    wanted = setting(number)
+    crash = loaded("resume_crash", "bench", "test_resume_crash.py")  # the bench that survives its program
+    wanted = RUNS.setting(number)
     with (
         tempfile.TemporaryDirectory() as folder,
-        bench_of(crash, wanted) as bench,
+        RUNS.bench_of(crash, wanted) as bench,
     ):  # everything lazy is loaded here once
         first = Tried(crash=crash, wanted=wanted, bench=bench, folder=Path(folder), every=sys.maxsize)
         path = Path(folder) / "run.jsonl"
         whole = first.carry_out()
         path.write_bytes(whole[:-1000])
         read_broken(path)
-    with tempfile.TemporaryDirectory() as folder, bench_of(crash, wanted) as bench:
+    with tempfile.TemporaryDirectory() as folder, RUNS.bench_of(crash, wanted) as bench:
         tried = Tried(crash=crash, wanted=wanted, bench=bench, folder=Path(folder), every=every)
         tried.without_number = not json.loads(whole.splitlines()[-1])["closing"]["result"]["end_points"]
         data = tried.carry_out()
@@ -400,7 +282,7 @@ def main() -> int:
     found, cuts = Counter[str](), 0
     with ProcessPoolExecutor(max_workers=given.jobs) as pool:
         for number, lines, cut, told in pool.map(one, numbers, [given.every] * len(numbers)):
-            wanted = setting(number)
+            wanted = RUNS.setting(number)
             kind = f"{wanted.case}, {wanted.strategy.name}" + (
                 "" if wanted.at_ph is None else f", to pH {wanted.at_ph}"
             )
