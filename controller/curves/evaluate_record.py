@@ -138,6 +138,7 @@ def _hold_against_run(
         slowness=None,  # learned while it ran; what it cost is in the run's own uncertainty, below
         precision_ml=pump_precision_ml(plan),
         offset_sd_ph=offset_sd_ph(plan),
+        carbonate=plan.looks_for_carbonate,
     )
     result["end_points"] = audit.end_points
     result["warnings"] += audit.warnings

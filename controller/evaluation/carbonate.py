@@ -15,7 +15,7 @@ was in the water of the sample counts as if it came with the titrant.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -99,10 +99,35 @@ def carbonate_gap(curve: Curve, *, end_point_ml: float) -> CarbonateGap | None:
     )
 
 
+def carbonate_for_sure(curve: Curve, *, end_point_ml: float) -> CarbonateGap | None:
+    """Return the gap where there is more than its uncertainty explains, else None."""
+    try:
+        with np.errstate(all="ignore"):
+            found = carbonate_gap(curve, end_point_ml=end_point_ml)
+    except np.linalg.LinAlgError:  # numbers that no formula likes
+        return None
+    return found if found is not None and found.significant else None
+
+
+def without_carbonate(curve: Curve, found: CarbonateGap, *, end_point_ml: float) -> Curve:
+    """Return the curve as a titrant of the same alkalinity without carbonate would give it.
+
+    With f = h - oh: V (C + f - c q(pH)) = n - V0 f = V' (C + f) at the same pH.
+    """
+    c = curve.titrant_concentration_mol_l
+    if curve.ph is None or c is None:
+        return curve
+    gamma = _coefficient(curve, _ionic_strength(curve, end_point_ml))
+    charge, _ = _carbonate_charge(curve, curve.ph, gamma)
+    free = (np.power(10.0, -curve.ph) - np.power(10.0, curve.ph - curve.pkw)) / gamma
+    acted_ml = curve.volume_ml * (1.0 - 0.5 * found.carbonate_share * charge * c / (c + free))
+    return replace(curve, volume_ml=np.maximum.accumulate(acted_ml))
+
+
 def _fit(curve: Curve, ph: Array, v0: float, c: float, end_point_ml: float) -> tuple[float, float, float] | None:
     """Return end of the acid branch in mL, carbonate's share of the alkalinity, and its standard uncertainty."""
     v, total = curve.volume_ml, v0 + curve.volume_ml
-    gamma = _coefficient(curve, c * np.maximum(v, end_point_ml) / total)
+    gamma = _coefficient(curve, _ionic_strength(curve, end_point_ml))
     h, oh = total * np.power(10.0, -ph) / gamma, total * np.power(10.0, ph - curve.pkw) / gamma
     charge, slope = _carbonate_charge(curve, ph, gamma)
     noise = np.hypot(signal_noise(curve), _MODEL_SD)
@@ -123,6 +148,12 @@ def _fit(curve: Curve, ph: Array, v0: float, c: float, end_point_ml: float) -> t
         return None
     covariance = np.linalg.inv(design.T @ design) * max(1.0, chi_square)
     return float(x[0]), share, 2.0 * math.sqrt(float(covariance[3, 3]))
+
+
+def _ionic_strength(curve: Curve, end_point_ml: float) -> Array:
+    """Of a strong acid with a strong base at each point, mol/L: the acid's up to the end point, then the base's."""
+    v, v0 = curve.volume_ml, float(curve.initial_volume_ml or 0.0)
+    return np.asarray(float(curve.titrant_concentration_mol_l or 0.0) * np.maximum(v, end_point_ml) / (v0 + v))
 
 
 def _coefficient(curve: Curve, ionic_strength_mol_l: Array) -> Array:

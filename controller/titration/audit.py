@@ -13,6 +13,7 @@ from itertools import pairwise
 from typing import Any
 
 from controller.evaluation.agreement import COVERAGE_FACTOR
+from controller.evaluation.carbonate import carbonate_for_sure, without_carbonate
 from controller.evaluation.contradiction import LARGEST_OF_STATED, believed, misfit
 from controller.evaluation.curve import Curve
 from controller.evaluation.estimate import Estimate
@@ -67,6 +68,7 @@ def audited(
     precision_ml: float,
     offset_sd_ph: float | None = None,
     lost_ml: float = 0.0,
+    carbonate: bool = False,
 ) -> Audit:
     """Look at every end point once more.
 
@@ -79,10 +81,16 @@ def audited(
         precision_ml: of the pump.
         offset_sd_ph: standard uncertainty of the calibration's offset, units of pH, where it is known.
         lost_ml: titrant that points not in the curve do not account for.
+        carbonate: the run looks for it: what of it is found is no mishap, and the points are held against a titrant
+            without it; an end point still owns what lies between it and the alkalinity's.
     """
     audit = Audit(list(end_points))
     if not audit.end_points:
         return audit
+    if carbonate:
+        near_ml = float(end_points[0]["volume_ml"])
+        gap = carbonate_for_sure(curve, end_point_ml=near_ml)
+        curve = curve if gap is None else without_carbonate(curve, gap, end_point_ml=near_ml)
     priors = known_beforehand(curve, offset_sd_ph)
     fit = fit_charge_balance(curve, priors=priors)
     slow = slowness if slowness is not None and slowness > NOTABLE_SLOWNESS else None

@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from configs.errors import HalfdropError
+from controller.evaluation.carbonate import carbonate_for_sure
 from controller.evaluation.curve import Curve
 from controller.evaluation.evaluate import evaluate
 from controller.evaluation.inverse import LARGEST_PH
@@ -163,7 +164,8 @@ def _evaluated(run: RunState) -> Evaluation | None:
 
 
 def _audited(run: RunState, evaluation: Evaluation | None) -> Audit:
-    found = [_end_point(run, one, evaluation) for one in run.watch.found]
+    apart_ml = 0.0 if evaluation is None else _branches_apart_ml(run)
+    found = [_end_point(run, one, evaluation, apart_ml) for one in run.watch.found]
     unconfirmed = [p for p in found if p["estimator"] == SHAPE_ALONE]
     if unconfirmed and len(run.points) >= FEWEST_POINTS:
         at_ml = unconfirmed[0]["volume_ml"]
@@ -179,16 +181,30 @@ def _audited(run: RunState, evaluation: Evaluation | None) -> Audit:
         precision_ml=pump_precision_ml(run.plan),
         offset_sd_ph=offset_sd_ph(run.plan),
         lost_ml=lost_among_left_out_ml(run),
+        carbonate=run.plan.looks_for_carbonate,
     )
 
 
-def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | None) -> dict[str, Any]:
+def _branches_apart_ml(run: RunState) -> float:
+    """By how much the ends of both branches lie apart where the run looks for carbonate, mL: the jump is between."""
+    if not run.plan.looks_for_carbonate or not run.watch.found:
+        return 0.0
+    gap = carbonate_for_sure(run_curve(run), end_point_ml=run.watch.found[0].volume_ml)
+    return 0.0 if gap is None else gap.gap_ml
+
+
+def _same_point_ml(volume_ml: float, sd_ml: float, apart_ml: float) -> float:
+    """How far apart the run's own end point and the evaluation's may be to be one."""
+    return SAME_POINT_SHARE * volume_ml + 5.0 * sd_ml + apart_ml
+
+
+def _end_point(run: RunState, found: FoundEndPoint, evaluation: Evaluation | None, apart_ml: float) -> dict[str, Any]:
     """The evaluation's value of a detected end point where it has one there, else the run's own."""
     volume_ml, sd_ml, estimator = found.volume_ml, found.standard_uncertainty_ml, found.estimator
     ph, potential_mv = found.ph, found.potential_mv
     for point in evaluation.end_points if evaluation is not None else ():
         coarser = point.standard_uncertainty_ml > COARSER * sd_ml and "model" in estimator
-        near = abs(point.volume_ml - found.volume_ml) <= SAME_POINT_SHARE * found.volume_ml + 5.0 * sd_ml
+        near = abs(point.volume_ml - found.volume_ml) <= _same_point_ml(found.volume_ml, sd_ml, apart_ml)
         if near and not coarser:
             volume_ml, sd_ml, estimator = point.volume_ml, point.standard_uncertainty_ml, point.estimator
             ph, potential_mv = point.ph, point.potential_mv
@@ -213,9 +229,9 @@ def position_sd_ml(run: RunState) -> float:
 
 def _unconfirmed(run: RunState, evaluation: Evaluation) -> list[str]:
     """Jumps that the evaluation sees and the run did not confirm."""
-    extra = []
+    extra, apart_ml = [], _branches_apart_ml(run)
     for point in evaluation.end_points:
-        near = SAME_POINT_SHARE * point.volume_ml + 5.0 * point.standard_uncertainty_ml
+        near = _same_point_ml(point.volume_ml, point.standard_uncertainty_ml, apart_ml)
         if all(abs(point.volume_ml - found.volume_ml) > near for found in run.watch.found):
             extra.append(
                 f"the curve shows a jump near {point.volume_ml:.3f} mL that the run did not confirm as an end point; "

@@ -281,3 +281,10 @@ class RunPlan:
     seed: int | None = None
     traceability: Traceability | None = None
     response_check: ResponseCheck | None = None
+
+    @property
+    def looks_for_carbonate(self) -> bool:
+        """A strong acid titrated with a base to well past its end point: the gap between both branches is asked for."""
+        analyte, ends = self.chemistry.analyte, self.end_points
+        strong = analyte is not None and not analyte.pka and ends.expected == 1 and ends.at_ph is None
+        return strong and not self.titrant.acid and not ends.stop_at_last
