@@ -105,7 +105,8 @@ def wrong_accounts(place: Path) -> Iterator[str]:
         data = path.read_bytes() if path.is_file() else b""
         if b'"model":"syringe pump"' not in data or b'"event":"account"' not in data:
             continue
-        from controller.records.record import read_record, verify_bytes
+        from controller.records.record import read_record
+        from controller.records.verification import verify_bytes
 
         if verify_bytes(data).state != "intact":
             continue

@@ -14,7 +14,8 @@ from itertools import islice
 from pathlib import Path
 from typing import Any
 
-from controller.records.record import NotARecordError, list_records, read_record, verify
+from controller.records.record import NotARecordError, list_records, read_record
+from controller.records.verification import verify
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -12,7 +12,8 @@ from controller.commands.lines import Lines, result_lines
 from controller.commands.output import print_json, say
 from controller.commands.runs import SUFFIX, record_path
 from controller.records.playback import play
-from controller.records.record import Record, printable, read_record, verify
+from controller.records.record import Record, printable, read_record
+from controller.records.verification import verify
 from controller.replay import Difference, Replayed
 from controller.replay import replay as decide_again
 from drivers.clock import ScaledClock

@@ -24,7 +24,7 @@ def report(given: argparse.Namespace) -> int:
     import hashlib
 
     from controller.journal import utc_text
-    from controller.records.record import verify
+    from controller.records.verification import verify
     from controller.report.contents import report_contents
     from controller.report.page import render
     from controller.report.series_of_runs import found_replicates

@@ -9,9 +9,10 @@ from pathlib import Path
 from configs.errors import HalfdropError
 from controller.commands.output import amount_text, print_json, print_table, say, volume_text
 from controller.labfolder import Lab, find_lab
-from controller.records.record import NotARecordError, Verification, list_records, printable, read_record, summarise
-from controller.records.record import verify as verify_record
+from controller.records.record import NotARecordError, list_records, printable, read_record, summarise
 from controller.records.reevaluation import AddedEvaluation, added_evaluations
+from controller.records.verification import Verification
+from controller.records.verification import verify as verify_record
 
 TYPE_CHECKING = False
 if TYPE_CHECKING:

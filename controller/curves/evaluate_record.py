@@ -18,7 +18,8 @@ from controller.evaluation.evaluate import evaluate
 from controller.evaluation.result import Evaluation
 from controller.planning.amounts import amount_of_plan
 from controller.records.encoding import plan_from_json
-from controller.records.record import Record, points, read_record, verify
+from controller.records.record import Record, points, read_record
+from controller.records.verification import verify
 from controller.titration.audit import audited
 from controller.titration.gaps import drift_over_gaps_mv
 from controller.titration.outcome import ABOUT_PKA, STRAIGHTNESS_MV

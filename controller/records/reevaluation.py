@@ -15,7 +15,8 @@ from pathlib import Path
 
 from configs.errors import HalfdropError
 from configs.version import __version__
-from controller.records.record import read_record, verify_bytes
+from controller.records.record import read_record
+from controller.records.verification import verify_bytes
 
 TYPE_CHECKING = False  # typing itself would cost a good part of the time that a listing may take
 if TYPE_CHECKING:

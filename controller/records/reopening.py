@@ -10,8 +10,8 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.journal import Clock, Journal, Sink
-from controller.records.record import verify_bytes
 from controller.records.recordfile import FileSink
+from controller.records.verification import verify_bytes
 
 
 class ReopenedSink(FileSink):

@@ -10,7 +10,8 @@ from typing import Any
 from configs.errors import HalfdropError
 from controller.journal import Clock, encode, sealed, utc_text
 from controller.lock import sync_to_disk
-from controller.records.record import NotARecordError, list_records, read_record, summarise, verify_bytes
+from controller.records.record import NotARecordError, list_records, read_record, summarise
+from controller.records.verification import verify_bytes
 
 _DAMAGED_REMEDY = (
     "Look at bench and vessel; then restore the record from a backup, or move the file out of runs/ and keep it"

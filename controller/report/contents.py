@@ -11,8 +11,9 @@ from typing import Any
 from configs.errors import HalfdropError
 from configs.version import __version__
 from controller.curves.evaluate_record import evaluate_points
-from controller.records.record import Record, verify
+from controller.records.record import Record
 from controller.records.reevaluation import added_evaluations
+from controller.records.verification import verify
 from controller.report import tables
 from controller.report.budget import budget_table
 from controller.report.calibration_part import calibration_part

@@ -11,7 +11,8 @@ from pathlib import Path
 import pytest
 
 from controller.cli import main
-from controller.records.record import list_records, read_record, verify
+from controller.records.record import list_records, read_record
+from controller.records.verification import verify
 
 README = Path(__file__).resolve().parents[2] / "README.md"
 Run = Callable[..., tuple[int, str, str]]

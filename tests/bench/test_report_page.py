@@ -18,7 +18,8 @@ from pathlib import Path
 import pytest
 
 from controller.cli import main
-from controller.records.record import list_records, read_record, verify
+from controller.records.record import list_records, read_record
+from controller.records.verification import verify
 from controller.report.contents import report_contents
 from controller.report.export import data_package, tables
 from controller.report.page import render

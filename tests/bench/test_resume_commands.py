@@ -10,7 +10,8 @@ import pytest
 
 from controller.cli import main
 from controller.labfolder import init_lab
-from controller.records.record import read_record, verify
+from controller.records.record import read_record
+from controller.records.verification import verify
 from controller.replay import replay
 from controller.titration.actions import Decisions, Dose
 from controller.titration.core import titrate

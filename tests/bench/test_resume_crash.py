@@ -21,7 +21,8 @@ from controller.foresight.study_plan import (
 )
 from controller.journal import Journal
 from controller.records.brokenrun import read_broken
-from controller.records.record import read_record, verify
+from controller.records.record import read_record
+from controller.records.verification import verify
 from controller.replay import replay
 from controller.resuming.resume import GO_ON, GoingOn, go_on
 from controller.runner import run

@@ -14,8 +14,9 @@ import pytest
 from controller.foresight.study_plan import MODEL_GUIDED, nominal_plan
 from controller.journal import Journal
 from controller.records.encoding import plan_from_json
-from controller.records.record import points, read_record, verify
+from controller.records.record import points, read_record
 from controller.records.recordfile import FileSink
+from controller.records.verification import verify
 from controller.runner import run
 from controller.running.execution import Devices
 from controller.running.outcome import RunResult

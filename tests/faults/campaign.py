@@ -33,8 +33,8 @@ from configs.faultfile import FaultSettings, FaultsSettings
 from controller.foresight.study_plan import MODEL_GUIDED, WITHOUT_RECORD, Strategy, nominal_plan
 from controller.guard import room_ml
 from controller.journal import Journal
-from controller.records.record import verify_bytes
 from controller.records.recordfile import MemorySink
+from controller.records.verification import verify_bytes
 from controller.runner import run
 from controller.running.execution import Devices
 from controller.running.stopping import StopSwitch

@@ -34,8 +34,9 @@ from typing import Any
 
 from controller.journal import Journal
 from controller.records.brokenrun import read_broken
-from controller.records.record import read_record, record_of, verify, verify_bytes
+from controller.records.record import read_record, record_of
 from controller.records.reopening import whole_lines
+from controller.records.verification import verify, verify_bytes
 from controller.replay import replay
 from controller.runner import run
 from controller.running.stopping import StopSwitch

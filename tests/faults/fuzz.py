@@ -31,8 +31,9 @@ from configs.settings import BenchSettings, SolutionSettings, shipped_dialect
 from configs.shipped import shipped_bytes
 from controller.curves.curvefile import CurveOptions, read_curve
 from controller.journal import Journal
-from controller.records.record import read_record, verify_bytes
+from controller.records.record import read_record
 from controller.records.recordfile import MemorySink
+from controller.records.verification import verify_bytes
 from controller.titration.actions import Dose, Dosed, Read, Reading, from_entry
 from drivers import scpi_tree as tree
 from drivers.clock import ManualClock

@@ -24,7 +24,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from controller.records.record import read_record, verify
+from controller.records.record import read_record
+from controller.records.verification import verify
 from controller.replay import replay
 from drivers.clock import SystemClock
 from drivers.link import LinkSettings, open_link

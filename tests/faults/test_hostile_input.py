@@ -20,8 +20,9 @@ from configs.settings import BenchSettings, SolutionSettings
 from controller.curves.curvefile import CurveOptions, read_curve
 from controller.guard import room_ml
 from controller.journal import Journal
-from controller.records.record import printable, verify_bytes
+from controller.records.record import printable
 from controller.records.recordfile import MemorySink, new_record
+from controller.records.verification import verify_bytes
 from controller.runner import run
 from controller.running.log import LabLog
 from controller.titration.actions import Ask, Decisions, Dose, Prime, Read, Reading, Refill, Wait

@@ -16,7 +16,8 @@ from typing import Any
 import pytest
 
 from controller.labfolder import Lab
-from controller.records.record import read_record, summarise, verify
+from controller.records.record import read_record, summarise
+from controller.records.verification import verify
 from controller.running.launch import record_of, start_run
 from controller.ui.app import HalfdropApp
 from controller.ui.screens import leftopen

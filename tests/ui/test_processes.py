@@ -18,7 +18,8 @@ import pytest
 
 from controller.benchwork.work import ask_bench
 from controller.labfolder import Lab
-from controller.records.record import read_record, summarise, verify
+from controller.records.record import read_record, summarise
+from controller.records.verification import verify
 from controller.running.commandclient import running, send_command
 from controller.running.launch import RunNotStartedError, record_of, start_run
 from controller.ui.app import HalfdropApp

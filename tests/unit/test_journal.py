@@ -13,8 +13,9 @@ import pytest
 
 from configs.errors import HalfdropError
 from controller.journal import DiskFullError, Journal, RecordError, encode, utc_text
-from controller.records.record import read_record, verify, verify_bytes
+from controller.records.record import read_record
 from controller.records.recordfile import RESERVE_BYTES, FileSink, MemorySink, new_record
+from controller.records.verification import verify, verify_bytes
 from controller.titration.actions import Dose, Read, Reading
 from drivers.clock import ManualClock
 

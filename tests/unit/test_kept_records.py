@@ -14,7 +14,8 @@ from controller.curves.evaluate_record import evaluate_record
 from controller.records.encoding import plan_from_json, plan_to_json
 from controller.records.migrations import migrated
 from controller.records.playback import play
-from controller.records.record import points, read_record, verify
+from controller.records.record import points, read_record
+from controller.records.verification import verify
 from controller.replay import dialogue, plan_of_record, replay
 from controller.running.progress import Progress
 from controller.titration.plan import PLAN_SCHEMA_VERSION

@@ -22,11 +22,10 @@ from controller.records.record import (
     printable,
     read_record,
     summarise,
-    verify,
-    verify_bytes,
 )
 from controller.records.recordfile import MemorySink
 from controller.records.unclosed import UnclosedRunError, close_record, refuse_unclosed, unclosed
+from controller.records.verification import verify, verify_bytes
 from controller.report.export import data_package, neutral, tables, whole
 from controller.titration.actions import Dose, Dosed, Reading, Report
 from drivers.clock import ManualClock

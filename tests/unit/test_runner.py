@@ -13,7 +13,7 @@ import pytest
 from configs.errors import HalfdropError
 from controller.journal import DiskFullError
 from controller.planning.plancheck import StartRefusedError
-from controller.records.record import verify_bytes
+from controller.records.verification import verify_bytes
 from controller.runner import run
 from controller.running.outcome import NOT_CONFIRMED, RunFailedError, RunResult
 from controller.titration.actions import (

@@ -16,8 +16,9 @@ from controller.commands import seriesrun as command
 from controller.curves.tablefile import TableError
 from controller.labfolder import init_lab
 from controller.planning.series import Series, read_series, titrations_of
-from controller.records.record import read_record, verify
+from controller.records.record import read_record
 from controller.records.seriesrecord import read_state
+from controller.records.verification import verify
 from controller.running.outcome import RunResult
 
 

@@ -19,7 +19,8 @@ from textual.widgets import DataTable, Footer, Input
 from configs.errors import HalfdropError
 from controller.labfolder import Lab
 from controller.records.archive_index import ArchiveIndex, IndexedRun
-from controller.records.record import printable, read_record, verify
+from controller.records.record import printable, read_record
+from controller.records.verification import verify
 from controller.ui.screens.dialogs import Line, Text, printable_lines
 from controller.ui.screens.help import help_of
 from controller.ui.texts import clock_text, local_time_text
