@@ -81,7 +81,8 @@ def expected_volume_ml(plan: RunPlan) -> float:
         raise HalfdropError(
             f"the method does not say what is expected in the sample: no {missing}",
             where=f"method {plan.method_name}: analyte",
-            remedy="Set analyte.substance and analyte.expected_concentration_mol_l (or expected_equivalence_volume_ml)",
+            remedy="Set analyte.substance and analyte.expected_concentration_mol_l, or "
+            "analyte.expected_equivalence_volume_ml (a back titration needs this one: what will be left of the excess)",
         )
     return chemistry.expected_equivalence_volume_ml
 
