@@ -14,9 +14,10 @@ from controller.ui.app import HalfdropApp
 from controller.ui.screens.archive import ArchiveScreen
 from controller.ui.screens.bench import BenchScreen
 from controller.ui.screens.calibration import CalibrationsScreen
+from controller.ui.screens.comparison import CompareScreen
 from controller.ui.screens.dialogs import Choice, Line, Text
 from controller.ui.screens.lot import LotScreen
-from controller.ui.screens.record import CompareScreen, RecordScreen
+from controller.ui.screens.record import RecordScreen
 from controller.ui.screens.run import RunScreen
 from controller.ui.screens.setup import SetUpScreen
 from controller.ui.screens.welcome import WelcomeScreen

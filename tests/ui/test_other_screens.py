@@ -11,8 +11,9 @@ import pytest
 from controller.ui.app import HalfdropApp
 from controller.ui.screens.archive import ArchiveScreen
 from controller.ui.screens.bench import BenchScreen
+from controller.ui.screens.comparison import CompareScreen
 from controller.ui.screens.dialogs import Choice, Line, Text
-from controller.ui.screens.record import CompareScreen, RecordScreen
+from controller.ui.screens.record import RecordScreen
 from controller.ui.screens.welcome import WelcomeScreen
 
 SIZES = [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")]

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Sequence
 from functools import partial
 from pathlib import Path
@@ -19,10 +18,10 @@ from textual.widgets import DataTable, Footer, Input
 from configs.errors import HalfdropError
 from controller.labfolder import Lab
 from controller.records.archive_index import ArchiveIndex, IndexedRun
-from controller.records.record import printable, read_record
-from controller.records.verification import verify
-from controller.ui.screens.dialogs import Line, Text, printable_lines
+from controller.records.record import printable
+from controller.ui.screens.dialogs import Line
 from controller.ui.screens.help import help_of
+from controller.ui.screens.recordwork import verify_for, write_tables
 from controller.ui.texts import clock_text, local_time_text
 from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.titlebar import TitleBar
@@ -179,7 +178,7 @@ class ArchiveScreen(Screen[None]):
             self._chosen = record.stem
             self.notify(f"chosen: {record.stem}; choose a second one with c", markup=False)
             return
-        from controller.ui.screens.record import CompareScreen
+        from controller.ui.screens.comparison import CompareScreen
 
         first, self._chosen = self._lab.runs / f"{self._chosen}.jsonl", None
         self.app.push_screen(CompareScreen(first, record))
@@ -240,27 +239,3 @@ def _cells(one: IndexedRun) -> tuple[str, ...]:
     started = local_time_text(one.started_utc)[:16]
     amount = one.amount.split(" as ")[0].split(" (")[0]
     return started, one.sample_id, one.outcome, amount or "none", volumes or "none", one.method
-
-
-def verify_for(screen: Screen[Any], record: Path) -> None:
-    """Verify a record and show the finding; for a thread of its own."""
-    try:
-        found = verify(record)
-        text = f"{record.name}\n\n{found.state}: {found.what}"
-    except HalfdropError as error:
-        text = str(error)
-    text += "\n\nIntact means: as the program wrote it. Whoever rewrites every hash makes a new record."
-    screen.app.call_from_thread(screen.app.push_screen, Text("Is the record as it was written?", printable_lines(text)))
-
-
-def write_tables(record: Path, folder: Path) -> list[str]:
-    """Write a record's tables and their data package; return the names of the files."""
-    from controller.report.export import data_package, tables
-
-    read = read_record(record)
-    files = dict(tables(read))
-    files["datapackage.json"] = json.dumps(data_package(read, files), indent=2, ensure_ascii=False) + "\n"
-    folder.mkdir(parents=True, exist_ok=True)
-    for name, text in files.items():
-        (folder / name).write_text(text, encoding="utf-8", newline="")
-    return list(files)

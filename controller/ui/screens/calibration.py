@@ -20,9 +20,10 @@ from controller.commands.calibrations import calibration_entry, followed
 from controller.labfolder import Lab
 from controller.records.record import printable
 from controller.running.launch import record_of, start_run
-from controller.ui.screens.archive import cell_of, set_widths, verify_for
+from controller.ui.screens.archive import cell_of, set_widths
 from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
+from controller.ui.screens.recordwork import verify_for
 from controller.ui.screens.run import RunScreen
 from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.readout import Readout
