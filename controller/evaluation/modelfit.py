@@ -1,28 +1,22 @@
 """The full charge-balance fit of a curve whose substance is known.
 
-With s = +1 for a base as titrant and -1 for an acid, C its concentration, V0 all liquid at the start, q the mean number
-of protons that the substance has lost at the measured pH, z the charge of its fully protonated form:
-
-    V0 (S + c (z - q)) + s C V + (h - oh) (V0 + V) = 0
-
-is explicit in V, so no equation is solved: the amount c, the free strong-ion term S, each pKa (held to its catalogue
-value by its uncertainty), the probe's offset and slope error (both by theirs) are found by least squares on V, weighted
-with sd^2 = sd_V^2 + (dV/dpH sd_pH)^2 (the same as weights on pH with sd_pH^2 + (dpH/dV sd_V)^2), robust to single
-points.
+The balance (`chargebalance`) is explicit in V: the amount c, the free strong-ion term S, each pKa (held to its
+catalogue value by its uncertainty), the probe's offset and slope error (both by theirs) are found by least squares on
+V, weighted with sd^2 = sd_V^2 + (dV/dpH sd_pH)^2 (the same as weights on pH with sd_pH^2 + (dpH/dV sd_V)^2), robust to
+single points.
 """
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 
+from controller.evaluation.chargebalance import ChargeBalance
 from controller.evaluation.curve import Array, Curve
 from controller.evaluation.noise import signal_noise
-from simulators.activity import davies_term
 
-_LN10 = math.log(10.0)
 #: no pH is modelled better than this beside its noise
 _MODEL_SD = 0.003
 #: reduced chi-square above which the fit is not to be trusted
@@ -78,7 +72,7 @@ def fit_charge_balance(curve: Curve, *, priors: Priors | None = None) -> ModelFi
     if any(x is None for x in known) or len(curve.volume_ml) < 4:
         return None
     with np.errstate(all="ignore"):
-        return _Balance.of(curve, priors or _priors_of(curve)).run()
+        return _Fit.of(curve, priors or _priors_of(curve)).run()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -100,7 +94,8 @@ def linearised(curve: Curve, fit: ModelFit, *, priors: Priors | None = None) -> 
     """Return the linear problem about a fit of this curve with the same priors."""
     p = priors or _priors_of(curve)
     with np.errstate(all="ignore"):
-        balance = _Balance.of(curve, p)
+        fit_of = _Fit.of(curve, p)
+        balance = fit_of.balance
         strong = fit.strong_ion_mol_l - curve.counter_ion_charge * fit.amount_mol_l
         theta = np.array([fit.amount_mol_l, strong, *(fit.pka - balance.pka), fit.offset_ph, fit.slope_error])
         balance.unit = np.asarray(fit.log_coefficient)
@@ -110,7 +105,7 @@ def linearised(curve: Curve, fit: ModelFit, *, priors: Priors | None = None) -> 
         at = balance.volume(theta)
         columns = [(balance.volume(theta + np.eye(len(theta))[i] * steps[i]) - at) / steps[i] for i in free]
         slope = balance.slope(theta)
-        sd = np.hypot(balance.sd_v, slope * balance.sd_ph)
+        sd = np.hypot(fit_of.sd_v, slope * fit_of.sd_ph)
     return Linearised(
         residual=(curve.volume_ml - at) / sd,
         design=np.stack(columns, axis=1) / sd[:, None],
@@ -131,125 +126,66 @@ def _robust(residual: Array) -> Array:
 
 
 @dataclass(slots=True)
-class _Balance:
-    curve: Curve
+class _Fit:
+    """The least squares about a balance: what is known beforehand, and how well each point is known."""
+
+    balance: ChargeBalance
     priors: Priors
-    pka: Array
-    sign: float
     sd_ph: Array
     sd_v: Array
-    unit: Array = field(default_factory=lambda: np.zeros(0))
 
     @classmethod
-    def of(cls, curve: Curve, priors: Priors) -> _Balance:
-        sd_v = np.maximum(curve.volume_sd, 2e-5 * max(float(curve.volume_ml[-1]), 1e-9))
-        balance = cls(
-            curve=curve,
+    def of(cls, curve: Curve, priors: Priors) -> _Fit:
+        return cls(
+            balance=ChargeBalance.of(curve),
             priors=priors,
-            pka=np.array(curve.pka, dtype=np.float64),
-            sign=-1.0 if curve.acid_titrant else 1.0,
             sd_ph=np.hypot(signal_noise(curve), _MODEL_SD),
-            sd_v=sd_v,
+            sd_v=np.maximum(curve.volume_sd, 2e-5 * max(float(curve.volume_ml[-1]), 1e-9)),
         )
-        balance.unit = np.zeros(len(curve.volume_ml))
-        return balance
-
-    @property
-    def weak(self) -> int:
-        """Number of pKa."""
-        return len(self.pka)
-
-    def true_ph(self, theta: Array) -> Array:
-        """The pH less the probe's errors; the slope error turns about pH 7."""
-        assert self.curve.ph is not None
-        return np.asarray((self.curve.ph - theta[-2] - 7.0) / (1.0 + theta[-1]) + 7.0)
-
-    def forms(self, theta: Array, ph: Array) -> Array:
-        """Share of each form (0 to m protons lost), shape (m + 1, n); constants corrected for activity."""
-        z = self.curve.charge
-        logs = [np.zeros_like(ph)]
-        for i, pka in enumerate(self.pka + theta[2 : 2 + self.weak]):
-            after, before = (z - i - 1) ** 2, (z - i) ** 2
-            logs.append(logs[-1] + ph - (pka + self.unit * (after - before)))
-        stack = np.stack(logs) * _LN10
-        stack -= stack.max(axis=0)
-        shares = np.exp(stack)
-        return np.asarray(shares / shares.sum(axis=0))
-
-    def volume(self, theta: Array) -> Array:
-        """Titrant volume at each measured pH, mL."""
-        ph = self.true_ph(theta)
-        return self._volume(theta, ph)
-
-    def _volume(self, theta: Array, ph: Array) -> Array:
-        curve, v0 = self.curve, float(self.curve.initial_volume_ml or 0.0)
-        gamma = np.power(10.0, self.unit)
-        free = np.power(10.0, -ph) / gamma - np.power(10.0, ph - curve.pkw) / gamma
-        lost = np.arange(self.weak + 1) @ self.forms(theta, ph)
-        strong = curve.counter_ion_charge * theta[0] + theta[1]
-        charge = strong + theta[0] * (curve.charge - lost) + free
-        below = self.sign * float(curve.titrant_concentration_mol_l or 0.0) + free
-        return np.asarray(-v0 * charge / below)
-
-    def slope(self, theta: Array) -> Array:
-        """DV/dpH at each point, mL per pH."""
-        ph, step = self.true_ph(theta), 1e-4
-        return np.asarray((self._volume(theta, ph + step) - self._volume(theta, ph - step)) / (2.0 * step))
-
-    def set_activity(self, theta: Array) -> None:
-        """Recompute log10 of the coefficient of charge 1 from the composition at each point."""
-        a, curve = self.curve.debye_huckel_a, self.curve
-        if a is None:
-            return
-        ph, v0 = self.true_ph(theta), float(curve.initial_volume_ml or 0.0)
-        total = v0 + curve.volume_ml
-        charges = (curve.charge - np.arange(self.weak + 1)) ** 2
-        strong = abs(curve.counter_ion_charge * theta[0] + theta[1])
-        ionic = (charges @ self.forms(theta, ph) * abs(theta[0]) + strong) * v0 / total
-        ionic = ionic + float(curve.titrant_concentration_mol_l or 0.0) * curve.volume_ml / total
-        ionic = 0.5 * (ionic + np.power(10.0, -ph) + np.power(10.0, ph - curve.pkw))
-        self.unit = np.array([-a * davies_term(max(float(i), 0.0)) for i in ionic])
 
     def residuals(self, theta: Array, weight: Array) -> Array:
         """Weighted misfit in V, followed by the misfit to what is known beforehand."""
-        misfit = _robust((self.volume(theta) - self.curve.volume_ml) * weight)
+        balance, curve = self.balance, self.balance.curve
+        misfit = _robust((balance.volume(theta) - curve.volume_ml) * weight)
         p = self.priors
-        prior = [*(theta[2 : 2 + self.weak] / p.pka_sd), theta[-2] / p.offset_sd_ph, theta[-1] / p.slope_sd]
+        prior = [*(theta[2 : 2 + balance.weak] / p.pka_sd), theta[-2] / p.offset_sd_ph, theta[-1] / p.slope_sd]
         return np.concatenate([np.where(np.isfinite(misfit), misfit, 1e6), prior])
 
     def start(self) -> Array:
         """Amount and strong-ion term by linear least squares at the catalogue's constants."""
-        theta = np.zeros(4 + self.weak)
-        v0, c = float(self.curve.initial_volume_ml or 0.0), float(self.curve.titrant_concentration_mol_l or 0.0)
-        theta[0] = c * float(self.curve.volume_ml[-1]) / v0 / 2.0 if self.weak else 0.0
+        balance, curve = self.balance, self.balance.curve
+        theta = np.zeros(4 + balance.weak)
+        v0, c = float(curve.initial_volume_ml or 0.0), float(curve.titrant_concentration_mol_l or 0.0)
+        theta[0] = c * float(curve.volume_ml[-1]) / v0 / 2.0 if balance.weak else 0.0
         for _ in range(2):
-            self.set_activity(theta)
+            balance.set_activity(theta)
             basis = []
             for i in range(2):
                 unit = np.zeros_like(theta)
                 unit[i] = 1.0
-                basis.append(self.volume(unit) - self.volume(np.zeros_like(theta)))
-            offset = self.volume(np.zeros_like(theta))
-            columns = np.stack(basis if self.weak else basis[1:], axis=1)
+                basis.append(balance.volume(unit) - balance.volume(np.zeros_like(theta)))
+            offset = balance.volume(np.zeros_like(theta))
+            columns = np.stack(basis if balance.weak else basis[1:], axis=1)
             good = np.isfinite(columns).all(axis=1) & np.isfinite(offset)
-            solved = np.linalg.lstsq(columns[good], (self.curve.volume_ml - offset)[good], rcond=None)[0]
-            theta[(0 if self.weak else 1) : 2] = solved
+            solved = np.linalg.lstsq(columns[good], (curve.volume_ml - offset)[good], rcond=None)[0]
+            theta[(0 if balance.weak else 1) : 2] = solved
         return theta
 
     def run(self) -> ModelFit | None:
         from scipy.optimize import least_squares
 
+        balance, curve = self.balance, self.balance.curve
         theta = self.start()
         weight = np.ones(len(self.sd_v))
         solved = None
-        free = [i for i in range(len(theta)) if i != 0 or self.weak]
+        free = [i for i in range(len(theta)) if i != 0 or balance.weak]
         scale = np.full(len(theta), 0.01)
-        scale[:2] = max(1e-9, float(self.curve.titrant_concentration_mol_l or 0.0) * 0.01)
+        scale[:2] = max(1e-9, float(curve.titrant_concentration_mol_l or 0.0) * 0.01)
         for _ in range(3):
             if not np.all(np.isfinite(theta)):
                 return None
-            self.set_activity(theta)
-            weight = 1.0 / np.hypot(self.sd_v, self.slope(theta) * self.sd_ph)
+            balance.set_activity(theta)
+            weight = 1.0 / np.hypot(self.sd_v, balance.slope(theta) * self.sd_ph)
             if not np.all(np.isfinite(weight)):
                 return None
             fixed, current = theta.copy(), weight
@@ -265,31 +201,32 @@ class _Balance:
         return self._result(theta, weight, np.asarray(solved.jac), free)
 
     def _result(self, theta: Array, weight: Array, jacobian: Array, free: list[int]) -> ModelFit | None:
-        n = len(self.curve.volume_ml)
-        scaled = (self.volume(theta) - self.curve.volume_ml) * weight
-        chi_square = float(np.sum(_robust(scaled) ** 2)) / max(1, n - len(free) + self.weak + 2)
+        balance, curve = self.balance, self.balance.curve
+        n = len(curve.volume_ml)
+        scaled = (balance.volume(theta) - curve.volume_ml) * weight
+        chi_square = float(np.sum(_robust(scaled) ** 2)) / max(1, n - len(free) + balance.weak + 2)
         covariance = np.zeros((len(theta), len(theta)))
         covariance[np.ix_(free, free)] = np.linalg.pinv(jacobian.T @ jacobian) * max(1.0, chi_square)
         volumes, sds = self._equivalences(theta, covariance)
         if not np.all(np.isfinite([*volumes, *sds, chi_square])):
             return None
-        ph_off = scaled / weight / np.where(np.abs(self.slope(theta)) < 1e-12, np.inf, self.slope(theta))
+        ph_off = scaled / weight / np.where(np.abs(balance.slope(theta)) < 1e-12, np.inf, balance.slope(theta))
         limit = _OUTLIER * math.sqrt(max(1.0, float(np.median(scaled**2)) / 0.455))
         named = [i for i in range(n) if abs(scaled[i]) > limit]
         return ModelFit(
             equivalence_ml=tuple(volumes),
             equivalence_sd_ml=tuple(sds),
-            pka=tuple(float(p) for p in self.pka + theta[2 : 2 + self.weak]),
-            pka_sd=tuple(math.sqrt(float(covariance[i, i])) for i in range(2, 2 + self.weak)),
+            pka=tuple(float(p) for p in balance.pka + theta[2 : 2 + balance.weak]),
+            pka_sd=tuple(math.sqrt(float(covariance[i, i])) for i in range(2, 2 + balance.weak)),
             amount_mol_l=float(theta[0]),
-            strong_ion_mol_l=float(self.curve.counter_ion_charge * theta[0] + theta[1]),
+            strong_ion_mol_l=float(curve.counter_ion_charge * theta[0] + theta[1]),
             offset_ph=float(theta[-2]),
             slope_error=float(theta[-1]),
             chi_square=chi_square,
             sound=bool(chi_square <= LARGEST_SOUND_CHI_SQUARE and self._credible(theta)),
-            activity=self.curve.debye_huckel_a is not None,
+            activity=curve.debye_huckel_a is not None,
             outliers=tuple((i, float(ph_off[i])) for i in named),
-            log_coefficient=tuple(map(float, self.unit)),
+            log_coefficient=tuple(map(float, balance.unit)),
             residual_ml=tuple(map(float, -scaled / weight)),
             residual_sd_ml=tuple(map(float, 1.0 / weight)),
         )
@@ -297,14 +234,15 @@ class _Balance:
     def _credible(self, theta: Array) -> bool:
         """Does nothing that was known beforehand have to move by more than four of its standard uncertainties?"""
         p = self.priors
-        moved = [*(theta[2 : 2 + self.weak] / p.pka_sd), theta[-2] / p.offset_sd_ph, theta[-1] / p.slope_sd]
-        return bool(np.max(np.abs(moved)) <= 4.0 and (theta[0] > 0.0 or not self.weak))
+        moved = [*(theta[2 : 2 + self.balance.weak] / p.pka_sd), theta[-2] / p.offset_sd_ph, theta[-1] / p.slope_sd]
+        return bool(np.max(np.abs(moved)) <= 4.0 and (theta[0] > 0.0 or not self.balance.weak))
 
     def _equivalences(self, theta: Array, covariance: Array) -> tuple[list[float], list[float]]:
-        curve = self.curve
-        factor = -float(curve.initial_volume_ml or 0.0) / (self.sign * float(curve.titrant_concentration_mol_l or 1.0))
+        balance, curve = self.balance, self.balance.curve
+        strength = balance.sign * float(curve.titrant_concentration_mol_l or 1.0)
+        factor = -float(curve.initial_volume_ml or 0.0) / strength
         volumes, sds = [], []
-        for lost in range(self.weak + 1):
+        for lost in range(balance.weak + 1):
             gradient = np.zeros(len(theta))
             gradient[0] = factor * (curve.counter_ion_charge + curve.charge - lost)
             gradient[1] = factor
