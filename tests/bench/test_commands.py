@@ -275,3 +275,16 @@ def test_wrong_use_is_answered_with_the_remedy(
     assert status == 2
     assert says in err
     assert list_records(lab / "runs") == []
+
+
+def test_the_mean_of_a_sample_names_the_runs_of_other_methods_that_it_leaves_out(halfdrop: Run, lab: Path) -> None:
+    for method in ("juice-acidity", "juice-acidity-to-ph"):  # two quantities: acidity to equivalence, and to pH 8.1
+        assert halfdrop("run", method, "--lab", str(lab), "--sample-id", "press-3", "--json")[0] == 0
+    first, second = list_records(lab / "runs")
+    status, out, err = halfdrop("runs", "mean", "press-3", "--lab", str(lab))
+    assert status == 0
+    assert "sample press-3: 1 run, no scatter" in out
+    assert "to pH 8.10" in out
+    assert "juice-acidity-to-ph" in err
+    assert first.stem in err.split("left out")[1]
+    assert second.stem not in err

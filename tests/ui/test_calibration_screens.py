@@ -75,6 +75,24 @@ def test_the_list_tells_what_is_in_force_and_how_it_moved(stage: Any) -> None:
     stage.drive(app, steps, (100, 30))
 
 
+def test_lots_in_force_side_by_side_are_told_apart_in_the_list(stage: Any, monkeypatch: pytest.MonkeyPatch) -> None:
+    _calibration(stage.lab, 2)
+    row = {"on": "2026-01-02", "kind": "blank", "state": "in force", "due": "2026-01-16", "verdict": "passed"}
+    monkeypatch.setattr(
+        "controller.ui.screens.calibration.calibration_entry", lambda *_: {**row, "subject": "water-1201"}
+    )
+    app = HalfdropApp(lab=stage.lab)
+
+    async def steps(pilot: Any) -> None:
+        await pilot.press("5")
+        await stage.until(pilot, lambda: isinstance(app.screen, CalibrationsScreen) and len(app.screen._shown) == 1)
+        await pilot.pause()
+        [line] = [line for line in stage.text(app).splitlines() if " blank " in line]
+        assert "water-1201: passed" in line
+
+    stage.drive(app, steps, (80, 24))
+
+
 @pytest.mark.parametrize("size", [pytest.param((80, 24), id="80x24"), pytest.param((120, 40), id="120x40")])
 def test_the_list_and_a_finished_calibration_as_they_look(stage: Any, size: tuple[int, int]) -> None:
     for day, slope in ((2, 98.9), (9, 98.2)):

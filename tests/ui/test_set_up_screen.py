@@ -44,6 +44,12 @@ def test_nothing_starts_before_everything_is_filled_in_and_answered(
         await pilot.press("2")
         await stage.until(pilot, lambda: len(app.screen.query(AnswerField)) == 3)
         screen = app.screen
+        first, second, _ = screen.query(AnswerField)
+        first.focus()
+        await pilot.press("down")
+        assert app.focused is second
+        await pilot.press("up")
+        assert app.focused is first
         await pilot.press("f9")
         await stage.until(pilot, lambda: said("what the record should call the sample"))
         screen.query_one("#sample-id").value = "press 4"

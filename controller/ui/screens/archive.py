@@ -125,7 +125,8 @@ class ArchiveScreen(Screen[None]):
         place = f"{event.cursor_row + 1} of {self._count}"
         took = "" if one.duration_s is None else f", {one.doses} doses in {clock_text(one.duration_s)}"
         why = f" ({one.reason})" if one.reason else ""
-        about = f"{place}   {one.run}\n{one.outcome}{why}{took}, operator: {one.operator or 'not named'}"
+        to_ph = f", {one.amount[one.amount.index('to pH') :].split(' (')[0]}" if "to pH" in one.amount else ""
+        about = f"{place}   {one.run}{to_ph}\n{one.outcome}{why}{took}, operator: {one.operator or 'not named'}"
         self.query_one("#about", Plain).say(printable(about.replace("\n", " │ ")).replace(" │ ", "\n", 1))
         if event.cursor_row >= len(self._shown) - 20 and len(self._shown) < self._count:
             self._more()

@@ -32,6 +32,8 @@ from controller.ui.widgets.titlebar import TitleBar
 from controller.ui.widgets.warningbar import WarningBar
 from drivers.clock import SystemClock
 
+#: kinds of which several are in force side by side: their rows begin with the lot's name
+LOTS = frozenset({"titrant", "blank"})
 _COLUMNS = (("on", 10), ("kind", 8), ("state", 14), ("due", 10), ("verdict", 24))
 _TIME_SCALE = 10.0
 
@@ -149,7 +151,8 @@ class CalibrationsScreen(Screen[None]):
         table = self.query_one(DataTable)
         table.clear()
         for row in rows:
-            table.add_row(*(cell_of(str(row[name])) for name, _ in _COLUMNS))
+            lot = f"{row['subject']}: " if row["kind"] in LOTS else ""  # there are several of them, one probe only
+            table.add_row(*(cell_of((lot if name == "verdict" else "") + str(row[name])) for name, _ in _COLUMNS))
         if not rows:
             text = "none yet: p calibrates the probe, u checks the burette, t settles a titrant, b a blank"
             self.query_one("#about", Plain).say(text)

@@ -33,6 +33,7 @@ Choose a method, say what the sample is and how much of it, and answer the quest
 Numbers may have a decimal point or a decimal comma. What the run is expected to need is shown before it starts.
 
   Tab        next field
+  y, n       answer the question under the cursor; so do Space, Left, Right
   F5         expect: how long, how much titrant, what to heed
   F9         start the run
 

@@ -19,8 +19,8 @@ class AnswerField(Static, can_focus=True):
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("left", "choose(-1)", show=False),
         Binding("right,space", "choose(1)", show=False),
-        Binding("down", "screen.focus_next", show=False),
-        Binding("up", "screen.focus_previous", show=False),
+        Binding("down", "app.focus_next", show=False),
+        Binding("up", "app.focus_previous", show=False),
     ]
 
     class Answered(Message):
