@@ -25,7 +25,7 @@ from controller.benchwork.reached import ReachedBench
 from controller.benchwork.serving import Route
 from controller.benchwork.virtualdevices import MAKER, simulated_world, spoken_devices
 from controller.planning.runplan import PumpAccount
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.stopping import StopSwitch
 from controller.running.trafficlog import traffic_of
 from controller.titration.plan import Sample

@@ -20,7 +20,8 @@ from controller.resuming.resumption import Resumption, take_up
 from controller.running.aftercare import NOT_ASKED, ask_about_probe, probe_remark
 from controller.running.clockwatch import ClockWatch
 from controller.running.closing import close_failed, close_record
-from controller.running.execution import Devices, Execution
+from controller.running.devices import Devices
+from controller.running.execution import Execution
 from controller.running.outcome import (
     AmountOf,
     RunResult,

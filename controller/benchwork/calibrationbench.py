@@ -23,7 +23,7 @@ from controller.benchwork.virtualdevices import simulated_identities, spoken_dev
 from controller.calibration.buffers import BufferLot
 from controller.calibration.planning import PROBE_QUESTIONS
 from controller.planning.runplan import PumpAccount
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.stopping import StopSwitch
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
 from drivers.clock import Clock, SystemClock

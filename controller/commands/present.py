@@ -14,7 +14,7 @@ from controller.commands.signals import pulling
 from controller.labfolder import Lab
 from controller.running.attendance import Attendance, attended
 from controller.running.commandport import command_port
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.portoperator import PortOperator
 from controller.running.stopping import Commands
 from drivers.operator import ConsoleOperator

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 
 from configs.errors import HalfdropError
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.titration.actions import Reading
 from controller.titration.plan import RunPlan
 from drivers.probe import Probe

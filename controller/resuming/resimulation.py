@@ -11,7 +11,8 @@ from controller.guard import Guard
 from controller.journal import Journal, encode
 from controller.records.brokenrun import BrokenRun
 from controller.records.recordfile import MemorySink
-from controller.running.execution import Devices, Execution
+from controller.running.devices import Devices
+from controller.running.execution import Execution
 from controller.running.startcheck import check_devices
 from controller.running.stopping import StopSwitch
 from controller.titration.actions import Back, Command, Refused, Resumed, to_entry

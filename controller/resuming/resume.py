@@ -17,7 +17,7 @@ from controller.resuming.doubt import PumpNow, SettledDose, ask_pump, check_unus
 from controller.resuming.recordcheck import check_identities, check_probe
 from controller.resuming.resumption import Resumption
 from controller.runner import run as carry_out
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.outcome import AmountOf, RunResult
 from controller.running.progress import Progress
 from controller.running.stopping import Commands, StopSwitch

@@ -7,12 +7,11 @@ the pump cannot say stays a pair of bounds: a dose is never sent twice and never
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
-from dataclasses import dataclass
 
 from controller.calibration.plans import AnyPlan
 from controller.guard import Guard
 from controller.journal import Journal
+from controller.running.devices import Devices
 from controller.running.patience import last_dose_for_sure
 from controller.running.stopping import Commands, StopSwitch, halted, wait_out
 from controller.titration.actions import (
@@ -39,19 +38,7 @@ from controller.titration.actions import (
 )
 from drivers.clock import Clock
 from drivers.errors import DeviceError, DoseUnknownError, StoppedError
-from drivers.operator import Operator
-from drivers.probe import Probe
-from drivers.pump import LastDose, Pump
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Devices:
-    """What a run works with. `stirrer` switches a controlled stirrer, None where it is switched by hand."""
-
-    pump: Pump
-    probe: Probe
-    operator: Operator
-    stirrer: Callable[[bool], None] | None = None
+from drivers.pump import LastDose
 
 
 class Execution:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from configs.errors import HalfdropError
 from controller.calibration.plans import AnyPlan
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from drivers.errors import DeviceError
 
 #: times that a device of another name is asked again

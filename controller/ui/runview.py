@@ -8,7 +8,7 @@ from typing import Any
 
 from configs.errors import HalfdropError
 from controller.records.record import printable
-from controller.ui.seen import CurvePoint, EndPoint, SeenReading, Sentence, end_point_of, ph_by
+from controller.ui.seen import CurvePoint, EndPoint, SeenReading, Sentence, end_point_of, point_of, reading_of
 
 TYPE_CHECKING = False  # what a plan needs is imported with the first header, after the first paint
 if TYPE_CHECKING:
@@ -156,7 +156,8 @@ class RunView:
         text = str(entry.get("text", ""))
         match what:
             case "point":
-                self._point(entry)
+                self.points.append(point_of(entry, number=len(self.points), at_s=self.at_s))
+                self._pace_saw("point")
             case "point-again":
                 self._point_again(entry)
             case "forecast":
@@ -176,21 +177,6 @@ class RunView:
                     self.paused, self.phase = False, "going on"
                 self._say(text, "note")
 
-    def _point(self, entry: dict[str, Any]) -> None:
-        ph = entry.get("ph")
-        self.points.append(
-            CurvePoint(
-                number=len(self.points),
-                volume_ml=float(entry["volume_ml"]),
-                delivered_ml=float(entry["delivered_ml"]),
-                potential_mv=float(entry["potential_mv"]),
-                ph=None if ph is None else float(ph),
-                settled=bool(entry.get("settled", True)),
-                at_s=self.at_s,
-            )
-        )
-        self._pace_saw("point")
-
     def _point_again(self, entry: dict[str, Any]) -> None:
         """The run takes an earlier point for another composition."""
         number = entry.get("point")
@@ -202,7 +188,9 @@ class RunView:
             self.observed_s = self.at_s
         match kind:
             case "reading":
-                self._reading(entry)
+                self.readings.append(reading_of(entry, self.plan, at_s=self.at_s))
+                if not self.paused:
+                    self.phase = self._reading_phase()
             case "dosed":
                 volume_ml = float(entry["volume_ml"])
                 self._delivered(volume_ml)
@@ -225,20 +213,6 @@ class RunView:
                 self._say(f"went on after a gap of {float(entry['gap_s']):.0f} s", "note")
             case "command":
                 self._command(entry)
-
-    def _reading(self, entry: dict[str, Any]) -> None:
-        potential_mv, temperature_c = float(entry["potential_mv"]), entry.get("temperature_c")
-        self.readings.append(
-            SeenReading(
-                at_s=self.at_s,
-                potential_mv=potential_mv,
-                ph=ph_by(self.plan, potential_mv, temperature_c),
-                temperature_c=temperature_c,
-                status=printable(str(entry.get("status", "ok"))),
-            )
-        )
-        if not self.paused:
-            self.phase = self._reading_phase()
 
     def _reading_phase(self) -> str:
         if self.plan is None:

@@ -99,3 +99,29 @@ def end_point_of(entry: dict[str, Any]) -> EndPoint:
         ph=entry.get("ph"),
         estimator=printable(str(entry.get("estimator") or "")),
     )
+
+
+def point_of(entry: dict[str, Any], *, number: int, at_s: float) -> CurvePoint:
+    """Return a point as the run's report tells it."""
+    ph = entry.get("ph")
+    return CurvePoint(
+        number=number,
+        volume_ml=float(entry["volume_ml"]),
+        delivered_ml=float(entry["delivered_ml"]),
+        potential_mv=float(entry["potential_mv"]),
+        ph=None if ph is None else float(ph),
+        settled=bool(entry.get("settled", True)),
+        at_s=at_s,
+    )
+
+
+def reading_of(entry: dict[str, Any], plan: RunPlan | None, *, at_s: float) -> SeenReading:
+    """Return a reading as its line tells it."""
+    potential_mv, temperature_c = float(entry["potential_mv"]), entry.get("temperature_c")
+    return SeenReading(
+        at_s=at_s,
+        potential_mv=potential_mv,
+        ph=ph_by(plan, potential_mv, temperature_c),
+        temperature_c=temperature_c,
+        status=printable(str(entry.get("status", "ok"))),
+    )

@@ -26,7 +26,7 @@ from controller.records.verification import verify
 from controller.replay import replay
 from controller.resuming.resume import GO_ON, GoingOn, go_on
 from controller.runner import run
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.outcome import RunFailedError, RunResult
 from controller.running.stopping import Commands, StopSwitch
 from controller.titration.actions import Command

@@ -18,7 +18,7 @@ from controller.records.record import points, read_record
 from controller.records.recordfile import FileSink
 from controller.records.verification import verify
 from controller.runner import run
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.outcome import RunResult
 from controller.running.stopping import StopSwitch
 from controller.titration.actions import from_entry, to_entry

@@ -12,7 +12,7 @@ from controller.journal import Journal
 from controller.planning.runplan import SampleChoice, make_plan, plan_sample
 from controller.records.recordfile import FileSink, MemorySink
 from controller.runner import run
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.outcome import RunResult
 from controller.running.stopping import StopSwitch
 from controller.titration.core import titrate

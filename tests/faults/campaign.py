@@ -36,7 +36,7 @@ from controller.journal import Journal
 from controller.records.recordfile import MemorySink
 from controller.records.verification import verify_bytes
 from controller.runner import run
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.stopping import StopSwitch
 from controller.titration.core import titrate
 from controller.titration.plan import RunPlan

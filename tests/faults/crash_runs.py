@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from controller.foresight.study_plan import BASELINE, EQUAL_VOLUMES, FIXED_WAIT, MODEL_GUIDED, WITHOUT_RECORD, Strategy
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.titration.actions import Command
 from controller.titration.plan import RunPlan
 from simulators.bench import VirtualBench

@@ -298,7 +298,7 @@ class FakeBench:
 
     def __init__(self) -> None:
         from controller.journal import Journal
-        from controller.running.execution import Devices
+        from controller.running.devices import Devices
         from controller.running.stopping import StopSwitch
 
         self.log: list[str] = []

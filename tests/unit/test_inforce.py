@@ -26,7 +26,7 @@ from controller.planning.runplan import SampleChoice, expected_account, make_pla
 from controller.records.encoding import plan_from_json, plan_to_json
 from controller.records.recordfile import new_record
 from controller.runner import run
-from controller.running.execution import Devices
+from controller.running.devices import Devices
 from controller.running.stopping import StopSwitch
 from controller.titration.plan import CalibratedRange, ProbeCalibration
 from drivers.absent import ABSENT, AbsentProbe, AbsentPump
