@@ -19,7 +19,7 @@ from controller.calibration.store import in_force
 from controller.commands.calibrationlines import calibration_lines
 from controller.commands.lines import Lines
 from controller.commands.output import print_json, say
-from controller.commands.settings import answers_of
+from controller.commands.settings import answers_and_attendance
 from controller.journal import Journal
 from controller.labfolder import Lab, find_lab
 from controller.lock import lock_lab
@@ -128,16 +128,12 @@ def opening_of(given: argparse.Namespace, lab: Lab, bench: BenchSettings) -> tup
     Raises:
         HalfdropError: nobody is there to answer its questions.
     """
-    answers = answers_of(given)
-    unattended = given.headless or not sys.stdin.isatty()
-    if getattr(given, "attended", False):
-        answers = answers or {}
-    elif unattended and answers is None and not is_simulated(bench):
-        raise HalfdropError(
-            "nobody is there to answer its questions",
-            where="calibrate",
-            remedy="Give the answers with --answers FILE, or start it at a terminal without --headless",
-        )
+    nobody = HalfdropError(
+        "nobody is there to answer its questions",
+        where="calibrate",
+        remedy="Give the answers with --answers FILE, or start it at a terminal without --headless",
+    )
+    answers, unattended = answers_and_attendance(given, simulated=is_simulated(bench), nobody=nobody)
     opening = Opening(
         seed=given.seed,
         time_scale=given.time_scale,

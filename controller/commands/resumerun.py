@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import sys
 from contextlib import ExitStack
 from datetime import datetime
 from pathlib import Path
@@ -15,7 +14,7 @@ from controller.benchwork.pace import FAST
 from controller.commands.output import say
 from controller.commands.present import at_the_bench
 from controller.commands.probekept import keep_in_probe_record
-from controller.commands.settings import answers_of, method_of
+from controller.commands.settings import answers_and_attendance, method_of
 from controller.commands.signals import pulling
 from controller.commands.watching import watching
 from controller.labfolder import Lab
@@ -40,16 +39,12 @@ def resume_run(given: argparse.Namespace, lab: Lab, path: Path) -> RunResult:
 def _resumed(given: argparse.Namespace, lab: Lab, path: Path, broken: BrokenRun) -> RunResult:
     bench = load_bench(Path(given.bench) if given.bench else lab.bench)
     simulated = is_simulated(bench)
-    answers = answers_of(given)
-    unattended = given.headless or not sys.stdin.isatty()
-    if given.attended:
-        answers = answers or {}
-    elif unattended and answers is None and not simulated:
-        raise HalfdropError(
-            "nobody is there to say whether the beaker was touched",
-            where="resume",
-            remedy="Give the answers with --answers FILE, or resume on the screen or at a terminal without --headless",
-        )
+    nobody = HalfdropError(
+        "nobody is there to say whether the beaker was touched",
+        where="resume",
+        remedy="Give the answers with --answers FILE, or resume on the screen or at a terminal without --headless",
+    )
+    answers, unattended = answers_and_attendance(given, simulated=simulated, nobody=nobody)
     if simulated and given.time_scale not in (None, FAST):
         raise HalfdropError(
             f"got {given.time_scale}, allowed: {FAST}: this simulated bench is brought back by doing everything again",

@@ -3,12 +3,11 @@
 from __future__ import annotations
 
 import argparse
-import sys
 
 from configs.errors import HalfdropError
 from configs.faultfile import load_faults
 from controller.assembly import Opening, is_simulated
-from controller.commands.settings import answers_of, chosen, sample_choice
+from controller.commands.settings import answers_and_attendance, chosen, sample_choice
 from controller.commands.titration import tell, titrate_once
 
 
@@ -17,16 +16,12 @@ def run(given: argparse.Namespace) -> int:
     picked = chosen(given, lab_needed=True)
     assert picked.lab is not None
     lab, simulated = picked.lab.writable(), is_simulated(picked.bench)
-    answers = answers_of(given, picked.method)
-    unattended = given.headless or not sys.stdin.isatty()
-    if given.attended:
-        answers = answers or {}
-    elif unattended and answers is None and not simulated:
-        raise HalfdropError(
-            "nobody is there to answer the questions before the first dose",
-            where="run",
-            remedy="Give the answers with --answers FILE, or start the run at a terminal without --headless",
-        )
+    nobody = HalfdropError(
+        "nobody is there to answer the questions before the first dose",
+        where="run",
+        remedy="Give the answers with --answers FILE, or start the run at a terminal without --headless",
+    )
+    answers, unattended = answers_and_attendance(given, picked.method, simulated=simulated, nobody=nobody)
     opening = Opening(
         seed=given.seed,
         time_scale=given.time_scale,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import hashlib
+import sys
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -111,6 +112,29 @@ def answers_of(given: argparse.Namespace, method: MethodSettings | None = None) 
     if method is not None:
         say_unasked(given.answers, found, [*ASKED_KEYS, *(question.key for question in method.questions)])
     return found
+
+
+def answers_and_attendance(
+    given: argparse.Namespace, method: MethodSettings | None = None, *, simulated: bool, nobody: HalfdropError
+) -> tuple[dict[str, str] | None, bool]:
+    """Return the answers given beforehand, and whether nobody is at the terminal.
+
+    Args:
+        given: the options.
+        method: as for `answers_of`.
+        simulated: a bench that is simulated answers its questions itself.
+        nobody: raised where nobody would answer.
+
+    Raises:
+        HalfdropError: nobody would answer, or the file has mistakes.
+    """
+    answers = answers_of(given, method)
+    unattended = given.headless or not sys.stdin.isatty()
+    if getattr(given, "attended", False):
+        return answers or {}, unattended
+    if unattended and answers is None and not simulated:
+        raise nobody
+    return answers, unattended
 
 
 def say_unasked(file: str | None, answers: Mapping[str, str] | None, known: Sequence[str]) -> None:
