@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 import re
 from functools import partial
 from typing import Any, ClassVar
@@ -10,7 +9,6 @@ from typing import Any, ClassVar
 from textual.app import ComposeResult
 from textual.binding import Binding, BindingType
 from textual.containers import Vertical, VerticalScroll
-from textual.screen import Screen
 from textual.widgets import Footer, Input, Select
 
 from configs.errors import HalfdropError
@@ -19,10 +17,10 @@ from configs.settings import load_method
 from controller.labfolder import Lab
 from controller.records.record import list_records, printable
 from controller.running.launch import record_of, start_run
-from controller.ui.newrun import Prepared, Wanted, methods_of, prepare, usual_method
-from controller.ui.screens.dialogs import Text, printable_lines
+from controller.ui.newrun import Prepared, Wanted, methods_of, usual_method
+from controller.ui.screens.dialogs import printable_lines
 from controller.ui.screens.help import help_of
-from controller.ui.screens.setup import WIDE, form_row
+from controller.ui.screens.methodform import MethodForm, form_row, method_row, operator_row
 from controller.ui.texts import number_of
 from controller.ui.widgets.answerfield import AnswerField
 from controller.ui.widgets.plain import Plain
@@ -35,7 +33,7 @@ _VOLUMES = "0,012; none; 0,009 (none: no end point was found)"
 TIME_SCALE = 10.0
 
 
-class LotScreen(Screen[None]):
+class LotScreen(MethodForm):
     """Collects what the calibration needs, and starts it in its own process.
 
     Args:
@@ -44,7 +42,6 @@ class LotScreen(Screen[None]):
     """
 
     HELP = "calibrations"
-    HORIZONTAL_BREAKPOINTS: list[tuple[int, str]] | None = [(0, "-narrow"), (WIDE, "-wide")]  # noqa: RUF012  (as Textual has it)
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("f9", "start", "Start"),
         Binding("f1", "help", "Help"),
@@ -53,10 +50,8 @@ class LotScreen(Screen[None]):
     ]
 
     def __init__(self, lab: Lab, kind: str) -> None:
-        super().__init__()
-        self._lab, self._kind = lab, kind
-        self._prepared: Prepared | None = None
-        self._starting = False
+        super().__init__(lab)
+        self._kind = kind
 
     def compose(self) -> ComposeResult:
         """A few lines, then the questions of safety where something will be titrated."""
@@ -72,13 +67,7 @@ class LotScreen(Screen[None]):
         yield Footer(show_command_palette=False, compact=True)
 
     def _fields(self, names: list[str]) -> ComposeResult:
-        first = self._usual(names)
-        choices = [(name, name) for name in names]
-        if first is None:
-            yield from form_row("method", Select(choices, id="method", allow_blank=True, compact=True))
-        else:
-            chosen = Select(choices, id="method", value=first, allow_blank=False, compact=True)
-            yield from form_row("method", chosen)
+        yield from method_row(names, self._usual(names))
         yield from form_row("lot", Input(id="lot", placeholder="as on the bottle", compact=True))
         if self._kind == "titrant":
             yield from form_row("replicates", Input(value="3", id="replicates", compact=True))
@@ -87,8 +76,7 @@ class LotScreen(Screen[None]):
             yield from form_row("volumes, mL", Input(id="figures", placeholder=_VOLUMES, compact=True))
         there = "names of finished runs, in place of the above"
         yield from form_row("or from runs", Input(id="runs-from", placeholder=there, compact=True))
-        name = os.environ.get("USER") or os.environ.get("USERNAME") or ""
-        yield from form_row("operator", Input(value=name, id="operator", compact=True))
+        yield from operator_row()
 
     def _usual(self, names: list[str]) -> str | None:
         """The first method of this purpose, else the first."""
@@ -110,35 +98,22 @@ class LotScreen(Screen[None]):
     def on_select_changed(self, event: Select.Changed) -> None:
         """Another method: another lot, other questions."""
         if isinstance(event.value, str):
-            self.run_worker(partial(self._look, event.value), thread=True, exclusive=True, group="prepare")
+            self.run_worker(
+                partial(self._look, Wanted(method=event.value)), thread=True, exclusive=True, group="prepare"
+            )
 
-    def _look(self, method: str) -> None:
-        try:
-            prepared = prepare(self._lab, Wanted(method=method))
-        except HalfdropError as error:
-            self.app.call_from_thread(self._not_readable, str(error))
-        else:
-            self.app.call_from_thread(self._show_method, prepared)
-
-    def _not_readable(self, text: str) -> None:
-        self._prepared = None
-        self.query_one("#problem", Plain).say(printable_lines(text))
-        self.query_one("#questions", Vertical).remove_children()
-
-    def _show_method(self, prepared: Prepared) -> None:
-        self._prepared = prepared
+    def show_method(self, prepared: Prepared) -> None:
+        """Fill in the lot that the method names, and ask its questions where something is titrated."""
         self.query_one("#lot", Input).value = self._lot_of(prepared.method) or ""
-        self.call_later(self._show_questions, prepared)
+        super().show_method(prepared)
         self._say_problem()
 
     def _lot_of(self, method: MethodSettings) -> str | None:
         return method.titrant.lot_id if self._kind == "titrant" else method.blank_lot_id
 
-    async def _show_questions(self, prepared: Prepared) -> None:
-        questions = self.query_one("#questions", Vertical)
-        await questions.remove_children()
-        if self._kind == "titrant" and prepared.plan is not None:
-            await questions.mount(*(AnswerField(one) for one in prepared.plan.questions))
+    def asks_questions(self) -> bool:
+        """A blank is settled from figures or runs that are there."""
+        return self._kind == "titrant"
 
     def on_input_changed(self, event: Input.Changed) -> None:
         """What is typed is looked at; runs that are there need no safety questions."""
@@ -204,12 +179,7 @@ class LotScreen(Screen[None]):
             return
         titrates = self._kind == "titrant" and "--from" not in given
         fields = list(self.query(AnswerField)) if titrates else []
-        missing = next((one for one in fields if not one.fits), None)
-        if missing is not None:
-            self.notify(f"this must be answered first: {missing.question.text}", severity="error", markup=False)
-            missing.focus()
-            missing.scroll_visible()
-        elif not self._starting:
+        if self._all_answered(fields) and not self._starting:
             self._starting = True
             answers = {one.question.key: one.answer or "" for one in fields}
             self.notify("starting")
@@ -233,10 +203,6 @@ class LotScreen(Screen[None]):
         else:
             speed = TIME_SCALE if timed else None
             app.call_from_thread(app.open_run, record, speed=speed, calibrations_before=before)
-
-    def _not_started(self, text: str) -> None:
-        self._starting = False
-        self.app.push_screen(Text("It did not begin", printable_lines(text)))
 
     def action_help(self) -> None:
         """Help for this screen."""

@@ -2,39 +2,35 @@
 
 from __future__ import annotations
 
-import os
 from functools import partial
 from pathlib import Path
 from typing import Any, ClassVar
 
 from textual.app import ComposeResult
 from textual.binding import Binding, BindingType
-from textual.containers import Horizontal, Vertical, VerticalScroll
-from textual.screen import Screen
+from textual.containers import Vertical, VerticalScroll
 from textual.widgets import Footer, Input, Select
 
 from configs.errors import HalfdropError
-from controller.labfolder import Lab
 from controller.records.record import printable
-from controller.ui.newrun import Prepared, Wanted, begin, expectation_text, methods_of, prepare, usual_method
+from controller.ui.newrun import Prepared, Wanted, begin, expectation_text, methods_of, usual_method
 from controller.ui.screens.dialogs import Text, printable_lines
 from controller.ui.screens.help import help_of
+from controller.ui.screens.methodform import MethodForm, form_row, method_row, operator_row
 from controller.ui.texts import number_of
 from controller.ui.widgets.answerfield import AnswerField
 from controller.ui.widgets.plain import Plain
 from controller.ui.widgets.titlebar import TitleBar
 
 MOST_REPLICATES = 20
-#: from this width on the questions stand beside the form, cells
-WIDE = 140
 _SCALES = (("real time", "1"), ("10 times real time", "10"), ("50 times real time", "50"), ("at once", "fast"))
 
 
-class SetUpScreen(Screen[None]):
+class SetUpScreen(MethodForm):
     """Collects what a run needs, and starts it when every question is answered."""
 
     HELP = "set-up"
-    HORIZONTAL_BREAKPOINTS: list[tuple[int, str]] | None = [(0, "-narrow"), (WIDE, "-wide")]  # noqa: RUF012  (as Textual has it)
+    NOT_BEGUN = "The run did not begin"
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("f9", "start", "Start the run"),
         Binding("f5", "expect", "What to expect"),
@@ -42,12 +38,6 @@ class SetUpScreen(Screen[None]):
         Binding("escape", "app.go('archive')", "Leave"),
         Binding("ctrl+q", "app.quit", "Quit"),
     ]
-
-    def __init__(self, lab: Lab) -> None:
-        super().__init__()
-        self._lab = lab
-        self._prepared: Prepared | None = None
-        self._starting = False
 
     def compose(self) -> ComposeResult:
         """A form of a few lines, then the questions."""
@@ -62,19 +52,14 @@ class SetUpScreen(Screen[None]):
         yield Footer(show_command_palette=False, compact=True)
 
     def _fields(self, methods: list[str]) -> ComposeResult:
-        choices = [(name, name) for name in methods]
-        first = usual_method(self._lab)
-        if first is None:
-            yield from form_row("method", Select(choices, id="method", allow_blank=True, compact=True))
-        else:
-            yield from form_row("method", Select(choices, id="method", value=first, allow_blank=False, compact=True))
+        yield from method_row(methods, usual_method(self._lab))
         yield from form_row("", Plain("", id="method-title", classes="quiet"))
         yield from form_row("sample", Input(id="sample-id", placeholder="what the record calls it", compact=True))
         yield from form_row("amount", Input(id="amount", compact=True))
         yield from form_row("all liquid, mL", Input(id="initial", compact=True))
         yield from form_row("replicates", Input(value="1", id="replicates", compact=True))
         yield from form_row("or a series", Input(id="series", placeholder="a CSV file of samples", compact=True))
-        yield from form_row("operator", Input(value=_user(), id="operator", compact=True))
+        yield from operator_row()
         scale = Select(_SCALES, id="scale", value="10", allow_blank=False, compact=True)
         yield from form_row("simulated time", scale)
 
@@ -92,21 +77,8 @@ class SetUpScreen(Screen[None]):
             wanted = Wanted(method=event.value)
             self.run_worker(partial(self._look, wanted), thread=True, exclusive=True, group="prepare")
 
-    def _look(self, wanted: Wanted) -> None:
-        try:
-            prepared = prepare(self._lab, wanted)
-        except HalfdropError as error:
-            self.app.call_from_thread(self._not_readable, str(error))
-        else:
-            self.app.call_from_thread(self._show_method, prepared)
-
-    def _not_readable(self, text: str) -> None:
-        self._prepared = None
-        self.query_one("#problem", Plain).say(printable_lines(text))
-        self.query_one("#questions", Vertical).remove_children()
-
-    def _show_method(self, prepared: Prepared) -> None:
-        self._prepared = prepared
+    def show_method(self, prepared: Prepared) -> None:
+        """Fill in amount and liquid as the method has them, and ask its questions."""
         sample = prepared.method.sample
         usual = sample.volume_ml if sample.taken_by == "volume" else sample.mass_g
         unit = "mL" if sample.taken_by == "volume" else "g"
@@ -117,14 +89,8 @@ class SetUpScreen(Screen[None]):
         self.query_one("#initial", Input).value = f"{sample.initial_volume_ml:g}"
         self.query_one("#method-title", Plain).say(printable(prepared.method.title))
         self.query_one("#row-scale").display = prepared.simulated
-        self.call_later(self._show_questions, prepared)
+        super().show_method(prepared)
         self._say_problem()
-
-    async def _show_questions(self, prepared: Prepared) -> None:
-        questions = self.query_one("#questions", Vertical)
-        await questions.remove_children()
-        if prepared.plan is not None:
-            await questions.mount(*(AnswerField(one) for one in prepared.plan.questions))
 
     def on_answer_field_answered(self, _event: AnswerField.Answered) -> None:
         """One answer more."""
@@ -182,17 +148,12 @@ class SetUpScreen(Screen[None]):
     def action_start(self) -> None:
         """Start, where everything is filled in and answered."""
         wanted, fields = self._wanted(), list(self.query(AnswerField))
-        missing = next((one for one in fields if not one.fits), None)
         if isinstance(wanted, str):
             self.notify(wanted, severity="error", markup=False)
         elif wanted.sample_id is None and wanted.series is None:
             self.notify("say what the record should call the sample", severity="error")
             self.query_one("#sample-id", Input).focus()
-        elif missing is not None:
-            self.notify(f"this must be answered first: {missing.question.text}", severity="error", markup=False)
-            missing.focus()
-            missing.scroll_visible()
-        elif not self._starting:
+        elif self._all_answered(fields) and not self._starting:
             self._starting = True
             answers = {one.question.key: one.answer or "" for one in fields}
             self.notify("starting; the devices are asked who they are")
@@ -207,10 +168,6 @@ class SetUpScreen(Screen[None]):
         else:
             speed = None if wanted.time_scale in (None, "fast", "1") else float(wanted.time_scale or 1)
             app.call_from_thread(app.open_run, record, speed=speed)
-
-    def _not_started(self, text: str) -> None:
-        self._starting = False
-        self.app.push_screen(Text("The run did not begin", printable_lines(text)))
 
     def action_expect(self) -> None:
         """Say what the run is expected to need."""
@@ -228,14 +185,3 @@ class SetUpScreen(Screen[None]):
     def action_help(self) -> None:
         """Help for this screen."""
         self.app.push_screen(help_of("set-up"))
-
-
-def form_row(label: str, field: Select[str] | Input | Plain) -> ComposeResult:
-    """Return a line of a form: its label, its field."""
-    with Horizontal(classes="row", id=f"row-{field.id}"):
-        yield Plain(label, classes="label", id=f"label-{field.id}")
-        yield field
-
-
-def _user() -> str:
-    return os.environ.get("USER") or os.environ.get("USERNAME") or ""
