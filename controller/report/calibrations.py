@@ -49,8 +49,10 @@ def traceability(plan: Mapping[str, Any], offset: Any) -> list[tuple[str, Facts]
     if trace.get("standard_lot_id"):
         sections.append(("Primary standard", [("lot", str(trace["standard_lot_id"]))]))
     for part in _PARTS:
-        facts = facts_of(trace.get(part), offset, leave_out=("dilutions",))
-        facts += _dilutions(trace.get(part))
+        if part == "weighing" and not weighed(plan):
+            continue  # the bench has a balance, but nothing was put on it
+        facts = facts_of(trace.get(part), offset, leave_out=("dilutions", "course"))
+        facts += _dilutions(trace.get(part)) + _course(trace.get(part))
         if facts:
             sections.append((f"{part.capitalize()} taken into account", facts))
     return sections
@@ -64,6 +66,19 @@ def _lot(lot: dict[str, Any], offset: Any) -> Facts:
         part = number(float(f"{cause.get('contribution_mol_l') or 0.0:.3g}"))
         facts.append((f"shared with {cause.get('shared_id')}", f"{part} mol/L"))
     return facts
+
+
+def weighed(plan: Mapping[str, Any]) -> bool:
+    """Tell whether anything of a run was put on a balance: the sample, or a standard of known mass."""
+    sample = plan.get("sample")
+    return isinstance(sample, dict) and sample.get("mass_g") is not None
+
+
+def _course(part: Any) -> Facts:
+    """What a blank took up to each pH, in words."""
+    given = part.get("course") if isinstance(part, dict) else None
+    told = [f"{number(one.get('volume_ml'), 4)} mL to pH {number(one.get('ph'), 1)}" for one in given or []]
+    return [("its course", ", ".join(told))] if told else []
 
 
 def _dilutions(part: Any) -> Facts:

@@ -13,6 +13,7 @@ from controller.commands.lines import result_lines
 from controller.commands.output import chance_text
 from controller.records.reevaluation import add_evaluation, added_evaluations
 from controller.report.budget import budget_table
+from controller.report.calibrations import traceability
 from controller.report.cautions import cautions_of
 from controller.report.page import render
 from controller.report.tables import doses, estimators, half_equivalence, incidents, questions, replicates
@@ -272,3 +273,30 @@ def test_a_pka_that_is_not_brought_to_infinite_dilution_says_so() -> None:
     assert row[-1].startswith("at this ionic strength; activities not corrected")
     (row,) = half_equivalence({"half_equivalence": [{**half, "pka": 5.41}]}).rows
     assert "ionic strength" not in row[-1]
+
+
+def test_a_weighing_is_named_only_where_something_was_weighed() -> None:
+    trace = {"weighing": {"balance_id": "balance 1", "air_density_kg_m3": 1.2}}
+    titles = [title for title, _ in traceability({"traceability": trace, "sample": {"mass_g": None}}, "+00:00")]
+    assert titles == []
+    titles = [title for title, _ in traceability({"traceability": trace, "sample": {"mass_g": 0.15}}, "+00:00")]
+    assert titles == ["Weighing taken into account"]
+
+
+def test_the_course_of_a_blank_is_told_in_words() -> None:
+    course = [{"ph": 4.5, "volume_ml": 0.0154149}, {"ph": 4.6, "volume_ml": 0.0124315}]
+    [(_, facts)] = traceability({"traceability": {"blank": {"lot_id": "b1", "course": course}}}, "+00:00")
+    assert dict(facts)["its course"] == "0.0154 mL to pH 4.5, 0.0124 mL to pH 4.6"
+
+
+def test_one_cause_of_several_quantities_has_no_unit_of_its_own() -> None:
+    row = {
+        "quantity": "gain of one burette in titrant and sample", "value": None, "unit": "mol/L",
+        "standard_uncertainty": None, "distribution": "normal", "degrees_of_freedom": None, "sensitivity": None,
+        "contribution": 1e-6, "share": 0.0, "shared_id": "burette", "members": ["a", "b"],
+    }  # fmt: skip
+    rows = [row, {**row, "quantity": "end point", "sensitivity": 1.0, "unit": "mL", "standard_uncertainty": 0.001}]
+    whole = {"rows": rows, "coverage_probability": 0.95, "degrees_of_freedom": None}
+    table = budget_table({"unit": "g/L", "standard_uncertainty": 0.01, "coverage_factor": 1.96, "budget": whole})
+    assert table is not None
+    assert [line[3] for line in table.rows[:2]] == ["–", "mL"]
