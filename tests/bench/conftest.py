@@ -1,13 +1,15 @@
-"""Worlds for whole runs of the decision core in memory: any sample, any titrant, any probe and pump."""
+"""Worlds for whole runs of the decision core in memory, and the command line in a place of its own."""
 
 from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import Any
 
 import pytest
 
+from controller.cli import main
 from controller.foresight.study_plan import MODEL_GUIDED, Strategy, nominal_plan
 from controller.study import StudyRun, StudyWorld, drive
 from controller.titration.actions import Action, Dosed, Failed, Observation
@@ -78,3 +80,29 @@ def build_case(
 def core_case() -> Callable[..., CoreCase]:
     """Build a case; see `build_case`."""
     return build_case
+
+
+@pytest.fixture
+def own_place(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """A folder to stand in, with the user's state in it and no lab folder named."""
+    for name in ("XDG_STATE_HOME", "LOCALAPPDATA"):
+        monkeypatch.setenv(name, str(tmp_path / "state"))
+    monkeypatch.delenv("HALFDROP_LAB", raising=False)
+    monkeypatch.chdir(tmp_path)
+    return tmp_path
+
+
+@pytest.fixture
+def halfdrop(own_place: Path, capsys: pytest.CaptureFixture[str]) -> Callable[..., tuple[int, str, str]]:
+    """Runs a command; returns exit status, standard output and messages of it alone."""
+
+    def run(*arguments: str) -> tuple[int, str, str]:
+        capsys.readouterr()
+        try:
+            status = main(list(arguments))
+        except SystemExit as end:
+            status = int(end.code or 0)
+        said = capsys.readouterr()
+        return status, said.out, said.err
+
+    return run

@@ -13,15 +13,8 @@ from controller.cli import main
 from controller.records.record import list_records
 
 Run = Callable[..., tuple[int, str, str]]
+pytestmark = pytest.mark.usefixtures("own_place")
 HCL_MOL_L = 0.1002  # the simulated bench's hydrochloric acid
-
-
-@pytest.fixture(autouse=True)
-def _own_state(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
-    monkeypatch.setenv("LOCALAPPDATA", str(tmp_path / "state"))
-    monkeypatch.delenv("HALFDROP_LAB", raising=False)
-    monkeypatch.chdir(tmp_path)
 
 
 @pytest.fixture
@@ -32,17 +25,8 @@ def lab(tmp_path: Path) -> Path:
 
 
 @pytest.fixture
-def halfdrop(lab: Path, capsys: pytest.CaptureFixture[str]) -> Run:
-    def run(*arguments: str) -> tuple[int, str, str]:
-        capsys.readouterr()
-        try:
-            status = main([*arguments, "--lab", str(lab)])
-        except SystemExit as end:
-            status = int(end.code or 0)
-        said = capsys.readouterr()
-        return status, said.out, said.err
-
-    return run
+def halfdrop(halfdrop: Run, lab: Path) -> Run:
+    return lambda *arguments: halfdrop(*arguments, "--lab", str(lab))
 
 
 @pytest.mark.parametrize(

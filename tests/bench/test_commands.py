@@ -9,32 +9,11 @@ from pathlib import Path
 
 import pytest
 
-from controller.cli import main
 from controller.records.record import list_records, read_record
 from controller.records.verification import verify
 
 Run = Callable[..., tuple[int, str, str]]
-
-
-@pytest.fixture(autouse=True)
-def _own_state(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
-    monkeypatch.setenv("LOCALAPPDATA", str(tmp_path / "state"))
-    monkeypatch.delenv("HALFDROP_LAB", raising=False)
-    monkeypatch.chdir(tmp_path)
-
-
-@pytest.fixture
-def halfdrop(capsys: pytest.CaptureFixture[str]) -> Run:
-    def run(*arguments: str) -> tuple[int, str, str]:
-        try:
-            status = main(list(arguments))
-        except SystemExit as end:
-            status = int(end.code or 0)
-        said = capsys.readouterr()
-        return status, said.out, said.err
-
-    return run
+pytestmark = pytest.mark.usefixtures("own_place")
 
 
 @pytest.fixture

@@ -10,11 +10,11 @@ from typing import Any
 import pytest
 import yaml
 
-from controller.cli import main
 from controller.records.record import read_record
 from controller.running.trafficlog import TrafficFile
 
 Run = Callable[..., tuple[int, str, str]]
+pytestmark = pytest.mark.usefixtures("own_place")
 DIALECT = {"speaks": "dialect", "dialect": "orchard-lane-pump"}
 PROBE = {"speaks": "dialect", "dialect": "orchard-lane-probe"}
 MODBUS = {"speaks": "modbus", "dialect": "orchard-lane-transmitter"}
@@ -24,27 +24,6 @@ PH_METER = {
 }  # fmt: skip
 # the simulated juice by stoichiometry, see tests/bench/test_commands.py
 TRUE_JUICE_ML = 10.0 * (2 * 0.045 + 3 * 0.001 - 0.020) / 0.0997
-
-
-@pytest.fixture(autouse=True)
-def _own_state(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
-    monkeypatch.setenv("LOCALAPPDATA", str(tmp_path / "state"))
-    monkeypatch.delenv("HALFDROP_LAB", raising=False)
-    monkeypatch.chdir(tmp_path)
-
-
-@pytest.fixture
-def halfdrop(capsys: pytest.CaptureFixture[str]) -> Run:
-    def run(*arguments: str) -> tuple[int, str, str]:
-        try:
-            status = main(list(arguments))
-        except SystemExit as end:
-            status = int(end.code or 0)
-        said = capsys.readouterr()
-        return status, said.out, said.err
-
-    return run
 
 
 @pytest.fixture

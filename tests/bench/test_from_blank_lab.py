@@ -10,12 +10,12 @@ from pathlib import Path
 
 import pytest
 
-from controller.cli import main
 from controller.records.record import list_records, read_record
 from controller.records.verification import verify
 
 README = Path(__file__).resolve().parents[2] / "README.md"
 Run = Callable[..., tuple[int, str, str]]
+pytestmark = pytest.mark.usefixtures("own_place")
 
 # the simulated bench's truth (configs/benches/simulated.yaml)
 TRUE_SLOPE_PERCENT, TRUE_TITRANT_MOL_L = 99.0, 0.0997
@@ -25,27 +25,6 @@ TRUE_JUICE_G_L = (2 * 0.045 + 3 * 0.001 - 0.020) / 2 * 134.0874
 def sequence() -> list[list[str]]:
     (block,) = re.findall(r"^```sh lab\n(.*?)^```", README.read_text(encoding="utf-8"), re.MULTILINE | re.DOTALL)
     return [shlex.split(line) for line in block.strip().splitlines()]
-
-
-@pytest.fixture(autouse=True)
-def _own_state(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
-    monkeypatch.setenv("LOCALAPPDATA", str(tmp_path / "state"))
-    monkeypatch.delenv("HALFDROP_LAB", raising=False)
-    monkeypatch.chdir(tmp_path)
-
-
-@pytest.fixture
-def halfdrop(capsys: pytest.CaptureFixture[str]) -> Run:
-    def run(*arguments: str) -> tuple[int, str, str]:
-        try:
-            status = main(list(arguments))
-        except SystemExit as end:
-            status = int(end.code or 0)
-        said = capsys.readouterr()
-        return status, said.out, said.err
-
-    return run
 
 
 def test_the_documented_sequence_leads_to_a_report_and_the_truth(halfdrop: Run, tmp_path: Path) -> None:

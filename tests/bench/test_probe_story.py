@@ -14,15 +14,8 @@ from controller.cli import main
 from controller.records.record import list_records, read_record
 
 Run = Callable[..., tuple[int, str, str]]
+pytestmark = pytest.mark.usefixtures("own_place")
 TRUE_FAST_LAG_S = 3.5  # of the simulated bench: 1.5 s mixing, 2.0 s film
-
-
-@pytest.fixture(autouse=True)
-def _own_state(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
-    monkeypatch.setenv("LOCALAPPDATA", str(tmp_path / "state"))
-    monkeypatch.delenv("HALFDROP_LAB", raising=False)
-    monkeypatch.chdir(tmp_path)
 
 
 @pytest.fixture
@@ -33,14 +26,8 @@ def lab(tmp_path: Path) -> Path:
 
 
 @pytest.fixture
-def halfdrop(lab: Path, capsys: pytest.CaptureFixture[str]) -> Run:
-    def run(*arguments: str) -> tuple[int, str, str]:
-        capsys.readouterr()
-        status = main([*arguments, "--lab", str(lab)])
-        said = capsys.readouterr()
-        return status, said.out, said.err
-
-    return run
+def halfdrop(halfdrop: Run, lab: Path) -> Run:
+    return lambda *arguments: halfdrop(*arguments, "--lab", str(lab))
 
 
 def header_of(path: Path) -> dict[str, Any]:

@@ -27,6 +27,7 @@ from controller.report.series_of_runs import found_replicates
 from controller.report.wording import local_time
 
 Run = Callable[..., tuple[int, str, str]]
+pytestmark = pytest.mark.usefixtures("own_place")
 HOSTILE = (
     "<script>alert(1)</script>\"'><img src=x onerror=alert(2)>&amp; =cmd|' /C calc'!A0 \x1b[31mred\x07"
     " {{ 7 * 7 }} $x^2$"
@@ -64,14 +65,6 @@ class Page(HTMLParser):
     @property
     def text(self) -> str:
         return " ".join(" ".join(self.texts).split())
-
-
-@pytest.fixture(autouse=True)
-def _own_state(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
-    monkeypatch.setenv("LOCALAPPDATA", str(tmp_path / "state"))
-    monkeypatch.delenv("HALFDROP_LAB", raising=False)
-    monkeypatch.chdir(tmp_path)
 
 
 @pytest.fixture(scope="module")
@@ -204,19 +197,6 @@ def test_a_record_cut_off_before_any_point_still_has_a_page(runs: list[Path], tm
     text = Page(render(report_contents(read_record(cut), written_utc="2026-12-01T15:00:00Z"))).text
     assert "No figures" in text
     assert "not answered" not in text.partition("Questions and answers")[0]
-
-
-@pytest.fixture
-def halfdrop(capsys: pytest.CaptureFixture[str]) -> Run:
-    def run(*arguments: str) -> tuple[int, str, str]:
-        try:
-            status = main(list(arguments))
-        except SystemExit as end:
-            status = int(end.code or 0)
-        said = capsys.readouterr()
-        return status, said.out, said.err
-
-    return run
 
 
 def test_the_command_writes_into_the_lab_folder_and_replaces_only_reports(halfdrop: Run, runs: list[Path]) -> None:

@@ -9,32 +9,10 @@ from pathlib import Path
 
 import pytest
 
-from controller.cli import main
-
 Run = Callable[..., tuple[int, str, str]]
+pytestmark = pytest.mark.usefixtures("own_place")
 KEPT = Path(__file__).parents[1] / "data" / "records" / "run-record-1-program-0.1.0.jsonl"
 NAME = "2026-01-02T080000Z-juice-acidity"
-
-
-@pytest.fixture(autouse=True)
-def _own_place(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    for name in ("XDG_STATE_HOME", "LOCALAPPDATA"):
-        monkeypatch.setenv(name, str(tmp_path / "state"))
-    monkeypatch.delenv("HALFDROP_LAB", raising=False)
-    monkeypatch.chdir(tmp_path)
-
-
-@pytest.fixture
-def halfdrop(capsys: pytest.CaptureFixture[str]) -> Run:
-    def run(*arguments: str) -> tuple[int, str, str]:
-        try:
-            status = main(list(arguments))
-        except SystemExit as end:
-            status = int(end.code or 0)
-        said = capsys.readouterr()
-        return status, said.out, said.err
-
-    return run
 
 
 @pytest.fixture
