@@ -120,11 +120,22 @@ def difference_text(first: RunView, second: RunView) -> str:
     one, other = (_value_of(view) for view in (first, second))
     if one is None or other is None or one[2] != other[2]:
         return "the two cannot be compared by number"
+    unlike = [pair for pair in zip(_quantity_of(first), _quantity_of(second), strict=True) if pair[0] != pair[1]]
+    if unlike:  # acidity to a pH and acidity to equivalence, say
+        return f"not compared by number, A and B are different quantities: {unlike[0][0]}, {unlike[0][1]}"
     joint = (one[1] ** 2 + other[1] ** 2) ** 0.5
     text = f"B - A: {other[0] - one[0]:+.4g} {one[2]}"
     if joint > 0:
         text += f", {abs(other[0] - one[0]) / joint:.1f} times their joint standard uncertainty of {joint:.2g} {one[2]}"
     return text
+
+
+def _quantity_of(view: RunView) -> tuple[str, str]:
+    """What an amount is of: its substance, and where the titration ended, in words (early records have a number)."""
+    amount = view.result.get("result") or {}
+    end_point = amount.get("end_point")
+    to_ph = end_point if isinstance(end_point, str) and end_point.startswith("pH") else "the equivalence point"
+    return printable(str(amount.get("substance"))), printable(to_ph)
 
 
 def _value_of(view: RunView) -> tuple[float, float, str] | None:
