@@ -34,7 +34,7 @@ def test_a_blank_tells_its_volume():
 
 
 def test_a_standard_uncertainty_is_never_written_after_plus_minus():
-    # GUM (JCGM 100:2008) 7.2.2, note: +/- reads as an interval of high confidence; the value has its uncertainty's digits
+    # GUM (JCGM 100:2008) 7.2.2, note: +/- reads as an interval of high confidence; the value has the digits of its u
     made = Finding(
         limits="house limits", quantity="error", value=0.01063, low=-0.05, high=0.05, unit="pH",
         standard_uncertainty=0.0084,
