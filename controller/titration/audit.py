@@ -16,7 +16,7 @@ from controller.evaluation.agreement import COVERAGE_FACTOR
 from controller.evaluation.carbonate import carbonate_for_sure, without_carbonate
 from controller.evaluation.contradiction import LARGEST_OF_STATED, believed, misfit
 from controller.evaluation.curve import Curve
-from controller.evaluation.estimate import Estimate
+from controller.evaluation.estimate import SECOND_DERIVATIVE, Estimate
 from controller.evaluation.mishaps import MOST_MISHAPS, Explained, Mishap, explain
 from controller.evaluation.modelfit import ModelFit, Priors, fit_charge_balance
 from controller.titration.left_out import told
@@ -35,6 +35,13 @@ NOTABLE_CHI_SQUARE = 1.0
 ALLOWED_SDS = 4.0
 #: the probe answers so many times as slowly as its record says before it is remarked upon
 NOTABLE_SLOWNESS = 1.35
+#: standard uncertainties by which the shape of the curve may differ before the number owns the rest
+SHAPE_SDS = 2.0
+#: why no number is given where the lag record was left and something else happened
+TWO_AT_ONCE = (
+    "the probe does not answer as its lag record says, and something else happened while the points were taken: one "
+    "may be taken for the other, so no number is given"
+)
 #: how much more the points of a slow probe may leave over: its slowness to this power
 SLOW_POINTS = 3.0
 #: what a slowness of one more time the record's may cost, in precisions of the pump
@@ -69,6 +76,7 @@ def audited(
     offset_sd_ph: float | None = None,
     lost_ml: float = 0.0,
     carbonate: bool = False,
+    record_holds: bool = True,
 ) -> Audit:
     """Look at every end point once more.
 
@@ -83,6 +91,7 @@ def audited(
         lost_ml: titrant that points not in the curve do not account for.
         carbonate: the run looks for it: what of it is found is no mishap, and the points are held against a titrant
             without it; an end point still owns what lies between it and the alkalinity's.
+        record_holds: the record of the probe's lag was kept to its end.
     """
     audit = Audit(list(end_points))
     if not audit.end_points:
@@ -102,6 +111,10 @@ def audited(
             audit.withheld = contradiction(fit, explained)
             audit.end_points = []
             return audit
+        if explained.mishaps and not record_holds:
+            audit.withheld = TWO_AT_ONCE
+            audit.end_points = []
+            return audit
         if explained.mishaps:
             audit.warnings += [mishap_told(mishap) for mishap in explained.mishaps]
             _widen_by(audit, explained.mishaps, explained.fit, curve, at_s)
@@ -113,6 +126,8 @@ def audited(
         if shown is not explained.fit:  # no estimator has its word alone where the stated substance does not hold
             for number, point in enumerate(audit.end_points):
                 audit.widen(number, _disagreement_ml(float(point["volume_ml"]), estimates))
+    for number, point in enumerate(audit.end_points):
+        audit.widen(number, _beyond_shape_ml(float(point["volume_ml"]), estimates))
     if slow is not None:
         audit.warnings.append(
             f"the probe answers {slow:.1f} times as slowly as its record says: clean it, or repeat the response check"
@@ -204,6 +219,23 @@ def _hold_against_fit(audit: Audit, fit: ModelFit, *, acid_titrant: bool) -> Non
                 f"{volume_ml:.4f} mL; the uncertainty is widened by the difference"
             )
             audit.widen(number, off_ml)
+
+
+def _beyond_shape_ml(volume_ml: float, estimates: Sequence[Sequence[Estimate]]) -> float:
+    """What the shape of the curve and the number differ by beyond twice what they claim together.
+
+    A drift that the balance takes for a constant moves its number and not the shape. Where they differ by more than
+    `COVERAGE_FACTOR` times, shape and balance speak of different things, which is remarked upon elsewhere.
+    """
+    here = min(estimates, key=lambda found: abs(found[0].volume_ml - volume_ml), default=())
+    shape = next((e for e in here if e.estimator == SECOND_DERIVATIVE and e.sound), None)
+    if shape is None:
+        return 0.0
+    joint_ml = math.hypot(shape.standard_uncertainty_ml, here[0].standard_uncertainty_ml)
+    off_ml = abs(shape.volume_ml - here[0].volume_ml)
+    if not SHAPE_SDS * joint_ml < off_ml <= COVERAGE_FACTOR * joint_ml:
+        return 0.0
+    return math.sqrt(off_ml**2 - (SHAPE_SDS * joint_ml) ** 2)
 
 
 def _disagreement_ml(volume_ml: float, estimates: Sequence[Sequence[Estimate]]) -> float:

@@ -182,6 +182,7 @@ def _audited(run: RunState, evaluation: Evaluation | None) -> Audit:
         offset_sd_ph=offset_sd_ph(run.plan),
         lost_ml=lost_among_left_out_ml(run),
         carbonate=run.plan.looks_for_carbonate,
+        record_holds=run.record_holds,
     )
 
 
