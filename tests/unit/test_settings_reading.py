@@ -105,4 +105,4 @@ def test_load_reads_a_file_and_names_it(tmp_path: Path) -> None:
     file.write_text(METHOD + "kind: other\n", encoding="utf-8")
     with pytest.raises(SettingsError) as caught:
         load(file, MethodSettings)
-    assert str(caught.value) == f'{file}:7:7: kind: got "other", allowed: equivalence'
+    assert str(caught.value) == f'{file}:7:7: kind: got "other", allowed: equivalence | end-point-ph'
