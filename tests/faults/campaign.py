@@ -112,12 +112,15 @@ class FaultyBench:
     ports: VirtualPorts
     disk: DyingDisk = field(default_factory=DyingDisk)
     dead: bool = False
+    over: bool = False
 
     @property
     def world(self) -> VirtualBench:
         return self.nominal.bench
 
     def die(self) -> None:
+        if self.over:  # a process that has ended cannot be killed
+            return
         self.dead = self.disk.dead = True
         raise ProcessKilledError
 
@@ -210,6 +213,7 @@ def carry_out(bench: FaultyBench, number: int = 0, faults: tuple[str, ...] = ())
         outcome = "killed"
     except HalfdropError as error:
         outcome, reason = ("killed" if bench.dead else "failed"), str(error)
+    bench.over = True
     wrong = _wrong(bench, result, outcome, confirmed, reason)
     if time.monotonic() - began_s > LONGEST_REAL_S:
         wrong.append("took too long in real time")
