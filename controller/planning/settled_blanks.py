@@ -63,7 +63,7 @@ def blank_lot(
     volumes: list[float | None] = [*volumes_ml, *(one.volume_ml for one in seen)]
     limits_ml = [one.detection_limit_ml for one in seen if one.detection_limit_ml is not None]
     limit_ml = max(limits_ml) if limits_ml and not volumes_ml else rules.detection_limit_ml
-    told = any(one.probe_calibration for one in seen)  # by the course of their pH
+    told = any(one.probe_calibration for one in seen)  # by how their pH went
     end_point_ph = at_ph if told or method.end_points.at_ph is not None else None
     found = blank_of(
         volumes,
